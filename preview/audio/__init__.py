@@ -1,0 +1,1 @@
+"""Sound in and out: files, pipes, devices and the silent clock. Samples, full scale 1.0."""

@@ -1,0 +1,232 @@
+"""Whether a netlist can be computed: what can be told from its wiring alone, before any number is solved."""
+
+from __future__ import annotations
+
+from collections import defaultdict
+from collections.abc import Iterable, Iterator
+from typing import TYPE_CHECKING
+
+from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR
+from preview.circuit.parts import PartKind
+from preview.errors import CircuitError
+
+if TYPE_CHECKING:
+    from preview.circuit.netlist import Netlist, OpAmpSite
+
+__all__ = ["check", "problems"]
+
+Problem = tuple[str, str]
+"""What is wrong, and the cure."""
+
+
+def check(circuit: Netlist, where: str) -> None:
+    """Raise CircuitError for the first thing that makes the circuit impossible to compute.
+
+    Parameters
+    ----------
+    circuit : Netlist
+        The circuit with its source and load.
+    where : str
+        What the message starts with: the stage's name or file.
+    """
+    for message, cure in problems(circuit):
+        raise CircuitError(f"{where}: {message}", cure)
+
+
+def problems(circuit: Netlist) -> Iterator[Problem]:
+    """Everything wrong with the wiring, plainest faults first; later ones may follow from earlier ones."""
+    yield from _ends(circuit)
+    yield from _shorted_parts(circuit)
+    yield from _output_conflicts(circuit)
+    yield from _dangling(circuit)
+    yield from _no_dc_path(circuit)
+    yield from _inductor_shorts(circuit)
+    yield from _feedback(circuit)
+    yield from _no_signal_path(circuit)
+
+
+def _listed(names: Iterable[str]) -> str:
+    """Names in a row: ``R1``, ``R1 and C1``, ``R1, R2 and C1``."""
+    *most, last = names
+    return f"{', '.join(most)} and {last}" if most else last
+
+
+def _uses(circuit: Netlist) -> dict[str, list[str]]:
+    """What is connected to each node, one entry a connection: ``R1``, ``the + input of U1`` ..."""
+    uses: dict[str, list[str]] = defaultdict(list)
+    for branch in circuit.branches:
+        uses[branch.a].append(branch.designator)
+        uses[branch.b].append(branch.designator)
+    for opamp in circuit.opamps:
+        uses[opamp.plus].append(f"the + input of {opamp.designator}")
+        uses[opamp.minus].append(f"the - input of {opamp.designator}")
+        uses[opamp.out].append(f"the output of {opamp.designator}")
+    return uses
+
+
+def _driven(circuit: Netlist) -> set[str]:
+    """Nodes whose voltage is set whatever current flows: gnd, the ideal source and every op-amp output."""
+    return {GND, circuit.input_node, *(opamp.out for opamp in circuit.opamps)}
+
+
+def _ends(circuit: Netlist) -> Iterator[Problem]:
+    outside = {SOURCE_DESIGNATOR, LOAD_DESIGNATOR}
+    own = {node: None for node, users in _uses(circuit).items() if not outside.issuperset(users)}
+    for node, words in ((IN, "the signal goes in at"), (OUT, "the signal is taken from")):
+        if node not in own:
+            cure = f"{words} the node named {node}; nodes are {', '.join(own) or 'none'}"
+            yield f"no part is connected to {node}", cure
+
+
+def _shorted_parts(circuit: Netlist) -> Iterator[Problem]:
+    for branch in circuit.branches:
+        if branch.a == branch.b:
+            yield (
+                f"both ends of {branch.designator} are on node {branch.a}",
+                "give it two different nodes or take it out",
+            )
+    for opamp in circuit.opamps:
+        if opamp.plus == opamp.minus:
+            yield (
+                f"both inputs of {opamp.designator} are on node {opamp.plus}",
+                "give plus and minus different nodes",
+            )
+
+
+def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
+    owner: dict[str, str] = {}
+    for opamp in circuit.opamps:
+        name, node = opamp.designator, opamp.out
+        if node == GND:
+            yield f"the output of {name} is on gnd", "gnd is fixed at 0 V: give the output a node of its own"
+        elif node == circuit.input_node:
+            yield (
+                f"the output of {name} is on node {node}, which the signal source drives",
+                "give the output a node of its own, or the source a resistance",
+            )
+        elif node in owner:
+            yield (
+                f"the outputs of {owner[node]} and {name} are both on node {node}",
+                "two outputs on one node fight: put a resistor between them or use one",
+            )
+        owner.setdefault(node, name)
+
+
+def _dangling(circuit: Netlist) -> Iterator[Problem]:
+    for node, users in _uses(circuit).items():
+        if len(users) == 1 and node not in (IN, OUT, GND, circuit.input_node):
+            yield (
+                f"node {node} is dangling: only {users[0]} is connected to it",
+                "connect a second part to it, or check how its name is spelled",
+            )
+
+
+def _no_dc_path(circuit: Netlist) -> Iterator[Problem]:
+    neighbours: dict[str, set[str]] = defaultdict(set)
+    for branch in circuit.branches:
+        if branch.kind is not PartKind.CAPACITOR:
+            neighbours[branch.a].add(branch.b)
+            neighbours[branch.b].add(branch.a)
+    reached = _closure(_driven(circuit), neighbours)
+    uses = _uses(circuit)
+    floating = [node for node in circuit.nodes if node not in reached]
+    if floating:
+        users = dict.fromkeys(user for node in floating for user in uses[node])
+        nodes = "node" if len(floating) == 1 else "nodes"
+        verb = "is" if len(floating) == 1 else "are"
+        yield (
+            f"{nodes} {_listed(floating)} {verb} floating: no direct current can flow through "
+            f"{_listed(users)}",
+            f"give it a path, such as a resistor of 1 MΩ from {floating[0]} to gnd",
+        )
+
+
+def _closure(start: Iterable[str], neighbours: dict[str, set[str]]) -> set[str]:
+    """Every node that can be reached from the start."""
+    reached = set(start)
+    waiting = list(reached)
+    while waiting:
+        for node in neighbours.get(waiting.pop(), ()):
+            if node not in reached:
+                reached.add(node)
+                waiting.append(node)
+    return reached
+
+
+def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
+    """Loops of nothing but inductors and fixed voltages: their direct current is unlimited or not defined."""
+    group = {node: node for node in (*circuit.nodes, GND)}
+
+    def root(node: str) -> str:
+        while group[node] != node:
+            node = group[node]
+        return node
+
+    fixed = _driven(circuit)
+    for node in fixed:
+        group[node] = GND
+    for branch in circuit.branches:
+        if branch.kind is not PartKind.INDUCTOR:
+            continue
+        a, b = root(branch.a), root(branch.b)
+        if a != b:
+            group[a] = b
+        elif a == root(GND):
+            yield (
+                f"{branch.designator} shorts the source, an op-amp output or gnd for direct current",
+                "put its winding resistance in series, as a resistor",
+            )
+        else:
+            yield (
+                f"{branch.designator} closes a loop of inductors only, whose direct current is not defined",
+                "put its winding resistance in series, as a resistor",
+            )
+
+
+def _feedback(circuit: Netlist) -> Iterator[Problem]:
+    for opamp in circuit.opamps:
+        through_parts = _influenced(circuit, opamp.out, through_opamps=False)
+        anywhere = _influenced(circuit, opamp.out, through_opamps=True)
+        if opamp.minus in anywhere:
+            continue
+        if opamp.plus in through_parts:
+            yield (
+                f"{opamp.designator} has positive feedback only: its output {opamp.out} comes back to its "
+                f"+ input and not to its - input",
+                "swap plus and minus, or add feedback to minus",
+            )
+        elif opamp.plus not in anywhere:
+            yield (
+                f"{opamp.designator} has no feedback: nothing leads from its output {opamp.out} to its "
+                f"- input{_held(circuit, opamp)}",
+                "join its output to its - input by a part; comparators cannot be computed",
+            )
+
+
+def _held(circuit: Netlist, opamp: OpAmpSite) -> str:
+    if opamp.minus == GND:
+        return ", which is on gnd"
+    if opamp.minus == circuit.input_node:
+        return ", which is held by the signal source"
+    return ""
+
+
+def _influenced(circuit: Netlist, start: str, *, through_opamps: bool) -> set[str]:
+    """Nodes that follow the start node: through parts to free nodes and, if asked, on through op-amps."""
+    fixed = _driven(circuit)
+    follows: dict[str, set[str]] = defaultdict(set)
+    for branch in circuit.branches:
+        if branch.b not in fixed:
+            follows[branch.a].add(branch.b)
+        if branch.a not in fixed:
+            follows[branch.b].add(branch.a)
+    if through_opamps:
+        for opamp in circuit.opamps:
+            follows[opamp.plus].add(opamp.out)
+            follows[opamp.minus].add(opamp.out)
+    return _closure([start], follows)
+
+
+def _no_signal_path(circuit: Netlist) -> Iterator[Problem]:
+    if OUT not in _influenced(circuit, circuit.input_node, through_opamps=True):
+        yield "nothing leads from in to out", "check the node names along the signal's way"

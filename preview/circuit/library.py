@@ -1,0 +1,162 @@
+"""Finding stages by name, and changing their parts from option texts.
+
+A name is looked for among the bundled stages, then in the person's own folder ``stages`` in the user's config
+folder for ``preview``. A bundled name always means the bundled stage, so that it means the same on every
+machine. What has a path separator in it or ends in ``.toml`` is a file.
+"""
+
+from __future__ import annotations
+
+import os
+from collections.abc import Mapping
+from dataclasses import replace
+from difflib import get_close_matches
+from importlib.resources import files
+from pathlib import Path
+
+import platformdirs
+
+from preview.circuit.limits import QUANTITY, read_value
+from preview.circuit.parts import OpAmp, Part, Stage
+from preview.circuit.reader import opamp_type, parse_stage, read_stage
+from preview.circuit.tables import decode, read_bytes
+from preview.errors import UnknownNameError
+from preview.values.notation import quoted, understood
+
+__all__ = ["find_stage", "stage_names", "stage_source", "user_stage_folder", "with_overrides"]
+
+_ENDING = ".toml"
+
+
+def user_stage_folder() -> Path:
+    """The folder in which a person's own stages are found by name; it need not exist."""
+    return Path(platformdirs.user_config_dir("preview", appauthor=False)) / "stages"
+
+
+def stage_names() -> tuple[str, ...]:
+    """Every name that ``find_stage`` knows: the bundled stages, then the person's own, each in order."""
+    bundled = _bundled()
+    own = sorted(name for name in _own() if name not in bundled)
+    return (*bundled, *own)
+
+
+def find_stage(name_or_path: str) -> Stage:
+    """The stage of that name, or in that file.
+
+    Raises
+    ------
+    UnknownNameError
+        No such name; the message lists the names there are.
+    StageFileError, PartValueError
+        The file cannot be read or is not a stage.
+    """
+    path = _path(name_or_path)
+    if path is not None:
+        return read_stage(path)
+    text = _bundled()[name_or_path]
+    return parse_stage(text, name=name_or_path, file=f"stages/{name_or_path}{_ENDING}")
+
+
+def stage_source(name_or_path: str) -> str:
+    """The TOML text of the stage of that name, or of that file; raises as ``find_stage`` does."""
+    path = _path(name_or_path)
+    return _bundled()[name_or_path] if path is None else decode(read_bytes(path), str(path))
+
+
+def with_overrides(
+    stage: Stage, parts: Mapping[str, str], opamps: Mapping[str | None, str]
+) -> tuple[Stage, tuple[str, ...]]:
+    """The stage with part values and op-amp types from option texts, and how each text was understood.
+
+    Parameters
+    ----------
+    stage : Stage
+        The stage as drawn.
+    parts : Mapping
+        Designator to value text, such as ``{"R1": "4k7"}``; case does not matter in the designator.
+    opamps : Mapping
+        Designator, or None for every op-amp, to type name. A named op-amp goes before None.
+
+    Raises
+    ------
+    NotationError
+        A value's text cannot be read.
+    PartValueError
+        A value that no such part can have.
+    UnknownNameError
+        No such part or op-amp type, or a part of the wrong kind.
+    """
+    notes = []
+    for name, text in parts.items():
+        part = _part(stage, name)
+        if isinstance(part, OpAmp):
+            raise UnknownNameError(
+                f"{part.designator} of stage {stage.name} is an op-amp and has no value",
+                f"give it a type: --opamp {part.designator}=ideal",
+            )
+        value = read_value(part.kind, text, f"{part.designator} = ")
+        stage = stage.with_part(replace(part, value=value))
+        notes.append(f"{part.designator}: {understood(text, QUANTITY[part.kind])}")
+    for target, text in sorted(opamps.items(), key=lambda item: item[0] is not None):
+        type_name = opamp_type(text, "" if target is None else f"{target} = ")
+        chosen = stage.opamps if target is None else (_opamp(stage, target),)
+        if not chosen:
+            raise UnknownNameError(f"stage {stage.name} has no op-amp to be of type {type_name}")
+        for opamp in chosen:
+            stage = stage.with_part(replace(opamp, type=type_name))
+        notes.append(f"{', '.join(opamp.designator for opamp in chosen)}: op-amp type {type_name}")
+    return stage, tuple(notes)
+
+
+def _part(stage: Stage, name: str) -> Part:
+    """The part of that designator in any case; UnknownNameError names those there are."""
+    for part in stage.parts:
+        if part.designator.lower() == name.strip().lower():
+            return part
+    known = ", ".join(part.designator for part in stage.parts)
+    raise UnknownNameError(f"stage {stage.name} has no part {quoted(name)[1:-1]}", f"it has {known}")
+
+
+def _opamp(stage: Stage, name: str) -> OpAmp:
+    part = _part(stage, name)
+    if not isinstance(part, OpAmp):
+        known = ", ".join(opamp.designator for opamp in stage.opamps) or "none"
+        raise UnknownNameError(
+            f"{part.designator} of stage {stage.name} is a {part.kind}, not an op-amp", f"op-amps are {known}"
+        )
+    return part
+
+
+def _path(name_or_path: str) -> Path | None:
+    """The file that is meant; None for a bundled stage; UnknownNameError for a name that nobody knows."""
+    separators = {"/", os.sep, os.altsep or os.sep}
+    if name_or_path.endswith(_ENDING) or not separators.isdisjoint(name_or_path):
+        return Path(name_or_path)
+    if name_or_path in _bundled():
+        return None
+    own = _own()
+    if name_or_path in own:
+        return own[name_or_path]
+    names = stage_names()
+    nearest = get_close_matches(name_or_path.lower()[:60], names, n=1, cutoff=0.5)
+    start = f"did you mean {nearest[0]}? " if nearest else ""
+    raise UnknownNameError(
+        f"no stage named {quoted(name_or_path)[1:-1]}",
+        f"{start}stages are {', '.join(names)}; a file ends in {_ENDING}",
+    )
+
+
+def _bundled() -> dict[str, str]:
+    """Text of each bundled stage by name."""
+    entries = files("preview").joinpath("stages").iterdir()
+    found = sorted((entry for entry in entries if entry.name.endswith(_ENDING)), key=lambda entry: entry.name)
+    return {entry.name.removesuffix(_ENDING): entry.read_text("utf-8") for entry in found}
+
+
+def _own() -> dict[str, Path]:
+    """The person's own stage files by name; empty where the folder is missing or closed."""
+    try:
+        entries = list(user_stage_folder().iterdir())
+    except OSError:
+        return {}
+    return {entry.stem: entry for entry in entries if entry.suffix == _ENDING}

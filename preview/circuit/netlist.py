@@ -1,0 +1,190 @@
+"""The netlist: a stage with its source, load and supply, checked, ready for the nodal equations."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass, replace
+
+from preview.circuit.checks import check
+from preview.circuit.limits import check_value
+from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR, SOURCE_NODE
+from preview.circuit.opamp import BUILT_IN_TYPES
+from preview.circuit.parts import OpAmp, PartKind, Stage, Supply
+from preview.errors import CircuitError, UnknownNameError
+
+__all__ = [
+    "GND",
+    "IN",
+    "LOAD_DESIGNATOR",
+    "OUT",
+    "SOURCE_DESIGNATOR",
+    "SOURCE_NODE",
+    "Branch",
+    "Netlist",
+    "OpAmpSite",
+    "check_supply",
+    "netlist",
+]
+
+HIGHEST_RAIL_V = 1000.0
+"""A rail beyond this is taken for a slip [V]."""
+
+
+@dataclass(frozen=True, slots=True)
+class Branch:
+    """A two-terminal element between two nodes."""
+
+    designator: str
+    """R1, C2 ...; the source and load resistances are called ``Rsource`` and ``Rload``."""
+    kind: PartKind
+    """Resistor, capacitor or inductor."""
+    a: str
+    """First node."""
+    b: str
+    """Second node."""
+    value: float
+    """Ohm, farad or henry."""
+
+
+@dataclass(frozen=True, slots=True)
+class OpAmpSite:
+    """An op-amp in its place with the limits that hold for it there."""
+
+    designator: str
+    """U1, U2 ..."""
+    plus: str
+    """Node of the non-inverting input."""
+    minus: str
+    """Node of the inverting input."""
+    out: str
+    """Node of the output."""
+    type: str
+    """Its type's name."""
+    high_v: float
+    """Highest output voltage [V]; inf for ``perfect``."""
+    low_v: float
+    """Lowest output voltage [V]; -inf for ``perfect``."""
+
+
+@dataclass(frozen=True, slots=True)
+class Netlist:
+    """A circuit ready to be solved."""
+
+    input_node: str
+    """Node that the ideal signal source drives: ``in``, or ``source`` behind a source resistance."""
+    output_node: str
+    """Node that is listened to (``out``)."""
+    branches: tuple[Branch, ...]
+    """Every resistor, capacitor and inductor, source and load included."""
+    opamps: tuple[OpAmpSite, ...]
+    """Every op-amp."""
+
+    @property
+    def nodes(self) -> tuple[str, ...]:
+        """Every node but gnd, in order of first mention; the input node first."""
+        names: dict[str, None] = {self.input_node: None}
+        for branch in self.branches:
+            names[branch.a] = None
+            names[branch.b] = None
+        for opamp in self.opamps:
+            names[opamp.plus] = None
+            names[opamp.minus] = None
+            names[opamp.out] = None
+        names.pop(GND, None)
+        return tuple(names)
+
+    @property
+    def values(self) -> dict[str, float]:
+        """Value of each branch by designator."""
+        return {b.designator: b.value for b in self.branches}
+
+    def with_values(self, values: Mapping[str, float]) -> Netlist:
+        """The same netlist with other values; designators not named keep theirs."""
+        return replace(
+            self,
+            branches=tuple(
+                replace(b, value=values[b.designator]) if b.designator in values else b for b in self.branches
+            ),
+        )
+
+
+def netlist(
+    stage: Stage,
+    *,
+    supply: Supply | None = None,
+    source_ohm: float = 0.0,
+    load_ohm: float | None = None,
+) -> Netlist:
+    """The checked netlist of a stage.
+
+    Parameters
+    ----------
+    supply : Supply, optional
+        Rails that replace the stage's own.
+    source_ohm : float
+        Resistance of the source [ohm]; 0 for an ideal one.
+    load_ohm : float, optional
+        Resistance from out to gnd [ohm]; None for no load.
+
+    Raises
+    ------
+    CircuitError
+        The circuit cannot be computed: see ``preview.circuit.checks``.
+    """
+    where = f"stage {stage.name}"
+    rails = supply or stage.supply
+    check_supply(rails, where)
+    branches = []
+    for part in stage.valued:
+        check_value(part.kind, part.value, f"{where}, {part.designator}")
+        branches.append(Branch(part.designator, part.kind, *part.nodes, part.value))
+    if source_ohm != 0.0:
+        check_value(PartKind.RESISTOR, source_ohm, "source resistance")
+        branches.insert(0, Branch(SOURCE_DESIGNATOR, PartKind.RESISTOR, SOURCE_NODE, IN, source_ohm))
+    if load_ohm is not None:
+        check_value(PartKind.RESISTOR, load_ohm, "load resistance")
+        branches.append(Branch(LOAD_DESIGNATOR, PartKind.RESISTOR, OUT, GND, load_ohm))
+    circuit = Netlist(
+        input_node=SOURCE_NODE if source_ohm != 0.0 else IN,
+        output_node=OUT,
+        branches=tuple(branches),
+        opamps=tuple(_site(opamp, rails, where) for opamp in stage.opamps),
+    )
+    check(circuit, where)
+    return circuit
+
+
+def check_supply(supply: Supply, where: str) -> None:
+    """Raise CircuitError, its message starting with ``where``, for rails that no stage can run on."""
+    high_v, low_v = supply.positive_v, supply.negative_v
+    found = f"{where}: rails of {high_v:g} V and {low_v:g} V"
+    if not (math.isfinite(high_v) and math.isfinite(low_v)):
+        raise CircuitError(f"{found}: not finite numbers", "such as +15 V and -15 V")
+    if high_v <= low_v:
+        raise CircuitError(
+            f"{found}: the positive rail is not above the negative rail", "such as +15 V and -15 V"
+        )
+    if high_v < 0.0 or low_v > 0.0:
+        raise CircuitError(f"{found}: both are on one side of gnd", "such as +15 V and -15 V, or 9 V and 0 V")
+    if max(high_v, -low_v) > HIGHEST_RAIL_V:
+        raise CircuitError(f"{found}: beyond 1 kV", "such as +15 V and -15 V")
+
+
+def _site(opamp: OpAmp, rails: Supply, where: str) -> OpAmpSite:
+    """The op-amp with the limits its type has on these rails."""
+    if opamp.type not in BUILT_IN_TYPES:
+        raise UnknownNameError(
+            f"{where}, {opamp.designator}: op-amp type {opamp.type} is not in the library; "
+            f"built in are {', '.join(BUILT_IN_TYPES)}"
+        )
+    limited = opamp.type != "perfect"
+    return OpAmpSite(
+        designator=opamp.designator,
+        plus=opamp.plus,
+        minus=opamp.minus,
+        out=opamp.out,
+        type=opamp.type,
+        high_v=rails.positive_v if limited else math.inf,
+        low_v=rails.negative_v if limited else -math.inf,
+    )

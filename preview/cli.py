@@ -1,0 +1,420 @@
+"""The command line: results on stdout, talk and progress on stderr, one exit code a kind of outcome.
+
+0 done; 1 done, but a wanted figure was missed; 2 usage; 3 input or output file; 4 no audio device or library;
+5 circuit invalid; 130 interrupted.
+"""
+
+from __future__ import annotations
+
+import argparse
+import json
+import os
+import signal
+import sys
+import time
+import tomllib
+import traceback
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from types import FrameType
+from typing import TYPE_CHECKING, NoReturn
+
+from preview import __version__
+from preview.errors import AudioFileError, PreviewError, UsageError, printable
+
+if TYPE_CHECKING:
+    from preview.session import Session
+
+__all__ = ["main"]
+
+INTERRUPTED = 130
+DEMO_ITEM = "announcement"
+
+
+class _Parser(argparse.ArgumentParser):
+    """A parser that reports in the house's own way."""
+
+    def error(self, message: str) -> NoReturn:
+        raise UsageError(message, f"see {self.prog} --help")
+
+
+def main(arguments: Sequence[str] | None = None) -> int:
+    """Run one command; the exit code."""
+    from preview.engine.options import join_signed_values
+
+    given = list(sys.argv[1:] if arguments is None else arguments)
+    before = signal.getsignal(signal.SIGTERM)
+    try:
+        if before is signal.SIG_DFL:
+            signal.signal(signal.SIGTERM, _terminated)
+        options = _parser().parse_args(join_signed_values(given))
+        code = int(options.run(options))
+        sys.stdout.flush()
+        return code
+    except PreviewError as error:
+        _debug()
+        _say(f"preview: {error.message}")
+        if error.hint:
+            _say(f"  {error.hint}")
+        return error.exit_code
+    except KeyboardInterrupt:
+        _say("preview: interrupted; nothing half-written is left")
+        return INTERRUPTED
+    except BrokenPipeError:
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return 0
+    except SystemExit as ended:
+        return ended.code if isinstance(ended.code, int) else 0
+    except Exception as error:
+        _debug()
+        _say(f"preview: an error inside the program ({type(error).__name__}: {printable(str(error))})")
+        _say("  PREVIEW_DEBUG=1 shows where")
+        return 1
+    finally:
+        if before is signal.SIG_DFL:
+            signal.signal(signal.SIGTERM, before)
+
+
+def _terminated(_number: int, _frame: FrameType | None) -> None:
+    raise KeyboardInterrupt
+
+
+def _debug() -> None:
+    if os.environ.get("PREVIEW_DEBUG") == "1":
+        traceback.print_exc()
+
+
+def _say(text: str) -> None:
+    """A line for the person, on stderr."""
+    print(text, file=sys.stderr)
+
+
+def _parser() -> argparse.ArgumentParser:
+    from preview.engine.options import add_stage_options
+
+    parser = _Parser(
+        prog="preview",
+        description="Hear an op-amp stage on your own signal before you build it. Alone: the demo.",
+        allow_abbrev=False,
+    )
+    parser.add_argument("--version", action="version", version=f"preview {__version__}")
+    parser.set_defaults(run=_demo)
+    commands = parser.add_subparsers(metavar="COMMAND", parser_class=_Parser)
+
+    def command(name: str, run: Callable[[argparse.Namespace], int], about: str) -> argparse.ArgumentParser:
+        added = commands.add_parser(name, help=about, description=about, allow_abbrev=False)
+        added.set_defaults(run=run)
+        return added
+
+    listen = command("listen", _listen, "the desk: hear a recording through the stage while its parts change")
+    listen.add_argument("audio", nargs="?", metavar="AUDIO", help="the recording (default: the demo's)")
+    listen.add_argument("--silent", action="store_true", help="run without a sound device")
+    listen.add_argument(
+        "--end", metavar="loop|stop", default="loop", help="at the end: loop (default) or stop"
+    )
+    listen.add_argument("--device", metavar="NAME", help="sound device, by name")
+    listen.add_argument("--live", action="store_true", help=argparse.SUPPRESS)
+    add_stage_options(listen)
+
+    render = command("render", _render, "the recording through the stage, as a file")
+    render.add_argument("audio", metavar="AUDIO", help="the recording; - is stdin")
+    render.add_argument("out", metavar="OUT", help="the file to write (replaced if it exists); - is stdout")
+    render.add_argument(
+        "--depth", metavar="16|24|float", help="sample format; float (default) is 32-bit floating point"
+    )
+    render.add_argument("--json", action="store_true", help="the result as one JSON object")
+    add_stage_options(render)
+
+    response = command("response", _response, "gain, phase, group delay, corners and impedances of the stage")
+    response.add_argument("--at", metavar="20,1k,20k", help="frequencies (default: third-octave steps)")
+    which = response.add_mutually_exclusive_group()
+    which.add_argument("--analog", action="store_true", help="the exact circuit (default)")
+    which.add_argument("--as-heard", action="store_true", help="the running computation")
+    response.add_argument(
+        "--rate", metavar="HZ", default="48k", help="sample rate of --as-heard and --sections"
+    )
+    response.add_argument(
+        "--sections",
+        action="store_true",
+        help="IIR second-order sections of the stage by the bilinear transform",
+    )
+    response.add_argument("--prewarp", metavar="HZ", help="frequency at which the sections are exact")
+    shape = response.add_mutually_exclusive_group()
+    shape.add_argument("--json", action="store_true", help="one JSON object")
+    shape.add_argument("--csv", action="store_true", help="comma-separated values")
+    add_stage_options(response)
+
+    stages = command("stages", _stages, "the stages that come with Preview, or the text of one")
+    stages.add_argument("name", nargs="?", metavar="NAME", help="a stage")
+    stages.add_argument("--json", action="store_true", help="one JSON object")
+    opamps = command("opamps", _opamps, "the op-amp types that are known")
+    opamps.add_argument("--json", action="store_true", help="one JSON object")
+    devices = command("devices", _devices, "the sound devices")
+    devices.add_argument("--json", action="store_true", help="one JSON object")
+    return parser
+
+
+# -- the desk
+
+
+def _demo_audio() -> tuple[Path, str, str]:
+    """The demo's recording, its full scale and the stage that suits it; AudioFileError without the demo."""
+    origin = Path(__file__).resolve().parent.parent / "demo_audio" / "ORIGIN.toml"
+    try:
+        items = _demo_items(tomllib.loads(origin.read_text(encoding="utf-8")))
+        item = next((item for item in items if DEMO_ITEM in item["file"]), items[0])
+        found = origin.parent / item["file"]
+        return found, item.get("full_scale", ""), item.get("suggested_stage", "")
+    except (OSError, ValueError, LookupError) as error:
+        raise AudioFileError(
+            "the demo recordings are not beside the program", "name a recording: preview listen AUDIO"
+        ) from error
+
+
+def _demo_items(table: dict[str, object]) -> list[dict[str, str]]:
+    """Every table with a ``file`` in it, wherever it stands."""
+    found: list[dict[str, str]] = []
+    for value in table.values():
+        for entry in value if isinstance(value, list) else [value]:
+            if isinstance(entry, dict):
+                found.extend([entry] if isinstance(entry.get("file"), str) else _demo_items(entry))
+    return found
+
+
+def _demo(_options: argparse.Namespace) -> int:
+    return int(main(["listen"]))
+
+
+def _listen(options: argparse.Namespace) -> int:
+    from preview.audio.files import probe
+    from preview.engine.options import DEFAULT_STAGE, session_from
+    from preview.session import AtEnd
+
+    if options.live:
+        raise UsageError(
+            "live input is not available in this version", "name a recording: preview listen AUDIO"
+        )
+    if options.end not in (end.value for end in AtEnd):
+        raise UsageError(f"--end {options.end}: no such end", "loop or stop")
+    stage = DEFAULT_STAGE
+    if options.audio is None:
+        audio, full_scale, suggested = _demo_audio()
+        options.full_scale = options.full_scale or full_scale or None
+        stage = suggested or stage
+    else:
+        audio = Path(options.audio)
+    if str(audio) == "-":
+        raise UsageError(
+            "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
+        )
+    info = probe(audio)
+    session = session_from(options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage)
+    _echo(session, info.warnings)
+    if not (sys.stdin.isatty() and sys.stdout.isatty()):
+        raise UsageError("the desk needs a terminal", "preview render works without one")
+    from preview.engine.process import EngineConfig, EngineProcess
+
+    config = EngineConfig(session=session, device=options.device, silent=options.silent)
+    engine = EngineProcess.start(config)
+    try:
+        from preview.ui.app import run_desk
+
+        run_desk(session, engine, restart=lambda: EngineProcess.start(config))
+    finally:
+        engine.close()
+    return 0
+
+
+def _echo(session: Session, warnings: Sequence[str]) -> None:
+    """Say how the options were understood."""
+    for note in session.notes:
+        _say(f"  {printable(note)}")
+    for warning in warnings:
+        _say(f"preview: warning: {printable(warning)}")
+
+
+# -- render
+
+
+def _render(options: argparse.Namespace) -> int:
+    from preview.audio.sink import check_output
+    from preview.engine.options import session_from
+    from preview.engine.render import open_source, render
+    from preview.engine.report import render_lines, render_object
+
+    depth = options.depth or "float"
+    if depth not in ("16", "24", "float"):
+        raise UsageError(f"--depth {depth}: no such sample format", "one of 16, 24, float")
+    audio, out = Path(options.audio), Path(options.out)
+    check_output(out, [audio], depth=depth)
+    source = open_source(audio)
+    try:
+        info = source.info
+        session = session_from(options, audio=audio, comment=info.comment)
+        _echo(session, source.warnings)
+        progress = _Progress(info.frames, enabled=sys.stderr.isatty())
+        try:
+            result = render(session, source, out, depth=depth, progress=progress)
+        finally:
+            progress.clear()
+    finally:
+        source.close()
+    from preview.analysis.response import response_error_db
+
+    deviation_db = response_error_db(session.netlist(), result.sample_rate_hz, session.quality)
+    if options.json:
+        text = _json(render_object(session, result, deviation_db, out))
+    else:
+        text = "\n".join(render_lines(result, deviation_db, out))
+    print(text, file=sys.stderr if options.out == "-" else sys.stdout)
+    return 0
+
+
+class _Progress:
+    """One line on stderr that is written over: share done, a bar, time left."""
+
+    def __init__(self, frames: int, *, enabled: bool) -> None:
+        self._frames = frames
+        self._enabled = enabled and frames > 0
+        self._began_s = time.monotonic()
+        self._shown_s = -1.0
+
+    def __call__(self, done: int) -> None:
+        now_s = time.monotonic() - self._began_s
+        if not self._enabled or now_s - self._shown_s < 0.1:
+            return
+        self._shown_s = now_s
+        share = min(done / self._frames, 1.0)
+        left_s = now_s * (1.0 - share) / share if share > 0 else 0.0
+        bar = ("#" * round(30 * share)).ljust(30, ".")
+        sys.stderr.write(f"\r{100 * share:4.0f} %  {bar}  {left_s:4.0f} s left ")
+        sys.stderr.flush()
+
+    def clear(self) -> None:
+        """Take the line away."""
+        if self._enabled and self._shown_s >= 0:
+            sys.stderr.write("\r" + " " * 60 + "\r")
+            sys.stderr.flush()
+
+
+# -- response and lists
+
+
+def _response(options: argparse.Namespace) -> int:
+    from preview.analysis import table as tables
+    from preview.engine.options import session_from, understood_values
+
+    session = session_from(options)
+    circuit = session.netlist()
+    rate_hz = _frequency(options.rate, "--rate", 8_000.0, 192_000.0)
+    body: dict[str, object] = {"command": "response", "understood": understood_values(session)}
+    if options.sections:
+        prewarp_hz = None
+        if options.prewarp is not None:
+            prewarp_hz = _frequency(options.prewarp, "--prewarp", 0.0, 0.4999 * rate_hz)
+        rows = tables.second_order_sections(circuit, rate_hz, prewarp_hz=prewarp_hz)
+        names = ("b0", "b1", "b2", "a0", "a1", "a2")
+        body |= {"sample_rate_hz": rate_hz, "prewarp_hz": prewarp_hz, "sections": rows}
+        lines = [",".join(names), *(",".join(f"{v:.17g}" for v in row) for row in rows)]
+        if not options.csv:
+            lines = ["".join(f"{n:>25}" for n in names)]
+            lines += ["".join(f"{v:>25.17g}" for v in row) for row in rows]
+    else:
+        highest_hz = 0.45 * rate_hz if options.as_heard else 1e9
+        wanted = [f for f in tables.PREFERRED_HZ if f <= highest_hz]
+        if options.at is not None:
+            wanted = [_frequency(text, "--at", 0.0, highest_hz) for text in options.at.split(",")]
+        table = tables.tabulate(
+            circuit,
+            wanted,
+            sample_rate_hz=rate_hz if options.as_heard else None,
+            quality=session.quality,
+        )
+        body |= {"as_heard": options.as_heard, **table.as_object()}
+        if options.as_heard:
+            body |= {"sample_rate_hz": rate_hz, "quality": session.quality.value}
+        lines = [table.as_csv()] if options.csv else table.as_lines()
+    print(_json(body) if options.json else "\n".join(lines))
+    return 0
+
+
+def _frequency(text: str, option: str, low_hz: float, high_hz: float) -> float:
+    """A frequency [Hz] within bounds."""
+    from preview.engine.options import for_option
+    from preview.values.notation import format_value, parse_value
+
+    value = for_option(option, lambda: parse_value(text.strip(), "frequency"))
+    if not low_hz <= value <= high_hz or value <= 0.0:
+        high = format_value(high_hz, "frequency")
+        raise UsageError(f"{option} {text}: out of range", f"above {low_hz:g} Hz, at most {high}")
+    return value
+
+
+def _stages(options: argparse.Namespace) -> int:
+    from preview.circuit.library import find_stage, stage_names, stage_source
+
+    if options.name is not None:
+        stage = find_stage(options.name)
+        source = stage_source(options.name)
+        if options.json:
+            print(_json({"command": "stages", "name": stage.name, "title": stage.title, "toml": source}))
+        else:
+            sys.stdout.write(source if source.endswith("\n") else source + "\n")
+        return 0
+    stages = [find_stage(name) for name in stage_names()]
+    if options.json:
+        listed = [{"name": s.name, "title": s.title, "about": s.about} for s in stages]
+        print(_json({"command": "stages", "stages": listed}))
+    else:
+        width = max(len(s.name) for s in stages)
+        for s in stages:
+            print(f"{s.name:<{width}}  {printable(s.title)}")
+    return 0
+
+
+def _opamps(options: argparse.Namespace) -> int:
+    from preview.circuit.opamp import BUILT_IN_TYPES
+
+    about = {"perfect": "no limit at all", "ideal": "no limit but the rails"}
+    if options.json:
+        listed = [{"name": name, "about": about[name]} for name in BUILT_IN_TYPES]
+        print(_json({"command": "opamps", "opamps": listed}))
+    else:
+        for name in BUILT_IN_TYPES:
+            print(f"{name:<8}  {about[name]}")
+    return 0
+
+
+def _devices(options: argparse.Namespace) -> int:
+    from preview.audio.devices import output_devices
+
+    devices = output_devices()
+    if options.json:
+        from dataclasses import asdict
+
+        print(_json({"command": "devices", "devices": [asdict(d) for d in devices]}))
+    else:
+        for d in devices:
+            mark = "*" if d.is_default else " "
+            rate = f"{d.default_sample_rate_hz:g} Hz, up to {d.max_output_channels} channels"
+            print(f"{mark} {printable(d.name)}  ({printable(d.host_api)}, {rate})")
+        if not devices:
+            _say("preview: there is no sound device")
+    return 0
+
+
+def _json(body: dict[str, object]) -> str:
+    """One versioned object; what is not a finite number becomes null."""
+    return json.dumps(
+        _plain({"preview": __version__, "format": 1, **body}), allow_nan=False, ensure_ascii=True
+    )
+
+
+def _plain(value: object) -> object:
+    if isinstance(value, float):
+        return value if abs(value) < float("inf") else None
+    if isinstance(value, dict):
+        return {str(key): _plain(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_plain(item) for item in value]
+    return value

@@ -1,0 +1,1 @@
+"""Signal computation: bilinear transform, running step, oversampling, the stage as a block."""

@@ -1,0 +1,153 @@
+"""The one way from samples to samples, live and off-line: samples, volts, circuit, volts, samples."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import replace
+from typing import Protocol
+
+import numpy as np
+from numpy.typing import NDArray
+
+from preview.circuit.opamp import OpAmpReading
+from preview.dsp.block import Volts
+from preview.meters.reading import LevelReading
+
+__all__ = ["Circuit", "Meter", "Samples", "SignalPath", "joined_readings", "peak", "spread"]
+
+Samples = NDArray[np.float64]
+"""Signal as a share of full scale, shape (frames, channels), float64."""
+
+
+class Circuit(Protocol):
+    """The running circuit: what ``preview.dsp.chain.Chain`` offers to the loop."""
+
+    @property
+    def latency_frames(self) -> int:
+        """Delay from input to output [frames]."""
+
+    @property
+    def gliding(self) -> bool:
+        """Whether a part is on its way to a new value."""
+
+    @property
+    def swapping(self) -> bool:
+        """Whether two circuits are being crossfaded."""
+
+    def process(self, volts_in: Volts, volts_out: Volts) -> None:
+        """Fill ``volts_out`` from the next ``volts_in``."""
+
+    def reset(self) -> None:
+        """Back to the state before the first frame."""
+
+    def set_bypass(self, on: bool) -> None:
+        """Pass the input on, at the same delay."""
+
+    def readings(self) -> Sequence[OpAmpReading]:
+        """One reading an op-amp since they were cleared."""
+
+    def clear_readings(self) -> None:
+        """Start the readings anew."""
+
+
+class Meter(Protocol):
+    """A level meter."""
+
+    def feed(self, volts: Volts) -> None:
+        """Take the next frames into account."""
+
+    def read(self) -> LevelReading:
+        """The levels; the peak is the one since the last reading."""
+
+    def clear_hold(self) -> None:
+        """Forget the peak hold."""
+
+
+class SignalPath:
+    """Carries samples through the circuit; both the renderer and the player run this.
+
+    Parameters
+    ----------
+    circuit : Circuit
+        The running circuit.
+    channels : int
+        Channels of the recording.
+    full_scale_v : float
+        Peak volts of an input sample of 1.0.
+    out_full_scale_v : float, optional
+        Peak volts of an output sample of 1.0; that of the input where not given.
+    max_frames : int
+        Longest block that ``run`` is given.
+    """
+
+    def __init__(
+        self,
+        circuit: Circuit,
+        *,
+        channels: int,
+        full_scale_v: float,
+        out_full_scale_v: float | None = None,
+        max_frames: int,
+    ) -> None:
+        self.circuit = circuit
+        self.full_scale_v = full_scale_v
+        self.out_full_scale_v = out_full_scale_v
+        self.max_frames = max_frames
+        self._volts_in = np.zeros((max_frames, channels))
+        self._volts_out = np.zeros((max_frames, channels))
+
+    def run(self, samples_in: Samples, samples_out: Samples) -> tuple[Volts, Volts]:
+        """Fill ``samples_out`` from the next ``samples_in``; the volts at both ends, valid until the next."""
+        frames = len(samples_in)
+        volts_in = self._volts_in[:frames]
+        volts_out = self._volts_out[:frames]
+        np.multiply(samples_in, self.full_scale_v, out=volts_in)
+        self.circuit.process(volts_in, volts_out)
+        np.divide(volts_out, self.out_full_scale_v or self.full_scale_v, out=samples_out)
+        return volts_in, volts_out
+
+
+def peak(volts: Volts) -> float:
+    """Largest magnitude [in the unit given]; nan if any value is not a number, 0 for none."""
+    if volts.size == 0:
+        return 0.0
+    high, low = float(volts.max()), float(volts.min())
+    return math.nan if math.isnan(high) else max(high, -low)
+
+
+def spread(samples: Samples, out: NDArray[np.float32]) -> None:
+    """Lay the recording's channels on the device's: one on all, several on one as their mean."""
+    have, want = samples.shape[1], out.shape[1]
+    if have == 1 or want == have:
+        out[:] = samples
+    elif want == 1:
+        np.mean(samples, axis=1, keepdims=True, out=samples[:, :1])
+        out[:] = samples[:, :1]
+    else:
+        both = min(have, want)
+        out[:, :both] = samples[:, :both]
+        out[:, both:] = 0.0
+
+
+def joined_readings(
+    earlier: Sequence[OpAmpReading], later: Sequence[OpAmpReading]
+) -> tuple[OpAmpReading, ...]:
+    """Readings of the same op-amps over two spans as one; other op-amps than before count from new."""
+    if [one.designator for one in earlier] != [one.designator for one in later]:
+        return tuple(later)
+    return tuple(
+        replace(
+            new,
+            peak_v=max(old.peak_v, new.peak_v),
+            high_v=max(old.high_v, new.high_v),
+            low_v=min(old.low_v, new.low_v),
+            headroom_db=min(old.headroom_db, new.headroom_db),
+            clip_events=old.clip_events + new.clip_events,
+            clipped_s=old.clipped_s + new.clipped_s,
+            slew_peak_v_per_s=max(old.slew_peak_v_per_s, new.slew_peak_v_per_s),
+            current_peak_a=max(old.current_peak_a, new.current_peak_a),
+            unsolved_steps=old.unsolved_steps + new.unsolved_steps,
+        )
+        for old, new in zip(earlier, later, strict=True)
+    )

@@ -1,0 +1,254 @@
+"""The stage options of the command line, read into a session; each says how it was understood."""
+
+from __future__ import annotations
+
+import argparse
+import re
+from collections.abc import Callable, Sequence
+from pathlib import Path
+from typing import TypeVar
+
+from preview.circuit.library import find_stage, with_overrides
+from preview.circuit.parts import Stage, Supply
+from preview.errors import NotationError, UsageError, printable
+from preview.session import AtEnd, Session
+from preview.values.levels import (
+    FullScale,
+    format_volts,
+    full_scale_in_comment,
+    parse_full_scale,
+    parse_supply,
+)
+from preview.values.notation import parse_value, understood
+from preview.values.quality import Quality
+
+__all__ = [
+    "DEFAULT_FULL_SCALE",
+    "DEFAULT_STAGE",
+    "add_stage_options",
+    "for_option",
+    "join_signed_values",
+    "session_from",
+    "understood_values",
+]
+
+T = TypeVar("T")
+
+DEFAULT_STAGE = "inverting-low-pass"
+DEFAULT_FULL_SCALE = "+18 dBu"
+
+VALUE_OPTIONS = (
+    "--stage",
+    "--part",
+    "--opamp",
+    "--supply",
+    "--source",
+    "--load",
+    "--full-scale",
+    "--quality",
+    "--at",
+    "--rate",
+    "--prewarp",
+    "--depth",
+    "--device",
+    "--end",
+)
+"""Options that take a text; one that begins with a minus sign belongs to them all the same."""
+
+
+def join_signed_values(arguments: Sequence[str]) -> list[str]:
+    """The arguments with ``--supply "-15 15"`` as ``--supply=-15 15``: its minus sign begins no option."""
+    joined: list[str] = []
+    waiting = list(arguments)
+    while waiting:
+        word = waiting.pop(0)
+        if word == "--":
+            return [*joined, word, *waiting]
+        if word in VALUE_OPTIONS and waiting and re.match(r"-\s*[\d.∞i]", waiting[0]):
+            word = f"{word}={waiting.pop(0)}"
+        joined.append(word)
+    return joined
+
+
+def add_stage_options(parser: argparse.ArgumentParser) -> None:
+    """Add the options that every command with a stage takes."""
+    group = parser.add_argument_group("stage options")
+    group.add_argument(
+        "--stage", action="append", metavar="NAME|FILE", help=f"the stage (default {DEFAULT_STAGE})"
+    )
+    group.add_argument(
+        "--part", action="append", default=[], metavar="R1=4k7", help="a part value; may be repeated"
+    )
+    group.add_argument(
+        "--opamp",
+        action="append",
+        default=[],
+        metavar="TYPE|U1=TYPE",
+        help="op-amp type, of all or of one; may be repeated",
+    )
+    group.add_argument("--supply", metavar="VOLTS", help='rails: "+15 -15", or "9" for a single supply')
+    group.add_argument("--source", metavar="OHM", help="resistance of the source (default 0)")
+    group.add_argument("--load", metavar="OHM", help="resistance of the load (default none)")
+    group.add_argument(
+        "--full-scale",
+        metavar="LEVEL",
+        help=f'volts of sample 1.0: "+18 dBu", "2 Vrms", "5 V" peak (default {DEFAULT_FULL_SCALE})',
+    )
+    group.add_argument(
+        "--quality",
+        metavar="QUALITY",
+        default=Quality.STANDARD.value,
+        help="draft, standard (default) or fine",
+    )
+
+
+def session_from(
+    options: argparse.Namespace,
+    *,
+    audio: Path | None = None,
+    comment: str = "",
+    at_end: AtEnd = AtEnd.LOOP,
+    stage: str = DEFAULT_STAGE,
+) -> Session:
+    """The session that the options describe.
+
+    Parameters
+    ----------
+    options : argparse.Namespace
+        What ``add_stage_options`` collected.
+    audio : Path, optional
+        The recording.
+    comment : str
+        The recording's comment; a full scale stated there holds unless the options give one.
+    at_end : AtEnd
+        What happens at the end of the file.
+    stage : str
+        Stage to take where the options name none.
+
+    Raises
+    ------
+    UsageError
+        A text is not understood, or two texts contradict each other.
+    CircuitError
+        The stage, a part or an op-amp is unknown, or the circuit cannot be computed.
+    """
+    named: list[str] = options.stage or [stage]
+    if len(named) > 1:
+        raise UsageError(
+            f"{len(named)} stages given; this version computes one stage at a time", "give --stage once"
+        )
+    notes: list[str] = []
+    drawn = find_stage(named[0])
+    notes.append(f"stage {drawn.name}: {drawn.title}")
+    parts = _assignments(options.part)
+    changed, part_notes = with_overrides(drawn, parts, _opamp_types(options.opamp))
+    notes.extend(part_notes)
+    supply = changed.supply
+    if options.supply is not None:
+        supply = Supply(*for_option("--supply", lambda: parse_supply(options.supply)))
+    notes.append(f"supply {format_volts(supply.positive_v)} and {format_volts(supply.negative_v)}")
+    source_ohm = 0.0
+    if options.source is not None:
+        source_ohm = for_option(
+            "--source", lambda: parse_value(options.source, "resistance", allow_zero=True)
+        )
+        notes.append(f"source {understood(options.source, 'resistance', allow_zero=True)}")
+    load_ohm: float | None = None
+    if options.load is not None and options.load.strip().lower() != "none":
+        load_ohm = for_option("--load", lambda: parse_value(options.load, "resistance"))
+        notes.append(f"load {understood(options.load, 'resistance')}")
+    full_scale, full_scale_note = _full_scale(options.full_scale, comment)
+    notes.append(full_scale_note)
+    session = Session(
+        audio=audio,
+        stage=changed,
+        supply=supply,
+        source_ohm=source_ohm,
+        load_ohm=load_ohm,
+        full_scale=full_scale,
+        quality=_quality(options.quality),
+        at_end=at_end,
+        notes=tuple(printable(note) for note in notes),
+    )
+    session.netlist()
+    return session
+
+
+def for_option(option: str, read: Callable[[], T]) -> T:
+    """What ``read`` gives; the option's name is put before a text that it does not understand."""
+    try:
+        return read()
+    except NotationError as error:
+        raise NotationError(f"{option} {error.message}", error.hint) from error
+
+
+def _assignments(texts: Sequence[str]) -> dict[str, str]:
+    """``["R1=4k7"]`` as ``{"R1": "4k7"}``."""
+    found: dict[str, str] = {}
+    for text in texts:
+        designator, equals, value = (piece.strip() for piece in text.partition("="))
+        if not (designator and equals and value):
+            raise UsageError(f"--part {text}: no part and value in it", "write --part R1=4k7")
+        if found.get(designator, value) != value:
+            raise UsageError(
+                f"--part gives {designator} two values, {found[designator]} and {value}",
+                "give each part once",
+            )
+        found[designator] = value
+    return found
+
+
+def _opamp_types(texts: Sequence[str]) -> dict[str | None, str]:
+    """``["U1=ideal"]`` as ``{"U1": "ideal"}``; a type alone stands under None."""
+    found: dict[str | None, str] = {}
+    for text in texts:
+        head, equals, tail = (piece.strip() for piece in text.partition("="))
+        designator, type_name = (head, tail) if equals else (None, head)
+        if not type_name or designator == "":
+            raise UsageError(
+                f"--opamp {text}: no op-amp type in it", "write --opamp ideal or --opamp U1=ideal"
+            )
+        if found.get(designator, type_name) != type_name:
+            raise UsageError(
+                f"--opamp gives {designator or 'all op-amps'} two types, {found[designator]} and {type_name}",
+                "give each op-amp once",
+            )
+        found[designator] = type_name
+    return found
+
+
+def _full_scale(text: str | None, comment: str) -> tuple[FullScale, str]:
+    """The full scale in force and a line that says where it is from."""
+    if text is not None:
+        level, origin = for_option("--full-scale", lambda: parse_full_scale(text)), "as given"
+    elif (stated := full_scale_in_comment(comment)) is not None:
+        level, origin = stated, "from the file's comment"
+    else:
+        level, origin = parse_full_scale(DEFAULT_FULL_SCALE), "assumed; --full-scale sets it"
+    return level, f"full scale {level.text} = {format_volts(level.volts)} peak ({origin})"
+
+
+def _quality(text: str) -> Quality:
+    """The quality of that name."""
+    try:
+        return Quality(text.strip().lower())
+    except ValueError:
+        known = ", ".join(q.value for q in Quality)
+        raise UsageError(f"--quality {text}: no such quality", f"one of {known}") from None
+
+
+def understood_values(session: Session) -> dict[str, object]:
+    """What was understood, in SI base units, for a report."""
+    stage: Stage = session.stage
+    return {
+        "stage": stage.name,
+        "parts": {part.designator: part.value for part in stage.valued},
+        "opamps": {opamp.designator: opamp.type for opamp in stage.opamps},
+        "supply_positive_v": session.supply.positive_v,
+        "supply_negative_v": session.supply.negative_v,
+        "source_ohm": session.source_ohm,
+        "load_ohm": session.load_ohm,
+        "full_scale_v": session.full_scale.volts,
+        "quality": session.quality.value,
+        "notes": list(session.notes),
+    }

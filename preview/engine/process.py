@@ -1,0 +1,172 @@
+"""The engine as a process of its own: a handle for the desk, and the door by which the child comes in."""
+
+from __future__ import annotations
+
+import contextlib
+import multiprocessing
+import queue
+import sys
+import threading
+from collections import deque
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from multiprocessing import resource_tracker
+from multiprocessing.connection import Connection
+from pathlib import Path
+from typing import TYPE_CHECKING
+
+from preview.engine.messages import ClearHolds, Command, Notice, Quit, Snapshot
+from preview.meters.reading import LevelReading
+from preview.session import Session
+
+if TYPE_CHECKING:
+    from multiprocessing.context import SpawnProcess
+
+__all__ = ["EngineConfig", "EngineProcess"]
+
+START_VOLUME_DB = -20.0
+
+
+@dataclass(frozen=True, slots=True)
+class EngineConfig:
+    """What an engine is started with."""
+
+    session: Session
+    """What is heard, through what, at which levels."""
+    device: str | None = None
+    """Sound device by name; None for the default."""
+    silent: bool = False
+    """Run on the silent clock, without a device."""
+    start_volume_db: float = START_VOLUME_DB
+    """Listening volume at the start [dB]."""
+    block_frames: int | None = None
+    """Frames a block; None lets the device choose."""
+    play: bool = False
+    """Whether it plays at once."""
+    log: Path | None = None
+    """File for what the audio libraries write; None for the person's log folder."""
+
+
+class EngineProcess:
+    """A running engine. No method but ``close`` waits. Made by ``start``."""
+
+    def __init__(self, process: SpawnProcess, connection: Connection) -> None:
+        self._process = process
+        self._connection = connection
+        self._unread: Snapshot | None = None
+        self._notices: deque[Notice] = deque()
+        self._guard = threading.Lock()
+        self._orders: queue.SimpleQueue[Command | None] = queue.SimpleQueue()
+        self._closed = False
+        threading.Thread(target=self._listen, name="engine-reader", daemon=True).start()
+        threading.Thread(target=self._speak, name="engine-writer", daemon=True).start()
+
+    @classmethod
+    def start(cls, config: EngineConfig) -> EngineProcess:
+        """Start an engine process; returns at once, its first snapshot follows within a second or two."""
+        context = multiprocessing.get_context("spawn")
+        with _real_stderr():
+            resource_tracker.ensure_running()
+            ours, theirs = context.Pipe(duplex=True)
+            process = context.Process(
+                target=_child, args=(theirs, config), name="preview-engine", daemon=True
+            )
+            process.start()
+        theirs.close()
+        return cls(process, ours)
+
+    @property
+    def alive(self) -> bool:
+        """Whether the engine still runs."""
+        return not self._closed and self._process.is_alive()
+
+    @property
+    def pid(self) -> int | None:
+        """Process id of the engine."""
+        return self._process.pid
+
+    def send(self, command: Command) -> None:
+        """Hand over a command; dropped without an error when the engine has stopped."""
+        if not self._closed:
+            self._orders.put(command)
+
+    def latest(self) -> Snapshot | None:
+        """The newest snapshot, None if there is none since the last call; its peaks reach back to there."""
+        with self._guard:
+            snapshot, self._unread = self._unread, None
+        return snapshot
+
+    def notices(self) -> list[Notice]:
+        """Notices since the last call, oldest first."""
+        with self._guard:
+            told = list(self._notices)
+            self._notices.clear()
+        return told
+
+    def close(self, timeout_s: float = 2.0) -> None:
+        """Fade out and end the engine, by force if it does not answer; a second call does nothing."""
+        if self._closed:
+            return
+        self._closed = True
+        self._orders.put(Quit())
+        self._orders.put(None)
+        self._process.join(timeout_s)
+        for force in (self._process.terminate, self._process.kill):
+            if self._process.is_alive():
+                force()
+                self._process.join(1.0)
+        self._connection.close()
+
+    def _listen(self) -> None:
+        """Take in what the engine says until it falls silent."""
+        with contextlib.suppress(EOFError, OSError):
+            while True:
+                message = self._connection.recv()
+                with self._guard:
+                    if isinstance(message, Snapshot):
+                        self._unread = _with_peaks_of(message, self._unread)
+                    elif isinstance(message, Notice):
+                        self._notices.append(message)
+
+    def _speak(self) -> None:
+        """Send the orders on; a full pipe makes this thread wait, not the desk."""
+        with contextlib.suppress(OSError, ValueError):
+            while (command := self._orders.get()) is not None:
+                if isinstance(command, ClearHolds):
+                    with self._guard:
+                        self._unread = None
+                self._connection.send(command)
+
+
+def _with_peaks_of(new: Snapshot, unread: Snapshot | None) -> Snapshot:
+    """The new snapshot; its peaks not below those of one that nobody has read."""
+    if unread is None:
+        return new
+    return replace(
+        new, input=_higher_peaks(new.input, unread.input), output=_higher_peaks(new.output, unread.output)
+    )
+
+
+def _higher_peaks(new: LevelReading, old: LevelReading) -> LevelReading:
+    if len(new.peak_v) != len(old.peak_v):
+        return new
+    return replace(new, peak_v=tuple(map(max, new.peak_v, old.peak_v)))
+
+
+@contextlib.contextmanager
+def _real_stderr() -> Iterator[None]:
+    """The process's own stderr while a child is started: a desk may have put one without a file there."""
+    held = sys.stderr
+    if sys.__stderr__ is not None:
+        sys.stderr = sys.__stderr__
+    try:
+        yield
+    finally:
+        sys.stderr = held
+
+
+def _child(connection: Connection, config: EngineConfig) -> None:
+    """Runs in the child: everything that touches sound is loaded here and nowhere else."""
+    from preview.engine.host import run
+
+    run(connection, config)

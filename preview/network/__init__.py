@@ -1,0 +1,1 @@
+"""From a netlist to equations: exact response, impedances, DC point, state space."""

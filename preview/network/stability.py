@@ -1,0 +1,59 @@
+"""Does a circuit stay where it is put? Signs of feedback and poles of the closed loop."""
+
+from __future__ import annotations
+
+import numpy as np
+from numpy.typing import NDArray
+
+from preview.circuit.netlist import Netlist
+from preview.errors import CircuitError
+from preview.network.statespace import StateSpace, Topology
+
+__all__ = ["check_stable", "closed_loop_poles"]
+
+TRIAL_GAIN_BANDWIDTH_RAD = 2.0 * np.pi * 100e6
+"""Gain-bandwidth that every op-amp is given to try the sign of its feedback [rad/s]."""
+
+
+def closed_loop_poles(netlist: Netlist) -> NDArray[np.complex128]:
+    """Natural frequencies of the circuit while no op-amp limits [rad/s]."""
+    topology = Topology(netlist)
+    space = topology.evaluate(topology.values_of(netlist)[None])
+    return np.asarray(np.linalg.eigvals(space.closed()[0][0]), dtype=np.complex128)
+
+
+def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
+    """Refuse a circuit that runs away.
+
+    An ideal op-amp's equations do not know which input is which. So each op-amp is first taken as an integrator
+    of its input difference: with its feedback the wrong way round that loop grows at about the gain-bandwidth.
+    Then the poles of the ideal circuit itself must lie in the left half plane.
+
+    Raises
+    ------
+    CircuitError
+        Positive feedback, or a pole that grows.
+    """
+    if space is None:
+        topology = Topology(netlist)
+        space = topology.evaluate(topology.values_of(netlist)[None])
+    A, B, C_e, D_e = space.A[0], space.B[0], space.C_e[0], space.D_e[0]
+    wt = TRIAL_GAIN_BANDWIDTH_RAD
+    loop = np.block([[A, B[:, 1:]], [wt * C_e, wt * D_e[:, 1:]]])
+    if loop.size:
+        worst = float(np.linalg.eigvals(loop).real.max())
+        if worst > 1e-6 * wt:
+            names = ", ".join(o.designator for o in netlist.opamps)
+            raise CircuitError(
+                f"positive feedback: with {names} as connected the output runs to a rail and stays there",
+                "swap the + and - inputs, or lead more of the output back to the - input",
+            )
+    poles = np.linalg.eigvals(space.closed()[0][0])
+    if poles.size:
+        growing = poles[poles.real > 1e-9 * np.abs(poles).max()]
+        if growing.size:
+            pole = growing[np.argmax(growing.real)]
+            raise CircuitError(
+                f"the circuit is unstable: it oscillates or grows at {abs(pole) / (2 * np.pi):.4g} Hz",
+                "less positive feedback, or a lower gain in the loop",
+            )

@@ -1,0 +1,56 @@
+"""A session: what is heard, through what, at which levels. Everything needed to repeat a render."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from enum import StrEnum
+from pathlib import Path
+
+from preview.circuit.netlist import Netlist, netlist
+from preview.circuit.parts import Stage, Supply
+from preview.values.levels import FullScale
+from preview.values.quality import Quality
+
+__all__ = ["AtEnd", "Session"]
+
+
+class AtEnd(StrEnum):
+    """What happens when the file, or the region, ends."""
+
+    LOOP = "loop"
+    """Start again without a gap."""
+    STOP = "stop"
+    """Fade out and wait at the start."""
+
+
+@dataclass(frozen=True, slots=True)
+class Session:
+    """Everything needed to hear or repeat a render."""
+
+    audio: Path | None
+    """The recording; None for none yet."""
+    stage: Stage
+    """The stage with the part values and op-amp types as set."""
+    supply: Supply
+    """The rails in force."""
+    source_ohm: float
+    """Resistance of the source [ohm]; 0 for an ideal one."""
+    load_ohm: float | None
+    """Resistance of the load [ohm]; None for no load."""
+    full_scale: FullScale
+    """The volts that a sample of 1.0 stands for."""
+    quality: Quality = Quality.STANDARD
+    """Quality of computation."""
+    at_end: AtEnd = AtEnd.LOOP
+    """What happens at the end of the file or region."""
+    notes: tuple[str, ...] = field(default=())
+    """How each option was understood, one line each, for the screen."""
+
+    def netlist(self) -> Netlist:
+        """The checked netlist; raises CircuitError."""
+        return netlist(
+            self.stage,
+            supply=self.supply,
+            source_ohm=self.source_ohm,
+            load_ohm=self.load_ohm,
+        )

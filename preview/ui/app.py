@@ -1,0 +1,411 @@
+"""The desk as a terminal application. It never touches audio: the engine is another process."""
+
+from __future__ import annotations
+
+import asyncio
+import contextlib
+import sys
+from collections.abc import Callable
+from pathlib import Path
+from typing import ClassVar
+
+from textual.app import App, ComposeResult
+from textual.binding import BindingType
+from textual.containers import Horizontal, Vertical
+from textual.events import AppBlur, AppFocus, Resize
+
+from preview.circuit.library import find_stage
+from preview.circuit.netlist import Netlist
+from preview.engine.messages import SetVolume
+from preview.errors import PreviewError
+from preview.session import Session
+from preview.ui.actions import ACTIONS, Group, bindings
+from preview.ui.changes import render_command
+from preview.ui.desk import Desk
+from preview.ui.figures import Figures, MakeFigures, compute_figures
+from preview.ui.firstrun import caution_seen, config_folder, remember_caution
+from preview.ui.link import EngineLink, Restart
+from preview.ui.panels.curve import CurvePanel
+from preview.ui.panels.figures import FiguresPanel
+from preview.ui.panels.footer import FooterPanel
+from preview.ui.panels.header import HeaderPanel
+from preview.ui.panels.meters import MetersPanel
+from preview.ui.panels.parts import PartsPanel
+from preview.ui.panels.schematic import SchematicPanel
+from preview.ui.panels.timeline import TimelinePanel
+from preview.ui.questions import (
+    FILE_ANSWER,
+    Question,
+    ask_full_scale,
+    ask_load,
+    ask_part,
+    ask_source,
+    ask_stage_file,
+    ask_supply,
+    stage_choices,
+)
+from preview.ui.screens.chooser import ChooserScreen
+from preview.ui.screens.entry import EntryScreen
+from preview.ui.screens.pages import CautionScreen, CommandScreen, HelpScreen
+from preview.ui.theme import PALETTES, Look, first_palette
+from preview.ui.widgets.board import Board
+from preview.values.quality import Quality
+
+__all__ = ["DeskApp", "run_desk"]
+
+FRAMES_PER_S = 25.0
+_UNFOCUSED_EVERY = 3
+"""A window that is not looked at is painted at a third of the pace."""
+_SETTLE_S = 0.04
+"""Changes within this time become one computation of the figures [s]."""
+WIDE, TALL = 120, 38
+"""From this size on all views fit side by side, or above each other [cells]."""
+
+
+class DeskApp(App[Session]):
+    """The desk.
+
+    Parameters
+    ----------
+    session : Session
+        What is open.
+    link : EngineLink
+        The engine, already running this session; whoever started it need not close it after ``run_desk``.
+    restart : callable, optional
+        Starts another engine when this one has stopped.
+    autoplay : bool
+        Whether sound starts by itself.
+    make_figures : callable
+        Computes the response; runs in a thread.
+    config : Path, optional
+        Folder that remembers that the hearing caution was seen; the person's own if None.
+    """
+
+    CSS_PATH = "desk.tcss"
+    TITLE = "Preview"
+    ENABLE_COMMAND_PALETTE = False
+    BINDINGS: ClassVar[list[BindingType]] = [
+        *bindings(action for action in ACTIONS if action.group is not Group.DIALOG)
+    ]
+
+    def __init__(
+        self,
+        session: Session,
+        link: EngineLink,
+        *,
+        restart: Restart | None = None,
+        autoplay: bool = True,
+        make_figures: MakeFigures = compute_figures,
+        config: Path | None = None,
+    ) -> None:
+        super().__init__()
+        self.desk = Desk(session, link)
+        self.look = Look(first_palette())
+        self._restart = restart
+        self._restarting = False
+        self._autoplay = autoplay
+        self._make_figures = make_figures
+        self._config = config or config_folder()
+        self._focused = True
+        self._polls = 0
+        self._rate_hz = 0.0
+        self._wanted = asyncio.Event()
+        self._known: dict[tuple[Netlist, float, Quality], Figures] = {}
+        self.head = HeaderPanel(self.desk, self.look)
+        self.meters = MetersPanel(self.desk, self.look)
+        self.timeline = TimelinePanel(self.desk, self.look)
+        self.parts = PartsPanel(self.desk, self.look)
+        self.curve = CurvePanel(self.desk, self.look)
+        self.schematic = SchematicPanel(self.desk, self.look)
+        self.figures = FiguresPanel(self.desk, self.look)
+        self.foot = FooterPanel(self.look)
+
+    # ---- life ---------------------------------------------------------------------------------------------------
+
+    def compose(self) -> ComposeResult:
+        """The panels from top to bottom."""
+        yield self.head
+        yield self.meters
+        yield self.timeline
+        with Horizontal(id="work"):
+            yield self.parts
+            with Vertical(id="views"):
+                yield self.curve
+                yield self.schematic
+        yield self.figures
+        yield self.foot
+
+    def on_mount(self) -> None:
+        """Colours, the caution of the first run, and the pulse."""
+        for palette in PALETTES:
+            self.register_theme(palette.theme())
+        self.theme = self.look.palette.name
+        self.arrange(self.size.width, self.size.height)
+        self.desk.link.send(SetVolume(self.desk.volume_db))
+        for note in self.desk.session.notes[:1]:
+            self.foot.say(note)
+        self.set_interval(1.0 / FRAMES_PER_S, self.poll)
+        self.run_worker(self._keep_figures(), group="figures", exit_on_error=True)
+        self.show()
+        if caution_seen(self._config):
+            self._begin()
+        else:
+            self.push_screen(CautionScreen(), self._caution_read)
+
+    def _caution_read(self, accepted: bool | None) -> None:
+        if accepted:
+            remember_caution(self._config)
+            self._begin()
+
+    def _begin(self) -> None:
+        if self._autoplay and not self.desk.stopped:
+            self.desk.play(True)
+            self.show()
+
+    def on_resize(self, event: Resize) -> None:
+        """Another size, another arrangement."""
+        self.arrange(event.size.width, event.size.height)
+
+    def arrange(self, width: int, height: int) -> None:
+        """Set the classes that the style sheet arranges by, and the rows of meters and foot."""
+        screen = self.screen_stack[0]
+        screen.set_class(width < WIDE, "narrow")
+        screen.set_class(width >= WIDE, "wide")
+        screen.set_class(height >= TALL, "tall")
+        self.meters.styles.height = self.meters.wanted_height(height)
+        self.foot.stand(1 if height < 30 or width >= 160 else 2)
+
+    def on_app_focus(self, _event: AppFocus) -> None:
+        """Full pace."""
+        self._focused = True
+
+    def on_app_blur(self, _event: AppBlur) -> None:
+        """Slower while nobody looks."""
+        self._focused = False
+
+    # ---- what is shown ------------------------------------------------------------------------------------------
+
+    def poll(self) -> None:
+        """Take what the engine has said since the last time, and paint what changed."""
+        self._polls += 1
+        link = self.desk.link
+        if not self.desk.stopped and not link.alive:
+            self.desk.stopped = True
+            self.desk.playing = False
+            self.head.rebuild()
+        for notice in link.notices():
+            self.foot.say(notice.text, notice.severity)
+        snapshot = link.latest()
+        if snapshot is not None:
+            first = self.desk.snapshot is None
+            self.desk.take(snapshot)
+            if snapshot.sample_rate_hz != self._rate_hz:
+                self._rate_hz = snapshot.sample_rate_hz
+                self._wanted.set()
+            if first:
+                self.arrange(self.size.width, self.size.height)
+        if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
+            for board in (self.head, self.meters, self.timeline):
+                board.rebuild()
+            self.foot.tick()
+
+    def show(self) -> None:
+        """Paint everything that a key can have changed."""
+        for board in self.query(Board):
+            board.rebuild()
+        self._wanted.set()
+
+    async def _keep_figures(self) -> None:
+        """Compute figures whenever they are wanted, the newest state only, one thread at a time."""
+        while True:
+            await self._wanted.wait()
+            await asyncio.sleep(_SETTLE_S)
+            self._wanted.clear()
+            now = await self._figures_of(self.desk.session)
+            before = await self._figures_of(self.desk.before)
+            self.desk.figures.now, self.desk.figures.before = now, before
+            for board in (self.curve, self.figures):
+                board.rebuild()
+
+    async def _figures_of(self, session: Session) -> Figures:
+        try:
+            key = (session.netlist(), self._rate_hz, session.quality)
+        except PreviewError as error:
+            return Figures(problem=str(error))
+        found = self._known.get(key)
+        if found is None:
+            found = await asyncio.to_thread(self._make_figures, *key)
+            if len(self._known) > 64:
+                self._known.clear()
+            self._known[key] = found
+        return found
+
+    # ---- actions ------------------------------------------------------------------------------------------------
+
+    def action_do(self, name: str) -> None:
+        """Carry out the action of that name: the desk's own, or one with a dialog."""
+        method: Callable[[], str | None] = getattr(self.desk, f"do_{name}", None) or getattr(self, f"do_{name}")
+        try:
+            said = method()
+        except PreviewError as error:
+            self.foot.say(str(error), "error")
+        else:
+            if said:
+                self.foot.say(said)
+        self.show()
+
+    def change(self, session: Session) -> None:
+        """Make this the session, or say why not."""
+        try:
+            self.desk.change(session)
+        except PreviewError as error:
+            self.foot.say(str(error), "error")
+        self.show()
+
+    def ask(self, question: Question, then: Callable[[Session], None] | None = None) -> None:
+        """Put a question; its answer becomes the session."""
+
+        def answered(text: str | None) -> None:
+            if text is not None:
+                (then or self.change)(question.answer(text))
+
+        self.push_screen(
+            EntryScreen(
+                question.title, about=question.about, now=question.now, understand=question.understand
+            ),
+            answered,
+        )
+
+    def do_type_value(self) -> None:
+        """Type the selected part's value."""
+        if self.desk.part is not None:
+            self.ask(ask_part(self.desk.session, self.desk.part))
+
+    def do_full_scale(self) -> None:
+        """Type full scale."""
+        self.ask(ask_full_scale(self.desk.session))
+
+    def do_supply(self) -> None:
+        """Type the rails."""
+        self.ask(ask_supply(self.desk.session))
+
+    def do_source(self) -> None:
+        """Type the source's resistance."""
+        self.ask(ask_source(self.desk.session))
+
+    def do_load(self) -> None:
+        """Type the load's resistance."""
+        self.ask(ask_load(self.desk.session))
+
+    def do_choose_stage(self) -> None:
+        """Choose a stage from the list, or a file."""
+
+        def chosen(name: str | None) -> None:
+            if name == FILE_ANSWER:
+                self.ask(ask_stage_file(self.desk.session), self._open)
+            elif name is not None and name != self.desk.session.stage.name:
+                try:
+                    self.desk.open_stage(find_stage(name))
+                except PreviewError as error:
+                    self.foot.say(str(error), "error")
+                self._stage_opened()
+
+        choices = stage_choices()
+        self.push_screen(
+            ChooserScreen("Stage", choices, now=self.desk.session.stage.name, look=self.look), chosen
+        )
+
+    def _open(self, session: Session) -> None:
+        try:
+            self.desk.open_stage(session.stage)
+        except PreviewError as error:
+            self.foot.say(str(error), "error")
+        self._stage_opened()
+
+    def _stage_opened(self) -> None:
+        self.foot.say(self.desk.session.stage.about)
+        self.arrange(self.size.width, self.size.height)
+        self.show()
+
+    def do_switch_view(self) -> str | None:
+        """Curve or schematic."""
+        screen = self.screen_stack[0]
+        screen.toggle_class("drawing")
+        both = screen.has_class("wide") or screen.has_class("tall")
+        return "curve and schematic are both shown at this size" if both else None
+
+    def do_phase(self) -> None:
+        """Phase in the curve, or not."""
+        self.desk.phase_shown = not self.desk.phase_shown
+
+    def do_colours(self) -> None:
+        """The other palette."""
+        self.look.switch()
+        self.theme = self.look.palette.name
+
+    def do_help(self) -> None:
+        """The help page."""
+        self.push_screen(HelpScreen())
+
+    def do_write_out(self) -> None:
+        """Show the command that renders what is set."""
+        stage = self.desk.session.stage
+        opened = find_stage(str(stage.path or stage.name))
+        self.push_screen(CommandScreen(render_command(self.desk.session, opened)))
+
+    def do_restart(self) -> str | None:
+        """Start another engine when this one has stopped."""
+        if not self.desk.stopped:
+            return "the engine is running"
+        if self._restart is None:
+            return "leave the desk with q and open it again: this engine cannot be restarted from here"
+        if not self._restarting:
+            self._restarting = True
+            self.run_worker(self._start_again(self._restart), group="restart")
+        return "starting the engine again"
+
+    async def _start_again(self, restart: Restart) -> None:
+        self.desk.link.close()
+        try:
+            # A new process inherits standard error; while the desk runs, sys.stderr is not a real file.
+            with contextlib.redirect_stderr(sys.__stderr__):
+                link = await asyncio.to_thread(restart)
+        except PreviewError as error:
+            self.foot.say(str(error), "error")
+        else:
+            self.desk.resume(link)
+            self.foot.say("the engine runs again; space plays")
+        finally:
+            self._restarting = False
+            self.show()
+
+    def do_quit(self) -> None:
+        """Leave the desk."""
+        self.exit(self.desk.session)
+
+
+def run_desk(
+    session: Session,
+    link: EngineLink,
+    *,
+    restart: Restart | None = None,
+    autoplay: bool = True,
+    config: Path | None = None,
+) -> Session:
+    """Run the desk until the person leaves; the session as it was left.
+
+    The engine behind ``link`` must be running before this is called, and is closed when it returns.
+
+    Raises
+    ------
+    PreviewError
+        The desk stopped on a fault of its own; the terminal is restored and the fault is on standard error.
+    """
+    app = DeskApp(session, link, restart=restart, autoplay=autoplay, config=config)
+    try:
+        left = app.run()
+    finally:
+        app.desk.link.close()
+    if left is None and app.return_code:
+        raise PreviewError("the desk stopped on a fault of its own", "the report stands above")
+    return left or app.desk.session

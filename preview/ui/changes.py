@@ -1,0 +1,106 @@
+"""From one session to the next: the commands that bring the engine along, and the command line that repeats it."""
+
+from __future__ import annotations
+
+import shlex
+from dataclasses import replace
+
+from preview.circuit.limits import QUANTITY
+from preview.circuit.parts import PartKind, Stage, TwoTerminal
+from preview.engine.messages import Command, SetAtEnd, SetCircuit, SetFullScale, SetPart, SetQuality
+from preview.session import Session
+from preview.values.notation import format_code, parse_value
+
+__all__ = ["SERIES_OF_KIND", "commands_between", "render_command", "series_of", "whole_state", "with_value"]
+
+SERIES_OF_KIND = {PartKind.RESISTOR: "E24", PartKind.CAPACITOR: "E12", PartKind.INDUCTOR: "E12"}
+"""The series of a part whose stage file states none."""
+
+
+def series_of(part: TwoTerminal) -> str:
+    """The E series in which the part's value steps."""
+    return part.series or SERIES_OF_KIND[part.kind]
+
+
+def with_value(session: Session, designator: str, value: float) -> Session:
+    """The session with one part's value changed."""
+    part = session.stage.part(designator)
+    assert isinstance(part, TwoTerminal)
+    return replace(session, stage=session.stage.with_part(replace(part, value=value)))
+
+
+def _shape(session: Session) -> tuple[object, ...]:
+    """Everything of the circuit but the values of its parts."""
+    stage: Stage = session.stage
+    parts = tuple(
+        (p.designator, p.kind, p.nodes) if isinstance(p, TwoTerminal) else (p.designator, p) for p in stage.parts
+    )
+    return (stage.name, parts, session.supply, session.source_ohm, session.load_ohm)
+
+
+def commands_between(old: Session, new: Session) -> list[Command]:
+    """What the engine must be told so that it computes ``new`` instead of ``old``; raises CircuitError."""
+    commands: list[Command] = []
+    if _shape(old) != _shape(new):
+        commands.append(SetCircuit(new.netlist()))
+    else:
+        before = {part.designator: part.value for part in old.stage.valued}
+        moved = [part for part in new.stage.valued if part.value != before[part.designator]]
+        if moved:
+            new.netlist()
+        commands += [SetPart(part.designator, part.value) for part in moved]
+    if old.full_scale.volts != new.full_scale.volts:
+        commands.append(SetFullScale(new.full_scale.volts))
+    if old.quality != new.quality:
+        commands.append(SetQuality(new.quality))
+    if old.at_end != new.at_end:
+        commands.append(SetAtEnd(new.at_end))
+    return commands
+
+
+def whole_state(session: Session) -> list[Command]:
+    """What a new engine must be told; it has the recording already."""
+    return [
+        SetCircuit(session.netlist()),
+        SetFullScale(session.full_scale.volts),
+        SetQuality(session.quality),
+        SetAtEnd(session.at_end),
+    ]
+
+
+def _exact(value: float, kind: PartKind) -> str:
+    """The code of a value where it says all of it, else the number in full with its unit."""
+    quantity = QUANTITY[kind]
+    code = format_code(value, quantity)
+    if parse_value(code, quantity) == value:
+        return code
+    unit = {"resistance": "ohm", "capacitance": "F", "inductance": "H"}[quantity]
+    return f"{value!r} {unit}"
+
+
+def render_command(session: Session, opened: Stage) -> str:
+    """The ``preview render`` command that repeats the session.
+
+    Parameters
+    ----------
+    opened : Stage
+        The stage as its file has it; only parts that differ from it are written.
+    """
+    words = ["preview", "render", str(session.audio or "AUDIO"), "OUT.wav"]
+    words += ["--stage", str(session.stage.path or session.stage.name)]
+    was = {part.designator: part.value for part in opened.valued}
+    for part in session.stage.valued:
+        if part.value != was.get(part.designator):
+            words += ["--part", f"{part.designator}={_exact(part.value, part.kind)}"]
+    types = {opamp.designator: opamp.type for opamp in opened.opamps}
+    for opamp in session.stage.opamps:
+        if opamp.type != types.get(opamp.designator):
+            words += ["--opamp", f"{opamp.designator}={opamp.type}"]
+    if session.supply != opened.supply:
+        words += ["--supply", f"{session.supply.positive_v!r} {session.supply.negative_v!r}"]
+    if session.source_ohm:
+        words += ["--source", f"{session.source_ohm!r}"]
+    if session.load_ohm is not None:
+        words += ["--load", f"{session.load_ohm!r}"]
+    words += ["--full-scale", session.full_scale.text, "--quality", session.quality.value]
+    return shlex.join(words)

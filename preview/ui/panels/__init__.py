@@ -1,0 +1,1 @@
+"""The parts of the desk's screen."""

@@ -1,0 +1,87 @@
+"""The head of the desk: what is open, at which level, where it goes, and the state in words."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from preview.errors import printable
+from preview.ui.desk import Desk
+from preview.ui.theme import Look
+from preview.ui.widgets.board import Board, Row, fit, row, spread
+from preview.ui.words import clock, full_scale, kilohertz, rails
+
+__all__ = ["HeaderPanel"]
+
+
+class HeaderPanel(Board):
+    """Three rows: recording and stage; levels and device; state."""
+
+    def __init__(self, desk: Desk, look: Look) -> None:
+        super().__init__(look, name="head")
+        self.desk = desk
+
+    def rows(self, width: int, height: int) -> Sequence[Row]:
+        """See :class:`Board`."""
+        return [self._open_row(width), self._level_row(width), self._state_row(width)][:height]
+
+    def _open_row(self, width: int) -> Row:
+        palette, snapshot = self.look.palette, self.desk.snapshot
+        about = ""
+        if snapshot is not None and snapshot.sample_rate_hz > 0.0:
+            channels = len(snapshot.input.peak_v)
+            shape = {1: "mono", 2: "stereo"}.get(channels, f"{channels} channels")
+            length = clock(snapshot.frames / snapshot.sample_rate_hz)
+            about = f"  {kilohertz(snapshot.sample_rate_hz)} {shape} {length}"
+        title = printable(self.desk.session.stage.title or self.desk.session.stage.name)
+        right = row((" through ", palette.faint), (title + " ", palette.strong))
+        room = width - sum(s.cell_length for s in right) - len(about) - 3
+        name = printable(self.desk.file_name)
+        name = fit(name, max(8, room)).rstrip() if len(name) > room else name
+        return spread(row((" " + name, palette.strong), (about, palette.plain)), right, width, palette.plain)
+
+    def _level_row(self, width: int) -> Row:
+        palette, desk = self.look.palette, self.desk
+        snapshot = desk.snapshot
+        session = desk.session
+        left = row(
+            (" " + full_scale(session.full_scale), palette.plain),
+            (f"   supply {rails(session.supply)}", palette.plain),
+        )
+        if snapshot is None:
+            return spread(left, row(("engine is starting ", palette.faint)), width, palette.plain)
+        lost = f" dropouts {snapshot.dropouts} "
+        name = printable(snapshot.output_name) or "no output"
+        extra = ""
+        if width >= 132:
+            extra = f"   computing {snapshot.load_ratio * 100.0:.0f} % of the time"
+            extra += f"   delay {snapshot.latency_s * 1e3:.0f} ms"
+        room = width - sum(s.cell_length for s in left) - len(lost) - len(extra) - 6
+        out = row(
+            ("to ", palette.faint),
+            (fit(name, max(4, room)).rstrip() if len(name) > room else name, palette.plain),
+            (extra, palette.faint),
+            ("  ", palette.plain),
+            (lost, palette.alarm if snapshot.dropouts else palette.plain),
+        )
+        return spread(left, out, width, palette.plain)
+
+    def _state_row(self, width: int) -> Row:
+        palette, desk = self.look.palette, self.desk
+        if desk.stopped:
+            return row((fit(" ENGINE STOPPED: no sound. Press R to restart it; q leaves.", width), palette.alarm))
+        narrow = width < 100
+        gliding = desk.snapshot is not None and desk.snapshot.gliding
+        right = row(
+            (("moving  " if narrow else "a value is moving   ") if gliding else "", palette.plain),
+            ("volume ", palette.faint),
+            ("off" if desk.volume_db == float("-inf") else f"{desk.volume_db:.0f} dB", palette.plain),
+            ("  end: " if narrow else "   at the end: ", palette.faint),
+            (str(desk.session.at_end), palette.plain),
+            ("  " if narrow else "   quality: ", palette.faint),
+            (f"{desk.session.quality} ", palette.plain),
+        )
+        playing = " ▶ playing " if desk.playing else " ‖ paused  "
+        if not desk.bypass:
+            return spread(row((playing, palette.strong), ("  stage heard", palette.plain)), right, width, palette.plain)
+        words = "  BYPASS: input heard" if narrow else "  BYPASS: you hear the input, not the stage"
+        return spread(row((playing, palette.strong), (words, palette.alarm)), right, width, palette.alarm)

@@ -1,0 +1,1 @@
+"""Help, value entry, choosers and the hearing caution."""

@@ -1,0 +1,1 @@
+"""Small own widgets of the desk."""

@@ -1,0 +1,106 @@
+"""Numbers and short phrases as the desk writes them."""
+
+from __future__ import annotations
+
+import math
+
+from preview.circuit.limits import QUANTITY
+from preview.circuit.parts import Supply, TwoTerminal
+from preview.values.levels import FullScale, dbu_from_vrms, format_volts
+from preview.values.notation import format_code, format_value
+
+__all__ = [
+    "clock",
+    "code",
+    "db",
+    "dbu",
+    "duration",
+    "full_scale",
+    "hertz",
+    "kilohertz",
+    "rails",
+    "resistance",
+    "scale_volts",
+    "value",
+    "volts",
+]
+
+_SMALLEST_V = 1e-7
+"""Below this a level is written as none [V]."""
+
+
+def volts(level_v: float) -> str:
+    """A voltage with three digits: ``8.70 V``, ``512 mV``."""
+    if math.isinf(level_v):
+        return "no limit"
+    return format_volts(level_v) if abs(level_v) >= _SMALLEST_V else "0 V"
+
+
+def scale_volts(level_v: float) -> str:
+    """A round voltage for a scale: ``10m``, ``1``, ``30``."""
+    return f"{level_v * 1e3:.0f}m" if level_v < 0.0995 else f"{level_v:.3g}"
+
+
+def value(part: TwoTerminal) -> str:
+    """A part's value with unit, up to four digits: ``4.7 kΩ``."""
+    return format_value(part.value, QUANTITY[part.kind], digits=4)
+
+
+def code(part: TwoTerminal) -> str:
+    """A part's value as a code: ``4k7``."""
+    return format_code(part.value, QUANTITY[part.kind])
+
+
+def resistance(value_ohm: float) -> str:
+    """A resistance with unit."""
+    return format_value(value_ohm, "resistance", digits=4)
+
+
+def db(level_db: float) -> str:
+    """A level difference with one decimal; ``-`` where there is none."""
+    return f"{level_db + 0.0:.1f}" if math.isfinite(level_db) else "-"
+
+
+def dbu(level_vrms: float) -> str:
+    """A level in dBu with sign and one decimal; ``-`` for silence."""
+    return f"{dbu_from_vrms(level_vrms):+.1f}" if level_vrms >= _SMALLEST_V else "-"
+
+
+def clock(seconds: float) -> str:
+    """A time on the recording: ``0:03.2``, ``1:02:03``."""
+    tenths = max(0, int(seconds * 10.0 + 1e-6))
+    if tenths >= 36000:
+        return f"{tenths // 36000}:{tenths // 600 % 60:02d}:{tenths // 10 % 60:02d}"
+    return f"{tenths // 600}:{tenths // 10 % 60:02d}.{tenths % 10}"
+
+
+def duration(seconds: float) -> str:
+    """A length of time with its unit: ``0 ms``, ``3.4 ms``, ``1.20 s``."""
+    if seconds < 0.9995:
+        return f"{seconds * 1e3:.{1 if 0.0 < seconds < 0.00995 else 0}f} ms"
+    return f"{seconds:.{2 if seconds < 99.5 else 0}f} s"
+
+
+def hertz(frequency_hz: float) -> str:
+    """A frequency with three digits: ``159 Hz``, ``1.59 kHz``."""
+    return format_value(frequency_hz, "frequency", fixed=True)
+
+
+def kilohertz(frequency_hz: float) -> str:
+    """A sample rate or band edge, short: ``44.1 kHz``, ``20 kHz``."""
+    return f"{frequency_hz / 1e3:.4g} kHz"
+
+
+def rails(supply: Supply) -> str:
+    """A supply: ``±15 V``, ``+9 V / 0 V``."""
+    if supply.positive_v == -supply.negative_v:
+        return f"±{supply.positive_v:g} V"
+    signed = [f"{rail_v:+g} V" if rail_v else "0 V" for rail_v in (supply.positive_v, supply.negative_v)]
+    return " / ".join(signed)
+
+
+def full_scale(scale: FullScale) -> str:
+    """What full scale stands for: ``full scale +18 dBu = 8.70 V peak``."""
+    if scale.text.endswith(" peak"):
+        return f"full scale {scale.text}"
+    return f"full scale {scale.text} = {volts(scale.volts)} peak"

@@ -1,0 +1,105 @@
+"""Finding stages by name or file, and changing parts from option texts."""
+
+from __future__ import annotations
+
+from pathlib import Path
+
+import pytest
+
+from preview.circuit import library
+from preview.circuit.library import find_stage, stage_names, stage_source, with_overrides
+from preview.errors import NotationError, PartValueError, StageFileError, UnknownNameError
+
+
+@pytest.fixture(autouse=True)
+def own_folder(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> Path:
+    """The person's own stage folder, not there yet."""
+    folder = tmp_path / "config" / "stages"
+    monkeypatch.setattr(library, "user_stage_folder", lambda: folder)
+    return folder
+
+
+def test_bundled_stages_are_found_by_name() -> None:
+    for name in stage_names():
+        assert find_stage(name).name == name
+        assert find_stage(name).path is None
+
+
+def test_a_stage_is_read_from_a_file(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    path.write_text(stage_source("inverting-low-pass"), "utf-8")
+    stage = find_stage(str(path))
+    assert (stage.name, stage.path) == ("mine", path)
+    assert stage.parts == find_stage("inverting-low-pass").parts
+    assert stage_source(str(path)) == stage_source("inverting-low-pass")
+
+
+def test_a_stage_in_the_own_folder_is_found_by_name_after_the_bundled_ones(own_folder: Path) -> None:
+    own_folder.mkdir(parents=True)
+    source = stage_source("inverting-low-pass")
+    (own_folder / "a-stage.toml").write_text(source.replace("Inverting low-pass", "Mine"), "utf-8")
+    (own_folder / "inverting-low-pass.toml").write_text("broken", "utf-8")
+    (own_folder / "notes.txt").write_text("no stage", "utf-8")
+    assert stage_names()[-1] == "a-stage"
+    assert len(stage_names()) == len(set(stage_names()))
+    assert find_stage("a-stage").title == "Mine"
+    assert stage_source("a-stage").startswith('title = "Mine"')
+    assert find_stage("inverting-low-pass").title == "Inverting low-pass"
+
+
+@pytest.mark.parametrize("name", ["inverting-lowpass", "Inverting-Low-Pass", "inverting-low-pas"])
+def test_an_unknown_name_is_answered_with_the_nearest(name: str) -> None:
+    with pytest.raises(UnknownNameError, match=f"no stage named {name}") as caught:
+        find_stage(name)
+    assert caught.value.hint.startswith("did you mean inverting-low-pass? stages are inverting-band-pass,")
+    assert caught.value.exit_code == 5
+
+
+@pytest.mark.parametrize("name", ["", "zzz", "..", "a\x1b[2J", "x" * 100_000])
+def test_an_unknown_name_is_short_and_clean(name: str) -> None:
+    with pytest.raises(UnknownNameError, match="stages are") as caught:
+        find_stage(name)
+    assert "\x1b" not in str(caught.value)
+    assert len(str(caught.value)) < 300
+
+
+@pytest.mark.parametrize("name", ["nowhere.toml", "stages/nowhere", "./nowhere", "~nobody-here/x.toml"])
+def test_what_looks_like_a_file_is_one(name: str) -> None:
+    with pytest.raises(StageFileError, match="no such file"):
+        find_stage(name)
+
+
+def test_part_values_come_from_texts_and_are_echoed() -> None:
+    stage, notes = with_overrides(find_stage("inverting-low-pass"), {"R1": "4k7", "c1": "2n2"}, {})
+    assert {part.designator: part.value for part in stage.valued} == {"R1": 4.7e3, "R2": 1e5, "C1": 2.2e-9}
+    assert notes == ("R1: 4k7 = 4.7 kΩ (4700 ohm)", "C1: 2n2 = 2.2 nF (2.2e-9 farad)")
+
+
+def test_op_amp_types_come_from_texts_and_a_named_one_goes_before_all() -> None:
+    stage = find_stage("inverting-low-pass")
+    assert with_overrides(stage, {}, {None: "perfect"})[0].opamps[0].type == "perfect"
+    changed, notes = with_overrides(stage, {}, {"U1": "ideal", None: "perfect"})
+    assert changed.opamps[0].type == "ideal"
+    assert notes == ("U1: op-amp type perfect", "U1: op-amp type ideal")
+
+
+def test_overrides_that_cannot_be_are_refused() -> None:
+    stage = find_stage("inverting-low-pass")
+    with pytest.raises(UnknownNameError, match="has no part R9") as caught:
+        with_overrides(stage, {"R9": "4k7"}, {})
+    assert caught.value.hint == "it has R1, R2, C1, U1"
+    with pytest.raises(NotationError, match='R1 = "4z7": no such prefix') as usage:
+        with_overrides(stage, {"R1": "4z7"}, {})
+    assert usage.value.exit_code == 2
+    for text in ("0", "-1k", "1e20"):
+        with pytest.raises(PartValueError, match=f'R1 = "{text}"') as value:
+            with_overrides(stage, {"R1": text}, {})
+        assert value.value.exit_code == 5
+    with pytest.raises(UnknownNameError, match=r"U1 .* is an op-amp and has no value"):
+        with_overrides(stage, {"U1": "4k7"}, {})
+    with pytest.raises(UnknownNameError, match=r"R1 .* is a resistor, not an op-amp"):
+        with_overrides(stage, {}, {"R1": "ideal"})
+    with pytest.raises(
+        UnknownNameError, match="type TL072 is not in the library; built in are perfect, ideal"
+    ):
+        with_overrides(stage, {}, {None: "TL072"})

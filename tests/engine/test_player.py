@@ -1,0 +1,270 @@
+"""What the player does to the signal around the circuit: nothing, but for ramps, loops and safety."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import pytest
+
+from preview.session import AtEnd
+
+RAMP_FRAMES = 80  # 10 ms at the rig's 8 kHz
+GAIN = 2.0  # the rig's circuit
+
+
+def start_of_sound(heard):
+    """Index of the first frame that is not silence."""
+    return int(np.flatnonzero(np.abs(heard[:, 0]) > 0)[0])
+
+
+def test_after_the_start_ramp_the_output_is_the_circuits_output_exactly(make_rig):
+    rig = make_rig()
+    rig.player.play()
+    heard = rig.hear(2048)
+    # the ramp's first gain is tiny but not 0: sound begins with the recording's first frame, at a block's start
+    first = start_of_sound(heard)
+    assert first % 64 == 0
+    expected = (rig.samples * 4.0 * GAIN / 4.0).astype(np.float32)
+    count = 2048 - first - RAMP_FRAMES
+    assert np.array_equal(heard[first + RAMP_FRAMES :], expected[RAMP_FRAMES : RAMP_FRAMES + count])
+
+
+def test_the_start_ramp_is_a_raised_cosine_of_10_ms(make_rig):
+    rig = make_rig(np.full((4000, 1), 0.25))
+    rig.player.play()
+    heard = rig.hear(1024)
+    first = start_of_sound(heard)
+    ramp = 0.5 - 0.5 * np.cos(np.pi * np.arange(1, RAMP_FRAMES + 1) / RAMP_FRAMES)
+    np.testing.assert_allclose(heard[first : first + RAMP_FRAMES, 0], 0.5 * ramp, atol=1e-7)
+
+
+def test_before_play_and_after_pause_it_is_silent(make_rig):
+    rig = make_rig()
+    assert not rig.hear(512).any()
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.pause()
+    faded = rig.hear(512)
+    assert not faded[RAMP_FRAMES:].any()
+    assert rig.player.silent
+
+
+def test_pause_and_play_go_on_at_the_frame_that_was_reached(make_rig):
+    rig = make_rig(np.linspace(0.1, 0.4, 4000)[:, np.newaxis])
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.pause()
+    rig.hear(512)
+    rig.player.snapshot = None
+    rig.hear(512)
+    position = rig.player.snapshot.position_frame
+    rig.player.snapshot = None
+    rig.player.play()
+    heard = rig.hear(1024)
+    first = start_of_sound(heard)
+    after = first + RAMP_FRAMES
+    expected = rig.samples[position + RAMP_FRAMES, 0] * GAIN
+    assert heard[after, 0] == np.float32(expected)
+
+
+def test_a_seek_fades_out_and_goes_on_at_the_wanted_frame_without_a_jump(make_rig):
+    time_s = np.arange(40000) / 8000
+    rig = make_rig(0.4 * np.sin(2 * np.pi * 50 * time_s)[:, np.newaxis])
+    rig.player.play()
+    before = rig.hear(1024)
+    rig.player.seek(30000)
+    heard = np.concatenate([before, rig.hear(2048)])[:, 0]
+    # a 50 Hz sine of amplitude 0.8 moves at most 0.0314 a frame; the ramp adds at most 0.8 pi / 2 / 80
+    assert np.abs(np.diff(heard)).max() <= 0.0315 + 0.8 * np.pi / 2 / RAMP_FRAMES
+    wanted = (rig.samples[30000:, 0] * GAIN).astype(np.float32)
+    silent = np.flatnonzero(np.convolve(heard[1024:] == 0.0, np.ones(32), "valid") == 32)
+    first = 1024 + silent[-1] + 32
+    tail = heard[first + RAMP_FRAMES + 64 :]
+    assert np.array_equal(tail, wanted[RAMP_FRAMES + 64 :][: len(tail)])
+
+
+@pytest.mark.parametrize("region", [(1000, 1500), (200, 203), (0, 4000)])
+def test_a_region_loops_without_a_missing_or_doubled_frame(make_rig, region):
+    rig = make_rig(loop=True)
+    rig.player.set_region(*region)
+    rig.player.play()
+    heard = rig.hear(12032)
+    first = start_of_sound(heard)
+    start, end = region
+    count = len(heard) - first
+    frames = start + np.arange(count) % (end - start)
+    expected = (rig.samples[frames] * GAIN).astype(np.float32)
+    assert np.array_equal(heard[first + RAMP_FRAMES :], expected[RAMP_FRAMES:])
+
+
+def test_a_region_set_around_what_plays_does_not_interrupt_it(make_rig):
+    rig = make_rig(loop=True)
+    rig.player.play()
+    before = rig.hear(1024)
+    first = start_of_sound(before)
+    rig.player.set_region(100, 3000)
+    heard = np.concatenate([before, rig.hear(4096)])
+    frames = np.arange(len(heard) - first)
+    frames = np.where(frames >= 3000, 100 + (frames - 3000) % 2900, frames)
+    expected = (rig.samples[frames] * GAIN).astype(np.float32)
+    assert np.array_equal(heard[first + RAMP_FRAMES :], expected[RAMP_FRAMES:])
+
+
+def test_at_the_end_every_frame_is_heard_then_it_waits_at_the_start(make_rig):
+    rig = make_rig(loop=False)
+    rig.player.play()
+    heard = rig.hear(6400)
+    first = start_of_sound(heard)
+    expected = (rig.samples * GAIN).astype(np.float32)
+    assert np.array_equal(heard[first + RAMP_FRAMES : first + 4000], expected[RAMP_FRAMES:])
+    assert not heard[first + 4000 :].any()
+    rig.player.snapshot = None
+    rig.hear(512)
+    assert rig.player.snapshot is not None
+    assert not rig.player.snapshot.playing
+    assert rig.player.snapshot.position_frame == 0
+
+
+def test_the_end_can_be_changed_to_loop_while_it_plays(make_rig):
+    rig = make_rig(loop=False)
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.set_at_end(AtEnd.LOOP)
+    heard = rig.hear(8192)
+    assert np.abs(heard).reshape(-1, 64).max(axis=1).min() > 0
+
+
+def test_a_recording_shorter_than_the_delay_is_heard_whole(make_rig):
+    rig = make_rig(np.full((20, 1), 0.25), loop=False)
+    rig.player.play()
+    heard = rig.hear(1024)
+    assert np.count_nonzero(heard) == 20
+    assert rig.player.silent
+
+
+def test_bypass_passes_the_input_on(make_rig):
+    rig = make_rig(np.full((4000, 1), 0.25))
+    rig.player.set_bypass(True)
+    rig.player.play()
+    assert rig.hear(1024)[-1, 0] == np.float32(0.25)
+
+
+def test_volume_starts_20_db_down_and_glides(make_rig):
+    from preview.engine.player import START_VOLUME_DB
+
+    assert START_VOLUME_DB == -20.0
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True, volume_db=START_VOLUME_DB)
+    rig.player.play()
+    assert rig.hear(1024)[-1, 0] == pytest.approx(0.05, rel=1e-6)
+    rig.player.set_volume(0.0)
+    heard = rig.hear(512)
+    assert heard[-1, 0] == np.float32(0.5)
+    assert np.abs(np.diff(heard[:, 0])).max() <= 0.45 * np.pi / 2 / 160 + 1e-6  # 20 ms
+    rig.player.set_volume(-math.inf)
+    assert rig.hear(512)[-1, 0] == 0.0
+
+
+def test_volume_above_0_db_and_not_a_number_are_refused(make_rig):
+    rig = make_rig(np.full((4000, 1), 0.25))
+    rig.player.set_volume(12.0)
+    rig.player.set_volume(math.nan)
+    rig.player.play()
+    assert rig.hear(1024)[-1, 0] == np.float32(0.5)
+
+
+def test_samples_above_full_scale_are_limited_and_counted(make_rig):
+    rig = make_rig(np.full((4000, 1), 0.9))
+    rig.player.play()
+    heard = rig.hear(1024)
+    assert heard.max() == 1.0
+    assert rig.player._report().limited_blocks > 0
+    rig.player.clear_holds()
+    rig.player.pause()
+    rig.hear(256)
+    rig.player.clear_holds()
+    rig.hear(64)
+    assert rig.player._report().limited_blocks == 0
+
+
+@pytest.mark.parametrize("value", [math.nan, math.inf, -math.inf])
+def test_what_is_not_a_number_is_muted_reported_and_can_be_started_again(make_rig, value):
+    rig = make_rig()
+    rig.player.play()
+    rig.hear(1024)
+    rig.circuit.fail_with = value
+    assert np.isfinite(rig.hear(512)).all()
+    assert rig.player.silent
+    assert "ran away" in rig.player.faults.popleft()
+    rig.circuit.fail_with = None
+    rig.player.play()
+    assert rig.hear(1024).any()
+
+
+def test_an_error_in_the_circuit_is_silence_and_a_notice_not_an_exception(make_rig):
+    rig = make_rig()
+    rig.player.play()
+    rig.hear(1024)
+
+    def broken(volts_in, volts_out):
+        raise ZeroDivisionError("boom")
+
+    rig.circuit.process = broken
+    assert not rig.hear(128)[64:].any()
+    assert "ZeroDivisionError" in rig.player.faults.popleft()
+
+
+def test_full_scale_changes_in_a_short_silence(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.set_full_scale(8.0)
+    heard = rig.hear(1024)
+    assert heard.min() == 0.0
+    assert heard[-1, 0] == np.float32(0.5)
+    assert rig.player.full_scale_v == 8.0
+    assert rig.player._report().output.peak_v[0] == pytest.approx(4.0)
+
+
+def test_meters_read_volts_and_the_position_is_the_one_heard(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.player.play()
+    heard = rig.hear(2048)
+    report = rig.player._report()
+    assert report.input.peak_v == (pytest.approx(1.0),)
+    assert report.output.peak_v == (pytest.approx(2.0),)
+    assert report.position_frame == 2048 - start_of_sound(heard)
+    assert report.playing
+
+
+def test_clip_counts_survive_pause_and_play(make_rig):
+    rig = make_rig()
+    rig.player.play()
+    rig.hear(512)
+    rig.player.pause()
+    rig.hear(512)
+    rig.player.play()
+    rig.hear(512)
+    # the rig's circuit claims one event whenever it is asked: one for each of the two starts, one now
+    assert rig.player._report().opamps[0].clip_events == 3
+
+
+def test_a_mono_recording_is_heard_on_both_channels_and_stereo_on_one_as_the_mean(make_rig):
+    rig = make_rig()
+    rig.player.play()
+    heard = rig.hear(1024, channels=2)
+    assert heard.any()
+    assert np.array_equal(heard[:, 0], heard[:, 1])
+    stereo = make_rig(np.tile([0.2, 0.4], (4000, 1)))
+    stereo.player.play()
+    assert stereo.hear(1024, channels=1)[-1, 0] == pytest.approx(0.6)
+
+
+def test_blocks_longer_than_the_player_computes_at_once_are_filled_whole(make_rig):
+    small, large = make_rig(), make_rig()
+    small.player.play()
+    large.player.play()
+    one, other = small.hear(2048, block=64), large.hear(2048, block=1024)
+    first, second = start_of_sound(one), start_of_sound(other)
+    count = 2048 - max(first, second)
+    assert np.array_equal(one[first : first + count], other[second : second + count])
