@@ -7,28 +7,28 @@
 from __future__ import annotations
 
 import argparse
-import json
 import os
 import signal
 import sys
+import threading
 import time
-import tomllib
 import traceback
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, NoReturn
 
 from preview import __version__
-from preview.errors import AudioFileError, PreviewError, UsageError, printable
+from preview.engine.jsontext import json_text
+from preview.errors import PreviewError, UsageError, printable
 
 if TYPE_CHECKING:
+    from preview.audio.sink import Depth
     from preview.session import Session
 
 __all__ = ["main"]
 
 INTERRUPTED = 130
-DEMO_ITEM = "announcement"
 
 
 class _Parser(argparse.ArgumentParser):
@@ -42,10 +42,13 @@ def main(arguments: Sequence[str] | None = None) -> int:
     """Run one command; the exit code."""
     from preview.engine.options import join_signed_values
 
-    given = list(sys.argv[1:] if arguments is None else arguments)
-    before = signal.getsignal(signal.SIGTERM)
+    given = list(sys.argv[1:] if arguments is None else arguments) or ["listen"]
+    ours = (
+        threading.current_thread() is threading.main_thread()
+        and signal.getsignal(signal.SIGTERM) is signal.SIG_DFL
+    )
     try:
-        if before is signal.SIG_DFL:
+        if ours:
             signal.signal(signal.SIGTERM, _terminated)
         options = _parser().parse_args(join_signed_values(given))
         code = int(options.run(options))
@@ -65,14 +68,18 @@ def main(arguments: Sequence[str] | None = None) -> int:
         return 0
     except SystemExit as ended:
         return ended.code if isinstance(ended.code, int) else 0
+    except OSError as error:
+        _debug()
+        _say(f"preview: {printable(str(error.filename or 'output'))}: {printable(str(error.strerror))}")
+        return 3
     except Exception as error:
         _debug()
         _say(f"preview: an error inside the program ({type(error).__name__}: {printable(str(error))})")
         _say("  PREVIEW_DEBUG=1 shows where")
         return 1
     finally:
-        if before is signal.SIG_DFL:
-            signal.signal(signal.SIGTERM, before)
+        if ours:
+            signal.signal(signal.SIGTERM, signal.SIG_DFL)
 
 
 def _terminated(_number: int, _frame: FrameType | None) -> None:
@@ -98,8 +105,7 @@ def _parser() -> argparse.ArgumentParser:
         allow_abbrev=False,
     )
     parser.add_argument("--version", action="version", version=f"preview {__version__}")
-    parser.set_defaults(run=_demo)
-    commands = parser.add_subparsers(metavar="COMMAND", parser_class=_Parser)
+    commands = parser.add_subparsers(metavar="COMMAND", parser_class=_Parser, required=True)
 
     def command(name: str, run: Callable[[argparse.Namespace], int], about: str) -> argparse.ArgumentParser:
         added = commands.add_parser(name, help=about, description=about, allow_abbrev=False)
@@ -157,36 +163,9 @@ def _parser() -> argparse.ArgumentParser:
 # -- the desk
 
 
-def _demo_audio() -> tuple[Path, str, str]:
-    """The demo's recording, its full scale and the stage that suits it; AudioFileError without the demo."""
-    origin = Path(__file__).resolve().parent.parent / "demo_audio" / "ORIGIN.toml"
-    try:
-        items = _demo_items(tomllib.loads(origin.read_text(encoding="utf-8")))
-        item = next((item for item in items if DEMO_ITEM in item["file"]), items[0])
-        found = origin.parent / item["file"]
-        return found, item.get("full_scale", ""), item.get("suggested_stage", "")
-    except (OSError, ValueError, LookupError) as error:
-        raise AudioFileError(
-            "the demo recordings are not beside the program", "name a recording: preview listen AUDIO"
-        ) from error
-
-
-def _demo_items(table: dict[str, object]) -> list[dict[str, str]]:
-    """Every table with a ``file`` in it, wherever it stands."""
-    found: list[dict[str, str]] = []
-    for value in table.values():
-        for entry in value if isinstance(value, list) else [value]:
-            if isinstance(entry, dict):
-                found.extend([entry] if isinstance(entry.get("file"), str) else _demo_items(entry))
-    return found
-
-
-def _demo(_options: argparse.Namespace) -> int:
-    return int(main(["listen"]))
-
-
 def _listen(options: argparse.Namespace) -> int:
     from preview.audio.files import probe
+    from preview.engine.demo import demo_recording
     from preview.engine.options import DEFAULT_STAGE, session_from
     from preview.session import AtEnd
 
@@ -198,9 +177,10 @@ def _listen(options: argparse.Namespace) -> int:
         raise UsageError(f"--end {options.end}: no such end", "loop or stop")
     stage = DEFAULT_STAGE
     if options.audio is None:
-        audio, full_scale, suggested = _demo_audio()
-        options.full_scale = options.full_scale or full_scale or None
-        stage = suggested or stage
+        demo = demo_recording()
+        audio = demo.path
+        options.full_scale = options.full_scale or demo.full_scale or None
+        stage = demo.stage or stage
     else:
         audio = Path(options.audio)
     if str(audio) == "-":
@@ -229,6 +209,10 @@ def _echo(session: Session, warnings: Sequence[str]) -> None:
     """Say how the options were understood."""
     for note in session.notes:
         _say(f"  {printable(note)}")
+    _warn(warnings)
+
+
+def _warn(warnings: Iterable[str]) -> None:
     for warning in warnings:
         _say(f"preview: warning: {printable(warning)}")
 
@@ -242,32 +226,41 @@ def _render(options: argparse.Namespace) -> int:
     from preview.engine.render import open_source, render
     from preview.engine.report import render_lines, render_object
 
-    depth = options.depth or "float"
-    if depth not in ("16", "24", "float"):
-        raise UsageError(f"--depth {depth}: no such sample format", "one of 16, 24, float")
+    depth = _depth(options.depth or "float")
     audio, out = Path(options.audio), Path(options.out)
     check_output(out, [audio], depth=depth)
     source = open_source(audio)
     try:
         info = source.info
         session = session_from(options, audio=audio, comment=info.comment)
-        _echo(session, source.warnings)
+        said = source.warnings
+        _echo(session, said)
         progress = _Progress(info.frames, enabled=sys.stderr.isatty())
         try:
             result = render(session, source, out, depth=depth, progress=progress)
         finally:
             progress.clear()
+        _warn(warning for warning in source.warnings if warning not in said)
     finally:
         source.close()
     from preview.analysis.response import response_error_db
 
     deviation_db = response_error_db(session.netlist(), result.sample_rate_hz, session.quality)
     if options.json:
-        text = _json(render_object(session, result, deviation_db, out))
+        text = json_text(render_object(session, result, deviation_db, out))
     else:
         text = "\n".join(render_lines(result, deviation_db, out))
     print(text, file=sys.stderr if options.out == "-" else sys.stdout)
     return 0
+
+
+def _depth(text: str) -> Depth:
+    from preview.audio.wavefile import DEPTHS
+
+    for depth in DEPTHS:
+        if depth == text:
+            return depth
+    raise UsageError(f"--depth {text}: no such sample format", f"one of {', '.join(DEPTHS)}")
 
 
 class _Progress:
@@ -334,7 +327,7 @@ def _response(options: argparse.Namespace) -> int:
         if options.as_heard:
             body |= {"sample_rate_hz": rate_hz, "quality": session.quality.value}
         lines = [table.as_csv()] if options.csv else table.as_lines()
-    print(_json(body) if options.json else "\n".join(lines))
+    print(json_text(body) if options.json else "\n".join(lines))
     return 0
 
 
@@ -357,14 +350,14 @@ def _stages(options: argparse.Namespace) -> int:
         stage = find_stage(options.name)
         source = stage_source(options.name)
         if options.json:
-            print(_json({"command": "stages", "name": stage.name, "title": stage.title, "toml": source}))
+            print(json_text({"command": "stages", "name": stage.name, "title": stage.title, "toml": source}))
         else:
             sys.stdout.write(source if source.endswith("\n") else source + "\n")
         return 0
     stages = [find_stage(name) for name in stage_names()]
     if options.json:
         listed = [{"name": s.name, "title": s.title, "about": s.about} for s in stages]
-        print(_json({"command": "stages", "stages": listed}))
+        print(json_text({"command": "stages", "stages": listed}))
     else:
         width = max(len(s.name) for s in stages)
         for s in stages:
@@ -378,7 +371,7 @@ def _opamps(options: argparse.Namespace) -> int:
     about = {"perfect": "no limit at all", "ideal": "no limit but the rails"}
     if options.json:
         listed = [{"name": name, "about": about[name]} for name in BUILT_IN_TYPES]
-        print(_json({"command": "opamps", "opamps": listed}))
+        print(json_text({"command": "opamps", "opamps": listed}))
     else:
         for name in BUILT_IN_TYPES:
             print(f"{name:<8}  {about[name]}")
@@ -392,7 +385,7 @@ def _devices(options: argparse.Namespace) -> int:
     if options.json:
         from dataclasses import asdict
 
-        print(_json({"command": "devices", "devices": [asdict(d) for d in devices]}))
+        print(json_text({"command": "devices", "devices": [asdict(d) for d in devices]}))
     else:
         for d in devices:
             mark = "*" if d.is_default else " "
@@ -401,20 +394,3 @@ def _devices(options: argparse.Namespace) -> int:
         if not devices:
             _say("preview: there is no sound device")
     return 0
-
-
-def _json(body: dict[str, object]) -> str:
-    """One versioned object; what is not a finite number becomes null."""
-    return json.dumps(
-        _plain({"preview": __version__, "format": 1, **body}), allow_nan=False, ensure_ascii=True
-    )
-
-
-def _plain(value: object) -> object:
-    if isinstance(value, float):
-        return value if abs(value) < float("inf") else None
-    if isinstance(value, dict):
-        return {str(key): _plain(item) for key, item in value.items()}
-    if isinstance(value, list | tuple):
-        return [_plain(item) for item in value]
-    return value

@@ -102,6 +102,5 @@ class PartValueError(CircuitError):
 def printable(text: str) -> str:
     """Text without control, format and surrogate characters, for a terminal; each becomes ``?``."""
     return "".join(
-        "?" if unicodedata.category(ch) in ("Cc", "Cf", "Cs", "Co", "Zl", "Zp") else ch
-        for ch in text
+        "?" if unicodedata.category(ch) in ("Cc", "Cf", "Cs", "Co", "Zl", "Zp") else ch for ch in text
     )

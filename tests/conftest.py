@@ -34,23 +34,29 @@ import sys, threading
 import numpy as np, sounddevice as sd
 frames, path = int(sys.argv[1]), sys.argv[2]
 out = np.zeros((frames, 2), np.float32)
-state = {"at": 0, "overflows": 0}
+at = overflows = 0
 done, begun = threading.Event(), threading.Event()
 def take(block, count, times, status):
+    global at, overflows
     begun.set()
-    state["overflows"] += bool(status.input_overflow)
-    n = min(count, frames - state["at"])
-    out[state["at"]:state["at"] + n] = block[:n]
-    state["at"] += n
-    if state["at"] >= frames:
+    overflows += bool(status.input_overflow)
+    n = max(0, min(count, frames - at))
+    out[at:at + n] = block[:n]
+    at += n
+    if at >= frames:
         done.set()
+def until_told():
+    global frames
+    sys.stdin.readline()
+    frames = min(frames, at + 24000)
+threading.Thread(target=until_told, daemon=True).start()
 with sd.InputStream(device="ears_mon", samplerate=48000, channels=2, dtype="float32",
                     blocksize=1024, latency=0.2, callback=take):
     begun.wait(5)
     print("recording", flush=True)
     done.wait(frames / 48000 + 10)
-np.save(path, out[:state["at"]])
-print("overflows", state["overflows"], flush=True)
+np.save(path, out[:at])
+print("overflows", overflows, flush=True)
 """
 
 
@@ -62,6 +68,7 @@ class Recording:
         self._process = subprocess.Popen(
             [sys.executable, "-c", _RECORD, str(frames), str(path)],
             env=env,
+            stdin=subprocess.PIPE,
             stdout=subprocess.PIPE,
             stderr=subprocess.PIPE,
             text=True,
@@ -73,8 +80,8 @@ class Recording:
             raise RuntimeError(f"the recording did not begin: {self._process.communicate()[1][-2000:]}")
 
     def samples(self) -> NDArray[np.float32]:
-        """Wait for the end; shape (frames, 2), 48 kHz."""
-        out, trouble = self._process.communicate(timeout=120)
+        """End it half a second from now, or earlier if it is full; shape (frames, 2), 48 kHz."""
+        out, trouble = self._process.communicate("enough\n", timeout=120)
         assert self._process.returncode == 0, trouble[-2000:]
         assert "overflows 0" in out, "the recorder itself lost samples: the machine is too busy to judge"
         return np.load(self._path)
@@ -150,7 +157,7 @@ class SoundServer:
         return answer.decode(errors="replace")
 
     def record(self, frames: int) -> Recording:
-        """Begin to record what ``ears`` plays; returns when the recording runs."""
+        """Begin to record what ``ears`` plays, at most so many frames; returns when the recording runs."""
         number = len(self._recordings)
         recording = Recording(self.env, frames, self.folder / f"recording{number}.npy")
         self._recordings.append(recording)

@@ -67,7 +67,11 @@ def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response
         The circuit cannot be solved or is not stable.
     """
     check_stable(netlist)
-    f = np.geomspace(10.0, 100e3, 97) if frequency_hz is None else np.atleast_1d(np.asarray(frequency_hz, float))
+    f = (
+        np.geomspace(10.0, 100e3, 97)
+        if frequency_hz is None
+        else np.atleast_1d(np.asarray(frequency_hz, float))
+    )
     passband, corners = find_corners(netlist)
     return Response(
         frequency_hz=f,
@@ -136,7 +140,9 @@ def heard(netlist: Netlist, sample_rate_hz: float, quality: Quality, frequency_h
     out = states @ M[n + 2 * k, :size] + inputs @ M[n + 2 * k, size:]
     centred = out * np.exp(-0.5j * theta)
     ratio = f / sample_rate_hz
-    return np.asarray(filters.up_response(ratio) * centred * filters.down_response(ratio), dtype=np.complex128)
+    return np.asarray(
+        filters.up_response(ratio) * centred * filters.down_response(ratio), dtype=np.complex128
+    )
 
 
 @dataclass(frozen=True, slots=True)

@@ -22,12 +22,7 @@ __all__ = ["PREFERRED_HZ", "ResponseTable", "second_order_sections", "tabulate"]
 Real = NDArray[np.float64]
 
 _THIRD_OCTAVES = (1.0, 1.25, 1.6, 2.0, 2.5, 3.15, 4.0, 5.0, 6.3, 8.0)
-PREFERRED_HZ = tuple(round(f * 10.0**d, 6) for d in (1, 2, 3) for f in _THIRD_OCTAVES) + (
-    10_000.0,
-    12_500.0,
-    16_000.0,
-    20_000.0,
-)
+PREFERRED_HZ = tuple(round(f * 10.0**d, 6) for d in (1, 2, 3, 4) for f in _THIRD_OCTAVES)[:34]
 """Third-octave preferred frequencies of ISO 266, 10 Hz to 20 kHz [Hz]."""
 
 _COLUMNS = (
@@ -112,8 +107,8 @@ def tabulate(
     frequency_hz : sequence of float
         Where [Hz].
     sample_rate_hz : float, optional
-        Rate at which the running computation is asked [Hz]; None for the exact circuit. The impedances are the
-        exact circuit's in both cases.
+        Rate at which the running computation is asked [Hz]; None for the exact circuit. The impedances
+        are the exact circuit's in both cases.
     quality : Quality
         Quality of the running computation.
 

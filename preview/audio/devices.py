@@ -18,6 +18,7 @@ __all__ = ["Device", "OutputStream", "find_output", "open_output", "output_devic
 
 _FIRST_CALLBACK_S = 0.7
 _CLOSE_S = 0.5
+_ALIVE_S = 0.2
 _FALLBACK_NAMES = ("pulse", "pipewire", "default")
 
 
@@ -240,8 +241,14 @@ class OutputStream:
         raise trouble or DeviceError("the output is closed")
 
     def close(self) -> None:
-        """End it; does not hang on a frozen device and may be called twice. Not from ``finished``."""
+        """End it when what was computed has been heard; may be called twice, but not from ``finished``.
+
+        A frozen device is given up at once and cannot hang the caller.
+        """
         self._closing = True
+        if self._stream is not None and monotonic() - self.last_callback_s < _ALIVE_S:
+            drain_s = self.latency_s + 2 * self._block_frames / self._rate_hz
+            threading.Event().wait(min(drain_s, _CLOSE_S))
         self._candidates = ()
         self._drop()
 
@@ -315,7 +322,10 @@ class OutputStream:
         due_s = max(now_s - self.latency_s, min(self._due_s, now_s + self.latency_s))
         self._due_s = due_s + frames / self._rate_hz
         self.last_callback_s = now_s
-        self.guard(out)
+        if self._closing:
+            out.fill(0.0)
+        else:
+            self.guard(out)
 
     def _on_finished(self) -> None:
         if not self._closing and self._stream is not None and self._finished is not None:

@@ -131,6 +131,8 @@ class Prefetch:
         self._ended = threading.Event()
         self.error: AudioFileError | None = None
         """The damage at which the file had to be given up, None while all is well."""
+        self.began_at = 0
+        """The file's frame that the last ``read`` began with."""
         self.starved = 0
         """Reads that got fewer frames than they asked for although there were more to come."""
         self._thread = threading.Thread(target=self._run, name="prefetch", daemon=True)
@@ -146,18 +148,22 @@ class Prefetch:
         int
             Frames filled: 0 while a seek is on its way and at the end.
         """
-        lane = self._step_over()
+        lane, taken = self._choose()
         if lane is None:
             return 0
+        if lane is not self._current:
+            lane.taken = taken
+            self._current = lane
         want = len(samples_out)
-        count = min(want, lane.written - lane.taken)
+        count = min(want, lane.written - taken)
         ring, size = lane.ring, len(lane.ring)
-        at = lane.taken % size
+        self.began_at = lane.file_frame(taken)
+        at = taken % size
         first = min(count, size - at)
         samples_out[:first] = ring[at : at + first]
         if count > first:
             samples_out[first:count] = ring[: count - first]
-        lane.taken += count
+        lane.taken = taken + count
         if count < want and not lane.complete:
             self.starved += 1
         return count
@@ -177,26 +183,22 @@ class Prefetch:
     @property
     def position(self) -> int:
         """The file's frame that the next ``read`` begins with."""
-        wish, lane = self._wish, self._current
-        if lane is None or lane.wish.seek_number != wish.seek_number:
-            return wish.frame
-        return lane.file_frame(lane.taken)
+        lane, taken = self._choose()
+        return self._wish.frame if lane is None else lane.file_frame(taken)
 
-    def _step_over(self) -> _Lane | None:
-        """The lane to take from now; moves to a new one where it has come."""
+    def _choose(self) -> tuple[_Lane | None, int]:
+        """The lane to take from now, and from which of its frames; None while a seek is on its way."""
         new, old = self._next, self._current
         if new is None or new.wish.seek_number != self._wish.seek_number:
-            return None
-        if new is old:
-            return new
-        if old is not None and old.wish.seek_number == new.wish.seek_number:
-            ahead = new.lane_frame(old.file_frame(old.taken))
-            if ahead is not None and ahead > new.written and old.taken < old.written:
-                return old  # the new lane is not that far yet
-            if ahead is not None and ahead <= new.written:
-                new.taken = ahead
-        self._current = new
-        return new
+            return None, 0
+        if new is old or old is None or old.wish.seek_number != new.wish.seek_number:
+            return new, new.taken
+        ahead = new.lane_frame(old.file_frame(old.taken))
+        if ahead is None or (ahead > new.written and old.taken == old.written):
+            return new, 0  # a jump: the new region does not hold this frame
+        if ahead > new.written:
+            return old, old.taken  # the new lane is not that far yet
+        return new, ahead
 
     # -- those who ask --------------------------------------------------------------------------------------
 
@@ -209,6 +211,12 @@ class Prefetch:
     def source(self) -> SeekableSource:
         """The source, to look at its counts; only the thread may read it."""
         return self._source
+
+    @property
+    def memory_bytes(self) -> int:
+        """Memory of the ring and of a held region; bounded, whatever the length of the file."""
+        held = self._held
+        return 8 * self._source.channels * self._capacity + (0 if held is None else held.nbytes)
 
     @property
     def region(self) -> tuple[int, int] | None:
@@ -246,9 +254,9 @@ class Prefetch:
         deadline = monotonic() + timeout_s
         while True:
             lane = self._next
-            if lane is not None and lane.wish == self._wish and self._thread.is_alive():
+            if lane is not None and lane.wish == self._wish:
                 there = lane.written - lane.taken
-                if lane.complete or there >= min(frames, self._capacity):
+                if lane.complete or there >= min(frames, self._capacity - _CHUNK_FRAMES):
                     return True
             if monotonic() > deadline or not self._thread.is_alive():
                 return False
@@ -272,18 +280,19 @@ class Prefetch:
 
     def _run(self) -> None:
         lane: _Lane | None = None
-        try:
-            while not self._ended.is_set():
-                if lane is None or lane.wish != self._wish:
-                    lane = self._begin(self._wish)
+        while not self._ended.is_set():
+            wish = self._wish
+            try:
+                if lane is None or lane.wish != wish:
+                    lane = self._begin(wish)
                 elif not self._fill(lane):
                     self._ended.wait(_REST_S)
-        except Exception as error:  # whatever it was: the caller must see an end, not wait for ever
-            self.error = AudioFileError(f"reading ahead failed: {error}")
-            if lane is not None:
+            except Exception as error:  # whatever it was: the caller must see an end, not wait for ever
+                self.error = AudioFileError(f"reading ahead failed: {error}")
+                lane = _Lane(wish, np.zeros((1, self._source.channels)), wish.frame, 0, wish.frame)
                 lane.complete = True
-        finally:
-            self._source.close()
+                self._next = lane
+        self._source.close()
 
     def _begin(self, wish: _Wish) -> _Lane:
         """A new lane for the wish, with its first frames in, handed to the caller."""

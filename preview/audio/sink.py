@@ -8,7 +8,7 @@ import stat
 from collections.abc import Iterable
 from pathlib import Path
 from types import TracebackType
-from typing import BinaryIO, NoReturn, Self
+from typing import BinaryIO, Self
 
 import numpy as np
 import soundfile
@@ -169,8 +169,9 @@ class FileSink:
                     self._temporary, self._quantiser, rate, channels, comment, self._kind
                 )
         except BaseException as error:
+            ours = self._translated(error)
             self._remove()
-            self._translate(error)
+            raise ours  # noqa: B904 - the cause is set
 
     @property
     def over_count(self) -> int:
@@ -190,7 +191,7 @@ class FileSink:
                 raise OutputFileError(f"{self.path}: {self._kind} ends at 4 GB", "write .wav, .w64 or .caf")
             self._writer.write(samples)
         except BaseException as error:
-            self._translate(error)
+            raise self._translated(error)  # noqa: B904 - the cause is set
         self.frames_written += len(samples)
 
     def commit(self) -> None:
@@ -198,13 +199,16 @@ class FileSink:
         if self._done:
             return
         try:
+            if self._kind == "FLAC" and not self.frames_written:
+                raise OutputFileError(f"{self.path}: there are no samples, and FLAC cannot be empty")
             self._writer.finish()
             if self._temporary is not None:
                 os.replace(self._temporary, self._target)
                 self._temporary = None
         except BaseException as error:
+            ours = self._translated(error)
             self.abort()
-            self._translate(error)
+            raise ours  # noqa: B904 - the cause is set
         self._done = True
 
     def abort(self) -> None:
@@ -231,14 +235,17 @@ class FileSink:
             self._temporary.unlink(missing_ok=True)
             self._temporary = None
 
-    def _translate(self, error: BaseException) -> NoReturn:
+    def _translated(self, error: BaseException) -> BaseException:
+        """The error in our words; to be called while the file is still there to be asked for the cause."""
         name = "standard output" if os.fspath(self.path) == "-" else str(self.path)
         if isinstance(error, soundfile.SoundFileError):
-            cause = _why_not(self._temporary)
-            raise OutputFileError(f"{name}: {cause or f'cannot be written: {error}'}") from error
-        if isinstance(error, OSError) and not isinstance(error, OutputFileError):
-            raise OutputFileError(f"{name}: {reason(error)}") from error
-        raise error
+            ours = OutputFileError(f"{name}: {_why_not(self._temporary) or f'cannot be written: {error}'}")
+        elif isinstance(error, OSError) and not isinstance(error, OutputFileError):
+            ours = OutputFileError(f"{name}: {reason(error)}")
+        else:
+            return error
+        ours.__cause__ = error
+        return ours
 
 
 def _create_beside(target: Path) -> Path:

@@ -12,11 +12,10 @@ import soundfile
 from numpy.typing import NDArray
 
 from preview.audio.files import UNKNOWN_FRAMES, FileInfo, check_range, open_sound, reason
-from preview.audio.prefetch import Prefetch
 from preview.audio.wavefile import WaveError, decode, read_wave_header
 from preview.errors import AudioFileError, printable
 
-__all__ = ["FileSource", "Prefetch", "StdinSource"]
+__all__ = ["FileSource", "StdinSource"]
 
 _PREROLL_FRAMES = 8192  # after a seek the lossy decoders need this long to settle
 _PREROLL_SUBTYPES = ("VORBIS", "OPUS", "MPEG_LAYER_I", "MPEG_LAYER_II", "MPEG_LAYER_III")

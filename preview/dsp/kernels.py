@@ -10,25 +10,25 @@ from __future__ import annotations
 import os
 from collections.abc import Callable
 from pathlib import Path
-from typing import Any, TypeVar
+from typing import Any
 
 import numpy as np
 from platformdirs import user_cache_dir
 
-F = TypeVar("F", bound=Callable[..., Any])
 
-
-def _compiler() -> Callable[[F], F]:
+def _compiler() -> Callable[[Callable[..., Any]], Any]:
     """numba's decorator, with a cache in the user's cache folder where that can be written."""
     try:
-        folder = Path(os.environ.setdefault("NUMBA_CACHE_DIR", str(Path(user_cache_dir("preview")) / "kernels")))
+        folder = Path(
+            os.environ.setdefault("NUMBA_CACHE_DIR", str(Path(user_cache_dir("preview")) / "kernels"))
+        )
         folder.mkdir(parents=True, exist_ok=True)
         cached = os.access(folder, os.W_OK)
     except OSError:
         cached = False
     import numba
 
-    decorate: Callable[[F], F] = numba.njit(cache=cached, nogil=True, error_model="numpy")
+    decorate: Callable[[Callable[..., Any]], Any] = numba.njit(cache=cached, nogil=True, error_model="numpy")
     return decorate
 
 
@@ -163,7 +163,10 @@ def bound_step(
             end = work[3, i]
             mean = work[3, k + i]
             for j in range(k):
-                end += bound[n + i, c_mean + j] * vector[c_mean + j] + bound[n + i, c_end + j] * vector[c_end + j]
+                end += (
+                    bound[n + i, c_mean + j] * vector[c_mean + j]
+                    + bound[n + i, c_end + j] * vector[c_end + j]
+                )
                 mean += bound[n + k + i, c_mean + j] * vector[c_mean + j]
                 mean += bound[n + k + i, c_end + j] * vector[c_end + j]
             value, by_mean, by_end, share = clamped_mean(asked[i], mean, end, low[i], high[i])
@@ -236,7 +239,17 @@ def between_stations(free: Any, bound: Any, glide: Any, free_now: Any, bound_now
 
 @compiled
 def limited_step(
-    W: Any, v: Any, asked: Any, limited: Any, low: Any, high: Any, n: int, k: int, stats: Any, work: Any, matrix: Any,
+    W: Any,
+    v: Any,
+    asked: Any,
+    limited: Any,
+    low: Any,
+    high: Any,
+    n: int,
+    k: int,
+    stats: Any,
+    work: Any,
+    matrix: Any,
     row: Any,
 ) -> None:
     """One step of one channel in which an op-amp limits, with its statistics; leaves the new state in ``v``."""
@@ -288,13 +301,29 @@ def within(v: Any, row: Any, low: Any, high: Any, n: int, k: int) -> bool:
 @compiled
 def mean_signal(u: Any, i: int) -> float:
     """Mean over the step from ``u[i + 1]`` to ``u[i + 2]`` of the cubic through four samples."""
-    return (13.0 * (u[i + 1] + u[i + 2]) - (u[i] + u[i + 3])) * (1.0 / 24.0)
+    mean: float = (13.0 * (u[i + 1] + u[i + 2]) - (u[i] + u[i + 3])) * (1.0 / 24.0)
+    return mean
 
 
 @compiled
 def glide_steps(
-    free: Any, bound: Any, u: Any, mean_out: Any, steps: int, state: Any, asked: Any, limited: Any, low: Any,
-    high: Any, stats: Any, glide: Any, free_now: Any, bound_now: Any, work: Any, matrix: Any, row: Any,
+    free: Any,
+    bound: Any,
+    u: Any,
+    mean_out: Any,
+    steps: int,
+    state: Any,
+    asked: Any,
+    limited: Any,
+    low: Any,
+    high: Any,
+    stats: Any,
+    glide: Any,
+    free_now: Any,
+    bound_now: Any,
+    work: Any,
+    matrix: Any,
+    row: Any,
 ) -> None:
     """``run_steps`` while a part is on its way: every step has matrices of its own."""
     channels, k = asked.shape
@@ -322,17 +351,32 @@ def glide_steps(
                 for b in range(n + k):
                     v[b] = row[b]
             else:
-                limited_step(
-                    bound_now, v, asked[c], limited[c], low, high, n, k, stats[c], work, matrix, row
-                )
+                limited_step(bound_now, v, asked[c], limited[c], low, high, n, k, stats[c], work, matrix, row)
             mean_out[c, i] = row[n + 2 * k]
 
 
 @compiled
 def run_steps(
-    free: Any, bound: Any, u: Any, mean_out: Any, steps: int, state: Any, asked: Any, limited: Any, low: Any,
-    high: Any, stats: Any, glide: Any, free_now: Any, bound_now: Any, work: Any, matrix: Any, row: Any, track: Any,
-    drive: Any, slow: Any,
+    free: Any,
+    bound: Any,
+    u: Any,
+    mean_out: Any,
+    steps: int,
+    state: Any,
+    asked: Any,
+    limited: Any,
+    low: Any,
+    high: Any,
+    stats: Any,
+    glide: Any,
+    free_now: Any,
+    bound_now: Any,
+    work: Any,
+    matrix: Any,
+    row: Any,
+    track: Any,
+    drive: Any,
+    slow: Any,
 ) -> None:
     """Run the circuit over ``steps`` steps for every channel.
 
@@ -364,8 +408,23 @@ def run_steps(
     """
     if glide[2] > 1:
         glide_steps(
-            free, bound, u, mean_out, steps, state, asked, limited, low, high, stats, glide, free_now, bound_now,
-            work, matrix, row,
+            free,
+            bound,
+            u,
+            mean_out,
+            steps,
+            state,
+            asked,
+            limited,
+            low,
+            high,
+            stats,
+            glide,
+            free_now,
+            bound_now,
+            work,
+            matrix,
+            row,
         )
         return
     channels, k = asked.shape
@@ -500,7 +559,15 @@ def keep_last(u: Any, steps: int) -> None:
 
 @compiled
 def down_block(
-    mean_out: Any, first: int, count: int, split: Any, w: Any, volts_out: Any, taps_1: Any, taps_2: Any, room: Any
+    mean_out: Any,
+    first: int,
+    count: int,
+    split: Any,
+    w: Any,
+    volts_out: Any,
+    taps_1: Any,
+    taps_2: Any,
+    room: Any,
 ) -> None:
     """Bring means at the oversampled rate back to ``count`` frames.
 

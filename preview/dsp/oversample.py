@@ -20,17 +20,17 @@ __all__ = ["LATENCY_FRAMES", "Filters", "design", "factor_for"]
 Real = NDArray[np.float64]
 Complex = NDArray[np.complex128]
 
-LATENCY_FRAMES = 98
+LATENCY_FRAMES = 100
 """Delay of interpolator, half step and decimator together [frames], at every factor."""
 
 PASSBAND_RATIO = 0.4535
 """Edge of the flat band as a share of the sample rate: 20 kHz at 44.1 kHz."""
 
-ATTENUATION_DB = 130.0
+ATTENUATION_DB = 125.0
 """Stopband attenuation of every filter [dB]."""
 
 STEEP_TAPS = 183
-SHORT_TAPS = 16
+SHORT_TAPS = 20
 
 _STEPS_AT_48K = {Quality.DRAFT: 8, Quality.STANDARD: 16, Quality.FINE: 32}
 

@@ -41,6 +41,8 @@ __all__ = ["Host", "run"]
 
 TURN_S = 1.0 / 30.0
 FADE_WAIT_S = 0.15
+SETTLE_S = 0.15
+LATENCY_WAIT_S = 0.25
 LOG_BYTES_MAX = 1 << 20
 
 
@@ -289,6 +291,7 @@ class Host:
             meters=(LevelMeter(rate, channels), LevelMeter(rate, channels)),
             quality=quality,
             volume_db=volume_db,
+            settle_s=SETTLE_S,
         )
         player.set_bypass(bypass)
         preparer = Preparer(
@@ -319,11 +322,12 @@ class Host:
         self._player = self._reader = self._preparer = None
 
     def _fade_out(self) -> None:
-        """Pause, and wait until it is silent or the output is not running."""
+        """Pause, and wait until it is silent at the device, or the output is not running."""
         player = self._player
-        if player is None:
+        if player is None or (player.silent and not player.inbox):
             return
         player.pause()
         deadline_s = time.monotonic() + FADE_WAIT_S
         while (player.inbox or not player.silent) and time.monotonic() < deadline_s:
             time.sleep(0.002)
+        time.sleep(min(player.latency_s, LATENCY_WAIT_S))  # the faded end is still on its way to the ear

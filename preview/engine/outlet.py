@@ -21,6 +21,8 @@ __all__ = ["Outlet", "block_frames_for"]
 
 STALL_S = 0.5
 RETRY_S = 2.0
+DEVICE_LATENCY_S = 0.08
+"""Asked of the device: a value step is heard soon enough, and a busy machine does not break the sound [s]."""
 
 
 def block_frames_for(sample_rate_hz: float) -> int:
@@ -79,6 +81,7 @@ class Outlet:
         self._player: Player | None = None
         self._shape: tuple[float, int] | None = None
         self._seen_underflows = 0
+        self._was_heard = False
         self._closed = threading.Event()
         self._recovery: threading.Thread | None = None
         self._found: tuple[Output, _Feed] | None = None
@@ -106,8 +109,9 @@ class Outlet:
         missed = output.underflows - self._seen_underflows
         if missed > 0:
             self._seen_underflows += missed
-            if not player.silent:
+            if self._was_heard and not player.silent:
                 player.missed_blocks += missed
+        self._was_heard = not player.silent
         player.latency_s = output.latency_s
         found, self._found = self._found, None
         if found is not None:
@@ -176,6 +180,7 @@ class Outlet:
             block_frames=frames,
             fill=fill,
             finished=feed.finished,
+            latency=DEVICE_LATENCY_S,
         )
         try:
             stream.start()

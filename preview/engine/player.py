@@ -47,6 +47,8 @@ class Player:
         Listening volume at the start [dB].
     max_frames : int
         Longest block that is computed at once.
+    settle_s : float
+        Silence after the first circuit has come [s], in which a device gets over the stalls of loading.
     """
 
     def __init__(
@@ -60,6 +62,7 @@ class Player:
         quality: Quality = Quality.STANDARD,
         volume_db: float = START_VOLUME_DB,
         max_frames: int = 2048,
+        settle_s: float = 0.0,
     ) -> None:
         self.sample_rate_hz = sample_rate_hz
         self.channels = channels
@@ -82,6 +85,7 @@ class Player:
         self._fade = Ramp(max(round(RAMP_S * sample_rate_hz), 1), 0.0)
         self._warm_in = Ramp(max(round(WARM_S * sample_rate_hz), 1), 1.0)
         self._warm_left = 0
+        self._settle_left = round(settle_s * sample_rate_hz)
         self._when_silent: deque[Callable[[], None]] = deque()
         self._wants_play = False
         self._samples_in: Samples = np.zeros((max_frames, channels))
@@ -233,7 +237,9 @@ class Player:
 
     def _fill_part(self, out: NDArray[np.float32]) -> None:
         frames = len(out)
-        if self.mode is Mode.LOADING and self._path is not None:
+        if self._path is not None and self._settle_left > 0:
+            self._settle_left -= frames
+        elif self.mode is Mode.LOADING and self._path is not None:
             self._warm_when_ready()
         if self.mode is Mode.WARMING:
             self._warm(2 * frames)
@@ -277,7 +283,7 @@ class Player:
     def _load(self) -> None:
         """Ask for the recording from a little before the frame to be heard first."""
         lead = self._head.cue(round(WARM_S * self.sample_rate_hz))
-        self._warm_left = lead + self._latency
+        self._warm_left = lead
         self._warm_in.jump(0.0 if self._head.first_frame > lead else 1.0)
         self._warm_in.to(1.0)
         self.mode = Mode.LOADING
@@ -287,6 +293,7 @@ class Player:
         if self._head.reader.ready:
             self._earlier = joined_readings(self._earlier, self._path.circuit.readings())
             self._path.circuit.reset()
+            self._warm_left += self._latency
             self.mode = Mode.WARMING
 
     def _warm(self, frames: int) -> None:

@@ -106,12 +106,13 @@ def solve(equations: NodalEquations, s_rad: Complex, drive: Real | None = None) 
     right = equations.drive if drive is None else drive
     matrix = equations.static + s_rad[:, None, None] * equations.dynamic
     try:
-        solution: Complex = np.linalg.solve(matrix, np.broadcast_to(right, matrix.shape[:2])[..., None])[..., 0]
+        solved = np.linalg.solve(matrix, np.broadcast_to(right, matrix.shape[:2])[..., None])[..., 0]
     except np.linalg.LinAlgError as error:
         raise CircuitError(
             "the circuit has no single solution: its nodal equations are singular",
             "look for an op-amp without feedback or a node that nothing holds",
         ) from error
+    solution = np.asarray(solved, dtype=np.complex128)
     if not np.all(np.isfinite(solution)):
         raise CircuitError("the circuit has no finite solution", "look for an op-amp without feedback")
     return solution

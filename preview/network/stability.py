@@ -42,7 +42,7 @@ def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
     loop = np.block([[A, B[:, 1:]], [wt * C_e, wt * D_e[:, 1:]]])
     if loop.size:
         worst = float(np.linalg.eigvals(loop).real.max())
-        if worst > 1e-6 * wt:
+        if worst > 1e-4 * wt:
             names = ", ".join(o.designator for o in netlist.opamps)
             raise CircuitError(
                 f"positive feedback: with {names} as connected the output runs to a rail and stays there",
@@ -53,7 +53,13 @@ def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
         growing = poles[poles.real > 1e-9 * np.abs(poles).max()]
         if growing.size:
             pole = growing[np.argmax(growing.real)]
+            hz = abs(pole) / (2 * np.pi)
+            how = (
+                f"oscillates at {hz:.4g} Hz"
+                if abs(pole.imag) > 1e-6 * abs(pole)
+                else "runs to a rail and stays there"
+            )
             raise CircuitError(
-                f"the circuit is unstable: it oscillates or grows at {abs(pole) / (2 * np.pi):.4g} Hz",
+                f"the circuit is unstable: left alone it {how}",
                 "less positive feedback, or a lower gain in the loop",
             )

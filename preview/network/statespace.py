@@ -85,8 +85,7 @@ def invert_feedback(feedback: Real) -> Real:
             "capacitor to a voltage that is held",
             "put a resistor in series with that capacitor, or give the source some resistance",
         )
-    inverse: Real = np.linalg.inv(feedback)
-    return inverse
+    return np.asarray(np.linalg.inv(feedback), dtype=np.float64)
 
 
 class Topology:
@@ -246,7 +245,9 @@ class Topology:
         # charges along capacitors: M' (C (M xi + R s)' + C_s s') = -M' (G v + G_s s + Lf' i)
         stored = M.T @ weigh(Cf, c, Cf) @ M
         kappa = np.linalg.solve(stored, M.T @ (weigh(Cf, c, Cs) + weigh(Cf, c, Cf) @ R))
-        leak = -np.linalg.solve(stored, M.T @ np.concatenate([G @ v_xi, G @ v_s + G_s, G @ v_i + Lf.T], axis=2))
+        leak = -np.linalg.solve(
+            stored, M.T @ np.concatenate([G @ v_xi, G @ v_s + G_s, G @ v_i + Lf.T], axis=2)
+        )
         wind = per_l[:, :, None] * np.concatenate([Lf @ v_xi, Lf @ v_s + Ls, Lf @ v_i], axis=2)
         rates = np.concatenate([leak, wind], axis=1)
         to_x = np.zeros((sets, xi + coils, m))

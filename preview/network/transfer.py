@@ -15,7 +15,8 @@ Real = NDArray[np.float64]
 
 
 def _s(frequency_hz: ArrayLike) -> Complex:
-    return 2j * np.pi * np.atleast_1d(np.asarray(frequency_hz, dtype=np.float64))
+    omega = 2.0 * np.pi * np.atleast_1d(np.asarray(frequency_hz, dtype=np.float64))
+    return np.asarray(1j * omega, dtype=np.complex128)
 
 
 def response(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:

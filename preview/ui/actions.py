@@ -1,6 +1,6 @@
 """Every key of the desk, in one table: bindings, footer hints and the help page are made from it.
 
-To add a key: one row here, and a method ``do_<name>`` of :class:`preview.ui.desk.Desk` (no screen needed) or of
+To add a key: one row here, a method ``do_<name>`` of :class:`preview.ui.desk.Desk` (no screen needed) or of
 :class:`preview.ui.app.DeskApp` (opens a dialog), and a row in the test of the actions.
 """
 
@@ -103,7 +103,9 @@ ACTIONS: tuple[Action, ...] = (
     _listen("volume_up", "plus", "+", "Listening volume up 1 dB; the volts stay", "volume"),
     _listen("volume_down", "minus", "-", "Listening volume down 1 dB; the volts stay"),
     _listen("next_quality", "y", "y", "Quality of computation: draft, standard, fine", "quality"),
-    _circuit("full_scale", "f", "f", "Full scale: the volts that the file's largest sample stands for", "scale"),
+    _circuit(
+        "full_scale", "f", "f", "Full scale: the volts that the file's largest sample stands for", "scale"
+    ),
     _circuit("supply", "p", "p", "Supply rails", "supply"),
     _circuit("source", "i", "i", "Resistance of the source at the input"),
     _circuit("load", "o", "o", "Resistance of the load at the output"),

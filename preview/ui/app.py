@@ -15,14 +15,13 @@ from textual.containers import Horizontal, Vertical
 from textual.events import AppBlur, AppFocus, Resize
 
 from preview.circuit.library import find_stage
-from preview.circuit.netlist import Netlist
 from preview.engine.messages import SetVolume
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.actions import ACTIONS, Group, bindings
 from preview.ui.changes import render_command
 from preview.ui.desk import Desk
-from preview.ui.figures import Figures, MakeFigures, compute_figures
+from preview.ui.figures import FigureKeeper, Figures, MakeFigures, compute_figures
 from preview.ui.firstrun import caution_seen, config_folder, remember_caution
 from preview.ui.link import EngineLink, Restart
 from preview.ui.panels.curve import CurvePanel
@@ -49,16 +48,13 @@ from preview.ui.screens.entry import EntryScreen
 from preview.ui.screens.pages import CautionScreen, CommandScreen, HelpScreen
 from preview.ui.theme import PALETTES, Look, first_palette
 from preview.ui.widgets.board import Board
-from preview.values.quality import Quality
 
 __all__ = ["DeskApp", "run_desk"]
 
 FRAMES_PER_S = 25.0
 _UNFOCUSED_EVERY = 3
 """A window that is not looked at is painted at a third of the pace."""
-_SETTLE_S = 0.04
-"""Changes within this time become one computation of the figures [s]."""
-WIDE, TALL = 120, 38
+WIDE, TALL = 120, 42
 """From this size on all views fit side by side, or above each other [cells]."""
 
 
@@ -75,6 +71,8 @@ class DeskApp(App[Session]):
         Starts another engine when this one has stopped.
     autoplay : bool
         Whether sound starts by itself.
+    show_caution : bool
+        Whether the hearing caution comes first on an account that has not seen it.
     make_figures : callable
         Computes the response; runs in a thread.
     config : Path, optional
@@ -84,9 +82,7 @@ class DeskApp(App[Session]):
     CSS_PATH = "desk.tcss"
     TITLE = "Preview"
     ENABLE_COMMAND_PALETTE = False
-    BINDINGS: ClassVar[list[BindingType]] = [
-        *bindings(action for action in ACTIONS if action.group is not Group.DIALOG)
-    ]
+    BINDINGS: ClassVar[list[BindingType]] = [*bindings(a for a in ACTIONS if a.group is not Group.DIALOG)]
 
     def __init__(
         self,
@@ -95,6 +91,7 @@ class DeskApp(App[Session]):
         *,
         restart: Restart | None = None,
         autoplay: bool = True,
+        show_caution: bool = True,
         make_figures: MakeFigures = compute_figures,
         config: Path | None = None,
     ) -> None:
@@ -104,13 +101,11 @@ class DeskApp(App[Session]):
         self._restart = restart
         self._restarting = False
         self._autoplay = autoplay
-        self._make_figures = make_figures
+        self._show_caution = show_caution
+        self._keeper = FigureKeeper(make_figures)
         self._config = config or config_folder()
         self._focused = True
         self._polls = 0
-        self._rate_hz = 0.0
-        self._wanted = asyncio.Event()
-        self._known: dict[tuple[Netlist, float, Quality], Figures] = {}
         self.head = HeaderPanel(self.desk, self.look)
         self.meters = MetersPanel(self.desk, self.look)
         self.timeline = TimelinePanel(self.desk, self.look)
@@ -119,8 +114,12 @@ class DeskApp(App[Session]):
         self.schematic = SchematicPanel(self.desk, self.look)
         self.figures = FiguresPanel(self.desk, self.look)
         self.foot = FooterPanel(self.look)
+        self.boards: tuple[Board, ...] = (
+            *(self.head, self.meters, self.timeline, self.parts),
+            *(self.curve, self.schematic, self.figures, self.foot),
+        )
 
-    # ---- life ---------------------------------------------------------------------------------------------------
+    # ---- life ----
 
     def compose(self) -> ComposeResult:
         """The panels from top to bottom."""
@@ -144,10 +143,13 @@ class DeskApp(App[Session]):
         self.desk.link.send(SetVolume(self.desk.volume_db))
         for note in self.desk.session.notes[:1]:
             self.foot.say(note)
+        self.poll()
         self.set_interval(1.0 / FRAMES_PER_S, self.poll)
-        self.run_worker(self._keep_figures(), group="figures", exit_on_error=True)
+        self.run_worker(
+            self._keeper.run(lambda: (self.desk.session, self.desk.before), self._figured), group="figures"
+        )
         self.show()
-        if caution_seen(self._config):
+        if not self._show_caution or caution_seen(self._config):
             self._begin()
         else:
             self.push_screen(CautionScreen(), self._caution_read)
@@ -183,7 +185,17 @@ class DeskApp(App[Session]):
         """Slower while nobody looks."""
         self._focused = False
 
-    # ---- what is shown ------------------------------------------------------------------------------------------
+    def on_parts_panel_chosen(self, event: PartsPanel.Chosen) -> None:
+        """A click on a part selects it."""
+        self.desk.choose(event.index)
+        self.show()
+
+    def on_timeline_panel_sought(self, event: TimelinePanel.Sought) -> None:
+        """A click on the line seeks."""
+        self.desk.seek(event.frame)
+        self.show()
+
+    # ---- what is shown ----
 
     def poll(self) -> None:
         """Take what the engine has said since the last time, and paint what changed."""
@@ -199,9 +211,9 @@ class DeskApp(App[Session]):
         if snapshot is not None:
             first = self.desk.snapshot is None
             self.desk.take(snapshot)
-            if snapshot.sample_rate_hz != self._rate_hz:
-                self._rate_hz = snapshot.sample_rate_hz
-                self._wanted.set()
+            if snapshot.sample_rate_hz != self._keeper.sample_rate_hz:
+                self._keeper.sample_rate_hz = snapshot.sample_rate_hz
+                self._keeper.want()
             if first:
                 self.arrange(self.size.width, self.size.height)
         if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
@@ -211,40 +223,22 @@ class DeskApp(App[Session]):
 
     def show(self) -> None:
         """Paint everything that a key can have changed."""
-        for board in self.query(Board):
+        for board in self.boards:
             board.rebuild()
-        self._wanted.set()
+        self._keeper.want()
 
-    async def _keep_figures(self) -> None:
-        """Compute figures whenever they are wanted, the newest state only, one thread at a time."""
-        while True:
-            await self._wanted.wait()
-            await asyncio.sleep(_SETTLE_S)
-            self._wanted.clear()
-            now = await self._figures_of(self.desk.session)
-            before = await self._figures_of(self.desk.before)
-            self.desk.figures.now, self.desk.figures.before = now, before
-            for board in (self.curve, self.figures):
-                board.rebuild()
+    def _figured(self, now: Figures, before: Figures) -> None:
+        self.desk.figures.now, self.desk.figures.before = now, before
+        self.curve.rebuild()
+        self.figures.rebuild()
 
-    async def _figures_of(self, session: Session) -> Figures:
-        try:
-            key = (session.netlist(), self._rate_hz, session.quality)
-        except PreviewError as error:
-            return Figures(problem=str(error))
-        found = self._known.get(key)
-        if found is None:
-            found = await asyncio.to_thread(self._make_figures, *key)
-            if len(self._known) > 64:
-                self._known.clear()
-            self._known[key] = found
-        return found
-
-    # ---- actions ------------------------------------------------------------------------------------------------
+    # ---- actions ----
 
     def action_do(self, name: str) -> None:
         """Carry out the action of that name: the desk's own, or one with a dialog."""
-        method: Callable[[], str | None] = getattr(self.desk, f"do_{name}", None) or getattr(self, f"do_{name}")
+        method: Callable[[], str | None] = getattr(self.desk, f"do_{name}", None) or getattr(
+            self, f"do_{name}"
+        )
         try:
             said = method()
         except PreviewError as error:
@@ -302,28 +296,21 @@ class DeskApp(App[Session]):
 
         def chosen(name: str | None) -> None:
             if name == FILE_ANSWER:
-                self.ask(ask_stage_file(self.desk.session), self._open)
+                question = ask_stage_file(self.desk.session)
+                self.ask(question, lambda session: self._open(str(session.stage.path or session.stage.name)))
             elif name is not None and name != self.desk.session.stage.name:
-                try:
-                    self.desk.open_stage(find_stage(name))
-                except PreviewError as error:
-                    self.foot.say(str(error), "error")
-                self._stage_opened()
+                self._open(name)
 
-        choices = stage_choices()
-        self.push_screen(
-            ChooserScreen("Stage", choices, now=self.desk.session.stage.name, look=self.look), chosen
-        )
+        now = self.desk.session.stage.name
+        self.push_screen(ChooserScreen("Stage", stage_choices(), now=now, look=self.look), chosen)
 
-    def _open(self, session: Session) -> None:
+    def _open(self, name_or_path: str) -> None:
         try:
-            self.desk.open_stage(session.stage)
+            self.desk.open_stage(find_stage(name_or_path))
         except PreviewError as error:
             self.foot.say(str(error), "error")
-        self._stage_opened()
-
-    def _stage_opened(self) -> None:
-        self.foot.say(self.desk.session.stage.about)
+        else:
+            self.foot.say(self.desk.session.stage.about)
         self.arrange(self.size.width, self.size.height)
         self.show()
 

@@ -1,4 +1,4 @@
-"""From one session to the next: the commands that bring the engine along, and the command line that repeats it."""
+"""From one session to the next: the commands for the engine, and the command line that repeats it."""
 
 from __future__ import annotations
 
@@ -33,7 +33,8 @@ def _shape(session: Session) -> tuple[object, ...]:
     """Everything of the circuit but the values of its parts."""
     stage: Stage = session.stage
     parts = tuple(
-        (p.designator, p.kind, p.nodes) if isinstance(p, TwoTerminal) else (p.designator, p) for p in stage.parts
+        (p.designator, p.kind, p.nodes) if isinstance(p, TwoTerminal) else (p.designator, p)
+        for p in stage.parts
     )
     return (stage.name, parts, session.supply, session.source_ohm, session.load_ohm)
 

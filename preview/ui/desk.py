@@ -1,6 +1,7 @@
 """The state behind the desk: what is heard, chosen and shown. No screen in here.
 
-Each ``do_`` method is one action of :mod:`preview.ui.actions`; it tells the engine and may return a line to show.
+Each ``do_`` method is an action of :mod:`preview.ui.actions`: it tells the engine and may return a line
+to show.
 """
 
 from __future__ import annotations
@@ -89,7 +90,7 @@ class Desk:
         self._before: dict[tuple[str, Path | None], Session] = {_place(session): session}
         self._sought: tuple[float, int] | None = None
 
-    # ---- what the engine says -----------------------------------------------------------------------------------
+    # ---- what the engine says ----
 
     def take(self, snapshot: Snapshot) -> None:
         """The newest word of the engine."""
@@ -104,7 +105,7 @@ class Desk:
             return self._sought[1]
         return self.snapshot.position_frame if self.snapshot else 0
 
-    # ---- the session --------------------------------------------------------------------------------------------
+    # ---- the session ----
 
     def change(self, session: Session) -> None:
         """Make this the session; the engine follows. Raises CircuitError and leaves all as it was."""
@@ -143,7 +144,7 @@ class Desk:
         link.send(Seek(position))
         self.playing = False
 
-    # ---- parts --------------------------------------------------------------------------------------------------
+    # ---- parts ----
 
     @property
     def part(self) -> TwoTerminal | None:
@@ -255,9 +256,11 @@ class Desk:
         for opamp in opamps:
             stage = stage.with_part(replace(opamp, type=kind))
         self.change(replace(self.session, stage=stage))
-        return f"op-amps: {kind} " + ("(no limit at all)" if kind == "perfect" else "(the rails are the limit)")
+        return f"op-amps: {kind} " + (
+            "(no limit at all)" if kind == "perfect" else "(the rails are the limit)"
+        )
 
-    # ---- listening ----------------------------------------------------------------------------------------------
+    # ---- listening ----
 
     def play(self, on: bool) -> None:
         """Play or pause."""
@@ -369,7 +372,7 @@ class Desk:
         self.link.send(ClearHolds())
         return "peak holds and counts cleared"
 
-    # ---- for the screen -----------------------------------------------------------------------------------
+    # ---- for the screen ----
 
     @property
     def file_name(self) -> str:

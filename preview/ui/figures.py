@@ -1,7 +1,8 @@
-"""The figures that the desk computes itself, beside the engine: response, corners, heard deviation."""
+"""The figures that the desk computes itself, in a thread: response, corners, heard deviation."""
 
 from __future__ import annotations
 
+import asyncio
 import math
 from collections.abc import Callable
 from dataclasses import dataclass, field
@@ -11,13 +12,17 @@ from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
 from preview.errors import PreviewError
+from preview.session import Session
 from preview.values.quality import Quality
 
-__all__ = ["FigurePair", "Figures", "MakeFigures", "compute_figures", "heard_band_hz"]
+__all__ = ["FigureKeeper", "FigurePair", "Figures", "MakeFigures", "compute_figures", "heard_band_hz"]
 
 LOWEST_HZ, HIGHEST_HZ = 10.0, 100e3
 """The frequency axis of the curve [Hz]."""
 _POINTS = 241
+_SETTLE_S = 0.04
+"""Changes within this time become one computation [s]."""
+_MOST_KEPT = 64
 
 
 @dataclass(frozen=True, slots=True)
@@ -35,7 +40,7 @@ class Figures:
     passband_gain_db: float = math.nan
     """Gain in the passband [dB]."""
     error_db: float | None = None
-    """Largest deviation of the heard response from the circuit's [dB]; None where the rate is not known yet."""
+    """Largest deviation of the heard response from the circuit's [dB]; None while the rate is unknown."""
     sample_rate_hz: float = 0.0
     """Sample rate for which that deviation holds [Hz]."""
     quality: Quality = Quality.STANDARD
@@ -83,3 +88,47 @@ def compute_figures(netlist: Netlist, sample_rate_hz: float, quality: Quality) -
         sample_rate_hz=sample_rate_hz,
         quality=quality,
     )
+
+
+class FigureKeeper:
+    """Computes figures whenever they are wanted: of the newest state only, in one thread at a time.
+
+    Parameters
+    ----------
+    make : callable
+        Computes the figures of one circuit.
+    """
+
+    def __init__(self, make: MakeFigures) -> None:
+        self.sample_rate_hz = 0.0
+        self._make = make
+        self._wanted = asyncio.Event()
+        self._kept: dict[tuple[Netlist, float, Quality], Figures] = {}
+
+    def want(self) -> None:
+        """Something may have changed."""
+        self._wanted.set()
+
+    async def run(
+        self, sessions: Callable[[], tuple[Session, Session]], deliver: Callable[[Figures, Figures], None]
+    ) -> None:
+        """For ever: figures of the sessions now and before, delivered in the event loop."""
+        while True:
+            await self._wanted.wait()
+            await asyncio.sleep(_SETTLE_S)
+            self._wanted.clear()
+            now, before = sessions()
+            deliver(await self._of(now), await self._of(before))
+
+    async def _of(self, session: Session) -> Figures:
+        try:
+            key = (session.netlist(), self.sample_rate_hz, session.quality)
+        except PreviewError as error:
+            return Figures(problem=str(error))
+        found = self._kept.get(key)
+        if found is None:
+            found = await asyncio.to_thread(self._make, *key)
+            if len(self._kept) >= _MOST_KEPT:
+                self._kept.clear()
+            self._kept[key] = found
+        return found

@@ -1,7 +1,8 @@
 """Two palettes of the desk's own: dark and light.
 
-State is never told by colour alone: everything a colour says, a word, a glyph or reverse video says too. Both palettes
-paint their own ground, so that the desk reads the same on a light terminal, in 16 colours and without colours.
+State is never told by colour alone: what a colour says, a word, a glyph or reverse video says too. Both
+palettes paint their own ground, so that the desk reads the same on a light terminal, in 16 colours and
+without colours.
 """
 
 from __future__ import annotations

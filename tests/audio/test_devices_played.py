@@ -24,13 +24,14 @@ def fill(out):
     out[n:] = 0
     at += n
 gc.collect(); gc.freeze(); gc.disable()
-stream = open_output("ears", sample_rate_hz=48000, channels=2, block_frames=block, fill=fill)
+stream = open_output(
+    "ears", sample_rate_hz=48000, channels=2, block_frames=block, fill=fill, latency=0.2
+)  # a long buffer: this is about the bits, also on a machine that is busy with other tests
 stream.start()
 deadline = time.monotonic() + frames / 48000 + 5
 while at < frames and time.monotonic() < deadline:
     time.sleep(0.01)
-time.sleep(stream.latency_s + 0.05)
-stream.close()
+stream.close()  # at once: what was computed must still be heard
 print(json.dumps({"underflows": stream.underflows, "latency_s": stream.latency_s, "name": stream.name,
                   "limited": stream.guard.limited_blocks, "failed": stream.guard.failed_blocks}))
 """
@@ -40,7 +41,7 @@ print(json.dumps({"underflows": stream.underflows, "latency_s": stream.latency_s
 def test_what_is_played_arrives_bit_for_bit(sound_server: Any, block_frames: int) -> None:
     frames = 2 * 48_000
     sent = np.random.default_rng(7).uniform(-0.9, 0.9, (frames, 2)).astype(np.float32)
-    recording = sound_server.record(frames + 4 * 48_000)
+    recording = sound_server.record(frames + 20 * 48_000)
     told = json.loads(sound_server.run(PLAY, str(block_frames), str(frames)))
     heard = recording.samples()
     assert told["underflows"] == 0
@@ -71,7 +72,7 @@ while calls < 60 and time.monotonic() < deadline:
 stream.close()
 print(json.dumps([calls, stream.guard.failed_blocks, stream.guard.limited_blocks, str(stream.guard.failure)]))
 """
-    recording = sound_server.record(4 * 48_000)
+    recording = sound_server.record(20 * 48_000)
     calls, failed, limited, failure = json.loads(sound_server.run(script))
     heard = recording.samples()
     assert calls >= 60

@@ -97,7 +97,11 @@ class Rig:
             volume_db=volume_db,
             max_frames=256,
         )
-        self.player.inbox.append(lambda: self.player.take_circuit(self.circuit, Quality.STANDARD))
+        self.player.inbox.append(self.take_circuit)
+
+    def take_circuit(self) -> None:
+        """Give the player its circuit."""
+        self.player.take_circuit(self.circuit, Quality.STANDARD)
 
     def hear(self, frames: int, *, block: int = 64, channels: int = 1) -> NDArray[np.float32]:
         """The next frames as the device would get them; the disk is never late."""

@@ -22,12 +22,25 @@ def test_after_the_start_ramp_the_output_is_the_circuits_output_exactly(make_rig
     rig = make_rig()
     rig.player.play()
     heard = rig.hear(2048)
-    # the ramp's first gain is tiny but not 0: sound begins with the recording's first frame, at a block's start
+    # the ramp's first gain is tiny but not 0: sound begins with the recording's first frame
     first = start_of_sound(heard)
     assert first % 64 == 0
     expected = (rig.samples * 4.0 * GAIN / 4.0).astype(np.float32)
     count = 2048 - first - RAMP_FRAMES
     assert np.array_equal(heard[first + RAMP_FRAMES :], expected[RAMP_FRAMES : RAMP_FRAMES + count])
+
+
+def test_play_before_the_circuit_is_there_waits_and_starts_with_the_first_frame_too(make_rig):
+    rig = make_rig(np.full((4000, 1), 0.25))
+    rig.player.inbox.clear()
+    rig.player.play()
+    assert not rig.hear(512).any()
+    rig.player.inbox.append(rig.take_circuit)
+    heard = rig.hear(1024)
+    first = start_of_sound(heard)
+    assert first % 64 == 0
+    assert heard[first + RAMP_FRAMES, 0] == np.float32(0.5)
+    assert rig.player._report().position_frame == 1024 - first
 
 
 def test_the_start_ramp_is_a_raised_cosine_of_10_ms(make_rig):

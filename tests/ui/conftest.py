@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
 
@@ -155,13 +155,13 @@ def low_pass_session(audio: Path | None = Path("announcement.wav")) -> Session:
     )
 
 
-@pytest.fixture()
+@pytest.fixture
 def engine() -> FakeEngine:
     """A pretended engine that waits at the start of a 12.5 s stereo file."""
     return FakeEngine()
 
 
-@pytest.fixture()
+@pytest.fixture
 def session() -> Session:
     """The bundled inverting low-pass on +18 dBu."""
     return low_pass_session()
@@ -170,8 +170,8 @@ def session() -> Session:
 MakeApp = Callable[..., DeskApp]
 
 
-@pytest.fixture()
-def make_app(engine: FakeEngine, session: Session, tmp_path: Path) -> Iterator[MakeApp]:
+@pytest.fixture
+def make_app(engine: FakeEngine, session: Session, tmp_path: Path) -> MakeApp:
     """Builds a desk on the pretended engine; the hearing caution counts as seen unless ``first_run``."""
 
     def build(*, first_run: bool = False, **options: object) -> DeskApp:
@@ -181,4 +181,4 @@ def make_app(engine: FakeEngine, session: Session, tmp_path: Path) -> Iterator[M
         arguments = {**given, **options}
         return DeskApp(arguments.pop("session"), arguments.pop("link"), **arguments)  # type: ignore[arg-type]
 
-    yield build
+    return build

@@ -42,7 +42,7 @@ class _GainAxis:
         gains = np.concatenate([f.gain_db[np.isfinite(f.gain_db)] for f in figures])
         if len(gains) == 0:
             return cls(10.0, -20.0)
-        top_db = 10.0 * math.ceil((float(gains.max()) + 2.0) / 10.0)
+        top_db = 10.0 * math.ceil((float(gains.max()) + 0.5) / 10.0)
         bottom_db = max(10.0 * math.floor(float(gains.min()) / 10.0), top_db - _MOST_DB)
         return cls(top_db, min(bottom_db, top_db - _LEAST_DB))
 
@@ -88,7 +88,10 @@ class CurvePanel(Board):
         if self.desk.phase_shown:
             wrapped = (_sampled(now, now.phase_deg, width) + 180.0) % 360.0 - 180.0
             phase.trace((180.0 - wrapped) / 360.0 * (4 * height - 1), every=2)
-        corners = {_column(hz, width): hz for hz in now.corners_hz if LOWEST_HZ <= hz <= HIGHEST_HZ}
+        corners: dict[int, float] = {}
+        for corner_hz in now.corners_hz:
+            if LOWEST_HZ <= corner_hz <= HIGHEST_HZ:
+                corners.setdefault(_column(corner_hz, width), corner_hz)
         lines = [self._corner_labels(corners, width)]
         labels = _gain_labels(axis, height)
         for y in range(height):

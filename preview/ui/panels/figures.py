@@ -40,7 +40,7 @@ class FiguresPanel(Board):
         super().__init__(look, name="figures")
         self.desk = desk
 
-    def rows(self, width: int, height: int) -> Sequence[Row]:
+    def rows(self, width: int, height: int) -> Sequence[Row]:  # noqa: ARG002 - every board has both
         """See :class:`Board`."""
         palette = self.look.palette
         now, before = self.desk.figures.now, self.desk.figures.before

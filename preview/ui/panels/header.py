@@ -68,7 +68,9 @@ class HeaderPanel(Board):
     def _state_row(self, width: int) -> Row:
         palette, desk = self.look.palette, self.desk
         if desk.stopped:
-            return row((fit(" ENGINE STOPPED: no sound. Press R to restart it; q leaves.", width), palette.alarm))
+            return row(
+                (fit(" ENGINE STOPPED: no sound. Press R to restart it; q leaves.", width), palette.alarm)
+            )
         narrow = width < 100
         gliding = desk.snapshot is not None and desk.snapshot.gliding
         right = row(
@@ -82,6 +84,8 @@ class HeaderPanel(Board):
         )
         playing = " ▶ playing " if desk.playing else " ‖ paused  "
         if not desk.bypass:
-            return spread(row((playing, palette.strong), ("  stage heard", palette.plain)), right, width, palette.plain)
+            return spread(
+                row((playing, palette.strong), ("  stage heard", palette.plain)), right, width, palette.plain
+            )
         words = "  BYPASS: input heard" if narrow else "  BYPASS: you hear the input, not the stage"
         return spread(row((playing, palette.strong), (words, palette.alarm)), right, width, palette.alarm)

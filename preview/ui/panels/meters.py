@@ -25,7 +25,7 @@ _FIGURES_S = 0.125
 """Figures change no faster than this, so that they can be read [s]."""
 _LIT_S = 1.5
 """For so long after the last clip event the clip light is lit; then it stays as a word with the count [s]."""
-_LABEL = 6
+_LABEL = 7
 _COLUMNS = (("rms", 8), ("dBu", 7), ("peak", 8), ("hold", 8), ("left dB", 9))
 _COLUMN_CELLS = sum(cells for _, cells in _COLUMNS)
 
@@ -53,7 +53,7 @@ class MetersPanel(Board):
         self._figures_s = -1e9
         self._lit: dict[str, tuple[int, float]] = {}
 
-    # ---- size ---------------------------------------------------------------------------------------------------
+    # ---- size ----
 
     def wanted_height(self, screen_height: int) -> int:
         """Rows that the meters would like on a screen of that height."""
@@ -68,7 +68,7 @@ class MetersPanel(Board):
         opamps = min(max(1, len(self.desk.session.stage.opamps)), 1 if height < 8 else 4)
         return max(1, (height - 1 - opamps) // 2)
 
-    # ---- rows ---------------------------------------------------------------------------------------------------
+    # ---- rows ----
 
     def rows(self, width: int, height: int) -> Sequence[Row]:
         """See :class:`Board`."""
@@ -81,7 +81,7 @@ class MetersPanel(Board):
             max(8, width - _LABEL - _COLUMN_CELLS - 1),
         )
         heads = "".join(f"{name:>{cells}}" for name, cells in _COLUMNS)
-        result = [row((fit("volts", _LABEL), palette.faint), (scale_line(axis) + heads, palette.faint))]
+        result = [row((fit(" volts", _LABEL), palette.faint), (scale_line(axis) + heads, palette.faint))]
         now_s = self._now_s()
         fresh = now_s - self._figures_s >= _FIGURES_S
         if fresh:
@@ -106,7 +106,13 @@ class MetersPanel(Board):
                     rail=rail,
                 )
                 figures = self._figures.setdefault(channel.label, _figure_text(channel, peak_v, left_db))
-                result.append((*row((fit(channel.label, _LABEL), palette.plain)), *bar, *row((figures, palette.plain))))
+                result.append(
+                    (
+                        *row((fit(f" {channel.label}", _LABEL), palette.plain)),
+                        *bar,
+                        *row((figures, palette.plain)),
+                    )
+                )
         result += self._opamp_rows(snapshot, width, height - len(result), now_s)
         return result[:height]
 
@@ -155,10 +161,13 @@ class MetersPanel(Board):
             room = f" {db(reading.headroom_db)} dB to the rails {rails(self.desk.session.supply)}"
         light = f" {'CLIP' if reading.clip_events else 'clip'} ×{reading.clip_events} "
         pieces = [
-            (fit(reading.designator, _LABEL - 1), palette.strong),
+            (fit(f" {reading.designator}", _LABEL - 1), palette.strong),
             (room + "  ", palette.plain),
             (light, palette.alarm if lit else palette.strong if reading.clip_events else palette.faint),
-            (f" clipped {duration(reading.clipped_s)}", palette.plain if reading.clip_events else palette.faint),
+            (
+                f" clipped {duration(reading.clipped_s)}",
+                palette.plain if reading.clip_events else palette.faint,
+            ),
         ]
         if width >= 120:
             pieces.append((f"   swings {volts(reading.low_v)} to {volts(reading.high_v)}", palette.faint))
@@ -174,7 +183,9 @@ def _channels(word: str, reading: LevelReading, bars: int) -> list[_Channel]:
         return [_Channel(word, 0.0, 0.0, 0.0)]
     names = {1: [word], 2: [f"{word} L", f"{word} R"]}.get(count, [f"{word} {n + 1}" for n in range(count)])
     shown = count if count <= bars else bars - 1
-    result = [_Channel(names[n], reading.rms_v[n], reading.peak_v[n], reading.hold_v[n]) for n in range(shown)]
+    result = [
+        _Channel(names[n], reading.rms_v[n], reading.peak_v[n], reading.hold_v[n]) for n in range(shown)
+    ]
     if shown < count:
         rest = slice(shown, count)
         label = f"{word} {shown + 1}-{count}" if shown else f"{word} max"

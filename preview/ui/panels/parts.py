@@ -69,7 +69,12 @@ class PartsPanel(Board):
                     row(("▸", palette.mark), (f" {text} ", palette.selected), (tail, palette.strong))
                 )
             else:
-                result.append(row(("  " + text + " ", palette.plain), (tail, palette.strong if changed else palette.faint)))
+                result.append(
+                    row(
+                        ("  " + text + " ", palette.plain),
+                        (tail, palette.strong if changed else palette.faint),
+                    )
+                )
         if role_rows and desk.part is not None:
             role = printable(desk.part.role) or str(desk.part.kind)
             result.append(row(("", palette.plain)))

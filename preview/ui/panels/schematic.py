@@ -25,8 +25,8 @@ def drawing_width(stage: Stage) -> int:
 def annotated(stage: Stage, selected: str | None) -> list[list[tuple[str, str | None]]]:
     """The drawing in lines of pieces: text and, where it stands for a part, its designator.
 
-    Each designator is followed by the part's value, written over the blanks behind it (its code, then a shorter
-    one); where there is no room for it the designator stands alone. An arrow points at the selected part.
+    Each designator is followed by the part's value, written over the blanks behind it; where there is no room
+    for it the designator stands alone. An arrow points at the selected part.
     """
     parts = {part.designator: part for part in stage.parts}
     if not parts:
@@ -95,7 +95,10 @@ class SchematicPanel(Board):
             chosen = part.designator == selected
             mark = "▸" if chosen else " "
             rows.append(
-                row((mark, palette.mark), (f" {printable(text)} ", palette.selected if chosen else palette.plain))
+                row(
+                    (mark, palette.mark),
+                    (f" {printable(text)} ", palette.selected if chosen else palette.plain),
+                )
             )
         return rows
 

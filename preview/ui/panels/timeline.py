@@ -31,7 +31,7 @@ class TimelinePanel(Board):
         self.desk = desk
         self._first, self._cells = 0, 0
 
-    def rows(self, width: int, height: int) -> Sequence[Row]:
+    def rows(self, width: int, height: int) -> Sequence[Row]:  # noqa: ARG002 - every board has both
         """See :class:`Board`."""
         palette, desk = self.look.palette, self.desk
         snapshot = desk.snapshot

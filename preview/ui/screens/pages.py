@@ -30,8 +30,8 @@ _CAUTIONS = (
     "someone licensed for it; local codes come first.",
 )
 _HEARING = (
-    "The listening volume starts at -20 dB. Put headphones on after the sound has started, and raise the volume "
-    "with + in small steps.",
+    "The listening volume starts at -20 dB. Put headphones on after the sound has started, and raise the "
+    "volume with + in small steps.",
     "A stage with gain, or a part value that changes, can make the signal ten times larger at once.",
     "The volume does not touch the volts: meters and clipping stay as in the circuit.",
 )
@@ -60,7 +60,9 @@ class HelpScreen(Dialog[None]):
     """Every key with what it does."""
 
     def __init__(self) -> None:
-        super().__init__("Keys", ("row_up", "and"), ("row_down", "scroll"), ("cancel", "back"), ("help", "back"))
+        super().__init__(
+            "Keys", ("row_up", "and"), ("row_down", "scroll"), ("cancel", "back"), ("help", "back")
+        )
 
     def body(self) -> Iterable[Widget]:
         """See :class:`Dialog`."""
@@ -105,7 +107,9 @@ class CautionScreen(_Reading):
     """The hearing caution of the first run."""
 
     def __init__(self) -> None:
-        super().__init__("Mind your hearing", _HEARING, ("accept", "understood: start"), ("cancel", "stay paused"))
+        super().__init__(
+            "Mind your hearing", _HEARING, ("accept", "understood: start"), ("cancel", "stay paused")
+        )
 
 
 class CommandScreen(_Reading):
@@ -114,7 +118,10 @@ class CommandScreen(_Reading):
     def __init__(self, command: str) -> None:
         super().__init__(
             "The command that renders this",
-            (command, "OUT.wav stands for the file to write; it is heard here and rendered there by the same computation."),
+            (
+                command,
+                "OUT.wav stands for the file to write; what is rendered is what is heard here.",
+            ),
             ("accept", "back"),
             ("cancel", "back"),
         )

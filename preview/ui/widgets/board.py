@@ -74,6 +74,11 @@ class Board(Widget):
         """The rows for this size [cells]."""
         raise NotImplementedError
 
+    @property
+    def painted(self) -> tuple[Row, ...]:
+        """The rows as they stand on the screen."""
+        return tuple(self._rows)
+
     def rebuild(self) -> None:
         """Make the rows again and paint those that changed."""
         width, height = self.size

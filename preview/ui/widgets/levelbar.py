@@ -1,4 +1,4 @@
-"""A level as a bar on an axis of volts: equal steps are equal ratios, so the room to a wall is headroom in dB."""
+"""A level as a bar on a logarithmic axis of volts, so that the room to a wall is headroom in dB."""
 
 from __future__ import annotations
 

@@ -1,0 +1,202 @@
+"""``preview response``, the lists, and what the command line says when it is not understood."""
+
+from __future__ import annotations
+
+import csv
+import io
+import json
+import subprocess
+import sys
+from pathlib import Path
+
+import numpy as np
+import pytest
+import scipy.signal
+
+from preview.cli import main
+
+
+def run(capsys, *words: str) -> tuple[int, str, str]:
+    code = main(list(words))
+    out, err = capsys.readouterr()
+    return code, out, err
+
+
+def report_of(capsys, *words: str) -> dict:
+    code, out, err = run(capsys, *words, "--json")
+    assert (code, err) == (0, "")
+    report = json.loads(out)
+    assert (report["preview"], report["format"]) == ("0.1.0", 1)
+    return report
+
+
+def test_response_json_agrees_with_the_closed_form(capsys):
+    report = report_of(capsys, "response", "--at", "20,1k,20k")
+    f = np.array([20.0, 1000.0, 20000.0])
+    assert report["frequency_hz"] == f.tolist()
+    # inverting low-pass: -R2/R1 / (1 + s R2 C1), 10k, 100k, 1n
+    x = 2 * np.pi * f * 100e3 * 1e-9
+    np.testing.assert_allclose(report["gain_db"], 20 - 10 * np.log10(1 + x**2), atol=1e-6)
+    np.testing.assert_allclose(report["phase_deg"], 180 - np.degrees(np.arctan(x)), atol=1e-6)
+    np.testing.assert_allclose(report["group_delay_s"], 1e-4 / (1 + x**2), rtol=1e-6)
+    assert report["corners_hz"] == [pytest.approx(1591.549, abs=0.001)]
+    assert report["passband_gain_db"] == pytest.approx(20.0, abs=1e-6)
+    np.testing.assert_allclose(report["input_impedance_ohm"], 10e3)
+    np.testing.assert_allclose(report["output_impedance_ohm"], 0.0, atol=1e-9)
+
+
+def test_as_heard_is_within_a_hundredth_of_a_db_and_says_so(capsys):
+    analog = report_of(capsys, "response")
+    as_heard = report_of(capsys, "response", "--as-heard", "--rate", "44.1k")
+    assert not analog["as_heard"]
+    assert as_heard["as_heard"]
+    assert as_heard["sample_rate_hz"] == 44100
+    count = len(as_heard["frequency_hz"])
+    difference = np.abs(np.array(as_heard["gain_db"]) - analog["gain_db"][:count])
+    assert 0 < difference.max() < 0.01
+    assert as_heard["corners_hz"] == [pytest.approx(1591.549, rel=1e-3)]
+
+
+@pytest.mark.parametrize("prewarp", [None, "1k"])
+def test_sections_are_scipys_bilinear_transform_of_the_circuit(capsys, prewarp):
+    words = ["--prewarp", prewarp] if prewarp else []
+    report = report_of(capsys, "response", "--sections", "--rate", "48k", *words)
+    fs = 48000.0
+    if prewarp:
+        fs = np.pi * 1000 / np.tan(np.pi * 1000 / 48000)
+    b, a = scipy.signal.bilinear([-10.0], [1e-4, 1.0], fs=fs)
+    (row,) = report["sections"]
+    f = np.array([10.0, 1000.0, 15000.0])
+    _, ours = scipy.signal.sosfreqz(np.array([row]), f, fs=48000)
+    _, theirs = scipy.signal.freqz(b, a, f, fs=48000)
+    np.testing.assert_allclose(ours, theirs, rtol=1e-9)
+
+
+def test_csv_has_one_line_of_names_and_one_a_frequency(capsys):
+    code, out, _ = run(capsys, "response", "--csv", "--at", "100,1k")
+    rows = list(csv.DictReader(io.StringIO(out)))
+    assert code == 0
+    assert [float(row["frequency_hz"]) for row in rows] == [100.0, 1000.0]
+    assert float(rows[1]["gain_db"]) == pytest.approx(18.5549, abs=1e-4)
+
+
+def test_the_table_has_units(capsys):
+    code, out, _ = run(capsys, "response", "--at", "1k")
+    assert code == 0
+    for words in ("corners 1.59 kHz", "18.555 dB", "147.86 deg", "71.7 µs", "10 kΩ"):
+        assert words in out
+
+
+@pytest.mark.parametrize(
+    ("words", "code"),
+    [
+        (["response", "--at", "20,,1k"], 2),
+        (["response", "--at", "-5"], 2),
+        (["response", "--at", "30k", "--as-heard"], 2),
+        (["response", "--rate", "1 MHz", "--as-heard"], 2),
+        (["response", "--prewarp", "40k", "--sections"], 2),
+        (["response", "--json", "--csv"], 2),
+        (["response", "--analog", "--as-heard"], 2),
+        (["response", "--load", "0"], 2),
+        (["response", "--stage", "nope"], 5),
+        (["stages", "nope"], 5),
+        (["nope"], 2),
+        (["--nope"], 2),
+        (["listen", "--live"], 2),
+        (["listen", "--end", "never"], 2),
+        (["listen", "-"], 2),
+        (["listen", "nowhere.wav"], 3),
+    ],
+)
+def test_refusals_have_their_code_and_one_or_two_plain_lines(capsys, words, code):
+    got, out, err = run(capsys, *words)
+    assert got == code, err
+    assert out == ""
+    lines = err.splitlines()
+    assert 1 <= len(lines) <= 2
+    assert lines[0].startswith("preview: ")
+    assert "Traceback" not in err
+    assert "inside the program" not in err
+
+
+def test_stages_lists_every_stage_and_prints_one(capsys):
+    code, out, _ = run(capsys, "stages")
+    assert code == 0
+    names = [line.split()[0] for line in out.splitlines()]
+    assert {"inverting-low-pass", "inverting-high-pass", "inverting-band-pass"} <= set(names)
+    assert [row["name"] for row in report_of(capsys, "stages")["stages"]] == names
+    code, out, _ = run(capsys, "stages", "inverting-low-pass")
+    assert code == 0
+    assert "[parts]" in out
+    assert "toml" in report_of(capsys, "stages", "inverting-low-pass")
+
+
+def test_opamps_lists_the_built_in_types(capsys):
+    assert [row["name"] for row in report_of(capsys, "opamps")["opamps"]] == ["perfect", "ideal"]
+    code, out, _ = run(capsys, "opamps")
+    assert code == 0
+    assert "no limit but the rails" in out
+
+
+def test_devices_lists_what_there_is_or_says_what_is_missing(capsys):
+    code, _, err = run(capsys, "devices")
+    assert code in (0, 4)
+    assert "Traceback" not in err
+
+
+def test_version_and_help_are_exit_0(capsys):
+    assert run(capsys, "--version")[:2] == (0, "preview 0.1.0\n")
+    code, out, _ = run(capsys, "listen", "--help")
+    assert code == 0
+    assert "--silent" in out
+    assert "--live" not in out
+
+
+def test_an_error_inside_the_program_is_a_line_and_its_trace_is_there_on_request(capsys, monkeypatch):
+    from preview.circuit import library
+
+    def broken() -> None:
+        raise RuntimeError("boom \x1b[31m")
+
+    monkeypatch.setattr(library, "stage_names", broken)
+    code, out, err = run(capsys, "stages")
+    assert (code, out) == (1, "")
+    assert "Traceback" not in err
+    assert "\x1b" not in err
+    monkeypatch.setenv("PREVIEW_DEBUG", "1")
+    assert "Traceback" in run(capsys, "stages")[2]
+
+
+def test_the_desk_needs_a_terminal_and_says_how_it_understood_the_options(tmp_path):
+    import soundfile
+
+    path = tmp_path / "tone.wav"
+    soundfile.write(path, np.zeros(100), 48000)
+    done = subprocess.run(
+        [sys.executable, "-m", "preview", "listen", path, "--part", "R1=4k7"],
+        capture_output=True,
+        text=True,
+        stdin=subprocess.DEVNULL,
+        check=False,
+    )
+    assert done.returncode == 2
+    assert "4.7 kΩ" in done.stderr
+    assert "needs a terminal" in done.stderr
+
+
+def test_the_demo_is_the_announcement_at_its_own_full_scale():
+    from preview.engine.demo import demo_recording
+
+    demo = demo_recording()
+    assert demo.path.name.startswith("announcement")
+    assert demo.path.exists()
+    assert demo.full_scale == "+18 dBu"
+    assert demo.stage
+
+
+def test_without_the_demo_folder_it_says_so(tmp_path: Path):
+    from preview.engine.demo import demo_recording
+    from preview.errors import AudioFileError
+
+    with pytest.raises(AudioFileError, match="not beside the program"):
+        demo_recording(tmp_path)

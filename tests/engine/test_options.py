@@ -1,0 +1,102 @@
+"""The stage options: what is understood, what is refused."""
+
+from __future__ import annotations
+
+import argparse
+
+import pytest
+
+from preview.engine.options import add_stage_options, join_signed_values, session_from
+from preview.errors import NotationError, PartValueError, UnknownNameError, UsageError
+from preview.values.quality import Quality
+
+
+def session(*words: str, comment: str = ""):
+    parser = argparse.ArgumentParser()
+    add_stage_options(parser)
+    return session_from(parser.parse_args(join_signed_values(words)), comment=comment)
+
+
+def test_without_options_it_is_the_default_stage_as_drawn_at_18_dbu():
+    plain = session()
+    assert plain.stage.name == "inverting-low-pass"
+    assert (plain.supply.positive_v, plain.supply.negative_v) == (15.0, -15.0)
+    assert (plain.source_ohm, plain.load_ohm) == (0.0, None)
+    assert plain.quality is Quality.STANDARD
+    # EBU R 68: 0 dBFS at +18 dBu, a sine of 0.7746 V x 10^(18/20) rms, 8.70 V peak
+    assert plain.full_scale.volts == pytest.approx(8.70, abs=0.005)
+
+
+def test_each_option_is_taken_and_said():
+    given = session(
+        *("--stage", "inverting-high-pass", "--part", "R1=4k7", "--opamp", "U1=perfect"),
+        *("--supply", "-12 12", "--source", "600", "--load", "10k", "--full-scale", "2 Vrms"),
+        *("--quality", "fine"),
+    )
+    assert given.stage.part("R1").value == 4700.0
+    assert given.stage.opamps[0].type == "perfect"
+    assert (given.supply.positive_v, given.supply.negative_v) == (12.0, -12.0)
+    assert (given.source_ohm, given.load_ohm) == (600.0, 10000.0)
+    assert given.quality is Quality.FINE
+    said = "\n".join(given.notes)
+    for words in ("4.7 kΩ", "600 Ω", "10 kΩ", "2 Vrms", "12.0 V and -12.0 V"):
+        assert words in said
+
+
+@pytest.mark.parametrize(
+    ("words", "volts"),
+    [
+        (["--full-scale", "-10 dBV"], 0.447),
+        (["--full-scale", "-10dBV"], 0.447),
+        (["--full-scale=-10 dBV"], 0.447),
+        (["--full-scale", "+18 dBu"], 8.701),
+    ],
+)
+def test_a_level_with_a_minus_sign_is_a_level_and_no_option(words, volts):
+    assert session(*words).full_scale.volts == pytest.approx(volts, abs=0.001)
+
+
+def test_words_after_a_double_dash_are_left_alone():
+    assert join_signed_values(["--supply", "-9 9", "--", "--supply", "-5"]) == [
+        "--supply=-9 9",
+        "--",
+        "--supply",
+        "-5",
+    ]
+
+
+def test_a_full_scale_in_the_files_comment_holds_unless_an_option_gives_one():
+    assert session(comment="full scale 15 V; preview 0.1.0").full_scale.volts == 15.0
+    assert session("--full-scale", "5 V", comment="full scale 15 V").full_scale.volts == 5.0
+    assert "from the file's comment" in session(comment="full scale 15 V").notes[-1]
+
+
+def test_the_same_value_given_twice_is_no_conflict():
+    assert session("--part", "R1=4k7", "--part", "R1=4k7").stage.part("R1").value == 4700.0
+
+
+@pytest.mark.parametrize(
+    ("words", "error", "match"),
+    [
+        (["--part", "R1=4k7", "--part", "R1=10k"], UsageError, "R1 two values"),
+        (["--part", "R1"], UsageError, "no part and value"),
+        (["--part", "R1="], UsageError, "no part and value"),
+        (["--part", "R1=4z7"], NotationError, "4z7"),
+        (["--part", "R9=4k7"], UnknownNameError, "R9"),
+        (["--part", "R1=0"], PartValueError, "R1"),
+        (["--opamp", "U1="], UsageError, "no op-amp type"),
+        (["--opamp", "ideal", "--opamp", "perfect"], UsageError, "two types"),
+        (["--opamp", "warp"], UnknownNameError, "warp"),
+        (["--stage", "nope"], UnknownNameError, "nope"),
+        (["--stage", "a", "--stage", "b"], UsageError, "one stage"),
+        (["--supply", "fifteen"], NotationError, "--supply"),
+        (["--source", "-600"], NotationError, "--source"),
+        (["--load", "0"], NotationError, "--load"),
+        (["--full-scale", "18"], NotationError, "--full-scale"),
+        (["--quality", "best"], UsageError, "draft, standard, fine"),
+    ],
+)
+def test_what_is_not_understood_is_refused_with_a_reason(words, error, match):
+    with pytest.raises(error) as caught:
+        session(*words)
+    assert match in str(caught.value)

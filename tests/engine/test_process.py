@@ -1,0 +1,242 @@
+"""The engine process end to end on the silent clock."""
+
+from __future__ import annotations
+
+import os
+import signal
+import subprocess
+import sys
+import time
+from collections.abc import Callable, Iterator
+from pathlib import Path
+
+import numpy as np
+import pytest
+
+from preview.audio.sink import FileSink
+from preview.circuit.library import find_stage
+from preview.engine import messages
+from preview.engine.messages import Snapshot
+from preview.engine.process import EngineConfig, EngineProcess
+from preview.session import AtEnd, Session
+from preview.values.levels import parse_full_scale
+from preview.values.quality import Quality
+
+RATE_HZ = 48000
+DEADLINE_S = 20.0
+
+
+@pytest.fixture
+def tone(tmp_path: Path) -> Path:
+    """Two seconds of a 200 Hz sine, 0.1 of full scale, mono."""
+    path = tmp_path / "tone.wav"
+    with FileSink(path, sample_rate_hz=RATE_HZ, channels=1) as sink:
+        sink.write(0.1 * np.sin(2 * np.pi * 200 * np.arange(2 * RATE_HZ) / RATE_HZ)[:, np.newaxis])
+    return path
+
+
+def session_of(audio: Path, **changes: object) -> Session:
+    stage = find_stage("inverting-low-pass")
+    values: dict[str, object] = {
+        "audio": audio,
+        "stage": stage,
+        "supply": stage.supply,
+        "source_ohm": 0.0,
+        "load_ohm": None,
+        "full_scale": parse_full_scale("10 V"),
+    } | changes
+    return Session(**values)  # type: ignore[arg-type]  # a test's shorthand
+
+
+@pytest.fixture
+def start(tmp_path: Path) -> Iterator[Callable[..., EngineProcess]]:
+    """Starts engines on the silent clock and ends them."""
+    engines: list[EngineProcess] = []
+
+    def make(session: Session, **changes: object) -> EngineProcess:
+        config = EngineConfig(session=session, silent=True, log=tmp_path / "engine.log", **changes)  # type: ignore[arg-type]
+        engines.append(EngineProcess.start(config))
+        return engines[-1]
+
+    yield make
+    for engine in engines:
+        engine.close()
+
+
+def wait_for(engine: EngineProcess, wanted: Callable[[Snapshot], bool], what: str) -> Snapshot:
+    """Poll until a snapshot is as wanted."""
+    deadline = time.monotonic() + DEADLINE_S
+    last = None
+    while time.monotonic() < deadline:
+        snapshot = engine.latest()
+        if snapshot is not None:
+            last = snapshot
+            if wanted(snapshot):
+                return snapshot
+        assert engine.alive, "the engine has ended"
+        time.sleep(0.005)  # polling a process, with a deadline
+    raise AssertionError(f"never {what}; last {last}; notices {engine.notices()}")
+
+
+def test_it_plays_reads_volts_and_takes_every_command(start, tone):
+    engine = start(session_of(tone))
+    waiting = wait_for(engine, lambda s: True, "a snapshot")
+    assert not waiting.playing
+    assert waiting.volume_db == -20.0
+    assert waiting.output_name == "silent clock"
+    engine.send(messages.Play())
+    # 1 V through a gain of 10 and a pole at 1591.5 Hz: 10 / sqrt(1 + (200 / 1591.5)^2) = 9.922 V
+    playing = wait_for(engine, lambda s: s.output.peak_v[0] > 9.9, "10 V at the output")
+    assert playing.input.peak_v[0] == pytest.approx(1.0, rel=1e-3)
+    assert playing.output.peak_v[0] == pytest.approx(9.922, rel=2e-3)
+    assert playing.opamps[0].designator == "U1"
+    assert playing.opamps[0].clip_events == 0
+
+    engine.send(messages.SetPart("R1", 5000.0))
+    clipping = wait_for(engine, lambda s: s.opamps[0].clip_events > 0, "clipping")
+    assert clipping.opamps[0].headroom_db == 0.0
+    engine.send(messages.SetPart("R1", 20000.0))
+    wait_for(engine, lambda s: s.output.peak_v[0] < 5.1 and not s.gliding, "5 V at the output")
+    engine.send(messages.ClearHolds())
+    wait_for(engine, lambda s: s.opamps[0].clip_events == 0 and s.output.hold_v[0] < 5.1, "cleared holds")
+
+    engine.send(messages.SetBypass(True))
+    wait_for(engine, lambda s: s.bypass and s.output.peak_v[0] < 1.05, "bypass")
+    engine.send(messages.SetBypass(False))
+    engine.send(messages.SetQuality(Quality.FINE))
+    wait_for(engine, lambda s: s.quality is Quality.FINE, "fine quality")
+    engine.send(messages.SetVolume(-6.0))
+    wait_for(engine, lambda s: s.volume_db == -6.0, "volume")
+    engine.send(messages.SetFullScale(1.0))
+    wait_for(engine, lambda s: s.full_scale_v == 1.0 and s.output.peak_v[0] < 0.6, "full scale")
+    engine.send(messages.SetCircuit(session_of(tone, stage=find_stage("inverting-high-pass")).netlist()))
+    wait_for(engine, lambda s: s.output.peak_v[0] > 0, "another circuit")
+    engine.send(messages.SetRegion(1000, 5000))
+    wait_for(engine, lambda s: s.region == (1000, 5000) and 1000 <= s.position_frame < 5000, "the region")
+    engine.send(messages.SetRegion(None, None))
+    engine.send(messages.Seek(60000))
+    wait_for(engine, lambda s: s.region is None and s.position_frame >= 60000, "the seek")
+    engine.send(messages.SetAtEnd(AtEnd.STOP))
+    ended = wait_for(engine, lambda s: not s.playing, "the end")
+    assert ended.position_frame == 0
+    assert [n.text for n in engine.notices() if n.severity == "error"] == []
+
+
+def test_pause_stops_and_play_goes_on(start, tone):
+    engine = start(session_of(tone), play=True)
+    wait_for(engine, lambda s: s.position_frame > 4800, "sound")
+    engine.send(messages.Pause())
+    paused = wait_for(engine, lambda s: not s.playing, "a pause")
+    later = wait_for(engine, lambda s: True, "another snapshot")
+    assert later.position_frame == paused.position_frame
+    engine.send(messages.Play())
+    wait_for(engine, lambda s: s.playing and s.position_frame > paused.position_frame, "going on")
+
+
+def test_another_recording_of_another_rate_can_be_opened_and_a_bad_one_is_told(start, tone, tmp_path):
+    engine = start(session_of(tone), play=True)
+    wait_for(engine, lambda s: s.position_frame > 0, "sound")
+    bad = tmp_path / "noise.wav"
+    bad.write_bytes(b"not audio at all" * 10)
+    engine.send(messages.OpenFile(bad))
+    other = tmp_path / "other.wav"
+    with FileSink(other, sample_rate_hz=44100, channels=2) as sink:
+        sink.write(np.full((44100, 2), 0.25))
+    engine.send(messages.OpenFile(other))
+    opened = wait_for(engine, lambda s: s.sample_rate_hz == 44100, "the other recording")
+    assert (opened.frames, opened.position_frame, opened.playing) == (44100, 0, False)
+    engine.send(messages.Play())
+    wait_for(engine, lambda s: s.input.peak_v == (2.5, 2.5), "its level")
+    assert any("noise.wav" in notice.text and notice.severity == "error" for notice in engine.notices())
+
+
+def test_an_unknown_part_is_told_and_it_plays_on(start, tone):
+    engine = start(session_of(tone), play=True)
+    wait_for(engine, lambda s: s.position_frame > 0, "sound")
+    engine.send(messages.SetPart("R99", 1.0))
+    before = wait_for(engine, lambda s: True, "a snapshot").position_frame
+    wait_for(engine, lambda s: s.position_frame != before, "going on")
+    deadline = time.monotonic() + DEADLINE_S
+    told: list[str] = []
+    while not told and time.monotonic() < deadline:
+        told = [n.text for n in engine.notices() if "R99" in n.text]
+        time.sleep(0.005)  # polling a process, with a deadline
+    assert told
+
+
+def test_close_ends_the_process_and_can_be_called_twice(start, tone):
+    engine = start(session_of(tone), play=True)
+    wait_for(engine, lambda s: s.position_frame > 0, "sound")
+    began = time.monotonic()
+    engine.close()
+    assert time.monotonic() - began < 2.0
+    assert not engine.alive
+    engine.close()
+    engine.send(messages.Play())  # dropped without an error
+
+
+def test_a_crashed_engine_is_seen_and_a_hung_one_is_ended_by_force(start, tone):
+    crashed, hung = start(session_of(tone)), start(session_of(tone))
+    wait_for(crashed, lambda s: True, "a snapshot")
+    wait_for(hung, lambda s: True, "a snapshot")
+    assert crashed.pid is not None
+    assert hung.pid is not None
+    os.kill(crashed.pid, signal.SIGKILL)
+    deadline = time.monotonic() + DEADLINE_S
+    while crashed.alive and time.monotonic() < deadline:
+        time.sleep(0.005)  # polling a process, with a deadline
+    assert not crashed.alive
+    crashed.send(messages.Play())
+    os.kill(hung.pid, signal.SIGSTOP)
+    hung.close(timeout_s=0.2)
+    assert not hung.alive
+
+
+PARENT = """
+import sys, time
+from pathlib import Path
+from tests_session import session
+from preview.engine.process import EngineConfig, EngineProcess
+
+if __name__ == "__main__":
+    engine = EngineProcess.start(EngineConfig(session=session, silent=True, log=Path(sys.argv[1])))
+    print(engine.pid, flush=True)
+    while engine.latest() is None:
+        time.sleep(0.01)
+    print("up", flush=True)
+    time.sleep(60)
+"""
+
+
+def test_the_engine_ends_when_its_desk_is_killed(tone, tmp_path):
+    (tmp_path / "tests_session.py").write_text(
+        "from pathlib import Path\n"
+        "from preview.circuit.library import find_stage\n"
+        "from preview.session import Session\n"
+        "from preview.values.levels import parse_full_scale\n"
+        "stage = find_stage('inverting-low-pass')\n"
+        f"session = Session(Path({str(tone)!r}), stage, stage.supply, 0.0, None, parse_full_scale('10 V'))\n"
+    )
+    script = tmp_path / "desk.py"
+    script.write_text(PARENT)
+    desk = subprocess.Popen(
+        [sys.executable, str(script), str(tmp_path / "log")], stdout=subprocess.PIPE, text=True
+    )
+    assert desk.stdout is not None
+    pid = int(desk.stdout.readline())
+    assert desk.stdout.readline() == "up\n"
+    desk.kill()
+    desk.wait()
+    deadline = time.monotonic() + DEADLINE_S
+    while _runs(pid) and time.monotonic() < deadline:
+        time.sleep(0.005)  # polling a process, with a deadline
+    assert not _runs(pid)
+
+
+def _runs(pid: int) -> bool:
+    """Whether a process runs (a zombie that nobody has collected does not)."""
+    try:
+        state = Path(f"/proc/{pid}/stat").read_text().rsplit(")", 1)[1].split()[0]
+    except OSError:
+        return False
+    return state != "Z"

@@ -1,0 +1,219 @@
+"""The state behind the desk, without a screen."""
+
+from __future__ import annotations
+
+import math
+import shlex
+from dataclasses import replace
+from pathlib import Path
+
+import pytest
+
+from preview.circuit.library import find_stage
+from preview.circuit.parts import Supply
+from preview.engine.messages import Pause, Play, Seek, SetAtEnd, SetCircuit, SetPart, SetRegion, SetVolume
+from preview.errors import PartValueError
+from preview.session import AtEnd
+from preview.ui.changes import commands_between, render_command, with_value
+from preview.ui.desk import Desk
+from preview.values.notation import parse_value
+from preview.values.quality import Quality
+
+
+class Clock:
+    """A clock that is set by hand."""
+
+    def __init__(self) -> None:
+        self.now_s = 100.0
+
+    def __call__(self) -> float:
+        return self.now_s
+
+
+@pytest.fixture
+def clock() -> Clock:
+    return Clock()
+
+
+@pytest.fixture
+def desk(session, engine, clock) -> Desk:
+    desk = Desk(session, engine, now_s=clock)
+    desk.take(engine.snapshot)
+    return desk
+
+
+def test_only_the_changed_part_is_sent(session) -> None:
+    changed = with_value(session, "R2", 47e3)
+    assert commands_between(session, changed) == [SetPart("R2", 47e3)]
+    assert commands_between(session, session) == []
+
+
+def test_another_supply_is_another_circuit(session) -> None:
+    changed = replace(session, supply=Supply(12.0, -12.0))
+    (command,) = commands_between(session, changed)
+    assert isinstance(command, SetCircuit)
+    assert command.netlist.opamps[0].high_v == 12.0
+
+
+def test_a_value_out_of_range_changes_nothing(desk, engine, session) -> None:
+    with pytest.raises(PartValueError, match="out of range"):
+        desk.set_value(1e15)
+    assert desk.session == session
+    assert engine.sent == []
+    assert desk.do_undo() == "nothing to take back"
+
+
+def test_stepping_from_an_odd_value_reaches_the_next_standard_value(desk, engine) -> None:
+    desk.set_value(4321.0)
+    desk.do_value_up()
+    assert engine.sent[-1] == SetPart("R1", 4700.0)  # E24, IEC 60063: 4.3, 4.7
+    desk.do_value_down()
+    assert engine.sent[-1] == SetPart("R1", 4300.0)
+
+
+def test_the_series_of_a_part_is_kept_and_used(desk, engine) -> None:
+    for _ in range(3):  # E24 -> E48 -> E96 -> E192
+        desk.do_next_series()
+    desk.do_value_up()
+    assert engine.sent[-1] == SetPart("R1", 10.1e3)  # E192, IEC 60063: 1.00, 1.01
+    desk.do_next_series()
+    assert desk.part.series == "E3"
+
+
+def test_undo_walks_back_over_a_change_of_stage_and_redo_forward(desk, engine) -> None:
+    desk.set_value(22e3)
+    desk.open_stage(find_stage("inverting-high-pass"))
+    assert desk.before.stage.name == "inverting-high-pass"
+    desk.do_undo()
+    assert desk.session.stage.part("R1").value == 22e3
+    assert desk.before.stage.part("R1").value == 10e3, "'before' is the low-pass as it was opened"
+    desk.do_undo()
+    assert engine.sent[-1] == SetPart("R1", 10e3)
+    desk.do_redo()
+    desk.do_redo()
+    assert desk.session.stage.name == "inverting-high-pass"
+    assert desk.do_redo() == "nothing to make again"
+
+
+def test_undo_leaves_quality_and_end_as_they_are(desk) -> None:
+    desk.set_value(22e3)
+    desk.do_next_quality()
+    desk.do_at_end()
+    desk.do_undo()
+    assert desk.session.quality is Quality.FINE
+    assert desk.session.at_end is AtEnd.STOP
+    assert desk.session.stage.part("R1").value == 10e3
+
+
+def test_quick_seeks_add_up_before_the_engine_has_answered(desk, engine) -> None:
+    for _ in range(3):
+        desk.do_forward_small()
+    assert engine.sent[-1] == Seek(144_000)
+
+
+def test_the_engine_has_the_last_word_on_where_the_playhead_is(desk, engine, clock) -> None:
+    desk.do_forward_small()
+    assert desk.position_frame == 48_000
+    clock.now_s += 1.0
+    desk.take(replace(engine.snapshot, position_frame=1234))
+    assert desk.position_frame == 1234
+
+
+def test_playing_follows_the_engine_when_the_file_has_ended(desk, engine, clock) -> None:
+    desk.do_play_pause()
+    assert engine.sent == [Play()]
+    desk.take(replace(engine.snapshot, playing=False))  # an older word: not believed yet
+    assert desk.playing
+    clock.now_s += 1.0
+    desk.take(replace(engine.snapshot, playing=False))
+    assert not desk.playing
+    desk.play(True)
+    desk.do_play_pause()
+    assert engine.sent[-1] == Pause()
+
+
+def test_a_region_never_ends_before_it_starts(desk, engine) -> None:
+    desk.seek(300_000)
+    desk.do_region_end()
+    assert engine.sent[-1] == SetRegion(0, 300_000)
+    desk.seek(400_000)
+    desk.do_region_start()
+    assert engine.sent[-1] == SetRegion(400_000, 600_000)
+    desk.seek(100_000)
+    desk.do_region_end()
+    assert engine.sent[-1] == SetRegion(0, 100_000)
+
+
+def test_a_region_at_the_very_start_or_end_holds_at_least_two_frames(desk, engine) -> None:
+    desk.seek(0)
+    desk.do_region_end()
+    assert engine.sent[-1] == SetRegion(0, 2)
+    desk.do_region_clear()
+    desk.seek(10**9)
+    assert engine.sent[-1] == Seek(599_999)
+    desk.do_region_start()
+    assert engine.sent[-1] == SetRegion(599_998, 600_000)
+
+
+def test_keys_do_nothing_harmful_before_the_engine_has_spoken(session, engine) -> None:
+    desk = Desk(session, engine)
+    for action in (desk.do_forward_small, desk.do_back_large, desk.do_region_start, desk.do_region_end):
+        action()
+    assert engine.sent == []
+
+
+def test_the_volume_starts_low_ends_at_0_db_and_goes_off_below_60_db(desk, engine) -> None:
+    assert desk.volume_db == -20.0
+    for _ in range(25):
+        desk.do_volume_up()
+    assert engine.sent[-1] == SetVolume(0.0)
+    for _ in range(61):
+        desk.do_volume_down()
+    assert engine.sent[-1] == SetVolume(-math.inf)
+    desk.do_volume_down()
+    assert engine.sent[-1] == SetVolume(-math.inf)
+    desk.do_volume_up()
+    assert engine.sent[-1] == SetVolume(-60.0)
+
+
+def test_a_new_engine_is_brought_to_where_the_old_one_was(desk, engine, clock) -> None:
+    desk.set_value(22e3)
+    desk.do_bypass()
+    desk.do_at_end()
+    desk.do_volume_up()
+    desk.seek(96_000)
+    desk.do_region_start()
+    new = type(engine)()
+    desk.resume(new)
+    assert isinstance(new.sent[0], SetCircuit)
+    assert new.sent[0].netlist.values["R1"] == 22e3
+    for command in (SetAtEnd(AtEnd.STOP), SetVolume(-19.0), SetRegion(96_000, 600_000), Seek(96_000)):
+        assert command in new.sent
+    assert new.snapshot.bypass
+    assert Play() not in new.sent, "sound starts by hand after a stop"
+
+
+def test_the_wall_of_the_output_is_the_nearer_rail(desk) -> None:
+    assert desk.output_wall() == (15.0, "U1")
+    desk.change(replace(desk.session, supply=Supply(12.0, -5.0)))
+    assert desk.output_wall() == (5.0, "U1")
+    desk.change(replace(desk.session, supply=Supply(9.0, 0.0)))
+    assert desk.output_wall() == (9.0, "U1")
+    desk.do_opamp_type()
+    assert desk.output_wall() == (None, None)
+
+
+def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> None:
+    opened = session.stage
+    session = with_value(with_value(session, "R1", 4700.0), "C1", 1.23456789e-9)
+    session = replace(session, audio=Path("a b.wav"), load_ohm=600.0, supply=Supply(12.0, -12.0))
+    words = shlex.split(render_command(session, opened))
+    assert words[:4] == ["preview", "render", "a b.wav", "OUT.wav"]
+    options = list(zip(words[4::2], words[5::2], strict=True))
+    parts = dict(text.split("=", 1) for option, text in options if option == "--part")
+    assert parse_value(parts["R1"], "resistance") == 4700.0
+    assert parse_value(parts["C1"], "capacitance") == 1.23456789e-9
+    assert "R2" not in parts
+    assert ("--full-scale", "+18 dBu") in options
+    assert ("--load", "600.0") in options
+    assert ("--supply", "12.0 -12.0") in options
