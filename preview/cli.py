@@ -61,7 +61,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             _say(f"  {error.hint}")
         return error.exit_code
     except KeyboardInterrupt:
-        _say("preview: interrupted; nothing half-written is left")
+        _say("preview: interrupted")
         return INTERRUPTED
     except BrokenPipeError:
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
@@ -190,7 +190,7 @@ def _listen(options: argparse.Namespace) -> int:
     info = probe(audio)
     session = session_from(options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage)
     _echo(session, info.warnings)
-    if not (sys.stdin.isatty() and sys.stdout.isatty()):
+    if not (sys.stdin.isatty() and sys.stdout.isatty() and sys.stderr.isatty()):
         raise UsageError("the desk needs a terminal", "preview render works without one")
     from preview.engine.process import EngineConfig, EngineProcess
 

@@ -8,7 +8,7 @@ prewarp. ``sections`` turns the small-signal response into IIR second-order sect
 ``running_step`` makes the matrices of the running computation. The bilinear transform is the trapezoidal
 rule, ``integral x = T (x0 + x1)/2``; its frequency warping is that rule's error, whose leading term is known
 (Euler-Maclaurin): ``-(T^2/12)(x1' - x0')``. The running step takes that term along, with ``x'`` from the
-circuit's own equations. Warping falls from ``(wT)^2/12`` to ``(wT)^4/720`` [AbramowitzStegun1964, 25.4.1 and
+circuit's own equations. Warping falls from ``(wT)^2/12`` to ``(wT)^4/720`` [AbramowitzStegun1964,
 23.1.30], the rule stays A-stable (the amplification of a mode is the diagonal Pade approximant (2, 2) of the
 exponential [HairerWanner1996]), and inputs and op-amp outputs enter as their true means over the step.
 """

@@ -42,6 +42,7 @@ __all__ = ["Host", "run"]
 TURN_S = 1.0 / 30.0
 FADE_WAIT_S = 0.15
 SETTLE_S = 0.15
+PATIENCE_S = 3.0
 LATENCY_WAIT_S = 0.25
 LOG_BYTES_MAX = 1 << 20
 
@@ -152,6 +153,8 @@ class Host:
         self._preparer: Preparer | None = None
         self._reader_error = False
         self._collected = False
+        self._began_s = time.monotonic()
+        self._asked_for_patience = False
 
     def live(self) -> None:
         """Serve until told to quit or until the desk is gone."""
@@ -208,6 +211,10 @@ class Host:
             if snapshot is not None:
                 player.snapshot = None
                 self._connection.send(snapshot)
+        waited_s = time.monotonic() - self._began_s
+        if waited_s > PATIENCE_S and not (self._collected or self._asked_for_patience):
+            self._asked_for_patience = True
+            self._tell("preparing the computation; the first start on a machine takes longest")
         while self._untold:
             self._connection.send(self._untold.popleft())
         self._outlet.watch()
