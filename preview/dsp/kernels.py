@@ -37,6 +37,9 @@ compiled = _compiler()
 MAX_ITERATIONS = 40
 """Newton steps that a limited step may take; 2 to 5 are usual."""
 
+CHUNK = 128
+"""Steps that are taken at a time while nobody limits."""
+
 # columns of the op-amps' running statistics
 HIGH, LOW, SLEW, CURRENT, EVENTS, CLIPPED, UNSOLVED, STATS = 0, 1, 2, 3, 4, 5, 6, 7
 
@@ -128,107 +131,12 @@ def solve_small(matrix: Any, right: Any, size: int) -> bool:
 
 
 @compiled
-def bound_step(
-    bound: Any, vector: Any, asked: Any, low: Any, high: Any, n: int, k: int, work: Any, matrix: Any, row: Any
-) -> bool:
-    """Solve one step in which an op-amp limits: means and end values of all op-amp outputs together.
-
-    ``vector`` holds the step's columns: states, outputs at the start, signal at the start, mean signal, signal at
-    the end, then mean outputs and end outputs, which are the unknowns and are left in it. ``asked`` is what each
-    op-amp was asked for at the start. ``work`` (6, 2k): residual, trial, direction, base, kept, share at a limit.
-    ``row`` receives the step's rows. Returns whether the equations were met.
-    """
-    c_mean = n + k + 3
-    c_end = c_mean + k
-    scale = 0.0
-    for i in range(2 * k):  # what they are asked for without the unknowns' share
-        t = 0.0
-        for j in range(c_mean):
-            t += bound[n + i, j] * vector[j]
-        work[3, i] = t
-    for i in range(k):
-        start = vector[n + i]
-        vector[c_mean + i] = start
-        vector[c_end + i] = start
-        if np.isfinite(high[i]):
-            scale = max(scale, high[i], -low[i])
-        scale = max(scale, abs(start))
-    tolerance = 1e-13 * scale + 1e-300
-    before = np.inf
-    shrink = 1.0
-    solved = False
-    for _ in range(MAX_ITERATIONS):
-        worst = 0.0
-        for i in range(k):
-            end = work[3, i]
-            mean = work[3, k + i]
-            for j in range(k):
-                end += (
-                    bound[n + i, c_mean + j] * vector[c_mean + j]
-                    + bound[n + i, c_end + j] * vector[c_end + j]
-                )
-                mean += bound[n + k + i, c_mean + j] * vector[c_mean + j]
-                mean += bound[n + k + i, c_end + j] * vector[c_end + j]
-            value, by_mean, by_end, share = clamped_mean(asked[i], mean, end, low[i], high[i])
-            inside = 1.0 if low[i] < end < high[i] else 0.0
-            work[5, i] = share
-            work[0, i] = vector[c_mean + i] - value
-            work[0, k + i] = vector[c_end + i] - min(max(end, low[i]), high[i])
-            worst = max(worst, abs(work[0, i]), abs(work[0, k + i]))
-            for j in range(k):
-                one = 1.0 if i == j else 0.0
-                am, ae = bound[n + k + i, c_mean + j], bound[n + k + i, c_end + j]
-                em, ee = bound[n + i, c_mean + j], bound[n + i, c_end + j]
-                matrix[i, j] = one - by_mean * am - by_end * em
-                matrix[i, k + j] = -by_mean * ae - by_end * ee
-                matrix[k + i, j] = -inside * em
-                matrix[k + i, k + j] = one - inside * ee
-        if worst <= tolerance:
-            solved = True
-            break
-        if worst > before and shrink > 0.02:  # no gain: go back half the way
-            shrink *= 0.5
-            for i in range(k):
-                vector[c_mean + i] = work[4, i] - shrink * work[2, i]
-                vector[c_end + i] = work[4, k + i] - shrink * work[2, k + i]
-            continue
-        before = worst
-        shrink = 1.0
-        for i in range(2 * k):
-            work[2, i] = work[0, i]
-        if not solve_small(matrix, work[2], 2 * k):
-            break
-        for i in range(k):
-            work[4, i] = vector[c_mean + i]
-            work[4, k + i] = vector[c_end + i]
-            vector[c_mean + i] -= work[2, i]
-            vector[c_end + i] -= work[2, k + i]
-        if before <= 1e3 * tolerance:  # at the rounding floor: this last step ends it
-            solved = True
-            break
-    for i in range(k):
-        vector[c_mean + i] = min(max(vector[c_mean + i], low[i]), high[i])
-        vector[c_end + i] = min(max(vector[c_end + i], low[i]), high[i])
-    for i in range(n + 3 * k + 1):
-        t = 0.0
-        for j in range(c_end + k):
-            t += bound[i, j] * vector[j]
-        row[i] = t
-    return solved
-
-
-@compiled
-def between_stations(free: Any, bound: Any, glide: Any, free_now: Any, bound_now: Any) -> None:
-    """Matrices at the glide's present place, linear between way stations, and one step on."""
-    leg = glide[0] // glide[1]
-    last = glide[2] - 1
-    part = 0.0
-    if leg >= last:
-        leg = last
-    else:
-        part = (glide[0] - leg * glide[1]) / glide[1]
-        glide[0] += 1
+def between_stations(free: Any, bound: Any, at: int, leg_steps: int, free_now: Any, bound_now: Any) -> None:
+    """Matrices of a glide after ``at`` steps, linear between way stations."""
+    last = free.shape[0] - 1
+    leg = min(at // leg_steps, last)
     after = min(leg + 1, last)
+    part = (at - leg * leg_steps) / leg_steps if leg < last else 0.0
     for a in range(free_now.shape[0]):
         for b in range(free_now.shape[1]):
             free_now[a, b] = free[leg, a, b] + part * (free[after, a, b] - free[leg, a, b])
@@ -238,121 +146,374 @@ def between_stations(free: Any, bound: Any, glide: Any, free_now: Any, bound_now
 
 
 @compiled
-def limited_step(
-    W: Any,
-    v: Any,
-    asked: Any,
-    limited: Any,
-    low: Any,
-    high: Any,
-    n: int,
-    k: int,
-    stats: Any,
-    work: Any,
-    matrix: Any,
-    row: Any,
-) -> None:
-    """One step of one channel in which an op-amp limits, with its statistics; leaves the new state in ``v``."""
-    solved = bound_step(W, v, asked, low, high, n, k, work, matrix, row)
-    for j in range(k):
-        y1 = v[n + 2 * k + 3 + j]
-        note(stats[j], v[n + j], y1, row[n + 2 * k + 1 + j])
-        stats[j, CLIPPED] += work[5, j]
-        if work[5, j] > 0.0 and not limited[j]:
-            stats[j, EVENTS] += 1.0
-        if not solved:
-            stats[j, UNSOLVED] += 1.0
-        v[n + j] = y1
-        asked[j] = row[n + j]
-        limited[j] = not low[j] < row[n + j] < high[j]
-    for b in range(n):
-        v[b] = row[b]
+def newton(
+    W: Any, v: Any, ask: Any, low: Any, high: Any, n: int, k: int, work: Any, matrix: Any, direction: Any
+) -> bool:
+    """Means and end values of all op-amp outputs over a step in which an op-amp limits, by Newton's method.
+
+    ``v`` holds the step's columns: states and outputs at the start, signal at the start, on average and at the end;
+    then mean outputs and end outputs, the unknowns, which are left in it. ``ask`` is what each op-amp was asked for at
+    the start. ``work`` (5, 2k): residual, step, what is asked without the unknowns' share (given, row 2), last point,
+    and, left in row 4, the share of the step at a limit. Returns whether the equations were met.
+    """
+    c_mean = n + k + 3
+    c_end = c_mean + k
+    scale = 0.0
+    for i in range(k):
+        v[c_mean + i] = v[n + i]
+        v[c_end + i] = v[n + i]
+        if np.isfinite(high[i]):
+            scale = max(scale, high[i], -low[i])
+        scale = max(scale, abs(v[n + i]))
+    tolerance = 1e-13 * scale + 1e-300
+    before = np.inf
+    shrink = 1.0
+    solved = False
+    for _ in range(MAX_ITERATIONS):
+        worst = 0.0
+        for i in range(k):
+            end = work[2, i]
+            mean = work[2, k + i]
+            for j in range(k):
+                end += W[n + i, c_mean + j] * v[c_mean + j] + W[n + i, c_end + j] * v[c_end + j]
+                mean += W[n + k + i, c_mean + j] * v[c_mean + j] + W[n + k + i, c_end + j] * v[c_end + j]
+            value, by_mean, by_end, share = clamped_mean(ask[i], mean, end, low[i], high[i])
+            inside = 1.0 if low[i] < end < high[i] else 0.0
+            work[4, i] = share
+            work[0, i] = v[c_mean + i] - value
+            work[0, k + i] = v[c_end + i] - min(max(end, low[i]), high[i])
+            worst = max(worst, abs(work[0, i]), abs(work[0, k + i]))
+            for j in range(k):
+                one = 1.0 if i == j else 0.0
+                am, ae = W[n + k + i, c_mean + j], W[n + k + i, c_end + j]
+                em, ee = W[n + i, c_mean + j], W[n + i, c_end + j]
+                matrix[i, j] = one - by_mean * am - by_end * em
+                matrix[i, k + j] = -by_mean * ae - by_end * ee
+                matrix[k + i, j] = -inside * em
+                matrix[k + i, k + j] = one - inside * ee
+        if worst <= tolerance:
+            solved = True
+            break
+        if worst > before and shrink > 0.02:  # no gain: go back half the way
+            shrink *= 0.5
+            for i in range(2 * k):
+                v[c_mean + i] = work[3, i] - shrink * work[1, i]
+            continue
+        before = worst
+        shrink = 1.0
+        for i in range(2 * k):
+            direction[i] = work[0, i]
+        if not solve_small(matrix, direction, 2 * k):
+            break
+        for i in range(2 * k):
+            work[1, i] = direction[i]
+            work[3, i] = v[c_mean + i]
+            v[c_mean + i] -= direction[i]
+        if before <= 1e3 * tolerance:  # at the rounding floor: this last step ends it
+            solved = True
+            break
+    for i in range(k):
+        v[c_mean + i] = min(max(v[c_mean + i], low[i]), high[i])
+        v[c_end + i] = min(max(v[c_end + i], low[i]), high[i])
+    return solved
 
 
 @compiled
-def note(s: Any, before: float, now: float, current: float) -> None:
-    """Take one op-amp's step into its statistics."""
-    s[HIGH] = max(s[HIGH], now)
-    s[LOW] = min(s[LOW], now)
-    s[SLEW] = max(s[SLEW], abs(now - before))
-    s[CURRENT] = max(s[CURRENT], abs(current))
-
-
-@compiled
-def any_set(flags: Any) -> bool:
-    """Whether any flag is set."""
-    for j in range(flags.shape[0]):
-        if flags[j]:
-            return True
-    return False
-
-
-@compiled
-def within(v: Any, row: Any, low: Any, high: Any, n: int, k: int) -> bool:
-    """Whether every op-amp's path over a free step, a parabola, keeps off its limits for certain."""
-    for j in range(k):
-        y0, y1 = v[n + j], row[n + j]
-        bow = 1.5 * abs(row[n + k + j] - 0.5 * (y0 + y1))
-        if max(y0, y1) + bow > high[j] or min(y0, y1) - bow < low[j]:
-            return False
-    return True
-
-
-@compiled
-def mean_signal(u: Any, i: int) -> float:
-    """Mean over the step from ``u[i + 1]`` to ``u[i + 2]`` of the cubic through four samples."""
-    mean: float = (13.0 * (u[i + 1] + u[i + 2]) - (u[i] + u[i + 3])) * (1.0 / 24.0)
-    return mean
-
-
-@compiled
-def glide_steps(
+def checked_steps(
     free: Any,
     bound: Any,
-    u: Any,
-    mean_out: Any,
-    steps: int,
-    state: Any,
-    asked: Any,
+    at: int,
+    leg_steps: int,
+    uc: Any,
+    first: int,
+    count: int,
+    v: Any,
+    ask: Any,
     limited: Any,
     low: Any,
     high: Any,
     stats: Any,
-    glide: Any,
     free_now: Any,
     bound_now: Any,
     work: Any,
     matrix: Any,
+    direction: Any,
     row: Any,
+    out: Any,
 ) -> None:
-    """``run_steps`` while a part is on its way: every step has matrices of its own."""
-    channels, k = asked.shape
+    """Steps ``first`` to ``first + count`` of one channel, each checked; one that may touch a limit is solved for itself.
+
+    With ``leg_steps`` above zero the matrices glide, and ``at`` is how many steps the glide had taken.
+    """
+    k = ask.shape[0]
     rows, columns = free_now.shape
     n = columns - k - 3
-    for i in range(steps):
-        between_stations(free, bound, glide, free_now, bound_now)
-        for c in range(channels):
-            v = state[c]
-            v[n + k] = u[c, i + 1]
-            v[n + k + 1] = mean_signal(u[c], i)
-            v[n + k + 2] = u[c, i + 2]
-            clean = not any_set(limited[c])
-            if clean:
-                for a in range(rows):
-                    t = 0.0
-                    for b in range(columns):
-                        t += free_now[a, b] * v[b]
-                    row[a] = t
-                clean = within(v, row, low, high, n, k)
-            if clean:
+    c_mean, c_end = n + k + 3, n + 2 * k + 3
+    moving = leg_steps > 0
+    M = free_now if moving else free[0]
+    W = bound_now if moving else bound[0]
+    stuck = False
+    for j in range(k):
+        stuck = stuck or limited[j]
+    for i in range(first, first + count):
+        if moving:
+            between_stations(free, bound, at + i, leg_steps, free_now, bound_now)
+        v[n + k] = uc[i + 1]
+        # mean over the step of the cubic through four samples
+        v[n + k + 1] = (13.0 * (uc[i + 1] + uc[i + 2]) - (uc[i] + uc[i + 3])) * (1.0 / 24.0)
+        v[n + k + 2] = uc[i + 2]
+        clean = not stuck
+        if clean:
+            for a in range(rows):
+                t = 0.0
+                for b in range(columns):
+                    t += M[a, b] * v[b]
+                row[a] = t
+            for j in range(k):
+                y0, y1 = v[n + j], row[n + j]
+                bow = 1.5 * abs(row[n + k + j] - 0.5 * (y0 + y1))
+                if y0 + bow > high[j] or y1 + bow > high[j] or y0 - bow < low[j] or y1 - bow < low[j]:
+                    clean = False
+        if clean:
+            for j in range(k):
+                v[c_end + j] = row[n + j]
+                work[4, j] = 0.0
+        else:
+            if not stuck:
                 for j in range(k):
-                    note(stats[c, j], v[n + j], row[n + j], row[n + 2 * k + 1 + j])
-                    asked[c, j] = row[n + j]
-                for b in range(n + k):
-                    v[b] = row[b]
-            else:
-                limited_step(bound_now, v, asked[c], limited[c], low, high, n, k, stats[c], work, matrix, row)
-            mean_out[c, i] = row[n + 2 * k]
+                    ask[j] = v[n + j]
+            for a in range(2 * k):
+                t = 0.0
+                for b in range(c_mean):
+                    t += W[n + a, b] * v[b]
+                work[2, a] = t
+            if not newton(W, v, ask, low, high, n, k, work, matrix, direction):
+                for j in range(k):
+                    stats[j, UNSOLVED] += 1.0
+            for a in range(rows):
+                t = 0.0
+                for b in range(c_end + k):
+                    t += W[a, b] * v[b]
+                row[a] = t
+        stuck = False
+        for j in range(k):
+            y1 = v[c_end + j]
+            stats[j, HIGH] = max(stats[j, HIGH], y1)
+            stats[j, LOW] = min(stats[j, LOW], y1)
+            stats[j, SLEW] = max(stats[j, SLEW], abs(y1 - v[n + j]))
+            stats[j, CURRENT] = max(stats[j, CURRENT], abs(row[n + 2 * k + 1 + j]))
+            share = work[4, j]
+            stats[j, CLIPPED] += share
+            if share > 0.0 and not limited[j]:
+                stats[j, EVENTS] += 1.0
+            v[n + j] = y1
+            ask[j] = row[n + j]
+            limited[j] = not low[j] < row[n + j] < high[j]
+            stuck = stuck or limited[j]
+        for b in range(n):
+            v[b] = row[b]
+        out[i] = row[n + 2 * k]
+
+
+@compiled
+def recur(M: Any, drive: Any, track: Any, size: int, count: int) -> None:
+    """``track[:, i + 1] = M track[:, i] + drive[:, i]``; sizes up to three are written out."""
+    if size == 1:
+        a = M[0, 0]
+        x = track[0, 0]
+        d0, t0 = drive[0], track[0]
+        for i in range(count):
+            x = d0[i] + a * x
+            t0[i + 1] = x
+    elif size == 2:
+        a, b, c, d = M[0, 0], M[0, 1], M[1, 0], M[1, 1]
+        x, y = track[0, 0], track[1, 0]
+        d0, d1, t0, t1 = drive[0], drive[1], track[0], track[1]
+        for i in range(count):
+            x, y = d0[i] + (a * x + b * y), d1[i] + (c * x + d * y)
+            t0[i + 1] = x
+            t1[i + 1] = y
+    elif size == 3:
+        a, b, c = M[0, 0], M[0, 1], M[0, 2]
+        d, e, f = M[1, 0], M[1, 1], M[1, 2]
+        g, h, k = M[2, 0], M[2, 1], M[2, 2]
+        x, y, z = track[0, 0], track[1, 0], track[2, 0]
+        d0, d1, d2, t0, t1, t2 = drive[0], drive[1], drive[2], track[0], track[1], track[2]
+        for i in range(count):
+            x, y, z = (
+                (d0[i] + a * x) + (b * y + c * z),
+                (d1[i] + d * x) + (e * y + f * z),
+                (d2[i] + g * x) + (h * y + k * z),
+            )
+            t0[i + 1] = x
+            t1[i + 1] = y
+            t2[i + 1] = z
+    else:
+        for i in range(count):
+            for r in range(size):
+                t = drive[r, i]
+                for j in range(size):
+                    t += M[r, j] * track[j, i]
+                track[r, i + 1] = t
+
+
+@compiled
+def add_states(M: Any, track: Any, row: int, size: int, count: int, total: Any) -> None:
+    """Add to one row what the states of each step put in, all steps at once."""
+    for j in range(size):
+        m, t = M[row, j], track[j]
+        for i in range(count):
+            total[i] += m * t[i]
+
+
+@compiled
+def steps_off(y: Any, mean: Any, count: int, low: float, high: float) -> int:
+    """How many steps, from the first, one op-amp's free path keeps off its limits for certain."""
+    for i in range(count):
+        y0, y1 = y[i], y[i + 1]
+        bow = 1.5 * abs(mean[i] - 0.5 * (y0 + y1))
+        if y0 + bow > high or y1 + bow > high or y0 - bow < low or y1 - bow < low:
+            return i
+    return count
+
+
+@compiled
+def steps_at(ask: float, end: Any, mean: Any, count: int, rail: float, side: float) -> int:
+    """How many steps, from the first, one op-amp is asked for more than its rail all the time.
+
+    ``side`` is 1 at the upper rail and -1 at the lower one.
+    """
+    before = ask
+    for i in range(count):
+        bow = 1.5 * abs(mean[i] - 0.5 * (before + end[i]))
+        if side * (before - rail) < bow or side * (end[i] - rail) < bow:
+            return i
+        before = end[i]
+    return count
+
+
+@compiled
+def signal_part(
+    matrix: Any, column: int, uc: Any, first: int, count: int, constant: float, row: int, result: Any
+) -> None:
+    """What the signal, and a constant, put into one row of some steps."""
+    m0, m1, m2 = matrix[row, column], matrix[row, column + 1] / 24.0, matrix[row, column + 2]
+    # mean over the step of the cubic through four samples: (13 (u1 + u2) - u0 - u3) / 24
+    t0, t1, t2 = -m1, m0 + 13.0 * m1, m2 + 13.0 * m1
+    u0, u1, u2, u3 = uc[first:], uc[first + 1 :], uc[first + 2 :], uc[first + 3 :]
+    for i in range(count):
+        result[i] = (t0 * (u0[i] + u3[i]) + (t1 * u1[i] + t2 * u2[i])) + constant
+
+
+@compiled
+def free_steps(
+    M: Any,
+    uc: Any,
+    first: int,
+    count: int,
+    v: Any,
+    ask: Any,
+    low: Any,
+    high: Any,
+    st: Any,
+    track: Any,
+    drive: Any,
+    out: Any,
+) -> int:
+    """Take up to ``count`` steps in which no op-amp limits; how many were taken."""
+    k = ask.shape[0]
+    rows, columns = M.shape
+    size = columns - 3
+    n = size - k
+    hot = n + 2 * k
+    for a in range(rows):
+        signal_part(M, size, uc, first, count, 0.0, a, drive[a])
+    for b in range(size):
+        track[b, 0] = v[b]
+    recur(M, drive, track, size, count)
+    taken = count
+    for j in range(k):
+        add_states(M, track, size + j, size, taken, drive[size + j])
+        taken = steps_off(track[n + j], drive[size + j], taken, low[j], high[j])
+    if taken == 0:
+        return 0
+    for b in range(size):
+        v[b] = track[b, taken]
+    for a in range(hot, rows):
+        add_states(M, track, a, size, taken, drive[a])
+    da = drive[hot]
+    for i in range(taken):
+        out[first + i] = da[i]
+    for j in range(k):
+        ask[j] = v[n + j]
+        y, da = track[n + j], drive[hot + 1 + j]
+        top, bottom, fastest, most = st[j, HIGH], st[j, LOW], st[j, SLEW], st[j, CURRENT]
+        for i in range(taken):
+            y1 = y[i + 1]
+            move = abs(y1 - y[i])
+            current = abs(da[i])
+            top = y1 if y1 > top else top
+            bottom = y1 if y1 < bottom else bottom
+            fastest = move if move > fastest else fastest
+            most = current if current > most else most
+        st[j, HIGH], st[j, LOW], st[j, SLEW], st[j, CURRENT] = top, bottom, fastest, most
+    return taken
+
+
+@compiled
+def held_steps(
+    W: Any,
+    uc: Any,
+    first: int,
+    count: int,
+    v: Any,
+    ask: Any,
+    low: Any,
+    high: Any,
+    st: Any,
+    track: Any,
+    drive: Any,
+    out: Any,
+) -> int:
+    """Take up to ``count`` steps in which every op-amp stays at the rail it is at; how many were taken."""
+    k = ask.shape[0]
+    rows = W.shape[0]
+    n = rows - 3 * k - 1
+    hot = n + 2 * k
+    for a in range(rows):
+        constant = 0.0
+        for j in range(k):
+            constant += (W[a, n + j] + W[a, n + k + 3 + j] + W[a, n + 2 * k + 3 + j]) * v[n + j]
+        signal_part(W, n + k, uc, first, count, constant, a, drive[a])
+    for b in range(n):
+        track[b, 0] = v[b]
+    recur(W, drive, track, n, count)
+    taken = count
+    for j in range(k):
+        end, mean = drive[n + j], drive[n + k + j]
+        add_states(W, track, n + j, n, taken, end)
+        add_states(W, track, n + k + j, n, taken, mean)
+        side = 1.0 if v[n + j] == high[j] else -1.0
+        taken = steps_at(ask[j], end, mean, taken, v[n + j], side)
+    if taken == 0:
+        return 0
+    for b in range(n):
+        v[b] = track[b, taken]
+    for a in range(hot, rows):
+        add_states(W, track, a, n, taken, drive[a])
+    da = drive[hot]
+    for i in range(taken):
+        out[first + i] = da[i]
+    for j in range(k):
+        ask[j] = drive[n + j, taken - 1]
+        most = st[j, CURRENT]
+        da = drive[hot + 1 + j]
+        for i in range(taken):
+            current = abs(da[i])
+            most = current if current > most else most
+        st[j, CURRENT] = most
+        st[j, CLIPPED] += taken
+    return taken
 
 
 @compiled
@@ -368,20 +529,22 @@ def run_steps(
     low: Any,
     high: Any,
     stats: Any,
-    glide: Any,
+    at: int,
+    leg_steps: int,
     free_now: Any,
     bound_now: Any,
     work: Any,
     matrix: Any,
+    direction: Any,
     row: Any,
     track: Any,
     drive: Any,
-    slow: Any,
 ) -> None:
     """Run the circuit over ``steps`` steps for every channel.
 
-    What the signal adds to every row is computed for all steps at once, then the states step by step, then the
-    rows that no state depends on for all steps at once. A step that may touch a limit is solved on its own.
+    While no op-amp limits, and while all of them stay at a rail, many steps are taken at a time: what the signal
+    adds to every row first, then the states one after the other, then the rows that no state depends on. A step in
+    which an op-amp comes to a limit or leaves it is solved for itself, and so is every step while a part glides.
 
     Parameters
     ----------
@@ -399,103 +562,58 @@ def run_steps(
         Limits of the outputs [V].
     stats : (c, k, STATS)
         Running statistics.
-    glide : (3,) int64
-        Steps done, steps between way stations, way stations in use; one station means no glide.
+    at, leg_steps : int
+        Steps that the glide has taken, steps between its way stations; ``leg_steps`` is 0 without a glide.
     free_now, bound_now : (r, n + k + 3), (r, n + 3k + 3)
         Room for the matrices between two way stations.
-    work, matrix, row, track, drive, slow
-        Room: (6, 2k), (2k, 2k), (r,), (n + k, steps + 1), (r, steps), (steps,) bool.
+    work, matrix, direction, row, track, drive
+        Room: (5, 2k), (2k, 2k), (2k,), (r,), (n + k, CHUNK + 1), (r, CHUNK).
     """
-    if glide[2] > 1:
-        glide_steps(
-            free,
-            bound,
-            u,
-            mean_out,
-            steps,
-            state,
-            asked,
-            limited,
-            low,
-            high,
-            stats,
-            glide,
-            free_now,
-            bound_now,
-            work,
-            matrix,
-            row,
-        )
-        return
     channels, k = asked.shape
-    M, W = free[0], bound[0]
-    rows, columns = M.shape
-    n = columns - k - 3
-    hot = n + 2 * k
     for c in range(channels):
-        v, uc = state[c], u[c]
-        for a in range(rows):
-            m0, m1, m2 = M[a, n + k], M[a, n + k + 1] / 24.0, M[a, n + k + 2]
-            first, second, third, fourth = -m1, m0 + 13.0 * m1, m2 + 13.0 * m1, -m1
-            da = drive[a]
-            for i in range(steps):
-                da[i] = (first * uc[i] + second * uc[i + 1]) + (third * uc[i + 2] + fourth * uc[i + 3])
-        stuck = any_set(limited[c])
-        ask = asked[c]
-        for i in range(steps):
-            for b in range(n + k):
-                track[b, i] = v[b]
-            clean = not stuck
-            if clean:
-                for a in range(hot):
-                    t = drive[a, i]
-                    for b in range(n + k):
-                        t += M[a, b] * v[b]
-                    row[a] = t
+        v, uc, ask, lim, out, st = state[c], u[c], asked[c], limited[c], mean_out[c], stats[c]
+        done = 0
+        span = CHUNK
+        while done < steps:
+            count = min(span, steps - done)
+            taken = 0
+            if leg_steps == 0:
+                limits = 0
                 for j in range(k):
-                    y0, y1 = v[n + j], row[n + j]
-                    bow = 1.5 * abs(row[n + k + j] - 0.5 * (y0 + y1))
-                    if y0 + bow > high[j] or y1 + bow > high[j] or y0 - bow < low[j] or y1 - bow < low[j]:
-                        clean = False
-            slow[i] = not clean
-            if clean:
-                for b in range(n + k):
-                    v[b] = row[b]
-            else:
-                if not stuck:
-                    for j in range(k):
-                        ask[j] = v[n + j]
-                v[n + k] = uc[i + 1]
-                v[n + k + 1] = mean_signal(uc, i)
-                v[n + k + 2] = uc[i + 2]
-                limited_step(W, v, ask, limited[c], low, high, n, k, stats[c], work, matrix, row)
-                mean_out[c, i] = row[n + 2 * k]
-                stuck = any_set(limited[c])
-        if not stuck:
-            for j in range(k):
-                ask[j] = v[n + j]
-        for b in range(n + k):
-            track[b, steps] = v[b]
-        for a in range(hot, rows):
-            da = drive[a]
-            for b in range(n + k):
-                m, tb = M[a, b], track[b]
-                for i in range(steps):
-                    da[i] += m * tb[i]
-        da = drive[hot]
-        for i in range(steps):
-            if not slow[i]:
-                mean_out[c, i] = da[i]
-        for j in range(k):
-            s, y, da = stats[c, j], track[n + j], drive[hot + 1 + j]
-            top, bottom, fastest, most = s[HIGH], s[LOW], s[SLEW], s[CURRENT]
-            for i in range(steps):
-                top = max(top, y[i + 1])
-                bottom = min(bottom, y[i + 1])
-                fastest = max(fastest, abs(y[i + 1] - y[i]))
-                if not slow[i]:
-                    most = max(most, abs(da[i]))
-            s[HIGH], s[LOW], s[SLEW], s[CURRENT] = top, bottom, fastest, most
+                    limits += 1 if lim[j] else 0
+                if limits == 0:
+                    taken = free_steps(free[0], uc, done, count, v, ask, low, high, st, track, drive, out)
+                elif limits == k:
+                    taken = held_steps(bound[0], uc, done, count, v, ask, low, high, st, track, drive, out)
+                done += taken
+                if taken == count:
+                    span = min(2 * span, CHUNK)
+                    continue
+                count = 1
+                span = max(16, span // 2)
+            checked_steps(
+                free,
+                bound,
+                at,
+                leg_steps,
+                uc,
+                done,
+                count,
+                v,
+                ask,
+                lim,
+                low,
+                high,
+                st,
+                free_now,
+                bound_now,
+                work,
+                matrix,
+                direction,
+                row,
+                out,
+            )
+            done += count
 
 
 @compiled

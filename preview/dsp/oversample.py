@@ -9,6 +9,7 @@ All are ideal responses under a Kaiser window [Kaiser1974].
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import NDArray
@@ -96,6 +97,7 @@ def _zero_phase(h: Real, f: Real) -> Complex:
     return np.asarray(np.cos(2.0 * np.pi * np.outer(f, at)) @ h, dtype=np.complex128)
 
 
+@lru_cache
 def design(factor: int) -> Filters:
     """Filters for ``factor`` steps a frame (4, 8, 16 or 32)."""
     phases = factor // 2

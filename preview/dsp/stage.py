@@ -91,12 +91,17 @@ class StageProcessor:
         self._state = np.zeros((c, n + 3 * k + 3))
         self._asked, self._limited = np.zeros((c, k)), np.zeros((c, k), dtype=np.bool_)
         self._stats = np.zeros((c, k, kernels.STATS))
-        self._where = np.array([0, 1, 1], dtype=np.int64)
+        self._at = 0
         self._free_now = np.zeros(self._step.free.shape[1:])
         self._bound_now = np.zeros(self._step.bound.shape[1:])
-        self._work, self._matrix = np.zeros((6, max(1, 2 * k))), np.zeros((2 * k, 2 * k))
-        self._row, self._drive = np.zeros(n + 3 * k + 1), np.zeros((n + 3 * k + 1, steps))
-        self._track, self._slow = np.zeros((n + k, steps + 1)), np.zeros(steps, dtype=np.bool_)
+        self._work, self._matrix, self._direction = (
+            np.zeros((5, 2 * k)),
+            np.zeros((2 * k, 2 * k)),
+            np.zeros(2 * k),
+        )
+        chunk = kernels.CHUNK
+        self._row, self._drive = np.zeros(n + 3 * k + 1), np.zeros((n + 3 * k + 1, chunk))
+        self._track = np.zeros((n + k, chunk + 1))
         self.clear_readings()
         quiet = np.zeros((2, channels))
         self.process(quiet, quiet.copy())
@@ -176,7 +181,7 @@ class StageProcessor:
     def _begin(self, plan: Glide) -> None:
         self._glide = plan
         self._step = plan.step
-        self._where[0], self._where[1], self._where[2] = 0, plan.steps_per_leg, plan.step.free.shape[0]
+        self._at = 0
 
     def process(self, volts_in: Volts, volts_out: Volts) -> None:
         """Fill ``volts_out`` from the next ``volts_in``, both (frames, channels)."""
@@ -199,22 +204,25 @@ class StageProcessor:
                 self._low,
                 self._high,
                 self._stats,
-                self._where,
+                self._at,
+                self._glide.steps_per_leg if self._glide is not None else 0,
                 self._free_now,
                 self._bound_now,
                 self._work,
                 self._matrix,
+                self._direction,
                 self._row,
                 self._track,
                 self._drive,
-                self._slow,
             )
             kernels.keep_last(self._u, steps)
             kernels.down_block(
                 self._mean, done, count, self._split, self._w, volts_out, f.down_1, f.down_2, self._room
             )
-            if self._glide is not None and self._where[0] >= self._where[1] * (self._where[2] - 1):
-                self._arrive()
+            if self._glide is not None:
+                self._at += steps
+                if self._at >= self._glide.steps_per_leg * (self._glide.step.free.shape[0] - 1):
+                    self._arrive()
             done += count
 
     def _arrive(self) -> None:
@@ -226,7 +234,6 @@ class StageProcessor:
         elif ended is not None:
             # one station: the last; views, no copies
             self._step = RunningStep(ended.step.free[-1:], ended.step.bound[-1:])
-            self._where[0], self._where[1], self._where[2] = 0, 1, 1
 
     def clear_readings(self) -> None:
         """Start the readings of every op-amp anew."""
