@@ -187,21 +187,26 @@ def _listen(options: argparse.Namespace) -> int:
         raise UsageError(
             "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
         )
-    info = probe(audio)
-    session = session_from(options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage)
-    _echo(session, info.warnings)
-    if not (sys.stdin.isatty() and sys.stdout.isatty() and sys.stderr.isatty()):
-        raise UsageError("the desk needs a terminal", "preview render works without one")
     from preview.engine.process import EngineConfig, EngineProcess
 
-    config = EngineConfig(session=session, device=options.device, silent=options.silent)
-    engine = EngineProcess.start(config)
+    terminal = all(stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
+    engine = EngineProcess.spawn() if terminal else None  # it loads while the options are read
     try:
+        info = probe(audio)
+        session = session_from(
+            options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage
+        )
+        _echo(session, info.warnings)
+        if engine is None:
+            raise UsageError("the desk needs a terminal", "preview render works without one")
+        config = EngineConfig(session=session, device=options.device, silent=options.silent)
+        engine.begin(config)
         from preview.ui.app import run_desk
 
         run_desk(session, engine, restart=lambda: EngineProcess.start(config))
     finally:
-        engine.close()
+        if engine is not None:
+            engine.close()
     return 0
 
 

@@ -41,7 +41,8 @@ def test_every_published_row_names_its_source_and_how_it_was_found() -> None:
     files = sorted((TOP / "tests" / "published").glob("*.toml"))
     assert files
     for path in files:
-        rows = [row for value in tomllib.loads(path.read_text("utf-8")).values() for row in value]
+        tables = tomllib.loads(path.read_text("utf-8")).values()
+        rows = [row for table in tables for row in (table if isinstance(table, list) else [table])]
         assert rows, path.name
         for row in rows:
             assert row.get("source"), f"{path.name}: {row}"

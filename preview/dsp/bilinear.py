@@ -19,7 +19,6 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.linalg import eigvals
 
 from preview.errors import CircuitError
 from preview.network.statespace import StateSpace, invert_feedback
@@ -75,6 +74,8 @@ def poles_and_zeros(A: Real, B: Real, C: Real, D: Real) -> tuple[Complex, Comple
 
     The leading gain is that of ``gain prod(s - zero) / prod(s - pole)``.
     """
+    from scipy.linalg import eigvals  # a fifth of a second that the engine's start need not spend
+
     n = A.shape[0]
     if n == 0:
         return np.zeros(0, complex), np.zeros(0, complex), float(D[0, 0])

@@ -241,7 +241,7 @@ def checked_steps(
     row: Any,
     out: Any,
 ) -> None:
-    """Steps ``first`` to ``first + count`` of one channel, each checked; one that may touch a limit is solved for itself.
+    """Steps ``first`` to ``first + count`` of one channel, each checked; one that may touch a limit is solved alone.
 
     With ``leg_steps`` above zero the matrices glide, and ``at`` is how many steps the glide had taken.
     """
@@ -468,7 +468,6 @@ def held_steps(
     count: int,
     v: Any,
     ask: Any,
-    low: Any,
     high: Any,
     st: Any,
     track: Any,
@@ -584,7 +583,7 @@ def run_steps(
                 if limits == 0:
                     taken = free_steps(free[0], uc, done, count, v, ask, low, high, st, track, drive, out)
                 elif limits == k:
-                    taken = held_steps(bound[0], uc, done, count, v, ask, low, high, st, track, drive, out)
+                    taken = held_steps(bound[0], uc, done, count, v, ask, high, st, track, drive, out)
                 done += taken
                 if taken == count:
                     span = min(2 * span, CHUNK)

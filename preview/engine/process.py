@@ -48,7 +48,7 @@ class EngineConfig:
 
 
 class EngineProcess:
-    """A running engine. No method but ``close`` waits. Made by ``start``."""
+    """A running engine. No method but ``close`` waits. Made by ``start``, or by ``spawn`` and ``begin``."""
 
     def __init__(self, process: SpawnProcess, connection: Connection) -> None:
         self._process = process
@@ -56,24 +56,35 @@ class EngineProcess:
         self._unread: Snapshot | None = None
         self._notices: deque[Notice] = deque()
         self._guard = threading.Lock()
-        self._orders: queue.SimpleQueue[Command | None] = queue.SimpleQueue()
+        self._orders: queue.SimpleQueue[EngineConfig | Command | None] = queue.SimpleQueue()
         self._closed = False
+        self._begun = False
         threading.Thread(target=self._listen, name="engine-reader", daemon=True).start()
         threading.Thread(target=self._speak, name="engine-writer", daemon=True).start()
 
     @classmethod
     def start(cls, config: EngineConfig) -> EngineProcess:
         """Start an engine process; returns at once, its first snapshot follows within a second or two."""
+        engine = cls.spawn()
+        engine.begin(config)
+        return engine
+
+    @classmethod
+    def spawn(cls) -> EngineProcess:
+        """Start the process alone: it loads its libraries and waits for ``begin``. Returns at once."""
         context = multiprocessing.get_context("spawn")
         with _real_stderr():
             resource_tracker.ensure_running()
             ours, theirs = context.Pipe(duplex=True)
-            process = context.Process(
-                target=_child, args=(theirs, config), name="preview-engine", daemon=True
-            )
+            process = context.Process(target=_child, args=(theirs,), name="preview-engine", daemon=True)
             process.start()
         theirs.close()
         return cls(process, ours)
+
+    def begin(self, config: EngineConfig) -> None:
+        """Tell a process that was only spawned what to begin with; once, before anything is sent."""
+        self._begun = True
+        self._orders.put(config)
 
     @property
     def alive(self) -> bool:
@@ -110,7 +121,7 @@ class EngineProcess:
         self._closed = True
         self._orders.put(Quit())
         self._orders.put(None)
-        self._process.join(timeout_s)
+        self._process.join(timeout_s if self._begun else 0.0)
         for force in (self._process.terminate, self._process.kill):
             if self._process.is_alive():
                 force()
@@ -165,8 +176,12 @@ def _real_stderr() -> Iterator[None]:
         sys.stderr = held
 
 
-def _child(connection: Connection, config: EngineConfig) -> None:
+def _child(connection: Connection) -> None:
     """Runs in the child: everything that touches sound is loaded here and nowhere else."""
+    import preview.dsp.chain  # noqa: F401 - loaded while the desk still reads its options
     from preview.engine.host import run
 
-    run(connection, config)
+    with contextlib.suppress(EOFError, OSError):
+        config = connection.recv()
+        if isinstance(config, EngineConfig):
+            run(connection, config)

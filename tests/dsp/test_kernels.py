@@ -90,7 +90,15 @@ def test_running_kernels_equal_their_source(
     results = []
     for source in (False, True):
         if source:
-            for kernel in ("up_block", "run_steps", "keep_last", "down_block", "checked_steps", "newton", "recur"):
+            for kernel in (
+                "up_block",
+                "run_steps",
+                "keep_last",
+                "down_block",
+                "checked_steps",
+                "newton",
+                "recur",
+            ):
                 monkeypatch.setattr(kernels, kernel, getattr(kernels, kernel).py_func)
         stage = StageProcessor(circuit, sample_rate_hz=48_000, channels=2, quality=Quality.DRAFT)
         if gliding:
