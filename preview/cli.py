@@ -7,11 +7,12 @@
 from __future__ import annotations
 
 import argparse
+import contextlib
+import io
 import os
 import signal
 import sys
 import threading
-import time
 import traceback
 from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
@@ -29,6 +30,8 @@ if TYPE_CHECKING:
 __all__ = ["main"]
 
 INTERRUPTED = 130
+ENDINGS = tuple(getattr(signal, name) for name in ("SIGTERM", "SIGHUP") if hasattr(signal, name))
+"""Signals that end the program in an orderly way: told to stop, the terminal closed."""
 
 
 class _Parser(argparse.ArgumentParser):
@@ -43,16 +46,16 @@ def main(arguments: Sequence[str] | None = None) -> int:
     from preview.engine.options import join_signed_values
 
     given = list(sys.argv[1:] if arguments is None else arguments) or ["listen"]
-    ours = (
-        threading.current_thread() is threading.main_thread()
-        and signal.getsignal(signal.SIGTERM) is signal.SIG_DFL
-    )
+    main_thread = threading.current_thread() is threading.main_thread()
+    ours = [n for n in ENDINGS if main_thread and signal.getsignal(n) is signal.SIG_DFL]
     try:
-        if ours:
-            signal.signal(signal.SIGTERM, _terminated)
+        for number in ours:
+            signal.signal(number, _terminated)
+        _prepare_streams()
         options = _parser().parse_args(join_signed_values(given))
         code = int(options.run(options))
-        sys.stdout.flush()
+        if sys.stdout is not None:
+            sys.stdout.flush()
         return code
     except PreviewError as error:
         _debug()
@@ -69,8 +72,10 @@ def main(arguments: Sequence[str] | None = None) -> int:
     except SystemExit as ended:
         return ended.code if isinstance(ended.code, int) else 0
     except OSError as error:
+        from preview.audio.files import reason
+
         _debug()
-        _say(f"preview: {printable(str(error.filename or 'output'))}: {printable(str(error.strerror))}")
+        _say(f"preview: {printable(str(error.filename or 'standard output'))}: {printable(reason(error))}")
         return 3
     except Exception as error:
         _debug()
@@ -78,8 +83,8 @@ def main(arguments: Sequence[str] | None = None) -> int:
         _say("  PREVIEW_DEBUG=1 shows where")
         return 1
     finally:
-        if ours:
-            signal.signal(signal.SIGTERM, signal.SIG_DFL)
+        for number in ours:
+            signal.signal(number, signal.SIG_DFL)
 
 
 def _terminated(_number: int, _frame: FrameType | None) -> None:
@@ -92,8 +97,17 @@ def _debug() -> None:
 
 
 def _say(text: str) -> None:
-    """A line for the person, on stderr."""
-    print(text, file=sys.stderr)
+    """A line for the person, on stderr; where that is closed or full, the work goes on."""
+    with contextlib.suppress(OSError):
+        if sys.stderr is not None:
+            print(text, file=sys.stderr)
+
+
+def _prepare_streams() -> None:
+    """Files and pipes get UTF-8 whatever the locale; a terminal shows ? for what it cannot write."""
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(encoding=None if stream.isatty() else "utf-8", errors="replace")
 
 
 def _parser() -> argparse.ArgumentParser:
@@ -113,7 +127,9 @@ def _parser() -> argparse.ArgumentParser:
         return added
 
     listen = command("listen", _listen, "the desk: hear a recording through the stage while its parts change")
-    listen.add_argument("audio", nargs="?", metavar="AUDIO", help="the recording (default: the demo's)")
+    listen.add_argument(
+        "audio", nargs="?", type=_name, metavar="AUDIO", help="the recording (default: the demo's)"
+    )
     listen.add_argument("--silent", action="store_true", help="run without a sound device")
     listen.add_argument(
         "--end", metavar="loop|stop", default="loop", help="at the end: loop (default) or stop"
@@ -123,10 +139,15 @@ def _parser() -> argparse.ArgumentParser:
     add_stage_options(listen)
 
     render = command("render", _render, "the recording through the stage, as a file")
-    render.add_argument("audio", metavar="AUDIO", help="the recording; - is stdin")
-    render.add_argument("out", metavar="OUT", help="the file to write (replaced if it exists); - is stdout")
+    render.add_argument("audio", type=_name, metavar="AUDIO", help="the recording; - is stdin")
     render.add_argument(
-        "--depth", metavar="16|24|float", help="sample format; float (default) is 32-bit floating point"
+        "out", type=_name, metavar="OUT", help="the file to write (replaced if it exists); - is stdout"
+    )
+    render.add_argument(
+        "--depth",
+        metavar="16|24|float",
+        default="float",
+        help="sample format; float (default) is 32-bit floating point",
     )
     render.add_argument("--json", action="store_true", help="the result as one JSON object")
     add_stage_options(render)
@@ -137,7 +158,7 @@ def _parser() -> argparse.ArgumentParser:
     which.add_argument("--analog", action="store_true", help="the exact circuit (default)")
     which.add_argument("--as-heard", action="store_true", help="the running computation")
     response.add_argument(
-        "--rate", metavar="HZ", default="48k", help="sample rate of --as-heard and --sections"
+        "--rate", metavar="HZ", help="sample rate of --as-heard and --sections (default 48k)"
     )
     response.add_argument(
         "--sections",
@@ -153,11 +174,18 @@ def _parser() -> argparse.ArgumentParser:
     stages = command("stages", _stages, "the stages that come with Preview, or the text of one")
     stages.add_argument("name", nargs="?", metavar="NAME", help="a stage")
     stages.add_argument("--json", action="store_true", help="one JSON object")
-    opamps = command("opamps", _opamps, "the op-amp types that are known")
+    opamps = command("opamps", _opamps, "the op-amp types side by side, or one and its sources")
+    opamps.add_argument("name", nargs="?", metavar="NAME|FILE", help="an op-amp type")
     opamps.add_argument("--json", action="store_true", help="one JSON object")
     devices = command("devices", _devices, "the sound devices")
     devices.add_argument("--json", action="store_true", help="one JSON object")
     return parser
+
+
+def _name(text: str) -> str:
+    if not text:
+        raise argparse.ArgumentTypeError("the name is empty")
+    return text
 
 
 # -- the desk
@@ -188,6 +216,7 @@ def _listen(options: argparse.Namespace) -> int:
             "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
         )
     from preview.engine.process import EngineConfig, EngineProcess
+    from preview.network.stability import check_stable
 
     terminal = all(stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
     engine = EngineProcess.spawn() if terminal else None  # it loads while the options are read
@@ -197,6 +226,7 @@ def _listen(options: argparse.Namespace) -> int:
             options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage
         )
         _echo(session, info.warnings)
+        check_stable(session.netlist())
         if engine is None:
             raise UsageError("the desk needs a terminal", "preview render works without one")
         config = EngineConfig(session=session, device=options.device, silent=options.silent)
@@ -228,10 +258,11 @@ def _warn(warnings: Iterable[str]) -> None:
 def _render(options: argparse.Namespace) -> int:
     from preview.audio.sink import check_output
     from preview.engine.options import session_from
+    from preview.engine.progress import Progress
     from preview.engine.render import open_source, render
     from preview.engine.report import render_lines, render_object
 
-    depth = _depth(options.depth or "float")
+    depth = _depth(options.depth)
     audio, out = Path(options.audio), Path(options.out)
     check_output(out, [audio], depth=depth)
     source = open_source(audio)
@@ -240,7 +271,7 @@ def _render(options: argparse.Namespace) -> int:
         session = session_from(options, audio=audio, comment=info.comment)
         said = source.warnings
         _echo(session, said)
-        progress = _Progress(info.frames, enabled=sys.stderr.isatty())
+        progress = Progress(info.frames, sys.stderr)
         try:
             result = render(session, source, out, depth=depth, progress=progress)
         finally:
@@ -255,7 +286,7 @@ def _render(options: argparse.Namespace) -> int:
         text = json_text(render_object(session, result, deviation_db, out))
     else:
         text = "\n".join(render_lines(result, deviation_db, out))
-    print(text, file=sys.stderr if options.out == "-" else sys.stdout)
+    (_say if options.out == "-" else print)(text)
     return 0
 
 
@@ -268,48 +299,22 @@ def _depth(text: str) -> Depth:
     raise UsageError(f"--depth {text}: no such sample format", f"one of {', '.join(DEPTHS)}")
 
 
-class _Progress:
-    """One line on stderr that is written over: share done, a bar, time left."""
-
-    def __init__(self, frames: int, *, enabled: bool) -> None:
-        self._frames = frames
-        self._enabled = enabled and frames > 0
-        self._began_s = time.monotonic()
-        self._shown_s = -1.0
-
-    def __call__(self, done: int) -> None:
-        now_s = time.monotonic() - self._began_s
-        if not self._enabled or now_s - self._shown_s < 0.1:
-            return
-        self._shown_s = now_s
-        share = min(done / self._frames, 1.0)
-        left_s = now_s * (1.0 - share) / share if share > 0 else 0.0
-        bar = ("#" * round(30 * share)).ljust(30, ".")
-        sys.stderr.write(f"\r{100 * share:4.0f} %  {bar}  {left_s:4.0f} s left ")
-        sys.stderr.flush()
-
-    def clear(self) -> None:
-        """Take the line away."""
-        if self._enabled and self._shown_s >= 0:
-            sys.stderr.write("\r" + " " * 60 + "\r")
-            sys.stderr.flush()
-
-
 # -- response and lists
 
 
 def _response(options: argparse.Namespace) -> int:
     from preview.analysis import table as tables
-    from preview.engine.options import session_from, understood_values
+    from preview.engine.options import check_together, frequency_of, session_from, understood_values
 
+    check_together(options)
     session = session_from(options)
     circuit = session.netlist()
-    rate_hz = _frequency(options.rate, "--rate", 8_000.0, 192_000.0)
+    rate_hz = frequency_of("48k" if options.rate is None else options.rate, "--rate", 8_000.0, 192_000.0)
     body: dict[str, object] = {"command": "response", "understood": understood_values(session)}
     if options.sections:
         prewarp_hz = None
         if options.prewarp is not None:
-            prewarp_hz = _frequency(options.prewarp, "--prewarp", 0.0, 0.4999 * rate_hz)
+            prewarp_hz = frequency_of(options.prewarp, "--prewarp", 0.0, 0.4999 * rate_hz)
         rows = tables.second_order_sections(circuit, rate_hz, prewarp_hz=prewarp_hz)
         names = ("b0", "b1", "b2", "a0", "a1", "a2")
         body |= {"sample_rate_hz": rate_hz, "prewarp_hz": prewarp_hz, "sections": rows}
@@ -321,7 +326,7 @@ def _response(options: argparse.Namespace) -> int:
         highest_hz = 0.45 * rate_hz if options.as_heard else 1e9
         wanted = [f for f in tables.PREFERRED_HZ if f <= highest_hz]
         if options.at is not None:
-            wanted = [_frequency(text, "--at", 0.0, highest_hz) for text in options.at.split(",")]
+            wanted = [frequency_of(text, "--at", 0.0, highest_hz) for text in options.at.split(",")]
         table = tables.tabulate(
             circuit,
             wanted,
@@ -332,20 +337,10 @@ def _response(options: argparse.Namespace) -> int:
         if options.as_heard:
             body |= {"sample_rate_hz": rate_hz, "quality": session.quality.value}
         lines = [table.as_csv()] if options.csv else table.as_lines()
+    if not options.json:
+        _echo(session, ())
     print(json_text(body) if options.json else "\n".join(lines))
     return 0
-
-
-def _frequency(text: str, option: str, low_hz: float, high_hz: float) -> float:
-    """A frequency [Hz] within bounds."""
-    from preview.engine.options import for_option
-    from preview.values.notation import format_value, parse_value
-
-    value = for_option(option, lambda: parse_value(text.strip(), "frequency"))
-    if not low_hz <= value <= high_hz or value <= 0.0:
-        high = format_value(high_hz, "frequency")
-        raise UsageError(f"{option} {text}: out of range", f"above {low_hz:g} Hz, at most {high}")
-    return value
 
 
 def _stages(options: argparse.Namespace) -> int:
@@ -357,9 +352,16 @@ def _stages(options: argparse.Namespace) -> int:
         if options.json:
             print(json_text({"command": "stages", "name": stage.name, "title": stage.title, "toml": source}))
         else:
-            sys.stdout.write(source if source.endswith("\n") else source + "\n")
+            if sys.stdout is not None and sys.stdout.isatty():
+                source = "\n".join(printable(line.expandtabs(4)) for line in source.splitlines())
+            print(source.removesuffix("\n"))
         return 0
-    stages = [find_stage(name) for name in stage_names()]
+    stages = []
+    for name in stage_names():
+        try:
+            stages.append(find_stage(name))
+        except PreviewError as error:  # one of the person's own; the others are still there
+            _warn([str(error)])
     if options.json:
         listed = [{"name": s.name, "title": s.title, "about": s.about} for s in stages]
         print(json_text({"command": "stages", "stages": listed}))
@@ -371,15 +373,11 @@ def _stages(options: argparse.Namespace) -> int:
 
 
 def _opamps(options: argparse.Namespace) -> int:
-    from preview.circuit.opamp import BUILT_IN_TYPES
+    from preview.analysis.opamps import opamp_report
 
-    about = {"perfect": "no limit at all", "ideal": "no limit but the rails"}
-    if options.json:
-        listed = [{"name": name, "about": about[name]} for name in BUILT_IN_TYPES]
-        print(json_text({"command": "opamps", "opamps": listed}))
-    else:
-        for name in BUILT_IN_TYPES:
-            print(f"{name:<8}  {about[name]}")
+    body, lines, problems = opamp_report(options.name)
+    _warn(problems)
+    print(json_text({"command": "opamps", **body}) if options.json else "\n".join(lines))
     return 0
 
 

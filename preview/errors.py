@@ -10,6 +10,7 @@ Family tree::
     +-- DeviceError (RuntimeError)         exit 4: no audio device or library
     +-- CircuitError (ValueError)          exit 5: the circuit cannot be computed
         +-- StageFileError                 a stage file that cannot be read as one
+        +-- OpAmpFileError                 an op-amp file that cannot be read as one
         +-- UnknownNameError (LookupError) no such stage, part or op-amp
         +-- PartValueError                 a part value that no such part can have
 """
@@ -23,6 +24,7 @@ __all__ = [
     "CircuitError",
     "DeviceError",
     "NotationError",
+    "OpAmpFileError",
     "OutputFileError",
     "PartValueError",
     "PreviewError",
@@ -89,6 +91,10 @@ class CircuitError(PreviewError, ValueError):
 
 class StageFileError(CircuitError):
     """A stage file that cannot be read as one."""
+
+
+class OpAmpFileError(CircuitError):
+    """An op-amp file that cannot be read as one."""
 
 
 class UnknownNameError(CircuitError, LookupError):

@@ -17,10 +17,10 @@ from numpy.typing import NDArray
 from preview.audio.files import CHANNELS_MAX, reason
 from preview.audio.quantise import Quantiser
 from preview.audio.wavefile import DEPTHS, Depth, sample_bytes
-from preview.audio.writers import LibraryWriter, PipeWriter, WaveWriter, Writer
+from preview.audio.writers import NO_COMMENT_FORMATS, LibraryWriter, PipeWriter, WaveWriter, Writer
 from preview.errors import OutputFileError, UsageError
 
-__all__ = ["ENDINGS", "Depth", "FileSink", "check_output"]
+__all__ = ["ENDINGS", "Depth", "FileSink", "check_output", "keeps_comment"]
 
 _FORMATS = {
     ".wav": "WAV",
@@ -38,6 +38,11 @@ ENDINGS = tuple(_FORMATS)
 _FLAC_CHANNELS_MAX = 8
 _SIZE_32_FORMATS = ("AIFF", "AU")
 _SIZE_32_MAX = (1 << 32) - 65_536
+
+
+def keeps_comment(path: Path) -> bool:
+    """Whether the kind of file that the name's ending asks for has room for a comment."""
+    return _FORMATS.get(path.suffix.lower()) not in NO_COMMENT_FORMATS
 
 
 def check_output(

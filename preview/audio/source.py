@@ -198,7 +198,9 @@ class StdinSource(_Source):
 
     def __init__(self, stream: BinaryIO | None = None) -> None:
         if stream is None:
-            if sys.stdin is None or sys.stdin.isatty():
+            if sys.stdin is None:
+                raise AudioFileError("standard input: it is closed", "use < FILE or a pipe")
+            if sys.stdin.isatty():
                 raise AudioFileError(
                     "standard input: it is the keyboard, not a WAV stream", "use < FILE or a pipe"
                 )

@@ -17,8 +17,10 @@ from preview.audio.quantise import Quantiser
 from preview.audio.wavefile import wave_header
 from preview.errors import OutputFileError
 
-__all__ = ["LibraryWriter", "PipeWriter", "WaveWriter", "Writer"]
+__all__ = ["NO_COMMENT_FORMATS", "LibraryWriter", "PipeWriter", "WaveWriter", "Writer"]
 
+NO_COMMENT_FORMATS = ("W64", "AU")
+"""Kinds of file into which the library writes no comment."""
 _SET_ADD_PEAK_CHUNK = 0x1050  # libsndfile's SFC_SET_ADD_PEAK_CHUNK; the chunk carries a time stamp
 
 
@@ -101,7 +103,9 @@ class PipeWriter:
         self, stream: BinaryIO | None, quantiser: Quantiser, sample_rate_hz: int, channels: int, comment: str
     ) -> None:
         if stream is None:
-            if sys.stdout is None or sys.stdout.isatty():
+            if sys.stdout is None:
+                raise OutputFileError("standard output: it is closed", "use > FILE or a pipe")
+            if sys.stdout.isatty():
                 raise OutputFileError(
                     "standard output: it is a terminal; samples would fill it", "use > FILE or a pipe"
                 )
@@ -148,7 +152,7 @@ class LibraryWriter:
         )
         # The package has no public way to give this command; without it two renders differ by a time stamp.
         soundfile._snd.sf_command(self._file._file, _SET_ADD_PEAK_CHUNK, soundfile._ffi.NULL, 0)
-        if comment and kind not in ("W64", "AU"):
+        if comment and kind not in NO_COMMENT_FORMATS:
             self._file.comment = comment
 
     def write(self, samples: NDArray[np.float64]) -> None:

@@ -138,6 +138,8 @@ def _path(name_or_path: str) -> Path | None:
     if name_or_path in own:
         return own[name_or_path]
     names = stage_names()
+    if not name_or_path.strip():
+        raise UnknownNameError("the stage's name is empty", f"stages are {', '.join(names)}")
     nearest = get_close_matches(name_or_path.lower()[:60], names, n=1, cutoff=0.5)
     start = f"did you mean {nearest[0]}? " if nearest else ""
     raise UnknownNameError(

@@ -9,7 +9,8 @@ from dataclasses import dataclass, replace
 from preview.circuit.checks import check
 from preview.circuit.limits import check_value
 from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR, SOURCE_NODE
-from preview.circuit.opamp import BUILT_IN_TYPES
+from preview.circuit.opamp import IDEAL, PERFECT, OpAmpModel
+from preview.circuit.opamp_library import find_opamp
 from preview.circuit.parts import OpAmp, PartKind, Stage, Supply
 from preview.errors import CircuitError, UnknownNameError
 
@@ -62,9 +63,11 @@ class OpAmpSite:
     type: str
     """Its type's name."""
     high_v: float
-    """Highest output voltage [V]; inf for ``perfect``."""
+    """Highest output voltage, the positive rail less the type's swing [V]; inf for ``perfect``."""
     low_v: float
-    """Lowest output voltage [V]; -inf for ``perfect``."""
+    """Lowest output voltage, the negative rail plus the type's swing [V]; -inf for ``perfect``."""
+    model: OpAmpModel = IDEAL
+    """The figures of its type."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -173,18 +176,49 @@ def check_supply(supply: Supply, where: str) -> None:
 
 def _site(opamp: OpAmp, rails: Supply, where: str) -> OpAmpSite:
     """The op-amp with the limits its type has on these rails."""
-    if opamp.type not in BUILT_IN_TYPES:
-        raise UnknownNameError(
-            f"{where}, {opamp.designator}: op-amp type {opamp.type} is not in the library; "
-            f"built in are {', '.join(BUILT_IN_TYPES)}"
-        )
-    limited = opamp.type != "perfect"
+    place = f"{where}, {opamp.designator}"
+    try:
+        model = find_opamp(opamp.type)
+    except UnknownNameError as error:
+        raise UnknownNameError(f"{place}: {error.message}", error.hint) from error
+    high_v, low_v = math.inf, -math.inf
+    if model is not PERFECT:
+        high_v, low_v = rails.positive_v, rails.negative_v
+    if model.real:
+        _check_type_supply(model, rails, place)
+        high_v, low_v = high_v - model.swing_high_v, low_v + model.swing_low_v
+        if high_v <= low_v:
+            raise CircuitError(
+                f"{place}: {model.type} swings to {model.swing_high_v:g} V below the positive and "
+                f"{model.swing_low_v:g} V above the negative rail, which leaves nothing of {_said(rails)}",
+                "a larger supply, or a type that swings nearer to its rails",
+            )
     return OpAmpSite(
         designator=opamp.designator,
         plus=opamp.plus,
         minus=opamp.minus,
         out=opamp.out,
-        type=opamp.type,
-        high_v=rails.positive_v if limited else math.inf,
-        low_v=rails.negative_v if limited else -math.inf,
+        type=model.type,
+        high_v=high_v,
+        low_v=low_v,
+        model=model,
     )
+
+
+def _check_type_supply(model: OpAmpModel, rails: Supply, place: str) -> None:
+    """Raise CircuitError for rails that are too near or too far apart for the type."""
+    total_v = rails.positive_v - rails.negative_v
+    if model.supply_min_v <= total_v <= model.supply_max_v:
+        return
+    field = "supply_min_v" if total_v < model.supply_min_v else "supply_max_v"
+    assumed = " (assumed of its class, its file gives none)" if field in model.assumed else ""
+    raise CircuitError(
+        f"{place}: a supply of {_said(rails)}, {total_v:g} V in all, is outside the range of {model.type}, "
+        f"{model.supply_min_v:g} V to {model.supply_max_v:g} V{assumed}",
+        "another supply, or another type",
+    )
+
+
+def _said(rails: Supply) -> str:
+    """The rails in words."""
+    return f"{rails.positive_v:g} V and {rails.negative_v:g} V"

@@ -15,7 +15,7 @@ from preview.circuit.figures import parse_figure
 from preview.circuit.limits import check_value, read_value
 from preview.circuit.netlist import check_supply
 from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR, SOURCE_NODE
-from preview.circuit.opamp import BUILT_IN_TYPES
+from preview.circuit.opamp_library import is_path, known_type
 from preview.circuit.parts import Expect, OpAmp, Part, PartKind, Stage, Supply, TwoTerminal
 from preview.circuit.tables import Table, decode, parse_toml, read_bytes
 from preview.errors import NotationError, StageFileError, UnknownNameError, printable
@@ -169,25 +169,30 @@ def _opamp(table: Table, designator: str) -> OpAmp:
     plus, minus, out = (_node(table, key, table.text(key)) for key in ("plus", "minus", "out"))
     if plus == minus:
         raise table.error("minus", "plus and minus are the same node", "give them two different nodes")
+    type_name = table.text("type")
+    if is_path(type_name):
+        raise table.error(
+            "type",
+            "a file, where a type's name is wanted",
+            f"give the file when the stage is used: --opamp {designator}=FILE",
+        )
     return OpAmp(
         designator=designator,
         plus=plus,
         minus=minus,
         out=out,
-        type=opamp_type(table.text("type"), f"{table.place} type = "),
+        type=opamp_type(type_name, f"{table.place} type = "),
         role=_line(table, "role"),
     )
 
 
 def opamp_type(name: str, where: str) -> str:
-    """The op-amp type of that name; UnknownNameError, its message starting with ``where``, for none."""
-    if name not in BUILT_IN_TYPES:
-        known = ", ".join(BUILT_IN_TYPES)
-        shown = quoted(name)
-        raise UnknownNameError(
-            f"{where}{shown}: op-amp type {shown[1:-1]} is not in the library; built in are {known}"
-        )
-    return name
+    """The op-amp type as the library spells it; UnknownNameError, beginning with ``where``, for none."""
+    try:
+        return known_type(name)
+    except UnknownNameError as error:
+        place = f"{where}{quoted(name)}: " if where else ""
+        raise UnknownNameError(f"{place}{error.message}", error.hint) from error
 
 
 def _two_terminal(table: Table, designator: str, kind: PartKind) -> TwoTerminal:

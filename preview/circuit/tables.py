@@ -45,6 +45,8 @@ def read_bytes(path: Path) -> bytes:
         raise StageFileError(
             f"{file}: no such file", "`preview stages` lists the stages there are"
         ) from error
+    except StageFileError:
+        raise
     except (OSError, ValueError) as error:
         why = (error.strerror if isinstance(error, OSError) else None) or str(error)
         raise StageFileError(f"{file}: cannot be read: {why}") from error

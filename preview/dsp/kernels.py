@@ -7,6 +7,7 @@ how the signal is cut into blocks.
 
 from __future__ import annotations
 
+import hashlib
 import os
 from collections.abc import Callable
 from pathlib import Path
@@ -17,11 +18,16 @@ from platformdirs import user_cache_dir
 
 
 def _compiler() -> Callable[[Callable[..., Any]], Any]:
-    """numba's decorator, with a cache in the user's cache folder where that can be written."""
+    """numba's decorator, with a cache in the user's cache folder where that can be written.
+
+    numba's cache of one file does not see changes in functions it calls from another, so the folder is named after
+    what is in all kernel files.
+    """
     try:
-        folder = Path(
-            os.environ.setdefault("NUMBA_CACHE_DIR", str(Path(user_cache_dir("preview")) / "kernels"))
-        )
+        sources = sorted(Path(__file__).parent.glob("*kernels.py"))
+        digest = hashlib.sha256(b"".join(source.read_bytes() for source in sources)).hexdigest()[:12]
+        own = Path(user_cache_dir("preview")) / "kernels" / digest
+        folder = Path(os.environ.setdefault("NUMBA_CACHE_DIR", str(own)))
         folder.mkdir(parents=True, exist_ok=True)
         cached = os.access(folder, os.W_OK)
     except OSError:

@@ -12,12 +12,11 @@ from numpy.typing import NDArray
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp import kernels
-from preview.dsp.bilinear import RunningStep, running_step
 from preview.dsp.block import Volts
+from preview.dsp.cores import Matrices, core_for
 from preview.dsp.oversample import LATENCY_FRAMES, design, factor_for
 from preview.errors import PartValueError, UnknownNameError
 from preview.network.stability import check_stable
-from preview.network.statespace import Topology
 from preview.values.quality import Quality
 
 __all__ = ["GLIDE_S", "Glide", "StageProcessor"]
@@ -37,7 +36,7 @@ class Glide:
 
     netlist: Netlist
     """The circuit at its end."""
-    step: RunningStep
+    matrices: Matrices
     """Matrices at each way station."""
     steps_per_leg: int
     """Steps from one station to the next."""
@@ -69,16 +68,13 @@ class StageProcessor:
         self.channels = channels
         self.filters = design(factor_for(quality, sample_rate_hz))
         self.step_s = 1.0 / (self.sample_rate_hz * self.filters.factor)
-        self._topology = Topology(netlist)
         self._netlist = netlist
         self._glide: Glide | None = None
         self._next: Glide | None = None
-        space = self._topology.evaluate(self._topology.values_of(netlist)[None])
-        check_stable(netlist, space)
-        self._step = running_step(space, self.step_s)
-        n, k = self._topology.states, len(netlist.opamps)
-        self._low = np.array([o.low_v for o in netlist.opamps])
-        self._high = np.array([o.high_v for o in netlist.opamps])
+        self._at = 0
+        check_stable(netlist)
+        self._core = core_for(netlist, channels, self.step_s)
+        self._matrices = self._core.matrices(self._core.values_of(netlist)[None])
         f, c, b = self.filters, channels, BLOCK_FRAMES
         steps = b * f.factor
         self._x = np.zeros((c, f.up_1.shape[1] - 1 + b))
@@ -88,20 +84,6 @@ class StageProcessor:
         self._split = np.zeros((c, f.factor // 2, f.down_2.shape[1] - 1 + 2 * b))
         self._w = np.zeros((c, 2, f.down_1.shape[1] - 1 + b))
         self._room = np.zeros((2, 2 * b))
-        self._state = np.zeros((c, n + 3 * k + 3))
-        self._asked, self._limited = np.zeros((c, k)), np.zeros((c, k), dtype=np.bool_)
-        self._stats = np.zeros((c, k, kernels.STATS))
-        self._at = 0
-        self._free_now = np.zeros(self._step.free.shape[1:])
-        self._bound_now = np.zeros(self._step.bound.shape[1:])
-        self._work, self._matrix, self._direction = (
-            np.zeros((5, 2 * k)),
-            np.zeros((2 * k, 2 * k)),
-            np.zeros(2 * k),
-        )
-        chunk = kernels.CHUNK
-        self._row, self._drive = np.zeros(n + 3 * k + 1), np.zeros((n + 3 * k + 1, chunk))
-        self._track = np.zeros((n + k, chunk + 1))
         self.clear_readings()
         quiet = np.zeros((2, channels))
         self.process(quiet, quiet.copy())
@@ -129,9 +111,9 @@ class StageProcessor:
 
     def reset(self) -> None:
         """Back to rest: no charge, no current, empty filters."""
-        for a in (self._x, self._a, self._u, self._split, self._w, self._state, self._asked):
+        for a in (self._x, self._a, self._u, self._split, self._w):
             a[...] = 0.0
-        self._limited[...] = False
+        self._core.reset(self._matrices)
         self.clear_readings()
 
     def plan(self, values: Mapping[str, float]) -> Glide:
@@ -156,19 +138,15 @@ class StageProcessor:
             if not (math.isfinite(value) and value > 0.0):
                 raise PartValueError(f"{name} = {value}: a part value is a positive number")
         target = self._netlist.with_values(values)
-        start = np.log(self._topology.values_of(self._netlist))
-        end = np.log(self._topology.values_of(target))
+        start = np.log(self._core.values_of(self._netlist))
+        end = np.log(self._core.values_of(target))
         span = float(np.abs(end - start).max(initial=0.0))
         legs = int(np.clip(np.ceil(16 + 100 * span), 16, 400))
         steps = max(1, round(GLIDE_S / self.step_s / legs))
         along = 0.5 - 0.5 * np.cos(np.pi * np.arange(legs + 1) / legs)
         values_along = np.exp(start + along[:, None] * (end - start))
-        values_along[-1] = self._topology.values_of(target)
-        return Glide(target, self._matrices(values_along), steps)
-
-    def _matrices(self, values: Real) -> RunningStep:
-        """Kernel matrices for sets of values, shape (g, branches)."""
-        return running_step(self._topology.evaluate(values), self.step_s)
+        values_along[-1] = self._core.values_of(target)
+        return Glide(target, self._core.matrices(values_along), steps)
 
     def glide(self, plan: Glide) -> None:
         """Take up a prepared glide at the next frame; real-time safe. Call only while ``ready``."""
@@ -180,7 +158,7 @@ class StageProcessor:
 
     def _begin(self, plan: Glide) -> None:
         self._glide = plan
-        self._step = plan.step
+        self._matrices = plan.matrices
         self._at = 0
 
     def process(self, volts_in: Volts, volts_out: Volts) -> None:
@@ -192,36 +170,15 @@ class StageProcessor:
             count = min(BLOCK_FRAMES, frames - done)
             steps = count * f.factor
             kernels.up_block(volts_in, done, count, self._x, self._a, self._u, f.up_1, f.up_2, self._room[0])
-            kernels.run_steps(
-                self._step.free,
-                self._step.bound,
-                self._u,
-                self._mean,
-                steps,
-                self._state,
-                self._asked,
-                self._limited,
-                self._low,
-                self._high,
-                self._stats,
-                self._at,
-                self._glide.steps_per_leg if self._glide is not None else 0,
-                self._free_now,
-                self._bound_now,
-                self._work,
-                self._matrix,
-                self._direction,
-                self._row,
-                self._track,
-                self._drive,
-            )
+            leg = self._glide.steps_per_leg if self._glide is not None else 0
+            self._core.run(self._matrices, self._u, self._mean, steps, self._at, leg)
             kernels.keep_last(self._u, steps)
             kernels.down_block(
                 self._mean, done, count, self._split, self._w, volts_out, f.down_1, f.down_2, self._room
             )
             if self._glide is not None:
                 self._at += steps
-                if self._at >= self._glide.steps_per_leg * (self._glide.step.free.shape[0] - 1):
+                if self._at >= self._glide.steps_per_leg * (self._glide.matrices[0].shape[0] - 1):
                     self._arrive()
             done += count
 
@@ -233,20 +190,19 @@ class StageProcessor:
             self._begin(following)
         elif ended is not None:
             # one station: the last; views, no copies
-            self._step = RunningStep(ended.step.free[-1:], ended.step.bound[-1:])
+            self._matrices = tuple(m[-1:] for m in ended.matrices)
 
     def clear_readings(self) -> None:
         """Start the readings of every op-amp anew."""
-        self._stats[...] = 0.0
-        n, k = self._topology.states, self._asked.shape[1]
-        self._stats[:, :, kernels.HIGH] = self._state[:, n : n + k]
-        self._stats[:, :, kernels.LOW] = self._state[:, n : n + k]
+        stats = self._core.stats
+        stats[...] = 0.0
+        stats[:, :, kernels.HIGH] = stats[:, :, kernels.LOW] = self._core.outputs()
 
     def readings(self) -> tuple[OpAmpReading, ...]:
         """What each op-amp did since the readings were cleared, worst channel."""
         result = []
         for j, opamp in enumerate(self._netlist.opamps):
-            s = self._stats[:, j]
+            s = self._core.stats[:, j]
             high, low = float(s[:, kernels.HIGH].max()), float(s[:, kernels.LOW].min())
             result.append(
                 OpAmpReading(
@@ -258,6 +214,7 @@ class StageProcessor:
                     clip_events=int(s[:, kernels.EVENTS].sum()),
                     clipped_s=float(s[:, kernels.CLIPPED].sum()) * self.step_s,
                     slew_peak_v_per_s=float(s[:, kernels.SLEW].max()) / self.step_s,
+                    slew_limit_v_per_s=min(opamp.model.slew_up_v_per_s, opamp.model.slew_down_v_per_s),
                     current_peak_a=float(s[:, kernels.CURRENT].max()),
                     unsolved_steps=int(s[:, kernels.UNSOLVED].sum()),
                 )

@@ -88,6 +88,7 @@ class _Bench:
     def build(self, netlist: Netlist, quality: Quality) -> Callable[[], None]:
         """Compute and warm a circuit."""
         from preview.dsp.chain import Chain
+        from preview.dsp.oversample import design, factor_for
         from preview.dsp.stage import StageProcessor
 
         player = self._player
@@ -103,6 +104,8 @@ class _Bench:
 
             return swap
         first = self._chain = Chain(processor)
+        for each in Quality:  # designed now and kept: while it plays, that would take the device's blocks
+            design(factor_for(each, player.sample_rate_hz))
         self._ready()
         return lambda: player.take_circuit(first, quality)
 

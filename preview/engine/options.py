@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import argparse
 import re
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TypeVar
 
@@ -19,14 +19,16 @@ from preview.values.levels import (
     parse_full_scale,
     parse_supply,
 )
-from preview.values.notation import parse_value, understood
+from preview.values.notation import format_value, parse_value, quoted, understood
 from preview.values.quality import Quality
 
 __all__ = [
     "DEFAULT_FULL_SCALE",
     "DEFAULT_STAGE",
     "add_stage_options",
+    "check_together",
     "for_option",
+    "frequency_of",
     "join_signed_values",
     "session_from",
     "understood_values",
@@ -188,7 +190,8 @@ def _assignments(texts: Sequence[str]) -> dict[str, str]:
     for text in texts:
         designator, equals, value = (piece.strip() for piece in text.partition("="))
         if not (designator and equals and value):
-            raise UsageError(f"--part {text}: no part and value in it", "write --part R1=4k7")
+            raise UsageError(f"--part {quoted(text)}: no part and value in it", "write --part R1=4k7")
+        designator = _as_before(designator, found)
         if found.get(designator, value) != value:
             raise UsageError(
                 f"--part gives {designator} two values, {found[designator]} and {value}",
@@ -196,6 +199,11 @@ def _assignments(texts: Sequence[str]) -> dict[str, str]:
             )
         found[designator] = value
     return found
+
+
+def _as_before(designator: str, found: Iterable[str | None]) -> str:
+    """The designator as it was written earlier; case does not matter in it."""
+    return next((one for one in found if one and one.lower() == designator.lower()), designator)
 
 
 def _opamp_types(texts: Sequence[str]) -> dict[str | None, str]:
@@ -206,8 +214,9 @@ def _opamp_types(texts: Sequence[str]) -> dict[str | None, str]:
         designator, type_name = (head, tail) if equals else (None, head)
         if not type_name or designator == "":
             raise UsageError(
-                f"--opamp {text}: no op-amp type in it", "write --opamp ideal or --opamp U1=ideal"
+                f"--opamp {quoted(text)}: no op-amp type in it", "write --opamp ideal or --opamp U1=ideal"
             )
+        designator = designator and _as_before(designator, found)
         if found.get(designator, type_name) != type_name:
             raise UsageError(
                 f"--opamp gives {designator or 'all op-amps'} two types, {found[designator]} and {type_name}",
@@ -234,7 +243,34 @@ def _quality(text: str) -> Quality:
         return Quality(text.strip().lower())
     except ValueError:
         known = ", ".join(q.value for q in Quality)
-        raise UsageError(f"--quality {text}: no such quality", f"one of {known}") from None
+        raise UsageError(f"--quality {quoted(text)}: no such quality", f"one of {known}") from None
+
+
+def check_together(options: argparse.Namespace) -> None:
+    """Refuse options of ``response`` that do nothing beside the others."""
+    if options.sections:
+        needless = [n for n, given in (("--at", options.at), ("--as-heard", options.as_heard)) if given]
+        if needless:
+            raise UsageError(f"{needless[0]} does not go with --sections", "give one of the two")
+    elif options.prewarp is not None:
+        raise UsageError("--prewarp is for --sections", "add --sections or leave it out")
+    elif options.rate is not None and not options.as_heard:
+        raise UsageError(
+            "--rate is for --as-heard and --sections; the exact circuit has no sample rate",
+            "add one of them or leave it out",
+        )
+
+
+def frequency_of(text: str, option: str, low_hz: float, high_hz: float) -> float:
+    """A frequency [Hz] within bounds."""
+    value = for_option(option, lambda: parse_value(text.strip(), "frequency"))
+    if not low_hz <= value <= high_hz or value <= 0.0:
+        high = format_value(high_hz, "frequency", digits=6)
+        allowed = (
+            f"{format_value(low_hz, 'frequency')} to {high}" if low_hz else f"above 0 Hz, at most {high}"
+        )
+        raise UsageError(f"{option} {printable(text)}: out of range", allowed)
+    return value
 
 
 def understood_values(session: Session) -> dict[str, object]:

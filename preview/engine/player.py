@@ -13,7 +13,7 @@ from numpy.typing import NDArray
 from preview.circuit.opamp import OpAmpReading
 from preview.engine.loop import Circuit, Meter, Samples, SignalPath, joined_readings, peak, spread
 from preview.engine.messages import Snapshot
-from preview.engine.transport import Mode, Playhead, Ramp, Reader
+from preview.engine.transport import Mode, Playhead, Ramp, Reader, gain_of
 from preview.session import AtEnd
 from preview.values.quality import Quality
 
@@ -23,6 +23,7 @@ START_VOLUME_DB = -20.0
 RAMP_S = 0.010
 VOLUME_RAMP_S = 0.020
 WARM_S = 0.020
+HANDOVER_S = 0.030
 REPORTS_PER_S = 30
 
 
@@ -48,7 +49,7 @@ class Player:
     max_frames : int
         Longest block that is computed at once.
     settle_s : float
-        Silence after the first circuit has come [s], in which a device gets over the stalls of loading.
+        Silence after the first circuit has come, in which a device gets over the stalls of loading [s].
     """
 
     def __init__(
@@ -81,7 +82,7 @@ class Player:
         self._input_meter, self._output_meter = meters
         self.bypass = False
         self.volume_db = volume_db
-        self._volume = Ramp(max(round(VOLUME_RAMP_S * sample_rate_hz), 1), _gain(volume_db))
+        self._volume = Ramp(max(round(VOLUME_RAMP_S * sample_rate_hz), 1), gain_of(volume_db))
         self._fade = Ramp(max(round(RAMP_S * sample_rate_hz), 1), 0.0)
         self._warm_in = Ramp(max(round(WARM_S * sample_rate_hz), 1), 1.0)
         self._warm_left = 0
@@ -92,7 +93,7 @@ class Player:
         self._samples_out: Samples = np.zeros((max_frames, channels))
         self._silence: Samples = np.zeros((max_frames, channels))
         self._earlier: tuple[OpAmpReading, ...] = ()
-        self._limited_blocks = 0
+        self._new_output_frames = self._limited_blocks = 0
         self._load_ratio = 0.0
         self._since_report = 0
         self._report_frames = max(round(sample_rate_hz / REPORTS_PER_S), 1)
@@ -154,6 +155,7 @@ class Player:
 
         def change() -> None:
             self.bypass = on
+            self._begin_output_hold()
             if self._path is not None:
                 self._path.circuit.set_bypass(on)
 
@@ -164,7 +166,7 @@ class Player:
 
         def change() -> None:
             self.volume_db = min(volume_db, 0.0) if not math.isnan(volume_db) else self.volume_db
-            self._volume.to(_gain(self.volume_db))
+            self._volume.to(gain_of(self.volume_db))
 
         self.inbox.append(change)
 
@@ -173,6 +175,8 @@ class Player:
 
         def change() -> None:
             self.full_scale_v = full_scale_v
+            self._input_meter.clear_hold()
+            self._output_meter.clear_hold()
             if self._path is not None:
                 self._path.full_scale_v = full_scale_v
 
@@ -183,8 +187,7 @@ class Player:
 
         def clear() -> None:
             self._earlier = ()
-            self._limited_blocks = 0
-            self._head.late_reads = self.missed_blocks = 0
+            self._limited_blocks = self._head.late_reads = self.missed_blocks = 0
             self._input_meter.clear_hold()
             self._output_meter.clear_hold()
             if self._path is not None:
@@ -212,6 +215,7 @@ class Player:
         """The running circuit has been exchanged for another: its readings start anew."""
         self.quality = quality
         self._earlier = ()
+        self._begin_output_hold()
 
     def fill(self, out: NDArray[np.float32]) -> None:
         """Fill the device's next block, shape (frames, device channels); never raises, never waits."""
@@ -246,7 +250,7 @@ class Player:
         if self.silent or self._path is None:
             out.fill(0.0)
             self._input_meter.feed(self._silence[:frames])
-            self._output_meter.feed(self._silence[:frames])
+            self._feed_output_meter(self._silence[:frames])
             self._let_glides_end(frames)
             return
         if self.mode is Mode.RUNNING and self._head.tail_frames >= max(self._latency, 1):
@@ -261,7 +265,7 @@ class Player:
             self._mute("the computation ran away; muted, play starts it again from rest")
             return
         self._input_meter.feed(volts_in)
-        self._output_meter.feed(volts_out)
+        self._feed_output_meter(volts_out)
         self._fade.apply(samples)
         self._volume.apply(samples)
         if peak(samples) > 1.0:
@@ -270,6 +274,19 @@ class Player:
         spread(samples, out)
         if self.mode is Mode.FADING and not self._fade.moving:
             self._silence_reached()
+
+    def _begin_output_hold(self) -> None:
+        """The output is another signal from now on: its peaks from before are no longer held."""
+        self._output_meter.clear_hold()
+        self._new_output_frames = round(HANDOVER_S * self.sample_rate_hz) + self._latency
+
+    def _feed_output_meter(self, volts: Samples) -> None:
+        """Feed the meter; while one signal fades into another nothing is held."""
+        self._output_meter.feed(volts)
+        if self._new_output_frames > 0 and self._path is not None:
+            self._output_meter.clear_hold()
+            if not self._path.circuit.swapping:
+                self._new_output_frames -= len(volts)
 
     @property
     def _latency(self) -> int:
@@ -316,8 +333,7 @@ class Player:
         """Silent, but a part or circuit is on its way: let it arrive."""
         path = self._path
         if path is not None and (path.circuit.gliding or path.circuit.swapping):
-            self._samples_in[:frames] = 0.0
-            path.run(self._samples_in[:frames], self._samples_out[:frames])
+            path.run(self._silence[:frames], self._samples_out[:frames])
 
     def _to_silence(self) -> None:
         if self.mode is Mode.RUNNING:
@@ -381,8 +397,3 @@ class Player:
         if self.mode in (Mode.IDLE, Mode.LOADING):
             return self._head.first_frame
         return self._head.heard(self._latency - self._warm_left)
-
-
-def _gain(volume_db: float) -> float:
-    """Volume [dB] as a gain; exactly 1 at 0 dB."""
-    return 1.0 if volume_db >= 0.0 else 10.0 ** (volume_db / 20.0)

@@ -158,7 +158,7 @@ def render(
         out_full_scale_v=scale_v,
         max_frames=chunk_frames,
     )
-    comment = f"full scale {scale_v:.6g} V; preview {__version__}; stage {session.stage.name}"
+    comment = f"full scale {scale_v:.9g} V; preview {__version__}; stage {session.stage.name}"
     with FileSink(out, sample_rate_hz=rate, channels=channels, depth=depth, comment=comment) as sink:
         started_s = time.perf_counter()
         frames, input_peak_v, output_peak_v = stream(path, source, sink, progress=progress)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from pathlib import Path
 
+from preview.audio.sink import keeps_comment
 from preview.circuit.opamp import OpAmpReading
 from preview.engine.options import understood_values
 from preview.engine.render import RenderResult
@@ -73,6 +74,10 @@ def render_lines(result: RenderResult, response_error_db: float, out: Path) -> l
     if result.over_count:
         lines.append(
             f"{result.over_count} output samples were above the file's full scale and are clipped there"
+        )
+    if not keeps_comment(out):
+        lines.append(
+            f'{out.suffix} keeps no comment: read the file with --full-scale "{result.out_full_scale_v:.9g} V"'
         )
     lines.append(
         f"heard response within {response_error_db:.2g} dB of the circuit ({result.quality.value}); "

@@ -9,7 +9,7 @@ import numpy as np
 
 from preview.engine.loop import Samples
 
-__all__ = ["Mode", "Playhead", "Ramp", "Reader", "heard_frame"]
+__all__ = ["Mode", "Playhead", "Ramp", "Reader", "gain_of", "heard_frame"]
 
 
 class Reader(Protocol):
@@ -117,6 +117,11 @@ class Ramp:
             self.value = float(gains[-1]) if self.moving else self._end
         if moved < frames and self._end != 1.0:
             samples[moved:] *= self._end
+
+
+def gain_of(volume_db: float) -> float:
+    """Volume [dB] as a gain; exactly 1 at 0 dB."""
+    return 1.0 if volume_db >= 0.0 else 10.0 ** (volume_db / 20.0)
 
 
 def heard_frame(next_frame: int, delay_frames: int, *, start: int, end: int, wrapped: bool) -> int:

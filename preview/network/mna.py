@@ -2,7 +2,8 @@
 
 The unknowns are every node voltage, every inductor current, the current of the signal's voltage source and
 the output current of every op-amp. An op-amp that does not limit is a nullor: its inputs are at one voltage
-and its output gives whatever current that takes.
+and its output gives whatever current that takes; one with a gain-bandwidth of its own has a gain of
+``1 / (s / wt + 1 / A0)`` behind its output resistance.
 """
 
 from __future__ import annotations
@@ -15,6 +16,7 @@ from numpy.typing import NDArray
 from preview.circuit.netlist import GND, Netlist
 from preview.circuit.parts import PartKind
 from preview.errors import CircuitError
+from preview.network.expansion import output_ohm
 
 __all__ = ["NodalEquations", "nodal_equations", "solve"]
 
@@ -80,6 +82,11 @@ def nodal_equations(netlist: Netlist) -> NodalEquations:
         opamp_currents[opamp.designator] = row
         static[row] += incidence(opamp.plus, opamp.minus)
         static[nodes[opamp.out], row] = 1.0
+        if opamp.model.real:  # (s / wt + 1 / A0) w = e, with w = v(out) - R i behind the output resistance R
+            inner = incidence(opamp.out, GND)
+            inner[row] = -output_ohm(opamp.model)
+            static[row] -= inner / opamp.model.open_loop_gain
+            dynamic[row] -= inner / (2.0 * np.pi * opamp.model.gain_bandwidth_hz)
     return NodalEquations(static, dynamic, drive, nodes, source_current, opamp_currents)
 
 

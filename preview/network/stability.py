@@ -7,6 +7,7 @@ from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
 from preview.errors import CircuitError
+from preview.network.expansion import expanded, expanded_topology, gain_bandwidth_hz, has_real_opamps
 from preview.network.statespace import StateSpace, Topology
 
 __all__ = ["check_stable", "closed_loop_poles"]
@@ -22,6 +23,30 @@ def closed_loop_poles(netlist: Netlist) -> NDArray[np.complex128]:
     return np.asarray(np.linalg.eigvals(space.closed()[0][0]), dtype=np.complex128)
 
 
+def _check_real(netlist: Netlist) -> None:
+    """Poles with every op-amp's own gain-bandwidth."""
+    topology = expanded_topology(netlist)
+    space = topology.evaluate(topology.values_of(expanded(netlist))[None])
+    k = len(netlist.opamps)
+    A, B, C_e, D_e = space.A[0], space.B[0, :, 1 : k + 1], space.C_e[0], space.D_e[0, :, 1 : k + 1]
+    wt = 2.0 * np.pi * np.array([gain_bandwidth_hz(o.model) for o in netlist.opamps])[:, None]
+    wp = np.diag([w[0] / o.model.open_loop_gain for w, o in zip(wt, netlist.opamps, strict=True)])
+    _refuse_growth(np.linalg.eigvals(np.block([[A, B], [wt * C_e, wt * D_e - wp]])))
+
+
+def _refuse_growth(poles: NDArray[np.complex128]) -> None:
+    growing = poles[poles.real > 1e-9 * np.abs(poles).max(initial=0.0)]
+    if growing.size:
+        pole = growing[np.argmax(growing.real)]
+        hz = abs(pole) / (2 * np.pi)
+        oscillates = abs(pole.imag) > 1e-6 * abs(pole)
+        how = f"oscillates at {hz:.4g} Hz" if oscillates else "runs to a rail and stays there"
+        raise CircuitError(
+            f"the circuit is unstable: left alone it {how}",
+            "less positive feedback, a lower gain in the loop, or an op-amp that suits the load",
+        )
+
+
 def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
     """Refuse a circuit that runs away.
 
@@ -34,6 +59,9 @@ def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
     CircuitError
         Positive feedback, or a pole that grows.
     """
+    if has_real_opamps(netlist):
+        _check_real(netlist)
+        return
     if space is None:
         topology = Topology(netlist)
         space = topology.evaluate(topology.values_of(netlist)[None])
@@ -48,18 +76,4 @@ def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
                 f"positive feedback: with {names} as connected the output runs to a rail and stays there",
                 "swap the + and - inputs, or lead more of the output back to the - input",
             )
-    poles = np.linalg.eigvals(space.closed()[0][0])
-    if poles.size:
-        growing = poles[poles.real > 1e-9 * np.abs(poles).max()]
-        if growing.size:
-            pole = growing[np.argmax(growing.real)]
-            hz = abs(pole) / (2 * np.pi)
-            how = (
-                f"oscillates at {hz:.4g} Hz"
-                if abs(pole.imag) > 1e-6 * abs(pole)
-                else "runs to a rail and stays there"
-            )
-            raise CircuitError(
-                f"the circuit is unstable: left alone it {how}",
-                "less positive feedback, or a lower gain in the loop",
-            )
+    _refuse_growth(np.linalg.eigvals(space.closed()[0][0]))

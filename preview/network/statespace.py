@@ -17,6 +17,7 @@ All arrays have a leading axis of sets of values, so that one call prepares a wh
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -95,6 +96,8 @@ class Topology:
     ----------
     netlist : Netlist
         Checked circuit.
+    drawn : sequence of str
+        Nodes that a current is drawn from; each current is a further input after the op-amp outputs [A].
 
     Raises
     ------
@@ -102,7 +105,7 @@ class Topology:
         A node that nothing holds.
     """
 
-    def __init__(self, netlist: Netlist) -> None:
+    def __init__(self, netlist: Netlist, *, drawn: Sequence[str] = ()) -> None:
         self.netlist = netlist
         self.known = (netlist.input_node, *(o.out for o in netlist.opamps))
         if len(set(self.known)) != len(self.known):
@@ -114,7 +117,11 @@ class Topology:
         self._range, self._root, self._null, groups = self._bases()
         self._loose = self._loose_groups(groups)
         self.states = self._range.shape[1] + len(self._positions[PartKind.INDUCTOR])
-        self.inputs = len(self.known)
+        self.inputs = len(self.known) + len(drawn)
+        self._drawn = np.zeros((len(self.free), len(drawn)))
+        for i, node in enumerate(drawn):
+            if node in self.free:
+                self._drawn[self.free.index(node), i] = 1.0
         self._e_free, self._e_known = self._rows_of([(o.plus, o.minus) for o in netlist.opamps])
         self._out_free, self._out_known = self._rows_of([(netlist.output_node, GND)])
 
@@ -221,8 +228,15 @@ class Topology:
         def weigh(left: Real, weight: Real, right: Real) -> Real:
             return np.asarray(np.einsum("ba,gb,bc->gac", left, weight, right), dtype=np.float64)
 
-        G, G_s = weigh(Rf, g, Rf), weigh(Rf, g, Rs)
-        M, R, N = self._range, self._root, self._null
+        sources = len(self.known)
+        drawn = np.broadcast_to(self._drawn, (sets, *self._drawn.shape))
+
+        def widen(over_known: Real) -> Real:
+            """Rows over the known nodes, written over every input."""
+            return np.concatenate([over_known, np.zeros((*over_known.shape[:-1], drawn.shape[2]))], axis=-1)
+
+        G, G_s = weigh(Rf, g, Rf), np.concatenate([weigh(Rf, g, Rs), drawn], axis=2)
+        M, R, N = self._range, widen(self._root), self._null
         xi, coils, m = M.shape[1], Lf.shape[0], self.inputs
         # whole groups: N' (G v + G_s s + Lf' i) = 0 gives eta in v = M xi + R s + N eta
         hold = N.T @ G @ N
@@ -236,7 +250,7 @@ class Topology:
             weight = weight / per_l.mean(axis=1, keepdims=True)
             hold = hold + project @ N.T @ weigh(Lf, weight, Lf) @ N
             right_xi = right_xi - project @ N.T @ weigh(Lf, weight, Lf) @ M
-            right_s = right_s - project @ N.T @ (weigh(Lf, weight, Ls) + weigh(Lf, weight, Lf) @ R)
+            right_s = right_s - project @ N.T @ (widen(weigh(Lf, weight, Ls)) + weigh(Lf, weight, Lf) @ R)
         eta = np.linalg.solve(hold, np.concatenate([right_xi, right_s, right_i], axis=2))
         v = N @ eta
         v[:, :, :xi] += M
@@ -244,11 +258,11 @@ class Topology:
         v_xi, v_s, v_i = v[:, :, :xi], v[:, :, xi : xi + m], v[:, :, xi + m :]
         # charges along capacitors: M' (C (M xi + R s)' + C_s s') = -M' (G v + G_s s + Lf' i)
         stored = M.T @ weigh(Cf, c, Cf) @ M
-        kappa = np.linalg.solve(stored, M.T @ (weigh(Cf, c, Cs) + weigh(Cf, c, Cf) @ R))
+        kappa = np.linalg.solve(stored, M.T @ (widen(weigh(Cf, c, Cs)) + weigh(Cf, c, Cf) @ R))
         leak = -np.linalg.solve(
             stored, M.T @ np.concatenate([G @ v_xi, G @ v_s + G_s, G @ v_i + Lf.T], axis=2)
         )
-        wind = per_l[:, :, None] * np.concatenate([Lf @ v_xi, Lf @ v_s + Ls, Lf @ v_i], axis=2)
+        wind = per_l[:, :, None] * np.concatenate([Lf @ v_xi, Lf @ v_s + widen(Ls), Lf @ v_i], axis=2)
         rates = np.concatenate([leak, wind], axis=1)
         to_x = np.zeros((sets, xi + coils, m))
         to_x[:, :xi] = kappa
@@ -261,14 +275,14 @@ class Topology:
         def known(rows: Real, direct: Real) -> Real:
             """Rows over the free nodes, and directly over s, written over [xi, s, i]."""
             full = rows @ v
-            full[:, :, xi : xi + m] += direct
+            full[:, :, xi : xi + sources] += direct
             return full
 
         A, B = in_x(rates)
         C_out, D_out = in_x(known(self._out_free, self._out_known))
         C_e, D_e = in_x(known(self._e_free, self._e_known))
-        pick = np.eye(m)[1:]
-        current = known(pick @ np.swapaxes(G_s, 1, 2), pick @ weigh(Rs, g, Rs))
+        pick = np.eye(sources)[1:]
+        current = known(pick @ np.swapaxes(G_s[:, :, :sources], 1, 2), pick @ weigh(Rs, g, Rs))
         current[:, :, xi + m :] += pick @ Ls.T
         C_i, D_i = in_x(current)
         C_q, D_q = in_x(known(pick @ weigh(Cs, c, Cf), pick @ weigh(Cs, c, Cs)))

@@ -23,7 +23,7 @@ from preview.ui.changes import render_command
 from preview.ui.desk import Desk
 from preview.ui.figures import FigureKeeper, Figures, MakeFigures, compute_figures
 from preview.ui.firstrun import caution_seen, config_folder, remember_caution
-from preview.ui.link import EngineLink, Restart
+from preview.ui.link import AnswerWatch, EngineLink, Restart
 from preview.ui.panels.curve import CurvePanel
 from preview.ui.panels.figures import FiguresPanel
 from preview.ui.panels.footer import FooterPanel
@@ -106,6 +106,7 @@ class DeskApp(App[Session]):
         self._config = config or config_folder()
         self._focused = True
         self._polls = 0
+        self._watch = AnswerWatch()
         self.head = HeaderPanel(self.desk, self.look)
         self.meters = MetersPanel(self.desk, self.look)
         self.timeline = TimelinePanel(self.desk, self.look)
@@ -139,6 +140,7 @@ class DeskApp(App[Session]):
         for palette in PALETTES:
             self.register_theme(palette.theme())
         self.theme = self.look.palette.name
+        self.app_resume_signal.subscribe(self, lambda _: self.refresh(layout=True))  # the shell wrote over it
         self.arrange(self.size.width, self.size.height)
         self.desk.link.send(SetVolume(self.desk.volume_db))
         for note in self.desk.session.notes[:1]:
@@ -171,9 +173,8 @@ class DeskApp(App[Session]):
     def arrange(self, width: int, height: int) -> None:
         """Set the classes that the style sheet arranges by, and the rows of meters and foot."""
         screen = self.screen_stack[0]
-        screen.set_class(width < WIDE, "narrow")
-        screen.set_class(width >= WIDE, "wide")
-        screen.set_class(height >= TALL, "tall")
+        for holds, name in ((width < WIDE, "narrow"), (width >= WIDE, "wide"), (height >= TALL, "tall")):
+            screen.set_class(holds, name)
         self.meters.styles.height = self.meters.wanted_height(height)
         self.foot.stand(1 if height < 30 or width >= 160 else 2)
 
@@ -208,6 +209,7 @@ class DeskApp(App[Session]):
         for notice in link.notices():
             self.foot.say(notice.text, notice.severity)
         snapshot = link.latest()
+        self.desk.unanswered = self._watch.late(snapshot is not None)
         if snapshot is not None:
             first = self.desk.snapshot is None
             self.desk.take(snapshot)
@@ -263,17 +265,15 @@ class DeskApp(App[Session]):
             if text is not None:
                 (then or self.change)(question.answer(text))
 
-        self.push_screen(
-            EntryScreen(
-                question.title, about=question.about, now=question.now, understand=question.understand
-            ),
-            answered,
+        entry = EntryScreen(
+            question.title, about=question.about, now=question.now, understand=question.understand
         )
+        self.push_screen(entry, answered)
 
     def do_type_value(self) -> None:
         """Type the selected part's value."""
-        if self.desk.part is not None:
-            self.ask(ask_part(self.desk.session, self.desk.part))
+        if (part := self.desk.part) is not None:
+            self.ask(ask_part(self.desk.session, part))
 
     def do_full_scale(self) -> None:
         """Type full scale."""
@@ -336,13 +336,13 @@ class DeskApp(App[Session]):
 
     def do_write_out(self) -> None:
         """Show the command that renders what is set."""
-        stage = self.desk.session.stage
-        opened = find_stage(str(stage.path or stage.name))
-        self.push_screen(CommandScreen(render_command(self.desk.session, opened)))
+        session = self.desk.session
+        opened = find_stage(str(session.stage.path or session.stage.name))
+        self.push_screen(CommandScreen(render_command(session, opened)))
 
     def do_restart(self) -> str | None:
         """Start another engine when this one has stopped."""
-        if not self.desk.stopped:
+        if not (self.desk.stopped or self.desk.unanswered):
             return "the engine is running"
         if self._restart is None:
             return "leave the desk with q and open it again: this engine cannot be restarted from here"
@@ -352,7 +352,7 @@ class DeskApp(App[Session]):
         return "starting the engine again"
 
     async def _start_again(self, restart: Restart) -> None:
-        self.desk.link.close()
+        await asyncio.to_thread(self.desk.link.close)  # one that hangs is ended by force, which takes seconds
         try:
             # A new process inherits standard error; while the desk runs, sys.stderr is not a real file.
             with contextlib.redirect_stderr(sys.__stderr__):
@@ -361,6 +361,7 @@ class DeskApp(App[Session]):
             self.foot.say(str(error), "error")
         else:
             self.desk.resume(link)
+            self._watch = AnswerWatch()
             self.foot.say("the engine runs again; space plays")
         finally:
             self._restarting = False

@@ -45,6 +45,8 @@ OFF_DB = float("-inf")
 COARSE_SERIES = "E3"
 SMALL_S, LARGE_S = 1.0, 10.0
 """Steps of the playhead [s]."""
+_SHORTEST_REGION_S = 0.05
+"""A shorter loop is not the recording any more, but a tone or a direct voltage [s]."""
 _TRUST_S = 0.4
 """For so long after a key the desk's own wish is shown, not a snapshot that may be older [s]."""
 _MOST_UNDONE = 200
@@ -83,6 +85,7 @@ class Desk:
         self.region: tuple[int, int] | None = None
         self.phase_shown = False
         self.stopped = False
+        self.unanswered = False
         self._now_s = now_s
         self._undone: list[Session] = []
         self._done: list[Session] = []
@@ -134,7 +137,7 @@ class Desk:
         """Bring a new engine to where the old one was; it waits at the playhead."""
         position = self.position_frame
         self.link = link
-        self.stopped = False
+        self.stopped = self.unanswered = False
         for command in whole_state(self.session):
             link.send(command)
         link.send(SetBypass(self.bypass))
@@ -315,17 +318,23 @@ class Desk:
         if self.snapshot is None or self.snapshot.frames < 2:
             return None
         frames = self.snapshot.frames
-        start = min(self.position_frame, frames - 2)
-        end = self.region[1] if self.region and self.region[1] > start + 1 else frames
-        return self._set_region(start, end)
+        start = max(0, min(self.position_frame, frames - self._shortest_region))
+        end = self.region[1] if self.region else frames
+        return self._set_region(start, end if end >= start + self._shortest_region else frames)
 
     def do_region_end(self) -> str | None:
         """The region ends here."""
         if self.snapshot is None or self.snapshot.frames < 2:
             return None
-        end = max(2, self.position_frame)
-        start = self.region[0] if self.region and self.region[0] < end - 1 else 0
-        return self._set_region(start, end)
+        end = min(max(self._shortest_region, self.position_frame), self.snapshot.frames)
+        start = self.region[0] if self.region else 0
+        return self._set_region(start if start <= end - self._shortest_region else 0, end)
+
+    @property
+    def _shortest_region(self) -> int:
+        """Frames of the shortest region that can be set."""
+        assert self.snapshot is not None
+        return max(2, round(_SHORTEST_REGION_S * self.snapshot.sample_rate_hz))
 
     def do_region_clear(self) -> str:
         """The whole recording."""

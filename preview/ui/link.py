@@ -7,7 +7,10 @@ from typing import Protocol
 
 from preview.engine.messages import Command, Notice, Snapshot
 
-__all__ = ["EngineLink", "Restart", "StillLink"]
+__all__ = ["AnswerWatch", "EngineLink", "Restart", "StillLink"]
+
+_PATIENCE_POLLS = 75
+"""3 s at the desk's pace."""
 
 
 class EngineLink(Protocol):
@@ -34,8 +37,26 @@ Restart = Callable[[], EngineLink]
 """Starts a new engine in place of one that stopped; may take a second; may raise PreviewError."""
 
 
+class AnswerWatch:
+    """Notices that an engine which has spoken before has fallen silent, though its process lives.
+
+    It counts polls and not seconds: a desk that was suspended itself has not asked in the meantime.
+    """
+
+    def __init__(self) -> None:
+        self._unanswered: int | None = None
+
+    def late(self, spoke: bool) -> bool:
+        """One more poll, answered by a snapshot or not; whether the answer is overdue."""
+        if spoke:
+            self._unanswered = 0
+        elif self._unanswered is not None:
+            self._unanswered += 1
+        return (self._unanswered or 0) >= _PATIENCE_POLLS
+
+
 class StillLink:
-    """A link to no engine: one fixed snapshot, for a picture of the desk."""
+    """A link to no engine: one fixed snapshot, again and again, for a picture of the desk."""
 
     def __init__(self, snapshot: Snapshot | None = None) -> None:
         self._snapshot = snapshot
@@ -49,9 +70,8 @@ class StillLink:
         """Does nothing with the command."""
 
     def latest(self) -> Snapshot | None:
-        """The fixed snapshot at the first call, then None."""
-        snapshot, self._snapshot = self._snapshot, None
-        return snapshot
+        """The fixed snapshot."""
+        return self._snapshot
 
     def notices(self) -> list[Notice]:
         """None, ever."""

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 import os
 from dataclasses import dataclass
+from functools import cached_property
 
 from rich.style import Style
 from textual.theme import Theme
@@ -16,7 +17,7 @@ from textual.theme import Theme
 __all__ = ["DARK", "LIGHT", "PALETTES", "Look", "Palette", "first_palette"]
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)  # no slots: each style is made once and kept
 class Palette:
     """The colours of the desk by what they are for, as ``#rrggbb``."""
 
@@ -46,42 +47,42 @@ class Palette:
     def _on(self, colour: str, *, bold: bool = False) -> Style:
         return Style(color=colour, bgcolor=self.ground, bold=bold)
 
-    @property
+    @cached_property
     def plain(self) -> Style:
         """Text and figures."""
         return self._on(self.ink)
 
-    @property
+    @cached_property
     def strong(self) -> Style:
         """Headings and what is open."""
         return self._on(self.ink, bold=True)
 
-    @property
+    @cached_property
     def faint(self) -> Style:
         """Labels, scales and rules."""
         return self._on(self.quiet)
 
-    @property
+    @cached_property
     def input(self) -> Style:
         """The signal at the input."""
         return self._on(self.arriving)
 
-    @property
+    @cached_property
     def output(self) -> Style:
         """The signal at the output, and the curve."""
         return self._on(self.leaving)
 
-    @property
+    @cached_property
     def mark(self) -> Style:
         """The corner's mark and keys."""
         return self._on(self.chosen, bold=True)
 
-    @property
+    @cached_property
     def selected(self) -> Style:
         """The selected part: reversed, whatever the colours."""
         return Style(color=self.ground, bgcolor=self.chosen, bold=True)
 
-    @property
+    @cached_property
     def alarm(self) -> Style:
         """Clipping, bypass, a stopped engine: reversed, whatever the colours."""
         return Style(color=self.stop_ink, bgcolor=self.stop, bold=True)

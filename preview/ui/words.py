@@ -25,7 +25,7 @@ __all__ = [
     "volts",
 ]
 
-_SMALLEST_V = 1e-7
+_SMALLEST_V = 1e-6
 """Below this a level is written as none [V]."""
 
 
@@ -75,7 +75,9 @@ def clock(seconds: float) -> str:
 
 
 def duration(seconds: float) -> str:
-    """A length of time with its unit: ``0 ms``, ``3.4 ms``, ``1.20 s``."""
+    """A length of time with its unit: ``0 ms``, ``<0.1 ms``, ``3.4 ms``, ``1.20 s``."""
+    if 0.0 < seconds < 0.00005:
+        return "<0.1 ms"
     if seconds < 0.9995:
         return f"{seconds * 1e3:.{1 if 0.0 < seconds < 0.00995 else 0}f} ms"
     return f"{seconds:.{2 if seconds < 99.5 else 0}f} s"

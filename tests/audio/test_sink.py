@@ -378,6 +378,9 @@ def test_a_reader_that_has_gone_is_one_line() -> None:
 
 
 def test_samples_are_not_poured_into_a_terminal(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("sys.stdout", None)
-    with pytest.raises(OutputFileError, match="it is a terminal"):
-        FileSink(Path("-"), sample_rate_hz=RATE, channels=1)
+    terminal = io.TextIOWrapper(io.BytesIO())
+    monkeypatch.setattr(terminal, "isatty", lambda: True, raising=False)
+    for stream, words in ((terminal, "it is a terminal"), (None, "it is closed")):
+        monkeypatch.setattr("sys.stdout", stream)
+        with pytest.raises(OutputFileError, match=words):
+            FileSink(Path("-"), sample_rate_hz=RATE, channels=1)

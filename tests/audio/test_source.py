@@ -194,6 +194,9 @@ def test_what_cannot_be_read_from_a_pipe_is_told(content: bytes, words: str) -> 
 
 
 def test_the_keyboard_is_not_a_wav_stream(monkeypatch: pytest.MonkeyPatch) -> None:
-    monkeypatch.setattr("sys.stdin", None)
-    with pytest.raises(AudioFileError, match="it is the keyboard"):
-        StdinSource()
+    keyboard = io.TextIOWrapper(io.BytesIO())
+    monkeypatch.setattr(keyboard, "isatty", lambda: True, raising=False)
+    for stream, words in ((keyboard, "it is the keyboard"), (None, "it is closed")):
+        monkeypatch.setattr("sys.stdin", stream)
+        with pytest.raises(AudioFileError, match=words):
+            StdinSource()

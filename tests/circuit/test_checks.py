@@ -158,8 +158,8 @@ def test_rails_come_from_the_stage_or_the_supply_and_perfect_has_none() -> None:
     perfect = wired.with_part(OpAmp("U1", "gnd", "sum", "out", "perfect"))
     assert rails(netlist(perfect)) == (math.inf, -math.inf)
     assert BUILT_IN_TYPES == ("perfect", "ideal")
-    with pytest.raises(UnknownNameError, match="TL072 is not in the library; built in are perfect, ideal"):
-        netlist(wired.with_part(OpAmp("U1", "gnd", "sum", "out", "TL072")))
+    with pytest.raises(UnknownNameError, match="U1: no op-amp type named TLO72"):
+        netlist(wired.with_part(OpAmp("U1", "gnd", "sum", "out", "TLO72")))
 
 
 @pytest.mark.parametrize(

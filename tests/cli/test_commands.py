@@ -5,6 +5,7 @@ from __future__ import annotations
 import csv
 import io
 import json
+import os
 import subprocess
 import sys
 from pathlib import Path
@@ -12,6 +13,7 @@ from pathlib import Path
 import numpy as np
 import pytest
 import scipy.signal
+import soundfile
 
 from preview.cli import main
 
@@ -96,6 +98,16 @@ def test_the_table_has_units(capsys):
         (["response", "--rate", "1 MHz", "--as-heard"], 2),
         (["response", "--prewarp", "40k", "--sections"], 2),
         (["response", "--json", "--csv"], 2),
+        (["response", "--prewarp", "1k"], 2),
+        (["response", "--rate", "48k"], 2),
+        (["response", "--rate", "", "--as-heard"], 2),
+        (["response", "--sections", "--at", "1k"], 2),
+        (["response", "--sections", "--as-heard"], 2),
+        (["response", "--stage", "/"], 5),
+        (["listen", ""], 2),
+        (["render", "", "out.wav"], 2),
+        (["render", "in.wav", ""], 2),
+        (["render", "in.wav", "out.wav", "--depth", ""], 2),
         (["response", "--analog", "--as-heard"], 2),
         (["response", "--load", "0"], 2),
         (["response", "--stage", "nope"], 5),
@@ -132,7 +144,7 @@ def test_stages_lists_every_stage_and_prints_one(capsys):
 
 
 def test_opamps_lists_the_built_in_types(capsys):
-    assert [row["name"] for row in report_of(capsys, "opamps")["opamps"]] == ["perfect", "ideal"]
+    assert [row["name"] for row in report_of(capsys, "opamps")["opamps"]][:2] == ["perfect", "ideal"]
     code, out, _ = run(capsys, "opamps")
     assert code == 0
     assert "no limit but the rails" in out
@@ -200,3 +212,89 @@ def test_without_the_demo_folder_it_says_so(tmp_path: Path):
 
     with pytest.raises(AudioFileError, match="not beside the program"):
         demo_recording(tmp_path)
+
+
+def test_response_says_how_the_options_were_understood(capsys):
+    code, out, err = run(capsys, "response", "--at", "1k", "--part", "R1=4k7", "--source", "600")
+    assert code == 0
+    assert "passband" in out
+    assert "4.7 kΩ (4700 ohm)" in err
+    assert "600 ohm" in err
+
+
+def test_a_circuit_that_runs_away_does_not_open_the_desk(capsys, tmp_path):
+    # + gets half of the output back, - an eleventh: more positive than negative feedback
+    (tmp_path / "away.toml").write_text(
+        'title = "x"\nsupply = { positive = "15 V", negative = "-15 V" }\n[parts]\n'
+        'R1 = { kind = "resistor", nodes = ["in", "p"], value = "10k" }\n'
+        'R2 = { kind = "resistor", nodes = ["p", "out"], value = "10k" }\n'
+        'R3 = { kind = "resistor", nodes = ["m", "out"], value = "10k" }\n'
+        'R4 = { kind = "resistor", nodes = ["m", "gnd"], value = "1k" }\n'
+        'U1 = { kind = "opamp", plus = "p", minus = "m", out = "out", type = "ideal" }\n'
+    )
+    soundfile.write(tmp_path / "in.wav", np.zeros(100), 48000)
+    for words in (
+        ["listen", tmp_path / "in.wav"],
+        ["render", tmp_path / "in.wav", tmp_path / "o.wav"],
+        ["response"],
+    ):
+        code, out, err = run(capsys, *map(str, words), "--stage", str(tmp_path / "away.toml"))
+        assert (code, out) == (5, "")
+        assert "positive feedback" in err
+    assert not (tmp_path / "o.wav").exists()
+
+
+@pytest.mark.parametrize("encoding", ["ascii", "latin-1"])
+def test_files_and_pipes_get_utf_8_whatever_the_locale(encoding):
+    environment = {**os.environ, "PYTHONIOENCODING": encoding}
+    for words, told in ((["response", "--at", "1k"], "10 kΩ"), (["stages", "inverting-low-pass"], "▒▒▒▒")):
+        done = subprocess.run(
+            [sys.executable, "-m", "preview", *words], capture_output=True, env=environment, timeout=60
+        )
+        assert done.returncode == 0, done.stderr
+        assert told in done.stdout.decode("utf-8")
+
+
+def test_a_closed_or_full_stderr_does_not_stop_the_work_or_spill_into_stdout():
+    words = f"{sys.executable} -m preview response --at 1k --csv"
+    for redirection in ("2>&-", *(["2>/dev/full"] if os.path.exists("/dev/full") else [])):
+        done = subprocess.run(
+            f"exec {words} {redirection}", shell=True, stdout=subprocess.PIPE, text=True, timeout=60
+        )
+        assert done.returncode == 0
+        assert done.stdout.startswith("frequency_hz,")
+        assert len(done.stdout.splitlines()) == 2
+
+
+def test_a_closed_stdout_is_no_error_inside_the_program():
+    done = subprocess.run(
+        f"exec {sys.executable} -m preview stages >&-",
+        shell=True,
+        stderr=subprocess.PIPE,
+        text=True,
+        timeout=60,
+    )
+    assert (done.returncode, done.stderr) == (0, "")
+
+
+@pytest.mark.skipif(not os.path.exists("/dev/full"), reason="needs a device that is always full")
+def test_a_full_disk_behind_a_report_is_exit_3_in_plain_words():
+    with open("/dev/full", "wb") as full:
+        done = subprocess.run(
+            [sys.executable, "-m", "preview", "stages"], stdout=full, stderr=subprocess.PIPE, text=True
+        )
+    assert (done.returncode, done.stderr) == (3, "preview: standard output: disk full\n")
+
+
+def test_a_broken_stage_of_ones_own_does_not_hide_the_others(capsys, tmp_path, monkeypatch):
+    monkeypatch.setattr("preview.circuit.library.user_stage_folder", lambda: tmp_path)
+    (tmp_path / "broken.toml").write_text("not a stage [")
+    (tmp_path / "folder.toml").mkdir()
+    good = run(capsys, "stages", "inverting-low-pass")[1]
+    (tmp_path / "mine.toml").write_text(good, encoding="utf-8")
+    code, out, err = run(capsys, "stages", "--json")
+    assert code == 0
+    names = {row["name"] for row in json.loads(out)["stages"]}
+    assert {"mine", "inverting-low-pass"} <= names
+    assert not {"broken", "folder"} & names
+    assert [line.startswith("preview: warning: ") for line in err.splitlines()] == [True, True]

@@ -90,6 +90,22 @@ def test_without_json_there_is_a_line_for_peaks_and_for_each_op_amp(capsys, tone
     assert "x real time" in out
 
 
+@pytest.mark.parametrize(("name", "told"), [("o.au", True), ("o.w64", True), ("o.wav", False)])
+def test_a_file_that_cannot_carry_its_full_scale_says_so(capsys, tone, tmp_path, name, told):
+    code, out, _ = render(capsys, tone, tmp_path / name, "--full-scale", "4 V")
+    assert code == 0
+    assert ('--full-scale "4 V"' in out) == told
+    stated = soundfile.SoundFile(tmp_path / name).comment
+    assert ("full scale 4 V" in stated) != told
+
+
+def test_the_full_scale_survives_the_way_through_the_comment(capsys, tone, tmp_path):
+    render(capsys, tone, tmp_path / "a.wav")  # +18 dBu: sqrt(0.6) V rms * 10 ** 0.9 * sqrt(2)
+    code, out, _ = render(capsys, tmp_path / "a.wav", tmp_path / "b.wav", "--json")
+    assert code == 0
+    assert json.loads(out)["full_scale_v"] == pytest.approx(1.2**0.5 * 10**0.9, rel=5e-9)
+
+
 def test_an_existing_output_is_replaced(capsys, tone, tmp_path):
     out = tmp_path / "out.wav"
     out.write_text("old")
@@ -299,7 +315,7 @@ def test_a_full_disk_is_exit_3_and_leaves_nothing(capsys, tone, tmp_path, monkey
     assert "disk full" in err
 
 
-@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM])
+@pytest.mark.parametrize("number", [signal.SIGINT, signal.SIGTERM, signal.SIGHUP])
 def test_an_interrupt_is_exit_130_and_leaves_nothing(tmp_path, number):
     # ten minutes at fine quality take far longer than this test
     path = tmp_path / "long.wav"
@@ -336,4 +352,4 @@ def test_a_reader_that_goes_away_is_quiet(tone):
     process.stdout.close()
     err = process.stderr.read()
     assert process.wait(30) == 0
-    assert err == ""
+    assert all(line.startswith("  ") for line in err.splitlines()), err  # what was understood, no complaint

@@ -79,6 +79,7 @@ def test_the_same_value_given_twice_is_no_conflict():
     ("words", "error", "match"),
     [
         (["--part", "R1=4k7", "--part", "R1=10k"], UsageError, "R1 two values"),
+        (["--part", "R1=4k7", "--part", "r1=10k"], UsageError, "R1 two values"),
         (["--part", "R1"], UsageError, "no part and value"),
         (["--part", "R1="], UsageError, "no part and value"),
         (["--part", "R1=4z7"], NotationError, "4z7"),
@@ -86,8 +87,10 @@ def test_the_same_value_given_twice_is_no_conflict():
         (["--part", "R1=0"], PartValueError, "R1"),
         (["--opamp", "U1="], UsageError, "no op-amp type"),
         (["--opamp", "ideal", "--opamp", "perfect"], UsageError, "two types"),
+        (["--opamp", "U1=ideal", "--opamp", "u1=perfect"], UsageError, "two types"),
         (["--opamp", "warp"], UnknownNameError, "warp"),
         (["--stage", "nope"], UnknownNameError, "nope"),
+        (["--stage", ""], UnknownNameError, "name is empty"),
         (["--stage", "a", "--stage", "b"], UsageError, "one stage"),
         (["--supply", "fifteen"], NotationError, "--supply"),
         (["--source", "-600"], NotationError, "--source"),

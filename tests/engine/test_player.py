@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 
 from preview.session import AtEnd
+from preview.values.quality import Quality
 
 RAMP_FRAMES = 80  # 10 ms at the rig's 8 kHz
 GAIN = 2.0  # the rig's circuit
@@ -237,6 +238,48 @@ def test_full_scale_changes_in_a_short_silence(make_rig):
     assert heard[-1, 0] == np.float32(0.5)
     assert rig.player.full_scale_v == 8.0
     assert rig.player._report().output.peak_v[0] == pytest.approx(4.0)
+
+
+def test_another_full_scale_begins_new_holds(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.set_full_scale(0.4)
+    rig.hear(1024)
+    report = rig.player._report()
+    assert report.input.hold_v == (pytest.approx(0.1),)
+    assert report.output.hold_v == (pytest.approx(0.2),)
+
+
+def test_bypass_and_another_circuit_begin_a_new_hold_at_the_output(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.player.play()
+    rig.hear(1024)
+    assert rig.player._report().output.hold_v == (pytest.approx(2.0),)
+    rig.player.set_bypass(True)
+    rig.hear(1024)
+    assert rig.player._report().output.hold_v == (pytest.approx(1.0),), "the input, nothing of the stage"
+    rig.player.set_bypass(False)
+    rig.hear(1024)
+    rig.circuit.swapping = True
+    rig.player.circuit_changed(Quality.STANDARD)
+    rig.hear(1024)
+    rig.circuit.gain, rig.circuit.swapping = 0.5, False
+    rig.hear(1024)
+    report = rig.player._report()
+    assert report.output.hold_v == (pytest.approx(0.5),), "nothing of the circuit before"
+    assert report.input.hold_v == (pytest.approx(1.0),), "the input is the same signal"
+
+
+def test_a_hold_begun_while_paused_has_the_first_peak_after_play(make_rig):
+    samples = np.zeros((4000, 1))
+    samples[3] = 0.25
+    rig = make_rig(samples)
+    rig.player.set_bypass(True)
+    rig.hear(1024)
+    rig.player.play()
+    rig.hear(1024)
+    assert rig.player._report().output.hold_v == (pytest.approx(1.0),)
 
 
 def test_meters_read_volts_and_the_position_is_the_one_heard(make_rig):

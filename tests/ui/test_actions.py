@@ -174,6 +174,20 @@ def test_the_help_page_names_every_action() -> None:
         assert action.shown in page
 
 
+async def test_a_held_key_scrolls_the_help_page_to_its_end(make_app) -> None:
+    app: DeskApp = make_app()
+    async with app.run_test(size=(80, 24)) as pilot:
+        await pilot.press("question_mark")
+        page = app.screen.query_one("#page")
+        for _ in range(4):  # keys that come faster than the screen is painted count one by one
+            app.screen.do_row_down()
+        assert page.scroll_offset.y == 12
+        await pilot.press(*["down"] * 40)
+        assert page.scroll_offset.y == page.max_scroll_y
+        app.screen.do_row_up()
+        assert page.scroll_offset.y == page.max_scroll_y - 3
+
+
 async def test_the_footer_shows_help_and_quit_at_80_columns(make_app) -> None:
     app: DeskApp = make_app()
     async with app.run_test(size=(80, 24)) as pilot:

@@ -20,6 +20,7 @@ from preview.errors import DeviceError
 from preview.meters.reading import LevelReading
 from preview.ui.app import DeskApp
 from preview.ui.figures import Figures, compute_figures
+from preview.ui.link import AnswerWatch
 from preview.ui.picture import desk_svg
 from preview.ui.screens.pages import CautionScreen
 
@@ -221,6 +222,40 @@ async def test_a_stopped_engine_is_said_and_can_be_started_again(make_app, engin
         await pilot.press("space")
         assert new.sent[-1] == Play()
         assert "ENGINE STOPPED" not in screen_text(app)
+
+
+async def test_an_engine_that_hangs_is_said_and_can_be_replaced(make_app, engine) -> None:
+    new = type(engine)()
+    app: DeskApp = make_app(restart=lambda: new)
+    async with app.run_test(size=(80, 24)) as pilot:
+        await until(pilot, lambda: app.desk.snapshot is not None)
+        await pilot.press("R")
+        assert app.foot.message == "the engine is running"
+        await until(pilot, lambda: app.desk.unanswered)  # it lives, but says nothing any more
+        assert "ENGINE DOES NOT ANSWER. Press R" in screen_text(app)
+        await pilot.press("R")
+        await until(pilot, lambda: engine.closed and not app.desk.unanswered)
+        assert any(isinstance(command, SetCircuit) for command in new.sent)
+
+
+async def test_a_desk_that_was_suspended_paints_everything_again(make_app, monkeypatch) -> None:
+    app: DeskApp = make_app()
+    async with app.run_test(size=(80, 24)) as pilot:
+        await pilot.pause()
+        asked = []
+        monkeypatch.setattr(app, "refresh", lambda **how: asked.append(how))
+        app.app_resume_signal.publish(app)
+        # with less, only what changes from then on is painted over the shell's text
+        await until(pilot, lambda: {"layout": True} in asked)
+        monkeypatch.undo()
+
+
+def test_an_engine_that_still_starts_or_speaks_again_is_not_overdue() -> None:
+    watch = AnswerWatch()
+    assert not any(watch.late(False) for _ in range(2000)), "the first start may compile for long"
+    watch.late(True)
+    assert [watch.late(False) for _ in range(75)] == [False] * 74 + [True]
+    assert not watch.late(True)
 
 
 async def test_an_engine_that_will_not_start_again_is_an_error_on_the_desk(make_app, engine) -> None:

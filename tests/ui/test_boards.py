@@ -18,7 +18,7 @@ from preview.ui.changes import with_value
 from preview.ui.desk import Desk
 from preview.ui.figures import Figures, heard_band_hz
 from preview.ui.panels.curve import CurvePanel, _column
-from preview.ui.panels.figures import corner_text, heard_text
+from preview.ui.panels.figures import FiguresPanel, corner_text, heard_text
 from preview.ui.panels.header import HeaderPanel
 from preview.ui.panels.meters import MetersPanel
 from preview.ui.panels.parts import PartsPanel
@@ -61,6 +61,7 @@ def desk(session, engine) -> Desk:
         (clock, 62.34, "1:02.3"),
         (clock, 3723.9, "1:02:03"),
         (duration, 0.0, "0 ms"),
+        (duration, 0.00002, "<0.1 ms"),
         (duration, 0.0034, "3.4 ms"),
         (duration, 0.034, "34 ms"),
         (duration, 1.2, "1.20 s"),
@@ -164,11 +165,42 @@ def test_the_input_is_measured_against_full_scale(desk, engine) -> None:
 
 def test_more_channels_than_rows_are_folded_into_the_loudest(desk, engine) -> None:
     level = tuple(float(n) for n in range(1, 7))
-    desk.take(replace(engine.snapshot, input=LevelReading(level, level, level)))
+    reading = LevelReading(level, level, level)
+    desk.take(replace(engine.snapshot, input=reading, output=reading))
     lines = _meters(desk, height=6)
     assert lines[1].startswith(" in 1")
-    assert lines[2].startswith(" in 2-6")
+    assert lines[2].startswith(" in 2+ ")
+    assert lines[4].startswith(" out 2+"), "a label is never cut"
     assert "6.00 V" in lines[2]
+
+
+def test_in_bypass_the_lower_bars_say_so_and_have_no_rail(desk, engine) -> None:
+    level = (2.0, 2.0)
+    desk.take(replace(engine.snapshot, bypass=True, output=LevelReading(level, level, level)))
+    for line in _meters(desk)[3:5]:
+        assert line.startswith(" byp ")
+        assert "▐" not in line
+        assert line.endswith("-")
+
+
+def test_a_visit_to_the_rail_from_before_the_counts_were_cleared_is_not_hidden(desk, engine) -> None:
+    at_the_rail = OpAmpReading("U1", 15.0, 15.0, 15.0, 0.0, 0, 0.437, 0.0)
+    desk.take(replace(engine.snapshot, opamps=(at_the_rail,)))
+    assert "CLIP ×1  clipped 437 ms" in _meters(desk)[5]
+
+
+def test_in_a_small_window_the_clip_count_goes_before_an_idle_limiter(desk, engine) -> None:
+    clipped = OpAmpReading("U1", 15.0, 15.0, -15.0, 0.0, 123, 0.5, 0.0)
+    desk.take(replace(engine.snapshot, opamps=(clipped,)))
+    assert "CLIP ×123" in _meters(desk, width=60)[5]
+    desk.take(replace(engine.snapshot, opamps=(clipped,), limited_blocks=2))
+    assert "device limiter ×2" in _meters(desk, width=60)[5]
+
+
+def test_nothing_below_a_microvolt_is_called_a_level(desk, engine) -> None:
+    quiet = (4e-7, 4e-7)
+    desk.take(replace(engine.snapshot, output=LevelReading(quiet, quiet, quiet)))
+    assert re.search(r" 0 V +- +0 V +0 V", _meters(desk)[3])
 
 
 def test_on_a_single_supply_the_op_amp_knows_its_room(desk, engine) -> None:
@@ -219,6 +251,27 @@ def test_the_state_is_told_in_words_at_every_width(desk, width) -> None:
     for word in ("playing", "BYPASS", "-20 dB", "loop", "standard"):
         assert word in line
     assert len(line) == width
+
+
+def test_an_engine_that_died_before_it_spoke_points_to_silent(session, engine) -> None:
+    desk = Desk(session, engine)
+    desk.stopped = True
+    line = text_of(HeaderPanel(desk, Look()).rows(80, 3)[2])
+    assert line.rstrip().endswith("Press R to try again; q leaves, then try --silent.")
+
+
+@pytest.mark.parametrize("width", [80, 100, 101, 119, 120, 160])
+def test_no_word_of_the_bypass_warning_is_cut(desk, width) -> None:
+    desk.bypass = True
+    line = text_of(HeaderPanel(desk, Look()).rows(width, 3)[2])
+    assert "BYPASS: input heard " in line or "BYPASS: you hear the input, not the stage " in line
+    assert len(line) == width
+
+
+def test_the_deviation_is_not_cut_in_a_small_window(desk) -> None:
+    desk.figures.now = replace(_low_pass(), error_db=1.2e-4, sample_rate_hz=48e3)
+    line = text_of(FiguresPanel(desk, Look()).rows(60, 2)[1])
+    assert line == " heard within 0.0002 dB to 20 kHz (standard)"
 
 
 def test_a_long_name_gives_way_to_rate_and_length(desk) -> None:
@@ -366,6 +419,23 @@ def test_two_corners_that_meet_do_not_overwrite_each_other(desk) -> None:
     lines = [text_of(r) for r in CurvePanel(desk, Look()).rows(80, 24)]
     assert lines[1].split() == ["▾", "1.00", "kHz", "99.0", "kHz", "▾"]
     assert lines[5].count("╎") == 3
+
+
+def test_the_curve_is_drawn_again_only_when_what_it_shows_has_changed(desk) -> None:
+    desk.figures.now = _low_pass(1591.5)
+    panel = CurvePanel(desk, Look())
+    first = panel.rows(80, 20)
+    assert panel.rows(80, 20) is first
+    desk.phase_shown = True
+    with_phase = panel.rows(80, 20)
+    assert with_phase is not first
+    panel.look.switch()
+    light = panel.rows(80, 20)
+    assert light is not with_phase
+    assert panel.rows(70, 20) is not light
+    before = panel.rows(80, 20)
+    desk.figures.now = _low_pass(3000.0)
+    assert panel.rows(80, 20) is not before
 
 
 @pytest.mark.parametrize("gain_db", [-math.inf, 0.0, -300.0, 250.0])

@@ -144,15 +144,28 @@ def test_a_region_never_ends_before_it_starts(desk, engine) -> None:
     assert engine.sent[-1] == SetRegion(0, 100_000)
 
 
-def test_a_region_at_the_very_start_or_end_holds_at_least_two_frames(desk, engine) -> None:
+def test_a_region_at_the_very_start_or_end_holds_at_least_50_ms(desk, engine) -> None:
+    # looped, two frames of a recording are a direct voltage on the headphones
     desk.seek(0)
     desk.do_region_end()
-    assert engine.sent[-1] == SetRegion(0, 2)
+    assert engine.sent[-1] == SetRegion(0, 2400)
     desk.do_region_clear()
     desk.seek(10**9)
     assert engine.sent[-1] == Seek(599_999)
     desk.do_region_start()
-    assert engine.sent[-1] == SetRegion(599_998, 600_000)
+    assert engine.sent[-1] == SetRegion(597_600, 600_000)
+    desk.seek(597_700)
+    desk.do_region_end()
+    assert engine.sent[-1] == SetRegion(0, 597_700)
+
+
+def test_a_recording_shorter_than_the_shortest_region_is_its_own_region(session, engine) -> None:
+    short = type(engine)(frames=1000)
+    desk = Desk(session, short)
+    desk.take(short.snapshot)
+    for action in (desk.do_region_start, desk.do_region_end):
+        action()
+        assert short.sent[-1] == SetRegion(0, 1000)
 
 
 def test_keys_do_nothing_harmful_before_the_engine_has_spoken(session, engine) -> None:

@@ -58,9 +58,18 @@ class CurvePanel(Board):
     def __init__(self, desk: Desk, look: Look) -> None:
         super().__init__(look, name="curve")
         self.desk = desk
+        self._drawn_for: tuple[object, object, object] = (None, None, None)
+        self._drawn: Sequence[Row] = ()
 
     def rows(self, width: int, height: int) -> Sequence[Row]:
-        """See :class:`Board`."""
+        """See :class:`Board`; drawn again only when what it shows has changed, for a held key asks often."""
+        figures, frame = self.desk.figures, (self.desk.phase_shown, self.look.palette, width, height)
+        was_now, was_before, was_frame = self._drawn_for
+        if figures.now is not was_now or figures.before is not was_before or frame != was_frame:
+            self._drawn_for, self._drawn = (figures.now, figures.before, frame), self._draw(width, height)
+        return self._drawn
+
+    def _draw(self, width: int, height: int) -> Sequence[Row]:
         desk, palette = self.desk, self.look.palette
         now, before = desk.figures.now, desk.figures.before
         note = "gain in dB"

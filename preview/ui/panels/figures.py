@@ -40,7 +40,7 @@ class FiguresPanel(Board):
         super().__init__(look, name="figures")
         self.desk = desk
 
-    def rows(self, width: int, height: int) -> Sequence[Row]:  # noqa: ARG002 - every board has both
+    def rows(self, width: int, height: int) -> Sequence[Row]:
         """See :class:`Board`."""
         palette = self.look.palette
         now, before = self.desk.figures.now, self.desk.figures.before
@@ -54,4 +54,7 @@ class FiguresPanel(Board):
             if before is not None and not before.problem and text(before) != text(now):
                 pieces += [(text(before), palette.plain), (" → ", palette.faint)]
             pieces.append((text(now), palette.strong))
-        return [row(*pieces), row((f" {heard_text(now)}", palette.plain))][:height]
+        heard = heard_text(now)
+        if len(heard) + 1 > width:
+            heard = heard.replace("heard response within", "heard within").replace(" of the circuit", "")
+        return [row(*pieces), row((f" {heard}", palette.plain))][:height]

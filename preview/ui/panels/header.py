@@ -7,7 +7,7 @@ from collections.abc import Sequence
 from preview.errors import printable
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
-from preview.ui.widgets.board import Board, Row, fit, row, spread
+from preview.ui.widgets.board import Board, Row, fit, row, row_cells, spread
 from preview.ui.words import clock, full_scale, kilohertz, rails
 
 __all__ = ["HeaderPanel"]
@@ -67,10 +67,13 @@ class HeaderPanel(Board):
 
     def _state_row(self, width: int) -> Row:
         palette, desk = self.look.palette, self.desk
-        if desk.stopped:
-            return row(
-                (fit(" ENGINE STOPPED: no sound. Press R to restart it; q leaves.", width), palette.alarm)
-            )
+        if desk.stopped or desk.unanswered:
+            words = "ENGINE DOES NOT ANSWER. Press R to restart it; q leaves."
+            if desk.stopped:
+                words = "ENGINE STOPPED: no sound. Press R to restart it; q leaves."
+            if desk.snapshot is None:
+                words = "ENGINE DID NOT START. Press R to try again; q leaves, then try --silent."
+            return row((fit(f" {words}", width), palette.alarm))
         narrow = width < 100
         gliding = desk.snapshot is not None and desk.snapshot.gliding
         right = row(
@@ -87,5 +90,7 @@ class HeaderPanel(Board):
             return spread(
                 row((playing, palette.strong), ("  stage heard", palette.plain)), right, width, palette.plain
             )
-        words = "  BYPASS: input heard" if narrow else "  BYPASS: you hear the input, not the stage"
+        words = "  BYPASS: you hear the input, not the stage"
+        if len(playing) + len(words) + row_cells(right) >= width:
+            words = "  BYPASS: input heard"
         return spread(row((playing, palette.strong), (words, palette.alarm)), right, width, palette.alarm)

@@ -12,7 +12,7 @@ from preview.engine.messages import Snapshot
 from preview.meters.reading import LevelReading
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
-from preview.ui.widgets.board import Board, Row, fit, row, spread
+from preview.ui.widgets.board import Board, Row, fit, row, row_cells, spread
 from preview.ui.widgets.levelbar import VoltAxis, level_bar, scale_line
 from preview.ui.words import db, dbu, duration, rails, volts
 from preview.values.levels import ratio_db
@@ -51,7 +51,7 @@ class MetersPanel(Board):
         self._fell_s = now_s()
         self._figures: dict[str, str] = {}
         self._figures_s = -1e9
-        self._lit: dict[str, tuple[int, float]] = {}
+        self._lit: dict[str, tuple[float, float]] = {}
 
     # ---- size ----
 
@@ -90,19 +90,22 @@ class MetersPanel(Board):
         fall = 10.0 ** (-_FALL_DB_PER_S * (now_s - self._fell_s) / 20.0)
         self._fell_s = now_s
         bars = self._bars(height)
-        for word, rail in (("in", False), ("out", True)):
+        # In bypass the lower bars are the input again: they say so, and no rail is theirs.
+        bypass = snapshot is not None and snapshot.bypass
+        for word, rail in (("in", False), ("byp" if bypass else "out", True)):
             reading = (snapshot.output if rail else snapshot.input) if snapshot else LevelReading((), (), ())
             for channel in _channels(word, reading, bars):
                 peak_v = max(channel.peak_v, self._peaks.get(channel.label, 0.0) * fall)
                 self._peaks[channel.label] = peak_v
-                left_db = self._left_db(channel, wall_v if rail else full_scale_v, rail, drives_out)
+                limit_v = full_scale_v if not rail else None if bypass else wall_v
+                left_db = self._left_db(channel, limit_v, rail, drives_out)
                 bar = level_bar(
                     axis,
                     palette,
                     rms_v=channel.rms_v,
                     peak_v=peak_v,
                     hold_v=channel.hold_v,
-                    wall_v=wall_v if rail else full_scale_v,
+                    wall_v=limit_v,
                     rail=rail,
                 )
                 figures = self._figures.setdefault(channel.label, _figure_text(channel, peak_v, left_db))
@@ -140,16 +143,19 @@ class MetersPanel(Board):
         if snapshot is not None:
             held = f" device limiter ×{snapshot.limited_blocks} "
             style = palette.alarm if snapshot.limited_blocks else palette.faint
-            lines[0] = spread(lines[0], row((held, style)), width, palette.plain)
+            if snapshot.limited_blocks or row_cells(lines[0]) + len(held) <= width:  # clipping goes first
+                lines[0] = spread(lines[0], row((held, style)), width, palette.plain)
         return lines
 
     def _opamp_row(self, reading: OpAmpReading, width: int, now_s: float) -> Row:
         palette = self.look.palette
-        known, lit_until_s = self._lit.get(reading.designator, (0, -1e9))
-        if reading.clip_events > known:
+        known_s, lit_until_s = self._lit.get(reading.designator, (0.0, -1e9))
+        if reading.clipped_s > known_s:
             lit_until_s = now_s + _LIT_S
-        self._lit[reading.designator] = (reading.clip_events, lit_until_s)
-        lit = reading.clip_events > 0 and now_s < lit_until_s
+        self._lit[reading.designator] = (reading.clipped_s, lit_until_s)
+        # A visit to the rail that was under way when the counts were cleared is one visit since then.
+        events = max(reading.clip_events, 1) if reading.clipped_s > 0.0 else reading.clip_events
+        lit = events > 0 and now_s < lit_until_s
         limited = any(
             o.designator == reading.designator and o.type != "perfect" for o in self.desk.session.stage.opamps
         )
@@ -159,14 +165,14 @@ class MetersPanel(Board):
             room = f" rails {rails(self.desk.session.supply)}"
         else:
             room = f" {db(reading.headroom_db)} dB to the rails {rails(self.desk.session.supply)}"
-        light = f" {'CLIP' if reading.clip_events else 'clip'} ×{reading.clip_events} "
+        light = f" {'CLIP' if events else 'clip'} ×{events} "
         pieces = [
             (fit(f" {reading.designator}", _LABEL - 1), palette.strong),
             (room + "  ", palette.plain),
-            (light, palette.alarm if lit else palette.strong if reading.clip_events else palette.faint),
+            (light, palette.alarm if lit else palette.strong if events else palette.faint),
             (
                 f" clipped {duration(reading.clipped_s)}",
-                palette.plain if reading.clip_events else palette.faint,
+                palette.plain if events else palette.faint,
             ),
         ]
         if width >= 120:
@@ -188,7 +194,7 @@ def _channels(word: str, reading: LevelReading, bars: int) -> list[_Channel]:
     ]
     if shown < count:
         rest = slice(shown, count)
-        label = f"{word} {shown + 1}-{count}" if shown else f"{word} max"
+        label = f"{word} {shown + 1}+" if shown else f"{word} max"
         result.append(
             _Channel(label, max(reading.rms_v[rest]), max(reading.peak_v[rest]), max(reading.hold_v[rest]))
         )

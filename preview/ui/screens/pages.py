@@ -19,6 +19,11 @@ _MARKS = (
     ("▆ ▂ ╿", "RMS stands tall, the peak lies low, the upright stroke is the highest peak (hold)"),
     ("▐░  ┊", "a supply rail, hatched behind; full scale of the recording"),
     ("left dB", "from the highest peak to the wall: full scale at the input, the rail at the output"),
+    (
+        "byp",
+        "in bypass: what is heard is the input, so no rail is drawn; the op-amp's row is still the stage's",
+    ),
+    ("in 2+", "the loudest of channel 2 and those after it, where not all have room"),
     ("clip ×3", "visits of the op-amp's output to a rail; 'clipped' is the time spent there"),
     ("device limiter", "blocks held at the device's full scale; the volts you read are not touched"),
     ("≠E24", "the value is not one of that series"),
@@ -71,11 +76,11 @@ class HelpScreen(Dialog[None]):
 
     def do_row_down(self) -> None:
         """Scroll down."""
-        self.query_one("#page").scroll_relative(y=3, animate=False)
+        self.query_one("#page").scroll_relative(y=3, animate=False, immediate=True)
 
     def do_row_up(self) -> None:
         """Scroll up."""
-        self.query_one("#page").scroll_relative(y=-3, animate=False)
+        self.query_one("#page").scroll_relative(y=-3, animate=False, immediate=True)
 
     def do_help(self) -> None:
         """Back to the desk."""

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
@@ -37,11 +39,11 @@ class DotField:
         ``every`` above 1 sets only every so many-th column: a dotted line.
         """
         last: int | None = None
-        for x, height in enumerate(y):
-            if not np.isfinite(height):
+        for x, height in enumerate(y.tolist()):
+            if not math.isfinite(height):
                 last = None
                 continue
-            here = int(np.clip(round(float(height)), -4, 4 * self.height + 4))
+            here = max(-4, min(round(height), 4 * self.height + 4))
             if every == 1 and last is not None and abs(here - last) > 1:
                 middle = (here + last) // 2
                 for between in range(min(last, middle), max(last, middle) + 1):

@@ -1,0 +1,164 @@
+"""The op-amp library as tables and objects: to compare types, and to see where each figure comes from."""
+
+from __future__ import annotations
+
+import math
+import textwrap
+from collections.abc import Iterable
+from dataclasses import fields
+
+from preview.circuit.opamp import OpAmpModel
+from preview.circuit.opamp_library import find_opamp, find_sheet, opamp_names
+from preview.circuit.opamp_reader import OpAmpSheet, SheetFigure, SheetSwing
+from preview.circuit.opamp_units import FIGURE_FIELDS, FIGURES, format_figure
+from preview.errors import OpAmpFileError
+from preview.values.notation import format_value
+
+__all__ = ["comparison_lines", "opamp_lines", "opamp_object", "opamp_report"]
+
+_WIDTH = 100
+_SWINGS = {
+    "swing_high_v": "highest output, below the positive rail",
+    "swing_low_v": "lowest output, above the negative rail",
+}
+_REST = ("type", "title", "assumed", "sources")
+
+
+def opamp_report(name: str | None = None) -> tuple[dict[str, object], list[str], list[str]]:
+    """One type, or all side by side, as an object and as lines; then what is wrong with files of one's own.
+
+    Parameters
+    ----------
+    name : str, optional
+        A type or a file; all types where it is None.
+
+    Raises
+    ------
+    UnknownNameError, OpAmpFileError
+        No such type, or a file that cannot be read as one.
+    """
+    if name is not None:
+        return opamp_object(name, whole=True), opamp_lines(name), []
+    names, problems = [], []
+    for known in opamp_names():
+        try:
+            find_opamp(known)
+        except OpAmpFileError as error:
+            problems.append(str(error))
+        else:
+            names.append(known)
+    return {"opamps": [opamp_object(known) for known in names]}, comparison_lines(names), problems
+
+
+def comparison_lines(names: Iterable[str]) -> list[str]:
+    """One line a type: speed, noise, swing, supply and class; an assumed figure is followed by ``~``."""
+    heads = ("type", "gain-bandwidth", "slew rate", "noise at 1 kHz", "swing +/-", "supply", "class")
+    plain, rows = [], [heads]
+    for name in names:
+        model, sheet = find_opamp(name), find_sheet(name)
+        if sheet is None:
+            plain.append(model)
+        else:
+            rows.append(_row(model, sheet))
+    widths = [max(len(row[n]) for row in rows) for n in range(len(heads))]
+    lines = ["  ".join(f"{cell:<{w}}" for cell, w in zip(row, widths, strict=True)).rstrip() for row in rows]
+    lines[1:1] = [f"{model.type:<{widths[0]}}  {model.title}" for model in plain]
+    return [*lines, "~ assumed of its class; `preview opamps NAME` gives every figure with its source"]
+
+
+def _row(model: OpAmpModel, sheet: OpAmpSheet) -> tuple[str, str, str, str, str, str, str]:
+    slews = sorted({model.slew_up_v_per_s, model.slew_down_v_per_s})
+    return (
+        model.type,
+        format_figure(model.gain_bandwidth_hz, "frequency"),
+        "/".join(format_figure(slew, "slew") for slew in slews),
+        format_figure(_noise_at(model, 1e3), "noise_voltage", digits=2) + _mark(model, "noise_v_rthz"),
+        f"{_volts(model.swing_high_v)}/{_volts(model.swing_low_v)}{_mark(model, 'swing_high_v', 'swing_low_v')}",
+        f"{model.supply_min_v:g} to {model.supply_max_v:g} V{_mark(model, 'supply_min_v', 'supply_max_v')}",
+        sheet.class_name,
+    )
+
+
+def _noise_at(model: OpAmpModel, frequency_hz: float) -> float:
+    """Voltage noise density at a frequency [V/sqrt(Hz)]."""
+    return model.noise_v_rthz * math.sqrt(1.0 + model.noise_corner_hz / frequency_hz)
+
+
+def _volts(value: float) -> str:
+    return format_value(value, "voltage")
+
+
+def _mark(model: OpAmpModel, *names: str) -> str:
+    return "~" if any(name in model.assumed for name in names) else ""
+
+
+def opamp_lines(name: str) -> list[str]:
+    """Everything that is known of one type: figure, value, source; then what is assumed."""
+    model, sheet = find_opamp(name), find_sheet(name)
+    if sheet is None:
+        return [f"{model.type}: {model.title}", "  built in; it has no figures"]
+    lines = [f"{model.type}: {model.title} (class {sheet.class_name})"]
+    lines += [f"  {line}" for line in textwrap.wrap(sheet.about, _WIDTH)]
+    if sheet.data_sheet:
+        lines += textwrap.wrap(f"data sheets: {sheet.data_sheet}", _WIDTH, initial_indent="  ")
+    given = [(FIGURES[figure.name].meaning, _written(figure), figure.origin) for figure in sheet.figures]
+    given += [("output swing, from the rails", _swing(swing), swing.origin) for swing in sheet.swings]
+    sources = dict(model.sources)
+    assumed = [(_meaning(field), _value(model, field), sources[field]) for field in model.assumed]
+    widths = [max(len(row[n]) for row in (*given, *assumed)) for n in (0, 1)]
+    lines += ["", *_rows(given, widths)]
+    if assumed:
+        lines += ["", "assumed, for the file does not give them:", *_rows(assumed, widths)]
+    return lines
+
+
+def _rows(rows: Iterable[tuple[str, str, str]], widths: list[int]) -> list[str]:
+    return [f"  {what:<{widths[0]}}  {value:<{widths[1]}}  {source}" for what, value, source in rows]
+
+
+def _written(figure: SheetFigure) -> str:
+    """The figure as the file writes it."""
+    if figure.at_hz is None:
+        return figure.text
+    return f"{figure.text} at {format_value(figure.at_hz, 'frequency')}"
+
+
+def _swing(swing: SheetSwing) -> str:
+    ways = (("+", swing.high_v), ("-", swing.low_v))
+    return ", ".join(f"{sign} {_volts(value)}" for sign, value in ways if value is not None)
+
+
+def _meaning(field: str) -> str:
+    return _SWINGS[field] if field in _SWINGS else FIGURES[FIGURE_FIELDS[field][0]].meaning
+
+
+def _value(model: OpAmpModel, field: str) -> str:
+    value: float = getattr(model, field)
+    return format_figure(value, "voltage" if field in _SWINGS else FIGURES[FIGURE_FIELDS[field][0]].unit)
+
+
+def opamp_object(name: str, *, whole: bool = False) -> dict[str, object]:
+    """One type for a report, SI units; ``whole`` adds the source of every figure and the swings."""
+    model, sheet = find_opamp(name), find_sheet(name)
+    body: dict[str, object] = {
+        "name": model.type,
+        "title": model.title,
+        "class": sheet.class_name if sheet else None,
+        "real": model.real,
+        **{field.name: getattr(model, field.name) for field in fields(model) if field.name not in _REST},
+        "assumed": list(model.assumed),
+    }
+    if whole:
+        body["about"] = sheet.about if sheet else ""
+        body["data_sheet"] = sheet.data_sheet if sheet else ""
+        body["sources"] = dict(model.sources)
+        body["swings"] = [
+            {
+                "load_ohm": swing.load_ohm,
+                "swing_high_v": swing.high_v,
+                "swing_low_v": swing.low_v,
+                "source": swing.origin,
+            }
+            for swing in (sheet.swings if sheet else ())
+        ]
+    return body
