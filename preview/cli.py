@@ -25,6 +25,7 @@ from preview.errors import PreviewError, UsageError, printable
 
 if TYPE_CHECKING:
     from preview.audio.sink import Depth
+    from preview.engine.process import EngineProcess
     from preview.session import Session
 
 __all__ = ["main"]
@@ -192,9 +193,23 @@ def _name(text: str) -> str:
 
 
 def _listen(options: argparse.Namespace) -> int:
+    from preview.engine.process import EngineProcess
+
+    terminal = all(stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
+    engine = EngineProcess.spawn() if terminal else None  # it loads while the options are read
+    try:
+        return _desk(options, engine)
+    finally:
+        if engine is not None:
+            engine.close()
+
+
+def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     from preview.audio.files import probe
     from preview.engine.demo import demo_recording
     from preview.engine.options import DEFAULT_STAGE, session_from
+    from preview.engine.process import EngineConfig, EngineProcess
+    from preview.network.stability import check_stable
     from preview.session import AtEnd
 
     if options.live:
@@ -203,40 +218,27 @@ def _listen(options: argparse.Namespace) -> int:
         )
     if options.end not in (end.value for end in AtEnd):
         raise UsageError(f"--end {options.end}: no such end", "loop or stop")
-    stage = DEFAULT_STAGE
+    stage, audio = DEFAULT_STAGE, Path(options.audio or "")
     if options.audio is None:
         demo = demo_recording()
         audio = demo.path
         options.full_scale = options.full_scale or demo.full_scale or None
         stage = demo.stage or stage
-    else:
-        audio = Path(options.audio)
-    if str(audio) == "-":
+    if options.audio == "-":
         raise UsageError(
             "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
         )
-    from preview.engine.process import EngineConfig, EngineProcess
-    from preview.network.stability import check_stable
+    info = probe(audio)
+    session = session_from(options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage)
+    _echo(session, info.warnings)
+    check_stable(session.netlist())
+    if engine is None:
+        raise UsageError("the desk needs a terminal", "preview render works without one")
+    config = EngineConfig(session=session, device=options.device, silent=options.silent)
+    engine.begin(config)
+    from preview.ui.app import run_desk
 
-    terminal = all(stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
-    engine = EngineProcess.spawn() if terminal else None  # it loads while the options are read
-    try:
-        info = probe(audio)
-        session = session_from(
-            options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage
-        )
-        _echo(session, info.warnings)
-        check_stable(session.netlist())
-        if engine is None:
-            raise UsageError("the desk needs a terminal", "preview render works without one")
-        config = EngineConfig(session=session, device=options.device, silent=options.silent)
-        engine.begin(config)
-        from preview.ui.app import run_desk
-
-        run_desk(session, engine, restart=lambda: EngineProcess.start(config))
-    finally:
-        if engine is not None:
-            engine.close()
+    run_desk(session, engine, restart=lambda: EngineProcess.start(config))
     return 0
 
 

@@ -85,7 +85,11 @@ def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response
 
 
 def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
-    """Passband gain (the largest) [dB] and the frequencies at which it has fallen by the square root of two [Hz]."""
+    """Passband gain (the largest) [dB] and the frequencies at which it has fallen by the square root of two [Hz].
+
+    A gain that still rises at an end of the range searched (an integrator, a differentiator) has no passband: the
+    largest gain found is given, and no corner.
+    """
 
     def magnitude(f: Real) -> Real:
         return np.abs(transfer.response(netlist, f))
@@ -93,6 +97,9 @@ def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
     f = np.geomspace(*SEARCH_HZ, 1101)
     gain = magnitude(f)
     top = int(np.argmax(gain))
+    next_to_it = gain[1] if top == 0 else gain[-2]
+    if top in (0, len(f) - 1) and gain[top] > 1.001 * next_to_it:
+        return float(20.0 * np.log10(gain[top])), ()
     lower, upper = f[max(top - 1, 0)], f[min(top + 1, len(f) - 1)]
     peak = float(gain[top])
     for _ in range(4):

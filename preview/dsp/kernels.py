@@ -40,6 +40,12 @@ def _compiler() -> Callable[[Callable[..., Any]], Any]:
 
 compiled = _compiler()
 
+
+def in_cache(name: str) -> bool:
+    """Whether a kernel of that name was compiled on this machine before, so that it only has to be loaded."""
+    return any(Path(os.environ["NUMBA_CACHE_DIR"]).rglob(f"*kernels.{name}-*.nbi"))
+
+
 MAX_ITERATIONS = 40
 """Newton steps that a limited step may take; 2 to 5 are usual."""
 

@@ -53,10 +53,17 @@ def _low_pass(taps: int, cutoff: float) -> Real:
     return np.asarray(h / h.sum(), dtype=np.float64)
 
 
+@lru_cache
+def _quadrature() -> tuple[Real, Real]:
+    """Nodes and weights on -1..1 for an integrand of up to 50 periods."""
+    node, weight = np.polynomial.legendre.leggauss(200)
+    return node, weight
+
+
 def _lifted_low_pass(taps: int, cutoff: float, factor_left: float) -> Real:
     """Low-pass whose passband undoes the droop of a mean over ``1/factor_left`` of its sample interval."""
     at = np.arange(taps) - (taps - 1) / 2.0
-    node, weight = np.polynomial.legendre.leggauss(400)
+    node, weight = _quadrature()
     f = cutoff * (node + 1.0) / 2.0
     lift = 1.0 / np.sinc(f / factor_left)
     ideal = cutoff * np.cos(2.0 * np.pi * np.outer(at, f)) @ (weight * lift)

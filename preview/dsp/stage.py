@@ -9,8 +9,9 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from preview.circuit.netlist import Netlist
-from preview.circuit.opamp import OpAmpReading
+from preview.circuit.netlist import Branch, Netlist, OpAmpSite
+from preview.circuit.opamp import IDEAL, OpAmpModel, OpAmpReading
+from preview.circuit.parts import PartKind
 from preview.dsp import kernels
 from preview.dsp.block import Volts
 from preview.dsp.cores import Matrices, core_for
@@ -19,7 +20,7 @@ from preview.errors import PartValueError, UnknownNameError
 from preview.network.stability import check_stable
 from preview.values.quality import Quality
 
-__all__ = ["GLIDE_S", "Glide", "StageProcessor"]
+__all__ = ["GLIDE_S", "Glide", "StageProcessor", "load_kernels"]
 
 Real = NDArray[np.float64]
 
@@ -210,7 +211,9 @@ class StageProcessor:
                     peak_v=max(abs(high), abs(low)),
                     high_v=high,
                     low_v=low,
-                    headroom_db=_headroom_db(high, low, opamp.high_v, opamp.low_v),
+                    headroom_db=0.0
+                    if s[:, kernels.CLIPPED].any()
+                    else _headroom_db(high, low, opamp.high_v, opamp.low_v),
                     clip_events=int(s[:, kernels.EVENTS].sum()),
                     clipped_s=float(s[:, kernels.CLIPPED].sum()) * self.step_s,
                     slew_peak_v_per_s=float(s[:, kernels.SLEW].max()) / self.step_s,
@@ -220,6 +223,26 @@ class StageProcessor:
                 )
             )
         return tuple(result)
+
+
+def load_kernels(*, compile_missing: bool = False) -> bool:
+    """Load the kernels of both kinds of circuit, ideal and real op-amps, so that the first block need not.
+
+    What was never compiled on this machine is left alone, unless ``compile_missing``. Returns whether the kernels of
+    ideal op-amps, with which a desk begins, are loaded.
+    """
+    branches = (
+        Branch("R1", PartKind.RESISTOR, "in", "s", 1e3),
+        Branch("R2", PartKind.RESISTOR, "s", "out", 1e3),
+    )
+    kinds = {"run_steps": IDEAL, "run_macro": OpAmpModel("any", gain_bandwidth_hz=1e6)}
+    there = {name: compile_missing or kernels.in_cache(name) for name in kinds}
+    for name, model in kinds.items():
+        if there[name]:
+            site = OpAmpSite("U1", "gnd", "s", "out", model.type, 1.0, -1.0, model)
+            circuit = Netlist("in", "out", branches, (site,))
+            StageProcessor(circuit, sample_rate_hz=48_000.0, channels=1, quality=Quality.DRAFT)
+    return there["run_steps"]
 
 
 def _headroom_db(high_v: float, low_v: float, rail_high_v: float, rail_low_v: float) -> float:

@@ -42,17 +42,18 @@ __all__ = ["Host", "run"]
 TURN_S = 1.0 / 30.0
 FADE_WAIT_S = 0.15
 SETTLE_S = 0.15
+WARM_SETTLE_S = 0.05
 PATIENCE_S = 3.0
 LATENCY_WAIT_S = 0.25
 LOG_BYTES_MAX = 1 << 20
 
 
-def run(connection: Connection, config: EngineConfig) -> None:
-    """Run an engine until the desk says quit or is gone."""
+def run(connection: Connection, config: EngineConfig, *, warm: bool = False) -> None:
+    """Run an engine until the desk says quit or is gone; ``warm`` says that its kernels are loaded."""
     signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is for the desk, which then says quit
     sys.setswitchinterval(0.0005)
     _write_to_log(config.log)
-    host = Host(connection, config)
+    host = Host(connection, config, settle_s=WARM_SETTLE_S if warm else SETTLE_S)
     try:
         host.live()
     finally:
@@ -89,7 +90,7 @@ class _Bench:
         """Compute and warm a circuit."""
         from preview.dsp.chain import Chain
         from preview.dsp.oversample import design, factor_for
-        from preview.dsp.stage import StageProcessor
+        from preview.dsp.stage import StageProcessor, load_kernels
 
         player = self._player
         processor = StageProcessor(
@@ -106,6 +107,7 @@ class _Bench:
         first = self._chain = Chain(processor)
         for each in Quality:  # designed now and kept: while it plays, that would take the device's blocks
             design(factor_for(each, player.sample_rate_hz))
+        load_kernels()  # likewise
         self._ready()
         return lambda: player.take_circuit(first, quality)
 
@@ -142,11 +144,14 @@ class Host:
         Pipe to the desk.
     config : EngineConfig
         What to begin with.
+    settle_s : float
+        Silence after the first circuit has come, in which the device gets over the stalls of loading [s].
     """
 
-    def __init__(self, connection: Connection, config: EngineConfig) -> None:
+    def __init__(self, connection: Connection, config: EngineConfig, *, settle_s: float = SETTLE_S) -> None:
         self._connection = connection
         self._config = config
+        self._settle_s = settle_s
         self._untold: deque[Notice] = deque()
         self._outlet = Outlet(
             device=config.device, silent=config.silent, block_frames=config.block_frames, tell=self._tell
@@ -301,7 +306,7 @@ class Host:
             meters=(LevelMeter(rate, channels), LevelMeter(rate, channels)),
             quality=quality,
             volume_db=volume_db,
-            settle_s=SETTLE_S,
+            settle_s=self._settle_s,
         )
         player.set_bypass(bypass)
         preparer = Preparer(

@@ -179,9 +179,11 @@ def _real_stderr() -> Iterator[None]:
 def _child(connection: Connection) -> None:
     """Runs in the child: everything that touches sound is loaded here and nowhere else."""
     import preview.dsp.chain  # noqa: F401 - loaded while the desk still reads its options
+    from preview.dsp.stage import load_kernels
     from preview.engine.host import run
 
+    warm = load_kernels()  # what must be compiled first is left: that takes long, and is told
     with contextlib.suppress(EOFError, OSError):
         config = connection.recv()
         if isinstance(config, EngineConfig):
-            run(connection, config)
+            run(connection, config, warm=warm)

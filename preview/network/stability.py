@@ -38,7 +38,7 @@ def _refuse_growth(poles: NDArray[np.complex128]) -> None:
     growing = poles[poles.real > 1e-9 * np.abs(poles).max(initial=0.0)]
     if growing.size:
         pole = growing[np.argmax(growing.real)]
-        hz = abs(pole) / (2 * np.pi)
+        hz = abs(pole.imag) / (2 * np.pi)
         oscillates = abs(pole.imag) > 1e-6 * abs(pole)
         how = f"oscillates at {hz:.4g} Hz" if oscillates else "runs to a rail and stays there"
         raise CircuitError(
@@ -76,4 +76,10 @@ def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
                 f"positive feedback: with {names} as connected the output runs to a rail and stays there",
                 "swap the + and - inputs, or lead more of the output back to the - input",
             )
-    _refuse_growth(np.linalg.eigvals(space.closed()[0][0]))
+    try:
+        closed = space.closed()[0][0]
+    except (
+        CircuitError
+    ):  # an improper response, such as a bare differentiator's: there is no such state space
+        return
+    _refuse_growth(np.linalg.eigvals(closed))

@@ -71,6 +71,7 @@ ACTIONS: tuple[Action, ...] = (
     _screen("switch_view", "v", "v", "Curve or schematic, where both do not fit", "view"),
     _screen("help", "question_mark f1", "? or F1", "This page", "help"),
     _screen("quit", "q ctrl+q ctrl+c", "q", "Leave the desk", "quit"),
+    _circuit("opamp_type", "t", "t", "Choose the op-amp type: perfect, ideal, or a real one", "op-amp"),
     _parts("next_part", "down", "↓", "Select the next part"),
     _parts("previous_part", "up", "↑", "Select the part before"),
     _parts(
@@ -109,7 +110,6 @@ ACTIONS: tuple[Action, ...] = (
     _circuit("supply", "p", "p", "Supply rails", "supply"),
     _circuit("source", "i", "i", "Resistance of the source at the input"),
     _circuit("load", "o", "o", "Resistance of the load at the output"),
-    _circuit("opamp_type", "t", "t", "Op-amps with rails as their limit (ideal), or with none (perfect)"),
     _screen("clear_holds", "c", "c", "Clear peak holds and all counts", "clear"),
     _screen("phase", "d", "d", "Phase in the curve: on or off"),
     _screen("colours", "k", "k", "Dark or light colours"),

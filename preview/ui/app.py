@@ -9,7 +9,7 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import ClassVar
 
-from textual.app import App, ComposeResult
+from textual.app import ComposeResult
 from textual.binding import BindingType
 from textual.containers import Horizontal, Vertical
 from textual.events import AppBlur, AppFocus, Resize
@@ -19,8 +19,8 @@ from preview.engine.messages import SetVolume
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.actions import ACTIONS, Group, bindings
-from preview.ui.changes import render_command
 from preview.ui.desk import Desk
+from preview.ui.dialogs import DialogApp
 from preview.ui.figures import FigureKeeper, Figures, MakeFigures, compute_figures
 from preview.ui.firstrun import caution_seen, config_folder, remember_caution
 from preview.ui.link import AnswerWatch, EngineLink, Restart
@@ -32,20 +32,7 @@ from preview.ui.panels.meters import MetersPanel
 from preview.ui.panels.parts import PartsPanel
 from preview.ui.panels.schematic import SchematicPanel
 from preview.ui.panels.timeline import TimelinePanel
-from preview.ui.questions import (
-    FILE_ANSWER,
-    Question,
-    ask_full_scale,
-    ask_load,
-    ask_part,
-    ask_source,
-    ask_stage_file,
-    ask_supply,
-    stage_choices,
-)
-from preview.ui.screens.chooser import ChooserScreen
-from preview.ui.screens.entry import EntryScreen
-from preview.ui.screens.pages import CautionScreen, CommandScreen, HelpScreen
+from preview.ui.screens.pages import CautionScreen
 from preview.ui.theme import PALETTES, Look, first_palette
 from preview.ui.widgets.board import Board
 
@@ -58,7 +45,7 @@ WIDE, TALL = 120, 42
 """From this size on all views fit side by side, or above each other [cells]."""
 
 
-class DeskApp(App[Session]):
+class DeskApp(DialogApp):
     """The desk.
 
     Parameters
@@ -95,9 +82,7 @@ class DeskApp(App[Session]):
         make_figures: MakeFigures = compute_figures,
         config: Path | None = None,
     ) -> None:
-        super().__init__()
-        self.desk = Desk(session, link)
-        self.look = Look(first_palette())
+        super().__init__(Desk(session, link), Look(first_palette()))
         self._restart = restart
         self._restarting = False
         self._autoplay = autoplay
@@ -223,6 +208,10 @@ class DeskApp(App[Session]):
                 board.rebuild()
             self.foot.tick()
 
+    def say(self, text: str, severity: str = "information") -> None:
+        """See :class:`DialogApp`."""
+        self.foot.say(text, severity)
+
     def show(self) -> None:
         """Paint everything that a key can have changed."""
         for board in self.boards:
@@ -250,61 +239,8 @@ class DeskApp(App[Session]):
                 self.foot.say(said)
         self.show()
 
-    def change(self, session: Session) -> None:
-        """Make this the session, or say why not."""
-        try:
-            self.desk.change(session)
-        except PreviewError as error:
-            self.foot.say(str(error), "error")
-        self.show()
-
-    def ask(self, question: Question, then: Callable[[Session], None] | None = None) -> None:
-        """Put a question; its answer becomes the session."""
-
-        def answered(text: str | None) -> None:
-            if text is not None:
-                (then or self.change)(question.answer(text))
-
-        entry = EntryScreen(
-            question.title, about=question.about, now=question.now, understand=question.understand
-        )
-        self.push_screen(entry, answered)
-
-    def do_type_value(self) -> None:
-        """Type the selected part's value."""
-        if (part := self.desk.part) is not None:
-            self.ask(ask_part(self.desk.session, part))
-
-    def do_full_scale(self) -> None:
-        """Type full scale."""
-        self.ask(ask_full_scale(self.desk.session))
-
-    def do_supply(self) -> None:
-        """Type the rails."""
-        self.ask(ask_supply(self.desk.session))
-
-    def do_source(self) -> None:
-        """Type the source's resistance."""
-        self.ask(ask_source(self.desk.session))
-
-    def do_load(self) -> None:
-        """Type the load's resistance."""
-        self.ask(ask_load(self.desk.session))
-
-    def do_choose_stage(self) -> None:
-        """Choose a stage from the list, or a file."""
-
-        def chosen(name: str | None) -> None:
-            if name == FILE_ANSWER:
-                question = ask_stage_file(self.desk.session)
-                self.ask(question, lambda session: self._open(str(session.stage.path or session.stage.name)))
-            elif name is not None and name != self.desk.session.stage.name:
-                self._open(name)
-
-        now = self.desk.session.stage.name
-        self.push_screen(ChooserScreen("Stage", stage_choices(), now=now, look=self.look), chosen)
-
-    def _open(self, name_or_path: str) -> None:
+    def open_stage(self, name_or_path: str) -> None:
+        """See :class:`DialogApp`."""
         try:
             self.desk.open_stage(find_stage(name_or_path))
         except PreviewError as error:
@@ -329,16 +265,6 @@ class DeskApp(App[Session]):
         """The other palette."""
         self.look.switch()
         self.theme = self.look.palette.name
-
-    def do_help(self) -> None:
-        """The help page."""
-        self.push_screen(HelpScreen())
-
-    def do_write_out(self) -> None:
-        """Show the command that renders what is set."""
-        session = self.desk.session
-        opened = find_stage(str(session.stage.path or session.stage.name))
-        self.push_screen(CommandScreen(render_command(session, opened)))
 
     def do_restart(self) -> str | None:
         """Start another engine when this one has stopped."""

@@ -6,13 +6,13 @@ to show.
 
 from __future__ import annotations
 
+import math
 import time
 from collections.abc import Callable
 from dataclasses import replace
 from pathlib import Path
 
-from preview.circuit.netlist import OUT
-from preview.circuit.opamp import BUILT_IN_TYPES
+from preview.circuit.netlist import OUT, OpAmpSite
 from preview.circuit.parts import Stage, TwoTerminal
 from preview.engine.messages import (
     ClearHolds,
@@ -27,6 +27,7 @@ from preview.engine.messages import (
     SetVolume,
     Snapshot,
 )
+from preview.errors import PreviewError
 from preview.session import AtEnd, Session
 from preview.ui.changes import commands_between, series_of, whole_state, with_value
 from preview.ui.figures import FigurePair
@@ -92,6 +93,7 @@ class Desk:
         self._asked_s = -1e9
         self._before: dict[tuple[str, Path | None], Session] = {_place(session): session}
         self._sought: tuple[float, int] | None = None
+        self._sites: tuple[Session, tuple[OpAmpSite, ...]] | None = None
 
     # ---- what the engine says ----
 
@@ -248,21 +250,6 @@ class Desk:
         self._become(session, commands)
         return True
 
-    def do_opamp_type(self) -> str:
-        """The next built-in type for every op-amp."""
-        opamps = self.session.stage.opamps
-        if not opamps:
-            return "this stage has no op-amp"
-        names = BUILT_IN_TYPES
-        kind = names[(names.index(opamps[0].type) + 1) % len(names)] if opamps[0].type in names else "ideal"
-        stage = self.session.stage
-        for opamp in opamps:
-            stage = stage.with_part(replace(opamp, type=kind))
-        self.change(replace(self.session, stage=stage))
-        return f"op-amps: {kind} " + (
-            "(no limit at all)" if kind == "perfect" else "(the rails are the limit)"
-        )
-
     # ---- listening ----
 
     def play(self, on: bool) -> None:
@@ -388,10 +375,25 @@ class Desk:
         """Name of the recording, not yet cleaned."""
         return self.session.audio.name if self.session.audio else "no recording"
 
+    def sites(self) -> tuple[OpAmpSite, ...]:
+        """The op-amps with the limits that hold for them; none where the circuit cannot be computed."""
+        if self._sites is None or self._sites[0] is not self.session:
+            try:
+                found = self.session.netlist().opamps
+            except PreviewError:
+                found = ()
+            self._sites = (self.session, found)
+        return self._sites[1]
+
     def output_wall(self) -> tuple[float | None, str | None]:
-        """The nearer rail of the op-amp that drives ``out`` [V], and its designator; None for no limit."""
-        for opamp in self.session.stage.opamps:
-            if opamp.out == OUT and opamp.type != "perfect":
-                supply = self.session.supply
-                return min(abs(v) for v in (supply.positive_v, supply.negative_v) if v), opamp.designator
+        """The nearer limit of the op-amp that drives ``out`` [V], and its designator; None for no limit.
+
+        The limit on a rail of 0 V is no wall: the signal that reaches it is small, not large.
+        """
+        supply = self.session.supply
+        for site in self.sites():
+            walls = [site.high_v] * (supply.positive_v > 0.0) + [-site.low_v] * (supply.negative_v < 0.0)
+            walls = [wall_v for wall_v in walls if 0.0 < wall_v < math.inf]
+            if site.out == OUT and walls:
+                return min(walls), site.designator
         return None, None

@@ -3,9 +3,13 @@
 from __future__ import annotations
 
 import math
+from pathlib import Path
 
 from preview.circuit.limits import QUANTITY
+from preview.circuit.opamp_library import is_path
+from preview.circuit.opamp_units import format_figure
 from preview.circuit.parts import Supply, TwoTerminal
+from preview.errors import printable
 from preview.values.levels import FullScale, dbu_from_vrms, format_volts
 from preview.values.notation import format_code, format_value
 
@@ -18,9 +22,13 @@ __all__ = [
     "full_scale",
     "hertz",
     "kilohertz",
+    "limits",
+    "milliamperes",
     "rails",
     "resistance",
     "scale_volts",
+    "slew_of",
+    "type_name",
     "value",
     "volts",
 ]
@@ -99,6 +107,31 @@ def rails(supply: Supply) -> str:
         return f"±{supply.positive_v:g} V"
     signed = [f"{rail_v:+g} V" if rail_v else "0 V" for rail_v in (supply.positive_v, supply.negative_v)]
     return " / ".join(signed)
+
+
+def limits(low_v: float, high_v: float) -> str:
+    """The lowest and highest voltage of an output: ``±14 V``, ``+7.5 V / +5 mV``."""
+    if high_v == -low_v:
+        return f"±{high_v:.3g} V"
+    return " / ".join(
+        ("+" if v > 0.0 else "") + format_value(v, "voltage") if v else "0 V" for v in (high_v, low_v)
+    )
+
+
+def slew_of(rate_v_per_s: float, limit_v_per_s: float) -> str:
+    """A slew rate against its limit, to a hundredth of it or so: ``1.9 of 13 V/µs``."""
+    decimals = max(0, 2 - math.floor(math.log10(limit_v_per_s / 1e6)))
+    return f"{rate_v_per_s / 1e6:.{decimals}f} of {format_figure(limit_v_per_s, 'slew', digits=4)}"
+
+
+def milliamperes(current_a: float) -> str:
+    """An output current: ``1.24 mA``."""
+    return f"{current_a * 1e3:.{2 if current_a < 9.995e-3 else 1}f} mA"
+
+
+def type_name(kind: str) -> str:
+    """The name of an op-amp type, short where it is a file's path, cleaned for the screen."""
+    return printable(Path(kind).stem if is_path(kind) else kind)
 
 
 def full_scale(scale: FullScale) -> str:

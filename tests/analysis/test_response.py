@@ -97,3 +97,13 @@ def test_heard_response_keeps_the_promise_of_each_quality(name: str, rate: float
 def test_heard_response_falls_off_above_the_band() -> None:
     gain = np.abs(heard(LOW_PASS, 48e3, Quality.STANDARD, [23.9e3]) / response(LOW_PASS, [23.9e3]))
     assert gain[0] < 0.6
+
+
+def test_an_integrator_and_a_differentiator_have_no_corner() -> None:
+    integrator = net([("R1", "in", "s", 10e3), ("C1", "s", "out", 10e-9)], [("gnd", "s", "out")])
+    differentiator = net([("C1", "in", "s", 10e-9), ("R1", "s", "out", 10e3)], [("gnd", "s", "out")])
+    assert find_corners(integrator)[1] == ()
+    assert find_corners(differentiator)[1] == ()
+    assert analyse(differentiator, [1000.0]).gain_db[0] == pytest.approx(
+        20 * np.log10(2 * np.pi * 0.1), abs=1e-9
+    )

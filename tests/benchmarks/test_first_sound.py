@@ -12,9 +12,10 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
-import platformdirs
 import pytest
 import soundfile
+
+from preview.dsp.stage import load_kernels
 
 pytestmark = [pytest.mark.benchmark, pytest.mark.sound]
 
@@ -59,10 +60,13 @@ def _drain(leader: int) -> None:
 def test_first_sound_comes_within_two_seconds_warm(sound_server: Any, tmp_path: Path) -> None:
     audio = tmp_path / "tone.wav"
     soundfile.write(audio, 0.1 * np.sin(2 * np.pi * 440 * np.arange(20 * RATE) / RATE), RATE, subtype="FLOAT")
-    sound_server.env["NUMBA_CACHE_DIR"] = str(Path(platformdirs.user_cache_dir("preview")) / "kernels")
+    load_kernels(
+        compile_missing=True
+    )  # the first run on a machine compiles; what is measured is any later one
+    sound_server.env["NUMBA_CACHE_DIR"] = os.environ["NUMBA_CACHE_DIR"]
     seen = tmp_path / "config" / "preview"
     seen.mkdir(parents=True)
     (seen / "hearing-caution-seen").touch()
     times = [seconds_to_sound(sound_server, audio, tmp_path / "config") for _ in range(4)]
-    print("\nfirst sound after", ", ".join(f"{t:.2f}" for t in times), "s (the first fills the cache)")
-    assert min(times[1:]) < 2.0
+    print("\nfirst sound after", ", ".join(f"{t:.2f}" for t in times), "s")
+    assert min(times) < 2.0

@@ -9,6 +9,7 @@ import re
 import subprocess
 import sys
 import time
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -17,6 +18,7 @@ import soundfile
 
 from preview.circuit.library import find_stage
 from preview.circuit.netlist import netlist
+from preview.circuit.opamp import OpAmpModel
 from preview.dsp.stage import StageProcessor
 from preview.values.quality import Quality
 from tests.nets import ALL
@@ -68,6 +70,30 @@ def test_speed_of_each_quality(quality: Quality) -> None:
     for name, circuit in ALL.items():
         stage = StageProcessor(circuit, sample_rate_hz=RATE, channels=2, quality=quality)
         print(f"\n{quality}, {name}: {speed(stage, programme(4.0)):.1f} x real time")
+
+
+@pytest.mark.parametrize("name", ["low-pass", "sallen-key", "two-sections"])
+def test_speed_with_real_op_amps(name: str) -> None:
+    model = OpAmpModel(
+        "test",
+        gain_bandwidth_hz=3e6,
+        open_loop_gain=2e5,
+        slew_up_v_per_s=13e6,
+        slew_down_v_per_s=13e6,
+        output_resistance_ohm=125.0,
+    )
+    slow = replace(model, slew_up_v_per_s=0.5e6, slew_down_v_per_s=0.5e6)
+    found = {}
+    for label, this, peak in (
+        ("clean", model, 0.3),
+        ("clipping", model, 15.0),
+        ("slewing and clipping", slow, 15.0),
+    ):
+        circuit = replace(ALL[name], opamps=tuple(replace(o, model=this) for o in ALL[name].opamps))
+        stage = StageProcessor(circuit, sample_rate_hz=RATE, channels=2, quality=Quality.STANDARD)
+        found[label] = speed(stage, programme(4.0, peak=peak))
+    print(f"\n{name}: " + ", ".join(f"{v:.1f} x {k}" for k, v in found.items()))
+    assert found["clean"] >= 10.0
 
 
 _RENDER = """

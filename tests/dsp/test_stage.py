@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -372,3 +373,12 @@ def test_any_rate_is_aligned_with_its_input(rate: int) -> None:
     expected = np.abs(h) * np.sin(2 * np.pi * f * t + np.angle(h))
     middle = slice(rate // 8, rate // 8 + rate // 16)
     np.testing.assert_allclose(out[middle], expected[middle], atol=2e-3 * abs(h) + 1e-4)
+
+
+def test_headroom_is_gone_at_a_rail_of_zero_volts_too() -> None:
+    single = replace(LOW_PASS, opamps=(replace(LOW_PASS.opamps[0], high_v=9.0, low_v=0.0),))
+    volts = 0.4 * np.sin(2 * np.pi * 100 * np.arange(4800) / 48_000)[:, None]
+    stage = StageProcessor(single, sample_rate_hz=48_000, channels=1, quality=Quality.STANDARD)
+    stage.process(volts, np.empty_like(volts))
+    assert stage.readings()[0].headroom_db == 0.0
+    assert stage.readings()[0].low_v == 0.0

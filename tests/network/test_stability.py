@@ -53,3 +53,13 @@ def test_poles_of_the_butterworth_sallen_key_lie_at_45_degrees() -> None:
     poles = closed_loop_poles(SALLEN_KEY)
     np.testing.assert_allclose(np.abs(poles), 1.0 / np.sqrt(1e8 * 2e-18), rtol=1e-9)
     np.testing.assert_allclose(poles.real / np.abs(poles), -np.sqrt(0.5), rtol=1e-9)
+
+
+def test_a_bare_differentiator_is_not_refused() -> None:
+    check_stable(net([("C1", "in", "s", 10e-9), ("R1", "s", "out", 10e3)], [("gnd", "s", "out")]))
+
+
+def test_the_frequency_named_is_the_one_it_rings_at() -> None:
+    # equal-component Sallen-Key at K = 3.2: poles (0.1 +- j sqrt(0.99)) / RC, so it rings at 0.995 of 1 / (2 pi RC)
+    with pytest.raises(CircuitError, match=r"oscillates at 1\.584e\+04 Hz"):
+        check_stable(equal_sallen_key(3.2))

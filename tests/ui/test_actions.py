@@ -49,8 +49,8 @@ def _asks(title: str) -> Check:
     return lambda app, _sent: isinstance(app.screen, EntryScreen) and app.screen._title == title
 
 
-def _circuit_type(app: DeskApp, sent: list[Command]) -> bool:
-    return isinstance(sent[-1], SetCircuit) and {o.type for o in sent[-1].netlist.opamps} == {"perfect"}
+def _lists_opamps(app: DeskApp, _sent: list[Command]) -> bool:
+    return isinstance(app.screen, ChooserScreen) and app.screen._title == "Op-amp type of U1"
 
 
 CHECKS: dict[str, tuple[Keys, Check]] = {
@@ -93,7 +93,7 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "supply": ((), _asks("Supply")),
     "source": ((), _asks("Source resistance")),
     "load": ((), _asks("Load resistance")),
-    "opamp_type": ((), _circuit_type),
+    "opamp_type": ((), _lists_opamps),
     "clear_holds": ((), _sent(ClearHolds())),
     "phase": ((), lambda app, _: app.desk.phase_shown),
     "colours": ((), lambda app, _: not app.look.palette.dark and app.theme == "desk-light"),

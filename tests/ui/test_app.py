@@ -379,6 +379,26 @@ def test_the_desk_loads_neither_sound_nor_compiler_nor_plots() -> None:
     assert done.stdout.strip() == "[]"
 
 
+def test_the_figures_of_a_real_op_amp_load_neither_sound_nor_compiler_nor_plots() -> None:
+    code = (
+        "import sys, preview.ui.app\n"
+        "from dataclasses import replace\n"
+        "from preview.circuit.library import find_stage\n"
+        "from preview.circuit.netlist import netlist\n"
+        "from preview.ui.figures import compute_figures\n"
+        "from preview.values.quality import Quality\n"
+        "stage = find_stage('inverting-low-pass')\n"
+        "stage = stage.with_part(replace(stage.opamps[0], type='TL072'))\n"
+        "assert not compute_figures(netlist(stage), 48e3, Quality.STANDARD).problem\n"
+        "names = ['numba', 'sounddevice', 'soundfile', 'soxr', 'matplotlib', 'scipy.signal']\n"
+        "print([name for name in names if name in sys.modules])"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=60
+    )
+    assert done.stdout.strip() == "[]"
+
+
 def test_the_figures_load_neither_sound_nor_compiler_nor_plots() -> None:
     code = (
         "import sys, preview.ui.app, preview.analysis.response\n"

@@ -16,6 +16,7 @@ from preview.errors import PartValueError
 from preview.session import AtEnd
 from preview.ui.changes import commands_between, render_command, with_value
 from preview.ui.desk import Desk
+from preview.ui.opamps import with_opamp_type
 from preview.values.notation import parse_value
 from preview.values.quality import Quality
 
@@ -212,8 +213,26 @@ def test_the_wall_of_the_output_is_the_nearer_rail(desk) -> None:
     assert desk.output_wall() == (5.0, "U1")
     desk.change(replace(desk.session, supply=Supply(9.0, 0.0)))
     assert desk.output_wall() == (9.0, "U1")
-    desk.do_opamp_type()
+    desk.change(with_opamp_type(desk.session, "perfect")[0])
     assert desk.output_wall() == (None, None)
+
+
+def test_the_wall_of_a_real_op_amp_is_where_it_stops_short_of_the_rail(desk) -> None:
+    # TL072 data sheet, Motorola p. 3: ±14 V into 10 kilohm on ±15 V.
+    desk.change(with_opamp_type(desk.session, "TL072")[0])
+    assert desk.output_wall() == (14.0, "U1")
+    # LM358 on a single supply: the lower limit, some mV above gnd, is no wall for a large signal.
+    desk.change(with_opamp_type(replace(desk.session, supply=Supply(9.0, 0.0)), "LM358")[0])
+    (site,) = desk.sites()
+    assert 0.0 < site.low_v < 0.5
+    assert desk.output_wall() == (site.high_v, "U1")
+
+
+def test_limits_are_worked_out_once_for_each_session(desk) -> None:
+    first = desk.sites()
+    assert desk.sites() is first
+    desk.change(with_opamp_type(desk.session, "TL072")[0])
+    assert [site.type for site in desk.sites()] == ["TL072"]
 
 
 def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> None:

@@ -11,10 +11,11 @@ from preview.circuit.opamp import OpAmpReading
 from preview.engine.messages import Snapshot
 from preview.meters.reading import LevelReading
 from preview.ui.desk import Desk
+from preview.ui.panels.opampline import opamp_row, slews
 from preview.ui.theme import Look
 from preview.ui.widgets.board import Board, Row, fit, row, row_cells, spread
 from preview.ui.widgets.levelbar import VoltAxis, level_bar, scale_line
-from preview.ui.words import db, dbu, duration, rails, volts
+from preview.ui.words import db, dbu, volts
 from preview.values.levels import ratio_db
 
 __all__ = ["MetersPanel"]
@@ -134,52 +135,31 @@ class MetersPanel(Board):
     def _opamp_rows(self, snapshot: Snapshot | None, width: int, room: int, now_s: float) -> list[Row]:
         palette = self.look.palette
         readings = snapshot.opamps if snapshot else ()
-        if not readings:
+        if snapshot is None or not readings:
             return [row((fit("", _LABEL) + "no op-amp reading yet", palette.faint))]
         if len(readings) > room > 0:
-            worst = sorted(readings, key=lambda r: (-r.clip_events, r.headroom_db))[:room]
+            worst = sorted(readings, key=lambda r: (-r.clip_events, not slews(r), r.headroom_db))[:room]
             readings = tuple(r for r in readings if r in worst)
-        lines = [self._opamp_row(reading, width, now_s) for reading in readings]
-        if snapshot is not None:
-            held = f" device limiter ×{snapshot.limited_blocks} "
-            style = palette.alarm if snapshot.limited_blocks else palette.faint
-            if snapshot.limited_blocks or row_cells(lines[0]) + len(held) <= width:  # clipping goes first
-                lines[0] = spread(lines[0], row((held, style)), width, palette.plain)
+        held = f" device limiter ×{snapshot.limited_blocks} "
+        style = palette.alarm if snapshot.limited_blocks else palette.faint
+        lines = []
+        for place, reading in enumerate(readings):
+            acted = place == 0 and snapshot.limited_blocks > 0
+            site = next((s for s in self.desk.sites() if s.designator == reading.designator), None)
+            lit = self._clip_lit(reading, now_s)
+            left = opamp_row(reading, site, palette, lit, width - (len(held) + 1 if acted else 0))
+            # clipping goes before a limiter that had nothing to do
+            shown = acted or (place == 0 and row_cells(left) + len(held) < width)
+            lines.append(spread(left, row((held, style)), width, palette.plain) if shown else left)
         return lines
 
-    def _opamp_row(self, reading: OpAmpReading, width: int, now_s: float) -> Row:
-        palette = self.look.palette
+    def _clip_lit(self, reading: OpAmpReading, now_s: float) -> bool:
+        """Whether the op-amp has clipped just now."""
         known_s, lit_until_s = self._lit.get(reading.designator, (0.0, -1e9))
         if reading.clipped_s > known_s:
             lit_until_s = now_s + _LIT_S
         self._lit[reading.designator] = (reading.clipped_s, lit_until_s)
-        # A visit to the rail that was under way when the counts were cleared is one visit since then.
-        events = max(reading.clip_events, 1) if reading.clipped_s > 0.0 else reading.clip_events
-        lit = events > 0 and now_s < lit_until_s
-        limited = any(
-            o.designator == reading.designator and o.type != "perfect" for o in self.desk.session.stage.opamps
-        )
-        if not limited:
-            room = " no limit"
-        elif not math.isfinite(reading.headroom_db):
-            room = f" rails {rails(self.desk.session.supply)}"
-        else:
-            room = f" {db(reading.headroom_db)} dB to the rails {rails(self.desk.session.supply)}"
-        light = f" {'CLIP' if events else 'clip'} ×{events} "
-        pieces = [
-            (fit(f" {reading.designator}", _LABEL - 1), palette.strong),
-            (room + "  ", palette.plain),
-            (light, palette.alarm if lit else palette.strong if events else palette.faint),
-            (
-                f" clipped {duration(reading.clipped_s)}",
-                palette.plain if events else palette.faint,
-            ),
-        ]
-        if width >= 120:
-            pieces.append((f"   swings {volts(reading.low_v)} to {volts(reading.high_v)}", palette.faint))
-        if reading.unsolved_steps:
-            pieces.append((f" UNSOLVED ×{reading.unsolved_steps} ", palette.alarm))
-        return row(*pieces)
+        return now_s < lit_until_s
 
 
 def _channels(word: str, reading: LevelReading, bars: int) -> list[_Channel]:

@@ -12,7 +12,7 @@ from preview.errors import printable
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
 from preview.ui.widgets.board import Board, Row, heading, row
-from preview.ui.words import code, value
+from preview.ui.words import code, type_name, value
 
 __all__ = ["SchematicPanel", "annotated", "drawing_width"]
 
@@ -55,7 +55,7 @@ def annotated(stage: Stage, selected: str | None) -> list[list[tuple[str, str | 
 
 def _label(part: TwoTerminal | OpAmp, blanks: int) -> str:
     """Designator and value in no more than the blanks behind the designator, one of them left free."""
-    text = part.type if isinstance(part, OpAmp) else code(part)
+    text = type_name(part.type) if isinstance(part, OpAmp) else code(part)
     return f"{part.designator} {text}" if len(text) + 2 <= blanks else part.designator
 
 
@@ -89,7 +89,7 @@ class SchematicPanel(Board):
         rows = []
         for part in stage.parts:
             if isinstance(part, OpAmp):
-                text = f"{part.designator}  {part.type}  + {part.plus}, - {part.minus}, out {part.out}"
+                text = f"{part.designator}  {type_name(part.type)}  + {part.plus}, - {part.minus}, out {part.out}"
             else:
                 text = f"{part.designator}  {value(part)}  from {part.nodes[0]} to {part.nodes[1]}"
             chosen = part.designator == selected

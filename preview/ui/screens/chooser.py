@@ -4,9 +4,11 @@ from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
 
+from rich.text import Text
 from textual.events import Click
 from textual.message import Message
 from textual.widget import Widget
+from textual.widgets import Static
 
 from preview.errors import printable
 from preview.ui.screens.dialog import Dialog
@@ -17,6 +19,8 @@ __all__ = ["Choice", "ChooserScreen"]
 
 Choice = tuple[str, str, str]
 """Answer, label, explanation."""
+_AROUND = 10
+"""Rows that the box needs around the choices, and what is left of the desk [cells]."""
 
 
 class _ChoiceBoard(Board):
@@ -50,12 +54,21 @@ class _ChoiceBoard(Board):
             left = width - 2 - len(text)
             result.append(
                 row(
-                    ("▸" if chosen else " ", palette.mark),
+                    (self._mark(index, chosen, height), palette.mark),
                     (text, palette.selected if chosen else palette.strong),
                     (f" {fit(printable(about), left)}" if left > 8 else "", palette.plain),
                 )
             )
         return result
+
+    def _mark(self, index: int, chosen: bool, height: int) -> str:
+        """An arrow at the chosen row, and where rows go on above or below."""
+        if chosen:
+            return "▸"
+        if index == self._first > 0:
+            return "▴"
+        last = self._first + height - 1
+        return "▾" if index == last < len(self.choices) - 1 else " "
 
     def on_click(self, event: Click) -> None:
         """Take the row."""
@@ -77,9 +90,13 @@ class ChooserScreen(Dialog[str]):
         The answer in force; its row is marked first.
     look : Look
         Colours.
+    heads : str
+        A line above the explanations; empty for none.
     """
 
-    def __init__(self, title: str, choices: Sequence[Choice], *, now: str, look: Look) -> None:
+    def __init__(
+        self, title: str, choices: Sequence[Choice], *, now: str, look: Look, heads: str = ""
+    ) -> None:
         super().__init__(
             printable(title),
             ("row_up", "and"),
@@ -89,12 +106,16 @@ class ChooserScreen(Dialog[str]):
         )
         self._choices = list(choices)
         self._look = look
+        self._heads = heads
         self._start = next((i for i, choice in enumerate(choices) if choice[0] == now), 0)
 
     def body(self) -> Iterable[Widget]:
         """See :class:`Dialog`."""
         board = _ChoiceBoard(self._look, self._choices, self._start)
-        board.styles.height = min(len(self._choices), 14)
+        board.styles.height = min(len(self._choices), max(1, self.app.size.height - _AROUND))
+        if self._heads:
+            labels = max(len(label) for _, label, _ in self._choices) + 2
+            yield Static(Text(" " * (labels + 3) + self._heads), classes="heads")
         yield board
 
     def _move(self, by: int) -> None:
