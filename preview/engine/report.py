@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from pathlib import Path
 
 from preview.audio.sink import keeps_comment
@@ -99,7 +100,13 @@ def _opamp_line(reading: OpAmpReading) -> str:
     line = f"{reading.designator:<4} peak {format_volts(reading.peak_v)}"
     if reading.clip_events:
         events = f"{reading.clip_events} clip event{'s' * (reading.clip_events != 1)}"
-        return f"{line}  at the rail: {events}, {format_value(reading.clipped_s, 'time')} in all"
-    if reading.headroom_db == float("inf"):
-        return f"{line}  no rail" if reading.peak_v else line
-    return f"{line}  headroom {format_db(reading.headroom_db)}"
+        line = f"{line}  at the rail: {events}, {format_value(reading.clipped_s, 'time')} in all"
+    elif reading.headroom_db == float("inf"):
+        line = f"{line}  no rail" if reading.peak_v else line
+    else:
+        line = f"{line}  headroom {format_db(reading.headroom_db)}"
+    if math.isfinite(reading.slew_limit_v_per_s):
+        at_limit = reading.slew_peak_v_per_s >= 0.999 * reading.slew_limit_v_per_s
+        fastest, limit = reading.slew_peak_v_per_s / 1e6, reading.slew_limit_v_per_s / 1e6
+        line = f"{line}  slew {fastest:.3g} of {limit:.3g} V/µs{', at its limit' if at_limit else ''}"
+    return line

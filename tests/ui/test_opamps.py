@@ -276,6 +276,9 @@ def test_slewing_is_a_word_and_stays_when_space_is_short(real, engine) -> None:
         assert "CLIP ×12345" in line
         assert "dB to ±14 V" in line
         assert ("device limiter ×2" in line) == (limited == 2)
+    assert line_of(real, engine, slew_peak_v_per_s=13e6, **given).startswith(" U1 TL072 "), (
+        "the type before figures"
+    )
     assert "SLEWS  13.0 of 13 V/µs" in line_of(real, engine, 160, slew_peak_v_per_s=13e6, **given)
 
 

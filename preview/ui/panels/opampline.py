@@ -30,7 +30,8 @@ def opamp_row(reading: OpAmpReading, site: OpAmpSite | None, palette: Palette, l
     """The line of one op-amp.
 
     Rails and clipping are always there; what else finds room in ``width`` cells is there too: that it slews,
-    the time at the rails, its slew rate, its type, its current, its swing, in this order.
+    the time at the rails, its slew rate (after the type where the word SLEWS has said it), its type, its current,
+    its swing, in this order.
 
     Parameters
     ----------
@@ -58,11 +59,13 @@ def opamp_row(reading: OpAmpReading, site: OpAmpSite | None, palette: Palette, l
         figures = slew_of(reading.slew_peak_v_per_s, reading.slew_limit_v_per_s)
         if slewing:
             offered += [(0, (("  ", palette.plain), (" SLEWS ", palette.alarm)))]
-        offered += [(2, ((f" {figures}" if slewing else f"  slew {figures}", palette.plain),))]
+        offered += [
+            (4 if slewing else 2, ((f" {figures}" if slewing else f"  slew {figures}", palette.plain),))
+        ]
     if reading.current_peak_a > 0.0:
-        offered += [(4, ((f"  {milliamperes(reading.current_peak_a)}", palette.plain),))]
+        offered += [(5, ((f"  {milliamperes(reading.current_peak_a)} out", palette.plain),))]
     if width >= 120:
-        offered += [(5, ((f"   swings {volts(reading.low_v)} to {volts(reading.high_v)}", palette.faint),))]
+        offered += [(6, ((f"   swings {volts(reading.low_v)} to {volts(reading.high_v)}", palette.faint),))]
     return _that_fit(offered, width)
 
 
