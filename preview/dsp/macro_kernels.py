@@ -26,6 +26,7 @@ from preview.dsp.kernels import (
     UNSOLVED,
     add_states,
     compiled,
+    note_path,
     recur,
     signal_part,
 )
@@ -361,17 +362,7 @@ def regime_steps(
     for i in range(taken):
         out[first + i] = da[i]
     for o in range(k):
-        w, da = track[n + o], drive[hot + 1 + o]
-        top, bottom, fastest, most = st[o, HIGH], st[o, LOW], st[o, SLEW], st[o, CURRENT]
-        for i in range(taken):
-            w1 = w[i + 1]
-            move = abs(w1 - w[i])
-            amps = abs(da[i])
-            top = w1 if w1 > top else top
-            bottom = w1 if w1 < bottom else bottom
-            fastest = move if move > fastest else fastest
-            most = amps if amps > most else most
-        st[o, HIGH], st[o, LOW], st[o, SLEW], st[o, CURRENT] = top, bottom, fastest, most
+        note_path(st[o], track[n + o], drive[hot + 1 + o], taken)
         if kinds[o] >= AT_HIGH:
             st[o, CLIPPED] += taken
     return taken

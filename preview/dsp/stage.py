@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from preview.circuit.netlist import Branch, Netlist, OpAmpSite
 from preview.circuit.opamp import IDEAL, OpAmpModel, OpAmpReading
 from preview.circuit.parts import PartKind
-from preview.dsp import kernels
+from preview.dsp import kernels, rate_kernels
 from preview.dsp.block import Volts
 from preview.dsp.cores import Matrices, core_for
 from preview.dsp.oversample import LATENCY_FRAMES, design, factor_for
@@ -170,11 +170,13 @@ class StageProcessor:
         while done < frames:
             count = min(BLOCK_FRAMES, frames - done)
             steps = count * f.factor
-            kernels.up_block(volts_in, done, count, self._x, self._a, self._u, f.up_1, f.up_2, self._room[0])
+            rate_kernels.up_block(
+                volts_in, done, count, self._x, self._a, self._u, f.up_1, f.up_2, self._room[0]
+            )
             leg = self._glide.steps_per_leg if self._glide is not None else 0
             self._core.run(self._matrices, self._u, self._mean, steps, self._at, leg)
-            kernels.keep_last(self._u, steps)
-            kernels.down_block(
+            rate_kernels.keep_last(self._u, steps)
+            rate_kernels.down_block(
                 self._mean, done, count, self._split, self._w, volts_out, f.down_1, f.down_2, self._room
             )
             if self._glide is not None:

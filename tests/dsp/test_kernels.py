@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from preview.dsp import kernels
+from preview.dsp import kernels, rate_kernels
 from preview.dsp.stage import StageProcessor
 from preview.values.quality import Quality
 from tests.nets import ALL
@@ -74,7 +74,7 @@ def test_solve_small_refuses_a_singular_matrix() -> None:
 
 def test_convolution_equals_numpy() -> None:
     taps, signal = RNG.normal(size=16), RNG.normal(size=100)
-    for function in (kernels.convolve_phase, kernels.convolve_phase.py_func):
+    for function in (rate_kernels.convolve_phase, rate_kernels.convolve_phase.py_func):
         result = np.empty(50)
         function(taps, signal, 20, 50, result)
         np.testing.assert_allclose(result, np.convolve(signal, taps)[20:70], rtol=1e-12)
@@ -90,16 +90,23 @@ def test_running_kernels_equal_their_source(
     results = []
     for source in (False, True):
         if source:
-            for kernel in (
-                "up_block",
-                "run_steps",
-                "keep_last",
-                "down_block",
-                "checked_steps",
-                "newton",
-                "recur",
+            for name_of, names in (
+                (
+                    kernels,
+                    (
+                        "run_steps",
+                        "free_steps",
+                        "held_steps",
+                        "checked_steps",
+                        "newton",
+                        "recur",
+                        "note_path",
+                    ),
+                ),
+                (rate_kernels, ("up_block", "keep_last", "down_block")),
             ):
-                monkeypatch.setattr(kernels, kernel, getattr(kernels, kernel).py_func)
+                for kernel in names:
+                    monkeypatch.setattr(name_of, kernel, getattr(name_of, kernel).py_func)
         stage = StageProcessor(circuit, sample_rate_hz=48_000, channels=2, quality=Quality.DRAFT)
         if gliding:
             stage.glide(stage.plan({circuit.branches[0].designator: circuit.branches[0].value * 1.5}))

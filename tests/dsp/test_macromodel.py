@@ -395,3 +395,23 @@ def test_the_kernels_step_equals_scipys() -> None:
         e.base[0], e.turn[0], e.rate[0], e.out[0], e.current[0], 1, np.zeros((4, d, d)), M, constant, by_slew
     )
     np.testing.assert_allclose(M[: n + 2 * k + 1], following_step(e), rtol=1e-9, atol=1e-12)
+
+
+@pytest.mark.parametrize("gliding", [False, True])
+def test_running_kernels_equal_their_source(gliding: bool, monkeypatch: pytest.MonkeyPatch) -> None:
+    circuit = with_model(LOW_PASS, opamp(3e6, 0.5e6, open_loop_gain=1e5, output_resistance_ohm=75.0))
+    volts = np.random.default_rng(2).normal(0, 10.0, (6, 1))
+    results = []
+    for source in (False, True):
+        if source:
+            for name in ("run_macro", "regime_steps", "walk", "step_matrix", "fill_levels", "generator", "lasts"):
+                monkeypatch.setattr(macro_kernels, name, getattr(macro_kernels, name).py_func)
+        stage = StageProcessor(circuit, sample_rate_hz=48_000, channels=1, quality=Quality.DRAFT)
+        if gliding:
+            stage.glide(stage.plan({"R1": 12e3}))
+        out = np.empty_like(volts)
+        stage.process(volts, out)
+        results.append((out, stage.readings()[0]))
+    np.testing.assert_allclose(results[0][0], results[1][0], rtol=1e-9, atol=1e-12)
+    assert results[0][1].clip_events == results[1][1].clip_events
+    assert results[0][1].slew_peak_v_per_s == pytest.approx(results[1][1].slew_peak_v_per_s, rel=1e-9)
