@@ -363,6 +363,12 @@ def regime_steps(
         out[first + i] = da[i]
     for o in range(k):
         note_path(st[o], track[n + o], drive[hot + 1 + o], taken)
+        if kinds[o] == FOLLOWS:  # its rate at the end of a step, not only its mean over one
+            fastest = st[o, SLEW]
+            r = drive[size + o]
+            for i in range(taken):
+                fastest = max(fastest, abs(r[i]))
+            st[o, SLEW] = fastest
         if kinds[o] >= AT_HIGH:
             st[o, CLIPPED] += taken
     return taken
