@@ -20,6 +20,7 @@ from types import FrameType
 from typing import TYPE_CHECKING, NoReturn
 
 from preview import __version__
+from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
 from preview.errors import PreviewError, UsageError, printable
 
@@ -150,7 +151,7 @@ def _parser() -> argparse.ArgumentParser:
         default="float",
         help="sample format; float (default) is 32-bit floating point",
     )
-    render.add_argument("--json", action="store_true", help="the result as one JSON object")
+    _add_shapes(render)
     add_stage_options(render)
 
     response = command("response", _response, "gain, phase, group delay, corners and impedances of the stage")
@@ -167,20 +168,38 @@ def _parser() -> argparse.ArgumentParser:
         help="IIR second-order sections of the stage by the bilinear transform",
     )
     response.add_argument("--prewarp", metavar="HZ", help="frequency at which the sections are exact")
-    shape = response.add_mutually_exclusive_group()
-    shape.add_argument("--json", action="store_true", help="one JSON object")
-    shape.add_argument("--csv", action="store_true", help="comma-separated values")
+    _add_shapes(response)
     add_stage_options(response)
 
     stages = command("stages", _stages, "the stages that come with Preview, or the text of one")
     stages.add_argument("name", nargs="?", metavar="NAME", help="a stage")
-    stages.add_argument("--json", action="store_true", help="one JSON object")
+    _add_shapes(stages)
     opamps = command("opamps", _opamps, "the op-amp types side by side, or one and its sources")
     opamps.add_argument("name", nargs="?", metavar="NAME|FILE", help="an op-amp type")
-    opamps.add_argument("--json", action="store_true", help="one JSON object")
+    _add_shapes(opamps)
     devices = command("devices", _devices, "the sound devices")
-    devices.add_argument("--json", action="store_true", help="one JSON object")
+    _add_shapes(devices)
     return parser
+
+
+def _add_shapes(command: argparse.ArgumentParser) -> None:
+    shape = command.add_mutually_exclusive_group()
+    shape.add_argument("--json", action="store_true", help="one JSON object")
+    shape.add_argument("--csv", action="store_true", help="comma-separated values")
+
+
+def _reported(
+    options: argparse.Namespace,
+    body: dict[str, object],
+    rows: str,
+    lines: Iterable[str],
+    *,
+    common: bool = False,
+) -> str:
+    """A report in the shape asked for; ``rows`` names the list that makes a table's lines."""
+    if options.json:
+        return json_text(body)
+    return csv_text(body, rows, common=common) if options.csv else "\n".join(lines)
 
 
 def _name(text: str) -> str:
@@ -284,10 +303,10 @@ def _render(options: argparse.Namespace) -> int:
     from preview.analysis.response import response_error_db
 
     deviation_db = response_error_db(session.netlist(), result.sample_rate_hz, session.quality)
-    if options.json:
-        text = json_text(render_object(session, result, deviation_db, out))
-    else:
-        text = "\n".join(render_lines(result, deviation_db, out))
+    body = render_object(session, result, deviation_db, out)
+    if options.csv:
+        del body["understood"]
+    text = _reported(options, body, "opamps", render_lines(result, deviation_db, out), common=True)
     (_say if options.out == "-" else print)(text)
     return 0
 
@@ -364,13 +383,10 @@ def _stages(options: argparse.Namespace) -> int:
             stages.append(find_stage(name))
         except PreviewError as error:  # one of the person's own; the others are still there
             _warn([str(error)])
-    if options.json:
-        listed = [{"name": s.name, "title": s.title, "about": s.about} for s in stages]
-        print(json_text({"command": "stages", "stages": listed}))
-    else:
-        width = max(len(s.name) for s in stages)
-        for s in stages:
-            print(f"{s.name:<{width}}  {printable(s.title)}")
+    listed = [{"name": s.name, "title": s.title, "about": s.about} for s in stages]
+    width = max(len(s.name) for s in stages)
+    lines = [f"{s.name:<{width}}  {printable(s.title)}" for s in stages]
+    print(_reported(options, {"command": "stages", "stages": listed}, "stages", lines))
     return 0
 
 
@@ -379,23 +395,25 @@ def _opamps(options: argparse.Namespace) -> int:
 
     body, lines, problems = opamp_report(options.name)
     _warn(problems)
-    print(json_text({"command": "opamps", **body}) if options.json else "\n".join(lines))
+    if "opamps" not in body and options.csv:
+        body = {"opamps": [body]}
+    print(_reported(options, {"command": "opamps", **body}, "opamps", lines))
     return 0
 
 
 def _devices(options: argparse.Namespace) -> int:
+    from dataclasses import asdict
+
     from preview.audio.devices import output_devices
 
     devices = output_devices()
-    if options.json:
-        from dataclasses import asdict
-
-        print(json_text({"command": "devices", "devices": [asdict(d) for d in devices]}))
-    else:
-        for d in devices:
-            mark = "*" if d.is_default else " "
-            rate = f"{d.default_sample_rate_hz:g} Hz, up to {d.max_output_channels} channels"
-            print(f"{mark} {printable(d.name)}  ({printable(d.host_api)}, {rate})")
-        if not devices:
-            _say("preview: there is no sound device")
+    if not devices:
+        _say("preview: there is no sound device")
+    lines = [
+        f"{'*' if d.is_default else ' '} {printable(d.name)}  ({printable(d.host_api)}, "
+        f"{d.default_sample_rate_hz:g} Hz, up to {d.max_output_channels} channels)"
+        for d in devices
+    ]
+    body: dict[str, object] = {"command": "devices", "devices": [asdict(d) for d in devices]}
+    print(_reported(options, body, "devices", lines))
     return 0

@@ -298,3 +298,28 @@ def test_a_broken_stage_of_ones_own_does_not_hide_the_others(capsys, tmp_path, m
     assert {"mine", "inverting-low-pass"} <= names
     assert not {"broken", "folder"} & names
     assert [line.startswith("preview: warning: ") for line in err.splitlines()] == [True, True]
+
+
+@pytest.mark.parametrize("command", [["stages"], ["opamps"], ["opamps", "TL072"]])
+def test_csv_has_the_rows_of_json(command, capsys):
+    assert main([*command, "--json"]) == 0
+    body = json.loads(capsys.readouterr().out)
+    expected = body[command[0]] if len(command) == 1 else [body]
+    assert main([*command, "--csv"]) == 0
+    rows = list(csv.DictReader(io.StringIO(capsys.readouterr().out)))
+    assert [row["name"] for row in rows] == [row["name"] for row in expected]
+    for row, wanted in zip(rows, expected, strict=True):
+        for key, value in wanted.items():
+            if isinstance(value, float):
+                assert float(row[key]) == value
+
+
+def test_render_csv_has_a_row_for_each_op_amp_with_the_figures_of_the_file(tmp_path, capsys):
+    source = tmp_path / "tone.wav"
+    soundfile.write(source, 0.1 * np.sin(np.arange(4800) / 10), 48_000, subtype="FLOAT")
+    assert main(["render", str(source), str(tmp_path / "out.wav"), "--csv"]) == 0
+    (row,) = csv.DictReader(io.StringIO(capsys.readouterr().out))
+    assert row["name"] == "U1"
+    assert row["frames"] == "4800"
+    assert row["slew_limit_v_per_s"] == ""
+    assert float(row["input_peak_v"]) == pytest.approx(0.1 * 8.70, rel=0.01)
