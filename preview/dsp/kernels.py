@@ -49,6 +49,9 @@ def in_cache(name: str) -> bool:
 MAX_ITERATIONS = 40
 """Newton steps that a limited step may take; 2 to 5 are usual."""
 
+MAX_ROUNDS = 200
+"""Rounds over the op-amps of a step that Newton's method does not solve."""
+
 CHUNK = 128
 """Steps that are taken at a time while nobody limits."""
 
@@ -231,6 +234,55 @@ def newton(
 
 
 @compiled
+def one_by_one(W: Any, v: Any, ask: Any, low: Any, high: Any, n: int, k: int, work: Any) -> bool:
+    """What ``newton`` solves, where its steps go round in circles: one op-amp at a time, the others held.
+
+    With the others held the mean of one output is the root of a continuous function that is not above zero at the
+    lower rail and not below it at the upper one, so halving finds it. A cascade is done in one round.
+    """
+    c_mean = n + k + 3
+    c_end = c_mean + k
+    for _ in range(MAX_ROUNDS):
+        change = 0.0
+        scale = 0.0
+        for i in range(k):
+            end0, mean0 = work[2, i], work[2, k + i]
+            for j in range(k):
+                if j != i:
+                    end0 += W[n + i, c_mean + j] * v[c_mean + j] + W[n + i, c_end + j] * v[c_end + j]
+                    mean0 += W[n + k + i, c_mean + j] * v[c_mean + j] + W[n + k + i, c_end + j] * v[c_end + j]
+            end_m, end_e = W[n + i, c_mean + i], W[n + i, c_end + i]
+            mean_m, mean_e = W[n + k + i, c_mean + i], W[n + k + i, c_end + i]
+            if np.isfinite(low[i]) and np.isfinite(high[i]):
+                below, above = low[i], high[i]
+                y, y1, share = 0.0, 0.0, 0.0
+                for _turn in range(64):
+                    y = 0.5 * (below + above)
+                    y1 = min(max((end0 + end_m * y) / (1.0 - end_e), low[i]), high[i])
+                    end = end0 + end_m * y + end_e * y1
+                    value, _m, _e, share = clamped_mean(
+                        ask[i], mean0 + mean_m * y + mean_e * y1, end, low[i], high[i]
+                    )
+                    if y - value > 0.0:
+                        above = y
+                    else:
+                        below = y
+            else:  # no rails: two linear equations
+                det = (1.0 - mean_m) * (1.0 - end_e) - mean_e * end_m
+                y = (mean0 * (1.0 - end_e) + mean_e * end0) / det
+                y1 = (end0 * (1.0 - mean_m) + end_m * mean0) / det
+                share = 0.0
+            change = max(change, abs(y - v[c_mean + i]), abs(y1 - v[c_end + i]))
+            scale = max(scale, abs(y), abs(y1))
+            v[c_mean + i] = y
+            v[c_end + i] = y1
+            work[4, i] = share
+        if change <= 1e-12 * scale + 1e-300:
+            return True
+    return False
+
+
+@compiled
 def checked_steps(
     free: Any,
     bound: Any,
@@ -299,7 +351,9 @@ def checked_steps(
                 for b in range(c_mean):
                     t += W[n + a, b] * v[b]
                 work[2, a] = t
-            if not newton(W, v, ask, low, high, n, k, work, matrix, direction):
+            if not newton(W, v, ask, low, high, n, k, work, matrix, direction) and not one_by_one(
+                W, v, ask, low, high, n, k, work
+            ):
                 for j in range(k):
                     stats[j, UNSOLVED] += 1.0
             for a in range(rows):

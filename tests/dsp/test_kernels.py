@@ -118,3 +118,22 @@ def test_running_kernels_equal_their_source(
         assert compiled.clip_events == plain.clip_events
         assert compiled.peak_v == pytest.approx(plain.peak_v, rel=1e-12)
         assert compiled.clipped_s == pytest.approx(plain.clipped_s, rel=1e-9)
+
+
+def test_one_by_one_finds_what_newton_finds(monkeypatch: pytest.MonkeyPatch) -> None:
+    # the fallback alone, on every limited step of two op-amps and of three in a loop
+    volts = np.random.default_rng(4).normal(0, 60.0, (60, 1))
+    for name in ("two-sections", "sallen-key"):
+        stage = StageProcessor(ALL[name], sample_rate_hz=48_000, channels=1, quality=Quality.DRAFT)
+        by_newton = np.empty_like(volts)
+        stage.process(volts, by_newton)
+        with monkeypatch.context() as patch:
+            for kernel in ("run_steps", "checked_steps"):
+                patch.setattr(kernels, kernel, getattr(kernels, kernel).py_func)
+            patch.setattr(kernels, "newton", lambda *arguments: False)
+            stage = StageProcessor(ALL[name], sample_rate_hz=48_000, channels=1, quality=Quality.DRAFT)
+            alone = np.empty_like(volts)
+            stage.process(volts, alone)
+        assert sum(r.clip_events for r in stage.readings()) > 0
+        assert sum(r.unsolved_steps for r in stage.readings()) == 0
+        np.testing.assert_allclose(alone, by_newton, rtol=0, atol=1e-9)
