@@ -1,4 +1,6 @@
-"""The sample loops, compiled. One file, no module state that the loops read, no fast-math.
+"""The sample loops of ideal op-amps, compiled; no module state that the loops read, no fast-math.
+
+The other kernel files take the decorator, and what they share, from here.
 
 Shapes: c channels, n states, k op-amps, r = n + 3k + 1 rows of a step. Everything is passed in and changed in
 place; nothing allocates. Arithmetic goes sample by sample in one fixed order, so the samples do not depend on
@@ -433,6 +435,20 @@ def add_states(M: Any, track: Any, row: int, size: int, count: int, total: Any) 
 
 
 @compiled
+def take_steps(
+    M: Any, track: Any, drive: Any, hot: int, size: int, first: int, taken: int, v: Any, out: Any
+) -> None:
+    """Move the states on by the steps taken, finish the rows that no state depends on, put out the first of them."""
+    for b in range(size):
+        v[b] = track[b, taken]
+    for a in range(hot, M.shape[0]):
+        add_states(M, track, a, size, taken, drive[a])
+    mean = drive[hot]
+    for i in range(taken):
+        out[first + i] = mean[i]
+
+
+@compiled
 def note_path(s: Any, path: Any, current: Any, count: int) -> None:
     """Take the ends of some steps of one op-amp, and its currents, into its statistics."""
     top, bottom, fastest, most = s[HIGH], s[LOW], s[SLEW], s[CURRENT]
@@ -518,13 +534,7 @@ def free_steps(
         taken = steps_off(track[n + j], drive[size + j], taken, low[j], high[j])
     if taken == 0:
         return 0
-    for b in range(size):
-        v[b] = track[b, taken]
-    for a in range(hot, rows):
-        add_states(M, track, a, size, taken, drive[a])
-    da = drive[hot]
-    for i in range(taken):
-        out[first + i] = da[i]
+    take_steps(M, track, drive, hot, size, first, taken, v, out)
     for j in range(k):
         ask[j] = v[n + j]
         note_path(st[j], track[n + j], drive[hot + 1 + j], taken)
@@ -567,13 +577,7 @@ def held_steps(
         taken = steps_at(ask[j], end, mean, taken, v[n + j], side)
     if taken == 0:
         return 0
-    for b in range(n):
-        v[b] = track[b, taken]
-    for a in range(hot, rows):
-        add_states(W, track, a, n, taken, drive[a])
-    da = drive[hot]
-    for i in range(taken):
-        out[first + i] = da[i]
+    take_steps(W, track, drive, hot, n, first, taken, v, out)
     for j in range(k):
         ask[j] = drive[n + j, taken - 1]
         most = st[j, CURRENT]

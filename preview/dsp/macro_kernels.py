@@ -29,6 +29,7 @@ from preview.dsp.kernels import (
     note_path,
     recur,
     signal_part,
+    take_steps,
 )
 
 LEVELS = 7
@@ -354,13 +355,7 @@ def regime_steps(
         taken = lasts(kinds[o], track[n + o], r, taken, low[o], high[o], up[o], down[o])
     if taken == 0:
         return 0
-    for b in range(size):
-        v[b] = track[b, taken]
-    for a in range(hot, rows):
-        add_states(M, track, a, size, taken, drive[a])
-    da = drive[hot]
-    for i in range(taken):
-        out[first + i] = da[i]
+    take_steps(M, track, drive, hot, size, first, taken, v, out)
     for o in range(k):
         note_path(st[o], track[n + o], drive[hot + 1 + o], taken)
         if kinds[o] == FOLLOWS:  # its rate at the end of a step, not only its mean over one
@@ -451,11 +446,13 @@ def run_macro(
             for o in range(k):
                 if kinds[o] == FOLLOWS:
                     mask |= 1 << o
-            leg = last
+            place = at + done
+            leg = min(place // leg_steps, last) if leg_steps > 0 else last
+            if known[whole + 1, 0] != leg:  # what was met belongs to another station
+                known[:, :] = 0
+                known[whole + 1, 0] = leg
             taken = 0
             if leg_steps > 0:
-                place = at + done
-                leg = min(place // leg_steps, last)
                 after = min(leg + 1, last)
                 part = (place - leg * leg_steps) / leg_steps if leg < last else 0.0
                 count = 1
@@ -484,10 +481,7 @@ def run_macro(
                     )
             else:
                 count = min(span, steps - done)
-                if known[mask, 0] == 0 or known[whole + 1, 0] != leg:
-                    if known[whole + 1, 0] != leg:
-                        known[:, :] = 0
-                        known[whole + 1, 0] = leg
+                if known[mask, 0] == 0:
                     step_matrix(
                         base[leg],
                         turn[leg],
@@ -524,9 +518,6 @@ def run_macro(
                 span = min(2 * span, chunk)
                 continue
             span = max(8, span // 2)
-            if known[whole + 1, 0] != leg:
-                known[:, :] = 0
-                known[whole + 1, 0] = leg
             u0, u1 = uc[done + 1], uc[done + 2]
             um = (13.0 * (u0 + u1) - (uc[done] + uc[done + 3])) * (1.0 / 24.0)
             for b in range(size):

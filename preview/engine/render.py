@@ -21,6 +21,7 @@ from preview.dsp.stage import StageProcessor
 from preview.engine.loop import Samples, SignalPath, peak
 from preview.errors import CircuitError
 from preview.session import Session
+from preview.values.levels import FullScale, full_scale_comment
 from preview.values.quality import Quality
 
 __all__ = [
@@ -158,7 +159,8 @@ def render(
         out_full_scale_v=scale_v,
         max_frames=chunk_frames,
     )
-    comment = f"full scale {scale_v:.9g} V; preview {__version__}; stage {session.stage.name}"
+    scale = full_scale_comment(FullScale(scale_v, f"{scale_v:.9g} V"))
+    comment = f"{scale}; preview {__version__}; stage {session.stage.name}"
     with FileSink(out, sample_rate_hz=rate, channels=channels, depth=depth, comment=comment) as sink:
         started_s = time.perf_counter()
         frames, input_peak_v, output_peak_v = stream(path, source, sink, progress=progress)

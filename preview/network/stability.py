@@ -8,7 +8,7 @@ from numpy.typing import NDArray
 from preview.circuit.netlist import Netlist
 from preview.errors import CircuitError
 from preview.network.expansion import expanded, expanded_topology, gain_bandwidth_hz, has_real_opamps
-from preview.network.statespace import StateSpace, Topology
+from preview.network.statespace import Topology
 
 __all__ = ["check_stable", "closed_loop_poles"]
 
@@ -47,7 +47,7 @@ def _refuse_growth(poles: NDArray[np.complex128]) -> None:
         )
 
 
-def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
+def check_stable(netlist: Netlist) -> None:
     """Refuse a circuit that runs away.
 
     An ideal op-amp's equations do not know which input is which. So each op-amp is first taken as an integrator
@@ -62,9 +62,8 @@ def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
     if has_real_opamps(netlist):
         _check_real(netlist)
         return
-    if space is None:
-        topology = Topology(netlist)
-        space = topology.evaluate(topology.values_of(netlist)[None])
+    topology = Topology(netlist)
+    space = topology.evaluate(topology.values_of(netlist)[None])
     A, B, C_e, D_e = space.A[0], space.B[0], space.C_e[0], space.D_e[0]
     wt = TRIAL_GAIN_BANDWIDTH_RAD
     loop = np.block([[A, B[:, 1:]], [wt * C_e, wt * D_e[:, 1:]]])
@@ -78,8 +77,6 @@ def check_stable(netlist: Netlist, space: StateSpace | None = None) -> None:
             )
     try:
         closed = space.closed()[0][0]
-    except (
-        CircuitError
-    ):  # an improper response, such as a bare differentiator's: there is no such state space
-        return
+    except CircuitError:
+        return  # an improper response, such as a bare differentiator's, has no such state space
     _refuse_growth(np.linalg.eigvals(closed))
