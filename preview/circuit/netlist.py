@@ -22,8 +22,12 @@ __all__ = [
     "SOURCE_DESIGNATOR",
     "SOURCE_NODE",
     "Branch",
+    "Charge",
+    "FixedNode",
+    "Junction",
     "Netlist",
     "OpAmpSite",
+    "Port",
     "check_supply",
     "netlist",
 ]
@@ -71,6 +75,67 @@ class OpAmpSite:
 
 
 @dataclass(frozen=True, slots=True)
+class Junction:
+    """Current of a diode by its voltage, series resistance included.
+
+    Forward ``i = Is (exp((v - i Rs) / Vt) - 1)`` [Shockley1949]; with a breakdown also, against it,
+    ``i = Iz exp((-v - Vz') / Vz_slope)`` through the same resistance, so that it carries ``Iz`` at ``breakdown_v``.
+    """
+
+    saturation_a: float
+    """Is [A]."""
+    slope_v: float
+    """Vt, emission coefficient times kT/q at its temperature [V]."""
+    series_ohm: float
+    """Rs [ohm], above zero."""
+    breakdown_v: float = math.inf
+    """Reverse voltage at ``breakdown_a`` [V]; inf where it does not break down."""
+    breakdown_a: float = 5e-3
+    """Iz [A]."""
+    breakdown_slope_v: float = 0.05
+    """Vz_slope [V]."""
+
+
+@dataclass(frozen=True, slots=True)
+class Charge:
+    """What a class 2 dielectric adds to a linear capacitor: charge ``C (V0 atan(v / V0) - v)``.
+
+    Its small-signal capacitance is ``C / (1 + (v / V0)^2)``, half at ``half_v``.
+    """
+
+    farad: float
+    """C, capacitance without a voltage [F]; the linear capacitor itself stands among the branches."""
+    half_v: float
+    """V0 [V]."""
+
+
+@dataclass(frozen=True, slots=True)
+class Port:
+    """A nonlinear two-terminal element; the current flows from ``a`` to ``b``."""
+
+    designator: str
+    """D1, C3 ..."""
+    a: str
+    """Anode, or first node."""
+    b: str
+    """Cathode, or second node."""
+    law: Junction | Charge
+    """Its current or its charge by its voltage."""
+
+
+@dataclass(frozen=True, slots=True)
+class FixedNode:
+    """A node held at a constant voltage against gnd."""
+
+    designator: str
+    """V1 ..."""
+    node: str
+    """The node."""
+    volts: float
+    """Its voltage [V]."""
+
+
+@dataclass(frozen=True, slots=True)
 class Netlist:
     """A circuit ready to be solved."""
 
@@ -82,6 +147,10 @@ class Netlist:
     """Every resistor, capacitor and inductor, source and load included."""
     opamps: tuple[OpAmpSite, ...]
     """Every op-amp."""
+    ports: tuple[Port, ...] = ()
+    """Every diode, and the nonlinear part of every class 2 capacitor."""
+    fixed: tuple[FixedNode, ...] = ()
+    """Every node held at a constant voltage."""
 
     @property
     def nodes(self) -> tuple[str, ...]:
@@ -94,6 +163,11 @@ class Netlist:
             names[opamp.plus] = None
             names[opamp.minus] = None
             names[opamp.out] = None
+        for port in self.ports:
+            names[port.a] = None
+            names[port.b] = None
+        for fixed in self.fixed:
+            names[fixed.node] = None
         names.pop(GND, None)
         return tuple(names)
 

@@ -3,9 +3,26 @@
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Collection
+from dataclasses import dataclass, replace
+from typing import Any, Literal
 
-__all__ = ["BUILT_IN_TYPES", "IDEAL", "PERFECT", "OpAmpModel", "OpAmpReading"]
+__all__ = [
+    "BUILT_IN_TYPES",
+    "IDEAL",
+    "LIMITS",
+    "PERFECT",
+    "Limit",
+    "OpAmpModel",
+    "OpAmpReading",
+    "Overdrive",
+]
+
+Overdrive = Literal["clips", "reverses"]
+"""``clips``: the input stage follows no further; ``reverses``: the output runs to the opposite rail."""
+Limit = Literal["speed", "slew", "swing", "current", "input range", "offset", "noise"]
+"""What can be taken away from an op-amp, to hear what it does."""
+LIMITS: tuple[Limit, ...] = ("speed", "slew", "swing", "current", "input range", "offset", "noise")
 
 BUILT_IN_TYPES = ("perfect", "ideal")
 """``perfect`` has no limit at all; ``ideal`` has no limit but the rails."""
@@ -33,8 +50,27 @@ class OpAmpModel:
     """From the highest output up to the positive rail at the lightest load that is stated [V]."""
     swing_low_v: float = 0.0
     """From the negative rail up to the lowest output at the lightest load that is stated [V]."""
-    current_limit_a: float = math.inf
-    """Largest output current, the smaller of source and sink where they differ [A]."""
+    swing_high_points: tuple[tuple[float, float], ...] = ()
+    """Output current out of the pin [A] and distance from the highest output up to the positive rail there [V],
+    by rising current; empty where the swing does not depend on the load."""
+    swing_low_points: tuple[tuple[float, float], ...] = ()
+    """Output current into the pin [A] and distance from the negative rail up to the lowest output there [V]."""
+    current_source_a: float = math.inf
+    """Largest current out of the output [A]."""
+    current_sink_a: float = math.inf
+    """Largest current into the output, as a magnitude [A]."""
+    phase_margin_deg: float = 90.0
+    """Phase margin at unity gain, by a second pole; 90 for none [deg]."""
+    input_farad: float = 0.0
+    """Capacitance of each input to gnd [F]."""
+    input_differential_farad: float = 0.0
+    """Capacitance between the inputs [F]."""
+    input_overdrive: Overdrive = "clips"
+    """What happens when the + input leaves the common-mode range."""
+    crossover_v: float = 0.0
+    """Dead zone that the output stage crosses between sourcing and sinking [V]; 0 for none."""
+    crossover_a: float = 0.0
+    """Current that the output sinks on the near side of the dead zone [A]."""
     offset_v: float = 0.0
     """Input offset voltage [V]."""
     bias_a: float = 0.0
@@ -66,8 +102,53 @@ class OpAmpModel:
 
     @property
     def real(self) -> bool:
-        """Whether it is a type with a speed of its own, and not ``perfect`` or ``ideal``."""
-        return math.isfinite(self.gain_bandwidth_hz)
+        """Whether it is a type with figures of its own, and not ``perfect`` or ``ideal``."""
+        return self.type not in BUILT_IN_TYPES
+
+    @property
+    def current_limit_a(self) -> float:
+        """Largest output current, the smaller of source and sink [A]."""
+        return min(self.current_source_a, self.current_sink_a)
+
+    def without(self, limits: Collection[Limit]) -> OpAmpModel:
+        """The same op-amp with some of its limits and faults taken away.
+
+        ``speed`` is gain-bandwidth, phase margin and input capacitance, ``swing`` what the output stays from the
+        rails (and crossover), ``offset`` the offset voltage and input currents.
+        """
+        model = self
+        for limit in limits:
+            model = replace(model, **_WITHOUT[limit])
+        return model
+
+
+_WITHOUT: dict[Limit, dict[str, Any]] = {
+    "speed": {
+        "gain_bandwidth_hz": math.inf,
+        "open_loop_gain": math.inf,
+        "phase_margin_deg": 90.0,
+        "input_farad": 0.0,
+        "input_differential_farad": 0.0,
+    },
+    "slew": {"slew_up_v_per_s": math.inf, "slew_down_v_per_s": math.inf},
+    "swing": {
+        "swing_high_v": 0.0,
+        "swing_low_v": 0.0,
+        "swing_high_points": (),
+        "swing_low_points": (),
+        "crossover_v": 0.0,
+        "crossover_a": 0.0,
+    },
+    "current": {"current_source_a": math.inf, "current_sink_a": math.inf},
+    "input range": {"input_low_v": -math.inf, "input_high_v": -math.inf},
+    "offset": {"offset_v": 0.0, "bias_a": 0.0, "offset_current_a": 0.0},
+    "noise": {
+        "noise_v_rthz": 0.0,
+        "noise_corner_hz": 0.0,
+        "noise_a_rthz": 0.0,
+        "noise_current_corner_hz": 0.0,
+    },
+}
 
 
 PERFECT = OpAmpModel("perfect", "no limit at all", input_low_v=-math.inf, input_high_v=-math.inf)
