@@ -8,13 +8,10 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp.bilinear import running_step
-from preview.dsp.macromodel import following_step, macro_equations
+from preview.dsp.cores import following_step
 from preview.dsp.oversample import PASSBAND_RATIO, design, factor_for
 from preview.network import transfer
-from preview.network.expansion import expanded, expanded_topology, has_real_opamps
 from preview.network.stability import check_stable
-from preview.network.statespace import Topology
 from preview.values.quality import Quality
 
 __all__ = ["Deviation", "Response", "analyse", "deviation", "find_corners", "heard", "response_error_db"]
@@ -135,23 +132,15 @@ def heard(netlist: Netlist, sample_rate_hz: float, quality: Quality, frequency_h
     f = np.atleast_1d(np.asarray(frequency_hz, dtype=np.float64))
     filters = design(factor_for(quality, sample_rate_hz))
     step_s = 1.0 / (sample_rate_hz * filters.factor)
-    k = len(netlist.opamps)
-    if has_real_opamps(netlist):
-        topology, inner = expanded_topology(netlist), expanded(netlist)
-        models = [o.model for o in netlist.opamps]
-        M = following_step(macro_equations(topology, topology.values_of(inner)[None], models, step_s))
-    else:
-        topology = Topology(netlist)
-        M = running_step(topology.evaluate(topology.values_of(netlist)[None]), step_s).free[0]
-    n = topology.states
+    M = following_step(netlist, step_s)
+    size = M.shape[0] - 1
     theta = 2.0 * np.pi * f * step_s
     z = np.exp(1j * theta)
     mean = (13.0 * (1.0 + z) - 1.0 / z - z * z) / 24.0
     inputs = np.stack([np.ones_like(z), mean, z], axis=1)
-    size = n + k
     held = z[:, None, None] * np.eye(size) - M[:size, :size]
     states = np.linalg.solve(held, (inputs @ M[:size, size:].T)[..., None])[..., 0]
-    out = states @ M[n + 2 * k, :size] + inputs @ M[n + 2 * k, size:]
+    out = states @ M[size, :size] + inputs @ M[size, size:]
     centred = out * np.exp(-0.5j * theta)
     ratio = f / sample_rate_hz
     return np.asarray(

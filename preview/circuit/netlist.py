@@ -72,6 +72,10 @@ class OpAmpSite:
     """Lowest output voltage, the negative rail plus the type's swing [V]; -inf for ``perfect``."""
     model: OpAmpModel = IDEAL
     """The figures of its type."""
+    input_high_v: float = math.inf
+    """Highest voltage of the common-mode range [V]."""
+    input_low_v: float = -math.inf
+    """Lowest voltage of the common-mode range [V]."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -181,5 +181,15 @@ class OpAmpReading:
     """Limit of its type [V/s]; inf where it has none."""
     current_peak_a: float = 0.0
     """Largest magnitude of the output current [A]."""
+    current_limit_a: float = math.inf
+    """Largest output current of its type, the smaller of source and sink [A]; inf where it has none."""
+    current_limited_s: float = 0.0
+    """Time spent at its largest output current, all channels together [s]."""
+    input_range_events: int = 0
+    """Visits of its + input outside the common-mode range, all channels together."""
+    input_range_s: float = 0.0
+    """Time that its + input spent there, all channels together [s]."""
+    rest_v: float = 0.0
+    """Output voltage at rest, without a signal [V]."""
     unsolved_steps: int = 0
     """Steps in which the limits could not be solved to tolerance; 0 in a healthy run."""

@@ -2,20 +2,22 @@
 
 from __future__ import annotations
 
+import math
 from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp import kernels, macro_kernels
+from preview.dsp import kernels, macro_kernels, port_kernels, regime_kernels
 from preview.dsp.bilinear import running_step
-from preview.dsp.macromodel import MacroEquations, macro_equations, resting_state
+from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
+from preview.dsp.rest import resting_state
 from preview.errors import CircuitError
-from preview.network.expansion import expanded, expanded_topology, has_real_opamps
+from preview.network.expansion import has_real_opamps
 from preview.network.statespace import Topology
 
-__all__ = ["Core", "Matrices", "core_for"]
+__all__ = ["Core", "Matrices", "core_for", "following_step", "runs_as_they_are"]
 
 Real = NDArray[np.float64]
 Matrices = tuple[Real, ...]
@@ -23,13 +25,15 @@ Matrices = tuple[Real, ...]
 
 MOST_OPAMPS = 8
 """Op-amps with limits of their own in one circuit."""
+REGIMES = 48
+"""Regimes whose matrices are kept."""
 
 
 class Core(Protocol):
     """The running circuit between the oversampling filters."""
 
-    stats: Real
-    """(channels, op-amps, ``kernels.STATS``): running statistics, rates per step."""
+    def statistics(self) -> Real:
+        """Running statistics since ``clear``, shape (channels, op-amps, ``kernels.STATS``), rates per step."""
 
     def values_of(self, netlist: Netlist) -> Real:
         """Values in this core's order, shape (branches,)."""
@@ -40,8 +44,14 @@ class Core(Protocol):
     def run(self, matrices: Matrices, u: Real, mean: Real, steps: int, at: int, leg_steps: int) -> None:
         """Fill ``mean`` (channels, steps) from ``u`` (channels, steps + 3); see the kernels."""
 
-    def outputs(self) -> Real:
-        """Present voltage of each op-amp's output stage, shape (channels, op-amps) [V]."""
+    def headroom_db(self, opamp: int) -> float:
+        """How much more signal an op-amp takes before a voltage limit, from what it did since ``clear`` [dB]."""
+
+    def rest_v(self, opamp: int) -> float:
+        """Output of an op-amp at rest [V]."""
+
+    def clear(self) -> None:
+        """Start the statistics anew."""
 
     def reset(self, matrices: Matrices) -> None:
         """Back to rest."""
@@ -55,8 +65,26 @@ def core_for(netlist: Netlist, channels: int, step_s: float) -> Core:
     CircuitError
         It cannot be computed.
     """
-    core: Core = (IdealCore if not has_real_opamps(netlist) else MacroCore)(netlist, channels, step_s)
+    core: Core = (MacroCore if runs_as_they_are(netlist) else IdealCore)(netlist, channels, step_s)
     return core
+
+
+def runs_as_they_are(netlist: Netlist) -> bool:
+    """Whether anything in a circuit needs more than ideal op-amps between R, L and C."""
+    return has_real_opamps(netlist) or bool(netlist.ports) or bool(netlist.fixed)
+
+
+def following_step(netlist: Netlist, step_s: float) -> Real:
+    """Matrix of a step of small signals about the rest, its output's mean as the last row, shape (N + 1, N + 3).
+
+    Columns: states, signal at the start, its mean, at the end. It is made of what the running computation takes.
+    """
+    if not runs_as_they_are(netlist):
+        topology = Topology(netlist)
+        M = running_step(topology.evaluate(topology.values_of(netlist)[None]), step_s).free[0]
+        size, k = topology.states + len(netlist.opamps), len(netlist.opamps)
+        return np.concatenate([M[:size], M[size + k : size + k + 1]])
+    return MacroCore(netlist, 1, step_s).small_signal_step(netlist)
 
 
 class IdealCore:
@@ -113,9 +141,29 @@ class IdealCore:
             *self._room,
         )
 
-    def outputs(self) -> Real:
-        """Present output voltages, shape (channels, op-amps) [V]."""
-        return self._state[:, self._n : self._n + self._k]
+    def statistics(self) -> Real:
+        """See ``Core``."""
+        return self.stats
+
+    def headroom_db(self, opamp: int) -> float:
+        """See ``Core``."""
+        s = self.stats[:, opamp]
+        return _headroom_db(
+            [
+                (float(s[:, kernels.HIGH].max()), float(self._high[opamp])),
+                (-float(s[:, kernels.LOW].min()), -float(self._low[opamp])),
+            ]
+        )
+
+    def rest_v(self, opamp: int) -> float:  # noqa: ARG002 - it rests at zero
+        """See ``Core``."""
+        return 0.0
+
+    def clear(self) -> None:
+        """See ``Core``."""
+        self.stats[...] = 0.0
+        y = self._state[:, self._n : self._n + self._k]
+        self.stats[:, :, kernels.HIGH] = self.stats[:, :, kernels.LOW] = y
 
     def reset(self, matrices: Matrices) -> None:  # noqa: ARG002 - nothing in it rests elsewhere than at zero
         """No charge, no current."""
@@ -125,7 +173,7 @@ class IdealCore:
 
 
 class MacroCore:
-    """Op-amps with gain-bandwidth, slew rate, output resistance, offset and bias: ``macromodel``."""
+    """Op-amps as they are, ideal ones beside them, diodes and fixed voltages: see ``macromodel``."""
 
     def __init__(self, netlist: Netlist, channels: int, step_s: float) -> None:
         k, c = len(netlist.opamps), channels
@@ -134,99 +182,194 @@ class MacroCore:
                 f"{k} op-amps with limits of their own in one circuit: at most {MOST_OPAMPS} can be computed",
                 "take ideal op-amps, or divide the circuit",
             )
-        self._topology = expanded_topology(netlist)
-        self._models = [o.model for o in netlist.opamps]
+        self._model = model = MacroModel(netlist, step_s)
         self._step_s = step_s
-        n = self._topology.states
-        d, rows, masks = n + 2 * k + 5, n + 3 * k + 1, 1 << k
-        self._n = n
-        self._low = np.array([o.low_v for o in netlist.opamps])
-        self._high = np.array([o.high_v for o in netlist.opamps])
-        self._up = np.array([m.slew_up_v_per_s for m in self._models]) * step_s
-        self._down = np.array([m.slew_down_v_per_s for m in self._models]) * step_s
-        self.stats = np.zeros((c, k, kernels.STATS))
-        self._state, self._regimes = np.zeros((c, n + k)), np.zeros((c, k), dtype=np.int64)
-        self._known = np.zeros((masks + 1, 2), dtype=np.int64)
-        self._met = (
-            np.zeros((masks, rows, n + k + 3)),
-            np.zeros((masks, rows)),
-            np.zeros((masks, rows, k)),
-            np.zeros((masks, macro_kernels.LEVELS + 1, d, d)),
+        n, size, columns, ports = model.n, model.size, model.columns, len(model.ports)
+        walls = len(model.owner)
+        values = self.values_of(netlist)[None]
+        inputs = model.equations(values).plus.shape[1]
+        count = k + walls + inputs
+        rows = size + count + 1 + 2 * ports
+        self._n, self._k, self._walls = n, k, walls
+        self._fixed = model.fixed_limits()
+        self.stats = np.zeros((c, max(k, 1), kernels.STATS))
+        self._state = np.zeros((c, size))
+        self._kinds, self._ranges = np.zeros((c, k), dtype=np.int64), np.zeros((c, k), dtype=np.int64)
+        self._extremes = np.zeros((c, k + walls, 3))
+        self._junctions = np.zeros((c, 4, ports))
+        self._heights = np.zeros(k + walls)
+        self._book = np.zeros((REGIMES, macro_kernels.BOOK), dtype=np.int64)
+        self._last_place = np.zeros(2, dtype=np.int64)
+        self._store = (
+            np.zeros((REGIMES + 1, regime_kernels.LEVELS + 1, columns, rows)),
+            np.zeros((REGIMES + 1, rows, columns)),
         )
+        d = columns + 1
         self._room = (
-            np.zeros((rows, n + k + 3)),
+            np.zeros((5, d, d)),
+            np.zeros((count, columns)),
+            np.zeros((2 + k, columns)),
+            np.zeros((k, k)),
+            np.zeros(k),
             np.zeros(rows),
-            np.zeros(d),
-            np.zeros(d),
-            np.zeros((4, d, d)),
-            np.zeros((n + k, kernels.CHUNK + 1)),
-            np.zeros((rows, kernels.CHUNK)),
+            np.zeros((2 * ports + 3, 2 * ports)),
+            np.zeros(2 * ports),
+            np.zeros(3),
         )
-        self._last: Matrices | None = None
+        wide = 4 if size <= 4 else max(size, 8)
+        self._tracks = (
+            np.zeros((max(size, wide), kernels.CHUNK + 1)),
+            np.zeros((max(rows, wide), kernels.CHUNK)),
+            np.zeros((2 * k + walls + 1, 2)),
+            np.zeros(2 * k + walls + 1, dtype=np.int64),
+            np.zeros((wide, wide)),
+        )
+        self._no_noise = np.zeros((c, 0, 0))
+        self._matrices: Matrices | None = None
 
     def values_of(self, netlist: Netlist) -> Real:
         """Values in this core's order, shape (branches,)."""
-        return self._topology.values_of(expanded(netlist))
+        return self._model.values_of(netlist)
 
     def matrices(self, values: Real) -> Matrices:
-        """Step while every op-amp follows, its constant, and the continuous equations behind it."""
-        e = macro_equations(self._topology, values, self._models, self._step_s)
-        sets, n, d = e.base.shape
-        k = len(self._models)
-        rows = n + 3 * k + 1
-        free, constant, unused = (
-            np.zeros((sets, rows, n + k + 3)),
-            np.zeros((sets, rows)),
-            np.zeros((rows, k)),
-        )
-        work = np.zeros((4, d, d))
+        """Whole step while every op-amp follows, the continuous equations behind it, and the limits."""
+        return self._prepared(self._model.equations(values), values)
+
+    def _prepared(self, e: MacroEquations, values: Real, supply: Real | None = None) -> Matrices:
+        model = self._model
+        limits = model.limits(values, e, supply=supply)
+        sets = len(values)
+        rows = self._store[1].shape[1]
+        whole = np.zeros((sets, model.columns, rows))
+        room = tuple(np.zeros_like(r) for r in self._room[:5])
+        follow = np.zeros(self._k, dtype=np.int64)
         for g in range(sets):
-            macro_kernels.step_matrix(
-                e.base[g],
-                e.turn[g],
-                e.rate[g],
-                e.out[g],
-                e.current[g],
-                (1 << k) - 1,
-                work,
-                free[g],
-                constant[g],
-                unused,
+            regime_kernels.fill_parts(
+                *(a[g] for a in e.all()),
+                follow,
+                follow,
+                self._fixed[0],
+                self._fixed[1],
+                True,
+                whole[g : g + 1],
+                *room,
             )
-        return free, constant, e.base, e.turn, e.rate, e.out, e.current
+        return whole, *e.all(), limits.laws, limits.rails, limits.walls, limits.gains
 
     def run(self, matrices: Matrices, u: Real, mean: Real, steps: int, at: int, leg_steps: int) -> None:
         """See ``macro_kernels.run_macro``."""
-        if matrices is not self._last:
-            self._known[...] = 0
-            self._last = matrices
+        if matrices is not self._matrices:
+            self._book[...] = 0
+            self._matrices = matrices
+        whole, *equations = matrices[:8]
         macro_kernels.run_macro(
-            *matrices,
+            whole,
+            tuple(equations),
+            *matrices[8:],
+            self._model.owner,
+            self._fixed,
+            self._step_s,
             u,
             mean,
             steps,
             self._state,
-            self._regimes,
-            self._low,
-            self._high,
-            self._up,
-            self._down,
+            self._kinds,
+            self._ranges,
             self.stats,
+            self._extremes,
+            self._junctions,
+            self._no_noise,
             at,
             leg_steps,
-            *self._met,
-            self._known,
-            *self._room,
+            self._book,
+            self._last_place,
+            self._store,
+            self._room,
+            self._tracks,
         )
 
-    def outputs(self) -> Real:
-        """Present voltages behind the output resistances, shape (channels, op-amps) [V]."""
-        return self._state[:, self._n :]
+    def small_signal_step(self, netlist: Netlist) -> Real:
+        """See ``following_step``; the ports take the slope that they have at rest."""
+        matrices = self.matrices(self.values_of(netlist)[None])
+        self.reset(matrices)
+        whole, laws, model = matrices[0][0], matrices[8][0], self._model
+        size, ports = model.size, len(laws)
+        rows = whole.T
+        M = rows[[*range(size), len(rows) - 2 * ports - 1]]
+        if ports == 0:
+            return M[:, : size + 3]
+        conductance = np.zeros((2 * ports, 2 * ports))  # currents at 1/3 and the end, by the voltages there
+        charge = np.zeros((2 * ports, size + 3))
+        for p, law in enumerate(laws):
+            a, b = p, ports + p
+            if law[port_kernels.HALF] == 0.0:
+                g = port_kernels.junction(law, self._junctions[0, 0, p])[1]
+                conductance[a, a] = conductance[b, b] = g / (1.0 + g * law[port_kernels.SERIES])
+                continue
+            c = port_kernels.added_charge(law, self._junctions[0, 0, p])[1] / self._step_s
+            conductance[np.ix_([a, b], [a, b])] = c * np.array([[1.5, 0.5], [-4.5, 2.5]])
+            charge[[a, b]] -= np.outer([2.0 * c, -2.0 * c], matrices[7][0, p, : size + 3])
+        seen = np.concatenate([rows[-ports:], rows[-2 * ports : -ports]])  # at 1/3, then at the end
+        flows = np.linalg.solve(
+            np.eye(2 * ports) - conductance @ seen[:, size + 4 :],
+            conductance @ seen[:, : size + 3] + charge,
+        )
+        return np.asarray(M[:, : size + 3] + M[:, size + 4 :] @ flows)
+
+    def headroom_db(self, opamp: int) -> float:
+        """See ``Core``."""
+        limits = [(opamp, self._rails[0, opamp], self._rails[1, opamp])]
+        limits += [
+            (self._k + m, *self._wall_limits[:, m])
+            for m in range(self._k, self._walls)  # the currents are no voltages
+            if self._model.owner[m] == opamp
+        ]
+        room = []
+        for row, low, high in limits:
+            rest, extremes = self._heights[row], self._extremes[:, row]
+            room += [(extremes[:, 0].max() - rest, high - rest), (rest - extremes[:, 1].min(), rest - low)]
+        return _headroom_db(room)
+
+    def rest_v(self, opamp: int) -> float:
+        """See ``Core``."""
+        return float(self._heights[2 * self._k + opamp])
 
     def reset(self, matrices: Matrices) -> None:
         """The DC operating point without a signal."""
-        _, _, base, turn, rate, out, current = matrices
-        self._state[...] = resting_state(
-            MacroEquations(base, turn, rate, out, current), self._low, self._high
+        rest = resting_state(
+            MacroEquations(*matrices[1:8]),
+            Limits(laws=matrices[8], rails=matrices[9], walls=matrices[10], gains=matrices[11]),
+            self._model.owner,
+            self._fixed[2:],
         )
-        self._regimes[...] = macro_kernels.FOLLOWS
+        self._state[...] = rest.states
+        self._kinds[...], self._ranges[...] = rest.kinds, rest.ranges
+        self._junctions[...] = 0.0
+        self._junctions[:, 0] = rest.junctions
+        self._heights[...] = rest.heights
+        self._rails, self._wall_limits = matrices[9][-1], matrices[10][-1]
+        self._extremes[...] = self._heights[:, None]
+        self.clear()
+
+    def clear(self) -> None:
+        """See ``Core``."""
+        self.stats[...] = 0.0
+        self._extremes[:, :, :2] = self._extremes[:, :, 2:]
+
+    def statistics(self) -> Real:
+        """See ``Core``."""
+        k = self._k
+        currents, pins = self._extremes[:, k : 2 * k], self._extremes[:, 2 * k : 3 * k]
+        self.stats[:, :k, kernels.HIGH] = pins[:, :, 0]
+        self.stats[:, :k, kernels.LOW] = pins[:, :, 1]
+        self.stats[:, :k, kernels.CURRENT] = np.maximum(currents[:, :, 0], -currents[:, :, 1])
+        return self.stats
+
+
+def _headroom_db(room: list[tuple[float, float]]) -> float:
+    """Least of the ratios of what is there to what was taken [dB]; inf without a limit or a signal."""
+    least = math.inf
+    for taken, there in room:
+        if math.isfinite(there) and math.isfinite(taken) and taken > 0.0:
+            least = min(least, 20.0 * math.log10(there / taken) if there > 0.0 else 0.0)
+    return max(least, 0.0)

@@ -16,6 +16,9 @@ from pathlib import Path
 from typing import Any
 
 import numpy as np
+from llvmlite.ir import Constant
+from numba import njit
+from numba.extending import intrinsic
 from platformdirs import user_cache_dir
 
 
@@ -34,13 +37,30 @@ def _compiler() -> Callable[[Callable[..., Any]], Any]:
         cached = os.access(folder, os.W_OK)
     except OSError:
         cached = False
-    import numba
-
-    decorate: Callable[[Callable[..., Any]], Any] = numba.njit(cache=cached, nogil=True, error_model="numpy")
+    decorate: Callable[[Callable[..., Any]], Any] = njit(cache=cached, nogil=True, error_model="numpy")
     return decorate
 
 
 compiled = _compiler()
+
+
+@intrinsic
+def bare(_context: Any, array: Any) -> Any:
+    """The same array without a count of its owners, whose keeping costs more than a short loop.
+
+    For arrays that the caller of a kernel holds; what is returned to Python must not be one.
+    """
+
+    def build(context: Any, builder: Any, _signature: Any, args: Any) -> Any:
+        make = context.make_array(array)
+        given, result = make(context, builder, args[0]), make(context, builder)
+        for field in ("data", "nitems", "itemsize", "shape", "strides"):
+            setattr(result, field, getattr(given, field))
+        for field in ("meminfo", "parent"):
+            setattr(result, field, Constant(getattr(given, field).type, None))
+        return result._getvalue()
+
+    return array(array), build
 
 
 def in_cache(name: str) -> bool:
@@ -58,7 +78,7 @@ CHUNK = 128
 """Steps that are taken at a time while nobody limits."""
 
 # columns of the op-amps' running statistics
-HIGH, LOW, SLEW, CURRENT, EVENTS, CLIPPED, UNSOLVED, STATS = 0, 1, 2, 3, 4, 5, 6, 7
+HIGH, LOW, SLEW, CURRENT, EVENTS, CLIPPED, UNSOLVED, STARVED, OUTSIDE, OUTSIDE_EVENTS, STATS = range(11)
 
 
 @compiled

@@ -1,13 +1,12 @@
-"""The sample loops for op-amps with gain-bandwidth, slew rate and output resistance, compiled.
+"""The sample loops for op-amps as they are, and for diodes, compiled.
 
-Between its limits such a circuit is linear: each op-amp either follows its input (its rate of change is a linear
-function of the state), slews at a constant rate, or stands at a rail. In each of these regimes the state over any
-time is a matrix exponential, exact however stiff the op-amp is. A step in which the regime changes is walked in
-halves of halves down to 1/128 of it.
+Between its limits such a circuit is linear: each op-amp follows its input (its rate of change is a linear function of
+the state), slews at a constant rate, or stays at a limit, be it a rail, a swing that hangs on the load, or its largest
+current. In each of these regimes the state over any time is a matrix exponential, exact however stiff the op-amp is. A
+step in which the regime changes is walked in halves of halves down to 1/128 of it. Diodes are solved in every part that
+is walked, see ``port_kernels``.
 
-Shapes: c channels, n states, k op-amps, d = n + 2k + 5 rows of the augmented state
-``[states, op-amps, signal and its two derivatives, slew rates in force, 1, mean of the output]``.
-Time is in steps, so every rate is a change per step.
+Shapes: as in ``regime_kernels``. Time is in steps, so every rate is a change per step.
 """
 
 from __future__ import annotations
@@ -18,160 +17,64 @@ import numpy as np
 
 from preview.dsp.kernels import (
     CLIPPED,
-    CURRENT,
     EVENTS,
-    HIGH,
-    LOW,
+    OUTSIDE,
+    OUTSIDE_EVENTS,
     SLEW,
+    STARVED,
     UNSOLVED,
-    add_states,
+    bare,
     compiled,
-    note_path,
     recur,
     signal_part,
-    take_steps,
+)
+from preview.dsp.port_kernels import solve_ports
+from preview.dsp.regime_kernels import (
+    ABOVE,
+    AT_HIGH,
+    AT_LOW,
+    AT_WALL,
+    BELOW,
+    FOLLOWS,
+    IN_RANGE,
+    LEVELS,
+    SLEWS_DOWN,
+    SLEWS_UP,
+    fill_parts,
 )
 
-LEVELS = 7
-"""Halvings of a step in which the regime changes."""
-
-FOLLOWS, SLEWS_UP, SLEWS_DOWN, AT_HIGH, AT_LOW = 0, 1, 2, 3, 4
+# columns of the book of regimes: the regime, the station it is of, whether its parts and its whole step are there
+KEY, STATION, HAS_PARTS, HAS_WHOLE, BOOK = 0, 1, 2, 3, 4
 
 
 @compiled
-def multiply(a: Any, b: Any, result: Any) -> None:
-    """``result = a b`` for square matrices, in one fixed order."""
-    size = a.shape[0]
-    for i in range(size):
-        for j in range(size):
-            result[i, j] = 0.0
-        for m in range(size):
-            f = a[i, m]
-            if f != 0.0:
-                for j in range(size):
-                    result[i, j] += f * b[m, j]
+def key_of(kinds: Any, ranges: Any, kind_count: int) -> int:
+    """A number for what every op-amp does."""
+    key = 1
+    for o in range(kinds.shape[0]):
+        key = key * (3 * kind_count) + 3 * kinds[o] + ranges[o]
+    return key
 
 
 @compiled
-def exponential(a: Any, scale: float, result: Any, power: Any, other: Any) -> None:
-    """``result = exp(a scale)`` by Taylor's series of a scaled matrix, squared back."""
-    size = a.shape[0]
-    norm = 0.0
-    for i in range(size):
-        t = 0.0
-        for j in range(size):
-            t += abs(a[i, j])
-        norm = max(norm, t)
-    norm *= scale
-    halvings = 0
-    while norm > 0.5:
-        norm *= 0.5
-        halvings += 1
-    f = scale / 2.0**halvings
-    for i in range(size):
-        for j in range(size):
-            one = 1.0 if i == j else 0.0
-            result[i, j] = one + a[i, j] * f
-            power[i, j] = a[i, j] * f
-    for order in range(2, 15):
-        multiply(power, a, other)
-        for i in range(size):
-            for j in range(size):
-                power[i, j] = other[i, j] * f / order
-                result[i, j] += power[i, j]
-    for _ in range(halvings):
-        multiply(result, result, other)
-        result[:, :] = other
+def place_of(book: Any, key: int, station: int, last: Any) -> int:
+    """Where a regime stands in the book, entered in place of another if it was not there; ``last`` is (2,) int64."""
+    if book[last[0], KEY] == key and book[last[0], STATION] == station:
+        return int(last[0])
+    count = book.shape[0]
+    for i in range(count):
+        if book[i, KEY] == key and book[i, STATION] == station:
+            last[0] = i
+            return i
+    i = int(last[1])
+    last[1] = (i + 1) % count
+    last[0] = i
+    book[i, KEY], book[i, STATION], book[i, HAS_PARTS], book[i, HAS_WHOLE] = key, station, 0, 0
+    return i
 
 
 @compiled
-def generator(base: Any, turn: Any, rate: Any, out: Any, mask: int, n: int, k: int, result: Any) -> None:
-    """Derivative of the augmented state by itself, per step, with the op-amps of ``mask`` following."""
-    d = result.shape[0]
-    at_u, at_s, at_1 = n + k, n + k + 3, n + 2 * k + 3
-    result[:, :] = 0.0
-    for i in range(n):
-        for j in range(d):
-            result[i, j] = base[i, j]
-    for o in range(k):
-        if mask >> o & 1:
-            for j in range(d):
-                result[n + o, j] = rate[o, j]
-        else:
-            result[n + o, at_s + o] = 1.0
-        for i in range(n):
-            if turn[i, o] != 0.0:
-                for j in range(d):
-                    result[i, j] -= turn[i, o] * result[n + o, j]
-    result[at_u, at_u + 1] = 1.0
-    result[at_u + 1, at_u + 2] = 1.0
-    for j in range(d):
-        result[at_1 + 1, j] = out[j]
-
-
-@compiled
-def step_matrix(
-    base: Any,
-    turn: Any,
-    rate: Any,
-    out: Any,
-    current: Any,
-    mask: int,
-    work: Any,
-    M: Any,
-    constant: Any,
-    by_slew: Any,
-) -> None:
-    """Matrices of a whole step in which the op-amps of ``mask`` follow and the others move at a constant rate.
-
-    Rows: states, op-amps, rate that each op-amp would follow with at the end, mean of the output, output currents at
-    the end. Columns of ``M``: states and op-amps at the start, signal at the start, its mean, at the end;
-    ``by_slew``: constant rates; ``constant``: what remains.
-    """
-    n, k = turn.shape
-    d = base.shape[1]
-    at_u, at_s, at_1 = n + k, n + k + 3, n + 2 * k + 3
-    phi, line = work[0], work[1]
-    generator(base, turn, rate, out, mask, n, k, work[3])
-    exponential(work[3], 1.0, phi, work[1], work[2])
-    for r in range(n + 3 * k + 1):
-        for j in range(d):
-            t = 0.0
-            if r < n + k:
-                t = phi[r, j]
-            elif r < n + 2 * k:
-                for m in range(d):
-                    t += rate[r - n - k, m] * phi[m, j]
-            elif r == n + 2 * k:
-                t = phi[at_1 + 1, j]
-            else:
-                for m in range(d):
-                    t += current[r - n - 2 * k - 1, m] * phi[m, j]
-            line[0, j] = t
-        for j in range(n + k):
-            M[r, j] = line[0, j]
-        u, v1, v2 = line[0, at_u], line[0, at_u + 1], line[0, at_u + 2]
-        M[r, n + k] = u - 4.0 * v1 + 6.0 * v2
-        M[r, n + k + 1] = 6.0 * v1 - 12.0 * v2
-        M[r, n + k + 2] = -2.0 * v1 + 6.0 * v2
-        for o in range(k):
-            by_slew[r, o] = line[0, at_s + o]
-        constant[r] = line[0, at_1]
-
-
-@compiled
-def fill_levels(
-    base: Any, turn: Any, rate: Any, out: Any, mask: int, n: int, k: int, levels: Any, work: Any
-) -> None:
-    """Matrices of a whole step, its half, quarter ... with the op-amps of ``mask`` following."""
-    generator(base, turn, rate, out, mask, n, k, work[3])
-    exponential(work[3], 1.0 / 2**LEVELS, levels[LEVELS], work[1], work[2])
-    for j in range(LEVELS, 0, -1):
-        multiply(levels[j], levels[j], levels[j - 1])
-
-
-@compiled
-def regime(w: float, rate: float, low: float, high: float, up: float, down: float) -> int:
+def regime_of(w: float, rate: float, low: float, high: float, up: float, down: float) -> int:
     """What an op-amp does: follow, slew up or down, or stand at a rail."""
     if w >= high and rate > 0.0:
         return AT_HIGH
@@ -186,7 +89,7 @@ def regime(w: float, rate: float, low: float, high: float, up: float, down: floa
 
 @compiled
 def keeps_regime(kind: int, w: float, rate: float, low: float, high: float, up: float, down: float) -> bool:
-    """Whether an op-amp is still in the regime it was in."""
+    """Whether an op-amp, walls and input range aside, is still in the regime it was in."""
     if kind == FOLLOWS:
         return -down * (1 + 1e-9) <= rate <= up * (1 + 1e-9) and low <= w <= high
     if kind == SLEWS_UP:
@@ -195,363 +98,719 @@ def keeps_regime(kind: int, w: float, rate: float, low: float, high: float, up: 
         return rate <= -down * (1 - 1e-9) and w >= low
     if kind == AT_HIGH:
         return rate >= 0.0
-    return rate <= 0.0
+    if kind == AT_LOW:
+        return rate <= 0.0
+    return low <= w <= high and (rate >= 0.0 if (kind - AT_WALL) % 2 == 0 else rate <= 0.0)
+
+
+@compiled
+def in_same_range(where: int, v: float, low: float, high: float) -> bool:
+    """Whether a + input is still within, above or below its range."""
+    if where == IN_RANGE:
+        return low <= v <= high
+    return v >= high if where == ABOVE else v <= low
+
+
+@compiled
+def range_of(v: float, low: float, high: float) -> int:
+    """Where a + input is."""
+    return ABOVE if v > high else (BELOW if v < low else IN_RANGE)
+
+
+@compiled
+def along(
+    parts: Any, slot: int, level: int, count: int, z: Any, u0: float, um: float, u1: float, size: int, y: Any
+) -> None:
+    """``y``: the first ``count`` rows of a part's matrix times its start and signal; port currents aside."""
+    for r in range(count):
+        y[r] = (parts[slot, level, size, r] * u0 + parts[slot, level, size + 1, r] * um) + (
+            parts[slot, level, size + 2, r] * u1 + parts[slot, level, size + 3, r]
+        )
+    for j in range(size):
+        f = z[j]
+        for r in range(count):
+            y[r] += parts[slot, level, j, r] * f
+
+
+@compiled
+def note(extreme: Any, v: float) -> None:
+    """Take a value into account: highest, lowest, latest."""
+    extreme[0], extreme[1], extreme[2] = max(extreme[0], v), min(extreme[1], v), v
+
+
+@compiled
+def fill_slot(
+    all_equations: Any,
+    leg: int,
+    kinds: Any,
+    ranges: Any,
+    up: Any,
+    down: Any,
+    whole_only: bool,
+    parts: Any,
+    room: Any,
+) -> bool:
+    """See ``regime_kernels.fill_parts``; ``parts`` are those of one regime."""
+    base, turn, rate, out, walls, plus, port = all_equations
+    return bool(
+        fill_parts(
+            base[leg], turn[leg], rate[leg], out[leg], walls[leg], plus[leg], port[leg], kinds, ranges, up, down,
+            whole_only, parts, room[0], room[1], room[2], room[3], room[4],
+        )
+    )  # fmt: skip
 
 
 @compiled
 def walk(
-    base: Any,
-    turn: Any,
-    rate: Any,
-    out: Any,
-    levels: Any,
-    known: Any,
+    all_equations: Any,
+    all_laws: Any,
+    all_rails: Any,
+    all_walls: Any,
+    all_gains: Any,
+    owner: Any,
+    fixed_limits: Any,
+    leg: int,
+    gliding: bool,
+    step_s: float,
     z: Any,
-    trial: Any,
+    u: Any,
     kinds: Any,
-    low: Any,
-    high: Any,
-    up: Any,
-    down: Any,
+    ranges: Any,
     st: Any,
-    n: int,
-    k: int,
-    work: Any,
-) -> None:
-    """One step of the augmented state ``z`` through every change of regime."""
-    d = z.shape[0]
-    at_s, at_1 = n + k + 3, n + 2 * k + 3
-    z[at_1] = 1.0
-    z[at_1 + 1] = 0.0
+    extremes: Any,
+    junctions: Any,
+    book: Any,
+    last: Any,
+    parts: Any,
+    room: Any,
+) -> float:
+    """One step of the states ``z`` through every change of regime; returns the mean of the output.
+
+    While a part is ``gliding``, the whole step in which every op-amp follows stands in the last place of ``parts``.
+    """
+    turn, rate, plus = all_equations[1], all_equations[2], all_equations[5]
+    up, down, range_low, range_high = fixed_limits
+    right, y, port_room, currents = room[4], room[5], room[6], room[7]
+    n, k = turn.shape[1], turn.shape[2]
+    size = n + k
+    G = owner.shape[0]
+    ports = all_laws.shape[1]
+    inputs = plus.shape[1]
+    count = k + G + inputs
+    rows = size + count + 1 + 2 * ports
+    at_walls, at_plus, at_mean = size + k, size + k + G, size + count
+    kind_count = AT_WALL + 2 * G
     whole = 1 << LEVELS
+    u0, um, u1 = u[0], u[1], u[2]
+    v1, v2 = 6.0 * um - 4.0 * u0 - 2.0 * u1, 6.0 * (u0 + u1) - 12.0 * um
+    total = 0.0
     done = 0
-    level = 0
+    level, span = 0, whole  # span: what is tried, in the smallest parts
+    regime = -1
     while done < whole:
-        mask = 0
+        free = gliding
         for o in range(k):
-            kind = kinds[o]
-            z[at_s + o] = 0.0
-            if kind == FOLLOWS:
-                mask |= 1 << o
-            elif kind == SLEWS_UP:
-                z[at_s + o] = up[o]
-            elif kind == SLEWS_DOWN:
-                z[at_s + o] = -down[o]
-        if known[mask, 1] == 0:
-            fill_levels(base, turn, rate, out, mask, n, k, levels[mask], work)
-            known[mask, 1] = 1
-        while level > 0 and done % (1 << (LEVELS - level + 1)) == 0:
-            level -= 1
+            free = free and kinds[o] == FOLLOWS and ranges[o] == IN_RANGE
+        keeps = False
         while True:
-            P = levels[mask, level]
-            for i in range(d):
-                t = 0.0
-                for j in range(d):
-                    t += P[i, j] * z[j]
-                trial[i] = t
-            if level == LEVELS:
-                break
+            slot = parts.shape[0] - 1
+            if not (free and level == 0):
+                if regime < 0:
+                    regime = place_of(book, key_of(kinds, ranges, kind_count), leg, last)
+                    if book[regime, HAS_PARTS] == 0:
+                        if not fill_slot(
+                            all_equations, leg, kinds, ranges, up, down, False, parts[regime], room
+                        ):
+                            for o in range(k):
+                                st[o, UNSOLVED] += 1.0
+                        book[regime, HAS_PARTS] = 1
+                slot = regime
+            length = span / whole
+            t0 = done / whole
+            t1 = t0 + length
+            ua = u0 + t0 * (v1 + 0.5 * v2 * t0)
+            ub = u0 + t1 * (v1 + 0.5 * v2 * t1)
+            uc = u0 + 0.5 * v1 * (t0 + t1) + v2 * (t0 * t0 + t0 * t1 + t1 * t1) / 6.0
+            along(parts, slot, level, rows, z, ua, uc, ub, size, y)
+            if ports:
+                for p in range(ports):  # along the line it came on
+                    junctions[1, p] = junctions[0, p] + junctions[3, p] * length / 3.0
+                    junctions[2, p] = junctions[0, p] + junctions[3, p] * length
+                solved = solve_ports(
+                    all_laws[leg],
+                    y[at_mean + 1 :],
+                    parts[slot, level],
+                    at_mean + 1,
+                    size + 4,
+                    length * step_s,
+                    junctions,
+                    currents,
+                    port_room,
+                )
+                if not solved:
+                    for p in range(ports):
+                        junctions[3, p] = 0.0
+                    if span > 1:
+                        level, span = level + 1, span // 2
+                        continue
+                    st[0, UNSOLVED] += 1.0
+                    for p in range(2 * ports):
+                        if not np.isfinite(currents[p]):
+                            currents[p] = 0.0
+                for b in range(2 * ports):
+                    f, column = currents[b], parts[slot, level, size + 4 + b]
+                    for r in range(at_mean + 1):
+                        y[r] += column[r] * f
             keeps = True
             for o in range(k):
-                r = 0.0
-                for j in range(d):
-                    r += rate[o, j] * trial[j]
-                keeps = keeps and keeps_regime(kinds[o], trial[n + o], r, low[o], high[o], up[o], down[o])
-            if keeps:
+                keeps = keeps and keeps_regime(
+                    kinds[o],
+                    y[n + o],
+                    y[size + o],
+                    all_rails[leg, 0, o],
+                    all_rails[leg, 1, o],
+                    up[o],
+                    down[o],
+                )
+            for m in range(G):
+                g, kind = y[at_walls + m], kinds[owner[m]]
+                keeps = keeps and (g <= all_walls[leg, 1, m] or kind == AT_WALL + 2 * m)
+                keeps = keeps and (g >= all_walls[leg, 0, m] or kind == AT_WALL + 2 * m + 1)
+            for o in range(inputs):
+                keeps = keeps and in_same_range(ranges[o], y[at_plus + o], range_low[o], range_high[o])
+            if keeps or span == 1:
                 break
-            level += 1
-        part = 1.0 / (1 << level)
+            level, span = level + 1, span // 2
+        length = span / whole
         for o in range(k):
-            w0 = z[n + o]
-            w1 = min(max(trial[n + o], w0 - down[o] * part), w0 + up[o] * part)
-            w1 = min(max(w1, low[o]), high[o])
-            for i in range(n):  # what a clamp takes from the op-amp is taken from the states that hang on it
-                trial[i] += turn[i, o] * (trial[n + o] - w1)
-            trial[n + o] = w1
-            st[o, HIGH] = max(st[o, HIGH], w1)
-            st[o, LOW] = min(st[o, LOW], w1)
-            st[o, SLEW] = max(st[o, SLEW], abs(w1 - w0) / part)
-            if kinds[o] == AT_HIGH or kinds[o] == AT_LOW:
-                st[o, CLIPPED] += part
-        for i in range(d):
-            z[i] = trial[i]
-        done += 1 << (LEVELS - level)
+            kind = kinds[o]
+            before = z[n + o]
+            w = y[n + o]
+            if kind < AT_WALL:
+                w = min(max(w, before - down[o] * length), before + up[o] * length)
+            w = min(max(w, all_rails[leg, 0, o]), all_rails[leg, 1, o])
+            moved = w - y[n + o]
+            hit = -1
+            if kind >= AT_WALL:  # exactly onto the wall it is at; then inside the others
+                m = (kind - AT_WALL) // 2
+                side = all_walls[leg, 1, m] if (kind - AT_WALL) % 2 == 0 else all_walls[leg, 0, m]
+                moved = (side - y[at_walls + m]) / all_gains[leg, m]
+                hit = kind
+            for m in range(G):
+                if owner[m] == o and kind != AT_WALL + 2 * m and kind != AT_WALL + 2 * m + 1:
+                    g = y[at_walls + m] + all_gains[leg, m] * moved
+                    if g > all_walls[leg, 1, m]:
+                        moved += (all_walls[leg, 1, m] - g) / all_gains[leg, m]
+                        hit = AT_WALL + 2 * m
+                    elif g < all_walls[leg, 0, m]:
+                        moved += (all_walls[leg, 0, m] - g) / all_gains[leg, m]
+                        hit = AT_WALL + 2 * m + 1
+            if moved != 0.0:  # what a clamp takes from the op-amp is taken from the states that hang on it
+                for i in range(n):
+                    y[i] -= turn[leg, i, o] * moved
+                for m in range(G):
+                    if owner[m] == o:
+                        y[at_walls + m] += all_gains[leg, m] * moved
+                y[n + o] += moved
+            w = y[n + o]
+            note(extremes[o], w)
+            if kind < AT_WALL:
+                st[o, SLEW] = max(st[o, SLEW], abs(w - before) / length)
+            if kind == AT_HIGH or kind == AT_LOW:
+                st[o, CLIPPED] += length
+            elif kind >= AT_WALL:
+                if (kind - AT_WALL) // 2 < k:
+                    st[o, STARVED] += length
+                else:
+                    st[o, CLIPPED] += length
+            if ranges[o] != IN_RANGE:
+                st[o, OUTSIDE] += length
+            right[o] = hit
+        for m in range(G):
+            note(extremes[k + m], y[at_walls + m])
+        total += y[at_mean] * length
+        for i in range(size):
+            z[i] = y[i]
+        for p in range(ports):
+            junctions[3, p] = (junctions[2, p] - junctions[1, p]) / (length * (2.0 / 3.0))
+            junctions[0, p] = junctions[2, p]
+        done += span
+        while level > 0 and done % (2 * span) == 0:
+            level, span = level - 1, 2 * span
+        if keeps:
+            continue
+        regime = -1
+        t = done / whole
+        signal, slope = u0 + t * (v1 + 0.5 * v2 * t), v1 + v2 * t
         for o in range(k):
-            r = 0.0
-            for j in range(d):
-                r += rate[o, j] * z[j]
-            kind = regime(z[n + o], r, low[o], high[o], up[o], down[o])
-            if kind >= AT_HIGH and kinds[o] < AT_HIGH:
+            where = IN_RANGE
+            if inputs:
+                where = range_of(
+                    at_instant(plus[leg, o], z, signal, slope, v2, currents, size, ports),
+                    range_low[o],
+                    range_high[o],
+                )
+            if where != IN_RANGE and ranges[o] == IN_RANGE:
+                st[o, OUTSIDE_EVENTS] += 1.0
+            ranges[o] = where
+            kind, hit = kinds[o], int(right[o])
+            asked = at_instant(rate[leg, where, o], z, signal, slope, v2, currents, size, ports)
+            pushes = hit == kind and (y[size + o] >= 0.0 if (kind - AT_WALL) % 2 == 0 else y[size + o] <= 0.0)
+            if hit >= 0 and (hit != kind or pushes):
+                new = hit
+            elif hit == kind and hit >= 0:
+                new = FOLLOWS  # it leaves its wall; whether it slews is seen at once
+            else:
+                new = regime_of(z[n + o], asked, all_rails[leg, 0, o], all_rails[leg, 1, o], up[o], down[o])
+            if new >= AT_HIGH and kind < AT_HIGH and not (new >= AT_WALL and (new - AT_WALL) // 2 < k):
                 st[o, EVENTS] += 1.0
-            kinds[o] = kind
+            kinds[o] = new
+    return total
 
 
 @compiled
-def lasts(kind: int, w: Any, r: Any, count: int, low: float, high: float, up: float, down: float) -> int:
-    """How many steps, from the first, one op-amp stays in its regime."""
-    if kind == FOLLOWS:
+def at_instant(
+    row: Any, z: Any, signal: float, slope: float, bend: float, currents: Any, size: int, ports: int
+) -> float:
+    """A row over an instant at the end of a part of a step."""
+    t = row[size] * signal + row[size + 1] * slope + row[size + 2] * bend + row[size + 3]
+    for j in range(size):
+        t += row[j] * z[j]
+    for p in range(ports):
+        t += row[size + 4 + p] * currents[ports + p]
+    return t
+
+
+@compiled
+def span_of(path: Any, count: int, span: Any) -> None:
+    """Highest and lowest of the first ``count`` values, four lanes at a time."""
+    a0 = a1 = a2 = a3 = -np.inf
+    b0 = b1 = b2 = b3 = np.inf
+    whole = count - count % 4
+    for i in range(0, whole, 4):
+        v0, v1, v2, v3 = path[i], path[i + 1], path[i + 2], path[i + 3]
+        a0 = v0 if v0 > a0 else a0
+        a1 = v1 if v1 > a1 else a1
+        a2 = v2 if v2 > a2 else a2
+        a3 = v3 if v3 > a3 else a3
+        b0 = v0 if v0 < b0 else b0
+        b1 = v1 if v1 < b1 else b1
+        b2 = v2 if v2 < b2 else b2
+        b3 = v3 if v3 < b3 else b3
+    for i in range(whole, count):
+        v0 = path[i]
+        a0 = v0 if v0 > a0 else a0
+        b0 = v0 if v0 < b0 else b0
+    span[0], span[1] = max(max(a0, a1), max(a2, a3)), min(min(b0, b1), min(b2, b3))
+
+
+@compiled
+def lasts(path: Any, count: int, low: float, high: float, span: Any) -> int:
+    """How many values, from the first, lie between two limits; ``span`` receives the highest and lowest of these."""
+    span_of(path, count, span)
+    if span[0] <= high and span[1] >= low:
+        return count
+    for i in range(count):
+        if not low <= path[i] <= high:
+            if i > 0:
+                span_of(path, i, span)
+            return i
+    return count
+
+
+@compiled
+def dot_4(m: Any, r: int, a: float, b: float, c: float, d: float) -> float:
+    """Part of one row of a matrix times four numbers."""
+    return (m[r, 0] * a + m[r, 1] * b) + (m[r, 2] * c + m[r, 3] * d)
+
+
+@compiled
+def dot_8(
+    m: Any, r: int, a: float, b: float, c: float, d: float, e: float, f: float, g: float, h: float
+) -> float:
+    """One row of a matrix times eight numbers."""
+    low = (m[r, 0] * a + m[r, 1] * b) + (m[r, 2] * c + m[r, 3] * d)
+    return low + ((m[r, 4] * e + m[r, 5] * f) + (m[r, 6] * g + m[r, 7] * h))
+
+
+@compiled
+def recur_wide(M: Any, drive: Any, track: Any, size: int, count: int, m: Any) -> None:
+    """``track[:, i + 1] = M track[:, i] + drive[:, i]`` for more than three states, written out up to eight.
+
+    ``m`` (w, w) is room, w = 4, 8 or ``size``; ``track`` and ``drive`` have w rows or more.
+    """
+    wide = m.shape[0]
+    for r in range(wide):
+        for j in range(wide):
+            m[r, j] = M[r, j] if r < size and j < size else 0.0
+        if r >= size:
+            track[r, 0] = 0.0
+            drive[r, :count] = 0.0
+    if wide == 4:
+        a, b, c, d = track[0, 0], track[1, 0], track[2, 0], track[3, 0]
         for i in range(count):
-            if not (-down <= r[i] <= up and low <= w[i + 1] <= high):
-                return i
-    elif kind == SLEWS_UP:
+            a, b, c, d = (
+                drive[0, i] + dot_4(m, 0, a, b, c, d),
+                drive[1, i] + dot_4(m, 1, a, b, c, d),
+                drive[2, i] + dot_4(m, 2, a, b, c, d),
+                drive[3, i] + dot_4(m, 3, a, b, c, d),
+            )
+            track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = a, b, c, d
+    elif wide == 8:
+        a, b, c, d = track[0, 0], track[1, 0], track[2, 0], track[3, 0]
+        e, f, g, h = track[4, 0], track[5, 0], track[6, 0], track[7, 0]
         for i in range(count):
-            if not (r[i] >= up and w[i + 1] <= high):
-                return i
-    elif kind == SLEWS_DOWN:
-        for i in range(count):
-            if not (r[i] <= -down and w[i + 1] >= low):
-                return i
-    elif kind == AT_HIGH:
-        for i in range(count):
-            if not r[i] >= 0.0:
-                return i
+            a, b, c, d, e, f, g, h = (
+                drive[0, i] + dot_8(m, 0, a, b, c, d, e, f, g, h),
+                drive[1, i] + dot_8(m, 1, a, b, c, d, e, f, g, h),
+                drive[2, i] + dot_8(m, 2, a, b, c, d, e, f, g, h),
+                drive[3, i] + dot_8(m, 3, a, b, c, d, e, f, g, h),
+                drive[4, i] + dot_8(m, 4, a, b, c, d, e, f, g, h),
+                drive[5, i] + dot_8(m, 5, a, b, c, d, e, f, g, h),
+                drive[6, i] + dot_8(m, 6, a, b, c, d, e, f, g, h),
+                drive[7, i] + dot_8(m, 7, a, b, c, d, e, f, g, h),
+            )
+            track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = a, b, c, d
+            track[4, i + 1], track[5, i + 1], track[6, i + 1], track[7, i + 1] = e, f, g, h
     else:
         for i in range(count):
-            if not r[i] <= 0.0:
-                return i
-    return count
+            for r in range(size):
+                t = drive[r, i]
+                for j in range(size):
+                    t += m[r, j] * track[j, i]
+                track[r, i + 1] = t
+
+
+@compiled
+def row_steps(M: Any, row: Any, size: int, uc: Any, first: int, count: int, track: Any, result: Any) -> None:
+    """One row of some steps: what the signal, the constant and the states at the start of each step put in."""
+    m1 = M[row, size + 1] / 24.0
+    # mean over the step of the cubic through four samples: (13 (u1 + u2) - u0 - u3) / 24
+    s0, s1, s2, s3 = -m1, M[row, size] + 13.0 * m1, M[row, size + 2] + 13.0 * m1, M[row, size + 3]
+    u0, u1, u2, u3 = uc[first:], uc[first + 1 :], uc[first + 2 :], uc[first + 3 :]
+    done = size % 4
+    if done == 1:
+        a, ta = M[row, 0], track[0]
+        for i in range(count):
+            result[i] = ((s0 * (u0[i] + u3[i]) + s3) + (s1 * u1[i] + s2 * u2[i])) + a * ta[i]
+    elif done == 2:
+        a, b, ta, tb = M[row, 0], M[row, 1], track[0], track[1]
+        for i in range(count):
+            signal = (s0 * (u0[i] + u3[i]) + s3) + (s1 * u1[i] + s2 * u2[i])
+            result[i] = signal + (a * ta[i] + b * tb[i])
+    elif done == 3:
+        a, b, c, ta, tb, tc = M[row, 0], M[row, 1], M[row, 2], track[0], track[1], track[2]
+        for i in range(count):
+            signal = (s0 * (u0[i] + u3[i]) + s3) + (s1 * u1[i] + s2 * u2[i])
+            result[i] = (signal + a * ta[i]) + (b * tb[i] + c * tc[i])
+    else:
+        for i in range(count):
+            result[i] = (s0 * (u0[i] + u3[i]) + s3) + (s1 * u1[i] + s2 * u2[i])
+    while done < size:
+        a, b, c, d = M[row, done], M[row, done + 1], M[row, done + 2], M[row, done + 3]
+        ta, tb, tc, td = track[done], track[done + 1], track[done + 2], track[done + 3]
+        for i in range(count):
+            result[i] += (a * ta[i] + b * tb[i]) + (c * tc[i] + d * td[i])
+        done += 4
 
 
 @compiled
 def regime_steps(
     M: Any,
-    constant: Any,
-    by_slew: Any,
     uc: Any,
     first: int,
     count: int,
+    noise: Any,
     v: Any,
     kinds: Any,
-    low: Any,
-    high: Any,
-    up: Any,
-    down: Any,
+    ranges: Any,
+    owner: Any,
+    limits: Any,
+    wall_low: Any,
+    wall_high: Any,
+    inputs: int,
     st: Any,
+    extremes: Any,
     track: Any,
     drive: Any,
+    spans: Any,
+    counts: Any,
+    square: Any,
     out: Any,
 ) -> int:
-    """Take up to ``count`` steps in which every op-amp stays in its regime; how many were taken."""
+    """Take up to ``count`` steps in which every op-amp stays in its regime; how many were taken.
+
+    ``M`` is the matrix of a whole step, rows first; ``noise`` (N + 1, steps) or empty; ``inputs`` the + inputs watched.
+    """
+    low, high, up, down, range_low, range_high = limits
     size = v.shape[0]
     k = kinds.shape[0]
     n = size - k
-    rows = n + 3 * k + 1
-    hot = n + 2 * k
-    for a in range(rows):
-        t = constant[a]
-        for o in range(k):
-            if kinds[o] == SLEWS_UP:
-                t += by_slew[a, o] * up[o]
-            elif kinds[o] == SLEWS_DOWN:
-                t -= by_slew[a, o] * down[o]
-        signal_part(M, size, uc, first, count, t, a, drive[a])
+    G = owner.shape[0]
+    at_walls, at_plus = size + k, size + k + G
+    at_mean = at_plus + inputs
+    for a in range(size):
+        signal_part(M, size, uc, first, count, M[a, size + 3], a, drive[a])
+    if noise.shape[0]:
+        for a in range(size):
+            if a < n or kinds[a - n] == FOLLOWS:
+                d, s = drive[a], noise[a, first:]
+                for i in range(count):
+                    d[i] += s[i]
     for b in range(size):
         track[b, 0] = v[b]
-    recur(M, drive, track, size, count)
+    if size > 3:
+        recur_wide(M, drive, track, size, count, square)
+    else:
+        recur(M, drive, track, size, count)
     taken = count
+    # spans: inner voltages, walls, then the rates; of how many steps each is, stands in counts
     for o in range(k):
-        r = drive[size + o]
-        add_states(M, track, size + o, size, taken, r)
-        taken = lasts(kinds[o], track[n + o], r, taken, low[o], high[o], up[o], down[o])
-    if taken == 0:
-        return 0
-    take_steps(M, track, drive, hot, size, first, taken, v, out)
+        kind = kinds[o]
+        if kind == AT_HIGH or kind == AT_LOW:
+            spans[o, 0] = spans[o, 1] = v[n + o]
+            counts[o] = 0
+        else:
+            taken = lasts(track[n + o, 1:], taken, low[o], high[o], spans[o])
+            counts[o] = taken
+            if taken == 0:
+                return 0
+    for a in range(size, at_mean):
+        r = drive[a]
+        row_steps(M, a, size, uc, first, taken, track, r)
+        lo, hi = -np.inf, np.inf
+        if a < at_walls:
+            o = a - size
+            kind = kinds[o]
+            span = spans[k + G + o]
+            if kind == FOLLOWS:
+                lo, hi = -down[o], up[o]
+            elif kind == SLEWS_UP:
+                lo = up[o]
+            elif kind == SLEWS_DOWN:
+                hi = -down[o]
+            elif kind == AT_HIGH or (kind >= AT_WALL and (kind - AT_WALL) % 2 == 0):
+                lo = 0.0
+            else:
+                hi = 0.0
+            at = k + G + o
+        elif a < at_plus:
+            m = a - at_walls
+            kind = kinds[owner[m]]
+            if kind != AT_WALL + 2 * m + 1:
+                lo = wall_low[m]
+            if kind != AT_WALL + 2 * m:
+                hi = wall_high[m]
+            at = k + m
+            span = spans[at]
+        else:
+            o = a - at_plus
+            if ranges[o] != BELOW:
+                lo = range_high[o] if ranges[o] == ABOVE else range_low[o]
+            if ranges[o] != ABOVE:
+                hi = range_low[o] if ranges[o] == BELOW else range_high[o]
+            at = k + G + k
+            span = spans[at]
+        taken = lasts(r, taken, lo, hi, span)
+        counts[at] = taken
+        if taken == 0:
+            return 0
+    mean = drive[at_mean]
+    row_steps(M, at_mean, size, uc, first, taken, track, mean)
+    for b in range(size):
+        v[b] = track[b, taken]
+    for i in range(taken):
+        out[first + i] = mean[i]
+    if noise.shape[0]:
+        for i in range(taken):
+            out[first + i] += noise[size, first + i]
     for o in range(k):
-        note_path(st[o], track[n + o], drive[hot + 1 + o], taken)
-        if kinds[o] == FOLLOWS:  # its rate at the end of a step, not only its mean over one
-            fastest = st[o, SLEW]
-            r = drive[size + o]
-            for i in range(taken):
-                fastest = max(fastest, abs(r[i]))
-            st[o, SLEW] = fastest
-        if kinds[o] >= AT_HIGH:
+        kind = kinds[o]
+        if counts[o] > taken:
+            span_of(track[n + o, 1:], taken, spans[o])
+        note_span(extremes[o], spans[o], v[n + o])
+        if kind == FOLLOWS:
+            if counts[k + G + o] > taken:
+                span_of(drive[size + o], taken, spans[k + G + o])
+            st[o, SLEW] = max(st[o, SLEW], max(spans[k + G + o, 0], -spans[k + G + o, 1]))
+        elif kind == SLEWS_UP:
+            st[o, SLEW] = max(st[o, SLEW], up[o])
+        elif kind == SLEWS_DOWN:
+            st[o, SLEW] = max(st[o, SLEW], down[o])
+        elif kind >= AT_WALL and (kind - AT_WALL) // 2 < k:
+            st[o, STARVED] += taken
+        else:
             st[o, CLIPPED] += taken
+        if ranges[o] != IN_RANGE:
+            st[o, OUTSIDE] += taken
+    for m in range(G):
+        if counts[k + m] > taken:
+            span_of(drive[at_walls + m], taken, spans[k + m])
+        note_span(extremes[k + m], spans[k + m], drive[at_walls + m, taken - 1])
     return taken
 
 
 @compiled
+def note_span(extreme: Any, span: Any, latest: float) -> None:
+    """Take a highest and a lowest value into account, and the latest."""
+    extreme[0], extreme[1], extreme[2] = max(extreme[0], span[0]), min(extreme[1], span[1]), latest
+
+
+@compiled
+def between(whole: Any, leg: int, after: int, part: float, parts: Any, wholes: Any) -> None:
+    """The matrix of a whole step between two way stations of a glide, into the last place for matrices."""
+    slot = parts.shape[0] - 1
+    for a in range(whole.shape[1]):
+        for b in range(whole.shape[2]):
+            m = whole[leg, a, b] + part * (whole[after, a, b] - whole[leg, a, b])
+            parts[slot, 0, a, b] = m
+            wholes[slot, b, a] = m
+
+
+@compiled
 def run_macro(
-    free: Any,
-    constant: Any,
-    base: Any,
-    turn: Any,
-    rate: Any,
-    out_row: Any,
-    current: Any,
+    whole: Any,
+    all_equations: Any,
+    all_laws: Any,
+    all_rails: Any,
+    all_walls: Any,
+    all_gains: Any,
+    owner: Any,
+    fixed_limits: Any,
+    step_s: float,
     u: Any,
     mean_out: Any,
     steps: int,
     state: Any,
     regimes: Any,
-    low: Any,
-    high: Any,
-    up: Any,
-    down: Any,
+    places: Any,
     stats: Any,
+    all_extremes: Any,
+    all_junctions: Any,
+    noise: Any,
     at: int,
     leg_steps: int,
-    matrices: Any,
-    constants: Any,
-    slews: Any,
-    levels: Any,
-    known: Any,
-    free_now: Any,
-    constant_now: Any,
-    z: Any,
-    trial: Any,
-    work: Any,
-    track: Any,
-    drive: Any,
+    book: Any,
+    last: Any,
+    store: Any,
+    room: Any,
+    tracks: Any,
 ) -> None:
     """Run the circuit over ``steps`` steps for every channel.
 
     Parameters
     ----------
-    free, constant : (g, r, n + k + 3), (g, r)
-        Matrix of a step while every op-amp follows, at the way stations of a glide, r = n + 3k + 1; g = 1 without one.
-    base, turn, rate, out_row, current : (g, n, d), (g, n, k), (g, k, d), (g, d), (g, k, d)
-        Continuous equations at each station, see ``macromodel``.
-    u, mean_out : (c, steps + 3), (c, steps)
+    whole : (g, c, r)
+        Matrix of a step in which every op-amp follows, columns first, at the way stations of a glide; g = 1 without one.
+    all_equations : tuple
+        ``base, turn, rate, out, walls, plus, port`` at each station, see ``macromodel.MacroEquations``.
+    all_laws, all_rails, all_walls, all_gains : (g, np, LAW), (g, 2, k), (g, 2, G), (g, G)
+        Laws of the ports; lowest and highest voltage of each op-amp; limits of each wall; how far a wall's row moves with
+        its op-amp.
+    owner : (G,) int64
+        Op-amp that each wall limits; walls 0 to k - 1 are the output currents, k to 2k - 1 the output pins.
+    fixed_limits : tuple of (k,)
+        ``up, down``: fastest changes [V/step]; ``range_low, range_high``: of the + inputs [V].
+    step_s : float
+        A step [s].
+    u, mean_out : (channels, steps + 3), (channels, steps)
         As in ``kernels.run_steps``.
-    state : (c, n + k)
-        States and op-amps.
-    regimes : (c, k) int64
-        What each op-amp does.
-    low, high, up, down : (k,)
-        Limits of each op-amp's voltage [V] and of its rate [V/step].
-    stats : (c, k, STATS)
-        Running statistics.
+    state, regimes, places : (channels, N), (channels, k) int64, (channels, k) int64
+        States; what each op-amp does; where its + input is.
+    stats, all_extremes, all_junctions : (channels, k, STATS), (channels, k + G, 3), (channels, 4, np)
+        Running statistics; highest, lowest and latest of every op-amp and wall; junction voltages: at present, room, room, slope.
+    noise : (channels, N + 1, steps)
+        What noise adds to the states and to the output's mean in each step; (channels, 0, 0) for none.
     at, leg_steps : int
         Steps that the glide has taken, steps between its way stations; ``leg_steps`` is 0 without a glide.
-    matrices, constants, slews, levels, known
-        Regimes that have been met, by mask of the op-amps that follow: (m, r, n + k + 3), (m, r), (m, r, k),
-        (m, LEVELS + 1, d, d), and (m + 1, 2) int64: whether the step and the levels are there; the last row holds the
-        station they are of.
-    free_now, constant_now, z, trial, work, track, drive
-        Room: (r, n + k + 3), (r,), (d,), (d,), (4, d, d), (n + k, CHUNK + 1), (r, CHUNK).
+    book, last, store
+        Regimes met: (m, BOOK) int64, (2,) int64, and their matrices, with one place more: (m + 1, LEVELS + 1, c, r) and
+        (m + 1, r, c).
+    room, tracks
+        Room.
     """
+    base, turn, rate, out_row, rows_, plus, port = all_equations
+    all_equations = (bare(base), bare(turn), bare(rate), bare(out_row), bare(rows_), bare(plus), bare(port))
+    whole, all_laws, all_rails, all_walls, all_gains = (
+        bare(whole), bare(all_laws), bare(all_rails), bare(all_walls), bare(all_gains),
+    )  # fmt: skip
+    up, down, range_low, range_high = fixed_limits
+    fixed_limits = (bare(up), bare(down), bare(range_low), bare(range_high))
+    up, down, range_low, range_high = fixed_limits
+    owner, u, mean_out, state, regimes, places = (
+        bare(owner), bare(u), bare(mean_out), bare(state), bare(regimes), bare(places),
+    )  # fmt: skip
+    stats, all_extremes, all_junctions, noise = (
+        bare(stats),
+        bare(all_extremes),
+        bare(all_junctions),
+        bare(noise),
+    )
+    book, last = bare(book), bare(last)
+    r0, r1, r2, r3, r4, r5, r6, r7, r8 = room
+    room = (bare(r0), bare(r1), bare(r2), bare(r3), bare(r4), bare(r5), bare(r6), bare(r7), bare(r8))
     channels, size = state.shape
-    k = low.shape[0]
+    k = up.shape[0]
     n = size - k
-    rows = n + 3 * k + 1
+    G = owner.shape[0]
+    t0, t1, t2, t3, t4 = tracks
+    track, drive, spans, counts, square = bare(t0), bare(t1), bare(t2), bare(t3), bare(t4)
     chunk = drive.shape[1]
-    last = free.shape[0] - 1
-    whole = (1 << k) - 1
+    final = whole.shape[0] - 1
+    kind_count = AT_WALL + 2 * G
+    ports = all_laws.shape[1]
+    inputs = all_equations[5].shape[1]
+    parts, wholes = bare(store[0]), bare(store[1])
+    now = parts.shape[0] - 1
+    signal = room[8]
     for c in range(channels):
-        v, uc, out, st, kinds = state[c], u[c], mean_out[c], stats[c], regimes[c]
+        v, uc, out, st, kinds, ranges = state[c], u[c], mean_out[c], stats[c], regimes[c], places[c]
+        extremes, junctions, added = all_extremes[c], all_junctions[c], noise[c]
         done = 0
         span = chunk
         while done < steps:
-            mask = 0
-            for o in range(k):
-                if kinds[o] == FOLLOWS:
-                    mask |= 1 << o
             place = at + done
-            leg = min(place // leg_steps, last) if leg_steps > 0 else last
-            if known[whole + 1, 0] != leg:  # what was met belongs to another station
-                known[:, :] = 0
-                known[whole + 1, 0] = leg
+            leg = min(place // leg_steps, final) if leg_steps > 0 else final
             taken = 0
-            if leg_steps > 0:
-                after = min(leg + 1, last)
-                part = (place - leg * leg_steps) / leg_steps if leg < last else 0.0
-                count = 1
-                if mask == whole:
-                    for a in range(rows):
-                        constant_now[a] = constant[leg, a] + part * (constant[after, a] - constant[leg, a])
-                        for b in range(size + 3):
-                            free_now[a, b] = free[leg, a, b] + part * (free[after, a, b] - free[leg, a, b])
-                    taken = regime_steps(
-                        free_now,
-                        constant_now,
-                        slews[mask],
-                        uc,
-                        done,
-                        1,
-                        v,
-                        kinds,
-                        low,
-                        high,
-                        up,
-                        down,
-                        st,
-                        track,
-                        drive,
-                        out,
-                    )
-            else:
-                count = min(span, steps - done)
-                if known[mask, 0] == 0:
-                    step_matrix(
-                        base[leg],
-                        turn[leg],
-                        rate[leg],
-                        out_row[leg],
-                        current[leg],
-                        mask,
-                        work,
-                        matrices[mask],
-                        constants[mask],
-                        slews[mask],
-                    )
-                    known[mask, 0] = 1
+            count = 1
+            gliding = leg_steps > 0
+            for o in range(k):
+                gliding = gliding and kinds[o] == FOLLOWS and ranges[o] == IN_RANGE
+            if gliding:
+                part = (place - leg * leg_steps) / leg_steps if leg < final else 0.0
+                between(whole, leg, min(leg + 1, final), part, parts, wholes)
+            if ports == 0 and (gliding or leg_steps == 0):
+                slot = now
+                if leg_steps == 0:
+                    count = min(span, steps - done)
+                    slot = place_of(book, key_of(kinds, ranges, kind_count), leg, last)
+                    if (
+                        book[slot, HAS_WHOLE] == 0
+                    ):  # not the one among the parts: that differs by its rounding
+                        fill_slot(all_equations, leg, kinds, ranges, up, down, True, parts[now], room)
+                        wholes[slot, :, :] = parts[now, 0].T
+                        book[slot, HAS_WHOLE] = 1
+                limits = (all_rails[leg, 0], all_rails[leg, 1], up, down, range_low, range_high)
                 taken = regime_steps(
-                    matrices[mask],
-                    constants[mask],
-                    slews[mask],
-                    uc,
-                    done,
-                    count,
-                    v,
-                    kinds,
-                    low,
-                    high,
-                    up,
-                    down,
-                    st,
-                    track,
-                    drive,
-                    out,
-                )
+                    wholes[slot], uc, done, count, added, v, kinds, ranges, owner, limits, all_walls[leg, 0],
+                    all_walls[leg, 1], inputs, st, extremes, track, drive, spans, counts, square, out,
+                )  # fmt: skip
             done += taken
             if taken == count:
                 span = min(2 * span, chunk)
                 continue
             span = max(8, span // 2)
             u0, u1 = uc[done + 1], uc[done + 2]
-            um = (13.0 * (u0 + u1) - (uc[done] + uc[done + 3])) * (1.0 / 24.0)
-            for b in range(size):
-                z[b] = v[b]
-            z[size] = u0
-            z[size + 1] = 6.0 * um - 4.0 * u0 - 2.0 * u1
-            z[size + 2] = 6.0 * (u0 + u1) - 12.0 * um
-            walk(
-                base[leg],
-                turn[leg],
-                rate[leg],
-                out_row[leg],
-                levels,
-                known,
-                z,
-                trial,
-                kinds,
-                low,
-                high,
-                up,
-                down,
-                st,
-                n,
-                k,
-                work,
-            )
-            for b in range(size):
-                v[b] = z[b]
-            out[done] = z[n + 2 * k + 4]
-            for o in range(k):
-                amps = 0.0
-                for j in range(z.shape[0]):
-                    amps += current[leg, o, j] * z[j]
-                st[o, CURRENT] = max(st[o, CURRENT], abs(amps))
-                if not np.isfinite(z[n + o]):
-                    st[o, UNSOLVED] += 1.0
+            signal[0], signal[2] = u0, u1
+            signal[1] = (13.0 * (u0 + u1) - (uc[done] + uc[done + 3])) * (1.0 / 24.0)
+            mean = walk(
+                all_equations, all_laws, all_rails, all_walls, all_gains, owner, fixed_limits, leg, gliding, step_s,
+                v, signal, kinds, ranges, st, extremes, junctions, book, last, parts, room,
+            )  # fmt: skip
+            if added.shape[0]:
+                for b in range(size):
+                    if b < n or kinds[b - n] == FOLLOWS:
+                        v[b] += added[b, done]
+                mean += added[size, done]
+            out[done] = mean
             done += 1

@@ -1,151 +1,352 @@
-"""Op-amps as they are: the circuit's equations with each op-amp's gain-bandwidth, slew rate and output resistance.
+"""Circuits with op-amps as they are, with diodes and with fixed voltages: their equations, limits and rest.
 
-An op-amp is an integrator ``w`` behind its input difference ``e`` and in front of its output resistance::
+An op-amp is an integrator ``w`` behind its input difference ``e`` and in front of its output stage::
 
-    w' = clip(wt (e + offset) - wp w, -slew down, slew up),   low <= w <= high
+    w' = clip(wt (e + offset) - wp w, -slew down, slew up)
     wt = 2 pi gain-bandwidth, wp = wt / open-loop gain
 
-so the network sees ``w`` as a voltage behind a resistor, and its input currents as currents drawn from its nodes.
+A second pole puts a lag ``q' = w2 (e - q)`` in the place of ``e``. The network sees ``w`` as a voltage behind the output
+stage, its input currents as currents drawn from its nodes, and a diode as a current that flows between two nodes. What
+limits an op-amp besides its rails is a *wall*: a row over the state that must stay between two values, such as the
+output current, or the voltage of the pin less the drop that its load current causes.
 """
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import math
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
-from preview.circuit.opamp import OpAmpModel
-from preview.network.expansion import gain_bandwidth_hz
+from preview.circuit.netlist import GND, Charge, Junction, Netlist
+from preview.dsp import port_kernels
+from preview.network.expansion import expanded, gain_bandwidth_hz, inner_node, output_ohm, second_pole_hz
 from preview.network.statespace import Topology
 
-__all__ = ["MacroEquations", "following_step", "macro_equations", "resting_state"]
+__all__ = ["Limits", "MacroEquations", "MacroModel"]
 
 Real = NDArray[np.float64]
+
+LEAST_WALL_GAIN = 0.02
+"""Share of an op-amp's move that its pin must feel at once to be held itself; else the inner voltage is."""
+REVERSED_V_PER_S = 1e9
+"""Rate at which an output without a slew limit runs off when its input reverses [V/s]."""
 
 
 @dataclass(frozen=True, slots=True)
 class MacroEquations:
-    """Continuous equations per step, for g sets of values; columns as in ``macro_kernels``, d = n + 2k + 5."""
+    """Continuous equations per step, for g sets of values; rows over an instant, columns as in ``regime_kernels``."""
 
     base: Real
-    """(g, n, d): rate of the physical states, without what they take from the op-amps' rates."""
+    """(g, n, c): rate of the network's states, without what they take from the op-amps' rates."""
     turn: Real
     """(g, n, k): that share."""
     rate: Real
-    """(g, k, d): rate of each op-amp while it follows."""
+    """(g, 3, k, c): rate of each op-amp while it follows, with its + input in, above and below its range."""
     out: Real
-    """(g, d): the output node."""
-    current: Real
-    """(g, k, d): output current of each op-amp [A]."""
+    """(g, c): the output node."""
+    walls: Real
+    """(g, G, c): output currents [A], output pins [V], and what else limits; in the order of ``Limits.owner``."""
+    plus: Real
+    """(g, k or 0, c): + inputs [V], where any op-amp limits them."""
+    port: Real
+    """(g, np, c): voltage across each port [V]."""
+
+    def all(self) -> tuple[Real, ...]:
+        """The arrays in the order the kernels take them."""
+        return self.base, self.turn, self.rate, self.out, self.walls, self.plus, self.port
 
 
-def macro_equations(
-    topology: Topology, values: Real, models: Sequence[OpAmpModel], step_s: float
-) -> MacroEquations:
-    """Equations for sets of values.
+@dataclass(frozen=True, slots=True)
+class Limits:
+    """Where the op-amps limit, for g sets of values."""
+
+    rails: Real
+    """(g, 2, k): lowest and highest inner voltage [V]."""
+    walls: Real
+    """(g, 2, G): least and greatest value of each wall's row."""
+    gains: Real
+    """(g, G): how far a wall's row moves with its op-amp."""
+    laws: Real
+    """(g, np, LAW): the ports, see ``port_kernels``."""
+
+
+@dataclass(frozen=True, slots=True)
+class _Slope:
+    """A swing that hangs on the load: ``pin + ohm * current`` stays below (above) a value."""
+
+    opamp: int
+    ohm: float
+    low_v: float
+    high_v: float
+
+
+class MacroModel:
+    """A circuit's equations, ready for sets of values.
 
     Parameters
     ----------
-    topology : Topology
-        Of the expanded netlist, see ``network.expansion``.
-    values : ndarray, shape (g, branches)
-        Ohm, farad and henry.
-    models : sequence of OpAmpModel
-        One an op-amp.
+    netlist : Netlist
+        Checked circuit.
     step_s : float
         Length of a step [s].
     """
-    space = topology.evaluate(values)
-    sets, n, _ = space.B.shape
-    k = len(models)
-    d = n + 2 * k + 5
-    T = step_s
-    input_a = np.array(
-        [
-            sign
-            for o in models
-            for sign in (o.bias_a + o.offset_current_a / 2, o.bias_a - o.offset_current_a / 2)
+
+    def __init__(self, netlist: Netlist, step_s: float) -> None:
+        self.netlist = netlist
+        self.step_s = step_s
+        inner = expanded(netlist)
+        self.inner = inner
+        self.sites = netlist.opamps
+        self.ports = inner.ports
+        k = len(self.sites)
+        watched = [(p.a, p.b) for p in inner.ports]
+        watched += [(o.plus, GND) for o in netlist.opamps] + [(o.out, GND) for o in netlist.opamps]
+        self._nodes = inner.nodes
+        self.topology = Topology(inner, drawn=inner.nodes, watched=watched)
+        self._lags = [i for i, o in enumerate(self.sites) if math.isfinite(second_pole_hz(o.model))]
+        self.n = self.topology.states + len(self._lags)
+        self.k = k
+        self.size = self.n + k
+        self.columns = self.size + 4 + 2 * len(self.ports)
+        self._watches_inputs = any(
+            math.isfinite(o.input_high_v) or math.isfinite(o.input_low_v) for o in self.sites
+        )
+        self._slopes = self._swing_slopes()
+        self.owner = np.array([*range(k), *range(k), *(s.opamp for s in self._slopes)], dtype=np.int64)
+        self.charged = [
+            next(i for i, b in enumerate(inner.branches) if b.designator == p.designator)
+            if isinstance(p.law, Charge)
+            else -1
+            for p in inner.ports
         ]
-    )
-    offset_v = np.array([o.offset_v for o in models])
-    wt = 2.0 * np.pi * np.array([gain_bandwidth_hz(o) for o in models])
-    wp = np.array([w / o.open_loop_gain for w, o in zip(wt, models, strict=True)])
-    at_u, at_1 = n + k, n + 2 * k + 3
 
-    def lay(over_x: Real, over_s: Real) -> Real:
-        """Rows over x and s, written over the augmented state; x = p + kappa s."""
-        s_part = over_s + over_x @ space.kappa
-        rows = np.zeros((sets, over_x.shape[1], d))
-        rows[:, :, :n] = over_x
-        rows[:, :, n : n + k] = s_part[:, :, 1 : 1 + k]
-        rows[:, :, at_u] = s_part[:, :, 0]
-        rows[:, :, at_1] = s_part[:, :, 1 + k :] @ input_a
-        return rows
+    def values_of(self, netlist: Netlist) -> Real:
+        """Values of a netlist of this topology, in the model's order, shape (branches,)."""
+        return self.topology.values_of(expanded(netlist))
 
-    base = T * lay(space.A, space.B)
-    base[:, :, at_u + 1] -= space.kappa[:, :, 0]
-    e = lay(space.C_e, space.D_e)
-    e[:, :, at_1] += offset_v
-    rate = T * wt[:, None] * e
-    rate[:, np.arange(k), n + np.arange(k)] -= T * wp
-    return MacroEquations(
-        base,
-        np.ascontiguousarray(space.kappa[:, :, 1 : 1 + k]),
-        rate,
-        np.ascontiguousarray(lay(space.C_out, space.D_out)[:, 0]),
-        lay(space.C_i, space.D_i),
-    )
+    def fixed_limits(self) -> tuple[Real, Real, Real, Real]:
+        """Fastest changes up and down [V/step]; least and greatest voltage of the + inputs [V]; each (k,)."""
+        return (
+            np.array([o.model.slew_up_v_per_s for o in self.sites]) * self.step_s,
+            np.array([o.model.slew_down_v_per_s for o in self.sites]) * self.step_s,
+            np.array([o.input_low_v for o in self.sites]),
+            np.array([o.input_high_v for o in self.sites]),
+        )
+
+    def _swing_slopes(self) -> list[_Slope]:
+        """Swings that hang on the load; of one slope both ways together."""
+        found: dict[tuple[int, float], list[float]] = {}
+        for i, site in enumerate(self.sites):
+            model = site.model
+            for sign, points, rail_v in (
+                (1.0, model.swing_high_points, site.high_v + model.swing_high_v),
+                (-1.0, model.swing_low_points, site.low_v - model.swing_low_v),
+            ):
+                for ohm, drop_v in _pieces(points):
+                    limit = found.setdefault((i, ohm), [-math.inf, math.inf])
+                    # sign (pin + ohm current) <= sign rail - drop at no current
+                    limit[1 if sign > 0 else 0] = rail_v - sign * drop_v
+        slopes = [_Slope(i, ohm, low, high) for (i, ohm), (low, high) in found.items() if ohm > 0.0]
+        self._flat = {i: (low, high) for (i, ohm), (low, high) in found.items() if ohm == 0.0}
+        return slopes
+
+    def equations(
+        self, values: Real, *, supply: Real | None = None, supply_per_step: float = 0.0
+    ) -> MacroEquations:
+        """Equations for sets of values.
+
+        Parameters
+        ----------
+        values : ndarray, shape (g, branches)
+            Ohm, farad and henry.
+        supply : ndarray, shape (g,), optional
+            Share of the supply that is there; all of it if not given.
+        supply_per_step : float
+            How that share grows.
+        """
+        space = self.topology.evaluate(values)
+        sets, n0 = space.A.shape[:2]
+        n, k, size, T = self.n, self.k, self.size, self.step_s
+        ports = len(self.ports)
+        at_u, at_1, at_i = size, size + 3, size + 4
+        drawn_at = 1 + k + len(self.netlist.fixed)
+        share = np.ones(sets) if supply is None else supply
+        fixed_v = np.array([f.volts for f in self.netlist.fixed])
+        drawn_a = np.zeros(len(self._nodes))
+        flows = np.zeros((len(self._nodes), ports))
+        where = {node: i for i, node in enumerate(self._nodes)}
+
+        def draw(node: str, amps: float) -> None:
+            if node != GND:
+                drawn_a[where[node]] += amps
+
+        for o in self.sites:
+            m = o.model
+            draw(o.plus, m.bias_a + m.offset_current_a / 2)
+            draw(o.minus, m.bias_a - m.offset_current_a / 2)
+            if m.crossover_v > 0.0:
+                draw(o.out, m.crossover_a)
+        for p, port in enumerate(self.ports):
+            for node, sign in ((port.a, 1.0), (port.b, -1.0)):
+                if node != GND:
+                    flows[where[node], p] += sign
+
+        def lay(over_x: Real, over_s: Real) -> Real:
+            """Rows over x and s, written over an instant; x = p + kappa s."""
+            s_part = over_s + over_x @ space.kappa
+            rows = np.zeros((sets, over_x.shape[1], self.columns))
+            rows[:, :, :n0] = over_x
+            rows[:, :, n : n + k] = s_part[:, :, 1 : 1 + k]
+            rows[:, :, at_u] = s_part[:, :, 0]
+            rows[:, :, at_1] = share[:, None] * (s_part[:, :, 1 + k : drawn_at] @ fixed_v)
+            rows[:, :, at_1] += s_part[:, :, drawn_at:] @ drawn_a
+            rows[:, :, at_i : at_i + ports] = s_part[:, :, drawn_at:] @ flows
+            return rows
+
+        base = np.zeros((sets, n, self.columns))
+        base[:, :n0] = T * lay(space.A, space.B)
+        base[:, :n0, at_u + 1] -= space.kappa[:, :, 0]
+        base[:, :n0, at_1] -= supply_per_step * (space.kappa[:, :, 1 + k : drawn_at] @ fixed_v)
+        e = lay(space.C_e, space.D_e)
+        watched = lay(space.C_v, space.D_v)
+        port_v, plus_v, pin_v = watched[:, :ports], watched[:, ports : ports + k], watched[:, ports + k :]
+        rate = self._rates(base, e, plus_v, n0)
+        turn = np.zeros((sets, n, k))
+        turn[:, :n0] = space.kappa[:, :, 1 : 1 + k]
+        current = lay(space.C_i, space.D_i)
+        for i, o in enumerate(self.sites):
+            w = inner_node(o)
+            for p, port in enumerate(self.ports):
+                current[:, i, at_i + p] += (port.a == w) * 1.0 - (port.b == w) * 1.0
+        return MacroEquations(
+            base=base,
+            turn=turn,
+            rate=rate,
+            out=np.ascontiguousarray(lay(space.C_out, space.D_out)[:, 0]),
+            walls=self._wall_rows(current, pin_v, turn),
+            plus=np.ascontiguousarray(plus_v if self._watches_inputs else plus_v[:, :0]),
+            port=np.ascontiguousarray(port_v),
+        )
+
+    def _rates(self, base: Real, e: Real, plus_v: Real, n0: int) -> Real:
+        """Rates of the op-amps; those of the lags are put into ``base``."""
+        sets = e.shape[0]
+        n, at_1 = self.n, self.size + 3
+        rate = np.zeros((sets, 3, self.k, self.columns))
+        for i, site in enumerate(self.sites):
+            model = site.model
+            wt = 2.0 * math.pi * gain_bandwidth_hz(model)
+            drive = e[:, i].copy()
+            if i in self._lags:
+                q = n0 + self._lags.index(i)
+                w2 = 2.0 * math.pi * second_pole_hz(model)
+                base[:, q] = self.step_s * w2 * e[:, i]
+                base[:, q, q] -= self.step_s * w2
+                drive[...] = 0.0
+                drive[:, q] = 1.0
+            drive[:, at_1] += model.offset_v
+            for case, bound, slew in (
+                (0, math.nan, 0.0),
+                (1, site.input_high_v, -model.slew_down_v_per_s),
+                (2, site.input_low_v, model.slew_up_v_per_s),
+            ):
+                if case and not math.isfinite(bound):
+                    continue
+                if case and model.input_overdrive == "reverses":
+                    fastest = min(abs(slew), REVERSED_V_PER_S) * self.step_s
+                    rate[:, case, i, at_1] = math.copysign(fastest, slew)
+                    continue
+                row = drive.copy()
+                if case:  # the input stage sees its + input no further than the range
+                    row -= plus_v[:, i]
+                    row[:, at_1] += bound
+                rate[:, case, i] = self.step_s * wt * row
+                rate[:, case, i, n + i] -= self.step_s * wt / model.open_loop_gain
+        return rate
+
+    def _wall_rows(self, current: Real, pin_v: Real, turn: Real) -> Real:
+        rows = [current, pin_v]
+        for s in self._slopes:
+            rows.append((pin_v[:, s.opamp] + s.ohm * current[:, s.opamp])[:, None])
+        walls = np.concatenate(rows, axis=1) if self.k else np.zeros((len(turn), 0, self.columns))
+        return np.ascontiguousarray(walls)
+
+    def wall_gains(self, equations: MacroEquations) -> Real:
+        """How far each wall's row moves with its op-amp, shape (g, G)."""
+        n = self.n
+        rows = equations.walls
+        own = rows[:, np.arange(len(self.owner)), n + self.owner]
+        return np.asarray(own - np.einsum("gmi,gim->gm", rows[:, :, :n], equations.turn[:, :, self.owner]))
+
+    def limits(self, values: Real, equations: MacroEquations, *, supply: Real | None = None) -> Limits:
+        """Limits for the same sets of values."""
+        sets, k = len(values), self.k
+        share = np.ones((sets, 1)) if supply is None else supply[:, None]
+        gains = self.wall_gains(equations)
+        rails = np.zeros((sets, 2, k))
+        walls = np.full((sets, 2, len(self.owner)), math.inf)
+        walls[:, 0] = -math.inf
+        for i, site in enumerate(self.sites):
+            model = site.model
+            low, high = site.low_v, site.high_v
+            if i in self._flat and np.abs(gains[:, k + i]).min() >= LEAST_WALL_GAIN:
+                # the pin is what stops; the inner voltage itself may go further
+                room = model.current_source_a if math.isfinite(model.current_source_a) else 0.1
+                reach = room * output_ohm(model)
+                walls[:, 0, k + i], walls[:, 1, k + i] = self._flat[i]
+                low, high = low - model.swing_low_v - reach, high + model.swing_high_v + reach
+            if model.crossover_v > 0.0:
+                low, high = low - model.crossover_v, high + model.crossover_v
+            else:
+                walls[:, 0, i], walls[:, 1, i] = -model.current_sink_a, model.current_source_a
+            rails[:, :, i] = low, high
+        for j, s in enumerate(self._slopes):
+            walls[:, 0, 2 * k + j], walls[:, 1, 2 * k + j] = s.low_v, s.high_v
+        with np.errstate(invalid="ignore"):
+            rails = rails * share[:, :, None]
+            walls[:, :, k:] = walls[:, :, k:] * share[:, :, None]
+        laws = np.zeros((sets, len(self.ports), port_kernels.LAW))
+        most_a = {
+            designator: amps
+            for o in self.sites
+            for designator, amps in (
+                (f"{o.designator}.source", o.model.current_source_a),
+                (f"{o.designator}.sink", o.model.current_sink_a),
+            )
+        }
+        for p, port in enumerate(self.ports):
+            laws[:, p] = _law(port.law)
+            laws[:, p, port_kernels.MOST] = most_a.get(port.designator, math.inf)
+            if self.charged[p] >= 0:
+                laws[:, p, port_kernels.FARAD] = values[:, self.charged[p]]
+        return Limits(rails, walls, gains, laws)
 
 
-def _generator(equations: MacroEquations) -> Real:
-    """Derivative of the augmented state by itself, per step, while every op-amp follows; first set, (d, d)."""
-    base, turn, rate = equations.base[0], equations.turn[0], equations.rate[0]
-    n, k = turn.shape
-    d = base.shape[1]
-    at_u = n + k
-    result = np.zeros((d, d))
-    result[:n] = base - turn @ rate
-    result[n : n + k] = rate
-    result[at_u, at_u + 1] = result[at_u + 1, at_u + 2] = 1.0
-    result[d - 1] = equations.out[0]
-    return result
+def _pieces(points: tuple[tuple[float, float], ...]) -> list[tuple[float, float]]:
+    """Resistance and drop at no current of each piece of a swing by its load current; flat before the first point."""
+    if not points:
+        return []
+    pieces = [(0.0, points[0][1])]
+    for (i0, d0), (i1, d1) in zip(points[:-1], points[1:], strict=True):
+        ohm = (d1 - d0) / (i1 - i0)
+        if ohm > 0.0:
+            pieces.append((ohm, d0 - ohm * i0))
+    return pieces
 
 
-def following_step(equations: MacroEquations) -> Real:
-    """Matrix of a step while every op-amp follows, for the first set, shape (n + 2k + 1, n + k + 3).
-
-    Rows and columns as in ``macro_kernels.step_matrix``, up to the mean of the output; by scipy's exponential.
-    """
-    from scipy.linalg import expm
-
-    n, k = equations.turn[0].shape
-    phi = expm(_generator(equations))
-    rows = np.concatenate([phi[: n + k], equations.rate[0] @ phi, phi[-1:]])
-    u, v1, v2 = rows[:, n + k : n + k + 1], rows[:, n + k + 1 : n + k + 2], rows[:, n + k + 2 : n + k + 3]
-    return np.concatenate(
-        [rows[:, : n + k], u - 4.0 * v1 + 6.0 * v2, 6.0 * v1 - 12.0 * v2, -2.0 * v1 + 6.0 * v2], axis=1
-    )
-
-
-def resting_state(equations: MacroEquations, low: Real, high: Real) -> Real:
-    """States and op-amps at rest without a signal, shape (n + k,): the DC operating point, rails respected.
-
-    Op-amps that would rest beyond a rail are put at it, the worst first, and the others solved again.
-    """
-    n, k = equations.turn[0].shape
-    size = n + k
-    a = _generator(equations)
-    matrix, constant = a[:size, :size].copy(), -a[:size, size + 3 + k].copy()
-    for _ in range(k + 1):
-        scale = np.maximum(np.abs(matrix).max(axis=1), 1e-300)
-        rest, *_ = np.linalg.lstsq(matrix / scale[:, None], constant / scale, rcond=1e-13)
-        over = np.maximum(rest[n:] - high, low - rest[n:])
-        if k == 0 or over.max() <= 1e-9:
-            return np.asarray(rest, dtype=np.float64)
-        worst = int(np.argmax(over))
-        matrix[n + worst] = 0.0
-        matrix[n + worst, n + worst] = 1.0
-        constant[n + worst] = high[worst] if rest[n + worst] > high[worst] else low[worst]
-    return np.asarray(rest, dtype=np.float64)
+def _law(law: Junction | Charge) -> Real:
+    """A port's law as the kernels take it."""
+    row = np.zeros(port_kernels.LAW)
+    if isinstance(law, Charge):
+        row[port_kernels.HALF], row[port_kernels.FARAD] = law.half_v, law.farad
+        return row
+    row[port_kernels.SATURATION], row[port_kernels.SLOPE] = law.saturation_a, law.slope_v
+    row[port_kernels.SERIES] = law.series_ohm
+    row[port_kernels.CRITICAL] = law.slope_v * math.log(law.slope_v / (math.sqrt(2.0) * law.saturation_a))
+    if math.isfinite(law.breakdown_v):
+        row[port_kernels.BREAKDOWN] = law.breakdown_v - law.breakdown_a * law.series_ohm
+        row[port_kernels.BREAKDOWN_CURRENT] = law.breakdown_a
+        row[port_kernels.BREAKDOWN_SLOPE] = law.breakdown_slope_v
+    return row

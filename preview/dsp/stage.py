@@ -197,15 +197,14 @@ class StageProcessor:
 
     def clear_readings(self) -> None:
         """Start the readings of every op-amp anew."""
-        stats = self._core.stats
-        stats[...] = 0.0
-        stats[:, :, kernels.HIGH] = stats[:, :, kernels.LOW] = self._core.outputs()
+        self._core.clear()
 
     def readings(self) -> tuple[OpAmpReading, ...]:
         """What each op-amp did since the readings were cleared, worst channel."""
         result = []
+        statistics = self._core.statistics()
         for j, opamp in enumerate(self._netlist.opamps):
-            s = self._core.stats[:, j]
+            s, model = statistics[:, j], opamp.model
             high, low = float(s[:, kernels.HIGH].max()), float(s[:, kernels.LOW].min())
             result.append(
                 OpAmpReading(
@@ -213,14 +212,17 @@ class StageProcessor:
                     peak_v=max(abs(high), abs(low)),
                     high_v=high,
                     low_v=low,
-                    headroom_db=0.0
-                    if s[:, kernels.CLIPPED].any()
-                    else _headroom_db(high, low, opamp.high_v, opamp.low_v),
+                    headroom_db=0.0 if s[:, kernels.CLIPPED].any() else self._core.headroom_db(j),
                     clip_events=int(s[:, kernels.EVENTS].sum()),
                     clipped_s=float(s[:, kernels.CLIPPED].sum()) * self.step_s,
                     slew_peak_v_per_s=float(s[:, kernels.SLEW].max()) / self.step_s,
-                    slew_limit_v_per_s=min(opamp.model.slew_up_v_per_s, opamp.model.slew_down_v_per_s),
+                    slew_limit_v_per_s=min(model.slew_up_v_per_s, model.slew_down_v_per_s),
                     current_peak_a=float(s[:, kernels.CURRENT].max()),
+                    current_limit_a=model.current_limit_a,
+                    current_limited_s=float(s[:, kernels.STARVED].sum()) * self.step_s,
+                    input_range_events=int(s[:, kernels.OUTSIDE_EVENTS].sum()),
+                    input_range_s=float(s[:, kernels.OUTSIDE].sum()) * self.step_s,
+                    rest_v=self._core.rest_v(j),
                     unsolved_steps=int(s[:, kernels.UNSOLVED].sum()),
                 )
             )
@@ -245,12 +247,3 @@ def load_kernels(*, compile_missing: bool = False) -> bool:
             circuit = Netlist("in", "out", branches, (site,))
             StageProcessor(circuit, sample_rate_hz=48_000.0, channels=1, quality=Quality.DRAFT)
     return there["run_steps"]
-
-
-def _headroom_db(high_v: float, low_v: float, rail_high_v: float, rail_low_v: float) -> float:
-    """Distance to the nearer rail [dB]; inf without rails or signal."""
-    room = math.inf
-    for peak, rail in ((high_v, rail_high_v), (-low_v, -rail_low_v)):
-        if math.isfinite(rail) and peak > 0.0:
-            room = min(room, 20.0 * math.log10(rail / peak) if rail > 0.0 else 0.0)
-    return max(room, 0.0)

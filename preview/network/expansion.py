@@ -1,25 +1,37 @@
-"""Op-amps taken apart: an inner voltage behind an output resistance, and the currents of the inputs."""
+"""Op-amps taken apart: an inner voltage behind an output stage, and what their inputs load the circuit with."""
 
 from __future__ import annotations
 
 import math
 from dataclasses import replace
 
-from preview.circuit.netlist import Branch, Netlist
+from preview.circuit.netlist import GND, Branch, Junction, Netlist, OpAmpSite, Port
 from preview.circuit.opamp import OpAmpModel
 from preview.circuit.parts import PartKind
-from preview.network.statespace import Topology
 
-__all__ = ["expanded", "expanded_topology", "gain_bandwidth_hz", "has_real_opamps", "output_ohm"]
+__all__ = [
+    "expanded",
+    "gain_bandwidth_hz",
+    "has_real_opamps",
+    "inner_node",
+    "output_ohm",
+    "second_pole_hz",
+]
 
 LEAST_OUTPUT_OHM = 0.01
 """Output resistance that an op-amp without one is given beside real ones [ohm]."""
 IDEAL_GAIN_BANDWIDTH_HZ = 1e9
 """Gain-bandwidth that an ideal op-amp is given beside real ones [Hz]."""
+CROSSOVER_SLOPE_V = 0.0259
+"""Slope voltage of the output transistors of a class-B stage, kT/q at 300 K [V]."""
+CROSSOVER_AT_A = 100e-6
+"""Current at which each of them takes half of the dead zone [A]."""
+CROSSOVER_LEAK_OHM = 10e6
+"""What joins the inner voltage to the output within the dead zone [ohm]."""
 
 
 def has_real_opamps(netlist: Netlist) -> bool:
-    """Whether any op-amp has a speed of its own."""
+    """Whether any op-amp has figures of its own."""
     return any(o.model.real for o in netlist.opamps)
 
 
@@ -33,20 +45,49 @@ def gain_bandwidth_hz(model: OpAmpModel) -> float:
     return model.gain_bandwidth_hz if math.isfinite(model.gain_bandwidth_hz) else IDEAL_GAIN_BANDWIDTH_HZ
 
 
+def second_pole_hz(model: OpAmpModel) -> float:
+    """Frequency of the second pole that leaves an op-amp its phase margin; inf at 90 degrees [Hz].
+
+    With ``A = GBW / (j f (1 + j f / f2))`` the gain is 1 at ``fc = GBW sin(PM)``, and ``90 - atan(fc / f2) = PM``.
+    """
+    if model.phase_margin_deg >= 90.0:
+        return math.inf
+    margin_rad = math.radians(model.phase_margin_deg)
+    return gain_bandwidth_hz(model) * math.sin(margin_rad) * math.tan(margin_rad)
+
+
+def inner_node(opamp: OpAmpSite) -> str:
+    """Node of the inner voltage of an op-amp taken apart."""
+    return f"{opamp.designator}.w"
+
+
 def expanded(netlist: Netlist) -> Netlist:
-    """The netlist with each op-amp's output resistance as a branch and its inner voltage as a node."""
-    inside = tuple(
-        Branch(f"{o.designator}.Rout", PartKind.RESISTOR, f"{o.designator}.w", o.out, output_ohm(o.model))
-        for o in netlist.opamps
-    )
+    """The netlist with each op-amp's inner voltage as its output node, followed by its output stage as parts.
+
+    The output stage is the output resistance or, for a class-B stage, a junction each way with that resistance. Input
+    capacitances are branches, but between nodes that are held they are left out.
+    """
+    held = {GND, netlist.input_node, *(f.node for f in netlist.fixed)}
+    branches, ports = list(netlist.branches), list(netlist.ports)
+    for o in netlist.opamps:
+        name, w, model = o.designator, inner_node(o), o.model
+        if model.crossover_v > 0.0:
+            saturation_a = CROSSOVER_AT_A * math.exp(-0.5 * model.crossover_v / CROSSOVER_SLOPE_V)
+            law = Junction(saturation_a, CROSSOVER_SLOPE_V, output_ohm(model))
+            ports += [Port(f"{name}.source", w, o.out, law), Port(f"{name}.sink", o.out, w, law)]
+            branches.append(Branch(f"{name}.leak", PartKind.RESISTOR, w, o.out, CROSSOVER_LEAK_OHM))
+        else:
+            branches.append(Branch(f"{name}.Rout", PartKind.RESISTOR, w, o.out, output_ohm(model)))
+        for label, a, b, farad in (
+            ("C+", o.plus, GND, model.input_farad),
+            ("C-", o.minus, GND, model.input_farad),
+            ("Cd", o.plus, o.minus, model.input_differential_farad),
+        ):
+            if farad > 0.0 and not (a in held and b in held):
+                branches.append(Branch(f"{name}.{label}", PartKind.CAPACITOR, a, b, farad))
     return replace(
         netlist,
-        branches=(*netlist.branches, *inside),
-        opamps=tuple(replace(o, out=f"{o.designator}.w") for o in netlist.opamps),
+        branches=tuple(branches),
+        ports=tuple(ports),
+        opamps=tuple(replace(o, out=inner_node(o)) for o in netlist.opamps),
     )
-
-
-def expanded_topology(netlist: Netlist) -> Topology:
-    """Topology of the expanded netlist; the current of every op-amp input is a further input."""
-    inner = expanded(netlist)
-    return Topology(inner, drawn=[node for o in inner.opamps for node in (o.plus, o.minus)])

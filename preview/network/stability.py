@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
 from preview.errors import CircuitError
-from preview.network.expansion import expanded, expanded_topology, gain_bandwidth_hz, has_real_opamps
+from preview.network.expansion import expanded, gain_bandwidth_hz, has_real_opamps, second_pole_hz
 from preview.network.statespace import Topology
 
 __all__ = ["check_stable", "closed_loop_poles"]
@@ -25,13 +27,26 @@ def closed_loop_poles(netlist: Netlist) -> NDArray[np.complex128]:
 
 def _check_real(netlist: Netlist) -> None:
     """Poles with every op-amp's own gain-bandwidth."""
-    topology = expanded_topology(netlist)
-    space = topology.evaluate(topology.values_of(expanded(netlist))[None])
+    inner = expanded(netlist)
+    topology = Topology(inner)
+    space = topology.evaluate(topology.values_of(inner)[None])
     k = len(netlist.opamps)
     A, B, C_e, D_e = space.A[0], space.B[0, :, 1 : k + 1], space.C_e[0], space.D_e[0, :, 1 : k + 1]
     wt = 2.0 * np.pi * np.array([gain_bandwidth_hz(o.model) for o in netlist.opamps])[:, None]
     wp = np.diag([w[0] / o.model.open_loop_gain for w, o in zip(wt, netlist.opamps, strict=True)])
-    _refuse_growth(np.linalg.eigvals(np.block([[A, B], [wt * C_e, wt * D_e - wp]])))
+    loop = np.block([[A, B], [wt * C_e, wt * D_e - wp]])
+    lagged = [i for i, o in enumerate(netlist.opamps) if math.isfinite(second_pole_hz(o.model))]
+    n, size = len(A), len(A) + k
+    whole = np.zeros((size + len(lagged),) * 2)
+    whole[:size, :size] = loop
+    for j, i in enumerate(lagged):  # the lag stands between the input difference and the integrator
+        w2 = 2.0 * np.pi * second_pole_hz(netlist.opamps[i].model)
+        e = np.concatenate([C_e[i], D_e[i]])
+        whole[n + i, :size] -= wt[i] * e
+        whole[n + i, size + j] = wt[i, 0]
+        whole[size + j, :size] = w2 * e
+        whole[size + j, size + j] = -w2
+    _refuse_growth(np.linalg.eigvals(whole))
 
 
 def _refuse_growth(poles: NDArray[np.complex128]) -> None:
@@ -66,7 +81,7 @@ def check_stable(netlist: Netlist) -> None:
     space = topology.evaluate(topology.values_of(netlist)[None])
     A, B, C_e, D_e = space.A[0], space.B[0], space.C_e[0], space.D_e[0]
     wt = TRIAL_GAIN_BANDWIDTH_RAD
-    loop = np.block([[A, B[:, 1:]], [wt * C_e, wt * D_e[:, 1:]]])
+    loop = np.block([[A, B[:, 1 : 1 + len(C_e)]], [wt * C_e, wt * D_e[:, 1 : 1 + len(C_e)]]])
     if loop.size:
         worst = float(np.linalg.eigvals(loop).real.max())
         if worst > 1e-4 * wt:

@@ -34,7 +34,8 @@ Real = NDArray[np.float64]
 
 @dataclass(frozen=True, slots=True)
 class StateSpace:
-    """Matrices of one or more sets of values; g sets, n states, m = 1 + k inputs, k op-amps."""
+    """Matrices of one or more sets of values; g sets, n states, k op-amps, m inputs: the signal, the op-amp outputs,
+    the fixed voltages, the drawn currents."""
 
     A: Real
     """(g, n, n) [1/s]."""
@@ -58,20 +59,25 @@ class StateSpace:
     """(g, k, n): charge that each op-amp's output has put into capacitors [C]."""
     D_q: Real
     """(g, k, m)."""
+    C_v: Real
+    """(g, w, n): voltages that are watched."""
+    D_v: Real
+    """(g, w, m)."""
 
     def closed(self) -> tuple[Real, Real, Real, Real]:
         """(A, B, C, D) from the signal to the output while no op-amp limits: ``e = 0`` solved for ``y``.
 
         Raises CircuitError where an op-amp's output does not reach its own inputs at once.
         """
-        y = invert_feedback(self.D_e[:, :, 1:])
+        outputs = slice(1, 1 + self.C_e.shape[1])
+        y = invert_feedback(self.D_e[:, :, outputs])
         y_x = -y @ self.C_e
         y_u = -y @ self.D_e[:, :, :1]
         return (
-            self.A + self.B[:, :, 1:] @ y_x,
-            self.B[:, :, :1] + self.B[:, :, 1:] @ y_u,
-            self.C_out + self.D_out[:, :, 1:] @ y_x,
-            self.D_out[:, :, :1] + self.D_out[:, :, 1:] @ y_u,
+            self.A + self.B[:, :, outputs] @ y_x,
+            self.B[:, :, :1] + self.B[:, :, outputs] @ y_u,
+            self.C_out + self.D_out[:, :, outputs] @ y_x,
+            self.D_out[:, :, :1] + self.D_out[:, :, outputs] @ y_u,
         )
 
 
@@ -97,7 +103,9 @@ class Topology:
     netlist : Netlist
         Checked circuit.
     drawn : sequence of str
-        Nodes that a current is drawn from; each current is a further input after the op-amp outputs [A].
+        Nodes that a current is drawn from; each current is a further input after the fixed voltages [A].
+    watched : sequence of (str, str)
+        Pairs of nodes whose voltage, first less second, is an output.
 
     Raises
     ------
@@ -105,9 +113,11 @@ class Topology:
         A node that nothing holds.
     """
 
-    def __init__(self, netlist: Netlist, *, drawn: Sequence[str] = ()) -> None:
+    def __init__(
+        self, netlist: Netlist, *, drawn: Sequence[str] = (), watched: Sequence[tuple[str, str]] = ()
+    ) -> None:
         self.netlist = netlist
-        self.known = (netlist.input_node, *(o.out for o in netlist.opamps))
+        self.known = (netlist.input_node, *(o.out for o in netlist.opamps), *(f.node for f in netlist.fixed))
         if len(set(self.known)) != len(self.known):
             raise CircuitError("two outputs drive one node", "give each its own node")
         self.free = tuple(n for n in netlist.nodes if n not in self.known)
@@ -124,8 +134,9 @@ class Topology:
                 self._drawn[self.free.index(node), i] = 1.0
         self._e_free, self._e_known = self._rows_of([(o.plus, o.minus) for o in netlist.opamps])
         self._out_free, self._out_known = self._rows_of([(netlist.output_node, GND)])
+        self._v_free, self._v_known = self._rows_of(watched)
 
-    def _rows_of(self, pairs: list[tuple[str, str]]) -> tuple[Real, Real]:
+    def _rows_of(self, pairs: Sequence[tuple[str, str]]) -> tuple[Real, Real]:
         free = np.zeros((len(pairs), len(self.free)))
         known = np.zeros((len(pairs), len(self.known)))
         for i, pair in enumerate(pairs):
@@ -281,12 +292,13 @@ class Topology:
         A, B = in_x(rates)
         C_out, D_out = in_x(known(self._out_free, self._out_known))
         C_e, D_e = in_x(known(self._e_free, self._e_known))
-        pick = np.eye(sources)[1:]
+        pick = np.eye(sources)[1 : 1 + len(self.netlist.opamps)]
         current = known(pick @ np.swapaxes(G_s[:, :, :sources], 1, 2), pick @ weigh(Rs, g, Rs))
         current[:, :, xi + m :] += pick @ Ls.T
         C_i, D_i = in_x(current)
         C_q, D_q = in_x(known(pick @ weigh(Cs, c, Cf), pick @ weigh(Cs, c, Cs)))
-        return StateSpace(A, B, to_x, C_out, D_out, C_e, D_e, C_i, D_i, C_q, D_q)
+        C_v, D_v = in_x(known(self._v_free, self._v_known))
+        return StateSpace(A, B, to_x, C_out, D_out, C_e, D_e, C_i, D_i, C_q, D_q, C_v, D_v)
 
     def values_of(self, netlist: Netlist) -> Real:
         """Values of a netlist of this topology in the order of its branches, shape (branches,)."""

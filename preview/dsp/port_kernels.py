@@ -1,0 +1,161 @@
+"""Diodes and class 2 capacitors in a part of a step, compiled.
+
+Over a part of a step the current of a port runs along the line through its values at 1/3 and at the end: collocation
+at the points of Radau IIA of two stages, order 3 and damped however stiff [HairerWanner1996]. The rest of the circuit
+is exact. The unknowns are the junction voltages at both points of every port; a junction's series resistance is taken
+into the circuit.
+"""
+
+from __future__ import annotations
+
+from typing import Any
+
+import numpy as np
+
+from preview.dsp.kernels import compiled, solve_small
+
+MAX_TURNS = 60
+"""Newton steps that a part of a step may take; 2 or 3 are usual."""
+TOLERANCE_V = 1e-8
+"""Last change at which the voltages are taken as found; the error left is about its square over the slope voltage."""
+
+# columns of a port's law: a junction has slope voltages, a class 2 capacitor has a half voltage
+SATURATION, SLOPE, SERIES, BREAKDOWN, BREAKDOWN_CURRENT, BREAKDOWN_SLOPE, HALF, FARAD, CRITICAL, MOST, LAW = (
+    range(11)
+)
+
+
+@compiled
+def junction(law: Any, v: float) -> tuple[float, float]:
+    """Current of a junction and its conductance at a voltage without the drop of its series resistance."""
+    f = law[SATURATION] * np.exp(min(v / law[SLOPE], 600.0))
+    current, slope = f - law[SATURATION], f / law[SLOPE]
+    if law[BREAKDOWN_SLOPE] > 0.0:
+        b = law[BREAKDOWN_CURRENT] * np.exp(min(-(v + law[BREAKDOWN]) / law[BREAKDOWN_SLOPE], 600.0))
+        current -= b
+        slope += b / law[BREAKDOWN_SLOPE]
+    if current > law[MOST]:  # the output stage of an op-amp gives hardly any more than its limit
+        slope *= 0.01 * law[MOST] / current
+        current = law[MOST] * (1.0 + 0.01 * np.log(current / law[MOST]))
+    return current, slope
+
+
+@compiled
+def limited_move(law: Any, old: float, new: float) -> float:
+    """A Newton step of a junction voltage, shortened where the exponential would run away [Nagel1975]."""
+    if law[HALF] > 0.0:
+        return new
+    vt = law[SLOPE]
+    if new > law[CRITICAL] and abs(new - old) > 2.0 * vt:
+        if old > 0.0:
+            f = 1.0 + (new - old) / vt
+            return old + vt * np.log(f) if f > 0.0 else law[CRITICAL]
+        return vt * np.log(new / vt)
+    if law[BREAKDOWN_SLOPE] > 0.0:
+        vz = law[BREAKDOWN_SLOPE]
+        over, before = -(new + law[BREAKDOWN]), -(old + law[BREAKDOWN])
+        if over > vz and abs(new - old) > 2.0 * vz:
+            if before > 0.0:
+                f = 1.0 + (over - before) / vz
+                return -law[BREAKDOWN] - (before + vz * np.log(f) if f > 0.0 else 0.0)
+            return -law[BREAKDOWN] - vz * np.log(over / vz)
+    return new
+
+
+@compiled
+def added_charge(law: Any, v: float) -> tuple[float, float]:
+    """Charge and capacitance that a class 2 dielectric adds to the linear capacitor."""
+    r = v / law[HALF]
+    return law[FARAD] * (law[HALF] * np.arctan(r) - v), law[FARAD] * (1.0 / (1.0 + r * r) - 1.0)
+
+
+@compiled
+def solve_ports(
+    laws: Any, open_v: Any, part: Any, first: int, column: int, length_s: float, v: Any, i: Any, room: Any
+) -> bool:
+    """Port voltages at 1/3 and at the end of a part of a step.
+
+    Parameters
+    ----------
+    laws : (np, LAW)
+        Their laws.
+    open_v : (2 np,)
+        Voltages without port currents, the ends first, then those at 1/3: rows from ``first`` of ``part``.
+    part : (c, r)
+        Matrix of the part; port currents at 1/3, then at the end, in the columns from ``column``.
+    length_s : float
+        The part's time [s].
+    v : (3, np)
+        Junction voltages at the start, at 1/3 and at the end; the last two hold a guess and receive the solution [V].
+    i : (2 np,)
+        Receives the currents at 1/3, then at the end [A].
+    room : (2 np + 3, 2 np)
+        Room.
+    """
+    ports = laws.shape[0]
+    size = 2 * ports
+    J, right = room[:size], room[size]
+    slope = room[size + 1]
+    for _ in range(MAX_TURNS):
+        for p in range(ports):
+            law = laws[p]
+            if law[HALF] > 0.0:
+                q0, _c = added_charge(law, v[0, p])
+                qa, ca = added_charge(law, v[1, p])
+                qb, cb = added_charge(law, v[2, p])
+                # inverse of Radau IIA's matrix (5/12, -1/12; 3/4, 1/4): the currents that move these charges
+                i[p] = (1.5 * (qa - q0) + 0.5 * (qb - q0)) / length_s
+                i[ports + p] = (-4.5 * (qa - q0) + 2.5 * (qb - q0)) / length_s
+                slope[p], slope[ports + p] = ca / length_s, cb / length_s
+            else:
+                i[p], slope[p] = junction(law, v[1, p])
+                i[ports + p], slope[ports + p] = junction(law, v[2, p])
+        for a in range(size):
+            p = a % ports
+            at_end = a >= ports
+            row = first + p if at_end else first + ports + p  # rows: ends first
+            t = open_v[p] if at_end else open_v[ports + p]
+            for b in range(size):
+                t += part[column + b, row] * i[b]
+            law = laws[p]
+            if law[HALF] == 0.0:
+                t -= law[SERIES] * i[a]
+            right[a] = t - (v[2, p] if at_end else v[1, p])
+            for b in range(size):
+                q = b % ports
+                r = part[column + b, row]
+                if laws[q, HALF] > 0.0:  # both currents hang on both voltages
+                    ra, rb = part[column + q, row], part[column + ports + q, row]
+                    g = (0.5 * ra + 2.5 * rb) if b >= ports else (1.5 * ra - 4.5 * rb)
+                    J[a, b] = -g * slope[b]
+                else:
+                    if a == b:
+                        r -= law[SERIES]
+                    J[a, b] = -r * slope[b]
+            J[a, a] += 1.0
+        if not solve_small(J, right, size):
+            return False
+        change = 0.0
+        for a in range(size):
+            p = a % ports
+            at = 2 if a >= ports else 1
+            old = v[at, p]
+            new = limited_move(laws[p], old, old + right[a])
+            if not np.isfinite(new):
+                return False
+            change = max(change, abs(new - old) - 1e-9 * abs(new))
+            v[at, p] = new
+        if change < TOLERANCE_V:
+            for p in range(ports):
+                law = laws[p]
+                if law[HALF] > 0.0:
+                    q0, _c = added_charge(law, v[0, p])
+                    qa, ca = added_charge(law, v[1, p])
+                    qb, cb = added_charge(law, v[2, p])
+                    i[p] = (1.5 * (qa - q0) + 0.5 * (qb - q0)) / length_s
+                    i[ports + p] = (-4.5 * (qa - q0) + 2.5 * (qb - q0)) / length_s
+                else:
+                    i[p], _g = junction(law, v[1, p])
+                    i[ports + p], _g = junction(law, v[2, p])
+            return True
+    return False
