@@ -146,6 +146,7 @@ def opamp_object(name: str, *, whole: bool = False) -> dict[str, object]:
         "class": sheet.class_name if sheet else None,
         "real": model.real,
         **{field.name: getattr(model, field.name) for field in fields(model) if field.name not in _REST},
+        "current_limit_a": model.current_limit_a,
         "assumed": list(model.assumed),
     }
     if whole:

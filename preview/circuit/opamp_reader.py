@@ -27,7 +27,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from pathlib import Path
-from typing import Literal
+from typing import Any, Literal
 
 from preview.circuit.opamp import OpAmpModel
 from preview.circuit.opamp_classes import CLASSES, shot_noise_a_rthz
@@ -291,7 +291,7 @@ class _Builder:
         self._class = CLASSES[class_name]
         self._why = f"class {class_name}, from memory: {self._class.reason}"
         self._given = {figure.name: figure for figure in figures}
-        self._values: dict[str, float] = {}
+        self._values: dict[str, Any] = {}
         self._sources: dict[str, str] = {}
         self._assumed: list[str] = []
         for field, names in FIGURE_FIELDS.items():

@@ -53,12 +53,13 @@ def test_a_whole_file_becomes_a_model() -> None:
     assert model.gain_bandwidth_hz == 10e6
     assert model.open_loop_gain == 200e3
     assert (model.slew_up_v_per_s, model.slew_down_v_per_s) == (5e6, 4e6)
+    assert (model.current_source_a, model.current_sink_a) == (0.03, 0.015)
     assert model.current_limit_a == 0.015
     assert model.bias_a == -100e-9
     assert model.offset_current_a == pytest.approx(10e-9)  # a tenth, as its class has it
     assert model.noise_v_rthz == pytest.approx(5e-9)  # 10 nV at 1 kHz with a corner of 3 kHz: half is white
     sources = dict(model.sources)
-    assert sources["current_limit_a"] == "sheet p. 3; hot (from memory)"
+    assert sources["current_sink_a"] == "sheet p. 3; hot (from memory)"
     assert sources["gain_bandwidth_hz"] == "sheet p. 1 (read)"
     assert "output_resistance_ohm" in model.assumed
     assert "bias_a" not in model.assumed
