@@ -6,14 +6,24 @@ from collections import defaultdict
 from collections.abc import Iterable, Iterator
 from typing import TYPE_CHECKING
 
-from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR
+from preview.circuit.nodes import (
+    GND,
+    IN,
+    LOAD_DESIGNATOR,
+    NEGATIVE_RAIL,
+    OUT,
+    POSITIVE_RAIL,
+    SOURCE_DESIGNATOR,
+)
 from preview.circuit.parts import PartKind
 from preview.errors import CircuitError
 
 if TYPE_CHECKING:
-    from preview.circuit.netlist import Netlist, OpAmpSite
+    from preview.circuit.elements import Netlist, OpAmpSite
 
 __all__ = ["check", "problems"]
+
+RAILS = (POSITIVE_RAIL, NEGATIVE_RAIL)
 
 Problem = tuple[str, str]
 """What is wrong, and the cure."""
@@ -51,22 +61,30 @@ def _listed(names: Iterable[str]) -> str:
     return f"{', '.join(most)} and {last}" if most else last
 
 
-def _uses(circuit: Netlist) -> dict[str, list[str]]:
-    """What is connected to each node, one entry a connection: ``R1``, ``the + input of U1`` ..."""
-    uses: dict[str, list[str]] = defaultdict(list)
+def _uses(circuit: Netlist) -> dict[str, dict[str, None]]:
+    """What is connected to each node, each part once: ``R1``, ``the + input of U1`` ..."""
+    uses: dict[str, dict[str, None]] = defaultdict(dict)
     for branch in circuit.branches:
-        uses[branch.a].append(branch.designator)
-        uses[branch.b].append(branch.designator)
+        uses[branch.a][branch.owner] = uses[branch.b][branch.owner] = None
     for opamp in circuit.opamps:
-        uses[opamp.plus].append(f"the + input of {opamp.designator}")
-        uses[opamp.minus].append(f"the - input of {opamp.designator}")
-        uses[opamp.out].append(f"the output of {opamp.designator}")
+        uses[opamp.plus][f"the + input of {opamp.designator}"] = None
+        uses[opamp.minus][f"the - input of {opamp.designator}"] = None
+        uses[opamp.out][f"the output of {opamp.designator}"] = None
+    for fixed in circuit.fixed:
+        if fixed.node not in RAILS:
+            uses[fixed.node][fixed.designator] = None
     return uses
 
 
+def _holders(circuit: Netlist) -> dict[str, str]:
+    """Nodes that gnd, the ideal source and fixed voltages hold, and what holds each, in words."""
+    held = {GND: "gnd", circuit.input_node: "the signal source"}
+    return held | {fixed.node: fixed.designator for fixed in circuit.fixed}
+
+
 def _driven(circuit: Netlist) -> set[str]:
-    """Nodes whose voltage is set whatever current flows: gnd, the ideal source and every op-amp output."""
-    return {GND, circuit.input_node, *(opamp.out for opamp in circuit.opamps)}
+    """Nodes whose voltage is set whatever current flows: those that are held, and every op-amp output."""
+    return {*_holders(circuit), *(opamp.out for opamp in circuit.opamps)}
 
 
 def _ends(circuit: Netlist) -> Iterator[Problem]:
@@ -82,7 +100,7 @@ def _shorted_parts(circuit: Netlist) -> Iterator[Problem]:
     for branch in circuit.branches:
         if branch.a == branch.b:
             yield (
-                f"both ends of {branch.designator} are on node {branch.a}",
+                f"both ends of {branch.owner} are on node {branch.a}",
                 "give it two different nodes or take it out",
             )
     for opamp in circuit.opamps:
@@ -94,6 +112,9 @@ def _shorted_parts(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
+    """Two things that each set the voltage of one node."""
+    yield from _voltage_loops(circuit)
+    holders = _holders(circuit)
     owner: dict[str, str] = {}
     for opamp in circuit.opamps:
         name, node = opamp.designator, opamp.out
@@ -104,6 +125,11 @@ def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
                 f"the output of {name} is on node {node}, which the signal source drives",
                 "give the output a node of its own, or the source a resistance",
             )
+        elif node in holders:
+            yield (
+                f"the output of {name} is on node {node}, which {_holder(holders[node])} holds",
+                "give the output a node of its own",
+            )
         elif node in owner:
             yield (
                 f"the outputs of {owner[node]} and {name} are both on node {node}",
@@ -112,11 +138,28 @@ def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
         owner.setdefault(node, name)
 
 
+def _voltage_loops(circuit: Netlist) -> Iterator[Problem]:
+    holders = {GND: "gnd", circuit.input_node: "the signal source"}
+    for fixed in circuit.fixed:
+        if fixed.node in holders:
+            yield (
+                f"{_holder(fixed.designator)} and {_holder(holders[fixed.node])} both hold node {fixed.node}: "
+                f"a loop of voltage sources",
+                "take one away, or put a resistor between them",
+            )
+        holders[fixed.node] = fixed.designator
+
+
+def _holder(name: str) -> str:
+    return f"the rail {name}" if name in RAILS else name
+
+
 def _dangling(circuit: Netlist) -> Iterator[Problem]:
     for node, users in _uses(circuit).items():
-        if len(users) == 1 and node not in (IN, OUT, GND, circuit.input_node):
+        if len(users) == 1 and node not in (IN, OUT, GND, *RAILS, circuit.input_node, circuit.output_node):
+            (user,) = users
             yield (
-                f"node {node} is dangling: only {users[0]} is connected to it",
+                f"node {node} is dangling: only {user} is connected to it",
                 "connect a second part to it, or check how its name is spelled",
             )
 
@@ -173,7 +216,8 @@ def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
             group[a] = b
         elif a == root(GND):
             yield (
-                f"{branch.designator} shorts the source, an op-amp output or gnd for direct current",
+                f"{branch.designator} shorts the source, an op-amp output or gnd, or a fixed voltage, "
+                f"for direct current",
                 "put its winding resistance in series, as a resistor",
             )
         else:
@@ -204,11 +248,11 @@ def _feedback(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _held(circuit: Netlist, opamp: OpAmpSite) -> str:
-    if opamp.minus == GND:
-        return ", which is on gnd"
-    if opamp.minus == circuit.input_node:
-        return ", which is held by the signal source"
-    return ""
+    """Why no feedback can reach the - input, where it is held."""
+    holder = _holders(circuit).get(opamp.minus)
+    if holder is None:
+        return ""
+    return ", which is on gnd" if holder == "gnd" else f", which is held by {_holder(holder)}"
 
 
 def _influenced(circuit: Netlist, start: str, *, through_opamps: bool) -> set[str]:
@@ -228,5 +272,8 @@ def _influenced(circuit: Netlist, start: str, *, through_opamps: bool) -> set[st
 
 
 def _no_signal_path(circuit: Netlist) -> Iterator[Problem]:
-    if OUT not in _influenced(circuit, circuit.input_node, through_opamps=True):
-        yield "nothing leads from in to out", "check the node names along the signal's way"
+    if circuit.output_node not in _influenced(circuit, circuit.input_node, through_opamps=True):
+        yield (
+            f"nothing leads from in to {circuit.output_node}",
+            "check the node names along the signal's way",
+        )

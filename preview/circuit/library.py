@@ -17,8 +17,9 @@ from pathlib import Path
 import platformdirs
 
 from preview.circuit.limits import QUANTITY, read_value
-from preview.circuit.parts import OpAmp, Part, Stage
+from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Stage
 from preview.circuit.reader import opamp_type, parse_stage, read_stage
+from preview.circuit.settings import read_setting, setting_note
 from preview.circuit.tables import decode, read_bytes
 from preview.errors import UnknownNameError
 from preview.values.notation import quoted, understood
@@ -73,7 +74,8 @@ def with_overrides(
     stage : Stage
         The stage as drawn.
     parts : Mapping
-        Designator to value text, such as ``{"R1": "4k7"}``; case does not matter in the designator.
+        Designator to its setting as text, such as ``{"R1": "4k7", "P1": "70 %", "S1": "open"}``; case does not
+        matter in the designator.
     opamps : Mapping
         Designator, or None for every op-amp, to type name. A named op-amp goes before None.
 
@@ -88,15 +90,9 @@ def with_overrides(
     """
     notes = []
     for name, text in parts.items():
-        part = _part(stage, name)
-        if isinstance(part, OpAmp):
-            raise UnknownNameError(
-                f"{part.designator} of stage {stage.name} is an op-amp and has no value",
-                f"give it a type: --opamp {part.designator}=ideal",
-            )
-        value = read_value(part.kind, text, f"{part.designator} = ")
-        stage = stage.with_part(replace(part, value=value))
-        notes.append(f"{part.designator}: {understood(text, QUANTITY[part.kind])}")
+        part, note = _changed(_part(stage, name), text, f"stage {stage.name}")
+        stage = stage.with_part(part)
+        notes.append(note)
     for target, text in sorted(opamps.items(), key=lambda item: item[0] is not None):
         type_name = opamp_type(text, "" if target is None else f"{target} = ")
         chosen = stage.opamps if target is None else (_opamp(stage, target),)
@@ -106,6 +102,28 @@ def with_overrides(
             stage = stage.with_part(replace(opamp, type=type_name))
         notes.append(f"{', '.join(opamp.designator for opamp in chosen)}: op-amp type {type_name}")
     return stage, tuple(notes)
+
+
+def _changed(part: Part, text: str, where: str) -> tuple[Part, str]:
+    """The part as the text has it, and how the text was understood."""
+    place = f"{part.designator} = "
+    match part:
+        case OpAmp():
+            raise UnknownNameError(
+                f"{part.designator} of {where} is an op-amp and has no value",
+                f"give it a type: --opamp {part.designator}=ideal",
+            )
+        case Diode():
+            raise UnknownNameError(
+                f"{part.designator} of {where} is a diode and has no value",
+                "its type stands in the stage file",
+            )
+        case FixedVoltage():
+            fixed = replace(part, value=read_value(part.kind, text, place))
+            return fixed, f"{part.designator}: {understood(text, QUANTITY[part.kind])}"
+        case _:
+            settable = part.with_setting(read_setting(part, text, place))
+            return settable, setting_note(settable, text)
 
 
 def _part(stage: Stage, name: str) -> Part:

@@ -239,8 +239,7 @@ def _check_nodes(group: Table, parts: list[Part]) -> None:
     """What only the parts together show: names alike but for case, no in, no out."""
     spelled: dict[str, str] = {}
     for part in parts:
-        nodes = part.nodes if isinstance(part, TwoTerminal) else (part.plus, part.minus, part.out)
-        for node in nodes:
+        for node in part.nodes:
             other = spelled.setdefault(node.lower(), node)
             if other != node:
                 raise StageFileError(
