@@ -17,8 +17,9 @@ from pathlib import Path
 import platformdirs
 
 from preview.circuit.limits import QUANTITY, read_value
+from preview.circuit.part_reader import opamp_type
 from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Stage
-from preview.circuit.reader import opamp_type, parse_stage, read_stage
+from preview.circuit.reader import parse_stage, read_stage
 from preview.circuit.settings import read_setting, setting_note
 from preview.circuit.tables import decode, read_bytes
 from preview.errors import UnknownNameError

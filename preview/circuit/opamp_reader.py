@@ -39,7 +39,7 @@ from preview.circuit.opamp_units import (
     parse_figure_value,
 )
 from preview.circuit.tables import Table, decode, parse_toml, read_bytes
-from preview.errors import NotationError, OpAmpFileError, StageFileError, printable
+from preview.errors import OpAmpFileError, StageFileError, printable
 
 __all__ = ["Found", "OpAmpSheet", "SheetFigure", "SheetSwing", "parse_opamp", "read_opamp", "read_sheet"]
 
@@ -171,7 +171,7 @@ def _sheet(top: Table, name: str) -> OpAmpSheet:
     class_name = top.text("class")
     if class_name not in CLASSES:
         raise top.error("class", "no such class of op-amp", f"classes are {', '.join(CLASSES)}")
-    title = _line(top, "title")
+    title = top.line("title", required=True)
     figures = _figures(top)
     swings = _swings(top)
     model = _Builder(class_name, figures, swings).model(name, title)
@@ -182,20 +182,12 @@ def _sheet(top: Table, name: str) -> OpAmpSheet:
         )
     return OpAmpSheet(
         class_name=class_name,
-        about=_line(top, "about", needed=False),
-        data_sheet=_line(top, "data_sheet", needed=False),
+        about=top.line("about"),
+        data_sheet=top.line("data_sheet"),
         figures=figures,
         swings=swings,
         model=model,
     )
-
-
-def _line(table: Table, key: str, *, needed: bool = True) -> str:
-    """Words on one line, cleaned."""
-    words = printable(" ".join(table.text(key, None if needed else "").split()))
-    if needed and not words:
-        raise table.error(key, "empty", "say it in a few words")
-    return words
 
 
 def _found(table: Table) -> Found:
@@ -211,11 +203,7 @@ def _found(table: Table) -> Found:
 
 def _value(table: Table, key: str, unit: Unit, low: float, high: float) -> float:
     """A figure within what is not taken for a slip [SI units]."""
-    text = table.text(key)
-    try:
-        value = parse_figure_value(text, unit)
-    except NotationError as error:
-        raise StageFileError(f"{table.place} {key} = {error.message}", error.hint) from error
+    value = table.read(key, lambda text: parse_figure_value(text, unit))
     if not low <= value <= high:
         allowed = f"{format_figure(low, unit)} to {format_figure(high, unit)}"
         raise table.error(key, "out of range", f"allowed are {allowed}")
@@ -246,11 +234,11 @@ def _figure(table: Table, name: str) -> SheetFigure:
     known = FIGURES[name]
     return SheetFigure(
         name=name,
-        text=_line(table, "value"),
+        text=table.line("value", required=True),
         value=_value(table, "value", known.unit, known.low, known.high),
-        source=_line(table, "source"),
+        source=table.line("source", required=True),
         found=_found(table),
-        condition=_line(table, "cond", needed=False),
+        condition=table.line("cond"),
         at_hz=_value(table, "at", "frequency", 0.1, 1e7) if "at" in table.data else None,
     )
 
@@ -276,9 +264,9 @@ def _swing(table: Table) -> SheetSwing:
         load_ohm=_value(table, "load", "resistance", *_SWING_LOADS),
         high_v=high,
         low_v=low,
-        source=_line(table, "source"),
+        source=table.line("source", required=True),
         found=_found(table),
-        condition=_line(table, "cond", needed=False),
+        condition=table.line("cond"),
     )
 
 

@@ -7,7 +7,7 @@ from preview.circuit.parts import Potentiometer, SettablePart, Switch
 from preview.errors import NotationError, PartValueError
 from preview.values.notation import format_value, parse_value, quoted, understood
 
-__all__ = ["read_position", "read_setting", "setting_note", "setting_text"]
+__all__ = ["check_position", "read_position", "read_setting", "setting_note", "setting_text"]
 
 _CONTACTS = {"closed": 1.0, "open": 0.0}
 _POSITIONS = "0 to 1, or 0 % to 100 %"
@@ -49,11 +49,14 @@ def read_position(text: str, where: str) -> float:
         position = parse_value(body, "percent") / 100.0 if body.endswith("%") else float(body)
     except ValueError as error:  # NotationError is one
         raise NotationError(f"{where}{quoted(text)}: not a position", f"write {_POSITIONS}") from error
-    if not 0.0 <= position <= 1.0:
-        raise PartValueError(
-            f"{where}{quoted(text)}: beyond the ends of the track", f"allowed are {_POSITIONS}"
-        )
+    check_position(position, f"{where}{quoted(text)}")
     return position
+
+
+def check_position(position: float, where: str) -> None:
+    """Raise PartValueError, its message starting with ``where``, for a position beyond the ends."""
+    if not 0.0 <= position <= 1.0:
+        raise PartValueError(f"{where}: beyond the ends of the track", f"allowed are {_POSITIONS}")
 
 
 def setting_text(part: SettablePart) -> str:

@@ -137,7 +137,7 @@ def test_single_supply_is_read() -> None:
             "[parts]: no part is connected to node in",
             "nodes are a, sum, out",
         ),
-        ('"resistor"', '"diode"', '[parts.R1] kind "diode" is not supported yet; supported are', ""),
+        ('"resistor"', '"diode"', "[parts.R1] nodes", 'write anode = "sum", cathode = "out"'),
         ('"resistor"', '"resitor"', '[parts.R1] kind = "resitor": no such kind', "did you mean resistor?"),
         ('kind = "resistor", ', "", "[parts.R1]: missing key kind", "write R1 ="),
         ('plus = "gnd"', 'plus = "sum"', '[parts.U1] minus = "sum": plus and minus are the same node', ""),
