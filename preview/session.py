@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from enum import StrEnum
 from pathlib import Path
 
 from preview.circuit.netlist import Netlist, netlist
+from preview.circuit.nodes import OUT
 from preview.circuit.parts import Stage, Supply
 from preview.values.levels import FullScale
 from preview.values.quality import Quality
@@ -43,6 +44,8 @@ class Session:
     """Quality of computation."""
     at_end: AtEnd = AtEnd.LOOP
     """What happens at the end of the file or region."""
+    output: str = OUT
+    """The node that is listened to and loaded: ``out``, or another of the stage's outputs."""
     notes: tuple[str, ...] = field(default=())
     """How each option was understood, one line each, for the screen."""
 
@@ -53,4 +56,10 @@ class Session:
             supply=self.supply,
             source_ohm=self.source_ohm,
             load_ohm=self.load_ohm,
+            output=self.output,
         )
+
+    def with_stage(self, stage: Stage) -> Session:
+        """The same session with another stage on its own rails; its output is kept where the stage has it."""
+        output = self.output if self.output in stage.outputs else OUT
+        return replace(self, stage=stage, supply=stage.supply, output=output)

@@ -9,6 +9,7 @@ from pathlib import Path
 from typing import TypeVar
 
 from preview.circuit.library import find_stage, with_overrides
+from preview.circuit.nodes import OUT
 from preview.circuit.parts import Stage, Supply
 from preview.errors import NotationError, UsageError, printable
 from preview.session import AtEnd, Session
@@ -44,6 +45,7 @@ VALUE_OPTIONS = (
     "--part",
     "--opamp",
     "--supply",
+    "--output",
     "--source",
     "--load",
     "--full-scale",
@@ -79,7 +81,11 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
         "--stage", action="append", metavar="NAME|FILE", help=f"the stage (default {DEFAULT_STAGE})"
     )
     group.add_argument(
-        "--part", action="append", default=[], metavar="R1=4k7", help="a part value; may be repeated"
+        "--part",
+        action="append",
+        default=[],
+        metavar="R1=4k7",
+        help="a part value; also P1=70%%, S1=open; may be repeated",
     )
     group.add_argument(
         "--opamp",
@@ -89,6 +95,12 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
         help="op-amp type, of all or of one; may be repeated",
     )
     group.add_argument("--supply", metavar="VOLTS", help='rails: "+15 -15", or "9" for a single supply')
+    group.add_argument(
+        "--output",
+        metavar="NODE",
+        default=OUT,
+        help="the output that is taken (default out), where there are more",
+    )
     group.add_argument("--source", metavar="OHM", help="resistance of the source (default 0)")
     group.add_argument("--load", metavar="OHM", help="resistance of the load (default none)")
     group.add_argument(
@@ -149,6 +161,9 @@ def session_from(
     if options.supply is not None:
         supply = Supply(*for_option("--supply", lambda: parse_supply(options.supply)))
     notes.append(f"supply {format_volts(supply.positive_v)} and {format_volts(supply.negative_v)}")
+    output: str = options.output.strip()
+    if output != OUT:
+        notes.append(f"output {output}")
     source_ohm = 0.0
     if options.source is not None:
         source_ohm = for_option(
@@ -170,6 +185,7 @@ def session_from(
         full_scale=full_scale,
         quality=_quality(options.quality),
         at_end=at_end,
+        output=output,
         notes=tuple(printable(note) for note in notes),
     )
     session.netlist()
@@ -190,7 +206,9 @@ def _assignments(texts: Sequence[str]) -> dict[str, str]:
     for text in texts:
         designator, equals, value = (piece.strip() for piece in text.partition("="))
         if not (designator and equals and value):
-            raise UsageError(f"--part {quoted(text)}: no part and value in it", "write --part R1=4k7")
+            raise UsageError(
+                f"--part {quoted(text)}: no part and value in it", "write --part R1=4k7, P1=70%, S1=open"
+            )
         designator = _as_before(designator, found)
         if found.get(designator, value) != value:
             raise UsageError(
@@ -278,7 +296,8 @@ def understood_values(session: Session) -> dict[str, object]:
     stage: Stage = session.stage
     return {
         "stage": stage.name,
-        "parts": {part.designator: part.value for part in stage.valued},
+        "output": session.output,
+        "parts": {part.designator: part.setting for part in stage.settable},
         "opamps": {opamp.designator: opamp.type for opamp in stage.opamps},
         "supply_positive_v": session.supply.positive_v,
         "supply_negative_v": session.supply.negative_v,

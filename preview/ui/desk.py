@@ -124,7 +124,7 @@ class Desk:
     def open_stage(self, stage: Stage) -> None:
         """Another stage on its own supply; its values are the new 'before'."""
         self._before.pop((stage.name, stage.path), None)
-        self.change(replace(self.session, stage=stage, supply=stage.supply))
+        self.change(self.session.with_stage(stage))
 
     def _become(self, session: Session, commands: list[Command]) -> None:
         for command in commands:

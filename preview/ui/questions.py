@@ -138,7 +138,7 @@ def ask_stage_file(session: Session) -> Question:
 
     def read(text: str) -> tuple[Session, str]:
         stage = find_stage(text.strip())
-        tried = _tried(replace(session, stage=stage, supply=stage.supply))
+        tried = _tried(session.with_stage(stage))
         return tried, f"{stage.title}: {len(stage.parts)} parts, supply {rails(stage.supply)}"
 
     return Question("Stage file", "The path of a .toml file, or a name", session.stage.name, read)

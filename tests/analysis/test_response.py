@@ -29,7 +29,7 @@ def expectations() -> list[tuple[Stage, Expect]]:
     ("stage", "expect"), expectations(), ids=lambda x: getattr(x, "what", getattr(x, "name", ""))
 )
 def test_every_expected_figure_of_every_stage_comes_true(stage: Stage, expect: Expect) -> None:
-    circuit = netlist(stage).with_values(dict(expect.parts))
+    circuit = netlist(stage, output=expect.output).with_values(dict(expect.parts))
     found = evaluate(circuit, expect.what)
     allowed = expect.within if expect.absolute else expect.within * abs(expect.value)
     difference = abs(found - expect.value)

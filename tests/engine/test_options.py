@@ -6,7 +6,7 @@ import argparse
 
 import pytest
 
-from preview.engine.options import add_stage_options, join_signed_values, session_from
+from preview.engine.options import add_stage_options, join_signed_values, session_from, understood_values
 from preview.errors import NotationError, PartValueError, UnknownNameError, UsageError
 from preview.values.quality import Quality
 
@@ -73,6 +73,66 @@ def test_a_full_scale_in_the_files_comment_holds_unless_an_option_gives_one():
 
 def test_the_same_value_given_twice_is_no_conflict():
     assert session("--part", "R1=4k7", "--part", "R1=4k7").stage.part("R1").value == 4700.0
+
+
+TONE = """
+title = "Tone"
+supply = { positive = "9 V", negative = "0 V" }
+outputs = ["w"]
+[parts]
+R1 = { kind = "resistor", nodes = ["in", "out"], value = "4k7" }
+P1 = { kind = "potentiometer", ends = ["gnd", "out"], wiper = "w", value = "10k", taper = "log" }
+R2 = { kind = "resistor", nodes = ["w", "bias"], value = "100k" }
+S1 = { kind = "switch", nodes = ["w", "gnd"], closed = true }
+D1 = { kind = "diode", anode = "w", cathode = "gnd", type = "signal" }
+V1 = { kind = "voltage", nodes = ["bias", "gnd"], value = "4.5 V" }
+"""
+
+
+@pytest.fixture
+def tone(tmp_path):
+    """A stage with a potentiometer, a switch, a bias and a second output."""
+    path = tmp_path / "tone.toml"
+    path.write_text(TONE, "utf-8")
+    return ("--stage", str(path))
+
+
+@pytest.mark.parametrize("written", ["0.7", "70%", "70 %", ".7"])
+def test_a_potentiometer_a_switch_and_a_bias_are_set_like_parts(tone, written):
+    given = session(
+        *tone, "--part", f"p1={written}", "--part", "S1=OPEN", "--part", "V1=-2 V", "--output", "w"
+    )
+    assert given.netlist().values == {"R1": 4700.0, "P1": pytest.approx(0.7), "R2": 1e5, "S1": 0.0}
+    assert given.netlist().fixed[0].volts == -2.0
+    assert given.netlist().output_node == given.output == "w"
+    assert understood_values(given)["parts"] == given.netlist().values
+    said = "\n".join(given.notes)
+    for words in ("P1: 70 % of the turn, log", "S1: open", "V1: -2 V", "output w"):
+        assert words in said
+
+
+@pytest.mark.parametrize(
+    ("words", "error", "match"),
+    [
+        (["--part", "P1=7"], PartValueError, 'P1 = "7": beyond the ends of the track'),
+        (["--part", "P1=-10%"], PartValueError, "0 % to 100 %"),
+        (["--part", "P1=10k"], NotationError, "not a position"),
+        (["--part", "S1=1"], NotationError, "write open or closed"),
+        (["--part", "D1=signal"], UnknownNameError, "is a diode and has no value"),
+        (["--part", "V1=5 kV"], PartValueError, "out of range for a voltage"),
+        (["--output", "bias"], UnknownNameError, "outputs are out, w"),
+    ],
+)
+def test_settings_that_cannot_be_are_refused_with_a_reason(tone, words, error, match):
+    with pytest.raises(error) as caught:
+        session(*tone, *words)
+    assert match in str(caught.value)
+
+
+def test_the_output_is_kept_only_by_a_stage_that_has_it(tone):
+    given = session(*tone, "--output", "w")
+    assert given.with_stage(given.stage).output == "w"
+    assert given.with_stage(session().stage).output == "out"
 
 
 @pytest.mark.parametrize(

@@ -11,6 +11,7 @@ import pytest
 
 from preview.circuit.library import find_stage
 from preview.circuit.parts import Supply
+from preview.circuit.reader import parse_stage
 from preview.engine.messages import Pause, Play, Seek, SetAtEnd, SetCircuit, SetPart, SetRegion, SetVolume
 from preview.errors import PartValueError
 from preview.session import AtEnd
@@ -47,6 +48,42 @@ def test_only_the_changed_part_is_sent(session) -> None:
     changed = with_value(session, "R2", 47e3)
     assert commands_between(session, changed) == [SetPart("R2", 47e3)]
     assert commands_between(session, session) == []
+
+
+TONE = """
+title = "Tone"
+supply = { positive = "9 V", negative = "0 V" }
+outputs = ["w"]
+[parts]
+R1 = { kind = "resistor", nodes = ["in", "out"], value = "4k7" }
+P1 = { kind = "potentiometer", ends = ["gnd", "out"], wiper = "w", value = "10k", taper = "log" }
+R2 = { kind = "resistor", nodes = ["w", "bias"], value = "100k" }
+S1 = { kind = "switch", nodes = ["w", "gnd"], closed = true }
+V1 = { kind = "voltage", nodes = ["bias", "gnd"], value = "4.5 V" }
+"""
+
+
+def test_a_turned_potentiometer_and_a_thrown_switch_are_sent_like_values(session) -> None:
+    old = session.with_stage(parse_stage(TONE, name="tone", file="tone.toml"))
+    turned, thrown = (old.stage.part(name) for name in ("P1", "S1"))
+    stage = old.stage.with_part(turned.with_setting(0.0)).with_part(thrown.with_setting(0.0))
+    assert commands_between(old, replace(old, stage=stage)) == [SetPart("P1", 0.0), SetPart("S1", 0.0)]
+    (command,) = commands_between(old, replace(old, output="w"))
+    assert isinstance(command, SetCircuit)
+    other = old.stage.with_part(replace(turned, taper="linear"))
+    assert isinstance(commands_between(old, replace(old, stage=other))[0], SetCircuit)
+
+
+def test_the_render_command_names_positions_switches_bias_and_output(session) -> None:
+    opened = parse_stage(TONE, name="tone", file="tone.toml")
+    stage = opened.with_part(replace(opened.part("P1"), position=0.1)).with_part(
+        replace(opened.part("S1"), closed=False)
+    )
+    now = replace(session.with_stage(stage.with_part(replace(stage.part("V1"), value=4.0))), output="w")
+    words = shlex.split(render_command(now, opened))
+    assert [w for w in words if "=" in w] == ["P1=0.1", "S1=open", "V1=4.0"]
+    assert words[words.index("--output") + 1] == "w"
+    assert "--part" not in render_command(session.with_stage(opened), opened)
 
 
 def test_another_supply_is_another_circuit(session) -> None:
