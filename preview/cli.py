@@ -262,9 +262,12 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
 
 
 def _echo(session: Session, warnings: Sequence[str]) -> None:
-    """Say how the options were understood."""
+    """Say how the options were understood, and what of the circuit is hardly meant."""
+    from preview.circuit.cautions import warnings as cautions
+
     for note in session.notes:
         _say(f"  {printable(note)}")
+    _warn(f"{what} ({cure})" for what, cure in cautions(session.netlist()))
     _warn(warnings)
 
 

@@ -2,28 +2,25 @@
 
 from __future__ import annotations
 
-from collections import defaultdict
-from collections.abc import Iterable, Iterator
-from typing import TYPE_CHECKING
+from collections.abc import Iterator
 
-from preview.circuit.nodes import (
-    GND,
-    IN,
-    LOAD_DESIGNATOR,
-    NEGATIVE_RAIL,
-    OUT,
-    POSITIVE_RAIL,
-    SOURCE_DESIGNATOR,
-)
+from preview.circuit.elements import Netlist, OpAmpSite
+from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR
 from preview.circuit.parts import PartKind
+from preview.circuit.paths import (
+    RAILS,
+    closure,
+    driven,
+    holder,
+    holders,
+    influenced,
+    listed,
+    neighbours,
+    uses,
+)
 from preview.errors import CircuitError
 
-if TYPE_CHECKING:
-    from preview.circuit.elements import Netlist, OpAmpSite
-
 __all__ = ["check", "problems"]
-
-RAILS = (POSITIVE_RAIL, NEGATIVE_RAIL)
 
 Problem = tuple[str, str]
 """What is wrong, and the cure."""
@@ -55,41 +52,9 @@ def problems(circuit: Netlist) -> Iterator[Problem]:
     yield from _no_signal_path(circuit)
 
 
-def _listed(names: Iterable[str]) -> str:
-    """Names in a row: ``R1``, ``R1 and C1``, ``R1, R2 and C1``."""
-    *most, last = names
-    return f"{', '.join(most)} and {last}" if most else last
-
-
-def _uses(circuit: Netlist) -> dict[str, dict[str, None]]:
-    """What is connected to each node, each part once: ``R1``, ``the + input of U1`` ..."""
-    uses: dict[str, dict[str, None]] = defaultdict(dict)
-    for branch in circuit.branches:
-        uses[branch.a][branch.owner] = uses[branch.b][branch.owner] = None
-    for opamp in circuit.opamps:
-        uses[opamp.plus][f"the + input of {opamp.designator}"] = None
-        uses[opamp.minus][f"the - input of {opamp.designator}"] = None
-        uses[opamp.out][f"the output of {opamp.designator}"] = None
-    for fixed in circuit.fixed:
-        if fixed.node not in RAILS:
-            uses[fixed.node][fixed.designator] = None
-    return uses
-
-
-def _holders(circuit: Netlist) -> dict[str, str]:
-    """Nodes that gnd, the ideal source and fixed voltages hold, and what holds each, in words."""
-    held = {GND: "gnd", circuit.input_node: "the signal source"}
-    return held | {fixed.node: fixed.designator for fixed in circuit.fixed}
-
-
-def _driven(circuit: Netlist) -> set[str]:
-    """Nodes whose voltage is set whatever current flows: those that are held, and every op-amp output."""
-    return {*_holders(circuit), *(opamp.out for opamp in circuit.opamps)}
-
-
 def _ends(circuit: Netlist) -> Iterator[Problem]:
     outside = {SOURCE_DESIGNATOR, LOAD_DESIGNATOR}
-    own = {node: None for node, users in _uses(circuit).items() if not outside.issuperset(users)}
+    own = {node: None for node, users in uses(circuit).items() if not outside.issuperset(users)}
     for node, words in ((IN, "the signal goes in at"), (OUT, "the signal is taken from")):
         if node not in own:
             cure = f"{words} the node named {node}; nodes are {', '.join(own) or 'none'}"
@@ -114,7 +79,7 @@ def _shorted_parts(circuit: Netlist) -> Iterator[Problem]:
 def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
     """Two things that each set the voltage of one node."""
     yield from _voltage_loops(circuit)
-    holders = _holders(circuit)
+    held = holders(circuit)
     owner: dict[str, str] = {}
     for opamp in circuit.opamps:
         name, node = opamp.designator, opamp.out
@@ -125,9 +90,9 @@ def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
                 f"the output of {name} is on node {node}, which the signal source drives",
                 "give the output a node of its own, or the source a resistance",
             )
-        elif node in holders:
+        elif node in held:
             yield (
-                f"the output of {name} is on node {node}, which {_holder(holders[node])} holds",
+                f"the output of {name} is on node {node}, which {holder(held[node])} holds",
                 "give the output a node of its own",
             )
         elif node in owner:
@@ -139,23 +104,19 @@ def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _voltage_loops(circuit: Netlist) -> Iterator[Problem]:
-    holders = {GND: "gnd", circuit.input_node: "the signal source"}
+    held = {GND: "gnd", circuit.input_node: "the signal source"}
     for fixed in circuit.fixed:
-        if fixed.node in holders:
+        if fixed.node in held:
             yield (
-                f"{_holder(fixed.designator)} and {_holder(holders[fixed.node])} both hold node {fixed.node}: "
+                f"{holder(fixed.designator)} and {holder(held[fixed.node])} both hold node {fixed.node}: "
                 f"a loop of voltage sources",
                 "take one away, or put a resistor between them",
             )
-        holders[fixed.node] = fixed.designator
-
-
-def _holder(name: str) -> str:
-    return f"the rail {name}" if name in RAILS else name
+        held[fixed.node] = fixed.designator
 
 
 def _dangling(circuit: Netlist) -> Iterator[Problem]:
-    for node, users in _uses(circuit).items():
+    for node, users in uses(circuit).items():
         if len(users) == 1 and node not in (IN, OUT, GND, *RAILS, circuit.input_node, circuit.output_node):
             (user,) = users
             yield (
@@ -165,35 +126,18 @@ def _dangling(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _no_dc_path(circuit: Netlist) -> Iterator[Problem]:
-    neighbours: dict[str, set[str]] = defaultdict(set)
-    for branch in circuit.branches:
-        if branch.kind is not PartKind.CAPACITOR:
-            neighbours[branch.a].add(branch.b)
-            neighbours[branch.b].add(branch.a)
-    reached = _closure(_driven(circuit), neighbours)
-    uses = _uses(circuit)
+    conducting = (branch for branch in circuit.branches if branch.kind is not PartKind.CAPACITOR)
+    reached = closure(driven(circuit), neighbours(conducting))
+    users_of = uses(circuit)
     floating = [node for node in circuit.nodes if node not in reached]
     if floating:
-        users = dict.fromkeys(user for node in floating for user in uses[node])
+        users = dict.fromkeys(user for node in floating for user in users_of[node])
         nodes = "node" if len(floating) == 1 else "nodes"
         verb = "is" if len(floating) == 1 else "are"
         yield (
-            f"{nodes} {_listed(floating)} {verb} floating: no direct current can flow through "
-            f"{_listed(users)}",
+            f"{nodes} {listed(floating)} {verb} floating: no direct current can flow through {listed(users)}",
             f"give it a path, such as a resistor of 1 MΩ from {floating[0]} to gnd",
         )
-
-
-def _closure(start: Iterable[str], neighbours: dict[str, set[str]]) -> set[str]:
-    """Every node that can be reached from the start."""
-    reached = set(start)
-    waiting = list(reached)
-    while waiting:
-        for node in neighbours.get(waiting.pop(), ()):
-            if node not in reached:
-                reached.add(node)
-                waiting.append(node)
-    return reached
 
 
 def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
@@ -205,7 +149,7 @@ def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
             node = group[node]
         return node
 
-    fixed = _driven(circuit)
+    fixed = driven(circuit)
     for node in fixed:
         group[node] = GND
     for branch in circuit.branches:
@@ -229,8 +173,8 @@ def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
 
 def _feedback(circuit: Netlist) -> Iterator[Problem]:
     for opamp in circuit.opamps:
-        through_parts = _influenced(circuit, opamp.out, through_opamps=False)
-        anywhere = _influenced(circuit, opamp.out, through_opamps=True)
+        through_parts = influenced(circuit, opamp.out, through_opamps=False)
+        anywhere = influenced(circuit, opamp.out, through_opamps=True)
         if opamp.minus in anywhere:
             continue
         if opamp.plus in through_parts:
@@ -249,30 +193,14 @@ def _feedback(circuit: Netlist) -> Iterator[Problem]:
 
 def _held(circuit: Netlist, opamp: OpAmpSite) -> str:
     """Why no feedback can reach the - input, where it is held."""
-    holder = _holders(circuit).get(opamp.minus)
-    if holder is None:
+    name = holders(circuit).get(opamp.minus)
+    if name is None:
         return ""
-    return ", which is on gnd" if holder == "gnd" else f", which is held by {_holder(holder)}"
-
-
-def _influenced(circuit: Netlist, start: str, *, through_opamps: bool) -> set[str]:
-    """Nodes that follow the start node: through parts to free nodes and, if asked, on through op-amps."""
-    fixed = _driven(circuit)
-    follows: dict[str, set[str]] = defaultdict(set)
-    for branch in circuit.branches:
-        if branch.b not in fixed:
-            follows[branch.a].add(branch.b)
-        if branch.a not in fixed:
-            follows[branch.b].add(branch.a)
-    if through_opamps:
-        for opamp in circuit.opamps:
-            follows[opamp.plus].add(opamp.out)
-            follows[opamp.minus].add(opamp.out)
-    return _closure([start], follows)
+    return ", which is on gnd" if name == "gnd" else f", which is held by {holder(name)}"
 
 
 def _no_signal_path(circuit: Netlist) -> Iterator[Problem]:
-    if circuit.output_node not in _influenced(circuit, circuit.input_node, through_opamps=True):
+    if circuit.output_node not in influenced(circuit, circuit.input_node, through_opamps=True):
         yield (
             f"nothing leads from in to {circuit.output_node}",
             "check the node names along the signal's way",

@@ -222,6 +222,41 @@ def test_response_says_how_the_options_were_understood(capsys):
     assert "600 ohm" in err
 
 
+def test_what_is_hardly_meant_is_a_warning_with_its_cure(capsys):
+    code, _, err = run(capsys, "response", "--supply", "9", "--at", "1k")
+    assert code == 0
+    assert "preview: warning: U1 rests at 0 V, and its output reaches 0 V to 9 V" in err
+    assert "half the supply" in err
+    assert "warning" not in run(capsys, "response", "--at", "1k")[2]
+
+
+STATIC = """
+title = "Volume"
+supply = { positive = "9 V", negative = "0 V" }
+outputs = ["w"]
+[parts]
+R1 = { kind = "resistor", nodes = ["in", "out"], value = "10k" }
+P1 = { kind = "potentiometer", ends = ["gnd", "out"], wiper = "w", value = "10k", taper = "log" }
+S1 = { kind = "switch", nodes = ["w", "gnd"], closed = true }
+"""
+
+
+def test_response_follows_position_switch_and_output(capsys, tmp_path):
+    """Closed form: a divider of 10k and 10k, whose track gives an eighth of it to the wiper at half a turn."""
+    path = tmp_path / "volume.toml"
+    path.write_text(STATIC, "utf-8")
+    stage = ("response", "--stage", str(path), "--at", "1k", "--part", "S1=open")
+    half = report_of(capsys, *stage, "--part", "P1=50%", "--output", "w")
+    assert half["gain_db"][0] == pytest.approx(
+        20 * np.log10(0.5 / 8), abs=1e-5
+    )  # the open switch loads a little
+    assert half["understood"]["parts"] == {"R1": 1e4, "P1": 0.5, "S1": 0.0}
+    assert half["understood"]["output"] == "w"
+    assert report_of(capsys, *stage)["gain_db"][0] == pytest.approx(20 * np.log10(0.5), abs=1e-5)
+    muted = report_of(capsys, *stage[:-2], "--output", "w")
+    assert muted["gain_db"][0] < -110.0
+
+
 def test_a_circuit_that_runs_away_does_not_open_the_desk(capsys, tmp_path):
     # + gets half of the output back, - an eleventh: more positive than negative feedback
     (tmp_path / "away.toml").write_text(
