@@ -37,6 +37,10 @@ class Branch:
         """The part it belongs to, itself included."""
         return self.part or self.designator
 
+    def with_value(self, value: float) -> Branch:
+        """The same element of another value; a glide makes many."""
+        return Branch(self.designator, self.kind, self.a, self.b, value, self.part)
+
 
 @dataclass(frozen=True, slots=True)
 class OpAmpSite:
@@ -154,15 +158,18 @@ class Netlist:
 
     def with_values(self, values: Mapping[str, float]) -> Netlist:
         """The same netlist with other settings; designators not named keep theirs. Nothing is checked anew."""
-        turned = tuple(c.at(values[c.designator]) if c.designator in values else c for c in self.controls)
         wanted = dict(values)
-        for control in turned:
-            wanted |= control.branch_values()
+        turned = []
+        for control in self.controls:
+            if control.designator in values:
+                control = control.at(values[control.designator])
+                wanted |= control.branch_values()
+            turned.append(control)
         return replace(
             self,
-            controls=turned,
+            controls=tuple(turned),
             branches=tuple(
-                replace(b, value=wanted[b.designator]) if b.designator in wanted else b for b in self.branches
+                b.with_value(wanted[b.designator]) if b.designator in wanted else b for b in self.branches
             ),
             ports=tuple(
                 replace(p, law=replace(p.law, farad=values[p.designator]))
