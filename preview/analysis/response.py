@@ -101,18 +101,18 @@ def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
     if top in (0, len(f) - 1) and gain[top] > 1.001 * next_to_it:
         return float(20.0 * np.log10(gain[top])), ()
     lower, upper = f[max(top - 1, 0)], f[min(top + 1, len(f) - 1)]
-    peak = float(gain[top])
     for _ in range(4):
         inside = np.geomspace(lower, upper, 33)
         values = magnitude(inside)
         best = int(np.argmax(values))
-        peak = max(peak, float(values[best]))
+        if values[best] > gain[top]:  # a resonance may be narrower than the grid: its top is put into it
+            f[top], gain[top] = inside[best], values[best]
         lower, upper = inside[max(best - 1, 0)], inside[min(best + 1, 32)]
+    peak = float(gain[top])
     if peak <= 0.0:
         return float("-inf"), ()
     limit = peak / np.sqrt(2.0)
     above = gain >= limit
-    above[top] = True
     corners = []
     for i in np.flatnonzero(above[1:] != above[:-1]):
         low, high, rising = f[i], f[i + 1], bool(above[i + 1])

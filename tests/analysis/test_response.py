@@ -107,3 +107,11 @@ def test_an_integrator_and_a_differentiator_have_no_corner() -> None:
     assert analyse(differentiator, [1000.0]).gain_db[0] == pytest.approx(
         20 * np.log10(2 * np.pi * 0.1), abs=1e-9
     )
+
+
+def test_corners_of_a_resonance_narrower_than_the_grid_of_the_search() -> None:
+    # series R-L-C, out across R: the corners are f0 / Q apart, half a percent of f0
+    circuit = net([("C1", "in", "a", 100e-9), ("L1", "a", "out", 10e-3), ("R1", "out", "gnd", 1.6)], [])
+    passband, (low_hz, high_hz) = find_corners(circuit)
+    assert passband == pytest.approx(0.0, abs=1e-6)
+    assert high_hz - low_hz == pytest.approx(1.6 / (2 * np.pi * 10e-3), rel=1e-6)
