@@ -266,6 +266,8 @@ class Expect:
     """Settings of parts this figure holds for, where they differ from the stage's own."""
     output: str = OUT
     """The output it is a figure of."""
+    opamp: str = ""
+    """Type of every op-amp this figure holds for (``ideal``); empty for the stage's own."""
 
 
 @dataclass(frozen=True, slots=True)

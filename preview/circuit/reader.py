@@ -21,7 +21,7 @@ from preview.circuit.nodes import (
     SOURCE_DESIGNATOR,
     SOURCE_NODE,
 )
-from preview.circuit.part_reader import PART_EXAMPLE, read_part, setting, temperature_degc
+from preview.circuit.part_reader import PART_EXAMPLE, opamp_type, read_part, setting, temperature_degc
 from preview.circuit.parts import Expect, Part, SettablePart, Stage, Supply
 from preview.circuit.sites import check_supply
 from preview.circuit.tables import Table, decode, parse_toml, read_bytes
@@ -192,7 +192,7 @@ def _expects(top: Table, parts: tuple[Part, ...], outputs: tuple[str, ...]) -> t
 
 
 def _expect(table: Table, settable: dict[str, SettablePart], outputs: tuple[str, ...]) -> Expect:
-    table.expect_keys(("what", "value", "within", "source"), ("parts", "output"), _EXPECT_EXAMPLE)
+    table.expect_keys(("what", "value", "within", "source"), ("parts", "output", "opamp"), _EXPECT_EXAMPLE)
     output = table.text("output", OUT)
     if output not in outputs:
         raise table.error("output", "not an output of this stage", f"outputs are {', '.join(outputs)}")
@@ -213,6 +213,7 @@ def _expect(table: Table, settable: dict[str, SettablePart], outputs: tuple[str,
         source=table.line("source", required=True),
         parts=_overrides(table, settable) if "parts" in table.data else (),
         output=output,
+        opamp=opamp_type(table.text("opamp"), f"{table.place} opamp = ") if "opamp" in table.data else "",
     )
 
 
@@ -225,6 +226,8 @@ def _within(table: Table, unit: str) -> tuple[float, bool]:
                 "within", f"a percentage of a figure in {unit}", f'state it in {unit}: "0.1 {unit}"'
             )
         within, absolute = table.read("within", lambda body: parse_value(body, "percent")) / 100.0, False
+    elif not unit:
+        raise table.error("within", "not a percentage, which a ratio needs", 'write "0.1 %"')
     else:
         kind = _WITHIN_KINDS[unit]
         within, absolute = table.read("within", lambda body: parse_value(body, kind)), True

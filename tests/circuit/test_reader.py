@@ -165,6 +165,18 @@ def test_single_supply_is_read() -> None:
         ),
         ("31.5_hz", "0_hz", "[[expect]] 2 what", "gain_db_at_1000_hz"),
         ("1591.5", '"1591.5"', "[[expect]] 1 value", ""),
+        (
+            'corner_hz"\nvalue = 1591.5\nwithin = "0.1 %"',
+            'q"\nvalue = 0.7\nwithin = "0.1"',
+            '[[expect]] 1 within = "0.1": not a percentage',
+            "0.1 %",
+        ),
+        (
+            "value = 1591.5",
+            'opamp = "TLO72"\nvalue = 1591.5',
+            '[[expect]] 1 opamp = "TLO72": no op-amp type',
+            "",
+        ),
         ("1591.5", "inf", "[[expect]] 1 value = inf: not a finite number", ""),
         ("1591.5", "0.0", "a percentage of 0 leaves no room", "state it in Hz"),
         ('"0.1 %"', '"0 %"', "must be above zero", ""),
