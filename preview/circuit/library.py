@@ -156,15 +156,12 @@ def _path(name_or_path: str) -> Path | None:
     own = _own()
     if name_or_path in own:
         return own[name_or_path]
-    names = stage_names()
+    listed = f"preview stages lists all {len(stage_names())}; a file ends in {_ENDING}"
     if not name_or_path.strip():
-        raise UnknownNameError("the stage's name is empty", f"stages are {', '.join(names)}")
-    nearest = get_close_matches(name_or_path.lower()[:60], names, n=1, cutoff=0.5)
-    start = f"did you mean {nearest[0]}? " if nearest else ""
-    raise UnknownNameError(
-        f"no stage named {quoted(name_or_path)[1:-1]}",
-        f"{start}stages are {', '.join(names)}; a file ends in {_ENDING}",
-    )
+        raise UnknownNameError("the stage's name is empty", listed)
+    nearest = get_close_matches(name_or_path.lower()[:60], stage_names(), n=3, cutoff=0.5)
+    start = f"did you mean {' or '.join(nearest)}? " if nearest else ""
+    raise UnknownNameError(f"no stage named {quoted(name_or_path)[1:-1]}", f"{start}{listed}")
 
 
 def _bundled() -> dict[str, str]:
