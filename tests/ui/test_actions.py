@@ -317,13 +317,14 @@ async def test_the_stage_chooser_moves_takes_and_leaves(make_app, engine) -> Non
 
 
 async def test_a_stage_file_is_opened_by_its_path(make_app, engine, tmp_path) -> None:
-    from preview.circuit.library import stage_source
+    from preview.circuit.library import stage_names, stage_source
 
     file = tmp_path / "mine.toml"
     file.write_text(stage_source("inverting-high-pass").replace("Inverting high-pass", "Mine [red]"), "utf-8")
     app: DeskApp = make_app()
     async with app.run_test(size=(80, 24)) as pilot:
-        await pilot.press("s", "up", "up", "up", "enter")  # past the first row to the last: a file
+        above = stage_names().index(app.desk.session.stage.name)
+        await pilot.press("s", *["up"] * (above + 1), "enter")  # past the first row to the last: a file
         await pilot.pause()
         assert isinstance(app.screen, EntryScreen)
         app.screen.query_one("#typed").value = "no-such-stage"
