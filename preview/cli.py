@@ -167,6 +167,11 @@ def _parser() -> argparse.ArgumentParser:
         action="store_true",
         help="IIR second-order sections of the stage by the bilinear transform",
     )
+    response.add_argument(
+        "--noise",
+        action="store_true",
+        help="noise at the output, 20 Hz to 20 kHz and at each frequency, and what makes it",
+    )
     response.add_argument("--prewarp", metavar="HZ", help="frequency at which the sections are exact")
     _add_shapes(response)
     add_stage_options(response)
@@ -357,10 +362,18 @@ def _response(options: argparse.Namespace) -> int:
             sample_rate_hz=rate_hz if options.as_heard else None,
             quality=session.quality,
         )
+        noise_lines: list[str] = []
+        if options.noise:
+            from preview.analysis.noise import noise_budget
+
+            budget = noise_budget(circuit, wanted)
+            table = table.with_columns(budget.columns)
+            body |= budget.as_object()
+            noise_lines = budget.as_lines()
         body |= {"as_heard": options.as_heard, **table.as_object()}
         if options.as_heard:
             body |= {"sample_rate_hz": rate_hz, "quality": session.quality.value}
-        lines = [table.as_csv()] if options.csv else table.as_lines()
+        lines = [table.as_csv()] if options.csv else [*table.as_lines(), *noise_lines]
     if not options.json:
         _echo(session, ())
     print(json_text(body) if options.json else "\n".join(lines))

@@ -13,6 +13,7 @@ from preview.dsp.macromodel import following_step, macro_equations
 from preview.dsp.oversample import PASSBAND_RATIO, design, factor_for
 from preview.network import transfer
 from preview.network.expansion import expanded, expanded_topology, has_real_opamps
+from preview.network.operating import small_signal
 from preview.network.stability import check_stable
 from preview.network.statespace import Topology
 from preview.values.quality import Quality
@@ -54,7 +55,7 @@ class Response:
 
 
 def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response:
-    """Exact response of a circuit.
+    """Exact response of a circuit to a small signal around its operating point.
 
     Parameters
     ----------
@@ -68,6 +69,7 @@ def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response
     CircuitError
         The circuit cannot be solved or is not stable.
     """
+    netlist = small_signal(netlist)
     check_stable(netlist)
     f = (
         np.geomspace(10.0, 100e3, 97)
@@ -90,9 +92,10 @@ def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
     A gain that still rises at an end of the range searched (an integrator, a differentiator) has no passband: the
     largest gain found is given, and no corner.
     """
+    linear = small_signal(netlist)
 
     def magnitude(f: Real) -> Real:
-        return np.abs(transfer.response(netlist, f))
+        return np.abs(transfer.response(linear, f))
 
     f = np.geomspace(*SEARCH_HZ, 1101)
     gain = magnitude(f)
@@ -132,6 +135,7 @@ def heard(netlist: Netlist, sample_rate_hz: float, quality: Quality, frequency_h
     Computed from the matrices and filters that the running computation uses: interpolation, the four-sample mean
     of the signal, the circuit's step, the mean of the output over a step, decimation.
     """
+    netlist = small_signal(netlist)
     f = np.atleast_1d(np.asarray(frequency_hz, dtype=np.float64))
     filters = design(factor_for(quality, sample_rate_hz))
     step_s = 1.0 / (sample_rate_hz * filters.factor)
@@ -178,6 +182,7 @@ def deviation(netlist: Netlist, sample_rate_hz: float, quality: Quality) -> Devi
 
     Where the circuit's own gain is more than 80 dB below its largest there is nothing to hear and to compare.
     """
+    netlist = small_signal(netlist)
     top = min(20e3, PASSBAND_RATIO * sample_rate_hz)
     f = np.geomspace(10.0, top, 160)
     exact = transfer.response(netlist, f)

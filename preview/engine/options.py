@@ -267,7 +267,8 @@ def _quality(text: str) -> Quality:
 def check_together(options: argparse.Namespace) -> None:
     """Refuse options of ``response`` that do nothing beside the others."""
     if options.sections:
-        needless = [n for n, given in (("--at", options.at), ("--as-heard", options.as_heard)) if given]
+        others = (("--at", options.at), ("--as-heard", options.as_heard), ("--noise", options.noise))
+        needless = [n for n, given in others if given]
         if needless:
             raise UsageError(f"{needless[0]} does not go with --sections", "give one of the two")
     elif options.prewarp is not None:
