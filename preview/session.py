@@ -6,6 +6,7 @@ from dataclasses import dataclass, field, replace
 from enum import StrEnum
 from pathlib import Path
 
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, LoadModel, SourceModel
 from preview.circuit.netlist import Netlist, netlist
 from preview.circuit.nodes import OUT
 from preview.circuit.parts import Stage, Supply
@@ -34,12 +35,12 @@ class Session:
     """The stage with the part values and op-amp types as set."""
     supply: Supply
     """The rails in force."""
-    source_ohm: float
-    """Resistance of the source [ohm]; 0 for an ideal one."""
-    load_ohm: float | None
-    """Resistance of the load [ohm]; None for no load."""
     full_scale: FullScale
     """The volts that a sample of 1.0 stands for."""
+    source: SourceModel = IDEAL_SOURCE
+    """What drives the stage, its cable included."""
+    load: LoadModel = NO_LOAD
+    """What follows the stage."""
     quality: Quality = Quality.STANDARD
     """Quality of computation."""
     at_end: AtEnd = AtEnd.LOOP
@@ -52,11 +53,7 @@ class Session:
     def netlist(self) -> Netlist:
         """The checked netlist; raises CircuitError."""
         return netlist(
-            self.stage,
-            supply=self.supply,
-            source_ohm=self.source_ohm,
-            load_ohm=self.load_ohm,
-            output=self.output,
+            self.stage, supply=self.supply, source=self.source, load=self.load, output=self.output
         )
 
     def with_stage(self, stage: Stage) -> Session:

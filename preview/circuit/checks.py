@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Iterator
 
 from preview.circuit.elements import Netlist, OpAmpSite
-from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR
+from preview.circuit.nodes import GND, IN, LOAD_PARTS, OUT, SOURCE_PARTS
 from preview.circuit.parts import PartKind
 from preview.circuit.paths import (
     RAILS,
@@ -53,7 +53,7 @@ def problems(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _ends(circuit: Netlist) -> Iterator[Problem]:
-    outside = {SOURCE_DESIGNATOR, LOAD_DESIGNATOR}
+    outside = {*SOURCE_PARTS, *LOAD_PARTS}
     own = {node: None for node, users in uses(circuit).items() if not outside.issuperset(users)}
     for node, words in ((IN, "the signal goes in at"), (OUT, "the signal is taken from")):
         if node not in own:

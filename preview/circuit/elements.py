@@ -20,7 +20,7 @@ class Branch:
     """A two-terminal element between two nodes."""
 
     designator: str
-    """R1, C2 ...; the source and load resistances are called ``Rsource`` and ``Rload``."""
+    """R1, C2 ...; what drives and follows the stage is called ``Rsource``, ``Ccable``, ``Rload`` and so on."""
     kind: PartKind
     """Resistor, capacitor or inductor."""
     a: str
@@ -112,7 +112,7 @@ class Netlist:
     """A circuit ready to be solved."""
 
     input_node: str
-    """Node that the ideal signal source drives: ``in``, or ``source`` behind a source resistance."""
+    """Node that the ideal signal source drives: ``in``, or ``source`` where anything is in series with it."""
     output_node: str
     """Node that is listened to: ``out``, or another of the stage's outputs."""
     branches: tuple[Branch, ...]

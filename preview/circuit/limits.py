@@ -7,9 +7,9 @@ from typing import Literal
 
 from preview.circuit.parts import PartKind
 from preview.errors import NotationError, PartValueError
-from preview.values.notation import format_value, parse_value, quoted
+from preview.values.notation import format_code, format_value, parse_value, quoted
 
-__all__ = ["QUANTITY", "VALUE_RANGE", "check_value", "read_value"]
+__all__ = ["QUANTITY", "VALUE_RANGE", "check_value", "exact_value", "read_value"]
 
 QUANTITY: dict[PartKind, Literal["resistance", "capacitance", "inductance", "voltage"]] = {
     PartKind.RESISTOR: "resistance",
@@ -62,6 +62,16 @@ def check_value(kind: PartKind, value: float, where: str) -> None:
     else:
         found = f"{format_value(value, QUANTITY[kind])} is out of range for {noun}"
     raise PartValueError(f"{where}: {found}", f"allowed are {_RANGE_TEXT[kind]}")
+
+
+def exact_value(kind: PartKind, value: float) -> str:
+    """The value as text that is read back to the last digit and as no other kind of part: ``4k7``, ``2n2F``."""
+    quantity = QUANTITY[kind]
+    unit = {"resistance": "ohm", "capacitance": "F", "inductance": "H"}[quantity]
+    code = format_code(value, quantity)
+    if parse_value(code, quantity) != value:
+        return f"{value!r} {unit}"
+    return code if quantity == "resistance" or unit in code else code + unit
 
 
 def read_value(kind: PartKind, text: str, where: str) -> float:

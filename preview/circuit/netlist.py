@@ -5,19 +5,18 @@ from __future__ import annotations
 from preview.circuit.checks import check
 from preview.circuit.controls import Contact, Track
 from preview.circuit.diodes import Junction
+from preview.circuit.drive import Element, LoadModel, SourceModel
 from preview.circuit.elements import Branch, Charge, FixedNode, Netlist, OpAmpSite, Port
-from preview.circuit.limits import check_value
+from preview.circuit.limits import QUANTITY, check_value
 from preview.circuit.nodes import (
     GND,
     IN,
-    LOAD_DESIGNATOR,
     NEGATIVE_RAIL,
     OUT,
     POSITIVE_RAIL,
-    SOURCE_DESIGNATOR,
     SOURCE_NODE,
 )
-from preview.circuit.parts import PartKind, Stage, Supply
+from preview.circuit.parts import Stage, Supply
 from preview.circuit.sites import check_supply, opamp_site
 from preview.circuit.wiring import Wiring
 from preview.errors import UnknownNameError
@@ -25,11 +24,9 @@ from preview.errors import UnknownNameError
 __all__ = [
     "GND",
     "IN",
-    "LOAD_DESIGNATOR",
     "NEGATIVE_RAIL",
     "OUT",
     "POSITIVE_RAIL",
-    "SOURCE_DESIGNATOR",
     "SOURCE_NODE",
     "Branch",
     "Charge",
@@ -49,6 +46,8 @@ def netlist(
     stage: Stage,
     *,
     supply: Supply | None = None,
+    source: SourceModel | None = None,
+    load: LoadModel | None = None,
     source_ohm: float = 0.0,
     load_ohm: float | None = None,
     output: str = OUT,
@@ -59,10 +58,14 @@ def netlist(
     ----------
     supply : Supply, optional
         Rails that replace the stage's own.
+    source : SourceModel, optional
+        What drives it.
+    load : LoadModel, optional
+        What follows its output.
     source_ohm : float
-        Resistance of the source [ohm]; 0 for an ideal one.
+        Resistance of a source that is nothing else [ohm]; 0 for an ideal one.
     load_ohm : float, optional
-        Resistance from the output to gnd [ohm]; None for no load.
+        Resistance of a load that is nothing else [ohm]; None for no load.
     output : str
         Node that is listened to and loaded: ``out`` or another of the stage's outputs.
 
@@ -78,20 +81,17 @@ def netlist(
         outputs = ", ".join((OUT, *stage.outputs))
         raise UnknownNameError(f"{where} has no output {output}", f"outputs are {outputs}")
     wiring = Wiring(where, stage.temperature_degc)
-    if source_ohm != 0.0:
-        check_value(PartKind.RESISTOR, source_ohm, "source resistance")
-        wiring.branches.append(Branch(SOURCE_DESIGNATOR, PartKind.RESISTOR, SOURCE_NODE, IN, source_ohm))
+    source = source or SourceModel(source_ohm)
+    wiring.branches.extend(_driving(source))
     for part in stage.parts:
         wiring.add(part)
-    if load_ohm is not None:
-        check_value(PartKind.RESISTOR, load_ohm, "load resistance")
-        wiring.branches.append(Branch(LOAD_DESIGNATOR, PartKind.RESISTOR, output, GND, load_ohm))
+    wiring.branches.extend(_across(output, (load or LoadModel(load_ohm)).across, "load"))
     used = {node for part in stage.parts for node in part.nodes}
     for node, volts in ((POSITIVE_RAIL, rails.positive_v), (NEGATIVE_RAIL, rails.negative_v)):
         if node in used:
             wiring.fixed.append(FixedNode(node, node, volts))
     circuit = Netlist(
-        input_node=SOURCE_NODE if source_ohm != 0.0 else IN,
+        input_node=SOURCE_NODE if source.series else IN,
         output_node=output,
         branches=tuple(wiring.branches),
         opamps=tuple(opamp_site(opamp, rails, where) for opamp in stage.opamps),
@@ -102,3 +102,21 @@ def netlist(
     )
     check(circuit, where)
     return circuit
+
+
+def _driving(source: SourceModel) -> tuple[Branch, ...]:
+    """The parts of the source, in a row from ``source`` to ``in`` and then across it."""
+    inner = [f"{SOURCE_NODE}.{i}" for i in range(1, len(source.series))]
+    ends = [SOURCE_NODE, *inner, IN]
+    branches = []
+    for (designator, kind, value), a, b in zip(source.series, ends, ends[1:], strict=False):
+        check_value(kind, value, f"source {QUANTITY[kind]}")
+        branches.append(Branch(designator, kind, a, b, value))
+    return (*branches, *_across(IN, source.across, "source"))
+
+
+def _across(node: str, elements: tuple[Element, ...], where: str) -> tuple[Branch, ...]:
+    """Parts from a node to gnd."""
+    for _, kind, value in elements:
+        check_value(kind, value, f"{where} {QUANTITY[kind]}")
+    return tuple(Branch(designator, kind, node, GND, value) for designator, kind, value in elements)

@@ -14,12 +14,12 @@ from preview.circuit.figures import parse_figure
 from preview.circuit.nodes import (
     GND,
     IN,
-    LOAD_DESIGNATOR,
+    LOAD_PARTS,
     NEGATIVE_RAIL,
     OUT,
     POSITIVE_RAIL,
-    SOURCE_DESIGNATOR,
     SOURCE_NODE,
+    SOURCE_PARTS,
 )
 from preview.circuit.part_reader import PART_EXAMPLE, opamp_type, read_part, setting, temperature_degc
 from preview.circuit.parts import Expect, Part, SettablePart, Stage, Supply
@@ -134,7 +134,7 @@ def _parts(top: Table) -> tuple[Part, ...]:
 
 
 def _check_designator(group: Table, designator: str) -> None:
-    if designator in (SOURCE_DESIGNATOR, LOAD_DESIGNATOR):
+    if designator in (*SOURCE_PARTS, *LOAD_PARTS):
         raise StageFileError(
             f"{group.place} {designator}: the name is kept for what drives and follows the stage",
             "leave it out and state the source or load when the stage is used, or name it R and a number",

@@ -8,6 +8,7 @@ from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TypeVar
 
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, parse_load, parse_source, said
 from preview.circuit.library import find_stage, with_overrides
 from preview.circuit.nodes import OUT
 from preview.circuit.parts import Stage, Supply
@@ -20,7 +21,7 @@ from preview.values.levels import (
     parse_full_scale,
     parse_supply,
 )
-from preview.values.notation import format_value, parse_value, quoted, understood
+from preview.values.notation import format_value, parse_value, quoted
 from preview.values.quality import Quality
 
 __all__ = [
@@ -101,8 +102,16 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
         default=OUT,
         help="the output that is taken (default out), where there are more",
     )
-    group.add_argument("--source", metavar="OHM", help="resistance of the source (default 0)")
-    group.add_argument("--load", metavar="OHM", help="resistance of the load (default none)")
+    group.add_argument(
+        "--source",
+        metavar="SOURCE",
+        help='what drives it: 600, "7k5 + 2.5 H, cable 500p", "piezo disc" ... (default ideal)',
+    )
+    group.add_argument(
+        "--load",
+        metavar="LOAD",
+        help='what follows it: 10k, "10k || 220p", "headphones 32 ohm" ... (default none)',
+    )
     group.add_argument(
         "--full-scale",
         metavar="LEVEL",
@@ -164,24 +173,22 @@ def session_from(
     output: str = options.output.strip()
     if output != OUT:
         notes.append(f"output {output}")
-    source_ohm = 0.0
+    source = IDEAL_SOURCE
     if options.source is not None:
-        source_ohm = for_option(
-            "--source", lambda: parse_value(options.source, "resistance", allow_zero=True)
-        )
-        notes.append(f"source {understood(options.source, 'resistance', allow_zero=True)}")
-    load_ohm: float | None = None
-    if options.load is not None and options.load.strip().lower() != "none":
-        load_ohm = for_option("--load", lambda: parse_value(options.load, "resistance"))
-        notes.append(f"load {understood(options.load, 'resistance')}")
+        source = for_option("--source", lambda: parse_source(options.source))
+        notes.append(f"source {options.source.strip()} = {said(source)}")
+    load = NO_LOAD
+    if options.load is not None:
+        load = for_option("--load", lambda: parse_load(options.load))
+        notes.append(f"load {options.load.strip()} = {said(load)}")
     full_scale, full_scale_note = _full_scale(options.full_scale, comment)
     notes.append(full_scale_note)
     session = Session(
         audio=audio,
         stage=changed,
         supply=supply,
-        source_ohm=source_ohm,
-        load_ohm=load_ohm,
+        source=source,
+        load=load,
         full_scale=full_scale,
         quality=_quality(options.quality),
         at_end=at_end,
@@ -302,8 +309,15 @@ def understood_values(session: Session) -> dict[str, object]:
         "opamps": {opamp.designator: opamp.type for opamp in stage.opamps},
         "supply_positive_v": session.supply.positive_v,
         "supply_negative_v": session.supply.negative_v,
-        "source_ohm": session.source_ohm,
-        "load_ohm": session.load_ohm,
+        "source": session.source.name or None,
+        "source_ohm": session.source.resistance_ohm,
+        "source_henry": session.source.inductance_henry,
+        "source_farad": session.source.capacitance_farad or None,
+        "source_winding_farad": session.source.winding_farad,
+        "source_cable_farad": session.source.cable_farad,
+        "load": session.load.name or None,
+        "load_ohm": session.load.resistance_ohm,
+        "load_farad": session.load.capacitance_farad + session.load.cable_farad,
         "full_scale_v": session.full_scale.volts,
         "quality": session.quality.value,
         "notes": list(session.notes),

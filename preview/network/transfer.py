@@ -10,7 +10,8 @@ from dataclasses import replace
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from preview.circuit.netlist import IN, LOAD_DESIGNATOR, Netlist
+from preview.circuit.netlist import Netlist
+from preview.circuit.nodes import IN, LOAD_PARTS, SOURCE_PARTS
 from preview.network.mna import NodalEquations, adjoint, nodal_equations, solve
 from preview.network.operating import small_signal
 
@@ -52,9 +53,14 @@ def group_delay(netlist: Netlist, frequency_hz: ArrayLike) -> Real:
         return np.asarray(-np.real(slope / z[:, out]), dtype=np.float64)
 
 
+def _without(netlist: Netlist, designators: tuple[str, ...]) -> Netlist:
+    return replace(netlist, branches=tuple(b for b in netlist.branches if b.designator not in designators))
+
+
 def input_impedance(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:
-    """Impedance that the stage shows at ``in``, without the source's own resistance [ohm], shape (f,)."""
-    equations = _equations(netlist)
+    """Impedance that the stage shows at ``in``, source and cable taken away [ohm], shape (f,)."""
+    driven = small_signal(netlist)  # the source is part of where the circuit rests
+    equations = nodal_equations(replace(_without(driven, SOURCE_PARTS), input_node=IN))
     z = solve(equations, _s(frequency_hz))
     with np.errstate(divide="ignore", invalid="ignore"):
         return np.asarray(-z[:, equations.nodes[IN]] / z[:, equations.source_current], dtype=np.complex128)
@@ -63,7 +69,7 @@ def input_impedance(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:
 def output_impedance(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:
     """Impedance that the stage shows at ``out``, the load taken away, the source at rest [ohm], shape (f,)."""
     loaded = small_signal(netlist)  # the load is part of where the circuit rests
-    bare = replace(loaded, branches=tuple(b for b in loaded.branches if b.designator != LOAD_DESIGNATOR))
+    bare = _without(loaded, LOAD_PARTS)
     equations = nodal_equations(bare)
     out = equations.nodes[bare.output_node]
     drive = np.zeros(equations.static.shape[0])

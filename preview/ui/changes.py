@@ -5,7 +5,8 @@ from __future__ import annotations
 import shlex
 from dataclasses import replace
 
-from preview.circuit.limits import QUANTITY
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, exact_load, exact_source
+from preview.circuit.limits import exact_value
 from preview.circuit.nodes import OUT
 from preview.circuit.parts import (
     FixedVoltage,
@@ -20,7 +21,6 @@ from preview.circuit.parts import (
 from preview.circuit.settings import setting_text
 from preview.engine.messages import Command, SetAtEnd, SetCircuit, SetFullScale, SetPart, SetQuality
 from preview.session import Session
-from preview.values.notation import format_code, parse_value
 
 __all__ = ["SERIES_OF_KIND", "commands_between", "render_command", "series_of", "whole_state", "with_value"]
 
@@ -46,7 +46,7 @@ def _shape(session: Session) -> tuple[object, ...]:
     """Everything of the circuit but the settings of its parts."""
     stage: Stage = session.stage
     parts = tuple(_wired(part) for part in stage.parts)
-    return (stage.name, parts, session.supply, session.output, session.source_ohm, session.load_ohm)
+    return (stage.name, parts, session.supply, session.output, session.source, session.load)
 
 
 def _wired(part: Part) -> object:
@@ -87,17 +87,12 @@ def whole_state(session: Session) -> list[Command]:
 
 
 def _exact(part: SettablePart | FixedVoltage) -> str:
-    """The code of a value where it says all of it, else the number in full with its unit."""
+    """The setting in full."""
     if isinstance(part, Switch):
         return setting_text(part)
     if isinstance(part, Potentiometer | FixedVoltage):
         return repr(part.position if isinstance(part, Potentiometer) else part.value)
-    value, quantity = part.value, QUANTITY[part.kind]
-    code = format_code(value, quantity)
-    if parse_value(code, quantity) == value:
-        return code
-    unit = {"resistance": "ohm", "capacitance": "F", "inductance": "H"}[quantity]
-    return f"{value!r} {unit}"
+    return exact_value(part.kind, part.value)
 
 
 def render_command(session: Session, opened: Stage) -> str:
@@ -122,9 +117,9 @@ def render_command(session: Session, opened: Stage) -> str:
         words += ["--supply", f"{session.supply.positive_v!r} {session.supply.negative_v!r}"]
     if session.output != OUT:
         words += ["--output", session.output]
-    if session.source_ohm:
-        words += ["--source", f"{session.source_ohm!r}"]
-    if session.load_ohm is not None:
-        words += ["--load", f"{session.load_ohm!r}"]
+    if session.source != IDEAL_SOURCE:
+        words += ["--source", exact_source(session.source)]
+    if session.load != NO_LOAD:
+        words += ["--load", exact_load(session.load)]
     words += ["--full-scale", session.full_scale.text, "--quality", session.quality.value]
     return shlex.join(words)

@@ -93,11 +93,11 @@ class DialogApp(App[Session]):
         self.ask(ask_supply(self.desk.session))
 
     def do_source(self) -> None:
-        """Type the source's resistance."""
+        """Type what drives the stage."""
         self.ask(ask_source(self.desk.session))
 
     def do_load(self) -> None:
-        """Type the load's resistance."""
+        """Type what follows the stage."""
         self.ask(ask_load(self.desk.session))
 
     def do_choose_stage(self) -> None:

@@ -26,7 +26,6 @@ __all__ = [
     "limits",
     "milliamperes",
     "rails",
-    "resistance",
     "scale_volts",
     "slew_of",
     "type_name",
@@ -60,7 +59,7 @@ def value(part: Part) -> str:
         case FixedVoltage():
             return volts(part.value)
         case Potentiometer():
-            return f"{resistance(part.value)} at {setting_text(part)}"
+            return f"{format_value(part.value, 'resistance', digits=4)} at {setting_text(part)}"
     return setting_text(part)
 
 
@@ -69,11 +68,6 @@ def code(part: Part) -> str:
     if isinstance(part, TwoTerminal):
         return format_code(part.value, QUANTITY[part.kind])
     return setting_text(part) if isinstance(part, Potentiometer) else value(part)
-
-
-def resistance(value_ohm: float) -> str:
-    """A resistance with unit."""
-    return format_value(value_ohm, "resistance", digits=4)
 
 
 def db(level_db: float) -> str:

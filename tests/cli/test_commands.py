@@ -219,7 +219,7 @@ def test_response_says_how_the_options_were_understood(capsys):
     assert code == 0
     assert "passband" in out
     assert "4.7 kΩ (4700 ohm)" in err
-    assert "600 ohm" in err
+    assert "source 600 = 600 Ω" in err
 
 
 def test_what_is_hardly_meant_is_a_warning_with_its_cure(capsys):

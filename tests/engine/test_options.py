@@ -6,6 +6,7 @@ import argparse
 
 import pytest
 
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, LoadModel, SourceModel
 from preview.engine.options import add_stage_options, join_signed_values, session_from, understood_values
 from preview.errors import NotationError, PartValueError, UnknownNameError, UsageError
 from preview.values.quality import Quality
@@ -21,7 +22,7 @@ def test_without_options_it_is_the_default_stage_as_drawn_at_18_dbu():
     plain = session()
     assert plain.stage.name == "inverting-low-pass"
     assert (plain.supply.positive_v, plain.supply.negative_v) == (15.0, -15.0)
-    assert (plain.source_ohm, plain.load_ohm) == (0.0, None)
+    assert (plain.source, plain.load) == (IDEAL_SOURCE, NO_LOAD)
     assert plain.quality is Quality.STANDARD
     # EBU R 68: 0 dBFS at +18 dBu, a sine of 0.7746 V x 10^(18/20) rms, 8.70 V peak
     assert plain.full_scale.volts == pytest.approx(8.70, abs=0.005)
@@ -36,7 +37,7 @@ def test_each_option_is_taken_and_said():
     assert given.stage.part("R1").value == 4700.0
     assert given.stage.opamps[0].type == "perfect"
     assert (given.supply.positive_v, given.supply.negative_v) == (12.0, -12.0)
-    assert (given.source_ohm, given.load_ohm) == (600.0, 10000.0)
+    assert (given.source, given.load) == (SourceModel(600.0), LoadModel(10e3))
     assert given.quality is Quality.FINE
     said = "\n".join(given.notes)
     for words in ("4.7 kΩ", "600 Ω", "10 kΩ", "2 Vrms", "12.0 V and -12.0 V"):

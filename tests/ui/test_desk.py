@@ -9,6 +9,7 @@ from pathlib import Path
 
 import pytest
 
+from preview.circuit.drive import LoadModel
 from preview.circuit.library import find_stage
 from preview.circuit.parts import Supply
 from preview.circuit.reader import parse_stage
@@ -275,7 +276,7 @@ def test_limits_are_worked_out_once_for_each_session(desk) -> None:
 def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> None:
     opened = session.stage
     session = with_value(with_value(session, "R1", 4700.0), "C1", 1.23456789e-9)
-    session = replace(session, audio=Path("a b.wav"), load_ohm=600.0, supply=Supply(12.0, -12.0))
+    session = replace(session, audio=Path("a b.wav"), load=LoadModel(600.0), supply=Supply(12.0, -12.0))
     words = shlex.split(render_command(session, opened))
     assert words[:4] == ["preview", "render", "a b.wav", "OUT.wav"]
     options = list(zip(words[4::2], words[5::2], strict=True))
@@ -284,5 +285,5 @@ def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> No
     assert parse_value(parts["C1"], "capacitance") == 1.23456789e-9
     assert "R2" not in parts
     assert ("--full-scale", "+18 dBu") in options
-    assert ("--load", "600.0") in options
+    assert ("--load", "600R") in options
     assert ("--supply", "12.0 -12.0") in options
