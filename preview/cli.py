@@ -273,7 +273,7 @@ def _echo(session: Session, warnings: Sequence[str]) -> None:
     for note in session.notes:
         _say(f"  {printable(note)}")
     _warn(f"{what} ({cure})" for what, cure in cautions(session.netlist()))
-    _warn(warnings)
+    _warn((*session.warnings, *warnings))
 
 
 def _warn(warnings: Iterable[str]) -> None:

@@ -49,12 +49,12 @@ class Session:
     """The node that is listened to and loaded: ``out``, or another of the stage's outputs."""
     notes: tuple[str, ...] = field(default=())
     """How each option was understood, one line each, for the screen."""
+    warnings: tuple[str, ...] = field(default=())
+    """What of the options may not be as it was meant, one line each."""
 
     def netlist(self) -> Netlist:
         """The checked netlist; raises CircuitError."""
-        return netlist(
-            self.stage, supply=self.supply, source=self.source, load=self.load, output=self.output
-        )
+        return netlist(self.stage, supply=self.supply, source=self.source, load=self.load, output=self.output)
 
     def with_stage(self, stage: Stage) -> Session:
         """The same session with another stage on its own rails; its output is kept where the stage has it."""

@@ -8,7 +8,7 @@ machine. What has a path separator in it or ends in ``.toml`` is a file.
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from difflib import get_close_matches
 from importlib.resources import files
@@ -16,6 +16,7 @@ from pathlib import Path
 
 import platformdirs
 
+from preview.circuit.cascade import cascade
 from preview.circuit.limits import QUANTITY, read_value
 from preview.circuit.part_reader import opamp_type
 from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Stage
@@ -25,7 +26,14 @@ from preview.circuit.tables import decode, read_bytes
 from preview.errors import UnknownNameError
 from preview.values.notation import quoted, understood
 
-__all__ = ["find_stage", "stage_names", "stage_source", "user_stage_folder", "with_overrides"]
+__all__ = [
+    "find_stage",
+    "open_stages",
+    "stage_names",
+    "stage_source",
+    "user_stage_folder",
+    "with_overrides",
+]
 
 _ENDING = ".toml"
 
@@ -57,6 +65,11 @@ def find_stage(name_or_path: str) -> Stage:
         return read_stage(path)
     text = _bundled()[name_or_path]
     return parse_stage(text, name=name_or_path, file=f"stages/{name_or_path}{_ENDING}")
+
+
+def open_stages(names_or_paths: Sequence[str]) -> Stage:
+    """The stage of that name or file, or the cascade of several; raises as ``find_stage`` does."""
+    return cascade([find_stage(one) for one in names_or_paths])
 
 
 def stage_source(name_or_path: str) -> str:
@@ -132,8 +145,12 @@ def _part(stage: Stage, name: str) -> Part:
     for part in stage.parts:
         if part.designator.lower() == name.strip().lower():
             return part
-    known = ", ".join(part.designator for part in stage.parts)
-    raise UnknownNameError(f"stage {stage.name} has no part {quoted(name)[1:-1]}", f"it has {known}")
+    names = [part.designator for part in stage.parts]
+    meant = [one for one in names if one.lower().endswith(f".{name.strip().lower()}")]
+    start = f"did you mean {' or '.join(meant)}? " if meant else ""
+    raise UnknownNameError(
+        f"stage {stage.name} has no part {quoted(name)[1:-1]}", f"{start}it has {', '.join(names)}"
+    )
 
 
 def _opamp(stage: Stage, name: str) -> OpAmp:

@@ -294,6 +294,13 @@ class Stage:
     """Further nodes that can be listened to instead of ``out``."""
     temperature_degc: float = ROOM_DEGC
     """Temperature of the circuit [degrees Celsius]."""
+    joined: tuple[Stage, ...] = ()
+    """The stages of a cascade, each as it was opened; empty for a single stage."""
+
+    @property
+    def opened_as(self) -> tuple[str, ...]:
+        """What opens it again: a file's path or a name, one for each stage of a cascade."""
+        return tuple(str(stage.path or stage.name) for stage in self.joined or (self,))
 
     def part(self, designator: str) -> Part:
         """The part of that designator; UnknownNameError names those there are."""

@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import TypeVar
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, parse_load, parse_source, said
-from preview.circuit.library import find_stage, with_overrides
+from preview.circuit.library import open_stages, with_overrides
 from preview.circuit.nodes import OUT
 from preview.circuit.parts import Stage, Supply
 from preview.errors import NotationError, UsageError, printable
@@ -79,14 +79,17 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
     """Add the options that every command with a stage takes."""
     group = parser.add_argument_group("stage options")
     group.add_argument(
-        "--stage", action="append", metavar="NAME|FILE", help=f"the stage (default {DEFAULT_STAGE})"
+        "--stage",
+        action="append",
+        metavar="NAME|FILE",
+        help=f"the stage (default {DEFAULT_STAGE}); more than one are a cascade",
     )
     group.add_argument(
         "--part",
         action="append",
         default=[],
         metavar="R1=4k7",
-        help="a part value; also P1=70%%, S1=open; may be repeated",
+        help="a part value, 2.R1=4k7 in the second stage of a cascade; also P1=70%%, S1=open; may be repeated",
     )
     group.add_argument(
         "--opamp",
@@ -155,14 +158,11 @@ def session_from(
     CircuitError
         The stage, a part or an op-amp is unknown, or the circuit cannot be computed.
     """
-    named: list[str] = options.stage or [stage]
-    if len(named) > 1:
-        raise UsageError(
-            f"{len(named)} stages given; this version computes one stage at a time", "give --stage once"
-        )
-    notes: list[str] = []
-    drawn = find_stage(named[0])
-    notes.append(f"stage {drawn.name}: {drawn.title}")
+    drawn = open_stages(options.stage or [stage])
+    if drawn.joined:
+        notes = [f"stage {k}, {one.name}: {one.title}" for k, one in enumerate(drawn.joined, 1)]
+    else:
+        notes = [f"stage {drawn.name}: {drawn.title}"]
     parts = _assignments(options.part)
     changed, part_notes = with_overrides(drawn, parts, _opamp_types(options.opamp))
     notes.extend(part_notes)
@@ -194,9 +194,21 @@ def session_from(
         at_end=at_end,
         output=output,
         notes=tuple(printable(note) for note in notes),
+        warnings=_supplies_differ(drawn) if options.supply is None else (),
     )
     session.netlist()
     return session
+
+
+def _supplies_differ(stage: Stage) -> tuple[str, ...]:
+    """A warning where the stages of a cascade are drawn with different rails."""
+    if len({one.supply for one in stage.joined}) < 2:
+        return ()
+    rails = ", ".join(
+        f"{k} with {one.supply.positive_v:g} V and {one.supply.negative_v:g} V"
+        for k, one in enumerate(stage.joined, 1)
+    )
+    return (f"the stages are drawn with different supplies ({rails}): all run on the first's",)
 
 
 def for_option(option: str, read: Callable[[], T]) -> T:
@@ -304,6 +316,7 @@ def understood_values(session: Session) -> dict[str, object]:
     stage: Stage = session.stage
     return {
         "stage": stage.name,
+        "stages": [one.name for one in stage.joined or (stage,)],
         "output": session.output,
         "parts": {part.designator: part.setting for part in stage.settable},
         "opamps": {opamp.designator: opamp.type for opamp in stage.opamps},
@@ -321,4 +334,5 @@ def understood_values(session: Session) -> dict[str, object]:
         "full_scale_v": session.full_scale.volts,
         "quality": session.quality.value,
         "notes": list(session.notes),
+        "warnings": list(session.warnings),
     }

@@ -104,7 +104,8 @@ def render_command(session: Session, opened: Stage) -> str:
         The stage as its file has it; only parts that differ from it are written.
     """
     words = ["preview", "render", str(session.audio or "AUDIO"), "OUT.wav"]
-    words += ["--stage", str(session.stage.path or session.stage.name)]
+    for name in session.stage.opened_as:
+        words += ["--stage", name]
     was = {part.designator: _exact(part) for part in opened.parts if isinstance(part, _WRITTEN)}
     for part in session.stage.parts:
         if isinstance(part, _WRITTEN) and _exact(part) != was.get(part.designator):

@@ -7,9 +7,13 @@ import argparse
 import pytest
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, LoadModel, SourceModel
+from preview.circuit.library import stage_source
+from preview.circuit.parts import Supply
 from preview.engine.options import add_stage_options, join_signed_values, session_from, understood_values
 from preview.errors import NotationError, PartValueError, UnknownNameError, UsageError
 from preview.values.quality import Quality
+
+CASCADE = ("--stage", "inverting-high-pass", "--stage", "inverting-low-pass")
 
 
 def session(*words: str, comment: str = ""):
@@ -42,6 +46,34 @@ def test_each_option_is_taken_and_said():
     said = "\n".join(given.notes)
     for words in ("4.7 kΩ", "600 Ω", "10 kΩ", "2 Vrms", "12.0 V and -12.0 V"):
         assert words in said
+
+
+def test_several_stages_are_a_cascade_whose_parts_have_numbers():
+    given = session(*CASCADE, "--part", "2.R1=4k7", "--opamp", "1.U1=perfect")
+    values = {part.designator: part.value for part in given.stage.valued}
+    assert (values["1.R1"], values["2.R1"]) == (10e3, 4700.0)
+    assert [opamp.type for opamp in given.stage.opamps] == ["perfect", "ideal"]
+    assert given.notes[:2] == (
+        "stage 1, inverting-high-pass: Inverting high-pass",
+        "stage 2, inverting-low-pass: Inverting low-pass",
+    )
+    assert given.warnings == ()
+    assert understood_values(given)["stages"] == ["inverting-high-pass", "inverting-low-pass"]
+
+
+def test_stages_drawn_with_different_supplies_run_on_the_first_and_a_warning_says_so(tmp_path):
+    single = tmp_path / "single.toml"
+    single.write_text(
+        stage_source("inverting-low-pass").replace('"15 V"', '"9 V"').replace('"-15 V"', '"0 V"')
+    )
+    words = ("--stage", "inverting-high-pass", "--stage", str(single))
+    given = session(*words)
+    assert given.supply == Supply(15.0, -15.0)
+    assert given.warnings == (
+        "the stages are drawn with different supplies (1 with 15 V and -15 V, 2 with 9 V and 0 V): "
+        "all run on the first's",
+    )
+    assert session(*words, "--supply", "12 -12").warnings == ()
 
 
 @pytest.mark.parametrize(
@@ -152,7 +184,9 @@ def test_the_output_is_kept_only_by_a_stage_that_has_it(tone):
         (["--opamp", "warp"], UnknownNameError, "warp"),
         (["--stage", "nope"], UnknownNameError, "nope"),
         (["--stage", ""], UnknownNameError, "name is empty"),
-        (["--stage", "a", "--stage", "b"], UsageError, "one stage"),
+        (["--stage", "inverting-low-pass", "--stage", "nope"], UnknownNameError, "nope"),
+        ([*CASCADE, "--part", "R1=4k7"], UnknownNameError, "did you mean 1.R1 or 2.R1"),
+        ([*CASCADE, "--part", "3.R1=4k7"], UnknownNameError, "has no part 3.R1"),
         (["--supply", "fifteen"], NotationError, "--supply"),
         (["--source", "-600"], NotationError, "--source"),
         (["--load", "0"], NotationError, "--load"),

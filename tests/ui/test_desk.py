@@ -10,7 +10,7 @@ from pathlib import Path
 import pytest
 
 from preview.circuit.drive import LoadModel
-from preview.circuit.library import find_stage
+from preview.circuit.library import find_stage, open_stages
 from preview.circuit.parts import Supply
 from preview.circuit.reader import parse_stage
 from preview.engine.messages import Pause, Play, Seek, SetAtEnd, SetCircuit, SetPart, SetRegion, SetVolume
@@ -287,3 +287,12 @@ def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> No
     assert ("--full-scale", "+18 dBu") in options
     assert ("--load", "600R") in options
     assert ("--supply", "12.0 -12.0") in options
+
+
+def test_the_render_command_names_every_stage_of_a_cascade(session) -> None:
+    opened = open_stages(["inverting-high-pass", "inverting-low-pass"])
+    session = with_value(replace(session, stage=opened), "2.R1", 4700.0)
+    words = shlex.split(render_command(session, open_stages(session.stage.opened_as)))
+    options = list(zip(words[4::2], words[5::2], strict=True))
+    assert [name for option, name in options if option == "--stage"] == list(opened.opened_as)
+    assert [text for option, text in options if option == "--part"] == ["2.R1=4k7"]
