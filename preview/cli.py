@@ -333,6 +333,7 @@ def _depth(text: str) -> Depth:
 
 def _response(options: argparse.Namespace) -> int:
     from preview.analysis import table as tables
+    from preview.analysis.answers import answers
     from preview.engine.options import check_together, frequency_of, session_from, understood_values
 
     check_together(options)
@@ -370,10 +371,15 @@ def _response(options: argparse.Namespace) -> int:
             table = table.with_columns(budget.columns)
             body |= budget.as_object()
             noise_lines = budget.as_lines()
-        body |= {"as_heard": options.as_heard, **table.as_object()}
+        found = answers(session, wanted)
+        body |= {"as_heard": options.as_heard, **table.as_object(), **found.as_object()}
         if options.as_heard:
             body |= {"sample_rate_hz": rate_hz, "quality": session.quality.value}
-        lines = [table.as_csv()] if options.csv else [*table.as_lines(), *noise_lines]
+        lines = [table.with_columns(found.columns).as_csv()] if options.csv else table.as_lines()
+        if not options.csv:
+            lines += noise_lines
+        if not (options.csv or options.as_heard):
+            lines += ["", *found.as_lines()]
     if not options.json:
         _echo(session, ())
     print(json_text(body) if options.json else "\n".join(lines))

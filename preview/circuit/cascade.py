@@ -11,11 +11,11 @@ from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 from preview.circuit.nodes import GND, IN, NEGATIVE_RAIL, OUT, POSITIVE_RAIL
-from preview.circuit.parts import Diode, OpAmp, Part, Potentiometer, Stage
+from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Potentiometer, SettablePart, Stage
 from preview.circuit.reader import MOST_PARTS
 from preview.errors import CircuitError
 
-__all__ = ["cascade", "numbered_drawing", "stage_outputs"]
+__all__ = ["cascade", "numbered_drawing", "stage_alone", "stage_outputs"]
 
 _SHARED = (GND, POSITIVE_RAIL, NEGATIVE_RAIL)
 _RIGHTWARD, _LEFTWARD = "─┌└├┬┴┼╭╰○▷", "─┐┘┤┬┴┼╮╯○"
@@ -63,6 +63,20 @@ def cascade(stages: Sequence[Stage]) -> Stage:
 def stage_outputs(stage: Stage) -> tuple[str, ...]:
     """The node of each stage's output in a cascade, the last of which is ``out``."""
     return (*(f"{k}.{OUT}" for k in range(1, len(stage.joined))), OUT)
+
+
+def stage_alone(stage: Stage, k: int) -> Stage:
+    """Stage k of a cascade, counted from 1, by itself, its parts as they are set in the cascade."""
+    alone = stage.joined[k - 1]
+    for part in alone.parts:
+        now = stage.part(f"{k}.{part.designator}")
+        if isinstance(part, SettablePart) and isinstance(now, SettablePart):
+            alone = alone.with_part(part.with_setting(now.setting))
+        elif isinstance(part, OpAmp) and isinstance(now, OpAmp):
+            alone = alone.with_part(replace(part, type=now.type))
+        elif isinstance(part, FixedVoltage) and isinstance(now, FixedVoltage):
+            alone = alone.with_part(replace(part, value=now.value))
+    return alone
 
 
 def _renaming(k: int, last: int) -> Callable[[str], str]:

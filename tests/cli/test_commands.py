@@ -358,3 +358,32 @@ def test_render_csv_has_a_row_for_each_op_amp_with_the_figures_of_the_file(tmp_p
     assert row["frames"] == "4800"
     assert row["slew_limit_v_per_s"] == ""
     assert float(row["input_peak_v"]) == pytest.approx(0.1 * 8.70, rel=0.01)
+
+
+def test_response_answers_with_sign_sections_step_and_as_drawn(capsys):
+    words = ("response", "--at", "100,1k", "--source", "1k", "--load", "2k", "--stage", "inverting-high-pass")
+    report = report_of(capsys, *words)
+    # 11k and 100 nF: 144.686 Hz; 100k / 11k
+    assert report["passband_gain"] == pytest.approx(-100 / 11, rel=1e-6)
+    assert report["passband_polarity"] == "inverting"
+    assert [pole["f0_hz"] for pole in report["poles"]] == [pytest.approx(144.686, abs=5e-4)]
+    assert report["step"]["peak_gain"] == pytest.approx(-100 / 11)
+    drawn = report["as_drawn"]
+    assert drawn["corners_hz"] == [pytest.approx(159.155, abs=5e-4)]
+    assert drawn["passband_gain_change_db"] == pytest.approx(20 * np.log10(10 / 11), abs=1e-6)
+    assert len(drawn["gain_db"]) == len(drawn["phase_deg"]) == 2
+    code, out, _ = run(capsys, *words)
+    assert code == 0
+    for text in ("x 9.091, inverting", "144.7 Hz", "step ", "as drawn", "-0.83 dB", "-9.09 %"):
+        assert text in out
+    code, out, _ = run(capsys, *words, "--csv")
+    rows = list(csv.DictReader(io.StringIO(out)))
+    assert [float(row["drawn_gain_db"]) for row in rows] == pytest.approx(drawn["gain_db"])
+
+
+def test_response_of_a_cascade_tells_what_each_stage_does_in_its_place(capsys):
+    words = ("response", "--at", "1k", "--stage", "inverting-high-pass", "--stage", "inverting-low-pass")
+    report = report_of(capsys, *words)
+    assert [row["output"] for row in report["stages"]] == ["1.out", "out"]
+    assert sum(row["gain_db"][0] for row in report["stages"]) == pytest.approx(report["gain_db"][0])
+    assert "after 1, inverting-high-pass" in run(capsys, *words)[1]
