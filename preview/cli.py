@@ -25,6 +25,7 @@ from preview.engine.jsontext import json_text
 from preview.errors import PreviewError, UsageError, printable
 
 if TYPE_CHECKING:
+    from preview.analysis.answers import Answers
     from preview.audio.sink import Depth
     from preview.engine.process import EngineProcess
     from preview.session import Session
@@ -172,6 +173,8 @@ def _parser() -> argparse.ArgumentParser:
         action="store_true",
         help="noise at the output, 20 Hz to 20 kHz and at each frequency, and what makes it",
     )
+    response.add_argument("--draw", action="store_true", help="the gain curve too, in plain characters")
+    response.add_argument("--plot", metavar="FILE", help="a picture too: FILE.png or FILE.svg")
     response.add_argument("--prewarp", metavar="HZ", help="frequency at which the sections are exact")
     _add_shapes(response)
     add_stage_options(response)
@@ -380,10 +383,26 @@ def _response(options: argparse.Namespace) -> int:
             lines += noise_lines
         if not (options.csv or options.as_heard):
             lines += ["", *found.as_lines()]
+        lines += _drawn(options, session, found)
     if not options.json:
         _echo(session, ())
     print(json_text(body) if options.json else "\n".join(lines))
     return 0
+
+
+def _drawn(options: argparse.Namespace, session: Session, found: Answers) -> list[str]:
+    """Lines of the curve in plain characters, if asked for; a picture, if asked for, is written."""
+    if options.plot is not None:
+        from preview.engine.options import picture_kind
+        from preview.plots import response_picture
+
+        Path(options.plot).write_bytes(response_picture(session, found, picture_kind(options.plot)))
+    if not options.draw:
+        return []
+    from preview.analysis.curves import curves
+    from preview.analysis.textplot import gain_drawing
+
+    return ["", *gain_drawing(curves(session, 68), rows=19)]
 
 
 def _stages(options: argparse.Namespace) -> int:

@@ -23,7 +23,7 @@ from preview.network.linear import linear
 from preview.session import Session
 from preview.values.notation import format_value
 
-__all__ = ["Answers", "StageInPlace", "answers"]
+__all__ = ["Answers", "StageInPlace", "answers", "drawn_circuit"]
 
 Real = NDArray[np.float64]
 
@@ -117,23 +117,23 @@ class Answers:
             "passband_gain_change_db": self.driven.gain_db - self.drawn.gain_db,
         }
 
+    def figures(self) -> list[tuple[str, str]]:
+        """What can be said in a line each: a word and the figures."""
+        rows = [("passband", self.driven.said())]
+        if self.poles is None or self.zeros is None:
+            rows.append(("poles", "none to name: the gain rises without end"))
+        else:
+            rows += [("poles", modes_line(self.poles, _hertz)), ("zeros", modes_line(self.zeros, _hertz))]
+        return [*rows, ("step", _step_line(self.step))]
+
     def as_lines(self) -> list[str]:
         """The answers for a screen."""
-        lines = [
-            f"passband  {self.driven.said()}",
-            *self._section_lines(),
-            f"step      {_step_line(self.step)}",
-        ]
+        lines = [f"{word:<10}{text}" for word, text in self.figures()]
         if self.drawn is not None:
             lines += ["", *self._comparison(self.drawn)]
         if self.stages:
             lines += ["", *self._stage_lines()]
         return lines
-
-    def _section_lines(self) -> list[str]:
-        if self.poles is None or self.zeros is None:
-            return ["poles     none to name: the gain rises without end"]
-        return [f"poles     {modes_line(self.poles, _hertz)}", f"zeros     {modes_line(self.zeros, _hertz)}"]
 
     def _comparison(self, drawn: Passband) -> list[str]:
         """As drawn against as driven and loaded, with the change."""
@@ -171,8 +171,7 @@ def answers(session: Session, frequency_hz: Sequence[float]) -> Answers:
     circuit = session.netlist()
     f = np.asarray(frequency_hz, dtype=np.float64)
     gain = transfer.response(circuit, f)
-    ideal = session.source == IDEAL_SOURCE and session.load == NO_LOAD
-    drawn = None if ideal else _computable(replace(session, source=IDEAL_SOURCE, load=NO_LOAD).netlist)
+    drawn = drawn_circuit(session)
     drawn_gain = np.empty(0, dtype=np.complex128) if drawn is None else transfer.response(drawn, f)
     poles = zeros = None
     step = None
@@ -195,6 +194,13 @@ def answers(session: Session, frequency_hz: Sequence[float]) -> Answers:
         driven_gain_db=_db(gain),
         stages=_stages(session, circuit, f),
     )
+
+
+def drawn_circuit(session: Session) -> Netlist | None:
+    """The circuit without source and load; None where it has none, or cannot be computed without."""
+    if session.source == IDEAL_SOURCE and session.load == NO_LOAD:
+        return None
+    return _computable(replace(session, source=IDEAL_SOURCE, load=NO_LOAD).netlist)
 
 
 def _stages(session: Session, circuit: Netlist, f: Real) -> tuple[StageInPlace, ...]:

@@ -6,7 +6,7 @@ import argparse
 import re
 from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
-from typing import TypeVar
+from typing import Literal, TypeVar
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, parse_load, parse_source, said
 from preview.circuit.library import open_stages, with_overrides
@@ -32,6 +32,7 @@ __all__ = [
     "for_option",
     "frequency_of",
     "join_signed_values",
+    "picture_kind",
     "session_from",
     "understood_values",
 ]
@@ -285,9 +286,19 @@ def _quality(text: str) -> Quality:
 
 def check_together(options: argparse.Namespace) -> None:
     """Refuse options of ``response`` that do nothing beside the others."""
+    if options.plot is not None:
+        picture_kind(options.plot)
+    if options.draw and (options.json or options.csv):
+        raise UsageError("--draw does not go with --json and --csv", "give one of them, or --plot FILE")
     if options.sections:
-        others = (("--at", options.at), ("--as-heard", options.as_heard), ("--noise", options.noise))
-        needless = [n for n, given in others if given]
+        others = {
+            "--at": options.at,
+            "--as-heard": options.as_heard,
+            "--noise": options.noise,
+            "--draw": options.draw,
+            "--plot": options.plot,
+        }
+        needless = [name for name, given in others.items() if given]
         if needless:
             raise UsageError(f"{needless[0]} does not go with --sections", "give one of the two")
     elif options.prewarp is not None:
@@ -297,6 +308,16 @@ def check_together(options: argparse.Namespace) -> None:
             "--rate is for --as-heard and --sections; the exact circuit has no sample rate",
             "add one of them or leave it out",
         )
+
+
+def picture_kind(name: str) -> Literal["png", "svg"]:
+    """The kind of picture that a file's name asks for; UsageError for one that is not made."""
+    ending = Path(name).suffix.lower()
+    if ending == ".png":
+        return "png"
+    if ending == ".svg":
+        return "svg"
+    raise UsageError(f"--plot {quoted(name)}: no such kind of picture", "a name that ends in .png or .svg")
 
 
 def frequency_of(text: str, option: str, low_hz: float, high_hz: float) -> float:

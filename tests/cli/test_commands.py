@@ -387,3 +387,32 @@ def test_response_of_a_cascade_tells_what_each_stage_does_in_its_place(capsys):
     assert [row["output"] for row in report["stages"]] == ["1.out", "out"]
     assert sum(row["gain_db"][0] for row in report["stages"]) == pytest.approx(report["gain_db"][0])
     assert "after 1, inverting-high-pass" in run(capsys, *words)[1]
+
+
+def test_response_draws_the_curve_and_writes_a_picture(capsys, tmp_path):
+    code, out, _ = run(capsys, "response", "--at", "1k", "--draw", "--plot", str(tmp_path / "a.svg"))
+    assert code == 0
+    assert "^ corners 1.592 kHz" in out
+    assert (tmp_path / "a.svg").read_text("utf-8").startswith("<?xml")
+    report = report_of(capsys, "response", "--at", "1k", "--plot", str(tmp_path / "b.PNG"))
+    assert report["passband_gain"] == pytest.approx(-10.0)
+    assert (tmp_path / "b.PNG").read_bytes().startswith(b"\x89PNG")
+
+
+@pytest.mark.parametrize(
+    ("words", "code", "told"),
+    [
+        (["--plot", "a.pdf"], 2, "ends in .png or .svg"),
+        (["--plot", ""], 2, "ends in .png or .svg"),
+        (["--plot", "nowhere/at/all.png"], 3, "nowhere/at/all.png"),
+        (["--draw", "--json"], 2, "--draw does not go with --json"),
+        (["--draw", "--csv"], 2, "--draw does not go with --json"),
+        (["--draw", "--sections"], 2, "--draw does not go with --sections"),
+        (["--plot", "a.png", "--sections"], 2, "--plot does not go with --sections"),
+    ],
+)
+def test_a_picture_that_cannot_be_is_refused(capsys, words, code, told):
+    got, out, err = run(capsys, "response", *words)
+    assert (got, out) == (code, "")
+    assert told in err
+    assert "Traceback" not in err
