@@ -22,7 +22,7 @@ from typing import TYPE_CHECKING, NoReturn
 from preview import __version__
 from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
-from preview.errors import PreviewError, UsageError, printable
+from preview.errors import OutputFileError, PreviewError, UsageError, printable
 
 if TYPE_CHECKING:
     from preview.analysis.answers import Answers
@@ -179,8 +179,14 @@ def _parser() -> argparse.ArgumentParser:
     _add_shapes(response)
     add_stage_options(response)
 
-    stages = command("stages", _stages, "the stages that come with Preview, or the text of one")
-    stages.add_argument("name", nargs="?", metavar="NAME", help="a stage")
+    stages = command(
+        "stages", _stages, "the stages there are, or the text of one, or a new one to start from"
+    )
+    one = stages.add_mutually_exclusive_group()
+    one.add_argument("name", nargs="?", metavar="NAME", help="a stage")
+    one.add_argument(
+        "--new", metavar="FILE", help="write a commented example to FILE.toml, which must not exist"
+    )
     _add_shapes(stages)
     opamps = command("opamps", _opamps, "the op-amp types side by side, or one and its sources")
     opamps.add_argument("name", nargs="?", metavar="NAME|FILE", help="an op-amp type")
@@ -396,7 +402,10 @@ def _drawn(options: argparse.Namespace, session: Session, found: Answers) -> lis
         from preview.engine.options import picture_kind
         from preview.plots import response_picture
 
-        Path(options.plot).write_bytes(response_picture(session, found, picture_kind(options.plot)))
+        place = Path(options.plot)
+        if not place.parent.is_dir():
+            raise OutputFileError(f"{place.parent}: no such folder", "make it first")
+        place.write_bytes(response_picture(session, found, picture_kind(options.plot)))
     if not options.draw:
         return []
     from preview.analysis.curves import curves
@@ -406,8 +415,24 @@ def _drawn(options: argparse.Namespace, session: Session, found: Answers) -> lis
 
 
 def _stages(options: argparse.Namespace) -> int:
-    from preview.circuit.library import find_stage, stage_names, stage_source
+    from preview.circuit.library import (
+        find_stage,
+        new_stage_file,
+        stage_names,
+        stage_source,
+        user_stage_folder,
+    )
 
+    if options.new is not None:
+        new_stage_file(Path(options.new))
+        body = {"command": "stages", "file": printable(options.new)}
+        heard = options.new if os.sep in options.new else f"./{options.new}"
+        lines = [
+            f"{printable(options.new)} is written; change it, then: preview listen --stage {printable(heard)}",
+            f"in {printable(str(user_stage_folder()))} it is found by its name",
+        ]
+        print(_reported(options, {**body, "stages": [{"file": body["file"]}]}, "stages", lines))
+        return 0
     if options.name is not None:
         stage = find_stage(options.name)
         source = stage_source(options.name)
@@ -424,9 +449,12 @@ def _stages(options: argparse.Namespace) -> int:
             stages.append(find_stage(name))
         except PreviewError as error:  # one of the person's own; the others are still there
             _warn([str(error)])
-    listed = [{"name": s.name, "title": s.title, "about": s.about} for s in stages]
+    listed = [
+        {"name": s.name, "title": s.title, "about": s.about, "file": s.path and printable(str(s.path))}
+        for s in stages
+    ]
     width = max(len(s.name) for s in stages)
-    lines = [f"{s.name:<{width}}  {printable(s.title)}" for s in stages]
+    lines = [f"{s.name:<{width}}  {printable(s.title)}{' (your own)' if s.path else ''}" for s in stages]
     print(_reported(options, {"command": "stages", "stages": listed}, "stages", lines))
     return 0
 

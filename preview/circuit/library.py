@@ -23,11 +23,12 @@ from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Stage
 from preview.circuit.reader import parse_stage, read_stage
 from preview.circuit.settings import read_setting, setting_note
 from preview.circuit.tables import decode, read_bytes
-from preview.errors import UnknownNameError
+from preview.errors import OutputFileError, UnknownNameError, UsageError
 from preview.values.notation import quoted, understood
 
 __all__ = [
     "find_stage",
+    "new_stage_file",
     "open_stages",
     "stage_names",
     "stage_source",
@@ -76,6 +77,28 @@ def stage_source(name_or_path: str) -> str:
     """The TOML text of the stage of that name, or of that file; raises as ``find_stage`` does."""
     path = _path(name_or_path)
     return _bundled()[name_or_path] if path is None else decode(read_bytes(path), str(path))
+
+
+def new_stage_file(path: Path) -> None:
+    """Write a commented example that is a stage; a file that is there is left alone.
+
+    Raises
+    ------
+    UsageError
+        The name could not be found again as a stage's.
+    OutputFileError
+        There is a file of that name already, or no such folder.
+    """
+    if not path.parent.is_dir():
+        raise OutputFileError(f"{path.parent}: no such folder", "make it first")
+    if path.suffix != _ENDING:
+        raise UsageError(f"{path}: a stage file's name ends in {_ENDING}", f"such as {path.stem}{_ENDING}")
+    text = files("preview").joinpath("circuit", "example.toml").read_text("utf-8")
+    try:
+        with path.open("x", encoding="utf-8") as file:
+            file.write(text)
+    except FileExistsError as error:
+        raise OutputFileError(f"{path}: there is something of that name", "choose another name") from error
 
 
 def with_overrides(

@@ -25,8 +25,9 @@ Complex = NDArray[np.complex128]
 
 _NOTHING = 1e-12
 """A coupling below this share of the largest it could be is rounding [ratio]."""
-_SAME = 1e-6
-"""A pole and a zero nearer to each other than this share of themselves take each other away [ratio]."""
+_SAME = 1e-4
+"""A pole and a zero nearer to each other than this share of themselves take each other away [ratio]: they change
+the response by no more than that."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -2,13 +2,27 @@
 
 from __future__ import annotations
 
+import re
+import tomllib
 from pathlib import Path
 
 import pytest
 
+from preview.analysis.figures import evaluate
 from preview.circuit import library
-from preview.circuit.library import find_stage, stage_names, stage_source, with_overrides
-from preview.errors import NotationError, PartValueError, StageFileError, UnknownNameError
+from preview.circuit.library import find_stage, new_stage_file, stage_names, stage_source, with_overrides
+from preview.circuit.netlist import netlist
+from preview.circuit.part_reader import read_part
+from preview.circuit.parts import PartKind
+from preview.circuit.tables import Table
+from preview.errors import (
+    NotationError,
+    OutputFileError,
+    PartValueError,
+    StageFileError,
+    UnknownNameError,
+    UsageError,
+)
 
 
 @pytest.fixture(autouse=True)
@@ -102,3 +116,40 @@ def test_overrides_that_cannot_be_are_refused() -> None:
         with_overrides(stage, {}, {"R1": "ideal"})
     with pytest.raises(UnknownNameError, match=r"^no op-amp type named TLO72"):
         with_overrides(stage, {}, {None: "TLO72"})
+
+
+def test_a_new_stage_file_is_a_stage_that_keeps_its_word(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    new_stage_file(path)
+    stage = find_stage(str(path))
+    assert stage.title == "My low-pass"
+    assert len(stage.expects) == 3
+    for expect in stage.expects:
+        found = evaluate(netlist(stage).with_values(dict(expect.parts)), expect.what)
+        assert abs(found - expect.value) <= expect.within * (1.0 if expect.absolute else expect.value)
+    drawn = set(re.findall(r"[A-Z]+[0-9]+", stage.drawing))
+    assert drawn == {part.designator for part in stage.parts}
+
+
+def test_the_parts_it_has_no_use_for_are_parts_too(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    new_stage_file(path)
+    spare = re.findall(r"^# ([A-Z][0-9] = \{.*\})$", path.read_text("utf-8"), re.MULTILINE)
+    kinds = {
+        PartKind(read_part(Table("x", "[parts.X1]", tomllib.loads(line)[line[:2]]), line[:2]).kind)
+        for line in spare
+    }
+    assert kinds == {PartKind.INDUCTOR, PartKind.VOLTAGE, PartKind.DIODE, PartKind.CAPACITOR}
+    assert kinds | {part.kind for part in find_stage(str(path)).parts} == set(PartKind)
+
+
+def test_a_new_stage_file_takes_nothing_away(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    path.write_text("mine", "utf-8")
+    with pytest.raises(OutputFileError, match="there is something of that name") as caught:
+        new_stage_file(path)
+    assert (path.read_text("utf-8"), caught.value.exit_code) == ("mine", 3)
+    with pytest.raises(OutputFileError, match="no such folder"):
+        new_stage_file(tmp_path / "none" / "mine.toml")
+    with pytest.raises(UsageError, match=r"ends in \.toml"):
+        new_stage_file(tmp_path / "mine.txt")

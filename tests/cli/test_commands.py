@@ -404,7 +404,7 @@ def test_response_draws_the_curve_and_writes_a_picture(capsys, tmp_path):
     [
         (["--plot", "a.pdf"], 2, "ends in .png or .svg"),
         (["--plot", ""], 2, "ends in .png or .svg"),
-        (["--plot", "nowhere/at/all.png"], 3, "nowhere/at/all.png"),
+        (["--plot", "nowhere/at/all.png"], 3, "nowhere/at: no such folder"),
         (["--draw", "--json"], 2, "--draw does not go with --json"),
         (["--draw", "--csv"], 2, "--draw does not go with --json"),
         (["--draw", "--sections"], 2, "--draw does not go with --sections"),
