@@ -66,10 +66,6 @@ class ResponseTable:
         """The same table with further columns."""
         return replace(self, columns={**self.columns, **columns})
 
-    def with_columns(self, columns: dict[str, Real]) -> ResponseTable:
-        """The same table with further columns."""
-        return replace(self, columns={**self.columns, **columns})
-
     def as_object(self) -> dict[str, object]:
         """The table with its unit in each key."""
         return {

@@ -13,9 +13,11 @@ import numpy as np
 import scipy.linalg
 from numpy.typing import ArrayLike, NDArray
 
-from preview.circuit.netlist import Branch, Netlist
+from preview.circuit.netlist import GND, Branch, Netlist
 from preview.circuit.parts import PartKind
 from preview.network.expansion import output_ohm
+from preview.network.opamps import second_pole_hz
+from preview.network.operating import small_signal
 from preview.network.statespace import Topology, invert_feedback
 
 __all__ = ["Linear", "linear"]
@@ -76,6 +78,7 @@ def linear(netlist: Netlist) -> Linear:
     CircuitError
         It has none: the response grows without end towards high frequencies, as a bare differentiator's does.
     """
+    netlist = small_signal(netlist)
     fast = [o for o in netlist.opamps if o.model.real and math.isfinite(o.model.gain_bandwidth_hz)]
     inner = _apart(netlist, {o.designator for o in fast})
     topology = Topology(inner)
@@ -83,43 +86,54 @@ def linear(netlist: Netlist) -> Linear:
     names = [o.designator for o in netlist.opamps]
     w = [1 + names.index(o.designator) for o in fast]  # columns of the op-amps that are states
     y = [1 + i for i in range(len(names)) if 1 + i not in w]
-    B, C_e, D_e = space.B[0], space.C_e[0], space.D_e[0]
-    C_out, D_out = space.C_out[0], space.D_out[0]
-    rows = [i - 1 for i in y]
+    C_e, D_e = space.C_e[0], space.D_e[0]
+    ideal, chased = [i - 1 for i in y], [i - 1 for i in w]
     # y is what brings its own inputs together: 0 = C_e x + D_e [u, w] + D_e y
-    back = -invert_feedback(D_e[rows][:, y][None])[0] if y else np.zeros((0, 0))
-    from_x, from_s = back @ C_e[rows], back @ D_e[rows]
+    back = -invert_feedback(D_e[ideal][:, y][None])[0] if y else np.zeros((0, 0))
+    from_x, from_s = back @ C_e[ideal], back @ D_e[ideal]
 
     def closed(by_x: Real, by_s: Real) -> tuple[Real, Real]:
         """Rows over [x, s] with y put into them: over x and w, and over u."""
         by_x, by_s = by_x + by_s[:, y] @ from_x, by_s + by_s[:, y] @ from_s
-        return np.hstack([by_x, by_s[:, w]]), by_s[:, :1]
+        return np.hstack([by_x, by_s[:, w]]), by_s[:, 0]
 
-    wt = 2.0 * np.pi * np.array([o.model.gain_bandwidth_hz for o in fast])[:, None]
-    chased = [i - 1 for i in w]
-    loss = np.zeros((len(fast), topology.inputs))
+    A_x, B_x = closed(space.A[0], space.B[0])
+    e_x, e_u = closed(C_e[chased], D_e[chased])
+    C, D = closed(space.C_out[0], space.D_out[0])
+    n, known = topology.states, topology.states + len(fast)
+    twofold = [o for o in fast if math.isfinite(second_pole_hz(o.model))]
+    A, B = np.zeros((known + len(twofold), known + len(twofold))), np.zeros(known + len(twofold))
+    A[:n, :known], B[:n] = A_x, B_x
     for k, opamp in enumerate(fast):
-        loss[k, w[k]] = 1.0 / opamp.model.open_loop_gain
-    A_x, B_x = closed(space.A[0], B)
-    A_w, B_w = closed(wt * C_e[chased], wt * (D_e[chased] - loss))
-    C, D = closed(C_out, D_out)
-    return Linear(np.vstack([A_x, A_w]), np.vstack([B_x, B_w])[:, 0], C[0], float(D[0, 0]))
+        at = output = n + k
+        if opamp in twofold:  # its first stage is a state of its own, which the output follows
+            at = known + twofold.index(opamp)
+            w2 = 2.0 * np.pi * second_pole_hz(opamp.model)
+            A[output, at], A[output, output] = w2, -w2
+        wt = 2.0 * np.pi * opamp.model.gain_bandwidth_hz
+        A[at, :known], B[at] = wt * e_x[k], wt * e_u[k]
+        A[at, at] -= wt / opamp.model.open_loop_gain
+    return Linear(A, B, np.concatenate([C[0], np.zeros(len(twofold))]), float(D[0]))
 
 
 def _apart(netlist: Netlist, fast: set[str]) -> Netlist:
-    """The netlist with the output resistance of each fast op-amp as a branch behind an inner voltage."""
-    inside = [
-        Branch(f"{o.designator}.Rout", PartKind.RESISTOR, f"{o.designator}.w", o.out, output_ohm(o.model))
-        for o in netlist.opamps
-        if o.designator in fast
-    ]
-    return replace(
-        netlist,
-        branches=(*netlist.branches, *inside),
-        opamps=tuple(
-            replace(o, out=f"{o.designator}.w") if o.designator in fast else o for o in netlist.opamps
-        ),
-    )
+    """The netlist with input capacitances as branches, and fast op-amps as inner voltages behind a resistance."""
+    extra: list[Branch] = []
+    opamps = []
+    for opamp in netlist.opamps:
+        name, model = opamp.designator, opamp.model
+        for end, a, b, farad in (
+            ("plus", opamp.plus, GND, model.input_farad),
+            ("minus", opamp.minus, GND, model.input_farad),
+            ("inputs", opamp.plus, opamp.minus, model.input_differential_farad),
+        ):
+            if farad > 0.0 and a != b:
+                extra.append(Branch(f"{name}.C{end}", PartKind.CAPACITOR, a, b, farad))
+        if name in fast:
+            extra.append(Branch(f"{name}.Rout", PartKind.RESISTOR, f"{name}.w", opamp.out, output_ohm(model)))
+            opamp = replace(opamp, out=f"{name}.w")
+        opamps.append(opamp)
+    return replace(netlist, branches=(*netlist.branches, *extra), opamps=tuple(opamps))
 
 
 def _zeros(system: Linear) -> Complex:
