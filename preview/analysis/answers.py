@@ -86,6 +86,7 @@ class Answers:
             "passband_gain": self.driven.gain,
             "passband_polarity": self.driven.polarity,
             "passband_phase_deg": self.driven.phase_deg,
+            "passband_phase_hz": self.driven.phase_hz,
             "poles": None if self.poles is None else [mode.as_object() for mode in self.poles],
             "zeros": None if self.zeros is None else [mode.as_object() for mode in self.zeros],
             "step": None if step is None else {f: getattr(step, f) for f in StepFigures.__dataclass_fields__},
@@ -180,7 +181,8 @@ def answers(session: Session, frequency_hz: Sequence[float]) -> Answers:
     except CircuitError:
         pass  # a gain that rises without end, such as a bare differentiator's
     else:
-        poles, zeros = (modes(s) for s in system.poles_and_zeros())
+        at_poles, at_zeros = system.poles_and_zeros()
+        poles, zeros = modes(at_poles), modes(at_zeros, at_poles)
         step = step_figures(system)
     return Answers(
         frequency_hz=f,
@@ -240,7 +242,8 @@ def _hertz(frequency_hz: float) -> str:
 
 
 def _decibels(before_db: float, now_db: float) -> tuple[str, str, str]:
-    return f"{before_db:.2f} dB", f"{now_db:.2f} dB", f"{now_db - before_db:+.2f} dB"
+    change_db = round(now_db - before_db, 2) + 0.0
+    return f"{before_db:.2f} dB", f"{now_db:.2f} dB", f"{change_db:+.2f} dB"
 
 
 def _step_line(step: StepFigures | None) -> str:
@@ -252,7 +255,8 @@ def _step_line(step: StepFigures | None) -> str:
         beyond = f"overshoot {over:.3g} %" if over >= 0.005 else "no overshoot"
         words = [f"of 1 V: to {_volts(step.end_gain)}, {rise}", beyond, "within 1 %"]
     else:
-        words = [f"of 1 V: peak {_volts(step.peak_gain)}, {rise}", f"rests at {_volts(step.end_gain)}"]
+        rest = step.end_gain if abs(step.end_gain) > 1e-6 * abs(step.peak_gain) else 0.0
+        words = [f"of 1 V: peak {_volts(step.peak_gain)}, {rise}", f"rests at {_volts(rest)}"]
         words.append("within 1 % of the peak")
     words[-1] += f" after {_seconds(step.settling_1_percent_s)}"
     return ", ".join([*words, f"0.1 % after {_seconds(step.settling_0_1_percent_s)}"])

@@ -14,8 +14,10 @@ HIGHEST_HZ = 100e6
 """What lies above is the model's and not the circuit's [Hz]."""
 _REAL = 1e-3
 """A pair with less imaginary part than this share counts as two on the axis: a double one is never found exactly."""
-_AT_REST = 1e-9
-"""What is below this share of the lowest of the others is at 0 Hz."""
+SHOWN_HZ = 1e6
+"""What lies above is told a person by its number only [Hz]."""
+_AT_REST = 1e-5
+"""A zero below this share of the lowest pole is at 0 Hz: a double one is never found exactly."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -39,14 +41,22 @@ class Mode:
         return {"f0_hz": self.f0_hz, "q": self.q, "order": self.order, "right_half_plane": self.right}
 
 
-def modes(s_rad: Iterable[complex]) -> tuple[Mode, ...]:
-    """Poles or zeros [rad/s] as sections, rising; what is above 100 MHz is left out."""
+def modes(s_rad: Iterable[complex], beside: Iterable[complex] = ()) -> tuple[Mode, ...]:
+    """Poles or zeros [rad/s] as sections, rising; what is above 100 MHz is left out.
+
+    Parameters
+    ----------
+    s_rad : iterable of complex
+        The poles or the zeros [rad/s].
+    beside : iterable of complex
+        For zeros, the poles: a zero far below all of them is at 0 Hz.
+    """
     found = [complex(s) for s in s_rad if abs(s) <= 2.0 * np.pi * HIGHEST_HZ]
-    least = _AT_REST * min((abs(s) for s in found if abs(s) > 1e-6), default=0.0)
+    least = _AT_REST * min((abs(s) for s in beside), default=0.0)
     sections = []
     for s in found:
         size, hz = abs(s), abs(s) / (2.0 * np.pi)
-        if size <= max(least, 1e-6):
+        if size <= least or size == 0.0:
             sections.append(Mode(0.0, None))
         elif abs(s.imag) <= _REAL * size:
             sections.append(Mode(hz, None, s.real > 0.0))
@@ -63,6 +73,9 @@ def modes_line(found: tuple[Mode, ...], hertz: Callable[[float], str]) -> str:
     """The sections in words: ``159 Hz, 1.59 kHz Q 0.707``."""
     words = []
     for mode in found:
+        if mode.f0_hz > SHOWN_HZ:
+            words.append(f"{sum(other.f0_hz > SHOWN_HZ for other in found)} above {hertz(SHOWN_HZ)}")
+            break
         text = hertz(mode.f0_hz)
         if mode.q is not None:
             text += f" Q {mode.q:.4g}" if math.isfinite(mode.q) else " on the axis"

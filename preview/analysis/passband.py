@@ -9,7 +9,7 @@ from typing import Literal
 
 import numpy as np
 
-from preview.analysis.response import find_corners
+from preview.analysis.response import PASSBAND_HZ, SEARCH_HZ, find_corners
 from preview.circuit.netlist import Netlist
 from preview.network import transfer
 from preview.values.notation import format_value
@@ -19,9 +19,9 @@ __all__ = ["Passband", "passband"]
 Polarity = Literal["non-inverting", "inverting", "turning"]
 
 _FAR = 1e3
-"""How far beyond a corner the phase of a passband that reaches to 0 Hz or to infinity is taken [ratio]."""
+"""How far beyond a corner a passband that reaches to 0 Hz or to infinity is looked at [ratio]."""
 _ANYWHERE_HZ = 1e3
-"""Where it is taken without a corner [Hz]."""
+"""Where a gain without a corner is looked at [Hz]."""
 _NEAR_DEG = 60.0
 
 
@@ -30,24 +30,28 @@ class Passband:
     """Passband gain, polarity and corners of a circuit."""
 
     gain_db: float
-    """The largest gain [dB]."""
+    """The passband's gain [dB]."""
     polarity: Polarity
-    """What the stage does to the signal's sign in the middle of the passband; turning where it is neither."""
+    """What the stage does to the signal's sign in the passband; turning where it is neither, or not the same."""
     phase_deg: float
-    """Phase there [degrees]."""
+    """Phase in the middle of the passband [degrees]."""
+    phase_hz: float
+    """Where that is [Hz]."""
     corners_hz: tuple[float, ...]
     """Frequencies 3.01 dB below the passband gain, rising [Hz]."""
 
     @property
     def gain(self) -> float:
-        """The largest gain as a factor, negative where the stage inverts [V/V]."""
+        """The gain as a factor, negative where the stage inverts [V/V]."""
         size = math.pow(10.0, self.gain_db / 20.0)
         return -size if self.polarity == "inverting" else size
 
     def said(self) -> str:
         """Gain in words: ``20.00 dB, x 10, inverting``."""
-        turn = f"phase {self.phase_deg:.0f} deg" if self.polarity == "turning" else self.polarity
-        return f"{self.gain_db:.2f} dB, x {abs(self.gain):.4g}, {turn}"
+        turn: str = self.polarity
+        if turn == "turning":
+            turn = f"phase {self.phase_deg:.0f} deg at {format_value(self.phase_hz, 'frequency')}"
+        return f"{round(self.gain_db, 2) + 0.0:.2f} dB, x {abs(self.gain):.4g}, {turn}"
 
     def corners_said(self) -> str:
         """Corners in words."""
@@ -57,20 +61,24 @@ class Passband:
 def passband(netlist: Netlist) -> Passband:
     """Passband of a circuit.
 
-    Its polarity is taken between two corners, or far below or above a single one, where the gain is within 3 dB of
-    the passband's; at 1 kHz where there is no corner.
+    Its phase is taken between two corners, or far below or above a single one, where the gain is within 3 dB of the
+    passband's; at 1 kHz where there is no corner. Where the passband has no end, the sign must be the same there.
     """
     gain_db, corners = find_corners(netlist)
-    spots = [_ANYWHERE_HZ]
+    ends = (SEARCH_HZ[0], PASSBAND_HZ)
+    spots = [_ANYWHERE_HZ, *ends]
     if corners:
         between = [math.sqrt(a * b) for a, b in pairwise(corners)]
-        spots = [*between, corners[0] / _FAR, corners[-1] * _FAR]
+        spots = [*between, corners[0] / _FAR, corners[-1] * _FAR, *ends]
     gain = transfer.response(netlist, spots)
-    at = int(np.argmax(np.abs(gain) >= 10.0 ** ((gain_db - 3.02) / 20.0)))
-    phase_deg = float(np.angle(gain[at], deg=True))
-    polarity: Polarity = "turning"
+    inside = [i for i in range(len(spots)) if abs(gain[i]) >= math.pow(10.0, (gain_db - 3.02) / 20.0)] or [0]
+    phases = [float(np.angle(gain[i], deg=True)) for i in inside]
+    signs = {_polarity(phase) for phase in phases}
+    polarity: Polarity = signs.pop() if len(signs) == 1 else "turning"
+    return Passband(gain_db, polarity, phases[0], spots[inside[0]], corners)
+
+
+def _polarity(phase_deg: float) -> Polarity:
     if abs(phase_deg) < _NEAR_DEG:
-        polarity = "non-inverting"
-    elif abs(phase_deg) > 180.0 - _NEAR_DEG:
-        polarity = "inverting"
-    return Passband(gain_db, polarity, phase_deg, corners)
+        return "non-inverting"
+    return "inverting" if abs(phase_deg) > 180.0 - _NEAR_DEG else "turning"

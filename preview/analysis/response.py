@@ -25,6 +25,10 @@ Complex = NDArray[np.complex128]
 
 SEARCH_HZ = (1e-3, 1e8)
 """Range in which corners are looked for [Hz]."""
+PASSBAND_HZ = 100e3
+"""Up to where the passband's gain is looked for, unless it is still rising there [Hz]."""
+STEEP = 1e-3
+"""A gain that rises by more than this share from one frequency of the search to the next is not flat."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -87,10 +91,12 @@ def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response
 
 
 def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
-    """Passband gain (the largest) [dB] and the frequencies at which it has fallen by the square root of two [Hz].
+    """Passband gain [dB] and the frequencies at which it has fallen by the square root of two [Hz].
 
-    A gain that still rises at an end of the range searched (an integrator, a differentiator) has no passband: the
-    largest gain found is given, and no corner.
+    The passband gain is the largest up to 100 kHz: a crest that a real op-amp adds far above is not the passband of
+    the stage. Where the gain still rises steeply there it is the largest at any frequency. A gain that still rises
+    at an end of the range searched (an integrator, a differentiator) has no passband: the largest gain found is
+    given, and no corner.
     """
     linear = small_signal(netlist)
 
@@ -99,7 +105,7 @@ def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
 
     f = np.geomspace(*SEARCH_HZ, 1101)
     gain = magnitude(f)
-    top = int(np.argmax(gain))
+    top = _top(f, gain)
     next_to_it = gain[1] if top == 0 else gain[-2]
     if top in (0, len(f) - 1) and gain[top] > 1.001 * next_to_it:
         return float(20.0 * np.log10(gain[top])), ()
@@ -127,6 +133,29 @@ def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
             low, high = inside[at - 1], inside[at]
         corners.append(float(np.sqrt(low * high)))
     return float(20.0 * np.log10(peak)), tuple(corners)
+
+
+def _top(f: Real, gain: Real) -> int:
+    """Where the passband's gain is read off.
+
+    Where the gain goes on rising a little beyond 100 kHz, that is where it is flattest: at the end of a high-pass's
+    rise, or before the rise towards a crest far above.
+    """
+    edge = int(np.searchsorted(f, PASSBAND_HZ))
+    top = int(np.argmax(gain[: edge + 1]))
+    if top < edge:
+        return top
+    slope = np.diff(np.log(np.maximum(gain, 1e-300)))
+    if slope[edge - 1] > STEEP:
+        return int(np.argmax(gain))
+    at = edge
+    if slope[edge] > slope[edge - 1]:
+        while at > 1 and 0.0 < slope[at - 2] <= slope[at - 1]:
+            at -= 1
+        return at
+    while at < len(slope) and 0.0 < slope[at] <= slope[at - 1]:
+        at += 1
+    return at
 
 
 def heard(netlist: Netlist, sample_rate_hz: float, quality: Quality, frequency_hz: ArrayLike) -> Complex:

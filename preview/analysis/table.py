@@ -90,7 +90,7 @@ class ResponseTable:
         heads = ["frequency", "gain", "phase", "delay", "Z in", "Z out"]
         heads += ["noise"] if "noise_v_rthz" in c else []
         lines = [
-            f"passband gain {self.passband_gain_db:.2f} dB, corners {corners}",
+            f"passband gain {round(self.passband_gain_db, 2) + 0.0:.2f} dB, corners {corners}",
             self._rest(),
             "".join(f"{head:>12}" for head in heads),
         ]

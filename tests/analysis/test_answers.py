@@ -13,8 +13,10 @@ from preview.analysis.passband import passband
 from preview.circuit.cascade import cascade
 from preview.circuit.drive import parse_load, parse_source
 from preview.circuit.library import find_stage, open_stages, with_overrides
+from preview.circuit.netlist import netlist
 from preview.circuit.parts import OpAmp, Part, PartKind, Stage, Supply, TwoTerminal
 from preview.engine.jsontext import json_text
+from preview.network.transfer import response
 from preview.session import Session
 from preview.values.levels import parse_full_scale
 from tests.circuit.test_cascade import low_pass
@@ -54,7 +56,37 @@ def test_a_resonance_is_no_change_of_sign() -> None:
     assert found.gain_db == pytest.approx(30.0, abs=0.01)
     assert abs(found.phase_deg) == pytest.approx(90.0, abs=2.0)
     assert found.polarity == "turning"
-    assert found.said() == f"30.00 dB, x 31.63, phase {found.phase_deg:.0f} deg"
+    assert found.said() == f"30.00 dB, x 31.63, phase {found.phase_deg:.0f} deg at 5.03 kHz"
+
+
+def test_an_all_pass_turns_the_sign_over_its_passband() -> None:
+    for kind in ("ideal", "TL072"):
+        found = passband(netlist(with_overrides(find_stage("all-pass"), {}, {None: kind})[0]))
+        assert found.gain == pytest.approx(1.0, abs=1e-3)
+        assert found.polarity == "turning"
+
+
+@pytest.mark.parametrize(
+    "name", ["sallen-key-high-pass", "rc-high-pass", "tone-control", "multiple-feedback-high-pass"]
+)
+def test_a_crest_that_the_op_amp_adds_in_the_megahertz_is_not_the_passband(name: str) -> None:
+    stage = find_stage(name)
+    ideal = passband(netlist(with_overrides(stage, {}, {None: "ideal"})[0]))
+    real = passband(netlist(stage))
+    crest_db = 20 * np.log10(np.abs(response(netlist(stage), np.geomspace(1e5, 1e8, 400))).max())
+    assert crest_db > ideal.gain_db + 0.25
+    assert real.gain_db == pytest.approx(ideal.gain_db, abs=0.02)
+    assert real.polarity == ideal.polarity
+
+
+def test_a_high_pass_has_its_gain_at_the_end_of_its_rise() -> None:
+    # a corner of 20 kHz: at 100 kHz the gain is still 0.17 dB below what it comes to
+    circuit = net([("C1", "in", "out", 1e-9), ("R1", "out", "gnd", 7957.747)], [])
+    found = passband(circuit)
+    assert found.gain_db == pytest.approx(0.0, abs=1e-4)
+    assert found.corners_hz == pytest.approx((20e3,), rel=1e-4)
+    wide = net([("C1", "in", "out", 10e-12), ("R1", "out", "gnd", 7957.747)], [])
+    assert passband(wide).corners_hz == pytest.approx((2e6,), rel=1e-3)
 
 
 def test_a_gain_without_a_corner_has_a_sign_too() -> None:

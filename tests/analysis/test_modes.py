@@ -65,7 +65,7 @@ def test_sections_of_known_circuits() -> None:
     assert mode.order == 2
     poles, zeros = linear(ALL["two-sections"]).poles_and_zeros()
     assert [m.order for m in modes(poles)] == [1, 1]
-    assert modes(zeros) == (Mode(0.0, None),)
+    assert modes(zeros, poles) == (Mode(0.0, None),)
 
 
 def test_a_double_pole_counts_as_two_real_ones() -> None:
@@ -84,5 +84,12 @@ def test_what_is_on_the_axis_or_right_of_it_says_so() -> None:
     assert modes_line((), str) == "none"
 
 
-def test_what_is_above_100_mhz_is_left_out() -> None:
+def test_what_is_above_100_mhz_is_left_out_and_above_1_mhz_only_counted() -> None:
     assert modes([-2 * np.pi * 2e8]) == ()
+    found = modes([-2 * np.pi * hz for hz in (1e3, 2e6, 3e6)])
+    assert len(found) == 3
+    assert modes_line(found, lambda f: f"{f:.0f} Hz") == "1000 Hz, 2 above 1000000 Hz"
+
+
+def test_a_double_zero_at_0_hz_is_there_though_it_is_not_found_exactly() -> None:
+    assert modes([1e-3 + 2e-3j, 1e-3 - 2e-3j], [-600.0]) == (Mode(0.0, None), Mode(0.0, None))
