@@ -85,7 +85,9 @@ def netlist(
     wiring.branches.extend(_driving(source))
     for part in stage.parts:
         wiring.add(part)
-    wiring.branches.extend(_across(output, (load or LoadModel(load_ohm)).across, "load"))
+    at_the_end = not stage.joined or output.startswith(f"{len(stage.joined)}.")
+    loaded = output if at_the_end else OUT  # an output between the stages of a cascade is listened to only
+    wiring.branches.extend(_across(loaded, (load or LoadModel(load_ohm)).across, "load"))
     used = {node for part in stage.parts for node in part.nodes}
     for node, volts in ((POSITIVE_RAIL, rails.positive_v), (NEGATIVE_RAIL, rails.negative_v)):
         if node in used:

@@ -138,6 +138,16 @@ def test_an_output_between_the_stages_can_be_listened_to() -> None:
     assert first == pytest.approx((1 + x) / (1 + 3 * x + x**2))
 
 
+def test_the_load_stays_at_the_end_while_an_output_between_is_listened_to() -> None:
+    joined = cascade([EVERY_KIND, EVERY_KIND])
+    at = {}
+    for output in ("out", "1.out", "1.mid", "2.mid"):
+        circuit = netlist(joined, load=parse_load("10k"), output=output)
+        assert circuit.output_node == output
+        at[output] = next(b.a for b in circuit.branches if b.designator == "Rload")
+    assert at == {"out": "out", "1.out": "out", "1.mid": "out", "2.mid": "2.mid"}
+
+
 def test_source_and_load_are_at_the_ends() -> None:
     circuit = netlist(cascade([low_pass(), low_pass()]), source=parse_source("600"), load=parse_load("10k"))
     ends = {b.designator: (b.a, b.b) for b in circuit.branches}

@@ -6,6 +6,8 @@ from pathlib import Path
 
 import numpy as np
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
 from preview.analysis.response import find_corners
 from preview.circuit.drive import (
@@ -147,6 +149,38 @@ def test_what_is_not_a_source_is_refused_with_the_cure(text: str, message: str, 
 def test_what_is_not_a_load_is_refused(text: str, message: str) -> None:
     with pytest.raises(NotationError, match=message):
         parse_load(text)
+
+
+_PIECES = [
+    *SOURCES,
+    *LOADS,
+    "cable",
+    "winding",
+    "600",
+    "7k5",
+    "2.5 H",
+    "20 nF",
+    "15n",
+    "+",
+    ",",
+    "||",
+    "-",
+    "\x1b",
+    "e9",
+]
+
+
+@given(st.lists(st.sampled_from(_PIECES), max_size=6).map(" ".join) | st.text(max_size=30))
+def test_any_text_is_a_source_and_a_load_or_is_refused_in_a_line(text: str) -> None:
+    for parse, exact in ((parse_source, exact_source), (parse_load, exact_load)):
+        said_instead = ""
+        try:
+            model = parse(text)
+        except NotationError as error:
+            said_instead = str(error)
+        else:
+            assert parse(exact(model)) == model
+        assert not {"\n", "\x1b"} & set(said_instead)
 
 
 def test_the_source_stands_in_a_row_before_in_and_its_capacitance_across() -> None:

@@ -296,3 +296,13 @@ def test_the_render_command_names_every_stage_of_a_cascade(session) -> None:
     options = list(zip(words[4::2], words[5::2], strict=True))
     assert [name for option, name in options if option == "--stage"] == list(opened.opened_as)
     assert [text for option, text in options if option == "--part"] == ["2.R1=4k7"]
+
+
+def test_parts_of_a_cascade_are_turned_by_their_number(session, engine, clock) -> None:
+    opened = open_stages(["inverting-high-pass", "inverting-low-pass"])
+    desk = Desk(replace(session, stage=opened), engine, now_s=clock)
+    desk.choose([p.designator for p in opened.settable].index("2.R1"))
+    desk.do_value_up()
+    assert engine.sent[-1] == SetPart("2.R1", 11e3)
+    desk.do_reset_part()
+    assert engine.sent[-1] == SetPart("2.R1", 10e3)
