@@ -27,8 +27,6 @@ def main() -> None:
         audio=demo.path,
         stage=stage,
         supply=stage.supply,
-        source_ohm=0.0,
-        load_ohm=None,
         full_scale=parse_full_scale("+18 dBu"),
     )
     probe(demo.path)

@@ -22,9 +22,10 @@ from typing import TYPE_CHECKING, NoReturn
 from preview import __version__
 from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
-from preview.errors import PreviewError, UsageError, printable
+from preview.errors import OutputFileError, PreviewError, UsageError, printable
 
 if TYPE_CHECKING:
+    from preview.analysis.answers import Answers
     from preview.audio.sink import Depth
     from preview.engine.process import EngineProcess
     from preview.session import Session
@@ -167,12 +168,25 @@ def _parser() -> argparse.ArgumentParser:
         action="store_true",
         help="IIR second-order sections of the stage by the bilinear transform",
     )
+    response.add_argument(
+        "--noise",
+        action="store_true",
+        help="noise at the output, 20 Hz to 20 kHz and at each frequency, and what makes it",
+    )
+    response.add_argument("--draw", action="store_true", help="the gain curve too, in plain characters")
+    response.add_argument("--plot", metavar="FILE", help="a picture too: FILE.png or FILE.svg")
     response.add_argument("--prewarp", metavar="HZ", help="frequency at which the sections are exact")
     _add_shapes(response)
     add_stage_options(response)
 
-    stages = command("stages", _stages, "the stages that come with Preview, or the text of one")
-    stages.add_argument("name", nargs="?", metavar="NAME", help="a stage")
+    stages = command(
+        "stages", _stages, "the stages there are, or the text of one, or a new one to start from"
+    )
+    one = stages.add_mutually_exclusive_group()
+    one.add_argument("name", nargs="?", metavar="NAME", help="a stage")
+    one.add_argument(
+        "--new", metavar="FILE", help="write a commented example to FILE.toml, which must not exist"
+    )
     _add_shapes(stages)
     opamps = command("opamps", _opamps, "the op-amp types side by side, or one and its sources")
     opamps.add_argument("name", nargs="?", metavar="NAME|FILE", help="an op-amp type")
@@ -262,10 +276,13 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
 
 
 def _echo(session: Session, warnings: Sequence[str]) -> None:
-    """Say how the options were understood."""
+    """Say how the options were understood, and what of the circuit is hardly meant."""
+    from preview.circuit.cautions import warnings as cautions
+
     for note in session.notes:
         _say(f"  {printable(note)}")
-    _warn(warnings)
+    _warn(f"{what} ({cure})" for what, cure in cautions(session.netlist()))
+    _warn((*session.warnings, *warnings))
 
 
 def _warn(warnings: Iterable[str]) -> None:
@@ -325,6 +342,7 @@ def _depth(text: str) -> Depth:
 
 def _response(options: argparse.Namespace) -> int:
     from preview.analysis import table as tables
+    from preview.analysis.answers import answers
     from preview.engine.options import check_together, frequency_of, session_from, understood_values
 
     check_together(options)
@@ -354,19 +372,67 @@ def _response(options: argparse.Namespace) -> int:
             sample_rate_hz=rate_hz if options.as_heard else None,
             quality=session.quality,
         )
-        body |= {"as_heard": options.as_heard, **table.as_object()}
+        noise_lines: list[str] = []
+        if options.noise:
+            from preview.analysis.noise import noise_budget
+
+            budget = noise_budget(circuit, wanted)
+            table = table.with_columns(budget.columns)
+            body |= budget.as_object()
+            noise_lines = budget.as_lines()
+        found = answers(session, wanted)
+        body |= {"as_heard": options.as_heard, **table.as_object(), **found.as_object()}
         if options.as_heard:
             body |= {"sample_rate_hz": rate_hz, "quality": session.quality.value}
-        lines = [table.as_csv()] if options.csv else table.as_lines()
+        lines = [table.with_columns(found.columns).as_csv()] if options.csv else table.as_lines()
+        if not options.csv:
+            lines += noise_lines
+        if not (options.csv or options.as_heard):
+            lines += ["", *found.as_lines()]
+        lines += _drawn(options, session, found)
     if not options.json:
         _echo(session, ())
     print(json_text(body) if options.json else "\n".join(lines))
     return 0
 
 
-def _stages(options: argparse.Namespace) -> int:
-    from preview.circuit.library import find_stage, stage_names, stage_source
+def _drawn(options: argparse.Namespace, session: Session, found: Answers) -> list[str]:
+    """Lines of the curve in plain characters, if asked for; a picture, if asked for, is written."""
+    if options.plot is not None:
+        from preview.engine.options import picture_kind
+        from preview.plots import response_picture
 
+        place = Path(options.plot)
+        if not place.parent.is_dir():
+            raise OutputFileError(f"{place.parent}: no such folder", "make it first")
+        place.write_bytes(response_picture(session, found, picture_kind(options.plot)))
+    if not options.draw:
+        return []
+    from preview.analysis.curves import curves
+    from preview.analysis.textplot import gain_drawing
+
+    return ["", *gain_drawing(curves(session, 68), rows=19)]
+
+
+def _stages(options: argparse.Namespace) -> int:
+    from preview.circuit.library import (
+        find_stage,
+        new_stage_file,
+        stage_names,
+        stage_source,
+        user_stage_folder,
+    )
+
+    if options.new is not None:
+        new_stage_file(Path(options.new))
+        body = {"command": "stages", "file": printable(options.new)}
+        heard = options.new if os.sep in options.new else f"./{options.new}"
+        lines = [
+            f"{printable(options.new)} is written; change it, then: preview listen --stage {printable(heard)}",
+            f"in {printable(str(user_stage_folder()))} it is found by its name",
+        ]
+        print(_reported(options, {**body, "stages": [{"file": body["file"]}]}, "stages", lines))
+        return 0
     if options.name is not None:
         stage = find_stage(options.name)
         source = stage_source(options.name)
@@ -383,9 +449,12 @@ def _stages(options: argparse.Namespace) -> int:
             stages.append(find_stage(name))
         except PreviewError as error:  # one of the person's own; the others are still there
             _warn([str(error)])
-    listed = [{"name": s.name, "title": s.title, "about": s.about} for s in stages]
+    listed = [
+        {"name": s.name, "title": s.title, "about": s.about, "file": s.path and printable(str(s.path))}
+        for s in stages
+    ]
     width = max(len(s.name) for s in stages)
-    lines = [f"{s.name:<{width}}  {printable(s.title)}" for s in stages]
+    lines = [f"{s.name:<{width}}  {printable(s.title)}{' (your own)' if s.path else ''}" for s in stages]
     print(_reported(options, {"command": "stages", "stages": listed}, "stages", lines))
     return 0
 

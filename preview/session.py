@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from enum import StrEnum
 from pathlib import Path
 
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, LoadModel, SourceModel
 from preview.circuit.netlist import Netlist, netlist
+from preview.circuit.nodes import OUT
 from preview.circuit.parts import Stage, Supply
 from preview.values.levels import FullScale
 from preview.values.quality import Quality
@@ -33,24 +35,28 @@ class Session:
     """The stage with the part values and op-amp types as set."""
     supply: Supply
     """The rails in force."""
-    source_ohm: float
-    """Resistance of the source [ohm]; 0 for an ideal one."""
-    load_ohm: float | None
-    """Resistance of the load [ohm]; None for no load."""
     full_scale: FullScale
     """The volts that a sample of 1.0 stands for."""
+    source: SourceModel = IDEAL_SOURCE
+    """What drives the stage, its cable included."""
+    load: LoadModel = NO_LOAD
+    """What follows the stage."""
     quality: Quality = Quality.STANDARD
     """Quality of computation."""
     at_end: AtEnd = AtEnd.LOOP
     """What happens at the end of the file or region."""
+    output: str = OUT
+    """The node that is listened to and loaded: ``out``, or another of the stage's outputs."""
     notes: tuple[str, ...] = field(default=())
     """How each option was understood, one line each, for the screen."""
+    warnings: tuple[str, ...] = field(default=())
+    """What of the options may not be as it was meant, one line each."""
 
     def netlist(self) -> Netlist:
         """The checked netlist; raises CircuitError."""
-        return netlist(
-            self.stage,
-            supply=self.supply,
-            source_ohm=self.source_ohm,
-            load_ohm=self.load_ohm,
-        )
+        return netlist(self.stage, supply=self.supply, source=self.source, load=self.load, output=self.output)
+
+    def with_stage(self, stage: Stage) -> Session:
+        """The same session with another stage on its own rails; its output is kept where the stage has it."""
+        output = self.output if self.output in stage.outputs else OUT
+        return replace(self, stage=stage, supply=stage.supply, output=output)

@@ -2,7 +2,10 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from preview.circuit.netlist import Branch, Netlist, OpAmpSite
+from preview.circuit.opamp import OpAmpModel
 from preview.circuit.parts import PartKind
 
 KINDS = {"R": PartKind.RESISTOR, "C": PartKind.CAPACITOR, "L": PartKind.INDUCTOR}
@@ -24,6 +27,13 @@ def net(
             for i, (plus, minus, out) in enumerate(opamps)
         ),
     )
+
+
+def with_models(circuit: Netlist, *models: OpAmpModel) -> Netlist:
+    """The circuit with another model in each op-amp's place; one model alone is for all."""
+    each = models * len(circuit.opamps) if len(models) == 1 else models
+    sites = zip(circuit.opamps, each, strict=True)
+    return replace(circuit, opamps=tuple(replace(site, model=model) for site, model in sites))
 
 
 LOW_PASS = net(

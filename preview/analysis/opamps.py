@@ -9,7 +9,7 @@ from dataclasses import fields
 
 from preview.circuit.opamp import OpAmpModel
 from preview.circuit.opamp_library import find_opamp, find_sheet, opamp_names
-from preview.circuit.opamp_reader import OpAmpSheet, SheetFigure, SheetSwing
+from preview.circuit.opamp_sheet import OpAmpSheet, SheetFigure, SheetSwing
 from preview.circuit.opamp_units import FIGURE_FIELDS, FIGURES, format_figure
 from preview.errors import OpAmpFileError
 from preview.values.notation import format_value
@@ -51,9 +51,19 @@ def opamp_report(name: str | None = None) -> tuple[dict[str, object], list[str],
 
 
 def comparison_lines(names: Iterable[str]) -> list[str]:
-    """One line a type: speed, noise, swing, supply and class; an assumed figure is followed by ``~``."""
-    heads = ("type", "gain-bandwidth", "slew rate", "noise at 1 kHz", "swing +/-", "supply", "class")
-    plain, rows = [], [heads]
+    """One line a type: speed, noise, swing, supply, class, vices; an assumed figure is followed by ``~``."""
+    heads = (
+        "type",
+        "gain-bandwidth",
+        "slew rate",
+        "noise at 1 kHz",
+        "swing +/-",
+        "supply",
+        "class",
+        "beware of",
+    )
+    plain: list[OpAmpModel] = []
+    rows: list[tuple[str, ...]] = [heads]
     for name in names:
         model, sheet = find_opamp(name), find_sheet(name)
         if sheet is None:
@@ -66,7 +76,7 @@ def comparison_lines(names: Iterable[str]) -> list[str]:
     return [*lines, "~ assumed of its class; `preview opamps NAME` gives every figure with its source"]
 
 
-def _row(model: OpAmpModel, sheet: OpAmpSheet) -> tuple[str, str, str, str, str, str, str]:
+def _row(model: OpAmpModel, sheet: OpAmpSheet) -> tuple[str, ...]:
     slews = sorted({model.slew_up_v_per_s, model.slew_down_v_per_s})
     return (
         model.type,
@@ -76,7 +86,18 @@ def _row(model: OpAmpModel, sheet: OpAmpSheet) -> tuple[str, str, str, str, str,
         f"{_volts(model.swing_high_v)}/{_volts(model.swing_low_v)}{_mark(model, 'swing_high_v', 'swing_low_v')}",
         f"{model.supply_min_v:g} to {model.supply_max_v:g} V{_mark(model, 'supply_min_v', 'supply_max_v')}",
         sheet.class_name,
+        ", ".join(_vices(model)),
     )
+
+
+def _vices(model: OpAmpModel) -> list[str]:
+    """What surprises in a type of this kind."""
+    vices = []
+    if model.input_overdrive == "reverses":
+        vices.append("phase reversal")
+    if model.crossover_v > 0.0:
+        vices.append("crossover")
+    return vices
 
 
 def _noise_at(model: OpAmpModel, frequency_hz: float) -> float:
@@ -133,7 +154,9 @@ def _meaning(field: str) -> str:
 
 
 def _value(model: OpAmpModel, field: str) -> str:
-    value: float = getattr(model, field)
+    value: float | str = getattr(model, field)
+    if isinstance(value, str):
+        return value
     return format_figure(value, "voltage" if field in _SWINGS else FIGURES[FIGURE_FIELDS[field][0]].unit)
 
 
@@ -146,6 +169,8 @@ def opamp_object(name: str, *, whole: bool = False) -> dict[str, object]:
         "class": sheet.class_name if sheet else None,
         "real": model.real,
         **{field.name: getattr(model, field.name) for field in fields(model) if field.name not in _REST},
+        **{name: _points(getattr(model, name)) for name in ("swing_high_points", "swing_low_points")},
+        "current_limit_a": model.current_limit_a,
         "assumed": list(model.assumed),
     }
     if whole:
@@ -155,6 +180,9 @@ def opamp_object(name: str, *, whole: bool = False) -> dict[str, object]:
         body["swings"] = [
             {
                 "load_ohm": swing.load_ohm,
+                "current_a": swing.current_a,
+                "supply_positive_v": swing.supply_v[0],
+                "supply_negative_v": swing.supply_v[1],
                 "swing_high_v": swing.high_v,
                 "swing_low_v": swing.low_v,
                 "source": swing.origin,
@@ -162,3 +190,8 @@ def opamp_object(name: str, *, whole: bool = False) -> dict[str, object]:
             for swing in (sheet.swings if sheet else ())
         ]
     return body
+
+
+def _points(points: Iterable[tuple[float, float]]) -> list[dict[str, float]]:
+    """Loss of swing by output current."""
+    return [{"current_a": current_a, "drop_v": drop_v} for current_a, drop_v in points]

@@ -11,6 +11,7 @@ from preview.circuit.netlist import Netlist
 from preview.dsp.cores import following_step
 from preview.dsp.oversample import PASSBAND_RATIO, design, factor_for
 from preview.network import transfer
+from preview.network.operating import small_signal
 from preview.network.stability import check_stable
 from preview.values.quality import Quality
 
@@ -21,6 +22,10 @@ Complex = NDArray[np.complex128]
 
 SEARCH_HZ = (1e-3, 1e8)
 """Range in which corners are looked for [Hz]."""
+PASSBAND_HZ = 100e3
+"""Up to where the passband's gain is looked for, unless it is still rising there [Hz]."""
+STEEP = 1e-3
+"""A gain that rises by more than this share from one frequency of the search to the next is not flat."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -51,7 +56,7 @@ class Response:
 
 
 def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response:
-    """Exact response of a circuit.
+    """Exact response of a circuit to a small signal around its operating point.
 
     Parameters
     ----------
@@ -65,6 +70,7 @@ def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response
     CircuitError
         The circuit cannot be solved or is not stable.
     """
+    netlist = small_signal(netlist)
     check_stable(netlist)
     f = (
         np.geomspace(10.0, 100e3, 97)
@@ -82,34 +88,37 @@ def analyse(netlist: Netlist, frequency_hz: ArrayLike | None = None) -> Response
 
 
 def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
-    """Passband gain (the largest) [dB] and the frequencies at which it has fallen by the square root of two [Hz].
+    """Passband gain [dB] and the frequencies at which it has fallen by the square root of two [Hz].
 
-    A gain that still rises at an end of the range searched (an integrator, a differentiator) has no passband: the
-    largest gain found is given, and no corner.
+    The passband gain is the largest up to 100 kHz: a crest that a real op-amp adds far above is not the passband of
+    the stage. Where the gain still rises steeply there it is the largest at any frequency. A gain that still rises
+    at an end of the range searched (an integrator, a differentiator) has no passband: the largest gain found is
+    given, and no corner.
     """
+    linear = small_signal(netlist)
 
     def magnitude(f: Real) -> Real:
-        return np.abs(transfer.response(netlist, f))
+        return np.abs(transfer.response(linear, f))
 
     f = np.geomspace(*SEARCH_HZ, 1101)
     gain = magnitude(f)
-    top = int(np.argmax(gain))
+    top = _top(f, gain)
     next_to_it = gain[1] if top == 0 else gain[-2]
     if top in (0, len(f) - 1) and gain[top] > 1.001 * next_to_it:
         return float(20.0 * np.log10(gain[top])), ()
     lower, upper = f[max(top - 1, 0)], f[min(top + 1, len(f) - 1)]
-    peak = float(gain[top])
     for _ in range(4):
         inside = np.geomspace(lower, upper, 33)
         values = magnitude(inside)
         best = int(np.argmax(values))
-        peak = max(peak, float(values[best]))
+        if values[best] > gain[top]:  # a resonance may be narrower than the grid: its top is put into it
+            f[top], gain[top] = inside[best], values[best]
         lower, upper = inside[max(best - 1, 0)], inside[min(best + 1, 32)]
+    peak = float(gain[top])
     if peak <= 0.0:
         return float("-inf"), ()
     limit = peak / np.sqrt(2.0)
     above = gain >= limit
-    above[top] = True
     corners = []
     for i in np.flatnonzero(above[1:] != above[:-1]):
         low, high, rising = f[i], f[i + 1], bool(above[i + 1])
@@ -121,6 +130,29 @@ def find_corners(netlist: Netlist) -> tuple[float, tuple[float, ...]]:
             low, high = inside[at - 1], inside[at]
         corners.append(float(np.sqrt(low * high)))
     return float(20.0 * np.log10(peak)), tuple(corners)
+
+
+def _top(f: Real, gain: Real) -> int:
+    """Where the passband's gain is read off.
+
+    Where the gain goes on rising a little beyond 100 kHz, that is where it is flattest: at the end of a high-pass's
+    rise, or before the rise towards a crest far above.
+    """
+    edge = int(np.searchsorted(f, PASSBAND_HZ))
+    top = int(np.argmax(gain[: edge + 1]))
+    if top < edge:
+        return top
+    slope = np.diff(np.log(np.maximum(gain, 1e-300)))
+    if slope[edge - 1] > STEEP:
+        return int(np.argmax(gain))
+    at = edge
+    if slope[edge] > slope[edge - 1]:
+        while at > 1 and 0.0 < slope[at - 2] <= slope[at - 1]:
+            at -= 1
+        return at
+    while at < len(slope) and 0.0 < slope[at] <= slope[at - 1]:
+        at += 1
+    return at
 
 
 def heard(netlist: Netlist, sample_rate_hz: float, quality: Quality, frequency_hz: ArrayLike) -> Complex:
@@ -167,6 +199,7 @@ def deviation(netlist: Netlist, sample_rate_hz: float, quality: Quality) -> Devi
 
     Where the circuit's own gain is more than 80 dB below its largest there is nothing to hear and to compare.
     """
+    netlist = small_signal(netlist)
     top = min(20e3, PASSBAND_RATIO * sample_rate_hz)
     f = np.geomspace(10.0, top, 160)
     exact = transfer.response(netlist, f)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,8 +12,11 @@ from numpy.typing import NDArray
 from preview.analysis.response import analyse, heard
 from preview.circuit.netlist import Netlist
 from preview.dsp.bilinear import sections
+from preview.errors import CircuitError
+from preview.network.operating import Bound, operating_point, small_signal
 from preview.network.statespace import Topology
 from preview.network.transfer import input_impedance, output_impedance
+from preview.values.levels import format_volts
 from preview.values.notation import format_value
 from preview.values.quality import Quality
 
@@ -36,6 +39,13 @@ _COLUMNS = (
     "output_impedance_deg",
 )
 
+_BOUNDS: dict[Bound, str] = {
+    "high": "highest output voltage",
+    "low": "lowest output voltage",
+    "source": "largest output current",
+    "sink": "largest current into its output",
+}
+
 
 @dataclass(frozen=True, slots=True)
 class ResponseTable:
@@ -47,6 +57,14 @@ class ResponseTable:
     """Corners [Hz]."""
     passband_gain_db: float
     """Gain of the passband [dB]."""
+    dc_output_v: float
+    """Voltage of the output without a signal [V]; nan where it has no single one."""
+    dc_limiting: dict[str, Bound]
+    """Op-amps that rest at a limit without a signal, and at which."""
+
+    def with_columns(self, columns: dict[str, Real]) -> ResponseTable:
+        """The same table with further columns."""
+        return replace(self, columns={**self.columns, **columns})
 
     def as_object(self) -> dict[str, object]:
         """The table with its unit in each key."""
@@ -54,6 +72,8 @@ class ResponseTable:
             **{name: [float(v) for v in values] for name, values in self.columns.items()},
             "corners_hz": list(self.corners_hz),
             "passband_gain_db": self.passband_gain_db,
+            "dc_output_v": self.dc_output_v,
+            "dc_limiting": dict(self.dc_limiting),
         }
 
     def as_csv(self) -> str:
@@ -66,23 +86,35 @@ class ResponseTable:
     def as_lines(self) -> list[str]:
         """The table for a screen."""
         corners = ", ".join(format_value(f, "frequency") for f in self.corners_hz) or "none"
-        heads = ("frequency", "gain", "phase", "delay", "Z in", "Z out")
+        c = self.columns
+        heads = ["frequency", "gain", "phase", "delay", "Z in", "Z out"]
+        heads += ["noise"] if "noise_v_rthz" in c else []
         lines = [
-            f"passband gain {self.passband_gain_db:.2f} dB, corners {corners}",
+            f"passband gain {round(self.passband_gain_db, 2) + 0.0:.2f} dB, corners {corners}",
+            self._rest(),
             "".join(f"{head:>12}" for head in heads),
         ]
-        c = self.columns
         for i, f in enumerate(c["frequency_hz"]):
-            cells = (
+            cells = [
                 format_value(float(f), "frequency"),
                 f"{c['gain_db'][i]:.3f} dB",
                 f"{c['phase_deg'][i]:.2f} deg",
                 _or_dash(float(c["group_delay_s"][i]), "time"),
                 _or_dash(float(c["input_impedance_ohm"][i]), "resistance"),
                 _or_dash(float(c["output_impedance_ohm"][i]), "resistance"),
-            )
+            ]
+            if "noise_v_rthz" in c:
+                cells.append(f"{format_volts(float(c['noise_v_rthz'][i]))}/√Hz")
             lines.append("".join(f"{cell:>12}" for cell in cells))
         return lines
+
+    def _rest(self) -> str:
+        """Where it rests, in words."""
+        if not math.isfinite(self.dc_output_v):
+            return "without a signal the output comes to no rest"
+        words = [f"without a signal {format_volts(self.dc_output_v)} at the output"]
+        words += [f"{name} rests at its {_BOUNDS[bound]}" for name, bound in self.dc_limiting.items()]
+        return "; ".join(words)
 
 
 def _or_dash(value: float, kind: str) -> str:
@@ -154,7 +186,13 @@ def tabulate(
     named = {
         name: np.asarray(column, dtype=np.float64) for name, column in zip(_COLUMNS, columns, strict=True)
     }
-    return ResponseTable(named, corners_hz, passband_gain_db)
+    try:
+        rest = operating_point(netlist)
+    except CircuitError:
+        return ResponseTable(named, corners_hz, passband_gain_db, math.nan, {})
+    return ResponseTable(
+        named, corners_hz, passband_gain_db, rest.volts[netlist.output_node], dict(rest.limiting)
+    )
 
 
 def _heard_corner(
@@ -190,7 +228,8 @@ def second_order_sections(
     CircuitError
         There are none for it.
     """
-    topology = Topology(netlist)
-    A, B, C, D = topology.evaluate(topology.values_of(netlist)[None]).closed()
+    linear = small_signal(netlist)
+    topology = Topology(linear)
+    A, B, C, D = topology.evaluate(topology.values_of(linear)[None]).closed()
     rows = sections(A[0], B[0], C[0], D[0], sample_rate_hz, prewarp_hz=prewarp_hz)
     return [[float(v) for v in row] for row in rows]

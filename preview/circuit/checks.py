@@ -2,16 +2,23 @@
 
 from __future__ import annotations
 
-from collections import defaultdict
-from collections.abc import Iterable, Iterator
-from typing import TYPE_CHECKING
+from collections.abc import Iterator
 
-from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR
+from preview.circuit.elements import Netlist, OpAmpSite
+from preview.circuit.nodes import GND, IN, LOAD_PARTS, OUT, SOURCE_PARTS
 from preview.circuit.parts import PartKind
+from preview.circuit.paths import (
+    RAILS,
+    closure,
+    driven,
+    holder,
+    holders,
+    influenced,
+    listed,
+    neighbours,
+    uses,
+)
 from preview.errors import CircuitError
-
-if TYPE_CHECKING:
-    from preview.circuit.netlist import Netlist, OpAmpSite
 
 __all__ = ["check", "problems"]
 
@@ -45,33 +52,9 @@ def problems(circuit: Netlist) -> Iterator[Problem]:
     yield from _no_signal_path(circuit)
 
 
-def _listed(names: Iterable[str]) -> str:
-    """Names in a row: ``R1``, ``R1 and C1``, ``R1, R2 and C1``."""
-    *most, last = names
-    return f"{', '.join(most)} and {last}" if most else last
-
-
-def _uses(circuit: Netlist) -> dict[str, list[str]]:
-    """What is connected to each node, one entry a connection: ``R1``, ``the + input of U1`` ..."""
-    uses: dict[str, list[str]] = defaultdict(list)
-    for branch in circuit.branches:
-        uses[branch.a].append(branch.designator)
-        uses[branch.b].append(branch.designator)
-    for opamp in circuit.opamps:
-        uses[opamp.plus].append(f"the + input of {opamp.designator}")
-        uses[opamp.minus].append(f"the - input of {opamp.designator}")
-        uses[opamp.out].append(f"the output of {opamp.designator}")
-    return uses
-
-
-def _driven(circuit: Netlist) -> set[str]:
-    """Nodes whose voltage is set whatever current flows: gnd, the ideal source and every op-amp output."""
-    return {GND, circuit.input_node, *(opamp.out for opamp in circuit.opamps)}
-
-
 def _ends(circuit: Netlist) -> Iterator[Problem]:
-    outside = {SOURCE_DESIGNATOR, LOAD_DESIGNATOR}
-    own = {node: None for node, users in _uses(circuit).items() if not outside.issuperset(users)}
+    outside = {*SOURCE_PARTS, *LOAD_PARTS}
+    own = {node: None for node, users in uses(circuit).items() if not outside.issuperset(users)}
     for node, words in ((IN, "the signal goes in at"), (OUT, "the signal is taken from")):
         if node not in own:
             cure = f"{words} the node named {node}; nodes are {', '.join(own) or 'none'}"
@@ -82,7 +65,7 @@ def _shorted_parts(circuit: Netlist) -> Iterator[Problem]:
     for branch in circuit.branches:
         if branch.a == branch.b:
             yield (
-                f"both ends of {branch.designator} are on node {branch.a}",
+                f"both ends of {branch.owner} are on node {branch.a}",
                 "give it two different nodes or take it out",
             )
     for opamp in circuit.opamps:
@@ -94,6 +77,9 @@ def _shorted_parts(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
+    """Two things that each set the voltage of one node."""
+    yield from _voltage_loops(circuit)
+    held = holders(circuit)
     owner: dict[str, str] = {}
     for opamp in circuit.opamps:
         name, node = opamp.designator, opamp.out
@@ -104,6 +90,11 @@ def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
                 f"the output of {name} is on node {node}, which the signal source drives",
                 "give the output a node of its own, or the source a resistance",
             )
+        elif node in held:
+            yield (
+                f"the output of {name} is on node {node}, which {holder(held[node])} holds",
+                "give the output a node of its own",
+            )
         elif node in owner:
             yield (
                 f"the outputs of {owner[node]} and {name} are both on node {node}",
@@ -112,45 +103,41 @@ def _output_conflicts(circuit: Netlist) -> Iterator[Problem]:
         owner.setdefault(node, name)
 
 
-def _dangling(circuit: Netlist) -> Iterator[Problem]:
-    for node, users in _uses(circuit).items():
-        if len(users) == 1 and node not in (IN, OUT, GND, circuit.input_node):
+def _voltage_loops(circuit: Netlist) -> Iterator[Problem]:
+    held = {GND: "gnd", circuit.input_node: "the signal source"}
+    for fixed in circuit.fixed:
+        if fixed.node in held:
             yield (
-                f"node {node} is dangling: only {users[0]} is connected to it",
+                f"{holder(fixed.designator)} and {holder(held[fixed.node])} both hold node {fixed.node}: "
+                f"a loop of voltage sources",
+                "take one away, or put a resistor between them",
+            )
+        held[fixed.node] = fixed.designator
+
+
+def _dangling(circuit: Netlist) -> Iterator[Problem]:
+    for node, users in uses(circuit).items():
+        if len(users) == 1 and node not in (IN, OUT, GND, *RAILS, circuit.input_node, circuit.output_node):
+            (user,) = users
+            yield (
+                f"node {node} is dangling: only {user} is connected to it",
                 "connect a second part to it, or check how its name is spelled",
             )
 
 
 def _no_dc_path(circuit: Netlist) -> Iterator[Problem]:
-    neighbours: dict[str, set[str]] = defaultdict(set)
-    for branch in circuit.branches:
-        if branch.kind is not PartKind.CAPACITOR:
-            neighbours[branch.a].add(branch.b)
-            neighbours[branch.b].add(branch.a)
-    reached = _closure(_driven(circuit), neighbours)
-    uses = _uses(circuit)
+    conducting = (branch for branch in circuit.branches if branch.kind is not PartKind.CAPACITOR)
+    reached = closure(driven(circuit), neighbours(conducting))
+    users_of = uses(circuit)
     floating = [node for node in circuit.nodes if node not in reached]
     if floating:
-        users = dict.fromkeys(user for node in floating for user in uses[node])
+        users = dict.fromkeys(user for node in floating for user in users_of[node])
         nodes = "node" if len(floating) == 1 else "nodes"
         verb = "is" if len(floating) == 1 else "are"
         yield (
-            f"{nodes} {_listed(floating)} {verb} floating: no direct current can flow through "
-            f"{_listed(users)}",
+            f"{nodes} {listed(floating)} {verb} floating: no direct current can flow through {listed(users)}",
             f"give it a path, such as a resistor of 1 MΩ from {floating[0]} to gnd",
         )
-
-
-def _closure(start: Iterable[str], neighbours: dict[str, set[str]]) -> set[str]:
-    """Every node that can be reached from the start."""
-    reached = set(start)
-    waiting = list(reached)
-    while waiting:
-        for node in neighbours.get(waiting.pop(), ()):
-            if node not in reached:
-                reached.add(node)
-                waiting.append(node)
-    return reached
 
 
 def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
@@ -162,7 +149,7 @@ def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
             node = group[node]
         return node
 
-    fixed = _driven(circuit)
+    fixed = driven(circuit)
     for node in fixed:
         group[node] = GND
     for branch in circuit.branches:
@@ -173,7 +160,8 @@ def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
             group[a] = b
         elif a == root(GND):
             yield (
-                f"{branch.designator} shorts the source, an op-amp output or gnd for direct current",
+                f"{branch.designator} shorts the source, an op-amp output or gnd, or a fixed voltage, "
+                f"for direct current",
                 "put its winding resistance in series, as a resistor",
             )
         else:
@@ -185,8 +173,8 @@ def _inductor_shorts(circuit: Netlist) -> Iterator[Problem]:
 
 def _feedback(circuit: Netlist) -> Iterator[Problem]:
     for opamp in circuit.opamps:
-        through_parts = _influenced(circuit, opamp.out, through_opamps=False)
-        anywhere = _influenced(circuit, opamp.out, through_opamps=True)
+        through_parts = influenced(circuit, opamp.out, through_opamps=False)
+        anywhere = influenced(circuit, opamp.out, through_opamps=True)
         if opamp.minus in anywhere:
             continue
         if opamp.plus in through_parts:
@@ -204,29 +192,16 @@ def _feedback(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _held(circuit: Netlist, opamp: OpAmpSite) -> str:
-    if opamp.minus == GND:
-        return ", which is on gnd"
-    if opamp.minus == circuit.input_node:
-        return ", which is held by the signal source"
-    return ""
-
-
-def _influenced(circuit: Netlist, start: str, *, through_opamps: bool) -> set[str]:
-    """Nodes that follow the start node: through parts to free nodes and, if asked, on through op-amps."""
-    fixed = _driven(circuit)
-    follows: dict[str, set[str]] = defaultdict(set)
-    for branch in circuit.branches:
-        if branch.b not in fixed:
-            follows[branch.a].add(branch.b)
-        if branch.a not in fixed:
-            follows[branch.b].add(branch.a)
-    if through_opamps:
-        for opamp in circuit.opamps:
-            follows[opamp.plus].add(opamp.out)
-            follows[opamp.minus].add(opamp.out)
-    return _closure([start], follows)
+    """Why no feedback can reach the - input, where it is held."""
+    name = holders(circuit).get(opamp.minus)
+    if name is None:
+        return ""
+    return ", which is on gnd" if name == "gnd" else f", which is held by {holder(name)}"
 
 
 def _no_signal_path(circuit: Netlist) -> Iterator[Problem]:
-    if OUT not in _influenced(circuit, circuit.input_node, through_opamps=True):
-        yield "nothing leads from in to out", "check the node names along the signal's way"
+    if circuit.output_node not in influenced(circuit, circuit.input_node, through_opamps=True):
+        yield (
+            f"nothing leads from in to {circuit.output_node}",
+            "check the node names along the signal's way",
+        )

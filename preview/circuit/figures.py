@@ -16,8 +16,16 @@ FIGURES: dict[str, str] = {
     "corner_hz": "the one frequency at which the gain is 3.01 dB (a factor of sqrt 2) below passband_gain_db",
     "low_corner_hz": "the lower of two such frequencies",
     "high_corner_hz": "the higher of two such frequencies",
-    "passband_gain_db": "the largest gain at any frequency",
+    "passband_gain_db": "the largest gain up to 100 kHz; at any frequency where it still rises steeply there",
     "dc_gain_db": "the gain at 0 Hz",
+    "peak_hz": "the frequency of the largest gain",
+    "bandwidth_hz": "high_corner_hz less low_corner_hz; the width of a notch too",
+    "notch_hz": "the frequency of the least gain between two frequencies at which it is larger",
+    "notch_gain_db": "the gain there",
+    "f0_hz": "natural frequency of the pair of complex poles of highest Q, op-amps without limits",
+    "q": "its Q: the natural frequency over twice the decay rate; no unit",
+    "low_q_f0_hz": "natural frequency of the pair of complex poles of lowest Q, op-amps without limits",
+    "low_q": "its Q",
 }
 """Figures of the whole response, each with its meaning; the unit ends the name."""
 
@@ -30,7 +38,7 @@ FIGURES_AT: dict[str, str] = {
 }
 """Figures at one frequency, written ``<figure>_at_<frequency>_hz``, each with its meaning."""
 
-_UNITS = {"hz": "Hz", "db": "dB", "deg": "deg", "s": "s", "ohm": "ohm"}
+_UNITS = {"hz": "Hz", "db": "dB", "deg": "deg", "s": "s", "ohm": "ohm", "q": ""}
 _AT = re.compile(r"(?P<name>[a-z_]+?)_at_(?P<hz>[0-9]{1,10}(?:\.[0-9]{1,6})?)_hz", re.ASCII)
 
 
@@ -41,7 +49,7 @@ class Figure:
     name: str
     """A key of ``FIGURES`` or ``FIGURES_AT``."""
     unit: str
-    """Hz, dB, deg, s or ohm."""
+    """Hz, dB, deg, s or ohm; empty for a ratio."""
     at_hz: float | None = None
     """The frequency it is taken at [Hz]; None for a figure of the whole response."""
 

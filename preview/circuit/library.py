@@ -8,7 +8,7 @@ machine. What has a path separator in it or ends in ``.toml`` is a file.
 from __future__ import annotations
 
 import os
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import replace
 from difflib import get_close_matches
 from importlib.resources import files
@@ -16,14 +16,25 @@ from pathlib import Path
 
 import platformdirs
 
+from preview.circuit.cascade import cascade
 from preview.circuit.limits import QUANTITY, read_value
-from preview.circuit.parts import OpAmp, Part, Stage
-from preview.circuit.reader import opamp_type, parse_stage, read_stage
+from preview.circuit.part_reader import opamp_type
+from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Stage
+from preview.circuit.reader import parse_stage, read_stage
+from preview.circuit.settings import read_setting, setting_note
 from preview.circuit.tables import decode, read_bytes
-from preview.errors import UnknownNameError
+from preview.errors import OutputFileError, UnknownNameError, UsageError
 from preview.values.notation import quoted, understood
 
-__all__ = ["find_stage", "stage_names", "stage_source", "user_stage_folder", "with_overrides"]
+__all__ = [
+    "find_stage",
+    "new_stage_file",
+    "open_stages",
+    "stage_names",
+    "stage_source",
+    "user_stage_folder",
+    "with_overrides",
+]
 
 _ENDING = ".toml"
 
@@ -57,10 +68,37 @@ def find_stage(name_or_path: str) -> Stage:
     return parse_stage(text, name=name_or_path, file=f"stages/{name_or_path}{_ENDING}")
 
 
+def open_stages(names_or_paths: Sequence[str]) -> Stage:
+    """The stage of that name or file, or the cascade of several; raises as ``find_stage`` does."""
+    return cascade([find_stage(one) for one in names_or_paths])
+
+
 def stage_source(name_or_path: str) -> str:
     """The TOML text of the stage of that name, or of that file; raises as ``find_stage`` does."""
     path = _path(name_or_path)
     return _bundled()[name_or_path] if path is None else decode(read_bytes(path), str(path))
+
+
+def new_stage_file(path: Path) -> None:
+    """Write a commented example that is a stage; a file that is there is left alone.
+
+    Raises
+    ------
+    UsageError
+        The name could not be found again as a stage's.
+    OutputFileError
+        There is a file of that name already, or no such folder.
+    """
+    if not path.parent.is_dir():
+        raise OutputFileError(f"{path.parent}: no such folder", "make it first")
+    if path.suffix != _ENDING:
+        raise UsageError(f"{path}: a stage file's name ends in {_ENDING}", f"such as {path.stem}{_ENDING}")
+    text = files("preview").joinpath("circuit", "example.toml").read_text("utf-8")
+    try:
+        with path.open("x", encoding="utf-8") as file:
+            file.write(text)
+    except FileExistsError as error:
+        raise OutputFileError(f"{path}: there is something of that name", "choose another name") from error
 
 
 def with_overrides(
@@ -73,7 +111,8 @@ def with_overrides(
     stage : Stage
         The stage as drawn.
     parts : Mapping
-        Designator to value text, such as ``{"R1": "4k7"}``; case does not matter in the designator.
+        Designator to its setting as text, such as ``{"R1": "4k7", "P1": "70 %", "S1": "open"}``; case does not
+        matter in the designator.
     opamps : Mapping
         Designator, or None for every op-amp, to type name. A named op-amp goes before None.
 
@@ -88,15 +127,9 @@ def with_overrides(
     """
     notes = []
     for name, text in parts.items():
-        part = _part(stage, name)
-        if isinstance(part, OpAmp):
-            raise UnknownNameError(
-                f"{part.designator} of stage {stage.name} is an op-amp and has no value",
-                f"give it a type: --opamp {part.designator}=ideal",
-            )
-        value = read_value(part.kind, text, f"{part.designator} = ")
-        stage = stage.with_part(replace(part, value=value))
-        notes.append(f"{part.designator}: {understood(text, QUANTITY[part.kind])}")
+        part, note = _changed(_part(stage, name), text, f"stage {stage.name}")
+        stage = stage.with_part(part)
+        notes.append(note)
     for target, text in sorted(opamps.items(), key=lambda item: item[0] is not None):
         type_name = opamp_type(text, "" if target is None else f"{target} = ")
         chosen = stage.opamps if target is None else (_opamp(stage, target),)
@@ -108,13 +141,39 @@ def with_overrides(
     return stage, tuple(notes)
 
 
+def _changed(part: Part, text: str, where: str) -> tuple[Part, str]:
+    """The part as the text has it, and how the text was understood."""
+    place = f"{part.designator} = "
+    match part:
+        case OpAmp():
+            raise UnknownNameError(
+                f"{part.designator} of {where} is an op-amp and has no value",
+                f"give it a type: --opamp {part.designator}=ideal",
+            )
+        case Diode():
+            raise UnknownNameError(
+                f"{part.designator} of {where} is a diode and has no value",
+                "its type stands in the stage file",
+            )
+        case FixedVoltage():
+            fixed = replace(part, value=read_value(part.kind, text, place))
+            return fixed, f"{part.designator}: {understood(text, QUANTITY[part.kind])}"
+        case _:
+            settable = part.with_setting(read_setting(part, text, place))
+            return settable, setting_note(settable, text)
+
+
 def _part(stage: Stage, name: str) -> Part:
     """The part of that designator in any case; UnknownNameError names those there are."""
     for part in stage.parts:
         if part.designator.lower() == name.strip().lower():
             return part
-    known = ", ".join(part.designator for part in stage.parts)
-    raise UnknownNameError(f"stage {stage.name} has no part {quoted(name)[1:-1]}", f"it has {known}")
+    names = [part.designator for part in stage.parts]
+    meant = [one for one in names if one.lower().endswith(f".{name.strip().lower()}")]
+    start = f"did you mean {' or '.join(meant)}? " if meant else ""
+    raise UnknownNameError(
+        f"stage {stage.name} has no part {quoted(name)[1:-1]}", f"{start}it has {', '.join(names)}"
+    )
 
 
 def _opamp(stage: Stage, name: str) -> OpAmp:
@@ -137,15 +196,12 @@ def _path(name_or_path: str) -> Path | None:
     own = _own()
     if name_or_path in own:
         return own[name_or_path]
-    names = stage_names()
+    listed = f"preview stages lists all {len(stage_names())}; a file ends in {_ENDING}"
     if not name_or_path.strip():
-        raise UnknownNameError("the stage's name is empty", f"stages are {', '.join(names)}")
-    nearest = get_close_matches(name_or_path.lower()[:60], names, n=1, cutoff=0.5)
-    start = f"did you mean {nearest[0]}? " if nearest else ""
-    raise UnknownNameError(
-        f"no stage named {quoted(name_or_path)[1:-1]}",
-        f"{start}stages are {', '.join(names)}; a file ends in {_ENDING}",
-    )
+        raise UnknownNameError("the stage's name is empty", listed)
+    nearest = get_close_matches(name_or_path.lower()[:60], stage_names(), n=3, cutoff=0.5)
+    start = f"did you mean {' or '.join(nearest)}? " if nearest else ""
+    raise UnknownNameError(f"no stage named {quoted(name_or_path)[1:-1]}", f"{start}{listed}")
 
 
 def _bundled() -> dict[str, str]:

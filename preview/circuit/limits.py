@@ -7,14 +7,16 @@ from typing import Literal
 
 from preview.circuit.parts import PartKind
 from preview.errors import NotationError, PartValueError
-from preview.values.notation import format_value, parse_value, quoted
+from preview.values.notation import format_code, format_value, parse_value, quoted
 
-__all__ = ["QUANTITY", "VALUE_RANGE", "check_value", "read_value"]
+__all__ = ["QUANTITY", "VALUE_RANGE", "check_value", "exact_value", "read_value"]
 
-QUANTITY: dict[PartKind, Literal["resistance", "capacitance", "inductance"]] = {
+QUANTITY: dict[PartKind, Literal["resistance", "capacitance", "inductance", "voltage"]] = {
     PartKind.RESISTOR: "resistance",
     PartKind.CAPACITOR: "capacitance",
     PartKind.INDUCTOR: "inductance",
+    PartKind.POTENTIOMETER: "resistance",
+    PartKind.VOLTAGE: "voltage",
 }
 """The quantity that the value of each kind of part is, for ``preview.values.notation``."""
 
@@ -22,14 +24,18 @@ VALUE_RANGE: dict[PartKind, tuple[float, float]] = {
     PartKind.RESISTOR: (1e-3, 1e12),
     PartKind.CAPACITOR: (1e-15, 10.0),
     PartKind.INDUCTOR: (1e-12, 1e3),
+    PartKind.POTENTIOMETER: (10.0, 1e8),
+    PartKind.VOLTAGE: (-1e3, 1e3),
 }
-"""Smallest and largest value [ohm, farad, henry] that is taken for a part and not for a slip."""
+"""Smallest and largest value [ohm, farad, henry, volt] that is taken for a part and not for a slip."""
 
 
 _RANGE_TEXT: dict[PartKind, str] = {
     PartKind.RESISTOR: "1 mΩ to 1 TΩ",
     PartKind.CAPACITOR: "1 fF to 10 F",
     PartKind.INDUCTOR: "1 pH to 1 kH",
+    PartKind.POTENTIOMETER: "10 Ω to 100 MΩ",
+    PartKind.VOLTAGE: "-1 kV to 1 kV",
 }
 
 
@@ -39,9 +45,9 @@ def check_value(kind: PartKind, value: float, where: str) -> None:
     Parameters
     ----------
     kind : PartKind
-        Resistor, capacitor or inductor.
+        Resistor, capacitor, inductor, potentiometer or voltage.
     value : float
-        The value [ohm, farad, henry].
+        The value [ohm, farad, henry, volt].
     where : str
         Where the value was found, such as ``stages/x.toml [parts.R1] value = "0"``.
     """
@@ -51,20 +57,30 @@ def check_value(kind: PartKind, value: float, where: str) -> None:
         return
     if not math.isfinite(value):
         found = "not a finite number"
-    elif value <= 0.0:
+    elif low > 0.0 >= value:
         found = f"{noun} must be above zero"
     else:
         found = f"{format_value(value, QUANTITY[kind])} is out of range for {noun}"
     raise PartValueError(f"{where}: {found}", f"allowed are {_RANGE_TEXT[kind]}")
 
 
+def exact_value(kind: PartKind, value: float) -> str:
+    """The value as text that is read back to the last digit and as no other kind of part: ``4k7``, ``2n2F``."""
+    quantity = QUANTITY[kind]
+    unit = {"resistance": "ohm", "capacitance": "F", "inductance": "H"}[quantity]
+    code = format_code(value, quantity)
+    if parse_value(code, quantity) != value:
+        return f"{value!r} {unit}"
+    return code if quantity == "resistance" or unit in code else code + unit
+
+
 def read_value(kind: PartKind, text: str, where: str) -> float:
-    """The value of a part from its text [ohm, farad, henry], in range.
+    """The value of a part from its text [ohm, farad, henry, volt], in range.
 
     Parameters
     ----------
     kind : PartKind
-        Resistor, capacitor or inductor.
+        Resistor, capacitor, inductor, potentiometer or voltage.
     text : str
         Such as ``4k7``.
     where : str
@@ -83,5 +99,6 @@ def read_value(kind: PartKind, text: str, where: str) -> float:
         value = parse_value(body[1:] if negative else text, QUANTITY[kind], allow_zero=True)
     except NotationError as error:
         raise NotationError(f"{where}{error.message}", error.hint) from error
-    check_value(kind, -value if negative else value, f"{where}{quoted(text)}")
+    value = -value if negative else value
+    check_value(kind, value, f"{where}{quoted(text)}")
     return value

@@ -2,200 +2,55 @@
 
 from __future__ import annotations
 
-import math
-from collections.abc import Mapping
-from dataclasses import dataclass, replace
-
 from preview.circuit.checks import check
-from preview.circuit.limits import check_value
-from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR, SOURCE_NODE
-from preview.circuit.opamp import IDEAL, PERFECT, OpAmpModel
-from preview.circuit.opamp_library import find_opamp
-from preview.circuit.parts import OpAmp, PartKind, Stage, Supply
-from preview.errors import CircuitError, UnknownNameError
+from preview.circuit.controls import Contact, Track
+from preview.circuit.diodes import Junction
+from preview.circuit.drive import Element, LoadModel, SourceModel
+from preview.circuit.elements import Branch, Charge, FixedNode, Netlist, OpAmpSite, Port
+from preview.circuit.limits import QUANTITY, check_value
+from preview.circuit.nodes import (
+    GND,
+    IN,
+    NEGATIVE_RAIL,
+    OUT,
+    POSITIVE_RAIL,
+    SOURCE_NODE,
+)
+from preview.circuit.parts import Stage, Supply
+from preview.circuit.sites import check_supply, opamp_site
+from preview.circuit.wiring import Wiring
+from preview.errors import UnknownNameError
 
 __all__ = [
     "GND",
     "IN",
-    "LOAD_DESIGNATOR",
+    "NEGATIVE_RAIL",
     "OUT",
-    "SOURCE_DESIGNATOR",
+    "POSITIVE_RAIL",
     "SOURCE_NODE",
     "Branch",
     "Charge",
+    "Contact",
     "FixedNode",
     "Junction",
     "Netlist",
     "OpAmpSite",
     "Port",
+    "Track",
     "check_supply",
     "netlist",
 ]
-
-HIGHEST_RAIL_V = 1000.0
-"""A rail beyond this is taken for a slip [V]."""
-
-
-@dataclass(frozen=True, slots=True)
-class Branch:
-    """A two-terminal element between two nodes."""
-
-    designator: str
-    """R1, C2 ...; the source and load resistances are called ``Rsource`` and ``Rload``."""
-    kind: PartKind
-    """Resistor, capacitor or inductor."""
-    a: str
-    """First node."""
-    b: str
-    """Second node."""
-    value: float
-    """Ohm, farad or henry."""
-
-
-@dataclass(frozen=True, slots=True)
-class OpAmpSite:
-    """An op-amp in its place with the limits that hold for it there."""
-
-    designator: str
-    """U1, U2 ..."""
-    plus: str
-    """Node of the non-inverting input."""
-    minus: str
-    """Node of the inverting input."""
-    out: str
-    """Node of the output."""
-    type: str
-    """Its type's name."""
-    high_v: float
-    """Highest output voltage, the positive rail less the type's swing [V]; inf for ``perfect``."""
-    low_v: float
-    """Lowest output voltage, the negative rail plus the type's swing [V]; -inf for ``perfect``."""
-    model: OpAmpModel = IDEAL
-    """The figures of its type."""
-    input_high_v: float = math.inf
-    """Highest voltage of the common-mode range [V]."""
-    input_low_v: float = -math.inf
-    """Lowest voltage of the common-mode range [V]."""
-
-
-@dataclass(frozen=True, slots=True)
-class Junction:
-    """Current of a diode by its voltage, series resistance included.
-
-    Forward ``i = Is (exp((v - i Rs) / Vt) - 1)`` [Shockley1949]; with a breakdown also, against it,
-    ``i = Iz exp((-v - Vz') / Vz_slope)`` through the same resistance, so that it carries ``Iz`` at ``breakdown_v``.
-    """
-
-    saturation_a: float
-    """Is [A]."""
-    slope_v: float
-    """Vt, emission coefficient times kT/q at its temperature [V]."""
-    series_ohm: float
-    """Rs [ohm], above zero."""
-    breakdown_v: float = math.inf
-    """Reverse voltage at ``breakdown_a`` [V]; inf where it does not break down."""
-    breakdown_a: float = 5e-3
-    """Iz [A]."""
-    breakdown_slope_v: float = 0.05
-    """Vz_slope [V]."""
-
-
-@dataclass(frozen=True, slots=True)
-class Charge:
-    """What a class 2 dielectric adds to a linear capacitor: charge ``C (V0 atan(v / V0) - v)``.
-
-    Its small-signal capacitance is ``C / (1 + (v / V0)^2)``, half at ``half_v``.
-    """
-
-    farad: float
-    """C, capacitance without a voltage [F]; the linear capacitor itself stands among the branches."""
-    half_v: float
-    """V0 [V]."""
-
-
-@dataclass(frozen=True, slots=True)
-class Port:
-    """A nonlinear two-terminal element; the current flows from ``a`` to ``b``."""
-
-    designator: str
-    """D1, C3 ..."""
-    a: str
-    """Anode, or first node."""
-    b: str
-    """Cathode, or second node."""
-    law: Junction | Charge
-    """Its current or its charge by its voltage."""
-
-
-@dataclass(frozen=True, slots=True)
-class FixedNode:
-    """A node held at a constant voltage against gnd."""
-
-    designator: str
-    """V1 ..."""
-    node: str
-    """The node."""
-    volts: float
-    """Its voltage [V]."""
-
-
-@dataclass(frozen=True, slots=True)
-class Netlist:
-    """A circuit ready to be solved."""
-
-    input_node: str
-    """Node that the ideal signal source drives: ``in``, or ``source`` behind a source resistance."""
-    output_node: str
-    """Node that is listened to (``out``)."""
-    branches: tuple[Branch, ...]
-    """Every resistor, capacitor and inductor, source and load included."""
-    opamps: tuple[OpAmpSite, ...]
-    """Every op-amp."""
-    ports: tuple[Port, ...] = ()
-    """Every diode, and the nonlinear part of every class 2 capacitor."""
-    fixed: tuple[FixedNode, ...] = ()
-    """Every node held at a constant voltage."""
-
-    @property
-    def nodes(self) -> tuple[str, ...]:
-        """Every node but gnd, in order of first mention; the input node first."""
-        names: dict[str, None] = {self.input_node: None}
-        for branch in self.branches:
-            names[branch.a] = None
-            names[branch.b] = None
-        for opamp in self.opamps:
-            names[opamp.plus] = None
-            names[opamp.minus] = None
-            names[opamp.out] = None
-        for port in self.ports:
-            names[port.a] = None
-            names[port.b] = None
-        for fixed in self.fixed:
-            names[fixed.node] = None
-        names.pop(GND, None)
-        return tuple(names)
-
-    @property
-    def values(self) -> dict[str, float]:
-        """Value of each branch by designator."""
-        return {b.designator: b.value for b in self.branches}
-
-    def with_values(self, values: Mapping[str, float]) -> Netlist:
-        """The same netlist with other values; designators not named keep theirs."""
-        return replace(
-            self,
-            branches=tuple(
-                replace(b, value=values[b.designator]) if b.designator in values else b for b in self.branches
-            ),
-        )
 
 
 def netlist(
     stage: Stage,
     *,
     supply: Supply | None = None,
+    source: SourceModel | None = None,
+    load: LoadModel | None = None,
     source_ohm: float = 0.0,
     load_ohm: float | None = None,
+    output: str = OUT,
 ) -> Netlist:
     """The checked netlist of a stage.
 
@@ -203,10 +58,16 @@ def netlist(
     ----------
     supply : Supply, optional
         Rails that replace the stage's own.
+    source : SourceModel, optional
+        What drives it.
+    load : LoadModel, optional
+        What follows its output.
     source_ohm : float
-        Resistance of the source [ohm]; 0 for an ideal one.
+        Resistance of a source that is nothing else [ohm]; 0 for an ideal one.
     load_ohm : float, optional
-        Resistance from out to gnd [ohm]; None for no load.
+        Resistance of a load that is nothing else [ohm]; None for no load.
+    output : str
+        Node that is listened to and loaded: ``out`` or another of the stage's outputs.
 
     Raises
     ------
@@ -216,87 +77,48 @@ def netlist(
     where = f"stage {stage.name}"
     rails = supply or stage.supply
     check_supply(rails, where)
-    branches = []
-    for part in stage.valued:
-        check_value(part.kind, part.value, f"{where}, {part.designator}")
-        branches.append(Branch(part.designator, part.kind, *part.nodes, part.value))
-    if source_ohm != 0.0:
-        check_value(PartKind.RESISTOR, source_ohm, "source resistance")
-        branches.insert(0, Branch(SOURCE_DESIGNATOR, PartKind.RESISTOR, SOURCE_NODE, IN, source_ohm))
-    if load_ohm is not None:
-        check_value(PartKind.RESISTOR, load_ohm, "load resistance")
-        branches.append(Branch(LOAD_DESIGNATOR, PartKind.RESISTOR, OUT, GND, load_ohm))
+    if output != OUT and output not in stage.outputs:
+        outputs = ", ".join((OUT, *stage.outputs))
+        raise UnknownNameError(f"{where} has no output {output}", f"outputs are {outputs}")
+    wiring = Wiring(where, stage.temperature_degc)
+    source = source or SourceModel(source_ohm)
+    wiring.branches.extend(_driving(source))
+    for part in stage.parts:
+        wiring.add(part)
+    at_the_end = not stage.joined or output.startswith(f"{len(stage.joined)}.")
+    loaded = output if at_the_end else OUT  # an output between the stages of a cascade is listened to only
+    wiring.branches.extend(_across(loaded, (load or LoadModel(load_ohm)).across, "load"))
+    used = {node for part in stage.parts for node in part.nodes}
+    for node, volts in ((POSITIVE_RAIL, rails.positive_v), (NEGATIVE_RAIL, rails.negative_v)):
+        if node in used:
+            wiring.fixed.append(FixedNode(node, node, volts))
     circuit = Netlist(
-        input_node=SOURCE_NODE if source_ohm != 0.0 else IN,
-        output_node=OUT,
-        branches=tuple(branches),
-        opamps=tuple(_site(opamp, rails, where) for opamp in stage.opamps),
+        input_node=SOURCE_NODE if source.series else IN,
+        output_node=output,
+        branches=tuple(wiring.branches),
+        opamps=tuple(opamp_site(opamp, rails, where) for opamp in stage.opamps),
+        ports=tuple(wiring.ports),
+        fixed=tuple(wiring.fixed),
+        controls=tuple(wiring.controls),
+        temperature_degc=stage.temperature_degc,
     )
     check(circuit, where)
     return circuit
 
 
-def check_supply(supply: Supply, where: str) -> None:
-    """Raise CircuitError, its message starting with ``where``, for rails that no stage can run on."""
-    high_v, low_v = supply.positive_v, supply.negative_v
-    found = f"{where}: rails of {high_v:g} V and {low_v:g} V"
-    if not (math.isfinite(high_v) and math.isfinite(low_v)):
-        raise CircuitError(f"{found}: not finite numbers", "such as +15 V and -15 V")
-    if high_v <= low_v:
-        raise CircuitError(
-            f"{found}: the positive rail is not above the negative rail", "such as +15 V and -15 V"
-        )
-    if high_v < 0.0 or low_v > 0.0:
-        raise CircuitError(f"{found}: both are on one side of gnd", "such as +15 V and -15 V, or 9 V and 0 V")
-    if max(high_v, -low_v) > HIGHEST_RAIL_V:
-        raise CircuitError(f"{found}: beyond 1 kV", "such as +15 V and -15 V")
+def _driving(source: SourceModel) -> tuple[Branch, ...]:
+    """The parts of the source, in a row from ``source`` to ``in`` and then across it."""
+    inner = [f"{SOURCE_NODE}.{i}" for i in range(1, len(source.series))]
+    ends = [SOURCE_NODE, *inner, IN]
+    branches = []
+    for (designator, kind, value), a, b in zip(source.series, ends, ends[1:], strict=False):
+        check_value(kind, value, f"source {QUANTITY[kind]}")
+        branches.append(Branch(designator, kind, a, b, value))
+    return (*branches, *_across(IN, source.across, "source"))
 
 
-def _site(opamp: OpAmp, rails: Supply, where: str) -> OpAmpSite:
-    """The op-amp with the limits its type has on these rails."""
-    place = f"{where}, {opamp.designator}"
-    try:
-        model = find_opamp(opamp.type)
-    except UnknownNameError as error:
-        raise UnknownNameError(f"{place}: {error.message}", error.hint) from error
-    high_v, low_v = math.inf, -math.inf
-    if model is not PERFECT:
-        high_v, low_v = rails.positive_v, rails.negative_v
-    if model.real:
-        _check_type_supply(model, rails, place)
-        high_v, low_v = high_v - model.swing_high_v, low_v + model.swing_low_v
-        if high_v <= low_v:
-            raise CircuitError(
-                f"{place}: {model.type} swings to {model.swing_high_v:g} V below the positive and "
-                f"{model.swing_low_v:g} V above the negative rail, which leaves nothing of {_said(rails)}",
-                "a larger supply, or a type that swings nearer to its rails",
-            )
-    return OpAmpSite(
-        designator=opamp.designator,
-        plus=opamp.plus,
-        minus=opamp.minus,
-        out=opamp.out,
-        type=model.type,
-        high_v=high_v,
-        low_v=low_v,
-        model=model,
-    )
-
-
-def _check_type_supply(model: OpAmpModel, rails: Supply, place: str) -> None:
-    """Raise CircuitError for rails that are too near or too far apart for the type."""
-    total_v = rails.positive_v - rails.negative_v
-    if model.supply_min_v <= total_v <= model.supply_max_v:
-        return
-    field = "supply_min_v" if total_v < model.supply_min_v else "supply_max_v"
-    assumed = " (assumed of its class, its file gives none)" if field in model.assumed else ""
-    raise CircuitError(
-        f"{place}: a supply of {_said(rails)}, {total_v:g} V in all, is outside the range of {model.type}, "
-        f"{model.supply_min_v:g} V to {model.supply_max_v:g} V{assumed}",
-        "another supply, or another type",
-    )
-
-
-def _said(rails: Supply) -> str:
-    """The rails in words."""
-    return f"{rails.positive_v:g} V and {rails.negative_v:g} V"
+def _across(node: str, elements: tuple[Element, ...], where: str) -> tuple[Branch, ...]:
+    """Parts from a node to gnd."""
+    for _, kind, value in elements:
+        check_value(kind, value, f"{where} {QUANTITY[kind]}")
+    return tuple(Branch(designator, kind, node, GND, value) for designator, kind, value in elements)

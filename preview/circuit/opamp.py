@@ -5,12 +5,13 @@ from __future__ import annotations
 import math
 from collections.abc import Collection
 from dataclasses import dataclass, replace
-from typing import Any, Literal
+from typing import Any, Literal, get_args
 
 __all__ = [
     "BUILT_IN_TYPES",
     "IDEAL",
     "LIMITS",
+    "OVERDRIVES",
     "PERFECT",
     "Limit",
     "OpAmpModel",
@@ -20,6 +21,7 @@ __all__ = [
 
 Overdrive = Literal["clips", "reverses"]
 """``clips``: the input stage follows no further; ``reverses``: the output runs to the opposite rail."""
+OVERDRIVES: tuple[Overdrive, ...] = get_args(Overdrive)
 Limit = Literal["speed", "slew", "swing", "current", "input range", "offset", "noise"]
 """What can be taken away from an op-amp, to hear what it does."""
 LIMITS: tuple[Limit, ...] = ("speed", "slew", "swing", "current", "input range", "offset", "noise")
@@ -51,8 +53,10 @@ class OpAmpModel:
     swing_low_v: float = 0.0
     """From the negative rail up to the lowest output at the lightest load that is stated [V]."""
     swing_high_points: tuple[tuple[float, float], ...] = ()
-    """Output current out of the pin [A] and distance from the highest output up to the positive rail there [V],
-    by rising current; empty where the swing does not depend on the load."""
+    """Output current out of the pin [A] and distance from the highest output up to the positive rail there [V].
+
+    By rising current from 0 A on, the slope never falling; beyond the last point the last slope goes on. Empty
+    where the swing does not depend on the load."""
     swing_low_points: tuple[tuple[float, float], ...] = ()
     """Output current into the pin [A] and distance from the negative rail up to the lowest output there [V]."""
     current_source_a: float = math.inf

@@ -23,10 +23,12 @@ class OpAmpClass:
     """What parts are of this class."""
     reason: str
     """Why these figures."""
-    figures: dict[str, float]
+    figures: dict[str, float | str]
     """Field of ``OpAmpModel`` and its value, SI units."""
     offset_current_ratio: float
     """Offset current as a share of the bias current."""
+    test_supply_v: tuple[float, float] = (15.0, -15.0)
+    """Rails that data sheets of the class usually state the output swing on, its load going to gnd [V]."""
 
 
 def shot_noise_a_rthz(current_a: float) -> float:
@@ -50,6 +52,12 @@ CLASSES: dict[str, OpAmpClass] = {
             "swing_low_v": 1.5,
             "current_source_a": 0.025,
             "current_sink_a": 0.025,
+            "phase_margin_deg": 60.0,
+            "input_farad": 2e-12,
+            "input_differential_farad": 2e-12,
+            "input_overdrive": "clips",
+            "crossover_v": 0.0,
+            "crossover_a": 0.0,
             "offset_v": 1e-3,
             "bias_a": 200e-9,
             "noise_v_rthz": 8e-9,
@@ -73,6 +81,12 @@ CLASSES: dict[str, OpAmpClass] = {
             "swing_low_v": 2.0,
             "current_source_a": 0.025,
             "current_sink_a": 0.025,
+            "phase_margin_deg": 60.0,
+            "input_farad": 2e-12,
+            "input_differential_farad": 2e-12,
+            "input_overdrive": "clips",
+            "crossover_v": 0.0,
+            "crossover_a": 0.0,
             "offset_v": 30e-6,
             "bias_a": 5e-9,
             "noise_v_rthz": 8e-9,
@@ -96,6 +110,12 @@ CLASSES: dict[str, OpAmpClass] = {
             "swing_low_v": 0.02,
             "current_source_a": 0.02,
             "current_sink_a": 0.02,
+            "phase_margin_deg": 60.0,
+            "input_farad": 2e-12,
+            "input_differential_farad": 1e-12,
+            "input_overdrive": "clips",
+            "crossover_v": 0.0,
+            "crossover_a": 0.0,
             "offset_v": 2e-3,
             "bias_a": -45e-9,
             "noise_v_rthz": 40e-9,
@@ -108,6 +128,7 @@ CLASSES: dict[str, OpAmpClass] = {
             "supply_current_a": 0.5e-3,
         },
         offset_current_ratio=0.1,
+        test_supply_v=(5.0, 0.0),
     ),
     "jfet": OpAmpClass(
         about="P-channel JFET input, on supplies of about ±15 V",
@@ -119,6 +140,12 @@ CLASSES: dict[str, OpAmpClass] = {
             "swing_low_v": 1.5,
             "current_source_a": 0.025,
             "current_sink_a": 0.025,
+            "phase_margin_deg": 60.0,
+            "input_farad": 5e-12,
+            "input_differential_farad": 3e-12,
+            "input_overdrive": "clips",
+            "crossover_v": 0.0,
+            "crossover_a": 0.0,
             "offset_v": 3e-3,
             "bias_a": 30e-12,
             "noise_v_rthz": 18e-9,
@@ -142,6 +169,12 @@ CLASSES: dict[str, OpAmpClass] = {
             "swing_low_v": 0.03,
             "current_source_a": 0.02,
             "current_sink_a": 0.02,
+            "phase_margin_deg": 60.0,
+            "input_farad": 6e-12,
+            "input_differential_farad": 3e-12,
+            "input_overdrive": "clips",
+            "crossover_v": 0.0,
+            "crossover_a": 0.0,
             "offset_v": 1e-3,
             "bias_a": 1e-12,
             "noise_v_rthz": 28e-9,
@@ -154,6 +187,7 @@ CLASSES: dict[str, OpAmpClass] = {
             "supply_current_a": 0.5e-3,
         },
         offset_current_ratio=1.0,
+        test_supply_v=(2.5, -2.5),
     ),
 }
 """Every class that ``class`` can name. Current noise is assumed to be the shot noise of the bias current."""

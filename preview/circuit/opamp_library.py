@@ -16,7 +16,8 @@ from pathlib import Path
 import platformdirs
 
 from preview.circuit.opamp import BUILT_IN_TYPES, IDEAL, PERFECT, OpAmpModel
-from preview.circuit.opamp_reader import OpAmpSheet, parse_opamp, read_sheet
+from preview.circuit.opamp_reader import parse_opamp, read_sheet
+from preview.circuit.opamp_sheet import OpAmpSheet
 from preview.errors import UnknownNameError
 from preview.values.notation import quoted
 

@@ -7,6 +7,7 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Literal
 
+from preview.circuit.opamp import OVERDRIVES
 from preview.errors import NotationError
 from preview.values.notation import Kind, format_value, parse_value, quoted
 
@@ -21,6 +22,9 @@ Unit = Literal[
     "current",
     "noise_voltage",
     "noise_current",
+    "angle",
+    "capacitance",
+    "overdrive",
 ]
 
 _TIMES = {"s": 1.0, "ms": 1e-3, "us": 1e-6, "µs": 1e-6, "μs": 1e-6, "ns": 1e-9}
@@ -35,6 +39,9 @@ _EXAMPLES: dict[Unit, str] = {
     "current": "30 pA",
     "noise_voltage": "18 nV/rtHz",
     "noise_current": "0.01 pA/rtHz",
+    "angle": "60 deg",
+    "capacitance": "5 pF",
+    "overdrive": " or ".join(OVERDRIVES),
 }
 
 
@@ -62,6 +69,12 @@ FIGURES: dict[str, OpAmpFigure] = {
     "current_limit": OpAmpFigure("current", 1e-5, 100.0, "output current limit, both ways"),
     "current_source": OpAmpFigure("current", 1e-5, 100.0, "largest current out of the output"),
     "current_sink": OpAmpFigure("current", 1e-5, 100.0, "largest current into the output"),
+    "phase_margin": OpAmpFigure("angle", 1.0, 90.0, "phase margin at unity gain"),
+    "input_capacitance": OpAmpFigure("capacitance", 0.0, 1e-9, "capacitance of each input to gnd"),
+    "input_differential_capacitance": OpAmpFigure("capacitance", 0.0, 1e-9, "capacitance between the inputs"),
+    "overdrive": OpAmpFigure("overdrive", 0.0, 1.0, "beyond the common-mode range the output"),
+    "crossover": OpAmpFigure("voltage", 0.0, 5.0, "dead zone between sourcing and sinking"),
+    "crossover_current": OpAmpFigure("current", 0.0, 0.1, "current sunk before the dead zone"),
     "offset": OpAmpFigure("voltage", -0.1, 0.1, "input offset voltage"),
     "bias": OpAmpFigure("current", -1e-3, 1e-3, "input bias current, positive into the input"),
     "offset_current": OpAmpFigure("current", -1e-3, 1e-3, "input offset current"),
@@ -85,6 +98,12 @@ FIGURE_FIELDS: dict[str, tuple[str, ...]] = {
     "output_resistance_ohm": ("output_resistance",),
     "current_source_a": ("current_source", "current_limit"),
     "current_sink_a": ("current_sink", "current_limit"),
+    "phase_margin_deg": ("phase_margin",),
+    "input_farad": ("input_capacitance",),
+    "input_differential_farad": ("input_differential_capacitance",),
+    "input_overdrive": ("overdrive",),
+    "crossover_v": ("crossover",),
+    "crossover_a": ("crossover_current",),
     "offset_v": ("offset",),
     "bias_a": ("bias",),
     "offset_current_a": ("offset_current",),
@@ -102,8 +121,16 @@ FIGURE_FIELDS: dict[str, tuple[str, ...]] = {
 
 
 def parse_figure_value(text: str, unit: Unit) -> float:
-    """The value in SI units; NotationError, beginning with the quoted text, for one that cannot be read."""
+    """The value in SI units; NotationError, beginning with the quoted text, for one that cannot be read.
+
+    An ``overdrive`` is the place of its word in ``OVERDRIVES``.
+    """
     hint = f"write {_EXAMPLES[unit]}"
+    if unit == "overdrive":
+        word = text.strip().lower()
+        if word not in OVERDRIVES:
+            raise NotationError(f"{quoted(text)}: no such behaviour", hint)
+        return float(OVERDRIVES.index(word))
     if unit == "slew":
         return _ratio(text, _TIMES, hint)
     if unit == "gain":
@@ -126,17 +153,25 @@ _KINDS: dict[Unit, Kind] = {
     "resistance": "resistance",
     "voltage": "voltage",
     "current": "current",
+    "angle": "angle",
+    "capacitance": "capacitance",
 }
 _UNIT_ENDINGS: dict[Kind, tuple[str, ...]] = {
     "frequency": ("Hz",),
     "resistance": ("ohm", "Ω"),
     "voltage": ("V",),
     "current": ("A",),
+    "angle": ("deg", "°"),
+    "capacitance": ("F",),
 }
 
 
 def format_figure(value: float, unit: Unit, *, digits: int = 3) -> str:
     """The value with its unit, as a data sheet writes it: ``13 V/µs``, ``18 nV/√Hz``, ``106 dB``."""
+    if unit == "overdrive":
+        return OVERDRIVES[int(value)]
+    if unit == "angle":
+        return f"{value:.{digits}g}°"
     if unit == "slew":
         return f"{value / 1e6:.{digits}g} V/µs"
     if unit == "gain":

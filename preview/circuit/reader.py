@@ -7,40 +7,47 @@ UnknownNameError) that names the file, the table and the key.
 from __future__ import annotations
 
 import re
-from collections.abc import Callable
-from difflib import get_close_matches
 from pathlib import Path
 
+from preview.circuit.diodes import ROOM_DEGC
 from preview.circuit.figures import parse_figure
-from preview.circuit.limits import check_value, read_value
-from preview.circuit.netlist import check_supply
-from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR, SOURCE_NODE
-from preview.circuit.opamp_library import is_path, known_type
-from preview.circuit.parts import Expect, OpAmp, Part, PartKind, Stage, Supply, TwoTerminal
+from preview.circuit.nodes import (
+    GND,
+    IN,
+    LOAD_PARTS,
+    NEGATIVE_RAIL,
+    OUT,
+    POSITIVE_RAIL,
+    SOURCE_NODE,
+    SOURCE_PARTS,
+)
+from preview.circuit.part_reader import PART_EXAMPLE, opamp_type, read_part, setting, temperature_degc
+from preview.circuit.parts import Expect, Part, SettablePart, Stage, Supply
+from preview.circuit.sites import check_supply
 from preview.circuit.tables import Table, decode, parse_toml, read_bytes
-from preview.errors import NotationError, StageFileError, UnknownNameError, printable
-from preview.values.eseries import series_name
+from preview.errors import StageFileError, printable
 from preview.values.notation import Kind, parse_value, quoted
 
-__all__ = ["opamp_type", "parse_stage", "read_stage"]
+__all__ = ["parse_stage", "read_stage"]
 
 MOST_PARTS = 200
 """A stage of more parts is refused: the matrices would not be solved while it plays."""
 WIDEST_DRAWING, TALLEST_DRAWING = 100, 40
 """Columns and lines of the largest drawing."""
 
-_PLANNED_KINDS = ("potentiometer", "switch", "diode", "voltage")
 _DESIGNATOR = re.compile(r"[A-Za-z]{1,8}[0-9]{1,5}", re.ASCII)
-_NODE = re.compile(r"[A-Za-z0-9_]{1,24}", re.ASCII)
-_RESERVED_NODES = (IN, OUT, GND, SOURCE_NODE)
-_WITHIN_KINDS: dict[str, Kind] = {"Hz": "frequency", "dB": "gain_db", "s": "time", "ohm": "resistance"}
+_WITHIN_KINDS: dict[str, Kind] = {
+    "Hz": "frequency",
+    "dB": "gain_db",
+    "s": "time",
+    "ohm": "resistance",
+    "deg": "angle",
+}
 
 _STAGE_EXAMPLE = (
     'begin with title = "...", supply = { positive = "15 V", negative = "-15 V" } and a table [parts]'
 )
 _SUPPLY_EXAMPLE = 'write supply = { positive = "15 V", negative = "-15 V" }'
-_OPAMP_EXAMPLE = 'write U1 = { kind = "opamp", plus = "gnd", minus = "sum", out = "out", type = "ideal" }'
-_PART_EXAMPLE = 'write R1 = { kind = "resistor", nodes = ["in", "out"], value = "10k" }'
 _EXPECT_EXAMPLE = 'write what = "corner_hz", value = 1591.5, within = "0.1 %", source = "..."'
 
 
@@ -75,43 +82,32 @@ def parse_stage(text: str, *, name: str, file: str, path: Path | None = None) ->
         Where it was read from.
     """
     top = parse_toml(text, file)
-    top.expect_keys(("title", "supply", "parts"), ("about", "expect", "drawing"), _STAGE_EXAMPLE)
-    title, about, supply = _line(top, "title", required=True), _line(top, "about"), _supply(top)
+    optional = ("about", "temperature", "outputs", "expect", "drawing")
+    top.expect_keys(("title", "supply", "parts"), optional, _STAGE_EXAMPLE)
+    title, about, supply = top.line("title", required=True), top.line("about"), _supply(top)
     parts = _parts(top)
+    outputs = _outputs(top, parts)
+    warmth_degc = temperature_degc(top)
     return Stage(
         name=printable(name),
         title=title,
         about=about,
         supply=supply,
         parts=parts,
-        expects=_expects(top, parts),
+        expects=_expects(top, parts, outputs),
         drawing=_drawing(top),
         path=path,
+        outputs=outputs,
+        temperature_degc=ROOM_DEGC if warmth_degc is None else warmth_degc,
     )
-
-
-def _line(table: Table, key: str, *, required: bool = False) -> str:
-    """Words on one line, cleaned."""
-    words = printable(" ".join(table.text(key, "").split()))
-    if required and not words:
-        raise table.error(key, "empty", "say it in a few words")
-    return words
-
-
-def _read(table: Table, key: str, read: Callable[[str], float]) -> float:
-    """A value from its text, its own complaint put behind file, table and key."""
-    try:
-        return read(table.text(key))
-    except NotationError as error:
-        raise StageFileError(f"{table.place} {key} = {error.message}", error.hint) from error
 
 
 def _supply(top: Table) -> Supply:
     table = top.table("supply", "[supply]")
     table.expect_keys(("positive", "negative"), (), _SUPPLY_EXAMPLE)
     supply = Supply(
-        positive_v=_read(table, "positive", lambda text: parse_value(text, "voltage")),
-        negative_v=_read(table, "negative", lambda text: parse_value(text, "voltage")) + 0.0,
+        positive_v=table.read("positive", lambda text: parse_value(text, "voltage")),
+        negative_v=table.read("negative", lambda text: parse_value(text, "voltage")) + 0.0,
     )
     check_supply(supply, table.place)
     return supply
@@ -120,7 +116,7 @@ def _supply(top: Table) -> Supply:
 def _parts(top: Table) -> tuple[Part, ...]:
     group = top.table("parts", "[parts]")
     if not group.data:
-        raise StageFileError(f"{group.place}: no parts", _PART_EXAMPLE)
+        raise StageFileError(f"{group.place}: no parts", PART_EXAMPLE)
     if len(group.data) > MOST_PARTS:
         raise StageFileError(f"{group.place}: {len(group.data)} parts", f"{MOST_PARTS} at most")
     parts = []
@@ -132,13 +128,13 @@ def _parts(top: Table) -> tuple[Part, ...]:
             raise StageFileError(
                 f"{group.place} {designator}: differs from {other} only by case", "rename one"
             )
-        parts.append(_part(group.table(designator, f"[parts.{designator}]"), designator))
+        parts.append(read_part(group.table(designator, f"[parts.{designator}]"), designator))
     _check_nodes(group, parts)
     return tuple(parts)
 
 
 def _check_designator(group: Table, designator: str) -> None:
-    if designator in (SOURCE_DESIGNATOR, LOAD_DESIGNATOR):
+    if designator in (*SOURCE_PARTS, *LOAD_PARTS):
         raise StageFileError(
             f"{group.place} {designator}: the name is kept for what drives and follows the stage",
             "leave it out and state the source or load when the stage is used, or name it R and a number",
@@ -149,98 +145,11 @@ def _check_designator(group: Table, designator: str) -> None:
         )
 
 
-def _part(table: Table, designator: str) -> Part:
-    if "kind" not in table.data:
-        raise table.missing(["kind"], _PART_EXAMPLE)
-    name = table.text("kind")
-    kinds = ", ".join(PartKind)
-    if name in _PLANNED_KINDS:
-        raise StageFileError(f'{table.place} kind "{name}" is not supported yet; supported are {kinds}')
-    if name not in list(PartKind):
-        nearest = get_close_matches(name[:40], list(PartKind), n=1)
-        start = f"did you mean {nearest[0]}? " if nearest else ""
-        raise table.error("kind", "no such kind of part", f"{start}kinds are {kinds}")
-    kind = PartKind(name)
-    return _opamp(table, designator) if kind is PartKind.OPAMP else _two_terminal(table, designator, kind)
-
-
-def _opamp(table: Table, designator: str) -> OpAmp:
-    table.expect_keys(("kind", "plus", "minus", "out", "type"), ("role",), _OPAMP_EXAMPLE)
-    plus, minus, out = (_node(table, key, table.text(key)) for key in ("plus", "minus", "out"))
-    if plus == minus:
-        raise table.error("minus", "plus and minus are the same node", "give them two different nodes")
-    type_name = table.text("type")
-    if is_path(type_name):
-        raise table.error(
-            "type",
-            "a file, where a type's name is wanted",
-            f"give the file when the stage is used: --opamp {designator}=FILE",
-        )
-    return OpAmp(
-        designator=designator,
-        plus=plus,
-        minus=minus,
-        out=out,
-        type=opamp_type(type_name, f"{table.place} type = "),
-        role=_line(table, "role"),
-    )
-
-
-def opamp_type(name: str, where: str) -> str:
-    """The op-amp type as the library spells it; UnknownNameError, beginning with ``where``, for none."""
-    try:
-        return known_type(name)
-    except UnknownNameError as error:
-        place = f"{where}{quoted(name)}: " if where else ""
-        raise UnknownNameError(f"{place}{error.message}", error.hint) from error
-
-
-def _two_terminal(table: Table, designator: str, kind: PartKind) -> TwoTerminal:
-    extra = ("dielectric",) if kind is PartKind.CAPACITOR else ()
-    optional = ("tolerance", "series", "role", *extra)
-    table.expect_keys(("kind", "nodes", "value"), optional, _PART_EXAMPLE)
-    return TwoTerminal(
-        designator=designator,
-        kind=kind,
-        nodes=_nodes(table),
-        value=_value(table, "value", kind),
-        tolerance_ratio=_tolerance(table) if "tolerance" in table.data else None,
-        series=_series(table) if "series" in table.data else None,
-        role=_line(table, "role"),
-        dielectric=_line(table, "dielectric"),
-    )
-
-
-def _nodes(table: Table) -> tuple[str, str]:
-    names = table.data["nodes"]
-    cure = 'write nodes = ["in", "sum"]'
-    if not isinstance(names, list) or len(names) != 2 or not all(isinstance(n, str) for n in names):
-        raise table.error("nodes", "two node names are wanted", cure)
-    a, b = (_node(table, "nodes", name) for name in names)
-    if a == b:
-        raise table.error("nodes", "both ends are on the same node", "give it two different nodes")
-    return a, b
-
-
-def _node(table: Table, key: str, name: str) -> str:
-    if not _NODE.fullmatch(name):
-        raise table.error(key, f"{quoted(name)} is not a node name", "use letters, digits and _, at most 24")
-    if name == SOURCE_NODE:
-        raise table.error(
-            key, f"the node name {SOURCE_NODE} is kept for the source behind its resistance", "choose another"
-        )
-    for reserved in _RESERVED_NODES:
-        if name.lower() == reserved and name != reserved:
-            raise table.error(key, f"{name} could be mistaken for {reserved}", f"write {reserved}")
-    return name
-
-
 def _check_nodes(group: Table, parts: list[Part]) -> None:
     """What only the parts together show: names alike but for case, no in, no out."""
     spelled: dict[str, str] = {}
     for part in parts:
-        nodes = part.nodes if isinstance(part, TwoTerminal) else (part.plus, part.minus, part.out)
-        for node in nodes:
+        for node in part.nodes:
             other = spelled.setdefault(node.lower(), node)
             if other != node:
                 raise StageFileError(
@@ -255,42 +164,38 @@ def _check_nodes(group: Table, parts: list[Part]) -> None:
             )
 
 
-def _value(table: Table, key: str, kind: PartKind) -> float:
-    """A part's value from text (``"4k7"``) or from a plain number in ohm, farad or henry."""
-    if not isinstance(table.data[key], str):
-        value = table.number(key)
-        check_value(kind, value, f"{table.place} {key} = {value:g}")
-        return value
-    try:
-        return read_value(kind, table.text(key), f"{table.place} {key} = ")
-    except NotationError as error:
-        raise StageFileError(error.message, error.hint) from error
+def _outputs(top: Table, parts: tuple[Part, ...]) -> tuple[str, ...]:
+    """Further nodes to listen to, each a node of some part."""
+    names = top.data.get("outputs", [])
+    if not isinstance(names, list) or not all(isinstance(name, str) for name in names):
+        raise top.error("outputs", "node names are wanted", 'write outputs = ["hp", "bp"]')
+    held = {GND, IN, OUT, SOURCE_NODE, POSITIVE_RAIL, NEGATIVE_RAIL}
+    nodes = {node: None for part in parts for node in part.nodes if node not in held}
+    for name in names:
+        if name in held:
+            raise top.error("outputs", f"{name} is not a further output", "out is one without being listed")
+        if name not in nodes:
+            known = ", ".join(nodes) or "none but in, out and gnd"
+            raise top.error("outputs", f"no part is connected to {quoted(name)}", f"nodes are {known}")
+        if names.count(name) > 1:
+            raise top.error("outputs", f"{name} is listed twice", "list each output once")
+    return tuple(names)
 
 
-def _tolerance(table: Table) -> float:
-    percent = _read(table, "tolerance", lambda text: parse_value(text, "percent"))
-    if not 0.0 < percent < 100.0:
-        raise table.error("tolerance", "out of range", "above 0 % and below 100 %")
-    return percent / 100.0
-
-
-def _series(table: Table) -> str:
-    try:
-        return series_name(table.text("series"))
-    except NotationError as error:
-        raise StageFileError(f"{table.place} series = {error.message}", error.hint) from error
-
-
-def _expects(top: Table, parts: tuple[Part, ...]) -> tuple[Expect, ...]:
+def _expects(top: Table, parts: tuple[Part, ...], outputs: tuple[str, ...]) -> tuple[Expect, ...]:
     rows = top.data.get("expect", [])
     if not isinstance(rows, list) or not all(isinstance(row, dict) for row in rows):
         raise top.error("expect", "not an array of tables", "head each figure with [[expect]]")
-    valued = {part.designator: part.kind for part in parts if isinstance(part, TwoTerminal)}
-    return tuple(_expect(Table(top.file, f"[[expect]] {n}", row), valued) for n, row in enumerate(rows, 1))
+    settable = {part.designator: part for part in parts if isinstance(part, SettablePart)}
+    tables = [Table(top.file, f"[[expect]] {n}", row) for n, row in enumerate(rows, 1)]
+    return tuple(_expect(table, settable, (OUT, *outputs)) for table in tables)
 
 
-def _expect(table: Table, valued: dict[str, PartKind]) -> Expect:
-    table.expect_keys(("what", "value", "within", "source"), ("parts",), _EXPECT_EXAMPLE)
+def _expect(table: Table, settable: dict[str, SettablePart], outputs: tuple[str, ...]) -> Expect:
+    table.expect_keys(("what", "value", "within", "source"), ("parts", "output", "opamp"), _EXPECT_EXAMPLE)
+    output = table.text("output", OUT)
+    if output not in outputs:
+        raise table.error("output", "not an output of this stage", f"outputs are {', '.join(outputs)}")
     what = table.text("what")
     try:
         unit = parse_figure(what).unit
@@ -305,8 +210,10 @@ def _expect(table: Table, valued: dict[str, PartKind]) -> Expect:
         value=value,
         within=within,
         absolute=absolute,
-        source=_line(table, "source", required=True),
-        parts=_overrides(table, valued) if "parts" in table.data else (),
+        source=table.line("source", required=True),
+        parts=_overrides(table, settable) if "parts" in table.data else (),
+        output=output,
+        opamp=opamp_type(table.text("opamp"), f"{table.place} opamp = ") if "opamp" in table.data else "",
     )
 
 
@@ -318,29 +225,26 @@ def _within(table: Table, unit: str) -> tuple[float, bool]:
             raise table.error(
                 "within", f"a percentage of a figure in {unit}", f'state it in {unit}: "0.1 {unit}"'
             )
-        within, absolute = _read(table, "within", lambda body: parse_value(body, "percent")) / 100.0, False
-    elif unit == "deg":
-        degrees = re.fullmatch(r"([0-9]+(?:\.[0-9]+)?)\s*(?:deg|°)", text, re.ASCII)
-        if degrees is None:
-            raise table.error("within", "not an angle in degrees", 'write "0.1 deg"')
-        within, absolute = float(degrees[1]), True
+        within, absolute = table.read("within", lambda body: parse_value(body, "percent")) / 100.0, False
+    elif not unit:
+        raise table.error("within", "not a percentage, which a ratio needs", 'write "0.1 %"')
     else:
         kind = _WITHIN_KINDS[unit]
-        within, absolute = _read(table, "within", lambda body: parse_value(body, kind)), True
+        within, absolute = table.read("within", lambda body: parse_value(body, kind)), True
     if not 0.0 < within < float("inf"):
         raise table.error("within", "the allowed deviation must be above zero")
     return within, absolute
 
 
-def _overrides(table: Table, valued: dict[str, PartKind]) -> tuple[tuple[str, float], ...]:
+def _overrides(table: Table, settable: dict[str, SettablePart]) -> tuple[tuple[str, float], ...]:
     group = table.table("parts", f"{table.place.removeprefix(table.file).strip()} parts")
     for designator in group.data:
-        if designator not in valued:
+        if designator not in settable:
             raise StageFileError(
                 f"{group.place} {quoted(designator)}: no such part with a value",
-                f"there are {', '.join(valued)}",
+                f"there are {', '.join(settable)}",
             )
-    return tuple((designator, _value(group, designator, valued[designator])) for designator in group.data)
+    return tuple((name, setting(group, name, settable[name])) for name in group.data)
 
 
 def _drawing(top: Table) -> str:

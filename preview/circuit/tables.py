@@ -6,10 +6,11 @@ import math
 import re
 import stat
 import tomllib
+from collections.abc import Callable
 from difflib import get_close_matches
 from pathlib import Path
 
-from preview.errors import StageFileError
+from preview.errors import NotationError, StageFileError, printable
 from preview.values.notation import quoted
 
 __all__ = ["LARGEST_FILE_BYTES", "Table", "decode", "parse_toml", "read_bytes"]
@@ -132,6 +133,27 @@ class Table:
         value = self.data[key]
         if not isinstance(value, str):
             raise self.error(key, f"{word_for(value)} where text in quotation marks is wanted")
+        return value
+
+    def line(self, key: str, *, required: bool = False) -> str:
+        """Words on one line, cleaned; empty where they may be and are missing."""
+        words = printable(" ".join(self.text(key, None if required else "").split()))
+        if required and not words:
+            raise self.error(key, "empty", "say it in a few words")
+        return words
+
+    def read(self, key: str, parse: Callable[[str], float]) -> float:
+        """A value from its text; the complaint of ``parse`` is put behind file, table and key."""
+        try:
+            return parse(self.text(key))
+        except NotationError as error:
+            raise StageFileError(f"{self.place} {key} = {error.message}", error.hint) from error
+
+    def flag(self, key: str, *, default: bool = False) -> bool:
+        """The true or false under that key."""
+        value = self.data.get(key, default)
+        if not isinstance(value, bool):
+            raise self.error(key, f"{word_for(value)} where true or false is wanted")
         return value
 
     def number(self, key: str) -> float:

@@ -21,7 +21,8 @@ from numpy.typing import NDArray
 
 from preview.circuit.netlist import GND, Charge, Junction, Netlist
 from preview.dsp import port_kernels
-from preview.network.expansion import expanded, gain_bandwidth_hz, inner_node, output_ohm, second_pole_hz
+from preview.network.expansion import expanded, gain_bandwidth_hz, inner_node, output_ohm
+from preview.network.opamps import second_pole_hz
 from preview.network.statespace import Topology
 
 __all__ = ["Limits", "MacroEquations", "MacroModel"]

@@ -6,9 +6,11 @@ import argparse
 import re
 from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
-from typing import TypeVar
+from typing import Literal, TypeVar
 
-from preview.circuit.library import find_stage, with_overrides
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, parse_load, parse_source, said
+from preview.circuit.library import open_stages, with_overrides
+from preview.circuit.nodes import OUT
 from preview.circuit.parts import Stage, Supply
 from preview.errors import NotationError, UsageError, printable
 from preview.session import AtEnd, Session
@@ -19,7 +21,7 @@ from preview.values.levels import (
     parse_full_scale,
     parse_supply,
 )
-from preview.values.notation import format_value, parse_value, quoted, understood
+from preview.values.notation import format_value, parse_value, quoted
 from preview.values.quality import Quality
 
 __all__ = [
@@ -30,6 +32,7 @@ __all__ = [
     "for_option",
     "frequency_of",
     "join_signed_values",
+    "picture_kind",
     "session_from",
     "understood_values",
 ]
@@ -44,6 +47,7 @@ VALUE_OPTIONS = (
     "--part",
     "--opamp",
     "--supply",
+    "--output",
     "--source",
     "--load",
     "--full-scale",
@@ -76,10 +80,17 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
     """Add the options that every command with a stage takes."""
     group = parser.add_argument_group("stage options")
     group.add_argument(
-        "--stage", action="append", metavar="NAME|FILE", help=f"the stage (default {DEFAULT_STAGE})"
+        "--stage",
+        action="append",
+        metavar="NAME|FILE",
+        help=f"the stage (default {DEFAULT_STAGE}); more than one are a cascade",
     )
     group.add_argument(
-        "--part", action="append", default=[], metavar="R1=4k7", help="a part value; may be repeated"
+        "--part",
+        action="append",
+        default=[],
+        metavar="R1=4k7",
+        help="a part value, 2.R1=4k7 in the second stage of a cascade; also P1=70%%, S1=open; may be repeated",
     )
     group.add_argument(
         "--opamp",
@@ -89,8 +100,22 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
         help="op-amp type, of all or of one; may be repeated",
     )
     group.add_argument("--supply", metavar="VOLTS", help='rails: "+15 -15", or "9" for a single supply')
-    group.add_argument("--source", metavar="OHM", help="resistance of the source (default 0)")
-    group.add_argument("--load", metavar="OHM", help="resistance of the load (default none)")
+    group.add_argument(
+        "--output",
+        metavar="NODE",
+        default=OUT,
+        help="the output that is taken (default out), where there are more",
+    )
+    group.add_argument(
+        "--source",
+        metavar="SOURCE",
+        help='what drives it: 600, "7k5 + 2.5 H, cable 500p", "piezo disc" ... (default ideal)',
+    )
+    group.add_argument(
+        "--load",
+        metavar="LOAD",
+        help='what follows it: 10k, "10k || 220p", "headphones 32 ohm" ... (default none)',
+    )
     group.add_argument(
         "--full-scale",
         metavar="LEVEL",
@@ -134,14 +159,11 @@ def session_from(
     CircuitError
         The stage, a part or an op-amp is unknown, or the circuit cannot be computed.
     """
-    named: list[str] = options.stage or [stage]
-    if len(named) > 1:
-        raise UsageError(
-            f"{len(named)} stages given; this version computes one stage at a time", "give --stage once"
-        )
-    notes: list[str] = []
-    drawn = find_stage(named[0])
-    notes.append(f"stage {drawn.name}: {drawn.title}")
+    drawn = open_stages(options.stage or [stage])
+    if drawn.joined:
+        notes = [f"stage {k}, {one.name}: {one.title}" for k, one in enumerate(drawn.joined, 1)]
+    else:
+        notes = [f"stage {drawn.name}: {drawn.title}"]
     parts = _assignments(options.part)
     changed, part_notes = with_overrides(drawn, parts, _opamp_types(options.opamp))
     notes.extend(part_notes)
@@ -149,31 +171,45 @@ def session_from(
     if options.supply is not None:
         supply = Supply(*for_option("--supply", lambda: parse_supply(options.supply)))
     notes.append(f"supply {format_volts(supply.positive_v)} and {format_volts(supply.negative_v)}")
-    source_ohm = 0.0
+    output: str = options.output.strip()
+    if output != OUT:
+        notes.append(f"output {output}")
+    source = IDEAL_SOURCE
     if options.source is not None:
-        source_ohm = for_option(
-            "--source", lambda: parse_value(options.source, "resistance", allow_zero=True)
-        )
-        notes.append(f"source {understood(options.source, 'resistance', allow_zero=True)}")
-    load_ohm: float | None = None
-    if options.load is not None and options.load.strip().lower() != "none":
-        load_ohm = for_option("--load", lambda: parse_value(options.load, "resistance"))
-        notes.append(f"load {understood(options.load, 'resistance')}")
+        source = for_option("--source", lambda: parse_source(options.source))
+        notes.append(f"source {options.source.strip()} = {said(source)}")
+    load = NO_LOAD
+    if options.load is not None:
+        load = for_option("--load", lambda: parse_load(options.load))
+        notes.append(f"load {options.load.strip()} = {said(load)}")
     full_scale, full_scale_note = _full_scale(options.full_scale, comment)
     notes.append(full_scale_note)
     session = Session(
         audio=audio,
         stage=changed,
         supply=supply,
-        source_ohm=source_ohm,
-        load_ohm=load_ohm,
+        source=source,
+        load=load,
         full_scale=full_scale,
         quality=_quality(options.quality),
         at_end=at_end,
+        output=output,
         notes=tuple(printable(note) for note in notes),
+        warnings=_supplies_differ(drawn) if options.supply is None else (),
     )
     session.netlist()
     return session
+
+
+def _supplies_differ(stage: Stage) -> tuple[str, ...]:
+    """A warning where the stages of a cascade are drawn with different rails."""
+    if len({one.supply for one in stage.joined}) < 2:
+        return ()
+    rails = ", ".join(
+        f"{k} with {one.supply.positive_v:g} V and {one.supply.negative_v:g} V"
+        for k, one in enumerate(stage.joined, 1)
+    )
+    return (f"the stages are drawn with different supplies ({rails}): all run on the first's",)
 
 
 def for_option(option: str, read: Callable[[], T]) -> T:
@@ -190,7 +226,9 @@ def _assignments(texts: Sequence[str]) -> dict[str, str]:
     for text in texts:
         designator, equals, value = (piece.strip() for piece in text.partition("="))
         if not (designator and equals and value):
-            raise UsageError(f"--part {quoted(text)}: no part and value in it", "write --part R1=4k7")
+            raise UsageError(
+                f"--part {quoted(text)}: no part and value in it", "write --part R1=4k7, P1=70%, S1=open"
+            )
         designator = _as_before(designator, found)
         if found.get(designator, value) != value:
             raise UsageError(
@@ -248,8 +286,19 @@ def _quality(text: str) -> Quality:
 
 def check_together(options: argparse.Namespace) -> None:
     """Refuse options of ``response`` that do nothing beside the others."""
+    if options.plot is not None:
+        picture_kind(options.plot)
+    if options.draw and (options.json or options.csv):
+        raise UsageError("--draw does not go with --json and --csv", "give one of them, or --plot FILE")
     if options.sections:
-        needless = [n for n, given in (("--at", options.at), ("--as-heard", options.as_heard)) if given]
+        others = {
+            "--at": options.at,
+            "--as-heard": options.as_heard,
+            "--noise": options.noise,
+            "--draw": options.draw,
+            "--plot": options.plot,
+        }
+        needless = [name for name, given in others.items() if given]
         if needless:
             raise UsageError(f"{needless[0]} does not go with --sections", "give one of the two")
     elif options.prewarp is not None:
@@ -259,6 +308,16 @@ def check_together(options: argparse.Namespace) -> None:
             "--rate is for --as-heard and --sections; the exact circuit has no sample rate",
             "add one of them or leave it out",
         )
+
+
+def picture_kind(name: str) -> Literal["png", "svg"]:
+    """The kind of picture that a file's name asks for; UsageError for one that is not made."""
+    ending = Path(name).suffix.lower()
+    if ending == ".png":
+        return "png"
+    if ending == ".svg":
+        return "svg"
+    raise UsageError(f"--plot {quoted(name)}: no such kind of picture", "a name that ends in .png or .svg")
 
 
 def frequency_of(text: str, option: str, low_hz: float, high_hz: float) -> float:
@@ -278,13 +337,23 @@ def understood_values(session: Session) -> dict[str, object]:
     stage: Stage = session.stage
     return {
         "stage": stage.name,
-        "parts": {part.designator: part.value for part in stage.valued},
+        "stages": [one.name for one in stage.joined or (stage,)],
+        "output": session.output,
+        "parts": {part.designator: part.setting for part in stage.settable},
         "opamps": {opamp.designator: opamp.type for opamp in stage.opamps},
         "supply_positive_v": session.supply.positive_v,
         "supply_negative_v": session.supply.negative_v,
-        "source_ohm": session.source_ohm,
-        "load_ohm": session.load_ohm,
+        "source": session.source.name or None,
+        "source_ohm": session.source.resistance_ohm,
+        "source_henry": session.source.inductance_henry,
+        "source_farad": session.source.capacitance_farad or None,
+        "source_winding_farad": session.source.winding_farad,
+        "source_cable_farad": session.source.cable_farad,
+        "load": session.load.name or None,
+        "load_ohm": session.load.resistance_ohm,
+        "load_farad": session.load.capacitance_farad + session.load.cable_farad,
         "full_scale_v": session.full_scale.volts,
         "quality": session.quality.value,
         "notes": list(session.notes),
+        "warnings": list(session.warnings),
     }

@@ -1,1 +1,1 @@
-"""From a netlist to equations: exact response, impedances, DC point, state space."""
+"""From a netlist to equations: exact response, impedances, noise, DC point, state space."""

@@ -15,7 +15,6 @@ __all__ = [
     "has_real_opamps",
     "inner_node",
     "output_ohm",
-    "second_pole_hz",
 ]
 
 LEAST_OUTPUT_OHM = 0.01
@@ -43,17 +42,6 @@ def output_ohm(model: OpAmpModel) -> float:
 def gain_bandwidth_hz(model: OpAmpModel) -> float:
     """Gain-bandwidth that is computed with [Hz]."""
     return model.gain_bandwidth_hz if math.isfinite(model.gain_bandwidth_hz) else IDEAL_GAIN_BANDWIDTH_HZ
-
-
-def second_pole_hz(model: OpAmpModel) -> float:
-    """Frequency of the second pole that leaves an op-amp its phase margin; inf at 90 degrees [Hz].
-
-    With ``A = GBW / (j f (1 + j f / f2))`` the gain is 1 at ``fc = GBW sin(PM)``, and ``90 - atan(fc / f2) = PM``.
-    """
-    if model.phase_margin_deg >= 90.0:
-        return math.inf
-    margin_rad = math.radians(model.phase_margin_deg)
-    return gain_bandwidth_hz(model) * math.sin(margin_rad) * math.tan(margin_rad)
 
 
 def inner_node(opamp: OpAmpSite) -> str:

@@ -9,7 +9,8 @@ from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
 from preview.errors import CircuitError
-from preview.network.expansion import expanded, gain_bandwidth_hz, has_real_opamps, second_pole_hz
+from preview.network.expansion import expanded, gain_bandwidth_hz, has_real_opamps
+from preview.network.opamps import second_pole_hz
 from preview.network.statespace import Topology
 
 __all__ = ["check_stable", "closed_loop_poles"]

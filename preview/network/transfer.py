@@ -1,14 +1,21 @@
-"""Exact small-signal answers of the continuous circuit: gain, impedances, DC point."""
+"""Exact small-signal answers of the continuous circuit: gain, group delay, impedances.
+
+A circuit with diodes, nonlinear capacitors or fixed nodes is looked at around its operating point without a signal.
+"""
 
 from __future__ import annotations
+
+from dataclasses import replace
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
-from preview.circuit.netlist import GND, IN, LOAD_DESIGNATOR, Netlist
-from preview.network.mna import nodal_equations, solve
+from preview.circuit.netlist import Netlist
+from preview.circuit.nodes import IN, LOAD_PARTS, SOURCE_PARTS
+from preview.network.mna import NodalEquations, adjoint, nodal_equations, solve
+from preview.network.operating import small_signal
 
-__all__ = ["dc_point", "group_delay", "input_impedance", "output_impedance", "response"]
+__all__ = ["group_delay", "input_impedance", "output_impedance", "response"]
 
 Complex = NDArray[np.complex128]
 Real = NDArray[np.float64]
@@ -19,9 +26,13 @@ def _s(frequency_hz: ArrayLike) -> Complex:
     return np.asarray(1j * omega, dtype=np.complex128)
 
 
+def _equations(netlist: Netlist) -> NodalEquations:
+    return nodal_equations(small_signal(netlist))
+
+
 def response(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:
     """Output volts per volt of the signal's source, shape (f,), complex."""
-    equations = nodal_equations(netlist)
+    equations = _equations(netlist)
     return np.ascontiguousarray(solve(equations, _s(frequency_hz))[:, equations.nodes[netlist.output_node]])
 
 
@@ -31,24 +42,25 @@ def group_delay(netlist: Netlist, frequency_hz: ArrayLike) -> Real:
     ``dH/ds = -c M^-1 E M^-1 b`` for ``H = c M^-1 b`` and ``M = A + s E``, so that
     ``tau = -Re((dH/ds) / H)``.
     """
-    equations = nodal_equations(netlist)
+    equations = _equations(netlist)
     s = _s(frequency_hz)
     z = solve(equations, s)
     out = equations.nodes[netlist.output_node]
     pick = np.zeros(equations.static.shape[0])
     pick[out] = 1.0
-    adjoint = np.linalg.solve(
-        np.swapaxes(equations.static + s[:, None, None] * equations.dynamic, 1, 2),
-        np.broadcast_to(pick, z.shape)[..., None],
-    )[..., 0]
-    slope = -np.einsum("fi,ij,fj->f", adjoint, equations.dynamic, z)
+    slope = -np.einsum("fi,ij,fj->f", adjoint(equations, s, pick), equations.dynamic, z)
     with np.errstate(divide="ignore", invalid="ignore"):
         return np.asarray(-np.real(slope / z[:, out]), dtype=np.float64)
 
 
+def _without(netlist: Netlist, designators: tuple[str, ...]) -> Netlist:
+    return replace(netlist, branches=tuple(b for b in netlist.branches if b.designator not in designators))
+
+
 def input_impedance(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:
-    """Impedance that the stage shows at ``in``, without the source's own resistance [ohm], shape (f,)."""
-    equations = nodal_equations(netlist)
+    """Impedance that the stage shows at ``in``, source and cable taken away [ohm], shape (f,)."""
+    driven = small_signal(netlist)  # the source is part of where the circuit rests
+    equations = nodal_equations(replace(_without(driven, SOURCE_PARTS), input_node=IN))
     z = solve(equations, _s(frequency_hz))
     with np.errstate(divide="ignore", invalid="ignore"):
         return np.asarray(-z[:, equations.nodes[IN]] / z[:, equations.source_current], dtype=np.complex128)
@@ -56,23 +68,10 @@ def input_impedance(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:
 
 def output_impedance(netlist: Netlist, frequency_hz: ArrayLike) -> Complex:
     """Impedance that the stage shows at ``out``, the load taken away, the source at rest [ohm], shape (f,)."""
-    bare = Netlist(
-        netlist.input_node,
-        netlist.output_node,
-        tuple(b for b in netlist.branches if b.designator != LOAD_DESIGNATOR),
-        netlist.opamps,
-    )
+    loaded = small_signal(netlist)  # the load is part of where the circuit rests
+    bare = _without(loaded, LOAD_PARTS)
     equations = nodal_equations(bare)
     out = equations.nodes[bare.output_node]
     drive = np.zeros(equations.static.shape[0])
     drive[out] = 1.0
     return np.ascontiguousarray(solve(equations, _s(frequency_hz), drive)[:, out])
-
-
-def dc_point(netlist: Netlist, input_v: float = 0.0) -> dict[str, float]:
-    """Voltage of every node with a steady input [V]; CircuitError where DC has no single answer."""
-    equations = nodal_equations(netlist)
-    z = solve(equations, np.zeros(1, dtype=np.complex128), equations.drive * input_v)[0].real
-    volts = {name: float(z[i]) for name, i in equations.nodes.items()}
-    volts[GND] = 0.0
-    return volts

@@ -108,8 +108,8 @@ ACTIONS: tuple[Action, ...] = (
         "full_scale", "f", "f", "Full scale: the volts that the file's largest sample stands for", "scale"
     ),
     _circuit("supply", "p", "p", "Supply rails", "supply"),
-    _circuit("source", "i", "i", "Resistance of the source at the input"),
-    _circuit("load", "o", "o", "Resistance of the load at the output"),
+    _circuit("source", "i", "i", "What drives the input: source and cable"),
+    _circuit("load", "o", "o", "What follows the output: the load"),
     _screen("clear_holds", "c", "c", "Clear peak holds and all counts", "clear"),
     _screen("phase", "d", "d", "Phase in the curve: on or off"),
     _screen("colours", "k", "k", "Dark or light colours"),

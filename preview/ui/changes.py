@@ -5,16 +5,29 @@ from __future__ import annotations
 import shlex
 from dataclasses import replace
 
-from preview.circuit.limits import QUANTITY
-from preview.circuit.parts import PartKind, Stage, TwoTerminal
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, exact_load, exact_source
+from preview.circuit.limits import exact_value
+from preview.circuit.nodes import OUT
+from preview.circuit.parts import (
+    FixedVoltage,
+    Part,
+    PartKind,
+    Potentiometer,
+    SettablePart,
+    Stage,
+    Switch,
+    TwoTerminal,
+)
+from preview.circuit.settings import setting_text
 from preview.engine.messages import Command, SetAtEnd, SetCircuit, SetFullScale, SetPart, SetQuality
 from preview.session import Session
-from preview.values.notation import format_code, parse_value
 
 __all__ = ["SERIES_OF_KIND", "commands_between", "render_command", "series_of", "whole_state", "with_value"]
 
 SERIES_OF_KIND = {PartKind.RESISTOR: "E24", PartKind.CAPACITOR: "E12", PartKind.INDUCTOR: "E12"}
 """The series of a part whose stage file states none."""
+_WRITTEN = SettablePart | FixedVoltage
+"""The parts that ``--part`` can set."""
 
 
 def series_of(part: TwoTerminal) -> str:
@@ -30,13 +43,17 @@ def with_value(session: Session, designator: str, value: float) -> Session:
 
 
 def _shape(session: Session) -> tuple[object, ...]:
-    """Everything of the circuit but the values of its parts."""
+    """Everything of the circuit but the settings of its parts."""
     stage: Stage = session.stage
-    parts = tuple(
-        (p.designator, p.kind, p.nodes) if isinstance(p, TwoTerminal) else (p.designator, p)
-        for p in stage.parts
-    )
-    return (stage.name, parts, session.supply, session.source_ohm, session.load_ohm)
+    parts = tuple(_wired(part) for part in stage.parts)
+    return (stage.name, parts, session.supply, session.output, session.source, session.load)
+
+
+def _wired(part: Part) -> object:
+    """What of a part cannot change while it plays."""
+    if isinstance(part, TwoTerminal):
+        return part.designator, part.kind, part.nodes, part.half_v
+    return part.with_setting(0.0) if isinstance(part, SettablePart) else part
 
 
 def commands_between(old: Session, new: Session) -> list[Command]:
@@ -45,11 +62,11 @@ def commands_between(old: Session, new: Session) -> list[Command]:
     if _shape(old) != _shape(new):
         commands.append(SetCircuit(new.netlist()))
     else:
-        before = {part.designator: part.value for part in old.stage.valued}
-        moved = [part for part in new.stage.valued if part.value != before[part.designator]]
+        before = {part.designator: part.setting for part in old.stage.settable}
+        moved = [part for part in new.stage.settable if part.setting != before[part.designator]]
         if moved:
             new.netlist()
-        commands += [SetPart(part.designator, part.value) for part in moved]
+        commands += [SetPart(part.designator, part.setting) for part in moved]
     if old.full_scale.volts != new.full_scale.volts:
         commands.append(SetFullScale(new.full_scale.volts))
     if old.quality != new.quality:
@@ -69,14 +86,13 @@ def whole_state(session: Session) -> list[Command]:
     ]
 
 
-def _exact(value: float, kind: PartKind) -> str:
-    """The code of a value where it says all of it, else the number in full with its unit."""
-    quantity = QUANTITY[kind]
-    code = format_code(value, quantity)
-    if parse_value(code, quantity) == value:
-        return code
-    unit = {"resistance": "ohm", "capacitance": "F", "inductance": "H"}[quantity]
-    return f"{value!r} {unit}"
+def _exact(part: SettablePart | FixedVoltage) -> str:
+    """The setting in full."""
+    if isinstance(part, Switch):
+        return setting_text(part)
+    if isinstance(part, Potentiometer | FixedVoltage):
+        return repr(part.position if isinstance(part, Potentiometer) else part.value)
+    return exact_value(part.kind, part.value)
 
 
 def render_command(session: Session, opened: Stage) -> str:
@@ -88,20 +104,23 @@ def render_command(session: Session, opened: Stage) -> str:
         The stage as its file has it; only parts that differ from it are written.
     """
     words = ["preview", "render", str(session.audio or "AUDIO"), "OUT.wav"]
-    words += ["--stage", str(session.stage.path or session.stage.name)]
-    was = {part.designator: part.value for part in opened.valued}
-    for part in session.stage.valued:
-        if part.value != was.get(part.designator):
-            words += ["--part", f"{part.designator}={_exact(part.value, part.kind)}"]
+    for name in session.stage.opened_as:
+        words += ["--stage", name]
+    was = {part.designator: _exact(part) for part in opened.parts if isinstance(part, _WRITTEN)}
+    for part in session.stage.parts:
+        if isinstance(part, _WRITTEN) and _exact(part) != was.get(part.designator):
+            words += ["--part", f"{part.designator}={_exact(part)}"]
     types = {opamp.designator: opamp.type for opamp in opened.opamps}
     for opamp in session.stage.opamps:
         if opamp.type != types.get(opamp.designator):
             words += ["--opamp", f"{opamp.designator}={opamp.type}"]
     if session.supply != opened.supply:
         words += ["--supply", f"{session.supply.positive_v!r} {session.supply.negative_v!r}"]
-    if session.source_ohm:
-        words += ["--source", f"{session.source_ohm!r}"]
-    if session.load_ohm is not None:
-        words += ["--load", f"{session.load_ohm!r}"]
+    if session.output != OUT:
+        words += ["--output", session.output]
+    if session.source != IDEAL_SOURCE:
+        words += ["--source", exact_source(session.source)]
+    if session.load != NO_LOAD:
+        words += ["--load", exact_load(session.load)]
     words += ["--full-scale", session.full_scale.text, "--quality", session.quality.value]
     return shlex.join(words)

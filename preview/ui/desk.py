@@ -10,7 +10,6 @@ import math
 import time
 from collections.abc import Callable
 from dataclasses import replace
-from pathlib import Path
 
 from preview.circuit.netlist import OUT, OpAmpSite
 from preview.circuit.parts import Stage, TwoTerminal
@@ -53,9 +52,9 @@ _TRUST_S = 0.4
 _MOST_UNDONE = 200
 
 
-def _place(session: Session) -> tuple[str, Path | None]:
+def _place(session: Session) -> tuple[str, ...]:
     """Which stage a session is about."""
-    return session.stage.name, session.stage.path
+    return session.stage.opened_as
 
 
 class Desk:
@@ -91,7 +90,7 @@ class Desk:
         self._undone: list[Session] = []
         self._done: list[Session] = []
         self._asked_s = -1e9
-        self._before: dict[tuple[str, Path | None], Session] = {_place(session): session}
+        self._before: dict[tuple[str, ...], Session] = {_place(session): session}
         self._sought: tuple[float, int] | None = None
         self._sites: tuple[Session, tuple[OpAmpSite, ...]] | None = None
 
@@ -123,8 +122,8 @@ class Desk:
 
     def open_stage(self, stage: Stage) -> None:
         """Another stage on its own supply; its values are the new 'before'."""
-        self._before.pop((stage.name, stage.path), None)
-        self.change(replace(self.session, stage=stage, supply=stage.supply))
+        self._before.pop(stage.opened_as, None)
+        self.change(self.session.with_stage(stage))
 
     def _become(self, session: Session, commands: list[Command]) -> None:
         for command in commands:

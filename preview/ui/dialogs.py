@@ -6,7 +6,7 @@ from collections.abc import Callable
 
 from textual.app import App
 
-from preview.circuit.library import find_stage
+from preview.circuit.library import open_stages
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.changes import render_command
@@ -93,11 +93,11 @@ class DialogApp(App[Session]):
         self.ask(ask_supply(self.desk.session))
 
     def do_source(self) -> None:
-        """Type the source's resistance."""
+        """Type what drives the stage."""
         self.ask(ask_source(self.desk.session))
 
     def do_load(self) -> None:
-        """Type the load's resistance."""
+        """Type what follows the stage."""
         self.ask(ask_load(self.desk.session))
 
     def do_choose_stage(self) -> None:
@@ -145,5 +145,5 @@ class DialogApp(App[Session]):
     def do_write_out(self) -> None:
         """Show the command that renders what is set."""
         session = self.desk.session
-        opened = find_stage(str(session.stage.path or session.stage.name))
+        opened = open_stages(session.stage.opened_as)
         self.push_screen(CommandScreen(render_command(session, opened)))

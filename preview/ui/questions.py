@@ -9,13 +9,14 @@ from __future__ import annotations
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 
+from preview.circuit.drive import NO_LOAD, exact_load, exact_source, parse_load, parse_source, said
 from preview.circuit.library import find_stage, stage_names
 from preview.circuit.limits import QUANTITY, check_value
-from preview.circuit.parts import PartKind, Supply, TwoTerminal
+from preview.circuit.parts import Supply, TwoTerminal
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.changes import with_value
-from preview.ui.words import full_scale, rails, resistance
+from preview.ui.words import full_scale, rails
 from preview.ui.words import value as value_text
 from preview.values.levels import FULL_SCALE_PRESETS, parse_full_scale, parse_supply
 from preview.values.notation import parse_value, understood
@@ -34,7 +35,6 @@ __all__ = [
 
 FILE_ANSWER = "\0file"
 """Answer of the stage chooser's last row; no name can be this."""
-_NO_LOAD = ("none", "open", "no", "-")
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,33 +104,33 @@ def ask_supply(session: Session) -> Question:
 
 
 def ask_source(session: Session) -> Question:
-    """The source's resistance."""
+    """What drives the stage."""
 
     def read(text: str) -> tuple[Session, str]:
-        source_ohm = parse_value(text, "resistance", allow_zero=True)
-        said = understood(text, "resistance") if source_ohm else "an ideal source, 0 ohm"
-        return _tried(replace(session, source_ohm=source_ohm)), said
+        source = parse_source(text)
+        return _tried(replace(session, source=source)), said(source)
 
     return Question(
-        "Source resistance",
-        "What drives the input: 0 for an ideal source, 600, 10k ...",
-        resistance(session.source_ohm),
+        "Source",
+        "What drives the input: 0 for ideal, 600, 7k5 + 2.5 H, 20 nF; piezo disc, cable 500p ...",
+        exact_source(session.source),
         read,
     )
 
 
 def ask_load(session: Session) -> Question:
-    """The load's resistance."""
+    """What follows the stage."""
 
     def read(text: str) -> tuple[Session, str]:
-        if text.strip().lower() in _NO_LOAD:
-            return _tried(replace(session, load_ohm=None)), "no load"
-        load_ohm = parse_value(text, "resistance")
-        check_value(PartKind.RESISTOR, load_ohm, "load")
-        return _tried(replace(session, load_ohm=load_ohm)), understood(text, "resistance")
+        load = parse_load(text)
+        return _tried(replace(session, load=load)), "no load" if load == NO_LOAD else said(load)
 
-    now = "none" if session.load_ohm is None else resistance(session.load_ohm)
-    return Question("Load resistance", "From out to gnd: none, 600, 10k ...", now, read)
+    return Question(
+        "Load",
+        "From out to gnd: none, 600, 10k || 220p; headphones 32 ohm, line input, cable 1n ...",
+        exact_load(session.load),
+        read,
+    )
 
 
 def ask_stage_file(session: Session) -> Question:
@@ -138,7 +138,7 @@ def ask_stage_file(session: Session) -> Question:
 
     def read(text: str) -> tuple[Session, str]:
         stage = find_stage(text.strip())
-        tried = _tried(replace(session, stage=stage, supply=stage.supply))
+        tried = _tried(session.with_stage(stage))
         return tried, f"{stage.title}: {len(stage.parts)} parts, supply {rails(stage.supply)}"
 
     return Question("Stage file", "The path of a .toml file, or a name", session.stage.name, read)

@@ -8,7 +8,8 @@ from pathlib import Path
 from preview.circuit.limits import QUANTITY
 from preview.circuit.opamp_library import is_path
 from preview.circuit.opamp_units import format_figure
-from preview.circuit.parts import Supply, TwoTerminal
+from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Potentiometer, Supply, TwoTerminal
+from preview.circuit.settings import setting_text
 from preview.errors import printable
 from preview.values.levels import FullScale, dbu_from_vrms, format_volts
 from preview.values.notation import format_code, format_value
@@ -25,7 +26,6 @@ __all__ = [
     "limits",
     "milliamperes",
     "rails",
-    "resistance",
     "scale_volts",
     "slew_of",
     "type_name",
@@ -49,19 +49,25 @@ def scale_volts(level_v: float) -> str:
     return f"{level_v * 1e3:.0f}m" if level_v < 0.0995 else f"{level_v:.3g}"
 
 
-def value(part: TwoTerminal) -> str:
-    """A part's value with unit, up to four digits: ``4.7 kΩ``."""
-    return format_value(part.value, QUANTITY[part.kind], digits=4)
+def value(part: Part) -> str:
+    """What a part is: ``4.7 kΩ``, ``10 kΩ at 50 %``, ``open``, ``signal`` or ``TL072``."""
+    match part:
+        case OpAmp():
+            return type_name(part.type)
+        case Diode():
+            return part.type
+        case FixedVoltage():
+            return volts(part.value)
+        case Potentiometer():
+            return f"{format_value(part.value, 'resistance', digits=4)} at {setting_text(part)}"
+    return setting_text(part)
 
 
-def code(part: TwoTerminal) -> str:
-    """A part's value as a code: ``4k7``."""
-    return format_code(part.value, QUANTITY[part.kind])
-
-
-def resistance(value_ohm: float) -> str:
-    """A resistance with unit."""
-    return format_value(value_ohm, "resistance", digits=4)
+def code(part: Part) -> str:
+    """A part's value as a code, ``4k7``; what has none as briefly as can be."""
+    if isinstance(part, TwoTerminal):
+        return format_code(part.value, QUANTITY[part.kind])
+    return setting_text(part) if isinstance(part, Potentiometer) else value(part)
 
 
 def db(level_db: float) -> str:

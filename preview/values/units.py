@@ -17,6 +17,8 @@ Kind = Literal[
     "time",
     "percent",
     "gain_db",
+    "angle",
+    "temperature",
 ]
 
 PREFIXES = {"p": -12, "n": -9, "u": -6, "m": -3, "": 0, "k": 3, "M": 6, "G": 9, "T": 12}
@@ -213,6 +215,32 @@ KINDS: dict[Kind, Quantity] = {
         code={},
         units={"dB": 0, "db": 0, "DB": 0},
         words={"decibel": 0, "decibels": 0},
+        signed=True,
+    ),
+    "angle": Quantity(
+        noun="an angle",
+        symbol="°",
+        unit_word="degree",
+        written="_",
+        example="60 deg or 60°",
+        bare={},
+        code={},
+        units={"deg": 0, "°": 0},
+        words={"degree": 0, "degrees": 0},
+        plain=False,
+        signed=True,
+    ),
+    "temperature": Quantity(
+        noun="a temperature",
+        symbol="°C",
+        unit_word="degree Celsius",
+        written="_",
+        example="25 degC or 25 °C",
+        bare={},
+        code={},
+        units={"degC": 0, "°C": 0, "degc": 0},
+        words={},
+        plain=False,
         signed=True,
     ),
 }

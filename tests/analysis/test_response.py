@@ -8,10 +8,9 @@ from pathlib import Path
 import numpy as np
 import pytest
 
-from preview.analysis.figures import evaluate
+from preview.analysis.figures import expected_figure
 from preview.analysis.response import analyse, deviation, find_corners, heard
 from preview.circuit.library import find_stage, stage_names
-from preview.circuit.netlist import netlist
 from preview.circuit.parts import Expect, Stage
 from preview.errors import CircuitError
 from preview.network.transfer import response
@@ -29,8 +28,7 @@ def expectations() -> list[tuple[Stage, Expect]]:
     ("stage", "expect"), expectations(), ids=lambda x: getattr(x, "what", getattr(x, "name", ""))
 )
 def test_every_expected_figure_of_every_stage_comes_true(stage: Stage, expect: Expect) -> None:
-    circuit = netlist(stage).with_values(dict(expect.parts))
-    found = evaluate(circuit, expect.what)
+    found = expected_figure(stage, expect)
     allowed = expect.within if expect.absolute else expect.within * abs(expect.value)
     difference = abs(found - expect.value)
     if expect.what.startswith("phase_deg"):
@@ -107,3 +105,11 @@ def test_an_integrator_and_a_differentiator_have_no_corner() -> None:
     assert analyse(differentiator, [1000.0]).gain_db[0] == pytest.approx(
         20 * np.log10(2 * np.pi * 0.1), abs=1e-9
     )
+
+
+def test_corners_of_a_resonance_narrower_than_the_grid_of_the_search() -> None:
+    # series R-L-C, out across R: the corners are f0 / Q apart, half a percent of f0
+    circuit = net([("C1", "in", "a", 100e-9), ("L1", "a", "out", 10e-3), ("R1", "out", "gnd", 1.6)], [])
+    passband, (low_hz, high_hz) = find_corners(circuit)
+    assert passband == pytest.approx(0.0, abs=1e-6)
+    assert high_hz - low_hz == pytest.approx(1.6 / (2 * np.pi * 10e-3), rel=1e-6)

@@ -15,9 +15,28 @@ from preview.circuit.tables import decode
 from preview.errors import CircuitError, printable
 
 NAMES = ("inverting-low-pass", "non-inverting-gain")
+FURTHER = """
+P1 = { kind = "potentiometer", ends = ["gnd", "out"], wiper = "w", value = "10k", taper = "log", position = "70 %" }
+R9 = { kind = "resistor", nodes = ["w", "supply+"], value = "100k" }
+C9 = { kind = "capacitor", nodes = ["w", "gnd"], value = "1u", half_voltage = "25 V" }
+S1 = { kind = "switch", nodes = ["w", "bias"], closed = false }
+D1 = { kind = "diode", anode = "out", cathode = "w", type = "zener", breakdown = "5.1 V", temperature = "40 degC" }
+V1 = { kind = "voltage", nodes = ["bias", "gnd"], value = "4.5 V" }
+"""
+"""Parts of the other kinds, put among the parts of a bundled stage."""
 SCRAPS = (
     *("[", "]", "{", "}", '"', "'''", "=", ",", ".", "\n", "\\", "\\u0000", "#", "é", "\x00", "\u202e"),
     *("in", "out", "gnd", "source", "sum", "GND", "R1", "C1", "U1", "Rload", "resistor", "opamp", "diode"),
+    *(
+        '"supply-"',
+        '"switch"',
+        '"potentiometer"',
+        '"voltage"',
+        '"signal"',
+        "outputs",
+        "temperature",
+        '"12 degC"',
+    ),
     *("nan", "-inf", "1e999", "0", "-1", "true", "1979-05-27", "9" * 30, "[[expect]]", "[parts]", "%", "dB"),
     *('"4k7"', '"0"', '"-1"', '"1e300"', "parts = 3", "value", "nodes", "[1, 2]", "{}", "[]", "kind"),
 )
@@ -47,17 +66,26 @@ def attempt(data: bytes) -> None:
     ),
 )
 def test_spliced_stage_files(name: str, edits: list[tuple[float, int, str]]) -> None:
-    text = stage_source(name)
+    text = with_further_parts(name)
     for place, length, scrap in edits:
         start = int(place * len(text))
         text = text[:start] + scrap + text[start + length :]
     attempt(text.encode("utf-8", "surrogatepass"))
 
 
+def with_further_parts(name: str) -> str:
+    return stage_source(name).replace("[parts]\n", "[parts]" + FURTHER, 1)
+
+
+def test_the_stage_with_further_parts_is_sound() -> None:
+    for name in NAMES:
+        assert len(netlist(parse_stage(with_further_parts(name), name="x", file="x.toml")).ports) == 2
+
+
 @settings(max_examples=150, deadline=None, derandomize=True)
 @given(name=st.sampled_from(NAMES), word=st.integers(0, 400), scrap=st.sampled_from(SCRAPS))
 def test_swapped_words(name: str, word: int, scrap: str) -> None:
-    words = stage_source(name).split(" ")
+    words = with_further_parts(name).split(" ")
     words[word % len(words)] = scrap
     attempt(" ".join(words).encode())
 
@@ -95,9 +123,24 @@ def _toml(value: object) -> str:
 
 @settings(max_examples=150, deadline=None, derandomize=True)
 @given(
-    key=st.sampled_from(("title", "about", "supply", "parts", "expect", "drawing")),
+    key=st.sampled_from(("title", "about", "supply", "parts", "outputs", "temperature", "expect", "drawing")),
     inner=st.sampled_from(
-        ("", "R1", "U1", "positive", "negative", "kind", "nodes", "value", "what", "within")
+        (
+            "",
+            "R1",
+            "U1",
+            "D1",
+            "anode",
+            "closed",
+            "position",
+            "positive",
+            "negative",
+            "kind",
+            "nodes",
+            "value",
+            "what",
+            "within",
+        )
     ),
     value=st.recursive(
         _SCALARS,

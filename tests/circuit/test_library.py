@@ -2,13 +2,27 @@
 
 from __future__ import annotations
 
+import re
+import tomllib
 from pathlib import Path
 
 import pytest
 
+from preview.analysis.figures import evaluate
 from preview.circuit import library
-from preview.circuit.library import find_stage, stage_names, stage_source, with_overrides
-from preview.errors import NotationError, PartValueError, StageFileError, UnknownNameError
+from preview.circuit.library import find_stage, new_stage_file, stage_names, stage_source, with_overrides
+from preview.circuit.netlist import netlist
+from preview.circuit.part_reader import read_part
+from preview.circuit.parts import PartKind
+from preview.circuit.tables import Table
+from preview.errors import (
+    NotationError,
+    OutputFileError,
+    PartValueError,
+    StageFileError,
+    UnknownNameError,
+    UsageError,
+)
 
 
 @pytest.fixture(autouse=True)
@@ -51,13 +65,14 @@ def test_a_stage_in_the_own_folder_is_found_by_name_after_the_bundled_ones(own_f
 def test_an_unknown_name_is_answered_with_the_nearest(name: str) -> None:
     with pytest.raises(UnknownNameError, match=f"no stage named {name}") as caught:
         find_stage(name)
-    assert caught.value.hint.startswith("did you mean inverting-low-pass? stages are inverting-band-pass,")
+    assert caught.value.hint.startswith("did you mean inverting-low-pass or ")
+    assert f"preview stages lists all {len(stage_names())}" in caught.value.hint
     assert caught.value.exit_code == 5
 
 
 @pytest.mark.parametrize("name", ["", "zzz", "..", "a\x1b[2J", "x" * 100_000])
 def test_an_unknown_name_is_short_and_clean(name: str) -> None:
-    with pytest.raises(UnknownNameError, match="stages are") as caught:
+    with pytest.raises(UnknownNameError, match="preview stages lists all") as caught:
         find_stage(name)
     assert "\x1b" not in str(caught.value)
     assert len(str(caught.value)) < 300
@@ -101,3 +116,40 @@ def test_overrides_that_cannot_be_are_refused() -> None:
         with_overrides(stage, {}, {"R1": "ideal"})
     with pytest.raises(UnknownNameError, match=r"^no op-amp type named TLO72"):
         with_overrides(stage, {}, {None: "TLO72"})
+
+
+def test_a_new_stage_file_is_a_stage_that_keeps_its_word(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    new_stage_file(path)
+    stage = find_stage(str(path))
+    assert stage.title == "My low-pass"
+    assert len(stage.expects) == 3
+    for expect in stage.expects:
+        found = evaluate(netlist(stage).with_values(dict(expect.parts)), expect.what)
+        assert abs(found - expect.value) <= expect.within * (1.0 if expect.absolute else expect.value)
+    drawn = set(re.findall(r"[A-Z]+[0-9]+", stage.drawing))
+    assert drawn == {part.designator for part in stage.parts}
+
+
+def test_the_parts_it_has_no_use_for_are_parts_too(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    new_stage_file(path)
+    spare = re.findall(r"^# ([A-Z][0-9] = \{.*\})$", path.read_text("utf-8"), re.MULTILINE)
+    kinds = {
+        PartKind(read_part(Table("x", "[parts.X1]", tomllib.loads(line)[line[:2]]), line[:2]).kind)
+        for line in spare
+    }
+    assert kinds == {PartKind.INDUCTOR, PartKind.VOLTAGE, PartKind.DIODE, PartKind.CAPACITOR}
+    assert kinds | {part.kind for part in find_stage(str(path)).parts} == set(PartKind)
+
+
+def test_a_new_stage_file_takes_nothing_away(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    path.write_text("mine", "utf-8")
+    with pytest.raises(OutputFileError, match="there is something of that name") as caught:
+        new_stage_file(path)
+    assert (path.read_text("utf-8"), caught.value.exit_code) == ("mine", 3)
+    with pytest.raises(OutputFileError, match="no such folder"):
+        new_stage_file(tmp_path / "none" / "mine.toml")
+    with pytest.raises(UsageError, match=r"ends in \.toml"):
+        new_stage_file(tmp_path / "mine.txt")

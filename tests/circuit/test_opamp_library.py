@@ -5,15 +5,18 @@ from __future__ import annotations
 import math
 import tomllib
 from collections.abc import Callable
+from itertools import pairwise
 from pathlib import Path
 
+import numpy as np
 import pytest
 
 from preview.circuit import opamp_library
-from preview.circuit.opamp import IDEAL, PERFECT, OpAmpModel
+from preview.circuit.opamp import IDEAL, OVERDRIVES, PERFECT, OpAmpModel
 from preview.circuit.opamp_classes import CLASSES, shot_noise_a_rthz
 from preview.circuit.opamp_library import find_opamp, find_sheet, known_type, opamp_names
-from preview.circuit.opamp_reader import OpAmpSheet
+from preview.circuit.opamp_sheet import OpAmpSheet
+from preview.circuit.opamp_units import FIGURE_FIELDS
 from preview.errors import OpAmpFileError, UnknownNameError
 
 PUBLISHED = tomllib.loads((Path(__file__).parents[1] / "published" / "opamps.toml").read_text("utf-8"))
@@ -21,7 +24,7 @@ FIGURES = [row for row in PUBLISHED["figure"] if row["type"] != "RC4580"]
 REAL = tuple(name for name in opamp_names() if name not in ("perfect", "ideal"))
 
 NOT_MODELLED = {
-    "rin", "rise_time", "cmrr", "psrr", "thd", "thdn", "power_bw", "phase_margin", "drift_max",
+    "rin", "rise_time", "cmrr", "psrr", "thd", "thdn", "power_bw", "drift_max",
     "en_pp_max", "vos_max", "input_diodes",
 }  # fmt: skip
 """What the model has no field for, or (vos_max) only a bound where a typical figure is wanted."""
@@ -71,6 +74,7 @@ FROM_MODEL: dict[str, Callable[[OpAmpModel], float]] = {
     "avol": lambda m: m.open_loop_gain / 1e3,
     "avol_db": lambda m: 20 * math.log10(m.open_loop_gain),
     "slew": lambda m: min(m.slew_up_v_per_s, m.slew_down_v_per_s) / 1e6,
+    "phase_margin": lambda m: m.phase_margin_deg,
     "ro": lambda m: m.output_resistance_ohm,
     "vos": lambda m: 1e3 * m.offset_v,
     "ib": lambda m: 1e9 * abs(m.bias_a),  # rows give the magnitude
@@ -91,7 +95,8 @@ FROM_MODEL: dict[str, Callable[[OpAmpModel], float]] = {
     "iq_two": lambda m: 2e3 * m.supply_current_a,
     "pd": lambda m: 1e3 * 30.0 * m.supply_current_a,  # at ±15 V
 }
-LOADS = {"25k": 25e3, "10k": 10e3, "2k": 2e3, "600": 600.0, "1mA": 5e3, "10mA": 500.0}  # mA: of 5 V
+LOADS = {"25k": 25e3, "10k": 10e3, "2k": 2e3, "600": 600.0}
+AT_CURRENT = {"1mA": 1e-3, "10mA": 10e-3}
 CURRENTS = {
     "isc": ("current_limit", "current_source", "current_sink"),
     "isource": ("current_source",),
@@ -126,8 +131,8 @@ def test_the_library_holds_the_published_figure(row: dict[str, object]) -> None:
 
 def check_swing(sheet: OpAmpSheet, param: str, value: float) -> None:
     words = param.split("_")[1:]
-    (load,) = (word for word in words if word in LOADS)
-    rows = [s for s in sheet.swings if s.load_ohm == LOADS[load]]
+    (load,) = (word for word in words if word in LOADS | AT_CURRENT)
+    rows = [s for s in sheet.swings if s.load_ohm == LOADS.get(load) and s.current_a == AT_CURRENT.get(load)]
     assert rows
     if "lo" not in words:
         assert value in [s.high_v for s in rows]
@@ -156,14 +161,16 @@ def test_a_figure_that_was_read_is_a_published_row_of_that_type(name: str) -> No
 def test_every_field_has_a_source_and_every_gap_is_named(name: str) -> None:
     sheet = sheet_of(name)
     model = sheet.model
-    fields = set(OpAmpModel.__dataclass_fields__) - {"type", "title", "assumed", "sources"}
-    assert {field for field, _ in model.sources} == fields
+    fields = {*FIGURE_FIELDS, "swing_high_v", "swing_low_v"}
+    points = {name for name in ("swing_high_points", "swing_low_points") if getattr(model, name)}
+    assert {field for field, _ in model.sources} == fields | points
     assert all(text for _, text in model.sources)
     assert set(model.assumed) == {
         field for field, text in model.sources if text.startswith(("class ", "shot noise"))
     }
     assert model.real
-    assert all(math.isfinite(getattr(model, field)) for field in fields)
+    assert model.input_overdrive in OVERDRIVES
+    assert all(math.isfinite(getattr(model, field)) for field in fields - {"input_overdrive"})
     assert model.type == name
     assert sheet.class_name in CLASSES
     assert sheet.about
@@ -203,6 +210,59 @@ def test_bias_flows_out_of_pnp_inputs_only() -> None:
     """Common knowledge of the trade, from memory: these types have PNP inputs."""
     outward = {name for name in REAL if find_opamp(name).bias_a < 0}
     assert outward == {"LM358", "LM324", "LM833", "RC4558", "NE5532-2025"}
+
+
+def loss_v(points: tuple[tuple[float, float], ...], current_a: float) -> float:
+    return float(np.interp(current_a, *zip(*points, strict=True)))
+
+
+@pytest.mark.parametrize(
+    ("name", "loads"),
+    [("LM741", (10e3, 2e3)), ("TL072", (10e3, 2e3)), ("RC4558", (10e3, 2e3)), ("NE5532", (2e3, 600.0))],
+)
+def test_the_stated_swings_are_those_of_the_line_at_the_currents_they_drive(
+    name: str, loads: tuple[float, ...]
+) -> None:
+    """Rows of the data sheets at ±15 V: the output at that swing drives (15 V - drop) / load."""
+    model = find_opamp(name)
+    rows = {
+        float(LOADS[p]): r["value"] for r in FIGURES if r["type"] == name and (p := r["param"][6:]) in LOADS
+    }
+    assert set(rows) == set(loads)
+    for load_ohm, drop_v in rows.items():
+        for points in (model.swing_high_points, model.swing_low_points):
+            assert loss_v(points, (15.0 - drop_v) / load_ohm) == pytest.approx(drop_v, rel=1e-12)
+
+
+@pytest.mark.parametrize("name", REAL)
+def test_the_loss_of_swing_begins_at_no_current_and_grows_ever_faster(name: str) -> None:
+    model = find_opamp(name)
+    for points, lightest_v in (
+        (model.swing_high_points, model.swing_high_v),
+        (model.swing_low_points, model.swing_low_v),
+    ):
+        if points:
+            assert points[0] == (0.0, lightest_v)
+            slopes = [(b[1] - a[1]) / (b[0] - a[0]) for a, b in pairwise(points)]
+            assert slopes == sorted(slopes)
+            assert slopes[0] >= 0.0
+            assert slopes[-1] > 0.0
+
+
+def test_a_sheet_that_states_one_load_has_no_line() -> None:
+    assert find_opamp("LF353").swing_high_points == ()
+    assert find_opamp("OP07").swing_high_points == ()  # 2 V into 10 kohm and into 2 kohm
+
+
+def test_phase_reversal_and_crossover_are_known_of_the_types_that_have_them() -> None:
+    """Common knowledge of the trade, from memory."""
+    assert {n for n in REAL if find_opamp(n).input_overdrive == "reverses"} == {
+        *("TL072", "TL082", "LF353"),
+        *("LM358", "LM324"),
+    }
+    assert {n for n in REAL if find_opamp(n).crossover_v > 0.0} == {"LM358", "LM324"}
+    assert find_opamp("LM358").crossover_a == 50e-6
+    assert "crossover_v" not in find_opamp("NE5532").assumed
 
 
 def test_shot_noise_of_a_picoampere() -> None:

@@ -7,8 +7,10 @@ from pathlib import Path
 
 import pytest
 
+from preview.circuit.opamp_builder import swing_points
 from preview.circuit.opamp_library import opamp_names
-from preview.circuit.opamp_reader import OpAmpSheet, parse_opamp, read_opamp
+from preview.circuit.opamp_reader import parse_opamp, read_opamp
+from preview.circuit.opamp_sheet import OpAmpSheet
 from preview.circuit.opamp_units import Unit, format_figure, parse_figure_value
 from preview.errors import NotationError, OpAmpFileError, PreviewError
 
@@ -53,12 +55,13 @@ def test_a_whole_file_becomes_a_model() -> None:
     assert model.gain_bandwidth_hz == 10e6
     assert model.open_loop_gain == 200e3
     assert (model.slew_up_v_per_s, model.slew_down_v_per_s) == (5e6, 4e6)
+    assert (model.current_source_a, model.current_sink_a) == (0.03, 0.015)
     assert model.current_limit_a == 0.015
     assert model.bias_a == -100e-9
     assert model.offset_current_a == pytest.approx(10e-9)  # a tenth, as its class has it
     assert model.noise_v_rthz == pytest.approx(5e-9)  # 10 nV at 1 kHz with a corner of 3 kHz: half is white
     sources = dict(model.sources)
-    assert sources["current_limit_a"] == "sheet p. 3; hot (from memory)"
+    assert sources["current_sink_a"] == "sheet p. 3; hot (from memory)"
     assert sources["gain_bandwidth_hz"] == "sheet p. 1 (read)"
     assert "output_resistance_ohm" in model.assumed
     assert "bias_a" not in model.assumed
@@ -68,7 +71,75 @@ def test_the_swing_is_that_into_the_lightest_load_each_way() -> None:
     sheet = read(GOOD)
     assert (sheet.model.swing_high_v, sheet.model.swing_low_v) == (1.5, 1.0)
     assert [swing.load_ohm for swing in sheet.swings] == [10e3, 2e3]
-    assert dict(sheet.model.sources)["swing_low_v"] == "into 2 kΩ: sheet p. 2 (read)"
+    assert (
+        dict(sheet.model.sources)["swing_low_v"] == "into 2 kΩ on 15 V and -15 V assumed: sheet p. 2 (read)"
+    )
+
+
+def test_the_swing_shrinks_with_the_current_that_the_loads_of_the_test_draw() -> None:
+    model = read(GOOD).model
+    assert model.swing_high_points == (
+        (0.0, 1.5),
+        (pytest.approx(13.5 / 10e3), 1.5),
+        (pytest.approx(13.0 / 2e3), 2.0),
+    )
+    assert model.swing_low_points == ()  # one row alone states it
+
+
+def test_the_supply_of_the_test_makes_its_currents() -> None:
+    row = 'load = "10 kohm"\nsupply = "30"\nhigh'
+    sheet = read(GOOD.replace('load = "10 kohm"\nhigh', row))
+    assert sheet.swings[0].source_a == pytest.approx(28.5 / 10e3)
+    assert sheet.swings[0].sink_a == 0.0  # a load to gnd draws nothing down to the negative rail
+    assert sheet.swings[0].origin == "into 10 kΩ on 30 V and 0 V: sheet p. 2 (read)"
+    single = GOOD.replace('class = "bipolar"', 'class = "single-supply"')
+    assert read(single).swings[0].source_a == pytest.approx(3.5 / 10e3)  # 5 V and 0 V unless stated
+
+
+def test_a_swing_can_be_stated_at_a_current() -> None:
+    model = read(GOOD.replace('load = "2 kohm"', 'current = "8 mA"')).model
+    assert model.swing_high_points[-1] == (0.008, 2.0)
+    assert dict(model.sources)["swing_low_v"] == "at 8 mA: sheet p. 2 (read)"
+
+
+@pytest.mark.parametrize(
+    ("stated", "line"),
+    [
+        ([(1e-3, 1.0), (5e-3, 2.0)], ((0.0, 1.0), (1e-3, 1.0), (5e-3, 2.0))),
+        ([(0.0, 1.0), (5e-3, 2.0)], ((0.0, 1.0), (5e-3, 2.0))),
+        ([(5e-3, 2.0), (0.0, 1.0), (2e-3, 1.9)], ((0.0, 1.0), (5e-3, 2.0))),  # grows slower: bent straight
+        ([(1e-3, 1.0), (5e-3, 0.8)], ()),  # falls: taken as constant
+        ([(1e-3, 1.0), (5e-3, 0.8), (9e-3, 2.0)], ((0.0, 1.0), (1e-3, 1.0), (5e-3, 1.0), (9e-3, 2.0))),
+        ([(1e-3, 1.0), (1e-3, 1.5), (2e-3, 2.5)], ((0.0, 1.5), (1e-3, 1.5), (2e-3, 2.5))),
+        ([(1e-3, 1.0)], ()),
+    ],
+)
+def test_the_loss_of_swing_is_a_line_that_never_bends_down(
+    stated: list[tuple[float, float]], line: tuple[tuple[float, float], ...]
+) -> None:
+    assert swing_points(stated) == line
+
+
+def test_further_figures_are_read() -> None:
+    extra = "\n".join(
+        f'{key} = {{ value = "{value}", source = "sheet p. 3", found = "memory" }}'
+        for key, value in (
+            ("phase_margin", "55 deg"),
+            ("input_capacitance", "5 pF"),
+            ("input_differential_capacitance", "2 pF"),
+            ("overdrive", "reverses"),
+            ("crossover", "1.8 V"),
+            ("crossover_current", "50 uA"),
+        )
+    )
+    model = read(GOOD.replace("[figures]", f"[figures]\n{extra}")).model
+    assert model.phase_margin_deg == 55.0
+    assert (model.input_farad, model.input_differential_farad) == (5e-12, 2e-12)
+    assert model.input_overdrive == "reverses"
+    assert (model.crossover_v, model.crossover_a) == (1.8, 50e-6)
+    plain = read(GOOD).model
+    assert (plain.input_overdrive, plain.crossover_v, plain.phase_margin_deg) == ("clips", 0.0, 60.0)
+    assert {"input_overdrive", "crossover_v", "phase_margin_deg", "input_farad"} < set(plain.assumed)
 
 
 @pytest.mark.parametrize(
@@ -137,6 +208,21 @@ def test_figures_are_written_as_data_sheets_write_them() -> None:
         ('found = "memory"', 'found = "guess"', 'found = "guess": neither read nor memory'),
         ('source = "sheet p. 1", ', "", "missing key source"),
         ('load = "2 kohm"', 'load = "0 ohm"', '[[swing]] 1 load = "0 ohm": out of range'),
+        ('load = "2 kohm"\n', "", "[[swing]] 1: either load or current is wanted"),
+        ('load = "2 kohm"', 'load = "2 kohm"\ncurrent = "1 mA"', "[[swing]] 1: either load or current"),
+        ('load = "2 kohm"', 'load = "2 kohm"\nsupply = "fifteen"', '[[swing]] 1 supply = "fifteen"'),
+        ('load = "2 kohm"', 'load = "2 kohm"\nsupply = "3"', "nothing is left of 3 V and 0 V"),
+        (
+            "slew_up =",
+            'overdrive = { value = "flips", source = "x", found = "read" }\nslew_up =',
+            "no such behaviour",
+        ),
+        ("slew_up =", 'phase_margin = { value = "60", source = "x", found = "read" }\nslew_up =', "no unit"),
+        (
+            "slew_up =",
+            'crossover = { value = "9 V", source = "x", found = "read" }\nslew_up =',
+            "out of range",
+        ),
         ('high = "1.5 V"\n', "", "[[swing]] 2: missing keys high, low"),
         ('high = "1.5 V"', 'hi = "1.5 V"', '"hi": no such key'),
         ("[figures]", "[figure]", "no such key"),

@@ -36,6 +36,15 @@ def test_a_real_type_brings_its_model_and_its_swing() -> None:
     assert (lm358.high_v, lm358.low_v) == (3.0, 0.005)
 
 
+def test_the_common_mode_range_is_in_volts_on_the_rails_in_force() -> None:
+    """Motorola TL072 sheet: -12 V to +15 V on ±15 V; the LM358 sheet: V- to V+ less 1.5 V."""
+    assert (site("TL072").input_low_v, site("TL072").input_high_v) == (-12.0, 15.0)
+    assert (site("TL072", 12.0, -9.0).input_low_v, site("TL072", 12.0, -9.0).input_high_v) == (-6.0, 12.0)
+    assert (site("LM358", 9.0, 0.0).input_low_v, site("LM358", 9.0, 0.0).input_high_v) == (0.0, 7.5)
+    for name in ("ideal", "perfect"):
+        assert (site(name).input_low_v, site(name).input_high_v) == (-math.inf, math.inf)
+
+
 def test_built_in_types_keep_their_limits() -> None:
     ideal, perfect = site("ideal"), site("perfect")
     assert (ideal.high_v, ideal.low_v, ideal.model) == (15.0, -15.0, IDEAL)

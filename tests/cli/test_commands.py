@@ -219,7 +219,42 @@ def test_response_says_how_the_options_were_understood(capsys):
     assert code == 0
     assert "passband" in out
     assert "4.7 kΩ (4700 ohm)" in err
-    assert "600 ohm" in err
+    assert "source 600 = 600 Ω" in err
+
+
+def test_what_is_hardly_meant_is_a_warning_with_its_cure(capsys):
+    code, _, err = run(capsys, "response", "--supply", "9", "--at", "1k")
+    assert code == 0
+    assert "preview: warning: U1 rests at 0 V, and its output reaches 0 V to 9 V" in err
+    assert "half the supply" in err
+    assert "warning" not in run(capsys, "response", "--at", "1k")[2]
+
+
+STATIC = """
+title = "Volume"
+supply = { positive = "9 V", negative = "0 V" }
+outputs = ["w"]
+[parts]
+R1 = { kind = "resistor", nodes = ["in", "out"], value = "10k" }
+P1 = { kind = "potentiometer", ends = ["gnd", "out"], wiper = "w", value = "10k", taper = "log" }
+S1 = { kind = "switch", nodes = ["w", "gnd"], closed = true }
+"""
+
+
+def test_response_follows_position_switch_and_output(capsys, tmp_path):
+    """Closed form: a divider of 10k and 10k, whose track gives an eighth of it to the wiper at half a turn."""
+    path = tmp_path / "volume.toml"
+    path.write_text(STATIC, "utf-8")
+    stage = ("response", "--stage", str(path), "--at", "1k", "--part", "S1=open")
+    half = report_of(capsys, *stage, "--part", "P1=50%", "--output", "w")
+    assert half["gain_db"][0] == pytest.approx(
+        20 * np.log10(0.5 / 8), abs=1e-5
+    )  # the open switch loads a little
+    assert half["understood"]["parts"] == {"R1": 1e4, "P1": 0.5, "S1": 0.0}
+    assert half["understood"]["output"] == "w"
+    assert report_of(capsys, *stage)["gain_db"][0] == pytest.approx(20 * np.log10(0.5), abs=1e-5)
+    muted = report_of(capsys, *stage[:-2], "--output", "w")
+    assert muted["gain_db"][0] < -110.0
 
 
 def test_a_circuit_that_runs_away_does_not_open_the_desk(capsys, tmp_path):
@@ -323,3 +358,61 @@ def test_render_csv_has_a_row_for_each_op_amp_with_the_figures_of_the_file(tmp_p
     assert row["frames"] == "4800"
     assert row["slew_limit_v_per_s"] == ""
     assert float(row["input_peak_v"]) == pytest.approx(0.1 * 8.70, rel=0.01)
+
+
+def test_response_answers_with_sign_sections_step_and_as_drawn(capsys):
+    words = ("response", "--at", "100,1k", "--source", "1k", "--load", "2k", "--stage", "inverting-high-pass")
+    report = report_of(capsys, *words)
+    # 11k and 100 nF: 144.686 Hz; 100k / 11k
+    assert report["passband_gain"] == pytest.approx(-100 / 11, rel=1e-6)
+    assert report["passband_polarity"] == "inverting"
+    assert [pole["f0_hz"] for pole in report["poles"]] == [pytest.approx(144.686, abs=5e-4)]
+    assert report["step"]["peak_gain"] == pytest.approx(-100 / 11)
+    drawn = report["as_drawn"]
+    assert drawn["corners_hz"] == [pytest.approx(159.155, abs=5e-4)]
+    assert drawn["passband_gain_change_db"] == pytest.approx(20 * np.log10(10 / 11), abs=1e-6)
+    assert len(drawn["gain_db"]) == len(drawn["phase_deg"]) == 2
+    code, out, _ = run(capsys, *words)
+    assert code == 0
+    for text in ("x 9.091, inverting", "144.7 Hz", "step ", "as drawn", "-0.83 dB", "-9.09 %"):
+        assert text in out
+    code, out, _ = run(capsys, *words, "--csv")
+    rows = list(csv.DictReader(io.StringIO(out)))
+    assert [float(row["drawn_gain_db"]) for row in rows] == pytest.approx(drawn["gain_db"])
+
+
+def test_response_of_a_cascade_tells_what_each_stage_does_in_its_place(capsys):
+    words = ("response", "--at", "1k", "--stage", "inverting-high-pass", "--stage", "inverting-low-pass")
+    report = report_of(capsys, *words)
+    assert [row["output"] for row in report["stages"]] == ["1.out", "out"]
+    assert sum(row["gain_db"][0] for row in report["stages"]) == pytest.approx(report["gain_db"][0])
+    assert "after 1, inverting-high-pass" in run(capsys, *words)[1]
+
+
+def test_response_draws_the_curve_and_writes_a_picture(capsys, tmp_path):
+    code, out, _ = run(capsys, "response", "--at", "1k", "--draw", "--plot", str(tmp_path / "a.svg"))
+    assert code == 0
+    assert "^ corners 1.592 kHz" in out
+    assert (tmp_path / "a.svg").read_text("utf-8").startswith("<?xml")
+    report = report_of(capsys, "response", "--at", "1k", "--plot", str(tmp_path / "b.PNG"))
+    assert report["passband_gain"] == pytest.approx(-10.0)
+    assert (tmp_path / "b.PNG").read_bytes().startswith(b"\x89PNG")
+
+
+@pytest.mark.parametrize(
+    ("words", "code", "told"),
+    [
+        (["--plot", "a.pdf"], 2, "ends in .png or .svg"),
+        (["--plot", ""], 2, "ends in .png or .svg"),
+        (["--plot", "nowhere/at/all.png"], 3, "nowhere/at: no such folder"),
+        (["--draw", "--json"], 2, "--draw does not go with --json"),
+        (["--draw", "--csv"], 2, "--draw does not go with --json"),
+        (["--draw", "--sections"], 2, "--draw does not go with --sections"),
+        (["--plot", "a.png", "--sections"], 2, "--plot does not go with --sections"),
+    ],
+)
+def test_a_picture_that_cannot_be_is_refused(capsys, words, code, told):
+    got, out, err = run(capsys, "response", *words)
+    assert (got, out) == (code, "")
+    assert told in err
+    assert "Traceback" not in err

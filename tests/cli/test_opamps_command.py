@@ -32,6 +32,9 @@ def test_every_type_is_on_a_line_of_the_comparison(capsys: pytest.CaptureFixture
     assert set(opamp_library.opamp_names()) < set(lines)
     for cell in ("4 MHz", "13 V/µs", "18 nV/√Hz", "1 V/1 V", "7 to 36 V ", "jfet"):
         assert cell in lines["TL072"]
+    assert "phase reversal" in lines["TL072"]
+    assert "phase reversal, crossover" in lines["LM358"]
+    assert lines["NE5532"].endswith("bipolar")
     assert "6 to 36 V~" in lines["LM741"]  # its sheet gives no smallest supply
     assert "no limit but the rails" in lines["ideal"]
 
@@ -54,7 +57,9 @@ def test_one_type_is_told_with_its_sources_and_gaps(capsys: pytest.CaptureFixtur
     assert "13 V/us" in given
     assert "TI min 8; onsemi typ 13 (read)" in given
     assert "TL08x data sheet curves and ratings, recalled; curve (from memory)" in given
-    assert "into 2 kΩ" in given
+    assert "into 2 kΩ on 15 V and -15 V" in given
+    assert "beyond the common-mode range the output" in given
+    assert "phase margin at unity gain" in assumed
     assert "open-loop output resistance" in assumed
     assert "class jfet, from memory" in assumed
 
@@ -66,7 +71,16 @@ def test_one_type_as_json_carries_every_source(capsys: pytest.CaptureFixture[str
     assert report["bias_a"] == -45e-9
     assert report["current_limit_a"] == 0.015
     assert set(report["assumed"]) < set(report["sources"])
-    assert [row["load_ohm"] for row in report["swings"]] == [10e3, 10e3, 2e3]
+    assert [row["load_ohm"] for row in report["swings"]] == [10e3, 10e3, 2e3, None]
+    assert [row["current_a"] for row in report["swings"]] == [None, None, None, 0.01]
+    assert [row["supply_positive_v"] for row in report["swings"][:2]] == [30.0, 5.0]
+    assert report["swing_high_points"][-1] == {"current_a": pytest.approx(26.0 / 2e3), "drop_v": 4.0}
+    assert (report["current_source_a"], report["current_sink_a"]) == (0.03, 0.015)
+    assert (report["input_overdrive"], report["crossover_v"], report["crossover_a"]) == (
+        "reverses",
+        2.0,
+        50e-6,
+    )
 
 
 def test_a_built_in_type_has_no_figures(capsys: pytest.CaptureFixture[str]) -> None:

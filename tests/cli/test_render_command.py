@@ -353,3 +353,26 @@ def test_a_reader_that_goes_away_is_quiet(tone):
     err = process.stderr.read()
     assert process.wait(30) == 0
     assert all(line.startswith("  ") for line in err.splitlines()), err  # what was understood, no complaint
+
+
+def test_a_cascade_is_rendered_as_one_circuit(tmp_path, capsys):
+    source = tmp_path / "tone.wav"
+    soundfile.write(
+        source, 0.01 * np.sin(2 * np.pi * 159.155 * np.arange(48_000) / 48_000), 48_000, subtype="FLOAT"
+    )
+    words = [
+        "--stage",
+        "inverting-high-pass",
+        "--stage",
+        "inverting-low-pass",
+        "--quality",
+        "draft",
+        "--json",
+    ]
+    assert main(["render", str(source), str(tmp_path / "out.wav"), *words]) == 0
+    report = json.loads(capsys.readouterr().out)
+    assert [row["name"] for row in report["opamps"]] == ["1.U1", "2.U1"]
+    # the high-pass at its own corner, 20 - 3.01 dB, times the low-pass a decade below its corner, 20 - 0.043 dB
+    samples, _ = soundfile.read(tmp_path / "out.wav")
+    gain_db = 20 * np.log10(np.abs(samples[24_000:47_000]).max() / 0.01)
+    assert gain_db == pytest.approx(40.0 - 3.0103 - 0.0432, abs=0.002)

@@ -43,8 +43,6 @@ def session_of(audio: Path, **changes: object) -> Session:
         "audio": audio,
         "stage": stage,
         "supply": stage.supply,
-        "source_ohm": 0.0,
-        "load_ohm": None,
         "full_scale": parse_full_scale("10 V"),
     } | changes
     return Session(**values)  # type: ignore[arg-type]  # a test's shorthand
@@ -229,7 +227,7 @@ def test_the_engine_ends_when_its_desk_is_killed(tone, tmp_path):
         "from preview.session import Session\n"
         "from preview.values.levels import parse_full_scale\n"
         "stage = find_stage('inverting-low-pass')\n"
-        f"session = Session(Path({str(tone)!r}), stage, stage.supply, 0.0, None, parse_full_scale('10 V'))\n"
+        f"session = Session(Path({str(tone)!r}), stage, stage.supply, parse_full_scale('10 V'))\n"
     )
     script = tmp_path / "desk.py"
     script.write_text(PARENT)

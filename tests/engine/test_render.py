@@ -25,7 +25,7 @@ def session_of(stage_name: str = "inverting-low-pass", opamp: str | None = None,
     stage = find_stage(stage_name)
     if opamp is not None:
         stage, _ = with_overrides(stage, {}, {None: opamp})
-    return Session(None, stage, stage.supply, 0.0, None, parse_full_scale(full_scale), Quality.DRAFT)
+    return Session(None, stage, stage.supply, parse_full_scale(full_scale), quality=Quality.DRAFT)
 
 
 @pytest.fixture

@@ -51,7 +51,7 @@ def work(seconds):  # a desk that is busy in pure Python, garbage and all
 
 began = time.monotonic()
 stage = find_stage("inverting-low-pass")
-session = Session(Path(audio), stage, stage.supply, 0.0, None, parse_full_scale("10 V"), at_end=AtEnd(end))
+session = Session(Path(audio), stage, stage.supply, parse_full_scale("10 V"), at_end=AtEnd(end))
 engine = EngineProcess.start(
     EngineConfig(session=session, start_volume_db=0.0, block_frames=512, play=True, log=Path(log))
 )

@@ -8,8 +8,8 @@ import pytest
 from preview.circuit.netlist import Branch, Netlist, OpAmpSite
 from preview.circuit.parts import PartKind
 from preview.errors import CircuitError
-from preview.network.transfer import dc_point, group_delay, input_impedance, output_impedance, response
-from tests.nets import ALL, HIGH_PASS, LADDER, LOADED_LOW_PASS, LOW_PASS, SALLEN_KEY, net
+from preview.network.transfer import group_delay, input_impedance, output_impedance, response
+from tests.nets import ALL, HIGH_PASS, LADDER, LOADED_LOW_PASS, LOW_PASS, SALLEN_KEY
 
 F = np.geomspace(1.0, 1e6, 61)
 S = 2j * np.pi * F
@@ -60,23 +60,6 @@ def test_output_impedance_is_zero_at_an_op_amp_and_seen_through_what_follows_it(
     np.testing.assert_allclose(
         output_impedance(LOADED_LOW_PASS, F), 1.0 / (1.0 / 50.0 + S * 10e-9), rtol=1e-9
     )
-
-
-def test_dc_point_of_a_divider_and_an_inverter() -> None:
-    circuit = net(
-        [
-            ("R1", "in", "sum", 1e3),
-            ("R2", "sum", "o", 2e3),
-            ("R3", "o", "out", 1e3),
-            ("R4", "out", "gnd", 3e3),
-        ],
-        [("gnd", "sum", "o")],
-    )
-    volts = dc_point(circuit, 1.0)
-    assert volts["o"] == pytest.approx(-2.0, abs=1e-12)
-    assert volts["out"] == pytest.approx(-1.5, abs=1e-12)
-    assert volts["sum"] == pytest.approx(0.0, abs=1e-12)
-    assert volts["gnd"] == 0.0
 
 
 def test_an_op_amp_without_feedback_has_no_single_solution() -> None:

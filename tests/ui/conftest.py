@@ -149,8 +149,6 @@ def low_pass_session(audio: Path | None = Path("announcement.wav")) -> Session:
         audio=audio,
         stage=stage,
         supply=stage.supply,
-        source_ohm=0.0,
-        load_ohm=None,
         full_scale=parse_full_scale("+18 dBu"),
     )
 

@@ -9,6 +9,7 @@ import pytest
 from textual.binding import Binding
 from textual.pilot import Pilot
 
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD
 from preview.circuit.netlist import Netlist
 from preview.engine.messages import (
     ClearHolds,
@@ -91,8 +92,8 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "next_quality": ((), _sent(SetQuality(Quality.FINE))),
     "full_scale": ((), _asks("Full scale")),
     "supply": ((), _asks("Supply")),
-    "source": ((), _asks("Source resistance")),
-    "load": ((), _asks("Load resistance")),
+    "source": ((), _asks("Source")),
+    "load": ((), _asks("Load")),
     "opamp_type": ((), _lists_opamps),
     "clear_holds": ((), _sent(ClearHolds())),
     "phase": ((), lambda app, _: app.desk.phase_shown),
@@ -294,8 +295,8 @@ async def test_a_source_of_0_and_no_load_are_ideal_again(make_app, engine) -> No
             await _type(pilot, text)
             await pilot.press("enter")
             await pilot.pause()
-        assert app.desk.session.source_ohm == 0.0
-        assert app.desk.session.load_ohm is None
+        assert app.desk.session.source == IDEAL_SOURCE
+        assert app.desk.session.load == NO_LOAD
         assert set(_netlist(engine.sent[-1]).values) == {"R1", "R2", "C1"}
 
 
@@ -317,13 +318,14 @@ async def test_the_stage_chooser_moves_takes_and_leaves(make_app, engine) -> Non
 
 
 async def test_a_stage_file_is_opened_by_its_path(make_app, engine, tmp_path) -> None:
-    from preview.circuit.library import stage_source
+    from preview.circuit.library import stage_names, stage_source
 
     file = tmp_path / "mine.toml"
     file.write_text(stage_source("inverting-high-pass").replace("Inverting high-pass", "Mine [red]"), "utf-8")
     app: DeskApp = make_app()
     async with app.run_test(size=(80, 24)) as pilot:
-        await pilot.press("s", "up", "up", "up", "enter")  # past the first row to the last: a file
+        above = stage_names().index(app.desk.session.stage.name)
+        await pilot.press("s", *["up"] * (above + 1), "enter")  # past the first row to the last: a file
         await pilot.pause()
         assert isinstance(app.screen, EntryScreen)
         app.screen.query_one("#typed").value = "no-such-stage"

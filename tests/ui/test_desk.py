@@ -9,8 +9,10 @@ from pathlib import Path
 
 import pytest
 
-from preview.circuit.library import find_stage
+from preview.circuit.drive import LoadModel
+from preview.circuit.library import find_stage, open_stages
 from preview.circuit.parts import Supply
+from preview.circuit.reader import parse_stage
 from preview.engine.messages import Pause, Play, Seek, SetAtEnd, SetCircuit, SetPart, SetRegion, SetVolume
 from preview.errors import PartValueError
 from preview.session import AtEnd
@@ -47,6 +49,42 @@ def test_only_the_changed_part_is_sent(session) -> None:
     changed = with_value(session, "R2", 47e3)
     assert commands_between(session, changed) == [SetPart("R2", 47e3)]
     assert commands_between(session, session) == []
+
+
+TONE = """
+title = "Tone"
+supply = { positive = "9 V", negative = "0 V" }
+outputs = ["w"]
+[parts]
+R1 = { kind = "resistor", nodes = ["in", "out"], value = "4k7" }
+P1 = { kind = "potentiometer", ends = ["gnd", "out"], wiper = "w", value = "10k", taper = "log" }
+R2 = { kind = "resistor", nodes = ["w", "bias"], value = "100k" }
+S1 = { kind = "switch", nodes = ["w", "gnd"], closed = true }
+V1 = { kind = "voltage", nodes = ["bias", "gnd"], value = "4.5 V" }
+"""
+
+
+def test_a_turned_potentiometer_and_a_thrown_switch_are_sent_like_values(session) -> None:
+    old = session.with_stage(parse_stage(TONE, name="tone", file="tone.toml"))
+    turned, thrown = (old.stage.part(name) for name in ("P1", "S1"))
+    stage = old.stage.with_part(turned.with_setting(0.0)).with_part(thrown.with_setting(0.0))
+    assert commands_between(old, replace(old, stage=stage)) == [SetPart("P1", 0.0), SetPart("S1", 0.0)]
+    (command,) = commands_between(old, replace(old, output="w"))
+    assert isinstance(command, SetCircuit)
+    other = old.stage.with_part(replace(turned, taper="linear"))
+    assert isinstance(commands_between(old, replace(old, stage=other))[0], SetCircuit)
+
+
+def test_the_render_command_names_positions_switches_bias_and_output(session) -> None:
+    opened = parse_stage(TONE, name="tone", file="tone.toml")
+    stage = opened.with_part(replace(opened.part("P1"), position=0.1)).with_part(
+        replace(opened.part("S1"), closed=False)
+    )
+    now = replace(session.with_stage(stage.with_part(replace(stage.part("V1"), value=4.0))), output="w")
+    words = shlex.split(render_command(now, opened))
+    assert [w for w in words if "=" in w] == ["P1=0.1", "S1=open", "V1=4.0"]
+    assert words[words.index("--output") + 1] == "w"
+    assert "--part" not in render_command(session.with_stage(opened), opened)
 
 
 def test_another_supply_is_another_circuit(session) -> None:
@@ -238,7 +276,7 @@ def test_limits_are_worked_out_once_for_each_session(desk) -> None:
 def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> None:
     opened = session.stage
     session = with_value(with_value(session, "R1", 4700.0), "C1", 1.23456789e-9)
-    session = replace(session, audio=Path("a b.wav"), load_ohm=600.0, supply=Supply(12.0, -12.0))
+    session = replace(session, audio=Path("a b.wav"), load=LoadModel(600.0), supply=Supply(12.0, -12.0))
     words = shlex.split(render_command(session, opened))
     assert words[:4] == ["preview", "render", "a b.wav", "OUT.wav"]
     options = list(zip(words[4::2], words[5::2], strict=True))
@@ -247,5 +285,24 @@ def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> No
     assert parse_value(parts["C1"], "capacitance") == 1.23456789e-9
     assert "R2" not in parts
     assert ("--full-scale", "+18 dBu") in options
-    assert ("--load", "600.0") in options
+    assert ("--load", "600R") in options
     assert ("--supply", "12.0 -12.0") in options
+
+
+def test_the_render_command_names_every_stage_of_a_cascade(session) -> None:
+    opened = open_stages(["inverting-high-pass", "inverting-low-pass"])
+    session = with_value(replace(session, stage=opened), "2.R1", 4700.0)
+    words = shlex.split(render_command(session, open_stages(session.stage.opened_as)))
+    options = list(zip(words[4::2], words[5::2], strict=True))
+    assert [name for option, name in options if option == "--stage"] == list(opened.opened_as)
+    assert [text for option, text in options if option == "--part"] == ["2.R1=4k7"]
+
+
+def test_parts_of_a_cascade_are_turned_by_their_number(session, engine, clock) -> None:
+    opened = open_stages(["inverting-high-pass", "inverting-low-pass"])
+    desk = Desk(replace(session, stage=opened), engine, now_s=clock)
+    desk.choose([p.designator for p in opened.settable].index("2.R1"))
+    desk.do_value_up()
+    assert engine.sent[-1] == SetPart("2.R1", 11e3)
+    desk.do_reset_part()
+    assert engine.sent[-1] == SetPart("2.R1", 10e3)

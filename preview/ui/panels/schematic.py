@@ -7,12 +7,12 @@ from collections.abc import Sequence
 
 from rich.style import Style
 
-from preview.circuit.parts import OpAmp, Stage, TwoTerminal
+from preview.circuit.parts import OpAmp, Part, Potentiometer, Stage
 from preview.errors import printable
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
 from preview.ui.widgets.board import Board, Row, heading, row
-from preview.ui.words import code, type_name, value
+from preview.ui.words import code, value
 
 __all__ = ["SchematicPanel", "annotated", "drawing_width"]
 
@@ -53,9 +53,9 @@ def annotated(stage: Stage, selected: str | None) -> list[list[tuple[str, str | 
     return lines
 
 
-def _label(part: TwoTerminal | OpAmp, blanks: int) -> str:
+def _label(part: Part, blanks: int) -> str:
     """Designator and value in no more than the blanks behind the designator, one of them left free."""
-    text = type_name(part.type) if isinstance(part, OpAmp) else code(part)
+    text = code(part)
     return f"{part.designator} {text}" if len(text) + 2 <= blanks else part.designator
 
 
@@ -88,10 +88,7 @@ class SchematicPanel(Board):
         palette = self.look.palette
         rows = []
         for part in stage.parts:
-            if isinstance(part, OpAmp):
-                text = f"{part.designator}  {type_name(part.type)}  + {part.plus}, - {part.minus}, out {part.out}"
-            else:
-                text = f"{part.designator}  {value(part)}  from {part.nodes[0]} to {part.nodes[1]}"
+            text = f"{part.designator}  {value(part)}  {_connections(part)}"
             chosen = part.designator == selected
             mark = "▸" if chosen else " "
             rows.append(
@@ -101,6 +98,14 @@ class SchematicPanel(Board):
                 )
             )
         return rows
+
+
+def _connections(part: Part) -> str:
+    """Where it is connected, in words."""
+    if isinstance(part, OpAmp):
+        return f"+ {part.plus}, - {part.minus}, out {part.out}"
+    wiper = f", wiper {part.wiper}" if isinstance(part, Potentiometer) else ""
+    return f"from {part.nodes[0]} to {part.nodes[1]}{wiper}"
 
 
 def _first_line(has_selected: list[bool], room: int) -> int:
