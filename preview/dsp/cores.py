@@ -297,7 +297,7 @@ class MacroCore:
         rows = whole.T
         M = rows[[*range(size), len(rows) - 2 * ports - 1]]
         if ports == 0:
-            return M[:, : size + 3]
+            return np.asarray(M[:, : size + 3])
         conductance = np.zeros((2 * ports, 2 * ports))  # currents at 1/3 and the end, by the voltages there
         charge = np.zeros((2 * ports, size + 3))
         for p, law in enumerate(laws):

@@ -15,6 +15,7 @@ from typing import Any
 
 import numpy as np
 
+from preview.compiled import bare, compiled
 from preview.dsp.kernels import (
     CLIPPED,
     EVENTS,
@@ -23,8 +24,6 @@ from preview.dsp.kernels import (
     SLEW,
     STARVED,
     UNSOLVED,
-    bare,
-    compiled,
     recur,
     signal_part,
 )
@@ -371,7 +370,7 @@ def walk(
 @compiled
 def at_instant(
     row: Any, z: Any, signal: float, slope: float, bend: float, currents: Any, size: int, ports: int
-) -> float:
+) -> Any:
     """A row over an instant at the end of a part of a step."""
     t = row[size] * signal + row[size + 1] * slope + row[size + 2] * bend + row[size + 3]
     for j in range(size):
@@ -419,7 +418,7 @@ def lasts(path: Any, count: int, low: float, high: float, span: Any) -> int:
 
 
 @compiled
-def dot_4(m: Any, r: int, a: float, b: float, c: float, d: float) -> float:
+def dot_4(m: Any, r: int, a: float, b: float, c: float, d: float) -> Any:
     """Part of one row of a matrix times four numbers."""
     return (m[r, 0] * a + m[r, 1] * b) + (m[r, 2] * c + m[r, 3] * d)
 
@@ -427,7 +426,7 @@ def dot_4(m: Any, r: int, a: float, b: float, c: float, d: float) -> float:
 @compiled
 def dot_8(
     m: Any, r: int, a: float, b: float, c: float, d: float, e: float, f: float, g: float, h: float
-) -> float:
+) -> Any:
     """One row of a matrix times eight numbers."""
     low = (m[r, 0] * a + m[r, 1] * b) + (m[r, 2] * c + m[r, 3] * d)
     return low + ((m[r, 4] * e + m[r, 5] * f) + (m[r, 6] * g + m[r, 7] * h))

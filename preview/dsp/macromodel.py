@@ -15,6 +15,7 @@ from __future__ import annotations
 
 import math
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -330,7 +331,7 @@ def _pieces(points: tuple[tuple[float, float], ...]) -> list[tuple[float, float]
     if not points:
         return []
     pieces = [(0.0, points[0][1])]
-    for (i0, d0), (i1, d1) in zip(points[:-1], points[1:], strict=True):
+    for (i0, d0), (i1, d1) in pairwise(points):
         ohm = (d1 - d0) / (i1 - i0)
         if ohm > 0.0:
             pieces.append((ohm, d0 - ohm * i0))

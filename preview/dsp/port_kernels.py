@@ -12,7 +12,8 @@ from typing import Any
 
 import numpy as np
 
-from preview.dsp.kernels import compiled, solve_small
+from preview.compiled import compiled
+from preview.dsp.kernels import solve_small
 
 MAX_TURNS = 60
 """Newton steps that a part of a step may take; 2 or 3 are usual."""
@@ -41,7 +42,7 @@ def junction(law: Any, v: float) -> tuple[float, float]:
 
 
 @compiled
-def limited_move(law: Any, old: float, new: float) -> float:
+def limited_move(law: Any, old: float, new: float) -> Any:
     """A Newton step of a junction voltage, shortened where the exponential would run away [Nagel1975]."""
     if law[HALF] > 0.0:
         return new

@@ -11,7 +11,8 @@ from typing import Any
 
 import numpy as np
 
-from preview.dsp.kernels import compiled, solve_small
+from preview.compiled import compiled
+from preview.dsp.kernels import solve_small
 
 LEVELS = 5
 """Halvings of a step in which the regime changes."""
@@ -266,7 +267,7 @@ def fill_parts(
     lines: Any,
     held: Any,
     right: Any,
-) -> bool:
+) -> Any:
     """Matrices of a regime: of a whole step, and unless ``whole_only`` of its half, quarter ... as well.
 
     Parameters

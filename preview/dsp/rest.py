@@ -1,4 +1,4 @@
-"""Where a circuit rests without a signal: its DC operating point, rails, currents, input ranges and diodes respected."""
+"""Where a circuit rests without a signal: the DC operating point with every limit and every diode."""
 
 from __future__ import annotations
 

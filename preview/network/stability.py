@@ -47,7 +47,7 @@ def _check_real(netlist: Netlist) -> None:
         whole[n + i, size + j] = wt[i, 0]
         whole[size + j, :size] = w2 * e
         whole[size + j, size + j] = -w2
-    _refuse_growth(np.linalg.eigvals(whole))
+    _refuse_growth(np.asarray(np.linalg.eigvals(whole), dtype=np.complex128))
 
 
 def _refuse_growth(poles: NDArray[np.complex128]) -> None:
