@@ -700,12 +700,12 @@ def run_macro(
     Parameters
     ----------
     whole : (g, c, r)
-        Matrix of a step in which every op-amp follows, columns first, at the way stations of a glide; g = 1 without one.
+        Matrix of a step in which every op-amp follows, columns first, at each way station of a glide; else g = 1.
     all_equations : tuple
         ``base, turn, rate, out, walls, plus, port`` at each station, see ``macromodel.MacroEquations``.
     all_laws, all_rails, all_walls, all_gains : (g, np, LAW), (g, 2, k), (g, 2, G), (g, G)
-        Laws of the ports; lowest and highest voltage of each op-amp; limits of each wall; how far a wall's row moves with
-        its op-amp.
+        Laws of the ports; lowest and highest voltage of each op-amp; limits of each wall; how far its row moves
+        with its op-amp.
     owner : (G,) int64
         Op-amp that each wall limits; walls 0 to k - 1 are the output currents, k to 2k - 1 the output pins.
     fixed_limits : tuple of (k,)
@@ -717,7 +717,8 @@ def run_macro(
     state, regimes, places : (channels, N), (channels, k) int64, (channels, k) int64
         States; what each op-amp does; where its + input is.
     stats, all_extremes, all_junctions : (channels, k, STATS), (channels, k + G, 3), (channels, 4, np)
-        Running statistics; highest, lowest and latest of every op-amp and wall; junction voltages: at present, room, room, slope.
+        Running statistics; highest, lowest and latest of every op-amp and wall; junction voltages: at present,
+        room, room, slope.
     noise : (channels, N + 1, steps)
         What noise adds to the states and to the output's mean in each step; (channels, 0, 0) for none.
     at, leg_steps : int
