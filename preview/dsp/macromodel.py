@@ -6,7 +6,7 @@ An op-amp is an integrator ``w`` behind its input difference ``e`` and in front 
     wt = 2 pi gain-bandwidth, wp = wt / open-loop gain
 
 A second pole puts a lag ``q' = w2 (e - q)`` in the place of ``e``. The network sees ``w`` as a voltage behind the
-output stage, its input currents as currents drawn from its nodes, and a diode as a current that flows between two nodes. What
+output stage, its input currents as currents drawn from its nodes, and a diode as a current between two nodes. What
 limits an op-amp besides its rails is a *wall*: a row over the state that must stay between two values, such as the
 output current, or the voltage of the pin less the drop that its load current causes.
 """
