@@ -12,6 +12,7 @@ from preview.circuit.netlist import Netlist
 from preview.dsp import kernels, macro_kernels, port_kernels, regime_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
+from preview.dsp.noise import NoiseSetting, NoiseSource
 from preview.dsp.rest import resting_state
 from preview.errors import CircuitError
 from preview.network.expansion import has_real_opamps
@@ -25,6 +26,8 @@ Matrices = tuple[Real, ...]
 
 MOST_OPAMPS = 8
 """Op-amps with limits of their own in one circuit."""
+BEYOND_BELIEF = 1e7
+"""A voltage or current of this size is a fault of the computation [V, A]."""
 REGIMES = 48
 """Regimes whose matrices are kept."""
 
@@ -53,20 +56,32 @@ class Core(Protocol):
     def clear(self) -> None:
         """Start the statistics anew."""
 
+    def trouble(self) -> str | None:
+        """The node or part whose state is no number or beyond belief; None while all is well."""
+
+    def unsolved(self) -> float:
+        """Steps without a solution since ``clear``."""
+
+    def first_name(self) -> str:
+        """The first op-amp, or diode where there is none, to name when no solution is found."""
+
     def reset(self, matrices: Matrices) -> None:
         """Back to rest."""
 
 
-def core_for(netlist: Netlist, channels: int, step_s: float) -> Core:
-    """The core that computes this circuit.
+def core_for(
+    netlist: Netlist, channels: int, step_s: float, *, noise: NoiseSetting | None = None, factor: int = 1
+) -> Core:
+    """The core that computes this circuit; ``factor`` is the steps in a frame.
 
     Raises
     ------
     CircuitError
         It cannot be computed.
     """
-    core: Core = (MacroCore if runs_as_they_are(netlist) else IdealCore)(netlist, channels, step_s)
-    return core
+    if noise is None and not runs_as_they_are(netlist):
+        return IdealCore(netlist, channels, step_s)
+    return MacroCore(netlist, channels, step_s, noise=noise, factor=factor)
 
 
 def runs_as_they_are(netlist: Netlist) -> bool:
@@ -165,6 +180,21 @@ class IdealCore:
         y = self._state[:, self._n : self._n + self._k]
         self.stats[:, :, kernels.HIGH] = self.stats[:, :, kernels.LOW] = y
 
+    def unsolved(self) -> float:
+        """See ``Core``."""
+        return float(self.stats[:, :, kernels.UNSOLVED].sum())
+
+    def first_name(self) -> str:
+        """See ``Core``."""
+        return self._topology.netlist.opamps[0].designator
+
+    def trouble(self) -> str | None:
+        """See ``Core``."""
+        worst = np.abs(self._state[:, : self._n + self._k]).max(axis=0, initial=0.0)
+        if np.all(worst < BEYOND_BELIEF):
+            return None
+        return self._topology.state_name(int(np.argmax(np.where(np.isfinite(worst), worst, np.inf))))
+
     def reset(self, matrices: Matrices) -> None:  # noqa: ARG002 - nothing in it rests elsewhere than at zero
         """No charge, no current."""
         self._state[...] = 0.0
@@ -175,7 +205,15 @@ class IdealCore:
 class MacroCore:
     """Op-amps as they are, ideal ones beside them, diodes and fixed voltages: see ``macromodel``."""
 
-    def __init__(self, netlist: Netlist, channels: int, step_s: float) -> None:
+    def __init__(
+        self,
+        netlist: Netlist,
+        channels: int,
+        step_s: float,
+        *,
+        noise: NoiseSetting | None = None,
+        factor: int = 1,
+    ) -> None:
         k, c = len(netlist.opamps), channels
         if k > MOST_OPAMPS:
             raise CircuitError(
@@ -224,7 +262,11 @@ class MacroCore:
             np.zeros(2 * k + walls + 1, dtype=np.int64),
             np.zeros((wide, wide)),
         )
-        self._no_noise = np.zeros((c, 0, 0))
+        self._setting, self._factor = noise, factor
+        self._noise: NoiseSource | None = None
+        self._noise_memory: Real | None = None
+        self._steps = 0
+        self._added = np.zeros((c, 0, 0))
         self._matrices: Matrices | None = None
 
     def values_of(self, netlist: Netlist) -> Real:
@@ -233,7 +275,41 @@ class MacroCore:
 
     def matrices(self, values: Real) -> Matrices:
         """Whole step while every op-amp follows, the continuous equations behind it, and the limits."""
+        if self._setting is not None:  # the noise of the values that are gone to
+            self._noise = NoiseSource(self._model, values[-1], self._setting, self._factor)
         return self._prepared(self._model.equations(values), values)
+
+    def power_on(self, values: Real, shares: Real, steps: int) -> Matrices:
+        """Matrices while the supply comes up through ``shares``, equally spaced over ``steps`` steps."""
+        along = np.repeat(values[None], len(shares), axis=0)
+        per_step = float(shares[-1] - shares[0]) / steps
+        return self._prepared(
+            self._model.equations(along, supply=shares, supply_per_step=per_step), along, shares
+        )
+
+    def switch_off(self) -> None:
+        """No charge, no current, no supply: where a circuit is before it is switched on."""
+        self._state[...] = 0.0
+        self._junctions[...] = 0.0
+        self._kinds[...] = regime_kernels.FOLLOWS
+        self._ranges[...] = regime_kernels.IN_RANGE
+
+    def unsolved(self) -> float:
+        """See ``Core``."""
+        return float(self.stats[:, :, kernels.UNSOLVED].sum())
+
+    def first_name(self) -> str:
+        """See ``Core``."""
+        ports, opamps = self._model.netlist.ports, self._model.netlist.opamps
+        return str((ports[0] if ports else opamps[0]).designator)
+
+    def trouble(self) -> str | None:
+        """The node or part whose state is no number or beyond belief; None while all is well."""
+        worst = np.abs(self._state).max(axis=0) if self._state.size else np.zeros(0)
+        if np.all(worst < BEYOND_BELIEF):
+            return None
+        i = int(np.argmax(np.where(np.isfinite(worst), worst, np.inf)))
+        return self._model.where(i)
 
     def _prepared(self, e: MacroEquations, values: Real, supply: Real | None = None) -> Matrices:
         model = self._model
@@ -261,6 +337,7 @@ class MacroCore:
         if matrices is not self._matrices:
             self._book[...] = 0
             self._matrices = matrices
+        added = self._noise_of(steps)
         whole, *equations = matrices[:8]
         macro_kernels.run_macro(
             whole,
@@ -278,7 +355,7 @@ class MacroCore:
             self.stats,
             self._extremes,
             self._junctions,
-            self._no_noise,
+            added,
             at,
             leg_steps,
             self._book,
@@ -287,6 +364,19 @@ class MacroCore:
             self._room,
             self._tracks,
         )
+
+    def _noise_of(self, steps: int) -> Real:
+        """What noise adds in the next steps; nothing without a setting."""
+        if self._noise is None:
+            return self._added
+        channels = len(self._state)
+        if self._added.shape[2] < steps:
+            self._added = np.zeros((channels, self._model.size + 1, steps))
+        self._noise_memory = self._noise.take_over(self._noise_memory, channels)
+        for c in range(channels):
+            self._noise.fill(c, self._steps, steps, self._noise_memory[c], self._added[c])
+        self._steps += steps
+        return self._added
 
     def small_signal_step(self, netlist: Netlist) -> Real:
         """See ``following_step``; the ports take the slope that they have at rest."""
@@ -346,6 +436,7 @@ class MacroCore:
         self._kinds[...], self._ranges[...] = rest.kinds, rest.ranges
         self._junctions[...] = 0.0
         self._junctions[:, 0] = rest.junctions
+        self._steps, self._noise_memory = 0, None
         self._heights[...] = rest.heights
         self._rails, self._wall_limits = matrices[9][-1], matrices[10][-1]
         self._extremes[...] = self._heights[:, None]

@@ -26,7 +26,7 @@ from preview.network.expansion import expanded, gain_bandwidth_hz, inner_node, o
 from preview.network.opamps import second_pole_hz
 from preview.network.statespace import Topology
 
-__all__ = ["Limits", "MacroEquations", "MacroModel"]
+__all__ = ["Limits", "MacroEquations", "MacroModel", "NoiseColumns"]
 
 Real = NDArray[np.float64]
 
@@ -72,6 +72,32 @@ class Limits:
     """(g, G): how far a wall's row moves with its op-amp."""
     laws: Real
     """(g, np, LAW): the ports, see ``port_kernels``."""
+
+
+@dataclass(frozen=True, slots=True)
+class NoiseColumns:
+    """Rates of the states, and the output, by one unit of noise; last row the output."""
+
+    nodes: tuple[str, ...]
+    """The circuit's nodes."""
+    by_node: Real
+    """(N + 1, nodes): by one ampere drawn from each."""
+    by_input: Real
+    """(N + 1, k): by one volt at each op-amp's input difference."""
+
+    def drawn(self, node: str) -> Real:
+        """By a current drawn from a node."""
+        if node not in self.nodes:
+            return np.zeros(len(self.by_node))
+        return np.asarray(self.by_node[:, self.nodes.index(node)])
+
+    def between(self, a: str, b: str) -> Real:
+        """By a current from one node through a part to another."""
+        return self.drawn(a) - self.drawn(b)
+
+    def at_input(self, opamp: int) -> Real:
+        """By a voltage at an op-amp's input difference."""
+        return np.asarray(self.by_input[:, opamp])
 
 
 @dataclass(frozen=True, slots=True)
@@ -127,6 +153,14 @@ class MacroModel:
     def values_of(self, netlist: Netlist) -> Real:
         """Values of a netlist of this topology, in the model's order, shape (branches,)."""
         return self.topology.values_of(expanded(netlist))
+
+    def where(self, state: int) -> str:
+        """Node or part of a state."""
+        if state >= self.n:
+            return str(self.sites[state - self.n].out)
+        if state >= self.topology.states:
+            return str(self.sites[self._lags[state - self.topology.states]].designator)
+        return self.topology.state_name(state)
 
     def fixed_limits(self) -> tuple[Real, Real, Real, Real]:
         """Fastest changes up and down [V/step]; least and greatest voltage of the + inputs [V]; each (k,)."""
@@ -231,6 +265,33 @@ class MacroModel:
             plus=np.ascontiguousarray(plus_v if self._watches_inputs else plus_v[:, :0]),
             port=np.ascontiguousarray(port_v),
         )
+
+    def noise_inputs(self, values: Real) -> tuple[Real, NoiseColumns]:
+        """Generator of the states and of the output's integral, (N + 1, N + 1) per step, and how noise enters it."""
+        e = self.equations(values[None])
+        space = self.topology.evaluate(values[None])
+        n, size, T = self.n, self.size, self.step_s
+        n0 = space.A.shape[1]
+        moves, turn = e.rate[0, 0], e.turn[0]
+        A = np.zeros((size + 1, size + 1))
+        A[:n, :size] = (e.base[0] - turn @ moves)[:, :size]
+        A[n:size, :size] = moves[:, :size]
+        A[size, :size] = e.out[0, :size]
+        drawn = slice(1 + self.k + len(self.netlist.fixed), None)
+        wt = T * 2.0 * np.pi * np.array([gain_bandwidth_hz(o.model) for o in self.sites])
+        by_input = np.zeros((size + 1, self.k))  # what one volt at each input difference does
+        for i, site in enumerate(self.sites):
+            if i in self._lags:
+                by_input[n0 + self._lags.index(i), i] = T * 2.0 * np.pi * second_pole_hz(site.model)
+            else:
+                by_input[n + i, i] = wt[i]
+        by_node = np.zeros((size + 1, len(self._nodes)))
+        by_node[:n0] = T * space.B[0, :, drawn]
+        by_node += by_input @ space.D_e[0, :, drawn]
+        by_node[size] = space.D_out[0, 0, drawn]
+        for columns in (by_input, by_node):
+            columns[:n] -= turn @ columns[n:size]
+        return A, NoiseColumns(self._nodes, by_node, by_input)
 
     def _rates(self, base: Real, e: Real, plus_v: Real, n0: int) -> Real:
         """Rates of the op-amps; those of the lags are put into ``base``."""

@@ -9,24 +9,31 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from preview.circuit.netlist import Branch, Netlist, OpAmpSite
+from preview.circuit.netlist import Branch, Netlist, OpAmpSite, Track
 from preview.circuit.opamp import IDEAL, OpAmpModel, OpAmpReading
 from preview.circuit.parts import PartKind
 from preview.compiled import in_cache
 from preview.dsp import kernels, rate_kernels
 from preview.dsp.block import Volts
-from preview.dsp.cores import Matrices, core_for
+from preview.dsp.cores import MacroCore, Matrices, core_for
+from preview.dsp.noise import NoiseSetting
 from preview.dsp.oversample import LATENCY_FRAMES, design, factor_for
 from preview.errors import PartValueError, UnknownNameError
 from preview.network.stability import check_stable
 from preview.values.quality import Quality
 
-__all__ = ["GLIDE_S", "Glide", "StageProcessor", "load_kernels"]
+__all__ = ["GLIDE_S", "Fault", "Glide", "NoiseSetting", "StageProcessor", "load_kernels"]
 
 Real = NDArray[np.float64]
 
 GLIDE_S = 0.015
 """Time that a part takes from one value to the next [s]."""
+
+POWER_ON_S = 0.05
+"""Time that a supply takes to come up [s]."""
+
+MOST_UNSOLVED = 0.25
+"""Share of a block's steps that may be left without a solution before the circuit is stopped."""
 
 BLOCK_FRAMES = 128
 """Frames computed at a time."""
@@ -42,6 +49,20 @@ class Glide:
     """Matrices at each way station."""
     steps_per_leg: int
     """Steps from one station to the next."""
+    settled: Matrices | None = None
+    """Matrices that hold afterwards, where they are not those of the last station."""
+
+
+@dataclass(frozen=True, slots=True)
+class Fault:
+    """Why a circuit was stopped; it gives 0 V until it is recovered."""
+
+    node: str
+    """Node or part at which it happened."""
+    time_s: float
+    """When, in signal time since it began [s]."""
+    reason: str
+    """What happened."""
 
 
 class StageProcessor:
@@ -57,6 +78,8 @@ class StageProcessor:
         Channels, each with its own copy of the circuit's state.
     quality : Quality
         Steps per frame.
+    noise : NoiseSetting, optional
+        The noise of its parts is heard too.
 
     Raises
     ------
@@ -64,8 +87,18 @@ class StageProcessor:
         The circuit cannot be run.
     """
 
-    def __init__(self, netlist: Netlist, *, sample_rate_hz: float, channels: int, quality: Quality) -> None:
+    def __init__(
+        self,
+        netlist: Netlist,
+        *,
+        sample_rate_hz: float,
+        channels: int,
+        quality: Quality,
+        noise: NoiseSetting | None = None,
+    ) -> None:
         self.quality = quality
+        self.fault: Fault | None = None
+        self._frames = self._unsolved = 0
         self.sample_rate_hz = float(sample_rate_hz)
         self.channels = channels
         self.filters = design(factor_for(quality, sample_rate_hz))
@@ -75,7 +108,7 @@ class StageProcessor:
         self._next: Glide | None = None
         self._at = 0
         check_stable(netlist)
-        self._core = core_for(netlist, channels, self.step_s)
+        self._core = core_for(netlist, channels, self.step_s, noise=noise, factor=self.filters.factor)
         self._matrices = self._core.matrices(self._core.values_of(netlist)[None])
         f, c, b = self.filters, channels, BLOCK_FRAMES
         steps = b * f.factor
@@ -112,11 +145,30 @@ class StageProcessor:
         return self._next is None
 
     def reset(self) -> None:
-        """Back to rest: no charge, no current, empty filters."""
+        """Back to rest: the operating point without a signal, empty filters; a fault is forgotten."""
+        self.fault = None
+        self._frames = self._unsolved = 0
         for a in (self._x, self._a, self._u, self._split, self._w):
             a[...] = 0.0
         self._core.reset(self._matrices)
         self.clear_readings()
+
+    def power_on(self, ramp_s: float = POWER_ON_S) -> None:
+        """Begin as if switched on: nothing charged, the supply coming up in a straight line over ``ramp_s``.
+
+        Allocates, so not for the audio thread. Ideal circuits without a supply of their own have nothing to come up.
+        """
+        self.reset()
+        if not isinstance(self._core, MacroCore):
+            return
+        stations = 200
+        steps_per_leg = max(1, round(ramp_s / self.step_s / stations))
+        shares = np.linspace(1.0 / stations, 1.0, stations + 1)
+        values = self._core.values_of(self._netlist)
+        settled = self._core.matrices(values[None])
+        coming = self._core.power_on(values, shares, steps_per_leg * stations)
+        self._core.switch_off()
+        self._begin(Glide(self._netlist, coming, steps_per_leg, settled))
 
     def plan(self, values: Mapping[str, float]) -> Glide:
         """Prepare a glide to other part values; allocates, so not for the audio thread.
@@ -137,7 +189,8 @@ class StageProcessor:
         for name, value in values.items():
             if name not in known:
                 raise UnknownNameError(f"no part {name} in this circuit", f"it has {', '.join(known)}")
-            if not (math.isfinite(value) and value > 0.0):
+            may_be_zero = any(name == c.designator for c in self._netlist.controls)
+            if not (math.isfinite(value) and (value > 0.0 or (may_be_zero and value == 0.0))):
                 raise PartValueError(f"{name} = {value}: a part value is a positive number")
         target = self._netlist.with_values(values)
         start = np.log(self._core.values_of(self._netlist))
@@ -147,6 +200,16 @@ class StageProcessor:
         steps = max(1, round(GLIDE_S / self.step_s / legs))
         along = 0.5 - 0.5 * np.cos(np.pi * np.arange(legs + 1) / legs)
         values_along = np.exp(start + along[:, None] * (end - start))
+        for i, part in enumerate(along[1:-1], 1):  # a wiper moves evenly, not by ratio
+            turned = {
+                c.designator: c.setting + part * (values[c.designator] - c.setting)
+                for c in self._netlist.controls
+                if isinstance(c, Track) and c.designator in values
+            }
+            if turned:
+                moved = self._core.values_of(self._netlist.with_values(turned))
+                track = moved != self._core.values_of(self._netlist)
+                values_along[i, track] = moved[track]
         values_along[-1] = self._core.values_of(target)
         return Glide(target, self._core.matrices(values_along), steps)
 
@@ -167,6 +230,9 @@ class StageProcessor:
         """Fill ``volts_out`` from the next ``volts_in``, both (frames, channels)."""
         frames = volts_in.shape[0]
         f = self.filters
+        if self.fault is not None:
+            volts_out[...] = 0.0
+            return
         done = 0
         while done < frames:
             count = min(BLOCK_FRAMES, frames - done)
@@ -185,6 +251,20 @@ class StageProcessor:
                 if self._at >= self._glide.steps_per_leg * (self._glide.matrices[0].shape[0] - 1):
                     self._arrive()
             done += count
+            self._frames += count
+            node = self._core.trouble()
+            if node is not None:
+                reason = "its voltage or current grows beyond belief"
+                self.fault = Fault(node, self._frames / self.sample_rate_hz, reason)
+                volts_out[done - count :] = 0.0
+                return
+            unsolved = int(self._core.unsolved())
+            if unsolved - self._unsolved > MOST_UNSOLVED * steps:
+                reason = "its limits and diodes find no common solution"
+                self.fault = Fault(self._core.first_name(), self._frames / self.sample_rate_hz, reason)
+                volts_out[done - count :] = 0.0
+                return
+            self._unsolved = unsolved
 
     def _arrive(self) -> None:
         """The glide has ended: stay at its last station, or go on to the next glide."""
@@ -192,6 +272,8 @@ class StageProcessor:
         if self._next is not None:
             following, self._next = self._next, None
             self._begin(following)
+        elif ended is not None and ended.settled is not None:
+            self._matrices = ended.settled
         elif ended is not None:
             # one station: the last; views, no copies
             self._matrices = tuple(m[-1:] for m in ended.matrices)

@@ -184,6 +184,7 @@ class Topology:
         root = np.zeros((width, len(self.known)))
         along = np.zeros((width, width - len(floating)))
         placed = {nodes[0] for nodes in floating}
+        self._tree: list[str] = []
         edge = 0
         grown = True
         while grown:
@@ -201,6 +202,7 @@ class Topology:
                     along[where[far], edge] = 1.0
                     edge += 1
                     placed.add(far)
+                    self._tree.append(far)
                     grown = True
         return along, root, whole, floating
 
@@ -299,6 +301,12 @@ class Topology:
         C_q, D_q = in_x(known(pick @ weigh(Cs, c, Cf), pick @ weigh(Cs, c, Cs)))
         C_v, D_v = in_x(known(self._v_free, self._v_known))
         return StateSpace(A, B, to_x, C_out, D_out, C_e, D_e, C_i, D_i, C_q, D_q, C_v, D_v)
+
+    def state_name(self, state: int) -> str:
+        """Node at the end of a capacitor, or designator of an inductor, that a state belongs to; then the outputs."""
+        coils = [self.netlist.branches[i].designator for i in self._positions[PartKind.INDUCTOR]]
+        names = [*self._tree, *coils, *(o.out for o in self.netlist.opamps)]
+        return str(names[state])
 
     def values_of(self, netlist: Netlist) -> Real:
         """Values of a netlist of this topology in the order of its branches, shape (branches,)."""
