@@ -7,9 +7,11 @@ from enum import StrEnum
 from pathlib import Path
 
 from preview.circuit.netlist import Netlist, netlist
+from preview.circuit.opamp import Limit
 from preview.circuit.parts import Stage, Supply
 from preview.values.levels import FullScale
 from preview.values.quality import Quality
+from preview.values.stimulus import Stimulus
 
 __all__ = ["AtEnd", "Session"]
 
@@ -28,7 +30,7 @@ class Session:
     """Everything needed to hear or repeat a render."""
 
     audio: Path | None
-    """The recording; None for none yet."""
+    """The recording; None for none yet, a test signal or live input."""
     stage: Stage
     """The stage with the part values and op-amp types as set."""
     supply: Supply
@@ -45,6 +47,14 @@ class Session:
     """What happens at the end of the file or region."""
     notes: tuple[str, ...] = field(default=())
     """How each option was understood, one line each, for the screen."""
+    without: tuple[Limit, ...] = ()
+    """Limits taken away from every op-amp, to hear what they do."""
+    stimulus: Stimulus | None = None
+    """The test signal in place of a recording."""
+    live: bool = False
+    """Whether the sound device's input is heard in place of a recording."""
+    live_device: str | None = None
+    """Input device by name; None for the default."""
 
     def netlist(self) -> Netlist:
         """The checked netlist; raises CircuitError."""
@@ -53,4 +63,5 @@ class Session:
             supply=self.supply,
             source_ohm=self.source_ohm,
             load_ohm=self.load_ohm,
+            without=self.without,
         )

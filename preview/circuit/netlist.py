@@ -3,13 +3,13 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass, replace
 
 from preview.circuit.checks import check
 from preview.circuit.limits import check_value
 from preview.circuit.nodes import GND, IN, LOAD_DESIGNATOR, OUT, SOURCE_DESIGNATOR, SOURCE_NODE
-from preview.circuit.opamp import IDEAL, PERFECT, OpAmpModel
+from preview.circuit.opamp import IDEAL, PERFECT, Limit, OpAmpModel
 from preview.circuit.opamp_library import find_opamp
 from preview.circuit.parts import OpAmp, PartKind, Stage, Supply
 from preview.errors import CircuitError, UnknownNameError
@@ -192,6 +192,7 @@ def netlist(
     supply: Supply | None = None,
     source_ohm: float = 0.0,
     load_ohm: float | None = None,
+    without: Collection[Limit] = (),
 ) -> Netlist:
     """The checked netlist of a stage.
 
@@ -203,6 +204,8 @@ def netlist(
         Resistance of the source [ohm]; 0 for an ideal one.
     load_ohm : float, optional
         Resistance from out to gnd [ohm]; None for no load.
+    without : collection of Limit
+        Limits taken away from every op-amp, to hear what they do.
 
     Raises
     ------
@@ -226,7 +229,7 @@ def netlist(
         input_node=SOURCE_NODE if source_ohm != 0.0 else IN,
         output_node=OUT,
         branches=tuple(branches),
-        opamps=tuple(_site(opamp, rails, where) for opamp in stage.opamps),
+        opamps=tuple(_site(opamp, rails, where, without) for opamp in stage.opamps),
     )
     check(circuit, where)
     return circuit
@@ -248,15 +251,16 @@ def check_supply(supply: Supply, where: str) -> None:
         raise CircuitError(f"{found}: beyond 1 kV", "such as +15 V and -15 V")
 
 
-def _site(opamp: OpAmp, rails: Supply, where: str) -> OpAmpSite:
+def _site(opamp: OpAmp, rails: Supply, where: str, without: Collection[Limit]) -> OpAmpSite:
     """The op-amp with the limits its type has on these rails."""
     place = f"{where}, {opamp.designator}"
     try:
-        model = find_opamp(opamp.type)
+        found = find_opamp(opamp.type)
     except UnknownNameError as error:
         raise UnknownNameError(f"{place}: {error.message}", error.hint) from error
+    model = found.without(without)
     high_v, low_v = math.inf, -math.inf
-    if model is not PERFECT:
+    if found is not PERFECT:
         high_v, low_v = rails.positive_v, rails.negative_v
     if model.real:
         _check_type_supply(model, rails, place)
