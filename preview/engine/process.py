@@ -15,7 +15,7 @@ from multiprocessing.connection import Connection
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from preview.engine.messages import ClearHolds, Command, Notice, Quit, Snapshot
+from preview.engine.messages import ClearHolds, Command, Notice, Quit, Report, Snapshot
 from preview.meters.reading import LevelReading
 from preview.session import Session
 
@@ -55,6 +55,7 @@ class EngineProcess:
         self._connection = connection
         self._unread: Snapshot | None = None
         self._notices: deque[Notice] = deque()
+        self._reports: dict[type[Report], Report] = {}
         self._guard = threading.Lock()
         self._orders: queue.SimpleQueue[EngineConfig | Command | None] = queue.SimpleQueue()
         self._closed = False
@@ -114,6 +115,13 @@ class EngineProcess:
             self._notices.clear()
         return told
 
+    def reports(self) -> list[Report]:
+        """What was found out since the last call, the newest of each kind."""
+        with self._guard:
+            told = list(self._reports.values())
+            self._reports.clear()
+        return told
+
     def close(self, timeout_s: float = 2.0) -> None:
         """Fade out and end the engine, by force if it does not answer; a second call does nothing."""
         if self._closed:
@@ -138,6 +146,8 @@ class EngineProcess:
                         self._unread = _with_peaks_of(message, self._unread)
                     elif isinstance(message, Notice):
                         self._notices.append(message)
+                    elif isinstance(message, Report):
+                        self._reports[type(message)] = message
 
     def _speak(self) -> None:
         """Send the orders on; a full pipe makes this thread wait, not the desk."""
