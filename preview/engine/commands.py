@@ -259,7 +259,7 @@ class Export:
     depth: ExportDepth = "float"
     """Sample format."""
     region: tuple[int, int] | None = None
-    """First frame and frame after the last; None for all of the file, or for one period of a test signal."""
+    """First frame and frame after the last; None for all of the file, one sweep, or 10 s of a test signal."""
 
 
 @dataclass(frozen=True, slots=True)

@@ -166,6 +166,8 @@ def _check(stimulus: Stimulus, text: str, hint: str) -> None:
         trouble = f"a frequency outside 0.1 Hz to {_HIGHEST_HZ:g} Hz"
     elif stimulus.waveform in (Waveform.SWEEP, Waveform.TWO_TONE) and frequencies[0] == frequencies[-1]:
         trouble = "both frequencies are the same"
+    elif stimulus.waveform is Waveform.SQUARE and abs(10.0 * frequencies[0] % 1.0) > 1e-9:
+        trouble = "a square whose frequency is not a multiple of 0.1 Hz"
     elif not _SHORTEST_S <= stimulus.duration_s <= _LONGEST_S:
         trouble = f"a sweep outside {_SHORTEST_S:g} s to {_LONGEST_S:g} s"
     elif not 1e-3 <= stimulus.first_ratio <= 1e3:

@@ -70,6 +70,7 @@ def test_the_text_of_a_signal_reads_back_as_the_same(text):
         ("burst 1k ten 1V", "2 figures after burst"),
         ("two-tone 60 7k 4:0 1V", "not two numbers joined by :"),
         ("two-tone 60 7k 5000:1 1V", "a ratio outside"),
+        ("square 100.05 1V", "not a multiple of 0.1 Hz"),
         ("pink 5kV", "outside 1 uV to 1 kV"),
         ("", "empty"),
     ],
