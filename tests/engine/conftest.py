@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 from preview.audio.prefetch import Prefetch
 from preview.circuit.opamp import OpAmpReading
 from preview.engine.player import Player
+from preview.engine.readings import FaultReading
 from preview.meters.level import LevelMeter
 from preview.values.quality import Quality
 
@@ -54,6 +55,11 @@ class DelayCircuit:
         self.latency_frames = latency_frames
         self.gliding = False
         self.swapping = False
+        self.fault: FaultReading | None = None
+        self.hurry = 1
+        self.letter = "A"
+        self.null: tuple[str, str] | None = None
+        self.match_gain = 1.0
         self.fail_with: float | None = None
         self.resets = 0
         self._bypass = False
@@ -66,8 +72,12 @@ class DelayCircuit:
         if self.fail_with is not None:
             volts_out[-1] = self.fail_with
 
+    def match(self, samples: NDArray[np.float64]) -> None:
+        samples *= self.match_gain
+
     def reset(self) -> None:
         self._held[:] = 0.0
+        self.fault = None
         self.resets += 1
 
     def set_bypass(self, on: bool) -> None:
@@ -83,7 +93,7 @@ class DelayCircuit:
 class Rig:
     """A player on a memory recording, driven by hand."""
 
-    def __init__(self, samples: NDArray[np.float64], *, loop: bool, volume_db: float) -> None:
+    def __init__(self, samples: NDArray[np.float64], *, loop: bool, volume_db: float, in_volts: bool) -> None:
         self.samples = samples
         self.reader = Prefetch(MemorySource(samples), loop=loop)
         channels = samples.shape[1]
@@ -96,6 +106,7 @@ class Rig:
             meters=(LevelMeter(RATE_HZ, channels), LevelMeter(RATE_HZ, channels)),
             volume_db=volume_db,
             max_frames=256,
+            in_volts=in_volts,
         )
         self.player.inbox.append(self.take_circuit)
 
@@ -118,11 +129,15 @@ def make_rig() -> Iterator[Callable[..., Rig]]:
     rigs: list[Rig] = []
 
     def make(
-        samples: NDArray[np.float64] | None = None, *, loop: bool = False, volume_db: float = 0.0
+        samples: NDArray[np.float64] | None = None,
+        *,
+        loop: bool = False,
+        volume_db: float = 0.0,
+        in_volts: bool = False,
     ) -> Rig:
         if samples is None:
             samples = np.random.default_rng(7).uniform(-0.4, 0.4, (4000, 1))
-        rigs.append(Rig(samples, loop=loop, volume_db=volume_db))
+        rigs.append(Rig(samples, loop=loop, volume_db=volume_db, in_volts=in_volts))
         return rigs[-1]
 
     yield make

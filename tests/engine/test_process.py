@@ -17,7 +17,7 @@ from preview.audio.sink import FileSink
 from preview.circuit.library import find_stage
 from preview.dsp.oversample import design
 from preview.engine import messages
-from preview.engine.host import _Bench
+from preview.engine.bench import Bench
 from preview.engine.messages import Snapshot
 from preview.engine.process import EngineConfig, EngineProcess
 from preview.session import AtEnd, Session
@@ -156,11 +156,11 @@ def test_a_change_of_quality_finds_its_filters_designed(make_rig):
     # designing them takes 0.15 s of both cores, which a device does not wait for while it plays
     netlist = session_of(Path("none")).netlist()
     design.cache_clear()
-    bench = _Bench(make_rig().player, lambda: None)
-    bench.build(netlist, Quality.STANDARD)
+    bench = Bench(make_rig().player, lambda: None)
+    bench.build("A", netlist, Quality.STANDARD)
     missed = design.cache_info().misses
     for quality in (Quality.DRAFT, Quality.FINE):
-        bench.build(netlist, quality)
+        bench.build("A", netlist, quality)
     assert design.cache_info().misses == missed
 
 
