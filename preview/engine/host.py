@@ -208,6 +208,7 @@ class Host:
             input_name=(self._outlet.input_name or intake.name) if live else intake.name,
             live_latency_s=in_s + snapshot.latency_s if live and in_s else 0.0,
             spectrum=self._last_spectrum,
+            letter=preparer.letter,
             match=self._errands.matcher.on,
             candidates=self._errands.candidates(preparer),
         )

@@ -74,7 +74,7 @@ class HowlGuard:
             return None
         latest = len(signal) - count - round(SHORTEST_S * self._rate_hz)
         spectrum = np.fft.rfft(signal) * np.conj(np.fft.rfft(recent, len(signal)))
-        product = np.fft.irfft(spectrum, len(signal))[:latest]
+        product = np.abs(np.fft.irfft(spectrum, len(signal))[:latest])  # a loop may also turn its signal over
         squares = np.concatenate([[0.0], np.cumsum(signal * signal)])
         before = np.maximum(squares[count:] - squares[:-count], GROWTH_MAX**-2 * power)[:latest]
         alike = product / np.sqrt(before * power)

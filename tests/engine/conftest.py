@@ -3,19 +3,24 @@
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
+from pathlib import Path
 
 import numpy as np
 import pytest
 from numpy.typing import NDArray
 
 from preview.audio.prefetch import Prefetch
+from preview.audio.sink import FileSink
 from preview.circuit.opamp import OpAmpReading
 from preview.engine.player import Player
+from preview.engine.process import EngineConfig, EngineProcess
 from preview.engine.readings import FaultReading
 from preview.meters.level import LevelMeter
+from preview.session import Session
 from preview.values.quality import Quality
 
 RATE_HZ = 8000
+TONE_RATE_HZ = 48000
 
 
 class MemorySource:
@@ -143,3 +148,27 @@ def make_rig() -> Iterator[Callable[..., Rig]]:
     yield make
     for rig in rigs:
         rig.reader.close()
+
+
+@pytest.fixture
+def tone(tmp_path: Path) -> Path:
+    """Two seconds of a 200 Hz sine, 0.1 of full scale, mono."""
+    path = tmp_path / "tone.wav"
+    with FileSink(path, sample_rate_hz=TONE_RATE_HZ, channels=1) as sink:
+        sink.write(0.1 * np.sin(2 * np.pi * 200 * np.arange(2 * TONE_RATE_HZ) / TONE_RATE_HZ)[:, np.newaxis])
+    return path
+
+
+@pytest.fixture
+def start(tmp_path: Path) -> Iterator[Callable[..., EngineProcess]]:
+    """Starts engines on the silent clock and ends them."""
+    engines: list[EngineProcess] = []
+
+    def make(session: Session, **changes: object) -> EngineProcess:
+        config = EngineConfig(session=session, silent=True, log=tmp_path / "engine.log", **changes)  # type: ignore[arg-type]
+        engines.append(EngineProcess.start(config))
+        return engines[-1]
+
+    yield make
+    for engine in engines:
+        engine.close()

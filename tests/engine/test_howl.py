@@ -58,11 +58,11 @@ NAMES = ["announcement.flac", "bilge-pump.flac", "guitar-phrase.flac"]
 
 
 @pytest.mark.parametrize("delay_s", [0.1, 0.2])
-@pytest.mark.parametrize("gain", [1.3, 2.0, 10.0])
+@pytest.mark.parametrize("gain", [1.3, 2.0, 10.0, -1.3, -10.0])
 def test_a_loop_gain_above_one_is_heard_before_it_reaches_the_limit_of_the_device(gain, delay_s):
     found = howl_at_s(room(hiss(6), gain, delay_s))
     assert found is not None
-    rounds = math.log(10.0 / 1e-4) / math.log(gain)
+    rounds = math.log(10.0 / 1e-4) / math.log(abs(gain))
     assert found[0] <= rounds * delay_s + 0.1
 
 
