@@ -321,6 +321,7 @@ class Deck:
         """The state of everything that is heard."""
         circuit, reader, monitor = self.circuit, self.head.reader, self.monitor
         before, after = self.ears.levels()
+        opamps = self.ears.opamps(circuit) if circuit is not None else ()
         return Snapshot(
             playing=(self._wants_play and not self._held) or self.mode is Mode.FADING,
             position_frame=self.position(),
@@ -330,7 +331,8 @@ class Deck:
             at_end=AtEnd.LOOP if reader.loop else AtEnd.STOP,
             input=before,
             output=after,
-            opamps=self.ears.opamps(circuit) if circuit is not None else (),
+            opamps=opamps,
+            opamp_peaks_v=self.ears.opamp_peaks_v,
             bypass=self.bypass,
             volume_db=monitor.volume_db,
             quality=self.quality,

@@ -33,6 +33,8 @@ class Ears:
         self._handover_frames = round(HANDOVER_S * sample_rate_hz)
         self._unheld_frames = 0
         self._earlier: tuple[OpAmpReading, ...] = ()
+        self.opamp_peaks_v: tuple[float, ...] = ()
+        """Largest output voltage of each op-amp between the last two readings [V]."""
 
     def feed(self, volts_in: Volts, volts_out: Volts, *, swapping: bool) -> None:
         """Take the next frames; while one signal fades into another nothing is held."""
@@ -71,5 +73,9 @@ class Ears:
         return self.input_meter.read(), self.output_meter.read()
 
     def opamps(self, circuit: LiveCircuit) -> tuple[OpAmpReading, ...]:
-        """One reading an op-amp since the holds were cleared."""
-        return joined_readings(self._earlier, circuit.readings())
+        """One reading an op-amp since the holds were cleared; the circuit's own readings begin anew."""
+        fresh = circuit.readings()
+        self._earlier = joined_readings(self._earlier, fresh)
+        self.opamp_peaks_v = tuple(reading.peak_v for reading in fresh)
+        circuit.clear_readings()
+        return self._earlier

@@ -157,6 +157,8 @@ class Snapshot:
     """Device, or ``silent clock``."""
     gliding: bool
     """Whether a part is on its way to a new value."""
+    opamp_peaks_v: tuple[float, ...] = ()
+    """Largest output voltage of each of ``opamps`` since the last snapshot [V]."""
     input_kind: InputKind = InputKind.FILE
     """Where the signal comes from. Live input and an endless signal have a length of 0 frames."""
     input_name: str = ""

@@ -196,8 +196,14 @@ def _with_peaks_of(new: Snapshot, unread: Snapshot | None) -> Snapshot:
     """The new snapshot; its peaks not below those of one that nobody has read."""
     if unread is None:
         return new
+    opamp_peaks_v = new.opamp_peaks_v
+    if len(opamp_peaks_v) == len(unread.opamp_peaks_v):
+        opamp_peaks_v = tuple(map(max, opamp_peaks_v, unread.opamp_peaks_v))
     return replace(
-        new, input=_higher_peaks(new.input, unread.input), output=_higher_peaks(new.output, unread.output)
+        new,
+        input=_higher_peaks(new.input, unread.input),
+        output=_higher_peaks(new.output, unread.output),
+        opamp_peaks_v=opamp_peaks_v,
     )
 
 

@@ -67,6 +67,7 @@ class DelayCircuit:
         self.match_gain = 1.0
         self.fail_with: float | None = None
         self.resets = 0
+        self._events, self._peak_v = 0, 0.0
         self._bypass = False
         self._held = np.zeros((latency_frames, channels))
 
@@ -74,6 +75,8 @@ class DelayCircuit:
         both = np.concatenate([self._held, volts_in])
         self._held = both[len(volts_in) :]
         volts_out[:] = both[: len(volts_in)] * (1.0 if self._bypass else self.gain)
+        self._events += 1
+        self._peak_v = max(self._peak_v, float(np.abs(volts_out).max(initial=0.0)))
         if self.fail_with is not None:
             volts_out[-1] = self.fail_with
 
@@ -89,10 +92,11 @@ class DelayCircuit:
         self._bypass = on
 
     def readings(self) -> tuple[OpAmpReading, ...]:
-        return (OpAmpReading("U1", 1.0, 1.0, -1.0, 3.0, 1, 0.001, 5.0),)
+        """It claims one clip event a block."""
+        return (OpAmpReading("U1", self._peak_v, 1.0, -1.0, 3.0, self._events, 0.001, 5.0),)
 
     def clear_readings(self) -> None:
-        pass
+        self._events, self._peak_v = 0, 0.0
 
 
 class Rig:

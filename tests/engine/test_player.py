@@ -298,12 +298,33 @@ def test_clip_counts_survive_pause_and_play(make_rig):
     rig = make_rig()
     rig.player.play()
     rig.hear(512)
+    before = rig.player.report().opamps[0].clip_events
+    assert before > 0, "the rig's circuit claims one event a block"
     rig.player.pause()
     rig.hear(512)
     rig.player.play()
     rig.hear(512)
-    # the rig's circuit claims one event whenever it is asked: one for each of the two starts, one now
-    assert rig.player.report().opamps[0].clip_events == 3
+    after = rig.player.report().opamps[0].clip_events
+    assert after > before
+    rig.player.clear_holds()
+    rig.hear(64)
+    assert rig.player.report().opamps[0].clip_events < before
+
+
+def test_the_level_of_an_op_amp_is_held_and_also_told_as_it_is(make_rig):
+    samples = np.full((40000, 1), 0.25)
+    samples[2000:] = 0.05
+    rig = make_rig(samples)
+    rig.player.play()
+    rig.hear(1024)
+    first = rig.player.report()
+    assert first.opamp_peaks_v == (pytest.approx(2.0),), "4 V of full scale, a gain of 2"
+    rig.hear(4096)
+    rig.player.report()
+    rig.hear(1024)
+    later = rig.player.report()
+    assert later.opamp_peaks_v == (pytest.approx(0.4),)
+    assert later.opamps[0].peak_v == pytest.approx(2.0)
 
 
 def test_a_mono_recording_is_heard_on_both_channels_and_stereo_on_one_as_the_mean(make_rig):
