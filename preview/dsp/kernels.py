@@ -1,6 +1,6 @@
 """The sample loops of ideal op-amps, compiled; no module state that the loops read, no fast-math.
 
-The other kernel files take the decorator, and what they share, from here.
+The room's other kernel files take what they share from here.
 
 Shapes: c channels, n states, k op-amps, r = n + 3k + 1 rows of a step. Everything is passed in and changed in
 place; nothing allocates. Arithmetic goes sample by sample in one fixed order, so the samples do not depend on
@@ -9,44 +9,11 @@ how the signal is cut into blocks.
 
 from __future__ import annotations
 
-import hashlib
-import os
-from collections.abc import Callable
-from pathlib import Path
 from typing import Any
 
 import numpy as np
-from platformdirs import user_cache_dir
 
-
-def _compiler() -> Callable[[Callable[..., Any]], Any]:
-    """numba's decorator, with a cache in the user's cache folder where that can be written.
-
-    numba's cache of one file does not see changes in functions it calls from another, so the folder is named after
-    what is in all kernel files.
-    """
-    try:
-        sources = sorted(Path(__file__).parent.glob("*kernels.py"))
-        digest = hashlib.sha256(b"".join(source.read_bytes() for source in sources)).hexdigest()[:12]
-        own = Path(user_cache_dir("preview")) / "kernels" / digest
-        folder = Path(os.environ.setdefault("NUMBA_CACHE_DIR", str(own)))
-        folder.mkdir(parents=True, exist_ok=True)
-        cached = os.access(folder, os.W_OK)
-    except OSError:
-        cached = False
-    import numba
-
-    decorate: Callable[[Callable[..., Any]], Any] = numba.njit(cache=cached, nogil=True, error_model="numpy")
-    return decorate
-
-
-compiled = _compiler()
-
-
-def in_cache(name: str) -> bool:
-    """Whether a kernel of that name was compiled on this machine before, so that it only has to be loaded."""
-    return any(Path(os.environ["NUMBA_CACHE_DIR"]).rglob(f"*kernels.{name}-*.nbi"))
-
+from preview.compiled import compiled as compiled
 
 MAX_ITERATIONS = 40
 """Newton steps that a limited step may take; 2 to 5 are usual."""

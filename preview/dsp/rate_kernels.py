@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-from preview.dsp.kernels import compiled
+from preview.compiled import compiled
 
 
 @compiled

@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 from preview.circuit.netlist import Branch, Netlist, OpAmpSite
 from preview.circuit.opamp import IDEAL, OpAmpModel, OpAmpReading
 from preview.circuit.parts import PartKind
+from preview.compiled import in_cache
 from preview.dsp import kernels, rate_kernels
 from preview.dsp.block import Volts
 from preview.dsp.cores import Matrices, core_for
@@ -238,7 +239,7 @@ def load_kernels(*, compile_missing: bool = False) -> bool:
         Branch("R2", PartKind.RESISTOR, "s", "out", 1e3),
     )
     kinds = {"run_steps": IDEAL, "run_macro": OpAmpModel("any", gain_bandwidth_hz=1e6)}
-    there = {name: compile_missing or kernels.in_cache(name) for name in kinds}
+    there = {name: compile_missing or in_cache(name) for name in kinds}
     for name, model in kinds.items():
         if there[name]:
             site = OpAmpSite("U1", "gnd", "s", "out", model.type, 1.0, -1.0, model)
