@@ -6,7 +6,7 @@ import argparse
 import re
 from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
-from typing import TypeVar
+from typing import Any, TypeVar
 
 from preview.circuit.library import find_stage, with_overrides
 from preview.circuit.parts import Stage, Supply
@@ -21,6 +21,7 @@ from preview.values.levels import (
 )
 from preview.values.notation import format_value, parse_value, quoted, understood
 from preview.values.quality import Quality
+from preview.values.stimulus import parse_stimulus
 
 __all__ = [
     "DEFAULT_FULL_SCALE",
@@ -29,6 +30,7 @@ __all__ = [
     "check_together",
     "for_option",
     "frequency_of",
+    "intake_from",
     "join_signed_values",
     "session_from",
     "understood_values",
@@ -54,6 +56,8 @@ VALUE_OPTIONS = (
     "--depth",
     "--device",
     "--end",
+    "--signal",
+    "--input",
 )
 """Options that take a text; one that begins with a minus sign belongs to them all the same."""
 
@@ -174,6 +178,39 @@ def session_from(
     )
     session.netlist()
     return session
+
+
+def intake_from(options: argparse.Namespace) -> dict[str, Any]:
+    """Fields of a session that take a test signal or live input in place of a recording; empty for a recording.
+
+    Raises
+    ------
+    UsageError
+        More than one thing to hear, or an input device for none.
+    """
+    given = [
+        name
+        for name, there in (
+            ("a recording", options.audio is not None),
+            ("--signal", options.signal is not None),
+            ("--live", options.live),
+        )
+        if there
+    ]
+    if len(given) > 1:
+        raise UsageError(f"{given[0]} and {given[1]} at once", "one thing is heard at a time")
+    if options.input is not None and not options.live:
+        raise UsageError("--input is for --live", "add --live or leave it out")
+    if options.live:
+        return {
+            "live": True,
+            "live_device": options.input,
+            "notes": ("live input begins muted: keep the volume low and microphones away from loudspeakers",),
+        }
+    if options.signal is None:
+        return {}
+    stimulus = for_option("--signal", lambda: parse_stimulus(options.signal))
+    return {"stimulus": stimulus, "notes": (f"test signal {stimulus.text}",)}
 
 
 def for_option(option: str, read: Callable[[], T]) -> T:
