@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import threading
 from collections.abc import Callable, Mapping
 from typing import TYPE_CHECKING
 
@@ -32,6 +33,7 @@ class Bench:
         self._ready = ready
         self._rack: Rack | None = None
         self._stages: dict[str, StageProcessor] = {}
+        self._guard = threading.Lock()  # between those who hand over; the audio thread never takes it
         self._handed_over = 0
         self._taken = 0
 
@@ -102,7 +104,8 @@ class Bench:
             self._taken += 1
             start()
 
-        self._handed_over += 1
+        with self._guard:
+            self._handed_over += 1
         self._player.inbox.append(take)
 
     def _change(self, order: Callable[[Rack], None]) -> Callable[[], None]:

@@ -24,6 +24,8 @@ STALL_S = 0.5
 RETRY_S, RETRY_LATER_S = 0.4, 1.5
 RETRY_OFTEN = 50
 FIRST_S = 4.0
+ANY_CHANNELS = 32
+"""A device that offers so many is a mixer before the real one: it takes what it is given and drops the rest."""
 DEVICE_LATENCY_S = 0.08
 """Asked of the device: a value step is heard soon enough, and a busy machine does not break the sound [s]."""
 LIVE_LATENCY_S = 0.1
@@ -266,8 +268,14 @@ class Outlet:
         names = [self.device, None] if any_device and self.device is not None else [self.device]
         rate = player.sample_rate_hz
         for name in names:
-            for channels in dict.fromkeys((max(player.channels, 2), 2, 1)):
-                for device_rate in dict.fromkeys((rate, self._own_rate(name) or rate)):
+            try:
+                own_rate, most = self._own(name)
+            except DeviceError as error:
+                trouble = trouble or error
+                continue
+            several = player.channels if 2 < player.channels <= most < ANY_CHANNELS else 2
+            for channels in dict.fromkeys((several, 2, 1)):
+                for device_rate in dict.fromkeys((rate, own_rate or rate)):
                     try:
                         opened = self._start_device(name, rate, device_rate, channels)
                     except DeviceError as error:
@@ -312,9 +320,12 @@ class Outlet:
         return stream, feed
 
     @staticmethod
-    def _own_rate(name: str | None) -> float | None:
-        """The device's preferred rate [Hz], None where there is no device."""
+    def _own(name: str | None) -> tuple[float | None, int]:
+        """The device's preferred rate [Hz], None where there is no device, and the channels it has."""
         if name is not None:
-            return devices.find_output(name).default_sample_rate_hz
-        found = devices.output_devices()
-        return next((d.default_sample_rate_hz for d in found if d.is_default), None)
+            device: devices.Device | None = devices.find_output(name)
+        else:
+            device = next((one for one in devices.output_devices() if one.is_default), None)
+        return (
+            (device.default_sample_rate_hz, device.max_output_channels) if device is not None else (None, 2)
+        )

@@ -26,6 +26,7 @@ __all__ = ["Worker"]
 
 NICE = 10
 IDLE_S = 3600.0
+PATIENCE_S = 0.3
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,9 +75,11 @@ class Worker:
         if self._connection is not None:
             self._connection.close()
         if self._process is not None:
-            self._process.join(1.0)
-            if self._process.is_alive():
-                self._process.kill()
+            self._process.join(PATIENCE_S)
+            for force in (self._process.terminate, self._process.kill):
+                if self._process.is_alive():
+                    force()
+                    self._process.join(PATIENCE_S)
 
     def _speak(self) -> None:
         """Start the process, and again after it has died; send it the orders."""
@@ -114,6 +117,7 @@ class Worker:
 
 def _child(connection: Connection) -> None:
     """Runs in the child until the engine is gone."""
+    signal.signal(signal.SIGTERM, lambda *_: sys.exit())  # so that what is half written is taken away
     for number in (signal.SIGINT, *([signal.SIGHUP] if sys.platform != "win32" else [])):
         signal.signal(number, signal.SIG_IGN)
     if hasattr(os, "nice"):

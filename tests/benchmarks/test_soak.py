@@ -17,11 +17,11 @@ import pytest
 import preview.dsp.kernels  # noqa: F401 - names the folder of compiled kernels, for the desks started here too
 from preview.audio.sink import FileSink
 
-pytestmark = [pytest.mark.sound, pytest.mark.slow]
-
 RATE_HZ = 48_000
 TONE_HZ = 200
 SOAK_S = float(os.environ.get("PREVIEW_SOAK_S", "60"))
+
+pytestmark = [pytest.mark.sound, pytest.mark.slow, pytest.mark.timeout(3 * SOAK_S + 240)]
 
 DESK = """
 import json, os, random, sys, time
