@@ -159,10 +159,6 @@ class Deck:
         if self.circuit is not None:
             self.circuit.set_bypass(on)
 
-    def mute(self, on: bool, reason: str) -> None:
-        """Silence the device, or let it be heard again."""
-        self.monitor.mute(on, reason, at_once=self.silent)
-
     def set_full_scale(self, full_scale_v: float) -> None:
         """Change the volts of a sample of 1.0; in silence."""
         self.full_scale_v = full_scale_v
@@ -187,7 +183,7 @@ class Deck:
         if self.fault is not None and self.circuit is not None:
             self.circuit.reset()
             if self.monitor.mute_reason == self.fault.reason:
-                self.mute(False, "")
+                self.monitor.mute(False, at_once=self.silent)
             self.fault = None
             self._wants_play = self._wants_play or self._played
 

@@ -19,18 +19,17 @@ from multiprocessing.connection import Connection
 from preview.audio.signals import ENDLESS_FRAMES
 from preview.circuit.netlist import Netlist
 from preview.engine import messages
+from preview.engine.attention import Attention
 from preview.engine.bench import Bench
 from preview.engine.errands import Errands
-from preview.engine.howl import HowlGuard
 from preview.engine.intake import Intake, open_file, open_live, open_session, open_signal
 from preview.engine.logfile import write_to_log
-from preview.engine.messages import Command, InputKind, Notice, Snapshot, SpectrumReading
+from preview.engine.messages import Command, InputKind, Notice, Snapshot
 from preview.engine.orders import change_circuit, change_playing
 from preview.engine.outlet import Outlet
 from preview.engine.player import Player
 from preview.engine.preparer import Preparer
 from preview.engine.process import EngineConfig
-from preview.engine.spectrum import Spectrum
 from preview.errors import PreviewError
 from preview.meters.level import LevelMeter
 from preview.session import AtEnd
@@ -39,7 +38,6 @@ from preview.values.quality import Quality
 __all__ = ["Host", "run"]
 
 TURN_S = 1.0 / 30.0
-SPECTRUM_TURNS = 3
 FADE_WAIT_S = 0.15
 SETTLE_S = 0.15
 WARM_SETTLE_S = 0.05
@@ -100,10 +98,7 @@ class Host:
         self._preparer: Preparer | None = None
         self._bench: Bench | None = None
         self._errands = Errands(self._tell)
-        self._spectrum: Spectrum | None = None
-        self._last_spectrum: SpectrumReading | None = None
-        self._howl: HowlGuard | None = None
-        self._turns = 0
+        self._attention: Attention | None = None
         self._damage_told = self._collected = self._asked_for_patience = self._ended = False
         self._began_s = time.monotonic()
 
@@ -169,7 +164,6 @@ class Host:
 
     def _turn(self) -> None:
         """Send what there is to tell and look after the output."""
-        self._turns += 1
         player, intake, preparer = self._player, self._intake, self._preparer
         if player is not None and intake is not None and preparer is not None:
             while player.faults:
@@ -177,12 +171,12 @@ class Host:
             if intake.error is not None and not self._damage_told:
                 self._damage_told = True
                 self._tell(str(intake.error), "error")
-            if self._howl is not None and self._turns % 2 == 0:
-                self._guard_ears(player, self._howl)
+            if self._attention is not None and (muted := self._attention.turn()):
+                self._tell(muted, "warning")
             snapshot = player.snapshot
             if snapshot is not None:
                 player.snapshot = None
-                self._connection.send(self._whole(snapshot, player, intake, preparer))
+                self._connection.send(self._whole(snapshot, intake, preparer))
                 if self._collected and self._errands.look(snapshot, preparer):
                     self._apply_match()
         for report in self._errands.reports():
@@ -195,10 +189,8 @@ class Host:
             self._connection.send(self._untold.popleft())
         self._outlet.watch()
 
-    def _whole(self, snapshot: Snapshot, player: Player, intake: Intake, preparer: Preparer) -> Snapshot:
+    def _whole(self, snapshot: Snapshot, intake: Intake, preparer: Preparer) -> Snapshot:
         """The player's snapshot with what the player does not know."""
-        if self._spectrum is not None and self._turns % SPECTRUM_TURNS == 0:
-            self._last_spectrum = self._spectrum.read(*player.deck.ears.taps)
         live = intake.kind is InputKind.LIVE
         in_s = self._outlet.live_latency_s
         return replace(
@@ -207,20 +199,11 @@ class Host:
             input_kind=intake.kind,
             input_name=(self._outlet.input_name or intake.name) if live else intake.name,
             live_latency_s=in_s + snapshot.latency_s if live and in_s else 0.0,
-            spectrum=self._last_spectrum,
+            spectrum=self._attention.spectrum if self._attention is not None else None,
             letter=preparer.letter,
             match=self._errands.matcher.on,
             candidates=self._errands.candidates(preparer),
         )
-
-    def _guard_ears(self, player: Player, howl: HowlGuard) -> None:
-        """Mute live input that begins to howl."""
-        if howl.hears(player.deck.ears.taps[1]) and not player.deck.monitor.muted:
-            reason = f"howl-round at {howl.frequency_hz:.0f} Hz"
-            player.mute(True, reason)
-            self._tell(
-                f"{reason}: muted; lower the volume or move the microphone, then end the mute", "warning"
-            )
 
     # -- commands
 
@@ -318,22 +301,16 @@ class Host:
         )
         self._player, self._intake, self._preparer, self._bench = player, intake, preparer, bench
         self._damage_told = False
-        self._spectrum, self._last_spectrum = Spectrum(rate), None
-        self._howl = None
+        self._attention = Attention(player, live=intake.inlet is not None)
         if intake.inlet is not None:
-            self._howl = HowlGuard(rate)
             player.mute(True, LIVE_MUTE)
             player.play()
         self._errands.begin(intake)
         self._outlet.play(player, intake.inlet)
         preparer.start()
-        self._say_what_is_not_heard(player, setup.at_end)
-        return True
-
-    def _say_what_is_not_heard(self, player: Player, at_end: AtEnd) -> None:
-        frames = player.deck.head.reader.frames
-        if at_end is AtEnd.LOOP and frames < player.deck.loop_min_frames:
+        if setup.at_end is AtEnd.LOOP and intake.reader.frames < player.deck.loop_min_frames:
             self._tell("shorter than 10 ms: it is played once, as a loop of it would be no sound", "warning")
+        return True
 
     def _first_circuit_ready(self) -> None:
         """Everything is loaded: from here on no garbage collection may stall the audio thread."""

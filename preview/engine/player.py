@@ -140,7 +140,8 @@ class Player:
 
     def mute(self, on: bool, reason: str = "") -> None:
         """Silence the device, or let it be heard again; everything goes on running."""
-        self.inbox.append(lambda: self.deck.mute(on, reason))
+        deck = self.deck
+        self.inbox.append(lambda: deck.monitor.mute(on, reason, at_once=deck.silent))
 
     def choose_channels(self, channels: tuple[int, ...]) -> None:
         """Which channels are heard where the device has fewer, in a short silence."""
