@@ -227,7 +227,8 @@ class Deck:
             return
         self._look_for_fault(self.circuit)
         self.ears.feed(volts_in, volts_out, swapping=self.circuit.swapping)
-        self.circuit.match(samples)
+        if (heard := self.circuit.heard) is not None:
+            np.divide(heard, self.full_scale_v, out=samples)
         self._fade.apply(samples)
         self.monitor.leave(samples, out)
         if self.mode is Mode.FADING and not self._fade.moving:
@@ -288,9 +289,9 @@ class Deck:
 
     def _let_glides_end(self, frames: int) -> None:
         """Silent, but a part or circuit is on its way: let it arrive."""
-        circuit, path = self.circuit, self._path
-        if circuit is not None and path is not None and (circuit.gliding or circuit.swapping):
-            path.run(self._silence[:frames], self._samples_out[:frames])
+        circuit = self.circuit
+        if circuit is not None and self._path is not None and (circuit.gliding or circuit.swapping):
+            self._path.run(self._silence[:frames], self._samples_out[:frames])
 
     def _to_silence(self) -> None:
         if self.mode is Mode.RUNNING:

@@ -58,8 +58,9 @@ class LiveCircuit(Circuit, Protocol):
     def match_gain(self) -> float:
         """Gain at which it is heard."""
 
-    def match(self, samples: Samples) -> None:
-        """Multiply what was just processed, in place, by that gain."""
+    @property
+    def heard(self) -> Volts | None:
+        """What is to be heard of the last block, where it is not what was processed."""
 
     def reset(self) -> None:
         """Back to the state before the first frame."""

@@ -1,23 +1,24 @@
 """Candidates side by side: one is heard, or one minus another, and which one changes without a gap.
 
-Every candidate is a stage with a weight in the sum that leaves. A change moves the weights along raised cosines, so
-what is heard is always a crossfade of running stages. A stage that has not been running is first brought to the
-present: it computes the last moments of the input anew, faster than they came, unheard.
+Every candidate is a stage with a weight in the sum that leaves, in volts, and one in the sum that is heard, which
+differs where loudness is matched. A change moves the weights along raised cosines, so what is heard is always a
+crossfade of running stages. A stage that has not been running is first brought to the present: it computes the last
+moments of the input anew, faster than they came, unheard.
 """
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from typing import Protocol
+from collections.abc import Mapping
 
 import numpy as np
 
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
 from preview.engine.readings import FaultReading
+from preview.engine.slot import Processor, Slot
 from preview.engine.transport import Ramp
 
-__all__ = ["FADE_S", "HISTORY_S", "Processor", "Rack"]
+__all__ = ["FADE_S", "HISTORY_S", "Rack"]
 
 FADE_S = 0.02
 """Time of a crossfade [s]."""
@@ -26,45 +27,6 @@ HISTORY_S = 0.05
 BLOCK_FRAMES = 256
 """Frames computed at a time."""
 _HURRY = 4
-
-
-class Processor(Protocol):
-    """A running stage, as ``preview.dsp.stage.StageProcessor`` is one."""
-
-    @property
-    def latency_frames(self) -> int:
-        """Delay from input to output [frames]."""
-
-    @property
-    def gliding(self) -> bool:
-        """Whether a part is on its way to a new value."""
-
-    def process(self, volts_in: Volts, volts_out: Volts) -> None:
-        """Fill ``volts_out`` from the next ``volts_in``."""
-
-    def reset(self) -> None:
-        """Back to rest."""
-
-    def readings(self) -> Sequence[OpAmpReading]:
-        """One reading an op-amp since they were cleared."""
-
-    def clear_readings(self) -> None:
-        """Start the readings anew."""
-
-
-class _Slot:
-    """A stage and its share of what is heard."""
-
-    def __init__(self, processor: Processor, fade_frames: int, weight: float = 0.0) -> None:
-        self.processor = processor
-        self.weight = Ramp(fade_frames, weight)
-        self.running = weight != 0.0
-        self.behind = 0  # frames of input that it has still to compute before the present
-        self.unheard = not self.running  # whether its readings may hold what was not heard
-
-    @property
-    def heard(self) -> bool:
-        return self.weight.moving or self.weight.target != 0.0
 
 
 class Rack:
@@ -82,13 +44,23 @@ class Rack:
         Rate of the frames [Hz].
     channels : int
         Channels of the signal.
+    max_frames : int
+        Longest block.
     """
 
-    def __init__(self, letter: str, processor: Processor, *, sample_rate_hz: float, channels: int) -> None:
+    def __init__(
+        self,
+        letter: str,
+        processor: Processor,
+        *,
+        sample_rate_hz: float,
+        channels: int,
+        max_frames: int = 2048,
+    ) -> None:
         self._fade_frames = max(1, round(FADE_S * sample_rate_hz))
-        self._slots = {letter: _Slot(processor, self._fade_frames, 1.0)}
+        self._slots = {letter: Slot(processor, self._fade_frames, 1.0)}
         self._shown = self._slots[letter]
-        self._leaving: list[_Slot] = []
+        self._leaving: list[Slot] = []
         self.letter = letter
         """The candidate that is heard; the first of the pair while null listening."""
         self.null: tuple[str, str] | None = None
@@ -96,8 +68,9 @@ class Rack:
         self._partner: str | None = None
         self._due = False  # weights are to move as soon as every stage they need is at the present
         self._gains: Mapping[str, float] = {}
-        self._listen = Ramp(self._fade_frames, 1.0)
-        self._listened = 1.0
+        self._apart = False  # whether what is heard differs from what leaves
+        self._heard = np.zeros((max_frames, channels))
+        self._heard_frames = 0
         self._bypass = Ramp(self._fade_frames, 0.0)
         self.hurry = _HURRY
         """How many times faster than the signal a stage may be brought to the present; 1 where there is hardly time
@@ -128,12 +101,17 @@ class Rack:
     @property
     def swapping(self) -> bool:
         """Whether what is heard is about to be another, or fading to it."""
-        return self._due or bool(self._leaving) or any(slot.weight.moving for slot in self._slots.values())
+        return self._due or bool(self._leaving) or self._moving
 
     @property
     def match_gain(self) -> float:
-        """Gain at which it is heard; the volts do not depend on it."""
-        return self._listened
+        """Gain at which it is heard; the volts do not depend on it, and the input itself is heard as it is."""
+        return 1.0 if self._bypass.target else self._gain_of(self.letter)
+
+    @property
+    def heard(self) -> Volts | None:
+        """What is to be heard of the last block; None where it is what left. Owned by the rack."""
+        return self._heard[: self._heard_frames] if self._apart else None
 
     @property
     def fault(self) -> FaultReading | None:
@@ -149,7 +127,7 @@ class Rack:
     def put(self, letter: str, processor: Processor) -> None:
         """Add a candidate or replace its stage; where it is heard, the new stage is faded to."""
         old = self._slots.get(letter)
-        self._slots[letter] = slot = _Slot(processor, self._fade_frames)
+        self._slots[letter] = slot = Slot(processor, self._fade_frames)
         if old is not None and old.heard:
             self._leaving.append(old)
         if letter in self._wanted():
@@ -178,7 +156,7 @@ class Rack:
             slot = self._slots.pop(letter)
             if slot.heard:
                 self._leaving.append(slot)
-                slot.weight.to(0.0)
+                slot.to(0.0, 0.0)
         if self._partner == letter:
             self._partner = None
 
@@ -190,7 +168,6 @@ class Rack:
     def set_bypass(self, on: bool) -> None:
         """Fade to the input (True) or back, at the same delay."""
         self._bypass.to(1.0 if on else 0.0)
-        self._aim()
 
     def reset(self) -> None:
         """Back to rest; what was on its way is heard at once."""
@@ -198,8 +175,11 @@ class Rack:
         self._past[...] = 0.0
         self._past_frames = 0
         self._due = False
+        wanted = self._wanted()
         for letter, slot in self._slots.items():
-            slot.weight.jump(self._wanted().get(letter, 0.0))
+            weight, heard_weight = wanted.get(letter, (0.0, 0.0))
+            slot.weight.jump(weight)
+            slot.heard_weight.jump(heard_weight)
             slot.running = slot.heard
             slot.behind = 0
             if slot.running:
@@ -207,8 +187,7 @@ class Rack:
                 slot.unheard = False
         self._shown = self._slots[self.letter]
         self._bypass.jump(self._bypass.target)
-        self._aim()
-        self._listen.jump(self._listened)
+        self._apart = bool(self._gains)
 
     def readings(self) -> tuple[OpAmpReading, ...]:
         """What the op-amps of the stage that is heard did; while null listening, of the first."""
@@ -225,40 +204,63 @@ class Rack:
         """Fill ``volts_out`` from the next ``volts_in``, both (frames, channels)."""
         if self._due and all(self._slots[letter].behind == 0 for letter in self._wanted()):
             self._begin_to_move()
+        self._apart = bool(self._gains) or (self._apart and self._moving)
+        self._heard_frames = len(volts_in)
         for first in range(0, len(volts_in), BLOCK_FRAMES):
-            self._block(volts_in[first : first + BLOCK_FRAMES], volts_out[first : first + BLOCK_FRAMES])
+            piece = slice(first, first + BLOCK_FRAMES)
+            self._block(volts_in[piece], volts_out[piece], self._heard[piece])
 
-    def match(self, samples: Volts) -> None:
-        """Multiply what was just processed, in place, by the gain at which it is heard."""
-        self._listen.apply(samples)
-
-    def _block(self, volts_in: Volts, volts_out: Volts) -> None:
+    def _block(self, volts_in: Volts, volts_out: Volts, heard_out: Volts) -> None:
         frames = len(volts_in)
         self._remember(volts_in)
         running = [slot for slot in (*self._slots.values(), *self._leaving) if slot.running]
         heard = [slot for slot in running if slot.heard]
-        if len(heard) == 1 and heard[0].weight.target == 1.0 and not heard[0].weight.moving:
+        if (
+            len(heard) == 1
+            and heard[0].weight.target == 1.0
+            and not heard[0].weight.moving
+            and not self._apart
+        ):
             heard[0].processor.process(volts_in, volts_out)
         else:
             volts_out[...] = 0.0
+            heard_out[:frames] = 0.0
             for slot in heard:
-                scratch = self._scratch[:frames]
-                slot.processor.process(volts_in, scratch)
-                slot.weight.apply(scratch)
-                volts_out += scratch
+                self._add(slot, volts_in, volts_out, heard_out[:frames])
         for slot in running:
             if slot not in heard:
                 self._catch_up(slot, frames)
         self._rest()
         if self._bypass.moving or self._bypass.target:
-            dry = self._scratch[:frames]
-            start = len(self._past) - frames - self.latency_frames
-            np.subtract(self._past[start : start + frames], volts_out, out=dry)
-            if self._bypass.moving:
-                self._bypass.apply(dry)
-                volts_out += dry
-            else:
-                volts_out[...] = self._past[start : start + frames]
+            self._pass_by(volts_out, heard_out[:frames])
+
+    def _add(self, slot: Slot, volts_in: Volts, volts_out: Volts, heard_out: Volts) -> None:
+        """Add a stage's share to what leaves, and to what is heard."""
+        made, share = self._scratch[: len(volts_in)], self._spare[: len(volts_in)]
+        slot.processor.process(volts_in, made)
+        if self._apart:
+            share[...] = made
+            slot.heard_weight.apply(share)
+            heard_out += share
+        else:
+            slot.heard_weight.pass_over(len(volts_in))
+        slot.weight.apply(made)
+        volts_out += made
+
+    def _pass_by(self, volts_out: Volts, heard_out: Volts) -> None:
+        """Fade what leaves and what is heard to the input, or back."""
+        frames = len(volts_out)
+        start = len(self._past) - frames - self.latency_frames
+        dry = self._past[start : start + frames]
+        if not self._bypass.moving:
+            volts_out[...] = dry
+            heard_out[...] = dry
+            return
+        share = self._scratch[:frames]
+        share[...] = 1.0
+        self._bypass.apply(share)
+        volts_out += share * (dry - volts_out)
+        heard_out += share * (dry - heard_out)
 
     def _remember(self, volts_in: Volts) -> None:
         frames = len(volts_in)
@@ -266,7 +268,7 @@ class Rack:
         self._past[-frames:] = volts_in
         self._past_frames = min(self._past_frames + frames, len(self._past))
 
-    def _catch_up(self, slot: _Slot, frames: int) -> None:
+    def _catch_up(self, slot: Slot, frames: int) -> None:
         """Run a stage that is not heard over its backlog and this block, or as much of them as there is time for."""
         backlog = slot.behind + frames
         do = min(backlog, max(self.hurry, 2) * frames) if slot.behind else frames
@@ -281,14 +283,21 @@ class Rack:
     def _gain_of(self, letter: str) -> float:
         return self._gains.get(letter, 1.0)
 
-    def _wanted(self) -> dict[str, float]:
-        """The weight of every candidate that is to be heard."""
+    @property
+    def _moving(self) -> bool:
+        every = (*self._slots.values(), *self._leaving)
+        return any(slot.weight.moving or slot.heard_weight.moving for slot in every)
+
+    def _wanted(self) -> dict[str, tuple[float, float]]:
+        """The weights of every candidate that is to be heard: in what leaves, and in what is heard."""
+        gain = self._gain_of(self.letter)
         if self.null is None:
-            return {self.letter: 1.0}
+            return {self.letter: (1.0, gain)}
         first, second = self.null
         if first == second:
-            return {first: 0.0}
-        return {first: 1.0, second: -self._gain_of(second) / self._gain_of(first)}
+            return {first: (0.0, 0.0)}
+        other = self._gain_of(second)
+        return {first: (1.0, gain), second: (-other / gain, -other)}
 
     def _move(self) -> None:
         for letter in self._wanted():
@@ -297,7 +306,7 @@ class Rack:
                 self._begin(slot)
         self._due = True
 
-    def _begin(self, slot: _Slot) -> None:
+    def _begin(self, slot: Slot) -> None:
         """Start a stage from rest at the beginning of what is remembered."""
         slot.processor.reset()
         slot.running = slot.unheard = True
@@ -307,19 +316,14 @@ class Rack:
         self._due = False
         wanted = self._wanted()
         for letter, slot in self._slots.items():
-            slot.weight.to(wanted.get(letter, 0.0))
+            slot.to(*wanted.get(letter, (0.0, 0.0)))
             if letter in wanted and slot.unheard:
                 slot.processor.clear_readings()
                 slot.unheard = False
         self._shown = self._slots[self.letter]
         for slot in self._leaving:
-            slot.weight.to(0.0)
-        self._aim()
-
-    def _aim(self) -> None:
-        """Move to the gain at which what is heard is listened to; the input itself is heard as it is."""
-        self._listened = 1.0 if self._bypass.target else self._gain_of(self.letter)
-        self._listen.to(self._listened)
+            slot.to(0.0, 0.0)
+        self._apart = self._apart or bool(self._gains)
 
     def _rest(self) -> None:
         """Let stages stop that are heard no more, but for the one that was heard before this one."""

@@ -77,11 +77,13 @@ class DelayCircuit:
         volts_out[:] = both[: len(volts_in)] * (1.0 if self._bypass else self.gain)
         self._events += 1
         self._peak_v = max(self._peak_v, float(np.abs(volts_out).max(initial=0.0)))
+        self._left = volts_out.copy()
         if self.fail_with is not None:
             volts_out[-1] = self.fail_with
 
-    def match(self, samples: NDArray[np.float64]) -> None:
-        samples *= self.match_gain
+    @property
+    def heard(self) -> NDArray[np.float64] | None:
+        return None if self.match_gain == 1.0 else self._left * self.match_gain
 
     def reset(self) -> None:
         self._held[:] = 0.0

@@ -91,3 +91,30 @@ print("heard", wait(lambda s: s.heard_channels == (2, 3)).heard_channels, flush=
     out = sound_server.run(DESK, str(path), "loop", then, str(tmp_path / "log"), timeout_s=100)
     assert "heard (0, 1) of 4" in out
     assert "heard (2, 3)" in out
+
+
+def test_an_engine_that_was_killed_is_replaced_at_the_same_place(sound_server: Any, tmp_path: Path) -> None:
+    audio = noise_file(tmp_path / "noise.wav", 30.0)
+    then = """
+import os, signal
+from dataclasses import replace
+before = wait(lambda s: s.position_frame > 96_000)
+os.kill(engine.pid, signal.SIGKILL)
+killed = time.monotonic()
+while engine.alive:
+    time.sleep(0.002)
+print("seen after", time.monotonic() - killed, engine.ending, flush=True)
+config = EngineConfig(session=session, start_volume_db=0.0, block_frames=512, play=True, log=Path(log),
+                      start_frame=before.position_frame)
+engine = EngineProcess.start(config)
+heard = wait(lambda s: s.playing and s.position_frame > before.position_frame)
+print("heard after", time.monotonic() - killed, heard.output_name, flush=True)
+assert heard.position_frame - before.position_frame < 24_000
+"""
+    out = sound_server.run(DESK, str(audio), "loop", then, str(tmp_path / "log"), timeout_s=100)
+    seen, heard = (
+        next(line for line in out.splitlines() if line.startswith(word)) for word in ("seen", "heard")
+    )
+    assert float(seen.split()[2]) < 1.0
+    assert seen.endswith("the engine was ended by signal SIGKILL")
+    assert float(heard.split()[2]) < 4.0
