@@ -68,9 +68,8 @@ class Deck:
         self.head, self.ears, self.monitor = head, ears, monitor
         self.sample_rate_hz, self.channels = sample_rate_hz, channels
         self.full_scale_v, self.max_frames = full_scale_v, max_frames
-        self.mode = Mode.IDLE
+        self.mode, self.quality = Mode.IDLE, Quality.STANDARD
         self.bypass = False
-        self.quality = Quality.STANDARD
         self.fault: FaultReading | None = None
         self.told: deque[str] = deque(maxlen=8)
         self.loop_min_frames = math.ceil(LOOP_MIN_S * sample_rate_hz)

@@ -171,8 +171,8 @@ class Host:
             if intake.error is not None and not self._damage_told:
                 self._damage_told = True
                 self._tell(str(intake.error), "error")
-            if self._attention is not None and (muted := self._attention.turn()):
-                self._tell(muted, "warning")
+            if self._attention is not None:
+                self._untold.extend(Notice(text, "warning") for text in self._attention.turn())
             snapshot = player.snapshot
             if snapshot is not None:
                 player.snapshot = None

@@ -91,6 +91,8 @@ print("heard", wait(lambda s: s.heard_channels == (2, 3)).heard_channels, flush=
     out = sound_server.run(DESK, str(path), "loop", then, str(tmp_path / "log"), timeout_s=100)
     assert "heard (0, 1) of 4" in out
     assert "heard (2, 3)" in out
+    assert "notice warning 4 channels: 1 and 2 heard on default" in out
+    assert "notice warning 4 channels: 3 and 4 heard on default" in out
 
 
 def test_an_engine_that_was_killed_is_replaced_at_the_same_place(sound_server: Any, tmp_path: Path) -> None:
