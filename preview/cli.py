@@ -15,6 +15,7 @@ import sys
 import threading
 import traceback
 from collections.abc import Callable, Iterable, Sequence
+from dataclasses import replace
 from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, NoReturn
@@ -138,7 +139,11 @@ def _parser() -> argparse.ArgumentParser:
         "--end", metavar="loop|stop", default="loop", help="at the end: loop (default) or stop"
     )
     listen.add_argument("--device", metavar="NAME", help="sound device, by name")
-    listen.add_argument("--live", action="store_true", help=argparse.SUPPRESS)
+    listen.add_argument(
+        "--signal", metavar="TEXT", help='a test signal in place of a recording, such as "sine 1k 1V"'
+    )
+    listen.add_argument("--live", action="store_true", help="the device's input in place of a recording")
+    listen.add_argument("--input", metavar="NAME", help="input device of --live, by name")
     add_stage_options(listen)
 
     render = command("render", _render, "the recording through the stage, as a file")
@@ -240,19 +245,17 @@ def _listen(options: argparse.Namespace) -> int:
 def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     from preview.audio.files import probe
     from preview.engine.demo import demo_recording
-    from preview.engine.options import DEFAULT_STAGE, session_from
+    from preview.engine.options import DEFAULT_STAGE, intake_from, session_from
     from preview.engine.process import EngineConfig, EngineProcess
     from preview.network.stability import check_stable
     from preview.session import AtEnd
 
-    if options.live:
-        raise UsageError(
-            "live input is not available in this version", "name a recording: preview listen AUDIO"
-        )
     if options.end not in (end.value for end in AtEnd):
         raise UsageError(f"--end {options.end}: no such end", "loop or stop")
-    stage, audio = DEFAULT_STAGE, Path(options.audio or "")
-    if options.audio is None:
+    stage = DEFAULT_STAGE
+    audio: Path | None = Path(options.audio) if options.audio is not None else None
+    intake = intake_from(options)
+    if audio is None and not intake:
         demo = demo_recording()
         audio = demo.path
         options.full_scale = options.full_scale or demo.full_scale or None
@@ -261,9 +264,11 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
         raise UsageError(
             "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
         )
-    info = probe(audio)
-    session = session_from(options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage)
-    _echo(session, info.warnings)
+    info = probe(audio) if audio is not None else None
+    comment = info.comment if info is not None else ""
+    session = session_from(options, audio=audio, comment=comment, at_end=AtEnd(options.end), stage=stage)
+    session = replace(session, notes=(*session.notes, *intake.pop("notes", ())), **intake)
+    _echo(session, info.warnings if info is not None else ())
     check_stable(session.netlist())
     if engine is None:
         raise UsageError("the desk needs a terminal", "preview render works without one")

@@ -7,6 +7,7 @@ Family tree::
     |   +-- NotationError                  a value, level or series that cannot be read
     +-- AudioFileError (OSError)           exit 3: input or output file
     |   +-- OutputFileError                the place to write to
+    +-- SessionFileError (ValueError)      exit 3: a session file that cannot be read or written
     +-- DeviceError (RuntimeError)         exit 4: no audio device or library
     +-- CircuitError (ValueError)          exit 5: the circuit cannot be computed
         +-- StageFileError                 a stage file that cannot be read as one
@@ -28,6 +29,7 @@ __all__ = [
     "OutputFileError",
     "PartValueError",
     "PreviewError",
+    "SessionFileError",
     "StageFileError",
     "UnknownNameError",
     "UsageError",
@@ -75,6 +77,12 @@ class AudioFileError(PreviewError, OSError):
 
 class OutputFileError(AudioFileError):
     """A result that cannot be written."""
+
+
+class SessionFileError(PreviewError, ValueError):
+    """A session file that cannot be read as one, or not be written."""
+
+    exit_code = 3
 
 
 class DeviceError(PreviewError, RuntimeError):
