@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Protocol
 
-from preview.engine.messages import Command, Notice, Snapshot
+from preview.engine.messages import Command, Notice, Report, Snapshot
 
 __all__ = ["AnswerWatch", "EngineLink", "Restart", "StillLink"]
 
@@ -28,6 +28,9 @@ class EngineLink(Protocol):
 
     def notices(self) -> list[Notice]:
         """Notices since the last call, oldest first."""
+
+    def reports(self) -> list[Report]:
+        """What was found out since the last call, the newest of each kind."""
 
     def close(self) -> None:
         """End the engine; a second call does nothing."""
@@ -74,6 +77,10 @@ class StillLink:
         return self._snapshot
 
     def notices(self) -> list[Notice]:
+        """None, ever."""
+        return []
+
+    def reports(self) -> list[Report]:
         """None, ever."""
         return []
 

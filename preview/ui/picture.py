@@ -56,7 +56,7 @@ def desk_svg(
                 break
             await asyncio.sleep(0.02)
         if snapshot is not None:
-            app.desk.playing = snapshot.playing
+            app.desk.listening.playing = snapshot.playing
         app.show()
         await pilot.pause()
         pictures.append(_svg(app, size))

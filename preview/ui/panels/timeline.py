@@ -38,11 +38,11 @@ class TimelinePanel(Board):
         if snapshot is None or snapshot.frames == 0 or snapshot.sample_rate_hz <= 0.0:
             return [row((" nothing to play yet", palette.faint))]
         rate_hz, frames = snapshot.sample_rate_hz, snapshot.frames
-        now = f" {clock(desk.position_frame / rate_hz)} "
+        now = f" {clock(desk.listening.position_frame / rate_hz)} "
         length = f" {clock(frames / rate_hz)}"
         region = ""
-        if desk.region is not None:
-            start, end = desk.region
+        if desk.listening.region is not None:
+            start, end = desk.listening.region
             region = f"  region {clock(start / rate_hz)} to {clock(end / rate_hz)}"
         after = f"{length}{region} "
         cells = width - len(now) - len(after)
@@ -54,11 +54,11 @@ class TimelinePanel(Board):
             return min(cells - 1, int(frame * cells / frames))
 
         line = ["─"] * cells
-        if desk.region is not None:
-            first, last = place(desk.region[0]), place(desk.region[1] - 1)
+        if desk.listening.region is not None:
+            first, last = place(desk.listening.region[0]), place(desk.listening.region[1] - 1)
             line[first : last + 1] = ["═"] * (last + 1 - first)
             line[first], line[last] = "(", ")"
-        head = place(desk.position_frame)
+        head = place(desk.listening.position_frame)
         return [
             row(
                 (now, palette.strong),

@@ -14,7 +14,7 @@ from preview.ui.theme import Look
 from preview.ui.widgets.board import Board, Row, heading, row
 from preview.ui.words import code, value
 
-__all__ = ["SchematicPanel", "annotated", "drawing_width"]
+__all__ = ["CircuitPanel", "annotated", "drawing_width", "part_line"]
 
 
 def drawing_width(stage: Stage) -> int:
@@ -59,19 +59,19 @@ def _label(part: Part, blanks: int) -> str:
     return f"{part.designator} {text}" if len(text) + 2 <= blanks else part.designator
 
 
-class SchematicPanel(Board):
+class CircuitPanel(Board):
     """The stage's drawing with live values, or a plain list where it has none."""
 
     def __init__(self, desk: Desk, look: Look) -> None:
-        super().__init__(look, name="schematic")
+        super().__init__(look, name="circuit")
         self.desk = desk
 
     def rows(self, width: int, height: int) -> Sequence[Row]:
         """See :class:`Board`."""
         stage, palette = self.desk.session.stage, self.look.palette
-        part = self.desk.part
+        part = self.desk.parts.part
         selected = part.designator if part else None
-        result = [heading("schematic", printable(stage.name), width - 1, self.look)]
+        result = [heading("circuit", printable(stage.name), width - 1, self.look)]
         room = max(0, height - 1)
         if not stage.drawing.strip():
             return [*result, *self._list(stage, selected)][:height]
@@ -88,7 +88,7 @@ class SchematicPanel(Board):
         palette = self.look.palette
         rows = []
         for part in stage.parts:
-            text = f"{part.designator}  {value(part)}  {_connections(part)}"
+            text = part_line(part)
             chosen = part.designator == selected
             mark = "▸" if chosen else " "
             rows.append(
@@ -98,6 +98,11 @@ class SchematicPanel(Board):
                 )
             )
         return rows
+
+
+def part_line(part: Part) -> str:
+    """A part in words: what it is, and where it is connected."""
+    return f"{part.designator}  {value(part)}  {_connections(part)}"
 
 
 def _connections(part: Part) -> str:
