@@ -22,6 +22,7 @@ from preview.ui.figures import FigureKeeper, FigureSet, MakeFigures, compute_fig
 from preview.ui.firstrun import caution_seen, config_folder, remember_caution
 from preview.ui.keymap import KeyMap, read_keys
 from preview.ui.link import AnswerWatch, EngineLink, Restart
+from preview.ui.panels.candidates import CandidatesPanel
 from preview.ui.panels.circuit import CircuitPanel
 from preview.ui.panels.figures import FiguresPanel
 from preview.ui.panels.footer import FooterPanel
@@ -110,7 +111,12 @@ class DeskApp(DialogApp):
         self.circuit = CircuitPanel(self.desk, self.look)
         self.figures = FiguresPanel(self.desk, self.look)
         self.foot = FooterPanel(self.look, keys)
-        self.views: dict[Shown, Board] = {Shown.RESPONSE: self.response, Shown.CIRCUIT: self.circuit}
+        self.candidates = CandidatesPanel(self.desk, self.look)
+        self.views: dict[Shown, Board] = {
+            Shown.RESPONSE: self.response,
+            Shown.CIRCUIT: self.circuit,
+            Shown.CANDIDATES: self.candidates,
+        }
         for board in self.views.values():
             board.add_class("view")
         self.boards: tuple[Board, ...] = (
@@ -201,33 +207,6 @@ class DeskApp(DialogApp):
         """Slower while nobody looks."""
         self._focused = False
 
-    # ---- the mouse ----
-
-    def on_parts_panel_chosen(self, event: PartsPanel.Chosen) -> None:
-        """A click on a part selects it."""
-        self.desk.parts.choose(event.index)
-        self.show()
-
-    def on_parts_panel_stepped(self, event: PartsPanel.Stepped) -> None:
-        """The wheel steps the selected part."""
-        self.action_do("value_up" if event.up else "value_down")
-
-    def on_path_panel_chosen(self, event: PathPanel.Chosen) -> None:
-        """A click on an op-amp selects it, another one all of them."""
-        view = self.desk.view
-        view.opamp = None if view.opamp == event.designator else event.designator
-        self.show()
-
-    def on_timeline_panel_sought(self, event: TimelinePanel.Sought) -> None:
-        """A click on the line seeks."""
-        self.desk.listening.seek(event.frame)
-        self.show()
-
-    def on_response_panel_pointed(self, event: ResponsePanel.Pointed) -> None:
-        """A click on the response puts the cursor."""
-        self.foot.say(self.desk.view.put_cursor(event.frequency_hz))
-        self.show()
-
     def on_footer_panel_pressed(self, event: FooterPanel.Pressed) -> None:
         """A click on a hint is its key."""
         self.action_do(event.name)
@@ -255,7 +234,7 @@ class DeskApp(DialogApp):
             if first:
                 self.arrange(self.size.width, self.size.height)
         if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
-            for board in (self.head, self.path, self.timeline, self.response):
+            for board in (self.head, self.path, self.timeline, self.response, self.candidates):
                 if board.display:
                     board.rebuild()
             self.foot.tick()

@@ -17,6 +17,7 @@ from preview.engine.messages import Command, Snapshot
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.asking import Outcome
+from preview.ui.candidates import Candidates
 from preview.ui.changes import commands_between, whole_state
 from preview.ui.figures import FigureSet
 from preview.ui.history import History
@@ -73,7 +74,8 @@ class Desk:
         self.parts = PartWork(self)
         self.listening = Listening(self)
         self.view = View(self)
-        self._rooms = (self, self.parts, self.listening, self.view, Questions(self))
+        self.candidates = Candidates(self)
+        self._rooms = (self, self.parts, self.listening, self.view, self.candidates, Questions(self))
 
     # ---- actions ----
 
@@ -91,13 +93,14 @@ class Desk:
         """The newest word of the engine."""
         self.snapshot = snapshot
         self.listening.take(snapshot)
+        self.candidates.take(snapshot)
 
     def resume(self, link: EngineLink) -> None:
         """Bring a new engine to where the old one was; it waits at the playhead."""
         position = self.listening.position_frame
         self.link = link
         self.stopped = self.unanswered = False
-        for command in whole_state(self.session):
+        for command in (*whole_state(self.candidates.session("A")), *self.candidates.orders()):
             link.send(command)
         self.listening.resume(link, position)
 
@@ -110,6 +113,11 @@ class Desk:
         commands = commands_between(self.session, session)
         self.history.note(self.session)
         self._become(session, commands)
+
+    def adopt(self, session: Session, history: History) -> None:
+        """A session that the engine has ready already, with what can be taken back in it."""
+        self.history = history
+        self._become(session, [])
 
     def open_stage(self, stage: Stage) -> str:
         """Another stage on its own supply; its values are the new 'before'."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from pathlib import Path
 
 from textual.app import App
@@ -17,6 +18,7 @@ from preview.ui.screens.entry import EntryScreen
 from preview.ui.screens.pages import HelpScreen, PageScreen
 from preview.ui.screens.palette import PaletteScreen
 from preview.ui.theme import Look
+from preview.ui.widgets.board import Board
 
 __all__ = ["DialogApp"]
 
@@ -50,9 +52,16 @@ class DialogApp(App[Session]):
 
     def action_do(self, name: str) -> None:
         """Carry out the action of that name: the desk's own, or one that needs the screen."""
-        method = self.desk.method(name) or getattr(self, f"do_{name}")
+        self.carry_out(self.desk.method(name) or getattr(self, f"do_{name}"))
+
+    def on_board_acted(self, event: Board.Acted) -> None:
+        """What the mouse asks for."""
+        self.carry_out(event.action)
+
+    def carry_out(self, action: Callable[[], Outcome]) -> None:
+        """Do it, say what cannot be done, and paint what has changed."""
         try:
-            outcome = method()
+            outcome = action()
         except PreviewError as error:
             self.say(str(error), "error")
         else:
@@ -73,13 +82,8 @@ class DialogApp(App[Session]):
 
     def _ask(self, screen: Screen[str], asked: Question | Menu) -> None:
         def answered(text: str | None) -> None:
-            if text is None:
-                return
-            try:
-                self.present(asked.take(text))
-            except PreviewError as error:
-                self.say(str(error), "error")
-            self.show()
+            if text is not None:
+                self.carry_out(lambda: asked.take(text))
 
         self.push_screen(screen, answered)
 

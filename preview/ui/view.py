@@ -131,6 +131,11 @@ class View:
         self.opamp = names[(at + 1) % len(names)]
         return f"op-amp: {self.opamp or 'all'}"
 
+    def choose_opamp(self, designator: str) -> str:
+        """Select an op-amp; one that is selected already gives way to all of them."""
+        self.opamp = None if self.opamp == designator else designator
+        return f"op-amp: {self.opamp or 'all'}"
+
     # ---- how it is shown ----
 
     def do_next_unit(self) -> str:

@@ -13,12 +13,16 @@ from preview.circuit.netlist import Netlist
 from preview.engine.messages import (
     ClearHolds,
     Command,
+    KeepCandidate,
+    ListenNull,
     Pause,
     Seek,
+    SelectCandidate,
     SetAtEnd,
     SetBypass,
     SetCircuit,
     SetFullScale,
+    SetMatch,
     SetPart,
     SetQuality,
     SetRegion,
@@ -55,6 +59,10 @@ def _asks(title: str) -> Check:
     return lambda app, _sent: isinstance(app.screen, EntryScreen) and app.screen.question.title == title
 
 
+def _keeps(letter: str) -> Check:
+    return lambda _app, sent: isinstance(sent[-1], KeepCandidate) and sent[-1].letter == letter
+
+
 def _lists(title: str) -> Check:
     return lambda app, _sent: isinstance(app.screen, ChooserScreen) and app.screen.menu.title == title
 
@@ -72,6 +80,11 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "bypass": ((), _sent(SetBypass(True))),
     "choose_stage": ((), _lists("Stage")),
     "switch_view": ((), lambda app, _: app.desk.view.shown is Shown.CIRCUIT),
+    "view_response": (("v",), lambda app, _: app.desk.view.shown is Shown.RESPONSE),
+    "view_circuit": ((), lambda app, _: app.desk.view.shown is Shown.CIRCUIT),
+    "view_opamps": ((), lambda app, _: app.desk.view.shown is Shown.OPAMPS),
+    "view_candidates": ((), lambda app, _: app.desk.view.shown is Shown.CANDIDATES),
+    "view_timeline": ((), lambda app, _: app.desk.view.shown is Shown.TIMELINE),
     "help": ((), lambda app, _: isinstance(app.screen, HelpScreen)),
     "palette": ((), lambda app, _: isinstance(app.screen, PaletteScreen)),
     "quit": ((), lambda app, _: app._exit and app.return_value == app.desk.session),
@@ -103,6 +116,25 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "source": ((), _asks("Source")),
     "load": ((), _asks("Load")),
     "opamp_type": ((), _lists("Op-amp type of U1")),
+    "candidate_keep": (
+        (),
+        lambda app, sent: _keeps("B")(app, sent[-2:-1]) and sent[-1] == SelectCandidate("B"),
+    ),
+    "candidate_flip": (("K",), _sent(SelectCandidate("A"))),
+    "candidate_next": (("K", "K"), _sent(SelectCandidate("A"))),
+    "hear_a": (("K",), _sent(SelectCandidate("A"))),
+    "hear_b": (("K", "1"), _sent(SelectCandidate("B"))),
+    "hear_c": (("K", "K", "1"), _sent(SelectCandidate("C"))),
+    "hear_d": (("K", "K", "K", "1"), _sent(SelectCandidate("D"))),
+    "hear_e": (("K", "K", "K", "K", "1"), _sent(SelectCandidate("E"))),
+    "hear_f": ((), lambda app, _: "there is no candidate F" in app.foot.message),
+    "candidate_choose": ((), _lists("Hear")),
+    "match": ((), _sent(SetMatch(True))),
+    "null": (("K",), _sent(ListenNull(("B", "A")))),
+    "candidate_differences": (("K",), lambda app, _: isinstance(app.screen, PageScreen)),
+    "candidate_copy": (("K",), _lists("Copy B over")),
+    "candidate_rename": ((), _asks("Name of A")),
+    "candidate_drop": (("K",), _lists("Drop")),
     "next_unit": ((), lambda app, _: app.desk.view.unit is LevelUnit.DBU),
     "clear_holds": ((), _sent(ClearHolds())),
     "phase": ((), lambda app, _: app.desk.view.phase),

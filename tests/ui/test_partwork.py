@@ -275,14 +275,21 @@ def test_the_nearest_value_of_the_series_is_a_key_away(desk, engine) -> None:
 # ---- the mouse ----
 
 
+class _Turn:
+    """A turn of the wheel."""
+
+    def stop(self) -> None:
+        """Go no further."""
+
+
 async def test_the_wheel_over_the_list_steps_the_selected_part(make_app, engine) -> None:
     app: DeskApp = make_app()
     async with app.run_test(size=(80, 24)) as pilot:
         await pilot.pause()
-        app.parts.post_message(PartsPanel.Stepped(True))
+        app.parts.on_mouse_scroll_up(_Turn())
         await pilot.pause()
         assert engine.sent[-1] == SetPart("R1", 11e3)
-        app.parts.post_message(PartsPanel.Stepped(False))
+        app.parts.on_mouse_scroll_down(_Turn())
         await pilot.pause()
         assert engine.sent[-1] == SetPart("R1", 10e3)
 

@@ -116,7 +116,17 @@ class HeaderPanel(Board):
         if desk.listening.bypass:
             texts = "BYPASS: you hear the input, not the stage", "BYPASS: input heard"
             return [(text, palette.alarm) for text in texts]
+        room = desk.candidates
+        if room.null is not None:
+            texts = f"NULL: {room.null[0]} minus {room.null[1]}", f"NULL {room.null[0]}-{room.null[1]}"
+            return [(text, palette.alarm) for text in texts]
         without = desk.session.without
         if without:
             return [(f"heard WITHOUT {', '.join(without)}", palette.alarm), ("limits OFF", palette.alarm)]
-        return [("stage heard", palette.plain)]
+        if len(room.letters) == 1:
+            return [("stage heard", palette.plain)]
+        title = printable(room.title(room.letter))
+        snapshot = desk.snapshot
+        match = f", matched {snapshot.match_db:+.1f} dB" if room.matched and snapshot else ""
+        said = f"candidate {title} heard{match}", f"candidate {room.letter}{match}", room.letter
+        return [(text, palette.plain) for text in said]

@@ -6,7 +6,6 @@ import textwrap
 from collections.abc import Sequence
 
 from textual.events import Click, MouseScrollDown, MouseScrollUp
-from textual.message import Message
 
 from preview.circuit.parts import Potentiometer, SettablePart, TwoTerminal
 from preview.circuit.settings import setting_text
@@ -33,22 +32,6 @@ class PartsPanel(Board):
 
     A click selects a part; the wheel over the list steps the selected one.
     """
-
-    class Chosen(Message):
-        """A click on a part."""
-
-        def __init__(self, index: int) -> None:
-            super().__init__()
-            self.index = index
-            """Place of the part in the list."""
-
-    class Stepped(Message):
-        """A turn of the wheel."""
-
-        def __init__(self, up: bool) -> None:
-            super().__init__()
-            self.up = up
-            """Whether the value goes up."""
 
     def __init__(self, desk: Desk, look: Look) -> None:
         super().__init__(look, name="parts")
@@ -115,17 +98,17 @@ class PartsPanel(Board):
         """Select the part that was clicked."""
         index = self._first + event.y - 1
         if event.y >= 1 and index < len(self.desk.parts.parts):
-            self.post_message(self.Chosen(index))
+            self.act(lambda: self.desk.parts.choose(index))
 
     def on_mouse_scroll_up(self, event: MouseScrollUp) -> None:
         """Step up."""
         event.stop()
-        self.post_message(self.Stepped(True))
+        self.act(self.desk.parts.do_value_up)
 
     def on_mouse_scroll_down(self, event: MouseScrollDown) -> None:
         """Step down."""
         event.stop()
-        self.post_message(self.Stepped(False))
+        self.act(self.desk.parts.do_value_down)
 
 
 def _slider(position: float) -> str:

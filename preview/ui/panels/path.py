@@ -8,7 +8,6 @@ from collections.abc import Callable, Sequence
 
 from rich.style import Style
 from textual.events import Click
-from textual.message import Message
 
 from preview.ui.desk import Desk
 from preview.ui.signalpath import PathRow, State, path_rows, worst_of
@@ -36,14 +35,6 @@ _WORST = "◂"
 
 class PathPanel(Board):
     """A scale, and a row for the source, each op-amp and the output. A click on an op-amp selects it."""
-
-    class Chosen(Message):
-        """A click on an op-amp."""
-
-        def __init__(self, designator: str) -> None:
-            super().__init__()
-            self.designator = designator
-            """U1, U2 ..."""
 
     def __init__(self, desk: Desk, look: Look, *, now_s: Callable[[], float] = time.monotonic) -> None:
         super().__init__(look, name="path")
@@ -162,4 +153,4 @@ class PathPanel(Board):
     def on_click(self, event: Click) -> None:
         """Select the op-amp that was clicked."""
         if 1 <= event.y <= len(self._shown) and self._shown[event.y - 1].kind == "opamp":
-            self.post_message(self.Chosen(self._shown[event.y - 1].label))
+            self.act(lambda: self.desk.view.choose_opamp(self._shown[event.y - 1].label))

@@ -11,7 +11,6 @@ import numpy as np
 from numpy.typing import NDArray
 from rich.style import Style
 from textual.events import Click
-from textual.message import Message
 
 from preview.ui.desk import Desk
 from preview.ui.figures import Figures
@@ -81,14 +80,6 @@ class ResponsePanel(Board):
 
     The line is bright as far as it is heard and thin above. A click puts the cursor.
     """
-
-    class Pointed(Message):
-        """A click on the plot."""
-
-        def __init__(self, frequency_hz: float) -> None:
-            super().__init__()
-            self.frequency_hz = frequency_hz
-            """The frequency there [Hz]."""
 
     def __init__(self, desk: Desk, look: Look, *, now_s: Callable[[], float] = time.monotonic) -> None:
         super().__init__(look, name="response")
@@ -231,7 +222,8 @@ class ResponsePanel(Board):
     def on_click(self, event: Click) -> None:
         """Put the cursor where the plot was clicked."""
         if self._axis is not None and 0 <= event.x - _LABEL < self._axis.cells:
-            self.post_message(self.Pointed(self._axis.frequency_hz(event.x - _LABEL)))
+            place_hz = self._axis.frequency_hz(event.x - _LABEL)
+            self.act(lambda: self.desk.view.put_cursor(place_hz))
 
 
 def cursor_text(desk: Desk, width: int) -> str:

@@ -5,7 +5,6 @@ from __future__ import annotations
 from collections.abc import Sequence
 
 from textual.events import Click
-from textual.message import Message
 
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
@@ -17,14 +16,6 @@ __all__ = ["TimelinePanel"]
 
 class TimelinePanel(Board):
     """One row: the playhead's time, the line, the length. A click seeks."""
-
-    class Sought(Message):
-        """A click on the line."""
-
-        def __init__(self, frame: int) -> None:
-            super().__init__()
-            self.frame = frame
-            """Frame of the recording."""
 
     def __init__(self, desk: Desk, look: Look) -> None:
         super().__init__(look, name="timeline")
@@ -73,4 +64,5 @@ class TimelinePanel(Board):
         """Seek to where the line was clicked."""
         snapshot = self.desk.snapshot
         if snapshot is not None and self._cells > 0 and 0 <= event.x - self._first < self._cells:
-            self.post_message(self.Sought(round((event.x - self._first) * snapshot.frames / self._cells)))
+            frame = round((event.x - self._first) * snapshot.frames / self._cells)
+            self.act(lambda: self.desk.listening.seek(frame))
