@@ -5,7 +5,7 @@ from __future__ import annotations
 import contextlib
 import math
 from collections.abc import Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
@@ -13,6 +13,7 @@ import numpy as np
 from preview.audio import devices
 from preview.audio.sink import FileSink
 from preview.circuit.netlist import Netlist
+from preview.circuit.opamp import PERFECT
 from preview.engine.commands import Export
 from preview.engine.passages import Material, Source, run_through
 from preview.engine.readings import (
@@ -43,6 +44,7 @@ COLUMNS = 2000
 MARK_FRAMES = 256
 MARK_GAP_S = 0.010
 MARKS_MAX = 4000
+SLEWING = 0.999
 PIECE_S, PIECES = 10.0, 6
 _READ_FRAMES = 1 << 16
 
@@ -159,6 +161,7 @@ def _marks(job: MarksJob) -> Iterator[Report | None]:
         gap = round(MARK_GAP_S * source.sample_rate_hz)
         spans: dict[str, list[tuple[int, int]]] = {site.designator: [] for site in job.netlist.opamps}
         done = told = 0
+        slews = False
         chunks = run_through(
             job.netlist,
             source,
@@ -170,6 +173,7 @@ def _marks(job: MarksJob) -> Iterator[Report | None]:
         )
         for frame, volts, stage in chunks:
             for reading in stage.readings():
+                slews = slews or reading.slew_peak_v_per_s >= SLEWING * reading.slew_limit_v_per_s
                 if reading.clipped_s:
                     mark = spans[reading.designator]
                     span = frame, min(frame + len(volts) + stage.latency_frames, frames)
@@ -185,7 +189,37 @@ def _marks(job: MarksJob) -> Iterator[Report | None]:
                 yield _clip_marks(job.letter, frames, done, spans)
             else:
                 yield None
-        yield _clip_marks(job.letter, frames, frames, spans)
+        marks = _clip_marks(job.letter, frames, frames, spans)
+        yield marks
+        if slews or any(spans.values()):
+            yield from _asked(job, source, marks)
+
+
+def _asked(job: MarksJob, source: Source, marks: ClipMarks) -> Iterator[Report | None]:
+    """What the recording would ask of each op-amp, were there no limits."""
+    sites = [
+        replace(site, type=PERFECT.type, model=PERFECT, high_v=math.inf, low_v=-math.inf)
+        for site in job.netlist.opamps
+    ]
+    high_v = np.full(len(sites), -math.inf)
+    low_v, slew_v_per_s = -high_v, np.zeros(len(sites))
+    chunks = run_through(
+        replace(job.netlist, opamps=tuple(sites)),
+        source,
+        0,
+        marks.frames,
+        scale_v=job.material.scale_v,
+        quality=Quality.DRAFT,
+    )
+    for _, _, stage in chunks:
+        readings = stage.readings()
+        np.maximum(high_v, [reading.high_v for reading in readings], out=high_v)
+        np.minimum(low_v, [reading.low_v for reading in readings], out=low_v)
+        np.maximum(slew_v_per_s, [reading.slew_peak_v_per_s for reading in readings], out=slew_v_per_s)
+        yield None
+    asked = zip(marks.opamps, high_v.tolist(), low_v.tolist(), slew_v_per_s.tolist(), strict=True)
+    opamps = (replace(m, asked_high_v=h, asked_low_v=w, asked_slew_v_per_s=s) for m, h, w, s in asked)
+    yield replace(marks, opamps=tuple(opamps))
 
 
 def _clip_marks(letter: str, frames: int, done: int, spans: dict[str, list[tuple[int, int]]]) -> ClipMarks:

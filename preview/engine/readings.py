@@ -97,6 +97,12 @@ class OpAmpMarks:
     """U1, U2 ..."""
     spans: tuple[tuple[int, int], ...]
     """First frame and frame after the last of each passage that clips; nearer than 10 ms is one passage."""
+    asked_high_v: float | None = None
+    """Highest output that the whole recording asks for, were there no limits [V]; None as long as it is not known."""
+    asked_low_v: float | None = None
+    """Lowest output that it asks for [V]."""
+    asked_slew_v_per_s: float | None = None
+    """Fastest change of the output that it asks for [V/s]."""
 
 
 @dataclass(frozen=True, slots=True)

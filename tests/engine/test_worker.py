@@ -93,7 +93,7 @@ def test_clip_marks_are_where_the_output_reaches_a_rail(tmp_path):
     for first in (24_000, 60_000):
         samples[first : first + 480, 0] = tone
     audio = write(tmp_path / "bursts.wav", samples)
-    marks, _ = last(MarksJob("B", session_of(audio).netlist(), Material(path=audio, full_scale_v=10.0)))
+    marks, told = last(MarksJob("B", session_of(audio).netlist(), Material(path=audio, full_scale_v=10.0)))
     assert (marks.letter, marks.done_frames, marks.frames) == ("B", 96_000, 96_000)
     assert [one.designator for one in marks.opamps] == ["U1"]
     spans = marks.opamps[0].spans
@@ -102,8 +102,15 @@ def test_clip_marks_are_where_the_output_reaches_a_rail(tmp_path):
         # 15 V of 20 V are reached 0.7 ms after the burst begins; a mark is up to 356 frames wider on each side
         assert first - 360 <= start <= first + 34
         assert first + 400 <= end <= first + 480 + 400
+    assert [one.opamps[0].asked_high_v is None for one in told[-2:]] == [True, False], "the marks come first"
+    # without a rail 2 V leave with the gain at 200 Hz, 10 / sqrt(1 + (200 / 1591.5)^2): 19.84 V either way
+    one = marks.opamps[0]
+    assert one.asked_high_v == pytest.approx(19.84, rel=2e-3)
+    assert one.asked_low_v == pytest.approx(-19.84, rel=2e-3)
+    assert one.asked_slew_v_per_s == pytest.approx(2 * np.pi * 200 * 19.84, rel=1e-2)
     quiet, _ = last(MarksJob("A", session_of(audio).netlist(), Material(path=audio, full_scale_v=5.0)))
     assert quiet.opamps[0].spans == ()
+    assert quiet.opamps[0].asked_high_v is None, "nothing is at a limit: nobody has to ask"
 
 
 def test_an_op_amp_that_stays_at_a_rail_is_one_mark(tmp_path):
