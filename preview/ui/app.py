@@ -27,6 +27,7 @@ from preview.ui.panels.circuit import CircuitPanel
 from preview.ui.panels.figures import FiguresPanel
 from preview.ui.panels.footer import FooterPanel
 from preview.ui.panels.header import HeaderPanel
+from preview.ui.panels.opamps import OpAmpsPanel
 from preview.ui.panels.parts import PartsPanel
 from preview.ui.panels.path import PathPanel
 from preview.ui.panels.response import ResponsePanel
@@ -111,10 +112,12 @@ class DeskApp(DialogApp):
         self.circuit = CircuitPanel(self.desk, self.look)
         self.figures = FiguresPanel(self.desk, self.look)
         self.foot = FooterPanel(self.look, keys)
+        self.opamps = OpAmpsPanel(self.desk, self.look)
         self.candidates = CandidatesPanel(self.desk, self.look)
         self.views: dict[Shown, Board] = {
             Shown.RESPONSE: self.response,
             Shown.CIRCUIT: self.circuit,
+            Shown.OPAMPS: self.opamps,
             Shown.CANDIDATES: self.candidates,
         }
         for board in self.views.values():
@@ -223,6 +226,9 @@ class DeskApp(DialogApp):
             self.head.rebuild()
         for notice in link.notices():
             self.foot.say(notice.text, notice.severity)
+        for report in link.reports():
+            if said := self.desk.hear_report(report):
+                self.foot.say(said)
         snapshot = link.latest()
         self.desk.unanswered = self._watch.late(snapshot is not None)
         if snapshot is not None:
@@ -234,7 +240,7 @@ class DeskApp(DialogApp):
             if first:
                 self.arrange(self.size.width, self.size.height)
         if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
-            for board in (self.head, self.path, self.timeline, self.response, self.candidates):
+            for board in (self.head, self.path, self.timeline, *self.views.values()):
                 if board.display:
                     board.rebuild()
             self.foot.tick()
@@ -249,7 +255,6 @@ class DeskApp(DialogApp):
         for board in self.boards:
             if board.display:
                 board.rebuild()
-        self._keeper.noise = self.desk.view.noise
         self._keeper.want()
 
     def _sessions(self) -> tuple[Session, Session, Session | None]:

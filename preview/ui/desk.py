@@ -13,7 +13,7 @@ from dataclasses import replace
 
 from preview.circuit.netlist import OUT, OpAmpSite
 from preview.circuit.parts import Stage
-from preview.engine.messages import Command, Snapshot
+from preview.engine.messages import ClipMarks, Command, Overview, Report, Snapshot
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.asking import Outcome
@@ -67,6 +67,8 @@ class Desk:
         self.history = History()
         self.snapshot: Snapshot | None = None
         self.figures = FigureSet()
+        self.overview: Overview | None = None
+        self.marks: ClipMarks | None = None
         self.stopped = False
         self.unanswered = False
         self._before: dict[tuple[str, ...], Session] = {_place(session): session}
@@ -94,6 +96,14 @@ class Desk:
         self.snapshot = snapshot
         self.listening.take(snapshot)
         self.candidates.take(snapshot)
+
+    def hear_report(self, report: Report) -> str | None:
+        """What the engine has found out; a line about it, where a person should read one."""
+        if isinstance(report, Overview):
+            self.overview = report
+        elif isinstance(report, ClipMarks):
+            self.marks = report
+        return None
 
     def resume(self, link: EngineLink) -> None:
         """Bring a new engine to where the old one was; it waits at the playhead."""

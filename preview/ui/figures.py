@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, field, replace
 
 import numpy as np
@@ -12,6 +12,7 @@ from numpy.typing import NDArray
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD
 from preview.circuit.netlist import Netlist
+from preview.circuit.opamp import Limit
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.values.quality import Quality
@@ -56,7 +57,15 @@ class Figures:
     heard_db: Real | None = None
     """Gain of the running computation [dB], NaN above the band that it covers; None while the rate is unknown."""
     noise_v_rthz: Real | None = None
-    """Noise density at the output [V/sqrt(Hz)]; None where it was not asked for."""
+    """Noise density at the output [V/sqrt(Hz)]; None where it is not known."""
+    noise_vrms: float = math.nan
+    """Noise at the output, 20 Hz to 20 kHz [V rms]."""
+    rest_v: Mapping[str, float] = field(default_factory=dict)
+    """Voltage of every node without a signal [V]."""
+    offset_v: Mapping[str, float] = field(default_factory=dict)
+    """The part of it that the op-amps' offsets and input currents make [V]."""
+    speed_db: float = 0.0
+    """Largest change of the gain up to 20 kHz by the op-amps' finite speed [dB]."""
     corners_hz: tuple[float, ...] = ()
     """Frequencies 3 dB below the passband gain [Hz]."""
     passband_gain_db: float = math.nan
@@ -90,8 +99,6 @@ class FigureJob:
     """Sample rate of the running computation [Hz]; 0 where it is not known."""
     quality: Quality = Quality.STANDARD
     """Its quality."""
-    noise: bool = False
-    """Whether the noise is wanted too."""
 
 
 MakeFigures = Callable[[FigureJob], Figures]
@@ -115,18 +122,20 @@ def heard_band_hz(sample_rate_hz: float) -> float:
     return min(20e3, 0.45 * sample_rate_hz)
 
 
-def job_of(session: Session, sample_rate_hz: float, *, noise: bool = False) -> FigureJob:
+def job_of(session: Session, sample_rate_hz: float) -> FigureJob:
     """What is to be computed for a session; raises CircuitError."""
     drawn = None
-    if (session.source, session.load) != (IDEAL_SOURCE, NO_LOAD):
-        drawn = replace(session, source=IDEAL_SOURCE, load=NO_LOAD).netlist()
-    return FigureJob(session.netlist(), drawn, sample_rate_hz, session.quality, noise)
+    if session.source_ohm or session.load_ohm is not None:
+        drawn = replace(session, source_ohm=0.0, load_ohm=None).netlist()
+    return FigureJob(session.netlist(), drawn, sample_rate_hz, session.quality)
 
 
 def compute_figures(job: FigureJob) -> Figures:
     """The figures of a circuit; one that cannot be computed gives its reason as ``problem``."""
     # Imported at the first use, in the worker's thread, so that the desk is on the screen sooner.
     from preview.analysis.response import analyse, heard, response_error_db
+    from preview.network.noise import OutputNoise
+    from preview.network.operating import operating_point
     from preview.network.transfer import response
 
     frequency_hz = np.geomspace(LOWEST_HZ, HIGHEST_HZ, _POINTS)
@@ -141,6 +150,12 @@ def compute_figures(job: FigureJob) -> Figures:
             heard_db = np.full(len(frequency_hz), math.nan)
             covered = frequency_hz <= 0.45 * rate_hz
             heard_db[covered] = _db(heard(job.netlist, rate_hz, job.quality, frequency_hz[covered]))
+        noise = OutputNoise(job.netlist)
+        noise_v_rthz, noise_vrms = noise.spectrum(frequency_hz).output_v_rthz, noise.total().output_vrms
+        rest_v = operating_point(job.netlist).volts
+        true_v = operating_point(_without(job.netlist, "offset")).volts
+        audio = frequency_hz[(frequency_hz >= 20.0) & (frequency_hz <= 20e3)]
+        change_db = _db(response(job.netlist, audio)) - _db(response(_without(job.netlist, "speed"), audio))
     except PreviewError as error:
         return Figures(problem=str(error))
     return Figures(
@@ -154,7 +169,18 @@ def compute_figures(job: FigureJob) -> Figures:
         error_db=error_db,
         sample_rate_hz=rate_hz,
         quality=job.quality,
+        noise_v_rthz=noise_v_rthz,
+        noise_vrms=noise_vrms,
+        rest_v=rest_v,
+        offset_v={node: volts - true_v[node] for node, volts in rest_v.items()},
+        speed_db=float(np.abs(change_db[np.isfinite(change_db)]).max(initial=0.0)),
     )
+
+
+def _without(netlist: Netlist, limit: Limit) -> Netlist:
+    """The circuit with one limit or fault taken away from every op-amp."""
+    sites = (replace(site, model=site.model.without((limit,))) for site in netlist.opamps)
+    return replace(netlist, opamps=tuple(sites))
 
 
 def _db(gain: NDArray[np.complex128]) -> Real:
@@ -173,7 +199,6 @@ class FigureKeeper:
 
     def __init__(self, make: MakeFigures) -> None:
         self.sample_rate_hz = 0.0
-        self.noise = False
         self._make = make
         self._wanted = asyncio.Event()
         self._kept: dict[FigureJob, Figures] = {}
@@ -202,7 +227,7 @@ class FigureKeeper:
     async def of(self, session: Session) -> Figures:
         """The figures of a session, computed in a thread unless they are still known."""
         try:
-            job = job_of(session, self.sample_rate_hz, noise=self.noise)
+            job = job_of(session, self.sample_rate_hz)
         except PreviewError as error:
             return Figures(problem=str(error))
         found = self._kept.get(job)

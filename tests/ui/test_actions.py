@@ -10,6 +10,7 @@ from textual.pilot import Pilot
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD
 from preview.circuit.netlist import Netlist
+from preview.circuit.parts import Supply
 from preview.engine.messages import (
     ClearHolds,
     Command,
@@ -40,7 +41,7 @@ from preview.ui.screens.entry import EntryScreen
 from preview.ui.screens.pages import HelpScreen, PageScreen, help_lines
 from preview.ui.screens.palette import PaletteScreen
 from preview.ui.units import LevelUnit
-from preview.ui.view import Shown
+from preview.ui.view import Axis, Behind, Ghost, Shown
 from preview.values.quality import Quality
 
 SMALL, LARGE = (80, 24), (160, 48)
@@ -57,6 +58,14 @@ def _sent(command: Command) -> Check:
 
 def _asks(title: str) -> Check:
     return lambda app, _sent: isinstance(app.screen, EntryScreen) and app.screen.question.title == title
+
+
+def _cursor_moved(ratio: float) -> Check:
+    """By that ratio from where it begins: the corner, or 1 kHz while that is not known yet."""
+    return lambda app, _sent: any(
+        math.isclose(app.desk.view.cursor_hz, start_hz * ratio, rel_tol=1e-6)
+        for start_hz in (1e3, 1.0 / (2.0 * math.pi * 100e3 * 1e-9))
+    )
 
 
 def _keeps(letter: str) -> Check:
@@ -135,6 +144,17 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "candidate_copy": (("K",), _lists("Copy B over")),
     "candidate_rename": ((), _asks("Name of A")),
     "candidate_drop": (("K",), _lists("Drop")),
+    "next_opamp": ((), lambda app, _: app.desk.view.opamp == "U1"),
+    "opamp_limits": ((), _lists("Limits of the op-amps: Enter takes one away or gives it back")),
+    "next_supply": ((), lambda app, sent: app.desk.session.supply == Supply(18.0, -18.0)),
+    "ghost": ((), lambda app, _: app.desk.view.ghost is Ghost.LAST),
+    "spectrum": ((), lambda app, _: app.desk.view.behind is Behind.OUTPUT),
+    "noise_floor": ((), lambda app, _: app.desk.view.noise),
+    "axis": ((), lambda app, _: app.desk.view.axis is Axis.AUDIO),
+    "cursor_down": (("|",), _cursor_moved(2.0 ** (-1 / 12))),
+    "cursor_up": (("|",), _cursor_moved(2.0 ** (1 / 12))),
+    "cursor_off": (("}",), lambda app, _: app.desk.view.cursor_hz is None),
+    "node_volts": ((), lambda app, _: app.desk.view.node_volts),
     "next_unit": ((), lambda app, _: app.desk.view.unit is LevelUnit.DBU),
     "clear_holds": ((), _sent(ClearHolds())),
     "phase": ((), lambda app, _: app.desk.view.phase),
@@ -226,7 +246,7 @@ async def test_a_held_key_scrolls_the_help_page_to_its_end(make_app) -> None:
         for _ in range(4):  # keys that come faster than the screen is painted count one by one
             app.screen.do_row_down()
         assert page.scroll_offset.y == 12
-        await pilot.press(*["down"] * 40)
+        await pilot.press(*["down"] * 60)
         assert page.scroll_offset.y == page.max_scroll_y
         app.screen.do_row_up()
         assert page.scroll_offset.y == page.max_scroll_y - 3

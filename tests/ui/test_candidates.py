@@ -85,7 +85,9 @@ def test_hearing_another_candidate_sends_nothing_but_its_letter(desk, engine) ->
     sent = len(engine.sent)
     desk.candidates.hear("A")
     desk.candidates.hear("B")
-    assert engine.sent[sent:] == [SelectCandidate("A"), SelectCandidate("B")], "it is ready: no crossfade anew"
+    assert engine.sent[sent:] == [SelectCandidate("A"), SelectCandidate("B")], (
+        "it is ready: no crossfade anew"
+    )
     assert desk.session.supply == Supply(9.0, -9.0)
 
 
