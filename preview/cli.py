@@ -23,7 +23,7 @@ from typing import TYPE_CHECKING, NoReturn
 from preview import __version__
 from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
-from preview.errors import OutputFileError, PreviewError, UsageError, printable
+from preview.errors import PreviewError, UsageError, debugging, printable
 
 if TYPE_CHECKING:
     from preview.analysis.answers import Answers
@@ -96,7 +96,7 @@ def _terminated(_number: int, _frame: FrameType | None) -> None:
 
 
 def _debug() -> None:
-    if os.environ.get("PREVIEW_DEBUG") == "1":
+    if debugging():
         traceback.print_exc()
 
 

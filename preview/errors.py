@@ -18,6 +18,7 @@ Family tree::
 
 from __future__ import annotations
 
+import os
 import unicodedata
 
 __all__ = [
@@ -33,6 +34,7 @@ __all__ = [
     "StageFileError",
     "UnknownNameError",
     "UsageError",
+    "debugging",
     "printable",
 ]
 
@@ -111,6 +113,11 @@ class UnknownNameError(CircuitError, LookupError):
 
 class PartValueError(CircuitError):
     """A part value that no such part can have."""
+
+
+def debugging() -> bool:
+    """Whether a fault inside the program shall be seen with all it has: ``PREVIEW_DEBUG=1``."""
+    return os.environ.get("PREVIEW_DEBUG") == "1"
 
 
 def printable(text: str) -> str:

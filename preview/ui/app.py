@@ -31,7 +31,7 @@ from preview.ui.panels.opamps import OpAmpsPanel
 from preview.ui.panels.parts import PartsPanel
 from preview.ui.panels.path import PathPanel
 from preview.ui.panels.response import ResponsePanel
-from preview.ui.panels.timeline import TimelinePanel
+from preview.ui.panels.timeline import TimelinePanel, WaveformPanel
 from preview.ui.screens.pages import CautionScreen
 from preview.ui.theme import PALETTES, Look, first_palette
 from preview.ui.view import Shown
@@ -114,11 +114,13 @@ class DeskApp(DialogApp):
         self.foot = FooterPanel(self.look, keys)
         self.opamps = OpAmpsPanel(self.desk, self.look)
         self.candidates = CandidatesPanel(self.desk, self.look)
+        self.waveform = WaveformPanel(self.desk, self.look)
         self.views: dict[Shown, Board] = {
             Shown.RESPONSE: self.response,
             Shown.CIRCUIT: self.circuit,
             Shown.OPAMPS: self.opamps,
             Shown.CANDIDATES: self.candidates,
+            Shown.TIMELINE: self.waveform,
         }
         for board in self.views.values():
             board.add_class("view")
@@ -173,6 +175,10 @@ class DeskApp(DialogApp):
             self.desk.listening.play(True)
             self.show()
 
+    def _fatal_error(self) -> None:
+        """Close the screen; ``run_desk`` says what happened in a line, not in pages over the shell's text."""
+        self._close_messages_no_wait()
+
     def end(self, number: int) -> None:
         """Leave because of a signal."""
         self.ended_by = number
@@ -200,6 +206,7 @@ class DeskApp(DialogApp):
             board.set_class(len(shown) > 1 and name is not Shown.RESPONSE, "second")
         screen.set_class(shown == {Shown.CIRCUIT}, "drawing")
         self.path.styles.height = self.path.wanted_height(height)
+        self.timeline.styles.height = 1 if height < 30 else 2 if height < TALL else 3
         self.foot.stand(1 if height < 30 or width >= 160 else 2)
 
     def on_app_focus(self, _event: AppFocus) -> None:
@@ -323,7 +330,7 @@ def run_desk(
     Raises
     ------
     PreviewError
-        The desk stopped on a fault of its own; the terminal is restored and the fault is on standard error.
+        The desk stopped on a fault of its own; the terminal is restored.
     KeyboardInterrupt
         A signal ended it; the terminal is restored.
     """
@@ -336,5 +343,9 @@ def run_desk(
     if app.ended_by is not None:
         raise KeyboardInterrupt
     if left is None and app.return_code:
-        raise PreviewError("the desk stopped on a fault of its own", "the report stands above")
+        fault = app._exception
+        what = f" ({type(fault).__name__}: {fault})" if fault is not None else ""
+        raise PreviewError(
+            f"the desk stopped on a fault of its own{what}", "PREVIEW_DEBUG=1 shows where"
+        ) from fault
     return left or app.desk.session

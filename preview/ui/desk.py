@@ -19,6 +19,7 @@ from preview.session import Session
 from preview.ui.asking import Outcome
 from preview.ui.candidates import Candidates
 from preview.ui.changes import commands_between, whole_state
+from preview.ui.clips import Clips
 from preview.ui.figures import FigureSet
 from preview.ui.history import History
 from preview.ui.keymap import KeyMap
@@ -69,6 +70,8 @@ class Desk:
         self.figures = FigureSet()
         self.overview: Overview | None = None
         self.marks: ClipMarks | None = None
+        self.marks_old = False
+        """Whether the circuit has been changed since the clips were looked for."""
         self.stopped = False
         self.unanswered = False
         self._before: dict[tuple[str, ...], Session] = {_place(session): session}
@@ -76,8 +79,17 @@ class Desk:
         self.parts = PartWork(self)
         self.listening = Listening(self)
         self.view = View(self)
+        self.clips = Clips(self)
         self.candidates = Candidates(self)
-        self._rooms = (self, self.parts, self.listening, self.view, self.candidates, Questions(self))
+        self._rooms = (
+            self,
+            self.parts,
+            self.listening,
+            self.view,
+            self.clips,
+            self.candidates,
+            Questions(self),
+        )
 
     # ---- actions ----
 
@@ -102,7 +114,7 @@ class Desk:
         if isinstance(report, Overview):
             self.overview = report
         elif isinstance(report, ClipMarks):
-            self.marks = report
+            self.marks, self.marks_old = report, False
         return None
 
     def resume(self, link: EngineLink) -> None:
@@ -138,6 +150,7 @@ class Desk:
     def _become(self, session: Session, commands: list[Command]) -> None:
         for command in commands:
             self.link.send(command)
+        self.marks_old = True
         here = _place(session)
         if here != _place(self.session):
             self.before = self._before.setdefault(here, session)

@@ -8,7 +8,7 @@ from pathlib import Path
 from textual.app import App
 from textual.screen import Screen
 
-from preview.errors import PreviewError
+from preview.errors import PreviewError, debugging
 from preview.session import Session
 from preview.ui.asking import Menu, Outcome, Page, Question
 from preview.ui.desk import Desk
@@ -64,6 +64,10 @@ class DialogApp(App[Session]):
             outcome = action()
         except PreviewError as error:
             self.say(str(error), "error")
+        except Exception as error:  # what one action cannot do must not take the sound down
+            if debugging():
+                raise
+            self.say(f"an error inside the program ({type(error).__name__}: {error})", "error")
         else:
             self.present(outcome)
         self.show()

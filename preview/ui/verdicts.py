@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING
 from preview.circuit.netlist import OpAmpSite
 from preview.circuit.opamp import OpAmpReading
 from preview.circuit.opamp_units import format_figure
-from preview.engine.messages import ClipMarks, OpAmpMarks
+from preview.engine.messages import OpAmpMarks
 from preview.ui.signalpath import AT_THE_LIMIT
 from preview.ui.words import db, duration, milliamperes, percent, slew_of, volts
 from preview.values.levels import ratio_db
@@ -87,7 +87,7 @@ def verdicts(desk: Desk, designator: str | None = None) -> list[Verdict]:
 
 def _marks(desk: Desk, designator: str) -> OpAmpMarks | None:
     """What was found out about an op-amp by looking through the recording."""
-    marks = desk.marks
+    marks = None if desk.marks_old else desk.marks
     return next((m for m in marks.opamps if m.designator == designator), None) if marks else None
 
 
@@ -123,7 +123,7 @@ def _limit_words(site: OpAmpSite) -> str:
 
 def _swing_cure(desk: Desk, site: OpAmpSite) -> str:
     """How much more supply or less gain the recording needs; the figure comes from running it without limits."""
-    marks, own = desk.marks, _marks(desk, site.designator)
+    marks, own = None if desk.marks_old else desk.marks, _marks(desk, site.designator)
     if own is None or own.asked_high_v is None or own.asked_low_v is None:
         if marks is not None and marks.done_frames < marks.frames:
             done = percent(marks.done_frames / marks.frames)
@@ -231,10 +231,3 @@ def _noise(desk: Desk, site: OpAmpSite) -> list[Verdict]:
         return [Verdict(site.designator, "noise", Grade.FINE, text, "fine")]
     grade = Grade.TIGHT if below_db >= _NOISE_TIGHT_DB else Grade.LIMITS
     return [Verdict(site.designator, "noise", grade, text, "smaller resistors, or a quieter type")]
-
-
-def looked_through(marks: ClipMarks | None) -> str:
-    """How far the recording was looked through, in words; empty where it is done."""
-    if marks is None or marks.done_frames >= marks.frames or marks.frames == 0:
-        return ""
-    return f"looking through the recording: {percent(marks.done_frames / marks.frames)}"

@@ -196,6 +196,12 @@ def low_pass_session(audio: Path | None = Path("announcement.wav")) -> Session:
     )
 
 
+@pytest.fixture(autouse=True)
+def _faults_are_seen(monkeypatch: pytest.MonkeyPatch) -> None:
+    """What a panel or an action cannot do fails the test instead of being said on the screen."""
+    monkeypatch.setenv("PREVIEW_DEBUG", "1")
+
+
 @pytest.fixture
 def engine() -> FakeEngine:
     """A pretended engine that waits at the start of a 12.5 s stereo file."""

@@ -10,7 +10,7 @@ from textual.events import Click
 from preview.errors import printable
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
-from preview.ui.verdicts import Grade, Verdict, looked_through, verdicts
+from preview.ui.verdicts import Grade, Verdict, verdicts
 from preview.ui.widgets.board import Board, Row, heading, row
 from preview.ui.words import limits, rails, type_name
 
@@ -34,7 +34,7 @@ class OpAmpsPanel(Board):
         note = f"supply {rails(desk.session.supply)}"
         if desk.session.without:
             note += f", without {', '.join(desk.session.without)}"
-        if progress := looked_through(desk.marks):
+        if progress := desk.clips.progress():
             note += f"; {progress}"
         result = [heading("op-amps", note, width - 1, self.look)]
         self._heads = {}

@@ -12,6 +12,7 @@ from textual.message import Message
 from textual.strip import Strip
 from textual.widget import Widget
 
+from preview.errors import debugging, printable
 from preview.ui.asking import Outcome
 from preview.ui.theme import Look
 
@@ -98,7 +99,13 @@ class Board(Widget):
         width, height = self.size
         if width == 0 or height == 0:
             return
-        new = list(self.rows(width, height))[:height]
+        try:
+            new = list(self.rows(width, height))[:height]
+        except Exception as error:  # a panel that cannot be drawn must not take the sound down
+            if debugging():
+                raise
+            text = f" {self.id} cannot be drawn ({type(error).__name__}: {printable(str(error))})"
+            new = [row((text, self.look.palette.alarm))]
         old, self._rows = self._rows, new
         if len(new) != len(old):
             self.refresh()

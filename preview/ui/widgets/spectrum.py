@@ -20,12 +20,14 @@ if TYPE_CHECKING:
 
 __all__ = ["Spectrum", "VoltScale"]
 
-_SPAN_DB = 120.0
+_SPAN_DB = 140.0
 """Top to bottom of the scale of volts [dB]: from the rails to microvolts."""
 _BAND_OCTAVE = 1.0 / 6.0
 _INPUT = "╴"
 _COLUMN = "░"
 _TOPS = "▁▂▃▄▅▆▇"
+_BELOW = 1e6
+"""Lines from the top of what is not on the plot."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -124,7 +126,7 @@ class Spectrum:
         for word, (levels_v, shown) in wanted.items():
             dots = scale.dots(np.asarray(levels_v, dtype=np.float64), height) if shown and levels_v else None
             self._tops[word] = [
-                math.inf if dots is None or band is None else float(dots[band]) / 4.0 for band in bands
+                _BELOW if dots is None or band is None else float(dots[band]) / 4.0 for band in bands
             ]
 
     def glyph(self, x: int, y: int) -> str:
