@@ -204,13 +204,6 @@ def test_a_designator_inside_a_longer_one_is_not_taken_for_it(session) -> None:
     assert named == ["R1"]
 
 
-def test_a_stage_without_a_drawing_is_listed(desk) -> None:
-    desk.session = replace(desk.session, stage=replace(desk.session.stage, drawing=""))
-    lines = [text_of(r) for r in CircuitPanel(desk, Look()).rows(57, 11)]
-    assert any("R1  10 kΩ  from in to sum" in line for line in lines)
-    assert any("U1  ideal  + gnd, - sum, out out" in line for line in lines)
-
-
 # ---- boards and palettes ----
 
 

@@ -5,16 +5,17 @@ from __future__ import annotations
 import re
 from collections.abc import Sequence
 
-from rich.style import Style
+from textual.events import Click
 
+from preview.circuit.nodes import GND, IN
 from preview.circuit.parts import OpAmp, Part, Potentiometer, Stage
 from preview.errors import printable
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
-from preview.ui.widgets.board import Board, Row, heading, row
-from preview.ui.words import code, value
+from preview.ui.widgets.board import Board, Row, heading, row, row_cells
+from preview.ui.words import code, value, volts
 
-__all__ = ["CircuitPanel", "annotated", "drawing_width", "part_line"]
+__all__ = ["CircuitPanel", "annotated", "drawing_width", "node_lines", "part_line"]
 
 
 def drawing_width(stage: Stage) -> int:
@@ -60,49 +61,112 @@ def _label(part: Part, blanks: int) -> str:
 
 
 class CircuitPanel(Board):
-    """The stage's drawing with live values, or a plain list where it has none."""
+    """The stage's drawing with live values, or a list of its parts where it has none; volts at the nodes on request.
+
+    A click on a part selects it.
+    """
 
     def __init__(self, desk: Desk, look: Look) -> None:
         super().__init__(look, name="circuit")
         self.desk = desk
+        self._places: list[tuple[int, int, int, str]] = []
 
     def rows(self, width: int, height: int) -> Sequence[Row]:
         """See :class:`Board`."""
         stage, palette = self.desk.session.stage, self.look.palette
+        drawn = bool(stage.drawing.strip())
+        nodes = node_lines(self.desk) if self.desk.view.node_volts else []
+        wide = max((len(line) for line in nodes), default=0) + 3
+        note = printable(stage.name) + (", volts at the nodes" if nodes else "")
+        result = [heading("circuit", note, width - 1, self.look)]
+        room = max(0, height - 1)
+        own = drawing_width(stage) + 2 if drawn else max(len(part_line(part)) for part in stage.parts) + 3
+        lines = len(stage.drawing.rstrip("\n").splitlines()) if drawn else len(stage.parts)
+        self._places = []
+        if not nodes:
+            return [*result, *self._parts(room, drawn)][:height]
+        told = [
+            row((f" {line}", palette.strong if n == 0 else palette.plain)) for n, line in enumerate(nodes)
+        ]
+        if width >= own + wide:
+            beside = self._parts(room, drawn)
+            blank: Row = row(("", palette.plain))
+            for y in range(max(len(beside), min(room, len(told)))):
+                left = beside[y] if y < len(beside) else blank
+                right = told[y] if y < len(told) else blank
+                result.append((*left, *row((" " * (own - row_cells(left)), palette.plain)), *right))
+            return result[:height]
+        if room >= lines + len(told):
+            return [*result, *self._parts(lines, drawn), *told]
+        return [*result, *told][:height]
+
+    def _parts(self, room: int, drawn: bool) -> list[Row]:
+        """The drawing or the list, in no more than so many rows, the selected part in view."""
+        stage, palette = self.desk.session.stage, self.look.palette
         part = self.desk.parts.part
         selected = part.designator if part else None
-        result = [heading("circuit", printable(stage.name), width - 1, self.look)]
-        room = max(0, height - 1)
-        if not stage.drawing.strip():
-            return [*result, *self._list(stage, selected)][:height]
-        lines = annotated(stage, selected)
+        if drawn:
+            lines = annotated(stage, selected)
+        else:
+            names = max(len(p.designator) for p in stage.parts)
+            values = max(len(value(p)) for p in stage.parts)
+            lines = [[(printable(part_line(p, names, values)), p.designator)] for p in stage.parts]
         first = _first_line([any(name == selected for _, name in line) for line in lines], room)
-        styles: dict[bool, Style] = {True: palette.selected, False: palette.strong}
-        for line in lines[first : first + room]:
-            pieces = [(text, styles[name == selected] if name else palette.plain) for text, name in line]
-            result.append(row((" ", palette.plain), *pieces))
-        return result
-
-    def _list(self, stage: Stage, selected: str | None) -> list[Row]:
-        """Every part with its nodes, where there is no drawing."""
-        palette = self.look.palette
         rows = []
-        for part in stage.parts:
-            text = part_line(part)
-            chosen = part.designator == selected
-            mark = "▸" if chosen else " "
-            rows.append(
-                row(
-                    (mark, palette.mark),
-                    (f" {printable(text)} ", palette.selected if chosen else palette.plain),
+        for y, line in enumerate(lines[first : first + room]):
+            here = next((name for _, name in line if name == selected), None)
+            mark = "▸" if not drawn and here else " "
+            pieces = [(mark, palette.mark if mark == "▸" else palette.plain)]
+            x = 1
+            for text, name in line:
+                style = (
+                    palette.plain if not name else palette.selected if name == selected else palette.strong
                 )
-            )
+                pieces.append((text, style))
+                if name:
+                    self._places.append((y + 1, x, x + len(text), name))
+                x += len(text)
+            rows.append(row(*pieces))
         return rows
 
+    def on_click(self, event: Click) -> None:
+        """Select the part that was clicked."""
+        here = (name for y, left, right, name in self._places if event.y == y and left <= event.x < right)
+        if name := next(here, None):
+            self.act(lambda: self._choose(name))
 
-def part_line(part: Part) -> str:
-    """A part in words: what it is, and where it is connected."""
-    return f"{part.designator}  {value(part)}  {_connections(part)}"
+    def _choose(self, name: str) -> None:
+        """A part that can be set is selected in the list, an op-amp for its type and verdicts."""
+        if not self.desk.parts.choose_named(name) and name in {
+            o.designator for o in self.desk.session.stage.opamps
+        }:
+            self.desk.view.choose_opamp(name)
+
+
+def node_lines(desk: Desk) -> list[str]:
+    """Direct voltage of each node without a signal, and the highest peak of those that are measured."""
+    now, snapshot = desk.figures.now, desk.snapshot
+    peaks: dict[str, float] = {}
+    if snapshot is not None:
+        readings = {reading.designator: reading.peak_v for reading in snapshot.opamps}
+        peaks = {site.out: readings[site.designator] for site in desk.sites() if site.designator in readings}
+        peaks |= {IN: max(snapshot.input.hold_v, default=0.0)}
+        if not snapshot.bypass:
+            peaks[desk.session.output] = max(snapshot.output.hold_v, default=0.0)
+    rest_v = now.rest_v if now is not None else {}
+    names = [name for name in rest_v if name != GND] or sorted(peaks)
+    cells = max([4, *(len(name) for name in names)])
+    lines = [f"{'node':<{cells}}{'direct':>10}{'peak':>10}"]
+    for name in names:
+        rest = volts(rest_v[name]) if name in rest_v else "-"
+        peak = volts(peaks[name]) if name in peaks else "-"
+        lines.append(f"{printable(name):<{cells}}{rest:>10}{peak:>10}")
+    return lines
+
+
+def part_line(part: Part, name_cells: int = 0, value_cells: int = 0) -> str:
+    """A part in words, in columns of these widths: what it is, and where it is connected."""
+    return f"{part.designator:<{name_cells}}  {value(part):<{value_cells}}  {_connections(part)}"
 
 
 def _connections(part: Part) -> str:
