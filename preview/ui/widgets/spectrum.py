@@ -39,10 +39,10 @@ class VoltScale:
 
     @classmethod
     def of(cls, desk: Desk) -> VoltScale:
-        """A scale that begins at the next power of ten above full scale and the output's limit."""
+        """A scale that begins at the power of ten about full scale or the output's limit."""
         wall_v, _ = desk.output_wall()
         highest_v = max(desk.session.full_scale.volts, wall_v or 0.0)
-        return cls(10.0 ** math.ceil(math.log10(highest_v / math.sqrt(2.0))))
+        return cls(10.0 ** math.ceil(math.log10(highest_v / math.sqrt(2.0) / 1.25)))
 
     def dots(self, vrms: NDArray[np.float64], height: int) -> NDArray[np.float64]:
         """Heights in dots from the top; what is below the scale lies below the plot."""
