@@ -38,6 +38,10 @@ ENDINGS = tuple(getattr(signal, name) for name in ("SIGTERM", "SIGHUP") if hasat
 """Signals that end the program in an orderly way: told to stop, the terminal closed."""
 
 
+_DUMB = ("", "dumb", "unknown")
+"""Values of TERM that promise nothing."""
+
+
 class _Parser(argparse.ArgumentParser):
     """A parser that reports in the house's own way."""
 
@@ -140,10 +144,11 @@ def _parser() -> argparse.ArgumentParser:
     )
     listen.add_argument("--device", metavar="NAME", help="sound device, by name")
     listen.add_argument(
-        "--signal", metavar="TEXT", help='a test signal in place of a recording, such as "sine 1k 1V"'
+        "--plain",
+        action="store_true",
+        help="lines of text in place of a screen, for screen readers and pipes",
     )
-    listen.add_argument("--live", action="store_true", help="the device's input in place of a recording")
-    listen.add_argument("--input", metavar="NAME", help="input device of --live, by name")
+    listen.add_argument("--live", action="store_true", help=argparse.SUPPRESS)
     add_stage_options(listen)
 
     render = command("render", _render, "the recording through the stage, as a file")
@@ -233,8 +238,12 @@ def _name(text: str) -> str:
 def _listen(options: argparse.Namespace) -> int:
     from preview.engine.process import EngineProcess
 
-    terminal = all(stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
-    engine = EngineProcess.spawn() if terminal else None  # it loads while the options are read
+    terminal = all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
+    if terminal and not options.plain and os.environ.get("TERM") in _DUMB:
+        _say("this terminal has no screen to draw on: line mode, as with --plain")
+        options.plain = True
+    # it loads while the options are read
+    engine = EngineProcess.spawn() if terminal or options.plain else None
     try:
         return _desk(options, engine)
     finally:
@@ -271,12 +280,23 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     _echo(session, info.warnings if info is not None else ())
     check_stable(session.netlist())
     if engine is None:
-        raise UsageError("the desk needs a terminal", "preview render works without one")
+        raise UsageError(
+            "the desk needs a terminal", "preview listen --plain reads lines and works without one"
+        )
     config = EngineConfig(session=session, device=options.device, silent=options.silent)
     engine.begin(config)
-    from preview.ui.app import run_desk
 
-    run_desk(session, engine, restart=lambda: EngineProcess.start(config))
+    def restart() -> EngineProcess:
+        return EngineProcess.start(config)
+
+    if options.plain:
+        from preview.ui.plain import run_plain
+
+        run_plain(session, engine, lines=sys.stdin, out=sys.stdout, restart=restart)
+    else:
+        from preview.ui.app import run_desk
+
+        run_desk(session, engine, restart=restart)
     return 0
 
 

@@ -14,7 +14,8 @@ from preview.ui.app import DeskApp
 from preview.ui.desk import Desk
 from preview.ui.figures import Figures, compute_figures, job_of
 from preview.ui.opamps import with_opamp_type
-from preview.ui.panels.circuit import CircuitPanel, node_lines
+from preview.ui.panels.circuit import CircuitPanel
+from preview.ui.texts import node_lines
 from preview.ui.theme import Look
 from preview.ui.view import Shown
 

@@ -11,8 +11,8 @@ import pytest
 from preview.engine.messages import SpectrumReading
 from preview.ui.desk import Desk
 from preview.ui.figures import Figures, compute_figures, heard_band_hz, job_of
-from preview.ui.panels.figures import corner_text, heard_text
 from preview.ui.panels.response import ResponsePanel, cursor_text
+from preview.ui.texts import corner_text, heard_text
 from preview.ui.theme import Look
 from preview.ui.view import Axis, Behind, Ghost
 from preview.ui.widgets.dots import DotField

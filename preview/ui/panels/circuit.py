@@ -7,15 +7,15 @@ from collections.abc import Sequence
 
 from textual.events import Click
 
-from preview.circuit.nodes import GND, IN
-from preview.circuit.parts import OpAmp, Part, Potentiometer, Stage
+from preview.circuit.parts import Part, Stage
 from preview.errors import printable
 from preview.ui.desk import Desk
+from preview.ui.texts import node_lines, part_line
 from preview.ui.theme import Look
 from preview.ui.widgets.board import Board, Row, heading, row, row_cells
-from preview.ui.words import code, value, volts
+from preview.ui.words import code, value
 
-__all__ = ["CircuitPanel", "annotated", "drawing_width", "node_lines", "part_line"]
+__all__ = ["CircuitPanel", "annotated", "drawing_width"]
 
 
 def drawing_width(stage: Stage) -> int:
@@ -141,40 +141,6 @@ class CircuitPanel(Board):
             o.designator for o in self.desk.session.stage.opamps
         }:
             self.desk.view.choose_opamp(name)
-
-
-def node_lines(desk: Desk) -> list[str]:
-    """Direct voltage of each node without a signal, and the highest peak of those that are measured."""
-    now, snapshot = desk.figures.now, desk.snapshot
-    peaks: dict[str, float] = {}
-    if snapshot is not None:
-        readings = {reading.designator: reading.peak_v for reading in snapshot.opamps}
-        peaks = {site.out: readings[site.designator] for site in desk.sites() if site.designator in readings}
-        peaks |= {IN: max(snapshot.input.hold_v, default=0.0)}
-        if not snapshot.bypass:
-            peaks[desk.session.output] = max(snapshot.output.hold_v, default=0.0)
-    rest_v = now.rest_v if now is not None else {}
-    names = [name for name in rest_v if name != GND] or sorted(peaks)
-    cells = max([4, *(len(name) for name in names)])
-    lines = [f"{'node':<{cells}}{'direct':>10}{'peak':>10}"]
-    for name in names:
-        rest = volts(rest_v[name]) if name in rest_v else "-"
-        peak = volts(peaks[name]) if name in peaks else "-"
-        lines.append(f"{printable(name):<{cells}}{rest:>10}{peak:>10}")
-    return lines
-
-
-def part_line(part: Part, name_cells: int = 0, value_cells: int = 0) -> str:
-    """A part in words, in columns of these widths: what it is, and where it is connected."""
-    return f"{part.designator:<{name_cells}}  {value(part):<{value_cells}}  {_connections(part)}"
-
-
-def _connections(part: Part) -> str:
-    """Where it is connected, in words."""
-    if isinstance(part, OpAmp):
-        return f"+ {part.plus}, - {part.minus}, out {part.out}"
-    wiper = f", wiper {part.wiper}" if isinstance(part, Potentiometer) else ""
-    return f"from {part.nodes[0]} to {part.nodes[1]}{wiper}"
 
 
 def _first_line(has_selected: list[bool], room: int) -> int:

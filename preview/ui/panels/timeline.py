@@ -207,7 +207,8 @@ class WaveformPanel(_Timeline):
         desk, palette = self.desk, self.look.palette
         snapshot = desk.snapshot
         clips = desk.clips.all
-        note = desk.clips.progress() or (f"{len(clips)} clips" if desk.marks else "")
+        count = "1 clip" if len(clips) == 1 else f"{len(clips)} clips"
+        note = desk.clips.progress() or (count if desk.marks else "")
         overview = desk.overview
         if overview is None or overview.done_ratio < 1.0:
             note = (

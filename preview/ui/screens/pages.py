@@ -12,10 +12,11 @@ from textual.widgets import Static
 from preview.errors import printable
 from preview.ui.actions import Group
 from preview.ui.asking import Page
+from preview.ui.firstrun import HEARING
 from preview.ui.keymap import KeyMap
 from preview.ui.screens.dialog import Dialog
 
-__all__ = ["HEARING", "CautionScreen", "HelpScreen", "PageScreen", "help_lines"]
+__all__ = ["CautionScreen", "HelpScreen", "PageScreen", "help_lines"]
 
 _MARKS = (
     ("▆ ▂ ╿", "RMS stands tall, the live peak lies low, the upright stroke is the highest peak (hold)"),
@@ -47,12 +48,6 @@ _CAUTIONS = (
     "Hearing: start low. A circuit with gain can jump by 20 dB and more when a part changes.",
     "A computed stage proves nothing about mains or phantom-powered equipment: have a built board checked by "
     "someone licensed for it; local codes come first.",
-)
-HEARING = (
-    "The listening volume starts at -20 dB. Put headphones on after the sound has started, and raise the "
-    "volume with + in small steps.",
-    "A stage with gain, or a part value that changes, can make the signal ten times larger at once.",
-    "The volume does not touch the volts: meters and clipping stay as in the circuit.",
 )
 
 
