@@ -294,7 +294,7 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
 
         run_plain(session, engine, lines=sys.stdin, out=sys.stdout, restart=restart)
     else:
-        from preview.ui.app import run_desk
+        from preview.ui.running import run_desk
 
         run_desk(session, engine, restart=restart)
     return 0

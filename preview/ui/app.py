@@ -6,6 +6,7 @@ import asyncio
 import contextlib
 import signal
 import sys
+from collections.abc import Callable
 from pathlib import Path
 
 from textual.app import ComposeResult
@@ -37,13 +38,15 @@ from preview.ui.theme import PALETTES, Look, first_palette
 from preview.ui.view import Shown
 from preview.ui.widgets.board import Board
 
-__all__ = ["DeskApp", "run_desk"]
+__all__ = ["DeskApp"]
 
 FRAMES_PER_S = 25.0
 _UNFOCUSED_EVERY = 3
 """A window that is not looked at is painted at a third of the pace."""
 WIDE, TALL = 120, 42
 """From this size on two views fit side by side, or above each other [cells]."""
+_REVIVE_S = 10.0
+"""An engine that stops again so soon after it was started by itself is left to the person [s]."""
 ENDINGS = tuple(getattr(signal, name) for name in ("SIGINT", "SIGTERM", "SIGHUP") if hasattr(signal, name))
 """Signals that end the desk in an orderly way."""
 
@@ -56,7 +59,7 @@ class DeskApp(DialogApp):
     session : Session
         What is open.
     link : EngineLink
-        The engine, already running this session; whoever started it need not close it after ``run_desk``.
+        The engine, already running this session; ``run_desk`` closes it.
     restart : callable, optional
         Starts another engine when this one has stopped.
     autoplay : bool
@@ -95,9 +98,11 @@ class DeskApp(DialogApp):
         for binding in bindings(keys.desk):
             self._bindings.key_to_bindings[binding.key] = [binding]
         self.ended_by: int | None = None
-        self.heed_signals = False
+        self.on_signal: Callable[[], None] | None = None
+        """Called when a signal ends the desk; None leaves signals alone."""
         self._restart = restart
         self._restarting = False
+        self._revived_s = -1e9
         self._autoplay = autoplay
         self._show_caution = show_caution
         self._keeper = FigureKeeper(make_figures)
@@ -148,7 +153,7 @@ class DeskApp(DialogApp):
         for palette in PALETTES:
             self.register_theme(palette.theme())
         self.theme = self.look.palette.name
-        if self.heed_signals:
+        if self.on_signal is not None:
             for number in ENDINGS:
                 asyncio.get_running_loop().add_signal_handler(number, self.end, number)
         self.app_resume_signal.subscribe(self, lambda _: self.refresh(layout=True))  # the shell wrote over it
@@ -176,12 +181,14 @@ class DeskApp(DialogApp):
             self.show()
 
     def _fatal_error(self) -> None:
-        """Close the screen; ``run_desk`` says what happened in a line, not in pages over the shell's text."""
+        """Close the screen; the caller says what happened in a line, not in pages over the shell's text."""
         self._close_messages_no_wait()
 
     def end(self, number: int) -> None:
         """Leave because of a signal."""
         self.ended_by = number
+        if self.on_signal is not None:
+            self.on_signal()
         self.exit(self.desk.session)
 
     # ---- arrangement ----
@@ -229,6 +236,7 @@ class DeskApp(DialogApp):
         link = self.desk.link
         if not self.desk.stopped and not link.alive:
             self.desk.stopped = True
+            self._revive()
             self.desk.listening.playing = False
             self.head.rebuild()
         for notice in link.notices():
@@ -237,7 +245,10 @@ class DeskApp(DialogApp):
             if said := self.desk.hear_report(report):
                 self.foot.say(said)
         snapshot = link.latest()
-        self.desk.unanswered = self._watch.late(snapshot is not None)
+        late = self._watch.late(snapshot is not None)
+        if late and not self.desk.unanswered:
+            self._revive()
+        self.desk.unanswered = late
         if snapshot is not None:
             first = self.desk.snapshot is None
             self.desk.take(snapshot)
@@ -289,12 +300,22 @@ class DeskApp(DialogApp):
             return "the engine is running"
         if self._restart is None:
             return "leave the desk and open it again: this engine cannot be restarted from here"
-        if not self._restarting:
-            self._restarting = True
-            self.run_worker(self._start_again(self._restart), group="restart")
+        self._start(self._restart, play=False)
         return "starting the engine again"
 
-    async def _start_again(self, restart: Restart) -> None:
+    def _revive(self) -> None:
+        """Start another engine by itself, unless this one has been started so just now: then a person decides."""
+        now_s = self.desk.now_s()
+        if self._restart is not None and now_s - self._revived_s > _REVIVE_S:
+            self._revived_s = now_s
+            self._start(self._restart, play=self.desk.listening.playing)
+
+    def _start(self, restart: Restart, *, play: bool) -> None:
+        if not self._restarting:
+            self._restarting = True
+            self.run_worker(self._start_again(restart, play), group="restart")
+
+    async def _start_again(self, restart: Restart, play: bool) -> None:
         await asyncio.to_thread(self.desk.link.close)  # one that hangs is ended by force, which takes seconds
         try:
             # A new process inherits standard error; while the desk runs, sys.stderr is not a real file.
@@ -305,7 +326,9 @@ class DeskApp(DialogApp):
         else:
             self.desk.resume(link)
             self._watch = AnswerWatch()
-            self.foot.say(f"the engine runs again; {self.desk.keys.shown('play_pause')} plays")
+            self.desk.listening.play(play)
+            hint = "" if play else f"; {self.desk.keys.shown('play_pause')} plays"
+            self.foot.say(f"the engine had stopped and runs again{hint}")
         finally:
             self._restarting = False
             self.show()
@@ -313,39 +336,3 @@ class DeskApp(DialogApp):
     def do_quit(self) -> None:
         """Leave the desk."""
         self.exit(self.desk.session)
-
-
-def run_desk(
-    session: Session,
-    link: EngineLink,
-    *,
-    restart: Restart | None = None,
-    autoplay: bool = True,
-    config: Path | None = None,
-) -> Session:
-    """Run the desk until the person leaves; the session as it was left.
-
-    The engine behind ``link`` must be running before this is called, and is closed when it returns.
-
-    Raises
-    ------
-    PreviewError
-        The desk stopped on a fault of its own; the terminal is restored.
-    KeyboardInterrupt
-        A signal ended it; the terminal is restored.
-    """
-    app = DeskApp(session, link, restart=restart, autoplay=autoplay, config=config)
-    app.heed_signals = True
-    try:
-        left = app.run()
-    finally:
-        app.desk.link.close()
-    if app.ended_by is not None:
-        raise KeyboardInterrupt
-    if left is None and app.return_code:
-        fault = app._exception
-        what = f" ({type(fault).__name__}: {fault})" if fault is not None else ""
-        raise PreviewError(
-            f"the desk stopped on a fault of its own{what}", "PREVIEW_DEBUG=1 shows where"
-        ) from fault
-    return left or app.desk.session

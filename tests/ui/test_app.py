@@ -15,7 +15,7 @@ import pytest
 from rich.color import Color
 from textual.pilot import Pilot
 
-from preview.engine.messages import Notice, Play, SetCircuit, SetFullScale, SetPart, SetVolume
+from preview.engine.messages import Notice, Play, Seek, SetCircuit, SetFullScale, SetPart, SetVolume
 from preview.errors import DeviceError
 from preview.meters.reading import LevelReading
 from preview.ui.app import DeskApp
@@ -206,37 +206,59 @@ def test_the_real_figures_are_those_of_the_stage_file(session) -> None:
 # ---- the engine ----
 
 
-async def test_a_stopped_engine_is_said_and_can_be_started_again(make_app, engine) -> None:
+async def test_an_engine_that_stops_is_replaced_and_plays_on_at_its_place(make_app, engine) -> None:
     new = type(engine)()
     app: DeskApp = make_app(restart=lambda: new)
     async with app.run_test(size=(80, 24)) as pilot:
         await pilot.press("right")
+        engine.say(position_frame=123_456, playing=True)
+        await until(pilot, lambda: app.desk.listening.position_frame == 123_456)
         engine.alive = False
-        await until(pilot, lambda: app.desk.stopped)
-        assert "ENGINE STOPPED: no sound. Press R" in screen_text(app)
-        await pilot.press("R")
-        await until(pilot, lambda: not app.desk.stopped)
+        await until(pilot, lambda: app.desk.link is new)
         assert engine.closed
         (circuit,) = [command for command in new.sent if isinstance(command, SetCircuit)]
         assert circuit.netlist.values["R1"] == 11e3
         assert SetFullScale(app.desk.session.full_scale.volts) in new.sent
+        assert new.sent.index(Seek(123_456)) < new.sent.index(Play())
+        assert "runs again" in app.foot.message
+
+
+async def test_an_engine_that_stops_again_at_once_is_left_to_the_person(make_app, engine) -> None:
+    engines = [type(engine)(), type(engine)()]
+    app: DeskApp = make_app(restart=lambda: engines.pop(0))
+    second, third = engines
+    async with app.run_test(size=(80, 24)) as pilot:
+        engine.alive = False
+        await until(pilot, lambda: app.desk.link is second)
+        second.alive = False
+        await until(pilot, lambda: app.desk.stopped)
+        assert "ENGINE STOPPED: no sound. Press R" in screen_text(app)
+        await pilot.press("R")
+        await until(pilot, lambda: app.desk.link is third)
+        assert Play() not in third.sent, "sound starts by hand then"
         await pilot.press("space")
-        assert new.sent[-1] == Play()
+        assert third.sent[-1] == Play()
         assert "ENGINE STOPPED" not in screen_text(app)
 
 
-async def test_an_engine_that_hangs_is_said_and_can_be_replaced(make_app, engine) -> None:
+async def test_an_engine_that_hangs_is_replaced(make_app, engine) -> None:
     new = type(engine)()
     app: DeskApp = make_app(restart=lambda: new)
     async with app.run_test(size=(80, 24)) as pilot:
         await until(pilot, lambda: app.desk.snapshot is not None)
         await pilot.press("R")
         assert app.foot.message == "the engine is running"
-        await until(pilot, lambda: app.desk.unanswered)  # it lives, but says nothing any more
-        assert "ENGINE DOES NOT ANSWER. Press R" in screen_text(app)
-        await pilot.press("R")
-        await until(pilot, lambda: engine.closed and not app.desk.unanswered)
+        await until(
+            pilot, lambda: engine.closed and app.desk.link is new
+        )  # it lives, but says nothing any more
         assert any(isinstance(command, SetCircuit) for command in new.sent)
+
+
+async def test_an_engine_that_hangs_and_cannot_be_replaced_is_said(make_app, engine) -> None:
+    app: DeskApp = make_app()
+    async with app.run_test(size=(80, 24)) as pilot:
+        await until(pilot, lambda: app.desk.unanswered)
+        assert "ENGINE DOES NOT ANSWER. Press R" in screen_text(app)
 
 
 async def test_a_desk_that_was_suspended_paints_everything_again(make_app, monkeypatch) -> None:
