@@ -59,10 +59,11 @@ class AnswerWatch:
 
 
 class StillLink:
-    """A link to no engine: one fixed snapshot, again and again, for a picture of the desk."""
+    """A link to no engine: fixed reports, and one fixed snapshot again and again, for a picture of the desk."""
 
-    def __init__(self, snapshot: Snapshot | None = None) -> None:
+    def __init__(self, snapshot: Snapshot | None = None, reports: tuple[Report, ...] = ()) -> None:
         self._snapshot = snapshot
+        self._reports = list(reports)
 
     @property
     def alive(self) -> bool:
@@ -81,8 +82,9 @@ class StillLink:
         return []
 
     def reports(self) -> list[Report]:
-        """None, ever."""
-        return []
+        """Those that were given, once."""
+        reports, self._reports = self._reports, []
+        return reports
 
     def close(self) -> None:
         """Nothing to end."""
