@@ -41,6 +41,8 @@ from preview.ui.widgets.board import Board
 __all__ = ["DeskApp"]
 
 FRAMES_PER_S = 25.0
+_VIEWS_EVERY = 3
+"""What is read rather than watched is painted at a third of the pace."""
 _UNFOCUSED_EVERY = 3
 """A window that is not looked at is painted at a third of the pace."""
 WIDE, TALL = 120, 42
@@ -258,7 +260,8 @@ class DeskApp(DialogApp):
             if first:
                 self.arrange(self.size.width, self.size.height)
         if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
-            for board in (self.head, self.path, self.timeline, *self.views.values()):
+            slow = self.views.values() if self._polls % _VIEWS_EVERY == 0 else ()
+            for board in (self.head, self.path, self.timeline, *slow):
                 if board.display:
                     board.rebuild()
             self.foot.tick()

@@ -86,6 +86,7 @@ class ResponsePanel(Board):
         self.desk = desk
         self._now_s = now_s
         self._drawn_for: tuple[object, ...] = ()
+        self._drawn_from: tuple[object, ...] = ()  # held, so that no other object takes their identity
         self._drawn: Sequence[Row] = ()
         self._spectrum: object = None
         self._spectrum_s = -1e9
@@ -100,12 +101,13 @@ class ResponsePanel(Board):
             self._spectrum, self._spectrum_s = snapshot.spectrum if snapshot else None, now_s
         spectrum = None if view.behind is Behind.NONE else self._spectrum
         wanted = (
-            *(id(figures.now), id(figures.before), id(figures.last), spectrum),
+            *(id(figures.now), id(figures.before), id(figures.last), id(spectrum)),
             *(view.phase, view.ghost, view.behind, view.noise, view.axis, view.cursor_hz, view.unit),
             *(self.look.palette.name, width, height),
         )
         if wanted != self._drawn_for:
             self._drawn_for, self._drawn = wanted, self._draw(width, height)
+            self._drawn_from = (figures.now, figures.before, figures.last, spectrum)
         return self._drawn
 
     def _ghost(self) -> Figures | None:

@@ -31,6 +31,10 @@ class _Timeline(Board):
         self.desk = desk
         self._first, self._cells = 0, 0
         self._pressed: int | None = None
+        # What was made last, and what it was made from: reports are compared by identity, for they are long.
+        self._marked: tuple[object, int, dict[str | None, set[int]]] = (None, 0, {})
+        self._found: tuple[object, int, list[tuple[float, float]]] = (None, 0, [])
+        self._waves: tuple[object, tuple[int, int], DotField] = (None, (0, 0), DotField(0, 0))
 
     def _place(self, frame: int) -> int:
         """The cell of a frame."""
@@ -51,17 +55,23 @@ class _Timeline(Board):
 
     def _clipped(self, designator: str | None = None) -> set[int]:
         """The cells in which an op-amp clips."""
-        cells: set[int] = set()
-        for clip in clips_of(self.desk.marks):
-            if designator in (None, clip.designator):
-                cells.update(range(self._place(clip.start), self._place(max(clip.start, clip.end - 1)) + 1))
-        return cells
+        marks = self.desk.marks
+        if self._marked[0] is not marks or self._marked[1] != self._cells:
+            by_name: dict[str | None, set[int]] = {None: set()}
+            for clip in clips_of(marks):
+                cells = range(self._place(clip.start), self._place(max(clip.start, clip.end - 1)) + 1)
+                by_name[None].update(cells)
+                by_name.setdefault(clip.designator, set()).update(cells)
+            self._marked = (marks, self._cells, by_name)
+        return self._marked[2].get(designator, set())
 
     def _extremes(self, columns: int) -> list[tuple[float, float]]:
         """Smallest and largest sample of each column, the largest of all as 1; none as far as it is not built."""
         overview = self.desk.overview
         if overview is None or not overview.low:
             return []
+        if self._found[0] is overview and self._found[1] == columns:
+            return self._found[2]
         largest = max(0.001, max(overview.high), -min(overview.low))  # drawn as high as there is room
         found = []
         for column in range(columns):
@@ -70,7 +80,22 @@ class _Timeline(Board):
             if last > len(overview.low):
                 break
             found.append((min(overview.low[first:last]) / largest, max(overview.high[first:last]) / largest))
+        self._found = (overview, columns, found)
         return found
+
+    def waves(self, height: int) -> DotField:
+        """The waveform in dots; made again only when it or the size has changed."""
+        overview, size = self.desk.overview, (self._cells, height)
+        if self._waves[0] is not overview or self._waves[1] != size:
+            dots = DotField(self._cells, height)
+            middle = (4 * height - 1) / 2.0
+            for x, (low, high) in enumerate(self._extremes(2 * self._cells)):
+                top = max(0, math.floor(middle - min(1.0, high) * middle + 0.5))
+                bottom = min(4 * height - 1, math.floor(middle - max(-1.0, low) * middle + 0.5))
+                for y in range(min(top, bottom), max(top, bottom) + 1):
+                    dots.set(x, y)
+            self._waves = (overview, size, dots)
+        return self._waves[2]
 
     def _frame_at(self, x: int) -> int | None:
         snapshot = self.desk.snapshot
@@ -170,13 +195,7 @@ class TimelinePanel(_Timeline):
 def _waveform(line: _Timeline, height: int) -> list[Cells]:
     """So many lines of waveform; what is outside of the region is thin, clips have a mark in the last line."""
     palette = line.look.palette
-    dots = DotField(line._cells, height)
-    middle = (4 * height - 1) / 2.0
-    for x, (low, high) in enumerate(line._extremes(2 * line._cells)):
-        top = max(0, math.floor(middle - min(1.0, high) * middle + 0.5))
-        bottom = min(4 * height - 1, math.floor(middle - max(-1.0, low) * middle + 0.5))
-        for y in range(min(top, bottom), max(top, bottom) + 1):
-            dots.set(x, y)
+    dots = line.waves(height)
     clipped = line._clipped()
     head = line._place(line.desk.listening.position_frame)
     region = line.desk.listening.region
