@@ -15,6 +15,7 @@ import sys
 import threading
 import traceback
 from collections.abc import Callable, Iterable, Sequence
+from dataclasses import replace
 from pathlib import Path
 from types import FrameType
 from typing import TYPE_CHECKING, NoReturn
@@ -22,7 +23,7 @@ from typing import TYPE_CHECKING, NoReturn
 from preview import __version__
 from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
-from preview.errors import OutputFileError, PreviewError, UsageError, printable
+from preview.errors import PreviewError, UsageError, debugging, printable
 
 if TYPE_CHECKING:
     from preview.analysis.answers import Answers
@@ -35,6 +36,10 @@ __all__ = ["main"]
 INTERRUPTED = 130
 ENDINGS = tuple(getattr(signal, name) for name in ("SIGTERM", "SIGHUP") if hasattr(signal, name))
 """Signals that end the program in an orderly way: told to stop, the terminal closed."""
+
+
+_DUMB = ("", "dumb", "unknown")
+"""Values of TERM that promise nothing."""
 
 
 class _Parser(argparse.ArgumentParser):
@@ -95,7 +100,7 @@ def _terminated(_number: int, _frame: FrameType | None) -> None:
 
 
 def _debug() -> None:
-    if os.environ.get("PREVIEW_DEBUG") == "1":
+    if debugging():
         traceback.print_exc()
 
 
@@ -138,6 +143,11 @@ def _parser() -> argparse.ArgumentParser:
         "--end", metavar="loop|stop", default="loop", help="at the end: loop (default) or stop"
     )
     listen.add_argument("--device", metavar="NAME", help="sound device, by name")
+    listen.add_argument(
+        "--plain",
+        action="store_true",
+        help="lines of text in place of a screen, for screen readers and pipes",
+    )
     listen.add_argument("--live", action="store_true", help=argparse.SUPPRESS)
     add_stage_options(listen)
 
@@ -228,8 +238,12 @@ def _name(text: str) -> str:
 def _listen(options: argparse.Namespace) -> int:
     from preview.engine.process import EngineProcess
 
-    terminal = all(stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
-    engine = EngineProcess.spawn() if terminal else None  # it loads while the options are read
+    terminal = all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
+    if terminal and not options.plain and os.environ.get("TERM") in _DUMB:
+        _say("this terminal has no screen to draw on: line mode, as with --plain")
+        options.plain = True
+    # it loads while the options are read
+    engine = EngineProcess.spawn() if terminal or options.plain else None
     try:
         return _desk(options, engine)
     finally:
@@ -240,19 +254,17 @@ def _listen(options: argparse.Namespace) -> int:
 def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     from preview.audio.files import probe
     from preview.engine.demo import demo_recording
-    from preview.engine.options import DEFAULT_STAGE, session_from
+    from preview.engine.options import DEFAULT_STAGE, intake_from, session_from
     from preview.engine.process import EngineConfig, EngineProcess
     from preview.network.stability import check_stable
     from preview.session import AtEnd
 
-    if options.live:
-        raise UsageError(
-            "live input is not available in this version", "name a recording: preview listen AUDIO"
-        )
     if options.end not in (end.value for end in AtEnd):
         raise UsageError(f"--end {options.end}: no such end", "loop or stop")
-    stage, audio = DEFAULT_STAGE, Path(options.audio or "")
-    if options.audio is None:
+    stage = DEFAULT_STAGE
+    audio: Path | None = Path(options.audio) if options.audio is not None else None
+    intake = intake_from(options)
+    if audio is None and not intake:
         demo = demo_recording()
         audio = demo.path
         options.full_scale = options.full_scale or demo.full_scale or None
@@ -261,17 +273,30 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
         raise UsageError(
             "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
         )
-    info = probe(audio)
-    session = session_from(options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage)
-    _echo(session, info.warnings)
+    info = probe(audio) if audio is not None else None
+    comment = info.comment if info is not None else ""
+    session = session_from(options, audio=audio, comment=comment, at_end=AtEnd(options.end), stage=stage)
+    session = replace(session, notes=(*session.notes, *intake.pop("notes", ())), **intake)
+    _echo(session, info.warnings if info is not None else ())
     check_stable(session.netlist())
     if engine is None:
-        raise UsageError("the desk needs a terminal", "preview render works without one")
+        raise UsageError(
+            "the desk needs a terminal", "preview listen --plain reads lines and works without one"
+        )
     config = EngineConfig(session=session, device=options.device, silent=options.silent)
     engine.begin(config)
-    from preview.ui.app import run_desk
 
-    run_desk(session, engine, restart=lambda: EngineProcess.start(config))
+    def restart() -> EngineProcess:
+        return EngineProcess.start(config)
+
+    if options.plain:
+        from preview.ui.plain import run_plain
+
+        run_plain(session, engine, lines=sys.stdin, out=sys.stdout, restart=restart)
+    else:
+        from preview.ui.running import run_desk
+
+        run_desk(session, engine, restart=restart)
     return 0
 
 

@@ -7,6 +7,7 @@ Family tree::
     |   +-- NotationError                  a value, level or series that cannot be read
     +-- AudioFileError (OSError)           exit 3: input or output file
     |   +-- OutputFileError                the place to write to
+    +-- SessionFileError (ValueError)      exit 3: a session file that cannot be read or written
     +-- DeviceError (RuntimeError)         exit 4: no audio device or library
     +-- CircuitError (ValueError)          exit 5: the circuit cannot be computed
         +-- StageFileError                 a stage file that cannot be read as one
@@ -17,6 +18,7 @@ Family tree::
 
 from __future__ import annotations
 
+import os
 import unicodedata
 
 __all__ = [
@@ -28,9 +30,11 @@ __all__ = [
     "OutputFileError",
     "PartValueError",
     "PreviewError",
+    "SessionFileError",
     "StageFileError",
     "UnknownNameError",
     "UsageError",
+    "debugging",
     "printable",
 ]
 
@@ -77,6 +81,12 @@ class OutputFileError(AudioFileError):
     """A result that cannot be written."""
 
 
+class SessionFileError(PreviewError, ValueError):
+    """A session file that cannot be read as one, or not be written."""
+
+    exit_code = 3
+
+
 class DeviceError(PreviewError, RuntimeError):
     """No audio device, no audio library, or a device that failed."""
 
@@ -103,6 +113,11 @@ class UnknownNameError(CircuitError, LookupError):
 
 class PartValueError(CircuitError):
     """A part value that no such part can have."""
+
+
+def debugging() -> bool:
+    """Whether a fault inside the program shall be seen with all it has: ``PREVIEW_DEBUG=1``."""
+    return os.environ.get("PREVIEW_DEBUG") == "1"
 
 
 def printable(text: str) -> str:

@@ -9,9 +9,11 @@ from pathlib import Path
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, LoadModel, SourceModel
 from preview.circuit.netlist import Netlist, netlist
 from preview.circuit.nodes import OUT
+from preview.circuit.opamp import Limit
 from preview.circuit.parts import Stage, Supply
 from preview.values.levels import FullScale
 from preview.values.quality import Quality
+from preview.values.stimulus import Stimulus
 
 __all__ = ["AtEnd", "Session"]
 
@@ -30,7 +32,7 @@ class Session:
     """Everything needed to hear or repeat a render."""
 
     audio: Path | None
-    """The recording; None for none yet."""
+    """The recording; None for none yet, a test signal or live input."""
     stage: Stage
     """The stage with the part values and op-amp types as set."""
     supply: Supply
@@ -51,10 +53,25 @@ class Session:
     """How each option was understood, one line each, for the screen."""
     warnings: tuple[str, ...] = field(default=())
     """What of the options may not be as it was meant, one line each."""
+    without: tuple[Limit, ...] = ()
+    """Limits taken away from every op-amp, to hear what they do."""
+    stimulus: Stimulus | None = None
+    """The test signal in place of a recording."""
+    live: bool = False
+    """Whether the sound device's input is heard in place of a recording."""
+    live_device: str | None = None
+    """Input device by name; None for the default."""
 
     def netlist(self) -> Netlist:
         """The checked netlist; raises CircuitError."""
-        return netlist(self.stage, supply=self.supply, source=self.source, load=self.load, output=self.output)
+        return netlist(
+            self.stage,
+            supply=self.supply,
+            source=self.source,
+            load=self.load,
+            output=self.output,
+            without=self.without,
+        )
 
     def with_stage(self, stage: Stage) -> Session:
         """The same session with another stage on its own rails; its output is kept where the stage has it."""

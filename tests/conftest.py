@@ -113,7 +113,11 @@ class SoundServer:
         }
         """Environment for a process that shall play and record here."""
         self._recordings: list[Recording] = []
-        self._log = open(folder / "log", "wb")  # noqa: SIM115 - closed by end()
+        self._start()
+
+    def _start(self) -> None:
+        folder = self.folder
+        self._log = open(folder / "log", "ab")  # noqa: SIM115 - closed by end()
         command = ["pulseaudio", "-n", "--daemonize=no", "--use-pid-file=no", "--exit-idle-time=-1"]
         command += ["--realtime=no", "--high-priority=no", "--disable-shm=1", "--log-target=stderr"]
         for module in (
@@ -208,6 +212,12 @@ class SoundServer:
     def thaw(self) -> None:
         """Let a frozen daemon go on."""
         self._process.send_signal(signal.SIGCONT)
+
+    def restart(self) -> None:
+        """Start the daemon anew after ``end``."""
+        for left in ("native", "cli"):
+            (self.folder / left).unlink(missing_ok=True)
+        self._start()
 
     def end(self) -> None:
         """End what was started, by its id."""

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from collections.abc import Collection
+
 from preview.circuit.checks import check
 from preview.circuit.controls import Contact, Track
 from preview.circuit.diodes import Junction
@@ -16,6 +18,7 @@ from preview.circuit.nodes import (
     POSITIVE_RAIL,
     SOURCE_NODE,
 )
+from preview.circuit.opamp import Limit
 from preview.circuit.parts import Stage, Supply
 from preview.circuit.sites import check_supply, opamp_site
 from preview.circuit.wiring import Wiring
@@ -51,6 +54,7 @@ def netlist(
     source_ohm: float = 0.0,
     load_ohm: float | None = None,
     output: str = OUT,
+    without: Collection[Limit] = (),
 ) -> Netlist:
     """The checked netlist of a stage.
 
@@ -68,6 +72,8 @@ def netlist(
         Resistance of a load that is nothing else [ohm]; None for no load.
     output : str
         Node that is listened to and loaded: ``out`` or another of the stage's outputs.
+    without : collection of Limit
+        Limits taken away from every op-amp, to hear what they do.
 
     Raises
     ------
@@ -96,7 +102,7 @@ def netlist(
         input_node=SOURCE_NODE if source.series else IN,
         output_node=output,
         branches=tuple(wiring.branches),
-        opamps=tuple(opamp_site(opamp, rails, where) for opamp in stage.opamps),
+        opamps=tuple(opamp_site(opamp, rails, where, without) for opamp in stage.opamps),
         ports=tuple(wiring.ports),
         fixed=tuple(wiring.fixed),
         controls=tuple(wiring.controls),

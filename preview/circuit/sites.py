@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Collection
 
 from preview.circuit.elements import OpAmpSite
-from preview.circuit.opamp import PERFECT, OpAmpModel
+from preview.circuit.opamp import PERFECT, Limit, OpAmpModel
 from preview.circuit.opamp_library import find_opamp
 from preview.circuit.parts import OpAmp, Supply
 from preview.errors import CircuitError, UnknownNameError
@@ -32,15 +33,16 @@ def check_supply(supply: Supply, where: str) -> None:
         raise CircuitError(f"{found}: beyond 1 kV", "such as +15 V and -15 V")
 
 
-def opamp_site(opamp: OpAmp, rails: Supply, where: str) -> OpAmpSite:
+def opamp_site(opamp: OpAmp, rails: Supply, where: str, without: Collection[Limit] = ()) -> OpAmpSite:
     """The op-amp with the limits its type has on these rails."""
     place = f"{where}, {opamp.designator}"
     try:
-        model = find_opamp(opamp.type)
+        found = find_opamp(opamp.type)
     except UnknownNameError as error:
         raise UnknownNameError(f"{place}: {error.message}", error.hint) from error
+    model = found.without(without)
     high_v, low_v = math.inf, -math.inf
-    if model is not PERFECT:
+    if found is not PERFECT:
         high_v, low_v = rails.positive_v, rails.negative_v
     if model.real:
         _check_type_supply(model, rails, place)

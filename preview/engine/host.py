@@ -8,23 +8,24 @@ from __future__ import annotations
 
 import contextlib
 import gc
-import os
 import signal
 import sys
 import time
 from collections import deque
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
+from dataclasses import dataclass, replace
 from multiprocessing.connection import Connection
-from pathlib import Path
-from typing import TYPE_CHECKING
 
-import platformdirs
-
-from preview.audio.prefetch import Prefetch
-from preview.audio.source import FileSource
+from preview.audio.signals import ENDLESS_FRAMES
 from preview.circuit.netlist import Netlist
 from preview.engine import messages
-from preview.engine.messages import Command, Notice
+from preview.engine.attention import Attention
+from preview.engine.bench import Bench
+from preview.engine.errands import Errands
+from preview.engine.intake import Intake, open_file, open_live, open_session, open_signal
+from preview.engine.logfile import write_to_log
+from preview.engine.messages import Command, InputKind, Notice, Snapshot
+from preview.engine.orders import change_circuit, change_playing
 from preview.engine.outlet import Outlet
 from preview.engine.player import Player
 from preview.engine.preparer import Preparer
@@ -34,9 +35,6 @@ from preview.meters.level import LevelMeter
 from preview.session import AtEnd
 from preview.values.quality import Quality
 
-if TYPE_CHECKING:
-    from preview.dsp.chain import Chain
-
 __all__ = ["Host", "run"]
 
 TURN_S = 1.0 / 30.0
@@ -45,94 +43,33 @@ SETTLE_S = 0.15
 WARM_SETTLE_S = 0.05
 PATIENCE_S = 3.0
 LATENCY_WAIT_S = 0.25
-LOG_BYTES_MAX = 1 << 20
+LIVE_MUTE = "live input begins muted: lower the volume, then end the mute"
 
 
 def run(connection: Connection, config: EngineConfig, *, warm: bool = False) -> None:
     """Run an engine until the desk says quit or is gone; ``warm`` says that its kernels are loaded."""
-    signal.signal(signal.SIGINT, signal.SIG_IGN)  # Ctrl-C is for the desk, which then says quit
     sys.setswitchinterval(0.0005)
-    _write_to_log(config.log)
+    write_to_log(config.log)
     host = Host(connection, config, settle_s=WARM_SETTLE_S if warm else SETTLE_S)
+    with contextlib.suppress(ValueError):  # not the main thread
+        signal.signal(signal.SIGTERM, lambda *_: host.end())
     try:
         host.live()
     finally:
         host.close()
 
 
-def _write_to_log(log: Path | None) -> None:
-    """Point stdout and stderr at a file: the audio libraries write there and would wreck the desk."""
-    try:
-        if log is None:
-            folder = platformdirs.user_log_path("preview", appauthor=False, ensure_exists=True)
-            log = folder / "engine.log"
-        too_long = log.exists() and log.stat().st_size > LOG_BYTES_MAX
-        flags = os.O_WRONLY | os.O_CREAT | (os.O_TRUNC if too_long else os.O_APPEND)
-        target = os.open(log, flags, 0o600)
-    except OSError:
-        target = os.open(os.devnull, os.O_WRONLY)
-    for stream in (1, 2):
-        os.dup2(target, stream)
-    os.close(target)
+@dataclass(frozen=True, slots=True)
+class _Setup:
+    """What stays when the recording changes."""
 
-
-class _Bench:
-    """Builds circuits for one player; called on the preparer's thread."""
-
-    def __init__(self, player: Player, ready: Callable[[], None]) -> None:
-        self._player = player
-        self._ready = ready
-        self._chain: Chain | None = None
-        self._handed_over = 0
-        self._taken = 0
-
-    def build(self, netlist: Netlist, quality: Quality) -> Callable[[], None]:
-        """Compute and warm a circuit."""
-        from preview.dsp.chain import Chain
-        from preview.dsp.oversample import design, factor_for
-        from preview.dsp.stage import StageProcessor, load_kernels
-
-        player = self._player
-        processor = StageProcessor(
-            netlist, sample_rate_hz=player.sample_rate_hz, channels=player.channels, quality=quality
-        )
-        chain = self._chain
-        if chain is not None:
-
-            def swap() -> None:
-                chain.swap(processor)
-                player.circuit_changed(quality)
-
-            return swap
-        first = self._chain = Chain(processor)
-        for each in Quality:  # designed now and kept: while it plays, that would take the device's blocks
-            design(factor_for(each, player.sample_rate_hz))
-        load_kernels()  # likewise
-        self._ready()
-        return lambda: player.take_circuit(first, quality)
-
-    def plan(self, values: Mapping[str, float]) -> Callable[[], None]:
-        """Plan a glide of the running circuit."""
-        assert self._chain is not None
-        processor = self._chain.processor
-        glide = processor.plan(values)
-        return lambda: processor.glide(glide)
-
-    def settled(self) -> bool:
-        """Whether the running circuit can take another glide or circuit."""
-        if self._taken != self._handed_over:
-            return False
-        return self._chain is None or (self._chain.processor.ready and not self._chain.swapping)
-
-    def hand_over(self, start: Callable[[], None]) -> None:
-        """Have a call made on the audio thread."""
-
-        def take() -> None:
-            self._taken += 1
-            start()
-
-        self._handed_over += 1
-        self._player.inbox.append(take)
+    netlists: dict[str, Netlist]
+    letter: str
+    quality: Quality
+    full_scale_v: float
+    at_end: AtEnd
+    volume_db: float
+    bypass: bool
 
 
 class Host:
@@ -157,30 +94,31 @@ class Host:
             device=config.device, silent=config.silent, block_frames=config.block_frames, tell=self._tell
         )
         self._player: Player | None = None
-        self._reader: Prefetch | None = None
+        self._intake: Intake | None = None
         self._preparer: Preparer | None = None
-        self._reader_error = False
-        self._collected = False
+        self._bench: Bench | None = None
+        self._errands = Errands(self._tell)
+        self._attention: Attention | None = None
+        self._damage_told = self._collected = self._asked_for_patience = self._ended = False
         self._began_s = time.monotonic()
-        self._asked_for_patience = False
 
     def live(self) -> None:
         """Serve until told to quit or until the desk is gone."""
-        session = self._config.session
-        if session.audio is not None:
-            self._open(
-                session.audio,
-                netlist=session.netlist(),
-                quality=session.quality,
-                full_scale_v=session.full_scale.volts,
-                at_end=session.at_end,
-                volume_db=self._config.start_volume_db,
-                bypass=False,
-            )
-            if self._config.play and self._player is not None:
-                self._player.play()
+        config, session = self._config, self._config.session
+        setup = _Setup(
+            {**dict(config.candidates), config.letter: session.netlist()},
+            config.letter,
+            session.quality,
+            session.full_scale.volts,
+            session.at_end,
+            config.start_volume_db,
+            bypass=False,
+        )
+        loop = session.at_end is AtEnd.LOOP
+        if self._open(lambda: open_session(session, loop=loop, output_device=config.device), setup):
+            self._begin(config)
         next_turn_s = time.monotonic()
-        while True:
+        while not self._ended:
             wait_s = max(next_turn_s - time.monotonic(), 0.0)
             try:
                 while self._connection.poll(wait_s):
@@ -195,30 +133,54 @@ class Host:
             except (EOFError, OSError):
                 return
 
+    def end(self) -> None:
+        """Leave ``live`` at the next turn."""
+        self._ended = True
+
     def close(self) -> None:
         """Fade out and let go of everything."""
         self._fade_out()
         self._outlet.close()
-        self._close_file()
+        self._let_go()
+        self._errands.close()
         with contextlib.suppress(OSError):
             self._connection.close()
+
+    def _begin(self, config: EngineConfig) -> None:
+        player = self._player
+        assert player is not None
+        if config.region is not None:
+            player.set_region(*config.region)
+        if config.start_frame:
+            player.seek(config.start_frame)
+        self._errands.matcher.on = config.match
+        if config.play:
+            player.play()
 
     def _tell(self, text: str, severity: str = "information") -> None:
         self._untold.append(Notice(text, severity))
 
+    # -- a turn
+
     def _turn(self) -> None:
         """Send what there is to tell and look after the output."""
-        player = self._player
-        if player is not None:
+        player, intake, preparer = self._player, self._intake, self._preparer
+        if player is not None and intake is not None and preparer is not None:
             while player.faults:
                 self._tell(player.faults.popleft(), "error")
-            if self._reader is not None and self._reader.error is not None and not self._reader_error:
-                self._reader_error = True
-                self._tell(str(self._reader.error), "error")
+            if intake.error is not None and not self._damage_told:
+                self._damage_told = True
+                self._tell(str(intake.error), "error")
+            if self._attention is not None:
+                self._untold.extend(Notice(text, "warning") for text in self._attention.turn())
             snapshot = player.snapshot
             if snapshot is not None:
                 player.snapshot = None
-                self._connection.send(snapshot)
+                self._connection.send(self._whole(snapshot, intake, preparer))
+                if self._collected and self._errands.look(snapshot, preparer):
+                    self._apply_match()
+        for report in self._errands.reports():
+            self._connection.send(report)
         waited_s = time.monotonic() - self._began_s
         if waited_s > PATIENCE_S and not (self._collected or self._asked_for_patience):
             self._asked_for_patience = True
@@ -227,98 +189,128 @@ class Host:
             self._connection.send(self._untold.popleft())
         self._outlet.watch()
 
-    def _obey(self, command: Command) -> None:
-        player, preparer = self._player, self._preparer
-        if isinstance(command, messages.OpenFile):
-            self._open_another(command.path)
-            return
-        if player is None or preparer is None:
-            return
-        match command:
-            case messages.SetPart(designator, value):
-                preparer.set_part(designator, value)
-            case messages.SetCircuit(netlist):
-                preparer.set_circuit(netlist)
-            case messages.SetQuality(quality):
-                preparer.set_quality(quality)
-            case messages.SetFullScale(full_scale_v):
-                player.set_full_scale(full_scale_v)
-            case messages.Play():
-                player.play()
-            case messages.Pause():
-                player.pause()
-            case messages.Seek(frame):
-                player.seek(frame)
-            case messages.SetRegion(start, end):
-                player.set_region(start, end)
-            case messages.SetAtEnd(at_end):
-                player.set_at_end(at_end)
-            case messages.SetBypass(on):
-                player.set_bypass(on)
-            case messages.SetVolume(volume_db):
-                player.set_volume(volume_db)
-            case messages.ClearHolds():
-                player.clear_holds()
-
-    def _open_another(self, path: Path) -> None:
-        """Replace the recording; circuit, levels and settings stay."""
-        old, preparer = self._player, self._preparer
-        if old is None or preparer is None:
-            return
-        self._fade_out()
-        self._open(
-            path,
-            netlist=preparer.netlist,
-            quality=preparer.quality,
-            full_scale_v=old.full_scale_v,
-            at_end=AtEnd.LOOP if self._reader is not None and self._reader.loop else AtEnd.STOP,
-            volume_db=old.volume_db,
-            bypass=old.bypass,
+    def _whole(self, snapshot: Snapshot, intake: Intake, preparer: Preparer) -> Snapshot:
+        """The player's snapshot with what the player does not know."""
+        live = intake.kind is InputKind.LIVE
+        in_s = self._outlet.live_latency_s
+        return replace(
+            snapshot,
+            frames=0 if snapshot.frames >= ENDLESS_FRAMES else snapshot.frames,
+            input_kind=intake.kind,
+            input_name=(self._outlet.input_name or intake.name) if live else intake.name,
+            live_latency_s=in_s + snapshot.latency_s if live and in_s else 0.0,
+            spectrum=self._attention.spectrum if self._attention is not None else None,
+            letter=preparer.letter,
+            match=self._errands.matcher.on,
+            candidates=self._errands.candidates(preparer),
         )
 
-    def _open(
-        self,
-        path: Path,
-        *,
-        netlist: Netlist,
-        quality: Quality,
-        full_scale_v: float,
-        at_end: AtEnd,
-        volume_db: float,
-        bypass: bool,
-    ) -> None:
-        """Open a recording; it waits at its start. What cannot be opened is told, and the old one stays."""
+    # -- commands
+
+    def _obey(self, command: Command) -> None:
+        player, preparer, bench = self._player, self._preparer, self._bench
+        match command:
+            case messages.OpenFile(path):
+                self._open_another(lambda: open_file(path, loop=True))
+            case messages.UseSignal(stimulus):
+                self._open_another(lambda: open_signal(stimulus))
+            case messages.UseLive(device):
+                self._open_another(lambda: open_live(device, self._outlet.device))
+            case messages.SetDevice(name):
+                self._fade_out(pause=False)
+                self._outlet.change_device(name)
+            case messages.RescanDevices():
+                self._errands.list_devices()
+            case messages.CancelExport():
+                self._errands.cancel_export()
+            case messages.Export() if player is not None:
+                self._errands.export(command)
+            case _ if player is None or preparer is None or bench is None:
+                pass
+            case (
+                messages.SetPart()
+                | messages.SetCircuit()
+                | messages.SetQuality()
+                | messages.KeepCandidate()
+                | messages.SelectCandidate()
+                | messages.DropCandidate()
+                | messages.ListenNull()
+            ):
+                change_circuit(command, preparer, bench)
+            case messages.SetMatch(on):
+                self._errands.matcher.on = on
+                self._apply_match()
+            case _:
+                change_playing(command, player)
+
+    def _apply_match(self) -> None:
+        if self._bench is not None:
+            self._bench.hand_over(self._bench.set_gains(self._errands.matcher.gains()))
+
+    # -- what is heard
+
+    def _open_another(self, open_intake: Callable[[], Intake | None]) -> None:
+        """Replace the input; circuit, levels and settings stay."""
+        old, preparer, intake = self._player, self._preparer, self._intake
+        if old is None or preparer is None or intake is None:
+            return
+        setup = _Setup(
+            preparer.netlists,
+            preparer.letter,
+            preparer.quality,
+            old.deck.full_scale_v,
+            AtEnd.LOOP if old.deck.head.reader.loop or intake.kind is not InputKind.FILE else AtEnd.STOP,
+            old.deck.monitor.volume_db,
+            old.deck.bypass,
+        )
+        self._open(open_intake, setup)
+
+    def _open(self, open_intake: Callable[[], Intake | None], setup: _Setup) -> bool:
+        """Open an input; it waits at its start. What cannot be opened is told, and the old one stays."""
         try:
-            source = FileSource(path)
+            intake = open_intake()
         except PreviewError as error:
             self._tell(str(error), "error")
-            return
-        self._close_file()
-        for warning in source.warnings:
-            self._tell(f"{path.name}: {warning}", "warning")
-        rate, channels = source.sample_rate_hz, source.channels
-        reader = Prefetch(source, loop=at_end is AtEnd.LOOP)
+            return False
+        if intake is None:
+            return False
+        self._fade_out()
+        self._let_go()
+        for warning in intake.warnings:
+            self._tell(f"{intake.name}: {warning}", "warning")
+        rate, channels = intake.sample_rate_hz, intake.channels
         player = Player(
-            reader,
+            intake.reader,
             sample_rate_hz=rate,
             channels=channels,
-            full_scale_v=full_scale_v,
+            full_scale_v=setup.full_scale_v,
             meters=(LevelMeter(rate, channels), LevelMeter(rate, channels)),
-            quality=quality,
-            volume_db=volume_db,
+            volume_db=setup.volume_db,
             settle_s=self._settle_s,
+            in_volts=intake.stimulus is not None,
         )
-        player.set_bypass(bypass)
+        player.set_bypass(setup.bypass)
+        player.set_at_end(setup.at_end)
+        bench = Bench(player, self._first_circuit_ready)
         preparer = Preparer(
-            _Bench(player, self._first_circuit_ready),
-            netlist=netlist,
-            quality=quality,
+            bench,
+            netlists=setup.netlists,
+            letter=setup.letter,
+            quality=setup.quality,
             complain=lambda text: self._tell(text, "error"),
         )
-        self._player, self._reader, self._preparer = player, reader, preparer
-        self._reader_error = False
-        self._outlet.play(player)
+        self._player, self._intake, self._preparer, self._bench = player, intake, preparer, bench
+        self._damage_told = False
+        self._attention = Attention(player, live=intake.inlet is not None)
+        if intake.inlet is not None:
+            player.mute(True, LIVE_MUTE)
+            player.play()
+        self._errands.begin(intake)
+        self._outlet.play(player, intake.inlet)
         preparer.start()
+        if setup.at_end is AtEnd.LOOP and intake.reader.frames < player.deck.loop_min_frames:
+            self._tell("shorter than 10 ms: it is played once, as a loop of it would be no sound", "warning")
+        return True
 
     def _first_circuit_ready(self) -> None:
         """Everything is loaded: from here on no garbage collection may stall the audio thread."""
@@ -328,20 +320,23 @@ class Host:
             gc.freeze()
             gc.disable()
 
-    def _close_file(self) -> None:
+    def _let_go(self) -> None:
         self._outlet.play(None)
         if self._preparer is not None:
             self._preparer.end()
-        if self._reader is not None:
-            self._reader.close()
-        self._player = self._reader = self._preparer = None
+        if self._intake is not None:
+            self._intake.reader.close()
+        self._player = self._intake = self._preparer = self._bench = None
 
-    def _fade_out(self) -> None:
-        """Pause, and wait until it is silent at the device, or the output is not running."""
+    def _fade_out(self, *, pause: bool = True) -> None:
+        """Pause or wait, until it is silent at the device, or the output is not running."""
         player = self._player
         if player is None or (player.silent and not player.inbox):
             return
-        player.pause()
+        if pause:
+            player.pause()
+        else:
+            player.hold()
         deadline_s = time.monotonic() + FADE_WAIT_S
         while (player.inbox or not player.silent) and time.monotonic() < deadline_s:
             time.sleep(0.002)

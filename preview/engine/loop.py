@@ -12,20 +12,35 @@ from numpy.typing import NDArray
 
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
+from preview.engine.readings import FaultReading
 from preview.meters.reading import LevelReading
 
-__all__ = ["Circuit", "Meter", "Samples", "SignalPath", "joined_readings", "peak", "spread"]
+__all__ = ["Circuit", "LiveCircuit", "Meter", "Samples", "SignalPath", "joined_readings", "peak"]
 
 Samples = NDArray[np.float64]
 """Signal as a share of full scale, shape (frames, channels), float64."""
 
 
 class Circuit(Protocol):
-    """The running circuit: what ``preview.dsp.chain.Chain`` offers to the loop."""
+    """A running circuit."""
 
     @property
     def latency_frames(self) -> int:
         """Delay from input to output [frames]."""
+
+    def process(self, volts_in: Volts, volts_out: Volts) -> None:
+        """Fill ``volts_out`` from the next ``volts_in``."""
+
+
+class LiveCircuit(Circuit, Protocol):
+    """A running circuit that can be changed while it is heard, as ``preview.engine.rack.Rack`` can."""
+
+    letter: str
+    """The candidate that is heard."""
+    null: tuple[str, str] | None
+    """The first minus the second is heard."""
+    hurry: int
+    """How many times faster than the signal a stage may be brought to the present."""
 
     @property
     def gliding(self) -> bool:
@@ -33,10 +48,19 @@ class Circuit(Protocol):
 
     @property
     def swapping(self) -> bool:
-        """Whether two circuits are being crossfaded."""
+        """Whether what is heard is on its way to something else."""
 
-    def process(self, volts_in: Volts, volts_out: Volts) -> None:
-        """Fill ``volts_out`` from the next ``volts_in``."""
+    @property
+    def fault(self) -> FaultReading | None:
+        """Why it has given up, None while all is well."""
+
+    @property
+    def match_gain(self) -> float:
+        """Gain at which it is heard."""
+
+    @property
+    def heard(self) -> Volts | None:
+        """What is to be heard of the last block, where it is not what was processed."""
 
     def reset(self) -> None:
         """Back to the state before the first frame."""
@@ -114,20 +138,6 @@ def peak(volts: Volts) -> float:
         return 0.0
     high, low = float(volts.max()), float(volts.min())
     return math.nan if math.isnan(high) else max(high, -low)
-
-
-def spread(samples: Samples, out: NDArray[np.float32]) -> None:
-    """Lay the recording's channels on the device's: one on all, several on one as their mean."""
-    have, want = samples.shape[1], out.shape[1]
-    if have == 1 or want == have:
-        out[:] = samples
-    elif want == 1:
-        np.mean(samples, axis=1, keepdims=True, out=samples[:, :1])
-        out[:] = samples[:, :1]
-    else:
-        both = min(have, want)
-        out[:, :both] = samples[:, :both]
-        out[:, both:] = 0.0
 
 
 def joined_readings(

@@ -1,160 +1,108 @@
 """What the desk and the engine tell each other. Plain frozen data, pickled over a pipe.
 
-The desk sends commands; the engine sends snapshots (the newest replaces one still waiting) and notices.
+The desk sends commands; the engine sends snapshots (the newest replaces one still waiting), reports (the newest of a
+kind replaces one still waiting) and notices.
 """
 
 from __future__ import annotations
 
 from dataclasses import dataclass
-from pathlib import Path
 
-from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpReading
+from preview.engine.commands import (
+    CancelExport,
+    ClearHolds,
+    Command,
+    DropCandidate,
+    Export,
+    ExportDepth,
+    KeepCandidate,
+    ListenNull,
+    OpenFile,
+    Pause,
+    Play,
+    Quit,
+    Recover,
+    RescanDevices,
+    Seek,
+    SelectCandidate,
+    SetAtEnd,
+    SetBypass,
+    SetCircuit,
+    SetDevice,
+    SetFullScale,
+    SetHeardChannels,
+    SetMatch,
+    SetMute,
+    SetPart,
+    SetQuality,
+    SetRegion,
+    SetVolume,
+    UseLive,
+    UseSignal,
+)
+from preview.engine.readings import (
+    CandidateReading,
+    ClipMarks,
+    DeviceList,
+    DeviceRow,
+    ExportState,
+    FaultReading,
+    InputKind,
+    OpAmpMarks,
+    Overview,
+    Report,
+    SpectrumReading,
+)
 from preview.meters.reading import LevelReading
 from preview.session import AtEnd
 from preview.values.quality import Quality
 
 __all__ = [
+    "CancelExport",
+    "CandidateReading",
     "ClearHolds",
+    "ClipMarks",
     "Command",
+    "DeviceList",
+    "DeviceRow",
+    "DropCandidate",
+    "Export",
+    "ExportDepth",
+    "ExportState",
+    "FaultReading",
+    "InputKind",
+    "KeepCandidate",
+    "ListenNull",
     "Notice",
+    "OpAmpMarks",
     "OpenFile",
+    "Overview",
     "Pause",
     "Play",
     "Quit",
+    "Recover",
+    "Report",
+    "RescanDevices",
     "Seek",
+    "SelectCandidate",
     "SetAtEnd",
     "SetBypass",
     "SetCircuit",
+    "SetDevice",
     "SetFullScale",
+    "SetHeardChannels",
+    "SetMatch",
+    "SetMute",
     "SetPart",
     "SetQuality",
     "SetRegion",
     "SetVolume",
     "Snapshot",
+    "SpectrumReading",
+    "UseLive",
+    "UseSignal",
 ]
-
-
-@dataclass(frozen=True, slots=True)
-class SetPart:
-    """Glide one part to a new value."""
-
-    designator: str
-    """R1, C2 ..."""
-    value: float
-    """Ohm, farad or henry."""
-
-
-@dataclass(frozen=True, slots=True)
-class SetCircuit:
-    """Crossfade to another circuit (other stage, supply, source, load)."""
-
-    netlist: Netlist
-    """The new circuit, checked."""
-
-
-@dataclass(frozen=True, slots=True)
-class SetQuality:
-    """Crossfade to another quality of computation."""
-
-    quality: Quality
-    """The new quality."""
-
-
-@dataclass(frozen=True, slots=True)
-class SetFullScale:
-    """Change the volts a sample of 1.0 stands for."""
-
-    full_scale_v: float
-    """Peak volts of full scale."""
-
-
-@dataclass(frozen=True, slots=True)
-class OpenFile:
-    """Open another recording; it waits at its start."""
-
-    path: Path
-    """The file."""
-
-
-@dataclass(frozen=True, slots=True)
-class Play:
-    """Start or go on."""
-
-
-@dataclass(frozen=True, slots=True)
-class Pause:
-    """Fade out and wait."""
-
-
-@dataclass(frozen=True, slots=True)
-class Seek:
-    """Go to a frame of the recording."""
-
-    frame: int
-    """Frame of the file, 0 at its start."""
-
-
-@dataclass(frozen=True, slots=True)
-class SetRegion:
-    """Play within a region; both None for the whole file."""
-
-    start_frame: int | None
-    """First frame."""
-    end_frame: int | None
-    """Frame after the last."""
-
-
-@dataclass(frozen=True, slots=True)
-class SetAtEnd:
-    """What happens at the end of the file or region."""
-
-    at_end: AtEnd
-    """Loop or stop."""
-
-
-@dataclass(frozen=True, slots=True)
-class SetBypass:
-    """Hear the input instead of the stage's output."""
-
-    on: bool
-    """True to bypass the stage."""
-
-
-@dataclass(frozen=True, slots=True)
-class SetVolume:
-    """Listening volume; levels in volts do not depend on it."""
-
-    volume_db: float
-    """Gain to the device [dB], at most 0; -inf is silence."""
-
-
-@dataclass(frozen=True, slots=True)
-class ClearHolds:
-    """Clear peak holds, clip counts and dropout count."""
-
-
-@dataclass(frozen=True, slots=True)
-class Quit:
-    """Fade out and end the engine."""
-
-
-Command = (
-    SetPart
-    | SetCircuit
-    | SetQuality
-    | SetFullScale
-    | OpenFile
-    | Play
-    | Pause
-    | Seek
-    | SetRegion
-    | SetAtEnd
-    | SetBypass
-    | SetVolume
-    | ClearHolds
-    | Quit
-)
 
 
 @dataclass(frozen=True, slots=True)
@@ -209,3 +157,33 @@ class Snapshot:
     """Device, or ``silent clock``."""
     gliding: bool
     """Whether a part is on its way to a new value."""
+    opamp_peaks_v: tuple[float, ...] = ()
+    """Largest output voltage of each of ``opamps`` since the last snapshot [V]."""
+    input_kind: InputKind = InputKind.FILE
+    """Where the signal comes from. Live input and an endless signal have a length of 0 frames."""
+    input_name: str = ""
+    """File, test signal or input device, in words."""
+    channels: int = 2
+    """Channels of the input."""
+    heard_channels: tuple[int, ...] = ()
+    """Channels that are heard, from 0; empty where all are."""
+    muted: bool = False
+    """Whether the device is silent though everything runs."""
+    mute_reason: str = ""
+    """Why it was muted without being asked to: howl-round, a fault; empty otherwise."""
+    fault: FaultReading | None = None
+    """Why the circuit was muted; ``Recover`` clears it."""
+    live_latency_s: float = 0.0
+    """From the input device to the output device [s]; 0 but for live input."""
+    spectrum: SpectrumReading | None = None
+    """Input and output of the last half second; None before the first."""
+    letter: str = "A"
+    """The candidate that is heard."""
+    null: tuple[str, str] | None = None
+    """The first candidate minus the second is heard; then ``output`` is their difference."""
+    match: bool = False
+    """Whether candidates are heard at matched loudness."""
+    match_db: float = 0.0
+    """Gain of the match now in force [dB]; levels in volts do not depend on it."""
+    candidates: tuple[CandidateReading, ...] = ()
+    """Every candidate, by letter."""

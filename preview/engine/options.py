@@ -6,7 +6,7 @@ import argparse
 import re
 from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
-from typing import Literal, TypeVar
+from typing import Any, Literal, TypeVar
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, parse_load, parse_source, said
 from preview.circuit.library import open_stages, with_overrides
@@ -23,6 +23,7 @@ from preview.values.levels import (
 )
 from preview.values.notation import format_value, parse_value, quoted
 from preview.values.quality import Quality
+from preview.values.stimulus import parse_stimulus
 
 __all__ = [
     "DEFAULT_FULL_SCALE",
@@ -31,6 +32,7 @@ __all__ = [
     "check_together",
     "for_option",
     "frequency_of",
+    "intake_from",
     "join_signed_values",
     "picture_kind",
     "session_from",
@@ -58,6 +60,8 @@ VALUE_OPTIONS = (
     "--depth",
     "--device",
     "--end",
+    "--signal",
+    "--input",
 )
 """Options that take a text; one that begins with a minus sign belongs to them all the same."""
 
@@ -210,6 +214,37 @@ def _supplies_differ(stage: Stage) -> tuple[str, ...]:
         for k, one in enumerate(stage.joined, 1)
     )
     return (f"the stages are drawn with different supplies ({rails}): all run on the first's",)
+def intake_from(options: argparse.Namespace) -> dict[str, Any]:
+    """Fields of a session that take a test signal or live input in place of a recording; empty for a recording.
+
+    Raises
+    ------
+    UsageError
+        More than one thing to hear, or an input device for none.
+    """
+    given = [
+        name
+        for name, there in (
+            ("a recording", options.audio is not None),
+            ("--signal", options.signal is not None),
+            ("--live", options.live),
+        )
+        if there
+    ]
+    if len(given) > 1:
+        raise UsageError(f"{given[0]} and {given[1]} at once", "one thing is heard at a time")
+    if options.input is not None and not options.live:
+        raise UsageError("--input is for --live", "add --live or leave it out")
+    if options.live:
+        return {
+            "live": True,
+            "live_device": options.input,
+            "notes": ("live input begins muted: keep the volume low and microphones away from loudspeakers",),
+        }
+    if options.signal is None:
+        return {}
+    stimulus = for_option("--signal", lambda: parse_stimulus(options.signal))
+    return {"stimulus": stimulus, "notes": (f"test signal {stimulus.text}",)}
 
 
 def for_option(option: str, read: Callable[[], T]) -> T:

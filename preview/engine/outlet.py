@@ -1,4 +1,4 @@
-"""Where the player's blocks go: the sound device, or the silent clock where there is none."""
+"""Where the player's blocks go: the sound device, or the silent clock while there is none."""
 
 from __future__ import annotations
 
@@ -14,15 +14,22 @@ from preview.audio import devices
 from preview.audio.clock import SilentClock
 from preview.audio.output import Output
 from preview.audio.resample import ResampledFill
+from preview.audio.stream import Inlet, OutputStream, open_output
 from preview.engine.player import Player
 from preview.errors import DeviceError, PreviewError
 
 __all__ = ["Outlet", "block_frames_for"]
 
 STALL_S = 0.5
-RETRY_S = 2.0
+RETRY_S, RETRY_LATER_S = 0.4, 1.5
+RETRY_OFTEN = 50
+FIRST_S = 4.0
+ANY_CHANNELS = 32
+"""A device that offers so many is a mixer before the real one: it takes what it is given and drops the rest."""
 DEVICE_LATENCY_S = 0.08
 """Asked of the device: a value step is heard soon enough, and a busy machine does not break the sound [s]."""
+LIVE_LATENCY_S = 0.1
+"""Asked of a device that records too: input and output are two buffers to be kept apart [s]."""
 
 
 def block_frames_for(sample_rate_hz: float) -> int:
@@ -49,8 +56,61 @@ class _Feed:
         self.ended = True
 
 
+class _Search:
+    """Looks for a device on a thread of its own, again and again: a sound system that hangs holds up nothing else.
+
+    Parameters
+    ----------
+    open_device : callable
+        Opens and starts a device; raises DeviceError.
+    lost : Output, optional
+        The output to let go of first.
+    look_anew : bool
+        Whether the library must look for devices anew before the first try.
+    """
+
+    def __init__(
+        self,
+        open_device: Callable[[], tuple[OutputStream, _Feed]],
+        *,
+        lost: Output | None = None,
+        look_anew: bool = False,
+    ) -> None:
+        self._open_device = open_device
+        self._lost = lost
+        self._look_anew = look_anew
+        self.found: tuple[OutputStream, _Feed] | None = None
+        self.trouble: PreviewError | None = None
+        self.tried = threading.Event()
+        self.ended = threading.Event()
+        threading.Thread(target=self._run, name="device search", daemon=True).start()
+
+    def _run(self) -> None:
+        if self._lost is not None:
+            self._lost.close()
+            if isinstance(self._lost, OutputStream):
+                self._lost.wait_closed()
+        turn = 0
+        while not self.ended.is_set():
+            try:
+                if self._look_anew or turn:
+                    devices.refresh()
+                found = self._open_device()
+            except PreviewError as error:
+                self.trouble = error
+                self.tried.set()
+                turn += 1
+                self.ended.wait(RETRY_S if self._lost is not None and turn < RETRY_OFTEN else RETRY_LATER_S)
+                continue
+            if self.ended.is_set():
+                found[0].close()
+            self.found = found
+            self.tried.set()
+            return
+
+
 class Outlet:
-    """Plays a player's blocks, and goes on silently when the device is lost until one is there again.
+    """Plays a player's blocks; where the device is lost the player waits until one is there again.
 
     Parameters
     ----------
@@ -72,37 +132,51 @@ class Outlet:
         block_frames: int | None,
         tell: Callable[[str, str], None],
     ) -> None:
-        self._device = device
+        self.device = device
+        """The device wanted, by name; None for the default."""
         self._silent = silent
         self._block_frames = block_frames
         self._tell = tell
         self._feed = _Feed()
         self._output: Output | None = None
         self._player: Player | None = None
-        self._shape: tuple[float, int] | None = None
+        self._shape: tuple[object, ...] | None = None
+        self._inlet: Inlet | None = None
+        self._search: _Search | None = None
         self._seen_underflows = 0
         self._was_heard = False
-        self._closed = threading.Event()
-        self._recovery: threading.Thread | None = None
-        self._found: tuple[Output, _Feed] | None = None
 
-    def play(self, player: Player | None) -> None:
-        """Ask this player for the blocks from now on; opens an output where its rate or channels need one."""
+    @property
+    def live_latency_s(self) -> float:
+        """From the input to its block; 0 without live input [s]."""
+        return self._output.input_latency_s if isinstance(self._output, OutputStream) else 0.0
+
+    @property
+    def input_name(self) -> str:
+        """Input device in use; empty without live input."""
+        return self._output.input_name if isinstance(self._output, OutputStream) else ""
+
+    def play(self, player: Player | None, inlet: Inlet | None = None) -> None:
+        """Ask this player for the blocks from now on; opens an output where its rate, channels or input need one."""
         self._player = player
         if player is None:
             self._feed.player = None
             return
-        shape = (player.sample_rate_hz, player.channels)
+        shape = (player.sample_rate_hz, player.channels, inlet)
         if self._output is None or self._shape != shape:
-            if self._output is not None:
-                self._feed.player = None
-                self._output.close()
-            self._shape = shape
+            self._shape, self._inlet = shape, inlet
             self._open_first(player)
         self._put_on(player)
 
+    def change_device(self, name: str | None) -> None:
+        """Play through another device; the player waits meanwhile."""
+        self.device = name
+        self._silent = False
+        if self._player is not None and self._search is None:
+            self._let_go(self._player)
+
     def watch(self) -> None:
-        """Look after the output: count missed blocks, notice a lost device, take up one that is back."""
+        """Look after the output: count missed blocks, notice a lost device, take up one that is there."""
         output, player = self._output, self._player
         if output is None or player is None:
             return
@@ -113,21 +187,28 @@ class Outlet:
                 player.missed_blocks += missed
         self._was_heard = not player.silent
         player.latency_s = output.latency_s
-        found, self._found = self._found, None
-        if found is not None:
-            self._take(player, *found)
-        elif isinstance(output, devices.OutputStream):
-            stalled = time.monotonic() - output.last_callback_s > STALL_S
-            if stalled or self._feed.ended:
-                self._lose(player, output)
+        if self._search is not None:
+            if self._search.found is not None:
+                self._take(player, *self._search.found)
+        elif isinstance(output, OutputStream) and self._has_stopped(output):
+            self._tell(
+                f"{output.name} has stopped; waiting here until a device is back (play goes on without sound)",
+                "warning",
+            )
+            self._let_go(player)
 
     def close(self) -> None:
         """End the output."""
-        self._closed.set()
         self._feed.player = None
+        if self._search is not None:
+            self._search.ended.set()
+            self._search = None
         if self._output is not None:
             self._output.close()
             self._output = None
+
+    def _has_stopped(self, output: OutputStream) -> bool:
+        return self._feed.ended or time.monotonic() - output.last_callback_s > STALL_S
 
     def _put_on(self, player: Player) -> None:
         assert self._output is not None
@@ -137,12 +218,20 @@ class Outlet:
         self._feed.player = player
 
     def _open_first(self, player: Player) -> None:
+        """A device for this player, or the silent clock while one is looked for."""
+        self.close()
         if not self._silent:
-            try:
-                self._output, self._feed = self._open_device(player)
+            self._search = search = _Search(lambda: self._open_device(player))
+            search.tried.wait(FIRST_S)
+            if search.found is not None:
+                self._output, self._feed = search.found
+                self._search = None
                 return
-            except DeviceError as error:
-                self._tell(f"no sound: {error}; running on the silent clock", "warning")
+            trouble = search.trouble or "the sound system does not answer"
+            self._tell(f"no sound: {trouble}; running on the silent clock", "warning")
+            if not devices.installed():
+                search.ended.set()
+                self._search = None
         self._use_clock(player)
 
     def _use_clock(self, player: Player) -> None:
@@ -152,35 +241,72 @@ class Outlet:
         self._output = SilentClock(rate, 2, frames, self._feed)
         self._output.start()
 
-    def _open_device(self, player: Player, *, any_device: bool = False) -> tuple[Output, _Feed]:
+    def _let_go(self, player: Player) -> None:
+        """Leave the device: wait silently, look for one on a thread of its own."""
+        player.hold()
+        lost, self._feed.player = self._output, None
+        self._use_clock(player)
+        self._put_on(player)
+        self._search = _Search(lambda: self._open_device(player, any_device=True), lost=lost, look_anew=True)
+
+    def _take(self, player: Player, output: OutputStream, feed: _Feed) -> None:
+        """Change from the silent clock to the device that is there now."""
+        self._search = None
+        self._feed.player = None
+        if self._output is not None:
+            self._output.close()
+        self._output, self._feed = output, feed
+        self._put_on(player)
+        player.release()
+        self._tell(f"sound is back on {output.name}", "information")
+
+    # -- on the search's thread
+
+    def _open_device(self, player: Player, *, any_device: bool = False) -> tuple[OutputStream, _Feed]:
         """A started device with a feed that is still silent; the file's rate and channels come first."""
         trouble: DeviceError | None = None
-        names = [self._device, None] if any_device and self._device is not None else [self._device]
+        names = [self.device, None] if any_device and self.device is not None else [self.device]
         rate = player.sample_rate_hz
         for name in names:
-            for channels in dict.fromkeys((max(player.channels, 2), 2, 1)):
-                for device_rate in dict.fromkeys((rate, self._own_rate(name) or rate)):
+            try:
+                own_rate, most = self._own(name)
+            except DeviceError as error:
+                trouble = trouble or error
+                continue
+            several = player.channels if 2 < player.channels <= most < ANY_CHANNELS else 2
+            for channels in dict.fromkeys((several, 2, 1)):
+                for device_rate in dict.fromkeys((rate, own_rate or rate)):
                     try:
-                        return self._start_device(name, rate, device_rate, channels)
+                        opened = self._start_device(name, rate, device_rate, channels)
                     except DeviceError as error:
                         trouble = trouble or error
+                        continue
+                    if name != self.device:
+                        self._tell(f"{trouble}; using {opened[0].name}", "warning")
+                    return opened
         assert trouble is not None
         raise trouble
 
     def _start_device(
         self, name: str | None, rate: float, device_rate: float, channels: int
-    ) -> tuple[Output, _Feed]:
+    ) -> tuple[OutputStream, _Feed]:
         feed = _Feed()
         frames = self._block_frames or block_frames_for(device_rate)
-        fill = feed if device_rate == rate else ResampledFill(feed, rate, device_rate, channels)
-        stream = devices.open_output(
+        if device_rate == rate:
+            fill: Callable[[NDArray[np.float32]], None] = feed
+        elif self._inlet is None:
+            fill = ResampledFill(feed, rate, device_rate, channels)
+        else:
+            raise DeviceError(f"live input at {rate:g} Hz: the device runs at {device_rate:g} Hz")
+        stream = open_output(
             name,
             sample_rate_hz=device_rate,
             channels=channels,
             block_frames=frames,
             fill=fill,
             finished=feed.finished,
-            latency=DEVICE_LATENCY_S,
+            latency=DEVICE_LATENCY_S if self._inlet is None else LIVE_LATENCY_S,
+            inlet=self._inlet,
         )
         try:
             stream.start()
@@ -194,45 +320,12 @@ class Outlet:
         return stream, feed
 
     @staticmethod
-    def _own_rate(name: str | None) -> float | None:
-        """The device's preferred rate [Hz], None where there is no device."""
+    def _own(name: str | None) -> tuple[float | None, int]:
+        """The device's preferred rate [Hz], None where there is no device, and the channels it has."""
         if name is not None:
-            return devices.find_output(name).default_sample_rate_hz
-        found = devices.output_devices()
-        return next((d.default_sample_rate_hz for d in found if d.is_default), None)
-
-    def _lose(self, player: Player, output: Output) -> None:
-        """The device is gone: go on silently at once, look for it on a thread of its own."""
-        self._feed.player = None
-        self._tell(f"{output.name} has stopped; going on without sound until a device is back", "warning")
-        self._use_clock(player)
-        self._put_on(player)
-        self._recovery = threading.Thread(
-            target=self._recover, args=(player, output), name="recovery", daemon=True
+            device: devices.Device | None = devices.find_output(name)
+        else:
+            device = next((one for one in devices.output_devices() if one.is_default), None)
+        return (
+            (device.default_sample_rate_hz, device.max_output_channels) if device is not None else (None, 2)
         )
-        self._recovery.start()
-
-    def _recover(self, player: Player, lost: Output) -> None:
-        """Close the lost device (which may take for ever), then try to open one again and again."""
-        lost.close()
-        while not self._closed.is_set():
-            try:
-                devices.refresh()
-                found = self._open_device(player, any_device=True)
-            except PreviewError:
-                self._closed.wait(RETRY_S)
-                continue
-            self._found = found
-            return
-
-    def _take(self, player: Player, output: Output, feed: _Feed) -> None:
-        """Change from the silent clock to the device that is back."""
-        if self._shape != (player.sample_rate_hz, player.channels) or self._closed.is_set():
-            output.close()
-            return
-        self._feed.player = None
-        if self._output is not None:
-            self._output.close()
-        self._output, self._feed = output, feed
-        self._put_on(player)
-        self._tell(f"sound is back on {output.name}", "information")

@@ -2,9 +2,12 @@
 
 from __future__ import annotations
 
+import atexit
 import contextlib
 import multiprocessing
+import os
 import queue
+import signal
 import sys
 import threading
 from collections import deque
@@ -15,7 +18,8 @@ from multiprocessing.connection import Connection
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from preview.engine.messages import ClearHolds, Command, Notice, Quit, Snapshot
+from preview.circuit.netlist import Netlist
+from preview.engine.messages import ClearHolds, Command, Notice, Quit, Report, Snapshot
 from preview.meters.reading import LevelReading
 from preview.session import Session
 
@@ -25,6 +29,8 @@ if TYPE_CHECKING:
 __all__ = ["EngineConfig", "EngineProcess"]
 
 START_VOLUME_DB = -20.0
+_FROM_TERMINAL = tuple(getattr(signal, name) for name in ("SIGINT", "SIGHUP") if hasattr(signal, name))
+"""Signals that a terminal sends to every process of the desk: the interrupt key, and that it was closed."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,6 +49,16 @@ class EngineConfig:
     """Frames a block; None lets the device choose."""
     play: bool = False
     """Whether it plays at once."""
+    start_frame: int = 0
+    """Frame of the recording to begin at."""
+    region: tuple[int, int] | None = None
+    """Loop region to begin with."""
+    letter: str = "A"
+    """The letter of the session's circuit among the candidates."""
+    candidates: tuple[tuple[str, Netlist], ...] = ()
+    """Further candidates, by letter."""
+    match: bool = False
+    """Whether candidates are heard at matched loudness."""
     log: Path | None = None
     """File for what the audio libraries write; None for the person's log folder."""
 
@@ -55,6 +71,7 @@ class EngineProcess:
         self._connection = connection
         self._unread: Snapshot | None = None
         self._notices: deque[Notice] = deque()
+        self._reports: dict[type[Report], Report] = {}
         self._guard = threading.Lock()
         self._orders: queue.SimpleQueue[EngineConfig | Command | None] = queue.SimpleQueue()
         self._closed = False
@@ -73,13 +90,15 @@ class EngineProcess:
     def spawn(cls) -> EngineProcess:
         """Start the process alone: it loads its libraries and waits for ``begin``. Returns at once."""
         context = multiprocessing.get_context("spawn")
-        with _real_stderr():
+        with _real_stderr(), _deaf_to_the_terminal():
             resource_tracker.ensure_running()
             ours, theirs = context.Pipe(duplex=True)
-            process = context.Process(target=_child, args=(theirs,), name="preview-engine", daemon=True)
+            process = context.Process(target=_child, args=(theirs,), name="preview-engine")
             process.start()
         theirs.close()
-        return cls(process, ours)
+        engine = cls(process, ours)
+        atexit.register(engine.close)  # not a daemon, as it has a worker of its own: nobody else would end it
+        return engine
 
     def begin(self, config: EngineConfig) -> None:
         """Tell a process that was only spawned what to begin with; once, before anything is sent."""
@@ -90,6 +109,20 @@ class EngineProcess:
     def alive(self) -> bool:
         """Whether the engine still runs."""
         return not self._closed and self._process.is_alive()
+
+    @property
+    def ending(self) -> str:
+        """How it has ended, in words; empty while it runs and when it was told to."""
+        code = self._process.exitcode
+        if code is None or code == 0 or self._closed:
+            return ""
+        if code > 0:
+            return f"the engine ended with code {code}"
+        try:
+            name = signal.Signals(-code).name
+        except ValueError:
+            name = str(-code)
+        return f"the engine was ended by signal {name}"
 
     @property
     def pid(self) -> int | None:
@@ -114,11 +147,19 @@ class EngineProcess:
             self._notices.clear()
         return told
 
+    def reports(self) -> list[Report]:
+        """What was found out since the last call, the newest of each kind."""
+        with self._guard:
+            told = list(self._reports.values())
+            self._reports.clear()
+        return told
+
     def close(self, timeout_s: float = 2.0) -> None:
         """Fade out and end the engine, by force if it does not answer; a second call does nothing."""
         if self._closed:
             return
         self._closed = True
+        atexit.unregister(self.close)
         self._orders.put(Quit())
         self._orders.put(None)
         self._process.join(timeout_s if self._begun else 0.0)
@@ -138,6 +179,8 @@ class EngineProcess:
                         self._unread = _with_peaks_of(message, self._unread)
                     elif isinstance(message, Notice):
                         self._notices.append(message)
+                    elif isinstance(message, Report):
+                        self._reports[type(message)] = message
 
     def _speak(self) -> None:
         """Send the orders on; a full pipe makes this thread wait, not the desk."""
@@ -153,8 +196,14 @@ def _with_peaks_of(new: Snapshot, unread: Snapshot | None) -> Snapshot:
     """The new snapshot; its peaks not below those of one that nobody has read."""
     if unread is None:
         return new
+    opamp_peaks_v = new.opamp_peaks_v
+    if len(opamp_peaks_v) == len(unread.opamp_peaks_v):
+        opamp_peaks_v = tuple(map(max, opamp_peaks_v, unread.opamp_peaks_v))
     return replace(
-        new, input=_higher_peaks(new.input, unread.input), output=_higher_peaks(new.output, unread.output)
+        new,
+        input=_higher_peaks(new.input, unread.input),
+        output=_higher_peaks(new.output, unread.output),
+        opamp_peaks_v=opamp_peaks_v,
     )
 
 
@@ -176,9 +225,26 @@ def _real_stderr() -> Iterator[None]:
         sys.stderr = held
 
 
+@contextlib.contextmanager
+def _deaf_to_the_terminal() -> Iterator[None]:
+    """A child started here does not hear what the terminal sends to all its processes until it says so itself."""
+    if not hasattr(signal, "pthread_sigmask"):
+        yield
+        return
+    held = signal.pthread_sigmask(signal.SIG_BLOCK, _FROM_TERMINAL)
+    try:
+        yield
+    finally:
+        signal.pthread_sigmask(signal.SIG_SETMASK, held)
+
+
 def _child(connection: Connection) -> None:
     """Runs in the child: everything that touches sound is loaded here and nowhere else."""
-    import preview.dsp.chain  # noqa: F401 - loaded while the desk still reads its options
+    for number in _FROM_TERMINAL:  # they are for the desk, which then says quit
+        signal.signal(number, signal.SIG_IGN)
+    if hasattr(signal, "pthread_sigmask"):
+        signal.pthread_sigmask(signal.SIG_UNBLOCK, _FROM_TERMINAL)
+    import preview.engine.rack  # noqa: F401 - loaded while the desk still reads its options
     from preview.dsp.stage import load_kernels
     from preview.engine.host import run
 
@@ -187,3 +253,4 @@ def _child(connection: Connection) -> None:
         config = connection.recv()
         if isinstance(config, EngineConfig):
             run(connection, config, warm=warm)
+    os._exit(0)  # a sound system that hangs would hold up the library's own end for ever

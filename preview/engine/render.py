@@ -28,6 +28,7 @@ __all__ = [
     "CHUNK_FRAMES",
     "RenderResult",
     "open_source",
+    "output_comment",
     "output_scale_v",
     "render",
     "stream",
@@ -110,6 +111,12 @@ def output_scale_v(circuit: Netlist, session: Session, depth: Depth) -> float:
     return max(rail_v, full_scale_v)
 
 
+def output_comment(session: Session, out_full_scale_v: float) -> str:
+    """What is written into an output file's comment: its scale, and what made it."""
+    scale = full_scale_comment(FullScale(out_full_scale_v, f"{out_full_scale_v:.9g} V"))
+    return f"{scale}; preview {__version__}; stage {session.stage.name}"
+
+
 def open_source(audio: Path) -> FileSource | StdinSource:
     """The recording, from a file or, for ``-``, from stdin."""
     return StdinSource() if str(audio) == "-" else FileSource(audio)
@@ -159,8 +166,7 @@ def render(
         out_full_scale_v=scale_v,
         max_frames=chunk_frames,
     )
-    scale = full_scale_comment(FullScale(scale_v, f"{scale_v:.9g} V"))
-    comment = f"{scale}; preview {__version__}; stage {session.stage.name}"
+    comment = output_comment(session, scale_v)
     with FileSink(out, sample_rate_hz=rate, channels=channels, depth=depth, comment=comment) as sink:
         started_s = time.perf_counter()
         frames, input_peak_v, output_peak_v = stream(path, source, sink, progress=progress)

@@ -104,6 +104,12 @@ class Ramp:
         self._begin = self._end = self.value = value
         self._at = len(self._shape)
 
+    def pass_over(self, frames: int) -> None:
+        """Move on as ``apply`` would."""
+        self._at = min(self._at + frames, len(self._shape))
+        part = self._shape[self._at - 1] if self._at else 0.0
+        self.value = float(self._begin + part * (self._end - self._begin)) if self.moving else self._end
+
     def apply(self, samples: Samples) -> None:
         """Multiply the next frames in place; at rest at 1 they are not touched."""
         frames = len(samples)

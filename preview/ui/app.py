@@ -4,45 +4,53 @@ from __future__ import annotations
 
 import asyncio
 import contextlib
+import signal
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import ClassVar
 
 from textual.app import ComposeResult
-from textual.binding import BindingType
 from textual.containers import Horizontal, Vertical
 from textual.events import AppBlur, AppFocus, Resize
 
-from preview.circuit.library import find_stage
-from preview.engine.messages import SetVolume
+from preview.engine.messages import Recover, SetVolume
 from preview.errors import PreviewError
 from preview.session import Session
-from preview.ui.actions import ACTIONS, Group, bindings
+from preview.ui.bindings import bindings
 from preview.ui.desk import Desk
 from preview.ui.dialogs import DialogApp
-from preview.ui.figures import FigureKeeper, Figures, MakeFigures, compute_figures
+from preview.ui.figures import FigureKeeper, FigureSet, MakeFigures, compute_figures
 from preview.ui.firstrun import caution_seen, config_folder, remember_caution
+from preview.ui.keymap import KeyMap, read_keys
 from preview.ui.link import AnswerWatch, EngineLink, Restart
-from preview.ui.panels.curve import CurvePanel
+from preview.ui.panels.candidates import CandidatesPanel
+from preview.ui.panels.circuit import CircuitPanel
 from preview.ui.panels.figures import FiguresPanel
 from preview.ui.panels.footer import FooterPanel
 from preview.ui.panels.header import HeaderPanel
-from preview.ui.panels.meters import MetersPanel
+from preview.ui.panels.opamps import OpAmpsPanel
 from preview.ui.panels.parts import PartsPanel
-from preview.ui.panels.schematic import SchematicPanel
-from preview.ui.panels.timeline import TimelinePanel
+from preview.ui.panels.path import PathPanel
+from preview.ui.panels.response import ResponsePanel
+from preview.ui.panels.timeline import TimelinePanel, WaveformPanel
 from preview.ui.screens.pages import CautionScreen
 from preview.ui.theme import PALETTES, Look, first_palette
+from preview.ui.view import Shown
 from preview.ui.widgets.board import Board
 
-__all__ = ["DeskApp", "run_desk"]
+__all__ = ["DeskApp"]
 
 FRAMES_PER_S = 25.0
+_VIEWS_EVERY = 3
+"""What is read rather than watched is painted at a third of the pace."""
 _UNFOCUSED_EVERY = 3
 """A window that is not looked at is painted at a third of the pace."""
 WIDE, TALL = 120, 42
-"""From this size on all views fit side by side, or above each other [cells]."""
+"""From this size on two views fit side by side, or above each other [cells]."""
+_REVIVE_S = 10.0
+"""An engine that stops again so soon after it was started by itself is left to the person [s]."""
+ENDINGS = tuple(getattr(signal, name) for name in ("SIGINT", "SIGTERM", "SIGHUP") if hasattr(signal, name))
+"""Signals that end the desk in an orderly way."""
 
 
 class DeskApp(DialogApp):
@@ -53,7 +61,7 @@ class DeskApp(DialogApp):
     session : Session
         What is open.
     link : EngineLink
-        The engine, already running this session; whoever started it need not close it after ``run_desk``.
+        The engine, already running this session; ``run_desk`` closes it.
     restart : callable, optional
         Starts another engine when this one has stopped.
     autoplay : bool
@@ -63,13 +71,12 @@ class DeskApp(DialogApp):
     make_figures : callable
         Computes the response; runs in a thread.
     config : Path, optional
-        Folder that remembers that the hearing caution was seen; the person's own if None.
+        Folder of the person's own keys, which also remembers that the hearing caution was seen; their own if None.
     """
 
     CSS_PATH = "desk.tcss"
     TITLE = "Preview"
     ENABLE_COMMAND_PALETTE = False
-    BINDINGS: ClassVar[list[BindingType]] = [*bindings(a for a in ACTIONS if a.group is not Group.DIALOG)]
 
     def __init__(
         self,
@@ -82,27 +89,51 @@ class DeskApp(DialogApp):
         make_figures: MakeFigures = compute_figures,
         config: Path | None = None,
     ) -> None:
-        super().__init__(Desk(session, link), Look(first_palette()))
+        config = config or config_folder()
+        self._greeting: list[tuple[str, str]] = [(note, "information") for note in session.notes[:1]]
+        try:
+            keys = read_keys(config)
+        except PreviewError as error:
+            keys = KeyMap()
+            self._greeting.append((str(error), "error"))
+        super().__init__(Desk(session, link, keys=keys), Look(first_palette()), config)
+        for binding in bindings(keys.desk):
+            self._bindings.key_to_bindings[binding.key] = [binding]
+        self.ended_by: int | None = None
+        self.on_signal: Callable[[], None] | None = None
+        """Called when a signal ends the desk; None leaves signals alone."""
         self._restart = restart
         self._restarting = False
+        self._revived_s = -1e9
         self._autoplay = autoplay
         self._show_caution = show_caution
         self._keeper = FigureKeeper(make_figures)
-        self._config = config or config_folder()
         self._focused = True
         self._polls = 0
         self._watch = AnswerWatch()
         self.head = HeaderPanel(self.desk, self.look)
-        self.meters = MetersPanel(self.desk, self.look)
+        self.path = PathPanel(self.desk, self.look)
         self.timeline = TimelinePanel(self.desk, self.look)
         self.parts = PartsPanel(self.desk, self.look)
-        self.curve = CurvePanel(self.desk, self.look)
-        self.schematic = SchematicPanel(self.desk, self.look)
+        self.response = ResponsePanel(self.desk, self.look)
+        self.circuit = CircuitPanel(self.desk, self.look)
         self.figures = FiguresPanel(self.desk, self.look)
-        self.foot = FooterPanel(self.look)
+        self.foot = FooterPanel(self.look, keys)
+        self.opamps = OpAmpsPanel(self.desk, self.look)
+        self.candidates = CandidatesPanel(self.desk, self.look)
+        self.waveform = WaveformPanel(self.desk, self.look)
+        self.views: dict[Shown, Board] = {
+            Shown.RESPONSE: self.response,
+            Shown.CIRCUIT: self.circuit,
+            Shown.OPAMPS: self.opamps,
+            Shown.CANDIDATES: self.candidates,
+            Shown.TIMELINE: self.waveform,
+        }
+        for board in self.views.values():
+            board.add_class("view")
         self.boards: tuple[Board, ...] = (
-            *(self.head, self.meters, self.timeline, self.parts),
-            *(self.curve, self.schematic, self.figures, self.foot),
+            *(self.head, self.path, self.timeline, self.parts),
+            *(*self.views.values(), self.figures, self.foot),
         )
 
     # ---- life ----
@@ -110,13 +141,12 @@ class DeskApp(DialogApp):
     def compose(self) -> ComposeResult:
         """The panels from top to bottom."""
         yield self.head
-        yield self.meters
+        yield self.path
         yield self.timeline
         with Horizontal(id="work"):
             yield self.parts
             with Vertical(id="views"):
-                yield self.curve
-                yield self.schematic
+                yield from self.views.values()
         yield self.figures
         yield self.foot
 
@@ -125,21 +155,22 @@ class DeskApp(DialogApp):
         for palette in PALETTES:
             self.register_theme(palette.theme())
         self.theme = self.look.palette.name
+        if self.on_signal is not None:
+            for number in ENDINGS:
+                asyncio.get_running_loop().add_signal_handler(number, self.end, number)
         self.app_resume_signal.subscribe(self, lambda _: self.refresh(layout=True))  # the shell wrote over it
         self.arrange(self.size.width, self.size.height)
-        self.desk.link.send(SetVolume(self.desk.volume_db))
-        for note in self.desk.session.notes[:1]:
-            self.foot.say(note)
+        self.desk.link.send(SetVolume(self.desk.listening.volume_db))
+        for text, severity in self._greeting:
+            self.foot.say(text, severity)
         self.poll()
         self.set_interval(1.0 / FRAMES_PER_S, self.poll)
-        self.run_worker(
-            self._keeper.run(lambda: (self.desk.session, self.desk.before), self._figured), group="figures"
-        )
+        self.run_worker(self._keeper.run(self._sessions, self._figured), group="figures")
         self.show()
         if not self._show_caution or caution_seen(self._config):
             self._begin()
         else:
-            self.push_screen(CautionScreen(), self._caution_read)
+            self.push_screen(CautionScreen(self.desk.keys), self._caution_read)
 
     def _caution_read(self, accepted: bool | None) -> None:
         if accepted:
@@ -148,19 +179,43 @@ class DeskApp(DialogApp):
 
     def _begin(self) -> None:
         if self._autoplay and not self.desk.stopped:
-            self.desk.play(True)
+            self.desk.listening.play(True)
             self.show()
+
+    def _fatal_error(self) -> None:
+        """Close the screen; the caller says what happened in a line, not in pages over the shell's text."""
+        self._close_messages_no_wait()
+
+    def end(self, number: int) -> None:
+        """Leave because of a signal."""
+        self.ended_by = number
+        if self.on_signal is not None:
+            self.on_signal()
+        self.exit(self.desk.session)
+
+    # ---- arrangement ----
 
     def on_resize(self, event: Resize) -> None:
         """Another size, another arrangement."""
         self.arrange(event.size.width, event.size.height)
 
     def arrange(self, width: int, height: int) -> None:
-        """Set the classes that the style sheet arranges by, and the rows of meters and foot."""
+        """Set the classes that the style sheet arranges by, the views that are shown, the rows of path and foot."""
         screen = self.screen_stack[0]
-        for holds, name in ((width < WIDE, "narrow"), (width >= WIDE, "wide"), (height >= TALL, "tall")):
+        wide, tall = width >= WIDE, height >= TALL
+        for holds, name in ((not wide, "narrow"), (wide, "wide"), (tall, "tall")):
             screen.set_class(holds, name)
-        self.meters.styles.height = self.meters.wanted_height(height)
+        shown = {self.desk.view.shown}
+        if wide or tall:
+            shown = {Shown.RESPONSE, self.desk.view.shown}
+            if len(shown) == 1:
+                shown.add(Shown.CIRCUIT)
+        for name, board in self.views.items():
+            board.display = name in shown
+            board.set_class(len(shown) > 1 and name is not Shown.RESPONSE, "second")
+        screen.set_class(shown == {Shown.CIRCUIT}, "drawing")
+        self.path.styles.height = self.path.wanted_height(height)
+        self.timeline.styles.height = 1 if height < 30 else 2 if height < TALL else 3
         self.foot.stand(1 if height < 30 or width >= 160 else 2)
 
     def on_app_focus(self, _event: AppFocus) -> None:
@@ -171,15 +226,9 @@ class DeskApp(DialogApp):
         """Slower while nobody looks."""
         self._focused = False
 
-    def on_parts_panel_chosen(self, event: PartsPanel.Chosen) -> None:
-        """A click on a part selects it."""
-        self.desk.choose(event.index)
-        self.show()
-
-    def on_timeline_panel_sought(self, event: TimelinePanel.Sought) -> None:
-        """A click on the line seeks."""
-        self.desk.seek(event.frame)
-        self.show()
+    def on_footer_panel_pressed(self, event: FooterPanel.Pressed) -> None:
+        """A click on a hint is its key."""
+        self.action_do(event.name)
 
     # ---- what is shown ----
 
@@ -189,12 +238,19 @@ class DeskApp(DialogApp):
         link = self.desk.link
         if not self.desk.stopped and not link.alive:
             self.desk.stopped = True
-            self.desk.playing = False
+            self._revive()
+            self.desk.listening.playing = False
             self.head.rebuild()
         for notice in link.notices():
             self.foot.say(notice.text, notice.severity)
+        for report in link.reports():
+            if said := self.desk.hear_report(report):
+                self.foot.say(said)
         snapshot = link.latest()
-        self.desk.unanswered = self._watch.late(snapshot is not None)
+        late = self._watch.late(snapshot is not None)
+        if late and not self.desk.unanswered:
+            self._revive()
+        self.desk.unanswered = late
         if snapshot is not None:
             first = self.desk.snapshot is None
             self.desk.take(snapshot)
@@ -204,8 +260,10 @@ class DeskApp(DialogApp):
             if first:
                 self.arrange(self.size.width, self.size.height)
         if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
-            for board in (self.head, self.meters, self.timeline):
-                board.rebuild()
+            slow = self.views.values() if self._polls % _VIEWS_EVERY == 0 else ()
+            for board in (self.head, self.path, self.timeline, *slow):
+                if board.display:
+                    board.rebuild()
             self.foot.tick()
 
     def say(self, text: str, severity: str = "information") -> None:
@@ -213,53 +271,22 @@ class DeskApp(DialogApp):
         self.foot.say(text, severity)
 
     def show(self) -> None:
-        """Paint everything that a key can have changed."""
+        """See :class:`DialogApp`."""
+        self.arrange(self.size.width, self.size.height)
         for board in self.boards:
-            board.rebuild()
+            if board.display:
+                board.rebuild()
         self._keeper.want()
 
-    def _figured(self, now: Figures, before: Figures) -> None:
-        self.desk.figures.now, self.desk.figures.before = now, before
-        self.curve.rebuild()
+    def _sessions(self) -> tuple[Session, Session, Session | None]:
+        return self.desk.session, self.desk.before, self.desk.history.last
+
+    def _figured(self, figures: FigureSet) -> None:
+        self.desk.figures = figures
+        self.response.rebuild()
         self.figures.rebuild()
 
     # ---- actions ----
-
-    def action_do(self, name: str) -> None:
-        """Carry out the action of that name: the desk's own, or one with a dialog."""
-        method: Callable[[], str | None] = getattr(self.desk, f"do_{name}", None) or getattr(
-            self, f"do_{name}"
-        )
-        try:
-            said = method()
-        except PreviewError as error:
-            self.foot.say(str(error), "error")
-        else:
-            if said:
-                self.foot.say(said)
-        self.show()
-
-    def open_stage(self, name_or_path: str) -> None:
-        """See :class:`DialogApp`."""
-        try:
-            self.desk.open_stage(find_stage(name_or_path))
-        except PreviewError as error:
-            self.foot.say(str(error), "error")
-        else:
-            self.foot.say(self.desk.session.stage.about)
-        self.arrange(self.size.width, self.size.height)
-        self.show()
-
-    def do_switch_view(self) -> str | None:
-        """Curve or schematic."""
-        screen = self.screen_stack[0]
-        screen.toggle_class("drawing")
-        both = screen.has_class("wide") or screen.has_class("tall")
-        return "curve and schematic are both shown at this size" if both else None
-
-    def do_phase(self) -> None:
-        """Phase in the curve, or not."""
-        self.desk.phase_shown = not self.desk.phase_shown
 
     def do_colours(self) -> None:
         """The other palette."""
@@ -267,17 +294,31 @@ class DeskApp(DialogApp):
         self.theme = self.look.palette.name
 
     def do_restart(self) -> str | None:
-        """Start another engine when this one has stopped."""
+        """Start a muted circuit from rest, or another engine when this one has stopped."""
+        snapshot = self.desk.snapshot
         if not (self.desk.stopped or self.desk.unanswered):
+            if snapshot is not None and snapshot.fault is not None:
+                self.desk.link.send(Recover())
+                return "the circuit starts from rest"
             return "the engine is running"
         if self._restart is None:
-            return "leave the desk with q and open it again: this engine cannot be restarted from here"
-        if not self._restarting:
-            self._restarting = True
-            self.run_worker(self._start_again(self._restart), group="restart")
+            return "leave the desk and open it again: this engine cannot be restarted from here"
+        self._start(self._restart, play=False)
         return "starting the engine again"
 
-    async def _start_again(self, restart: Restart) -> None:
+    def _revive(self) -> None:
+        """Start another engine by itself, unless this one has been started so just now: then a person decides."""
+        now_s = self.desk.now_s()
+        if self._restart is not None and now_s - self._revived_s > _REVIVE_S:
+            self._revived_s = now_s
+            self._start(self._restart, play=self.desk.listening.playing)
+
+    def _start(self, restart: Restart, *, play: bool) -> None:
+        if not self._restarting:
+            self._restarting = True
+            self.run_worker(self._start_again(restart, play), group="restart")
+
+    async def _start_again(self, restart: Restart, play: bool) -> None:
         await asyncio.to_thread(self.desk.link.close)  # one that hangs is ended by force, which takes seconds
         try:
             # A new process inherits standard error; while the desk runs, sys.stderr is not a real file.
@@ -288,7 +329,9 @@ class DeskApp(DialogApp):
         else:
             self.desk.resume(link)
             self._watch = AnswerWatch()
-            self.foot.say("the engine runs again; space plays")
+            self.desk.listening.play(play)
+            hint = "" if play else f"; {self.desk.keys.shown('play_pause')} plays"
+            self.foot.say(f"the engine had stopped and runs again{hint}")
         finally:
             self._restarting = False
             self.show()
@@ -296,30 +339,3 @@ class DeskApp(DialogApp):
     def do_quit(self) -> None:
         """Leave the desk."""
         self.exit(self.desk.session)
-
-
-def run_desk(
-    session: Session,
-    link: EngineLink,
-    *,
-    restart: Restart | None = None,
-    autoplay: bool = True,
-    config: Path | None = None,
-) -> Session:
-    """Run the desk until the person leaves; the session as it was left.
-
-    The engine behind ``link`` must be running before this is called, and is closed when it returns.
-
-    Raises
-    ------
-    PreviewError
-        The desk stopped on a fault of its own; the terminal is restored and the fault is on standard error.
-    """
-    app = DeskApp(session, link, restart=restart, autoplay=autoplay, config=config)
-    try:
-        left = app.run()
-    finally:
-        app.desk.link.close()
-    if left is None and app.return_code:
-        raise PreviewError("the desk stopped on a fault of its own", "the report stands above")
-    return left or app.desk.session

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import shlex
 from dataclasses import replace
 
@@ -20,14 +21,26 @@ from preview.circuit.parts import (
 )
 from preview.circuit.settings import setting_text
 from preview.engine.messages import Command, SetAtEnd, SetCircuit, SetFullScale, SetPart, SetQuality
+from preview.errors import PartValueError
 from preview.session import Session
+from preview.values.eseries import step
 
-__all__ = ["SERIES_OF_KIND", "commands_between", "render_command", "series_of", "whole_state", "with_value"]
+__all__ = [
+    "SERIES_OF_KIND",
+    "commands_between",
+    "render_command",
+    "series_of",
+    "stepped",
+    "whole_state",
+    "with_setting",
+]
 
 SERIES_OF_KIND = {PartKind.RESISTOR: "E24", PartKind.CAPACITOR: "E12", PartKind.INDUCTOR: "E12"}
 """The series of a part whose stage file states none."""
 _WRITTEN = SettablePart | FixedVoltage
 """The parts that ``--part`` can set."""
+COARSE_SERIES = "E3"
+"""Coarse steps go by this series."""
 
 
 def series_of(part: TwoTerminal) -> str:
@@ -35,25 +48,54 @@ def series_of(part: TwoTerminal) -> str:
     return part.series or SERIES_OF_KIND[part.kind]
 
 
-def with_value(session: Session, designator: str, value: float) -> Session:
-    """The session with one part's value changed."""
+def stepped(part: SettablePart, count: int, *, coarse: bool = False) -> float:
+    """The setting so many steps on: standard values; a hundredth or a tenth of a turn; closed or open.
+
+    Raises
+    ------
+    PreviewError
+        There is no such step: past the range of the series, or a shaft that stands at its end.
+    """
+    if isinstance(part, Potentiometer):
+        turn = 0.1 if coarse else 0.01
+        places = part.position / turn
+        place = math.floor(places + 1e-6) if count > 0 else math.ceil(places - 1e-6)
+        position = min(max((place + count) * turn, 0.0), 1.0)
+        if position == part.position:
+            raise PartValueError(f"{part.designator} stands at its {'end' if count > 0 else 'start'}")
+        return round(position, 4)
+    if isinstance(part, Switch):
+        return 1.0 if count > 0 else 0.0
+    return step(part.value, COARSE_SERIES if coarse else series_of(part), count)
+
+
+def with_setting(session: Session, designator: str, setting: float) -> Session:
+    """The session with one part set to another value, position, or closed (1) or open (0)."""
     part = session.stage.part(designator)
-    assert isinstance(part, TwoTerminal)
-    return replace(session, stage=session.stage.with_part(replace(part, value=value)))
+    assert isinstance(part, SettablePart)
+    return replace(session, stage=session.stage.with_part(part.with_setting(setting)))
+
+
+def _without_setting(part: Part) -> object:
+    """Everything of a part that the engine cannot change by a setting."""
+    if isinstance(part, TwoTerminal):
+        return (part.designator, part.kind, part.nodes, part.half_v)
+    return part.with_setting(0.0) if isinstance(part, SettablePart) else part
 
 
 def _shape(session: Session) -> tuple[object, ...]:
     """Everything of the circuit but the settings of its parts."""
-    stage: Stage = session.stage
-    parts = tuple(_wired(part) for part in stage.parts)
-    return (stage.name, parts, session.supply, session.output, session.source, session.load)
-
-
-def _wired(part: Part) -> object:
-    """What of a part cannot change while it plays."""
-    if isinstance(part, TwoTerminal):
-        return part.designator, part.kind, part.nodes, part.half_v
-    return part.with_setting(0.0) if isinstance(part, SettablePart) else part
+    parts = tuple(_without_setting(part) for part in session.stage.parts)
+    place = (session.stage.name, session.stage.temperature_degc)
+    return (
+        place,
+        parts,
+        session.supply,
+        session.output,
+        session.source,
+        session.load,
+        session.without,
+    )
 
 
 def commands_between(old: Session, new: Session) -> list[Command]:
@@ -87,7 +129,7 @@ def whole_state(session: Session) -> list[Command]:
 
 
 def _exact(part: SettablePart | FixedVoltage) -> str:
-    """The setting in full."""
+    """A setting in text that reads back as the same number."""
     if isinstance(part, Switch):
         return setting_text(part)
     if isinstance(part, Potentiometer | FixedVoltage):

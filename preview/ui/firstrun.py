@@ -6,9 +6,16 @@ from pathlib import Path
 
 import platformdirs
 
-__all__ = ["caution_seen", "config_folder", "remember_caution"]
+__all__ = ["HEARING", "caution_seen", "config_folder", "remember_caution"]
 
 _MARK = "hearing-caution-seen"
+HEARING = (
+    "The listening volume starts at -20 dB. Put headphones on after the sound has started, and raise the "
+    "volume with + in small steps.",
+    "A stage with gain, or a part value that changes, can make the signal ten times larger at once.",
+    "The volume does not touch the volts: meters and clipping stay as in the circuit.",
+)
+"""The hearing caution."""
 
 
 def config_folder() -> Path:

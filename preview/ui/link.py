@@ -5,7 +5,7 @@ from __future__ import annotations
 from collections.abc import Callable
 from typing import Protocol
 
-from preview.engine.messages import Command, Notice, Snapshot
+from preview.engine.messages import Command, Notice, Report, Snapshot
 
 __all__ = ["AnswerWatch", "EngineLink", "Restart", "StillLink"]
 
@@ -28,6 +28,9 @@ class EngineLink(Protocol):
 
     def notices(self) -> list[Notice]:
         """Notices since the last call, oldest first."""
+
+    def reports(self) -> list[Report]:
+        """What was found out since the last call, the newest of each kind."""
 
     def close(self) -> None:
         """End the engine; a second call does nothing."""
@@ -56,10 +59,11 @@ class AnswerWatch:
 
 
 class StillLink:
-    """A link to no engine: one fixed snapshot, again and again, for a picture of the desk."""
+    """A link to no engine: fixed reports, and one fixed snapshot again and again, for a picture of the desk."""
 
-    def __init__(self, snapshot: Snapshot | None = None) -> None:
+    def __init__(self, snapshot: Snapshot | None = None, reports: tuple[Report, ...] = ()) -> None:
         self._snapshot = snapshot
+        self._reports = list(reports)
 
     @property
     def alive(self) -> bool:
@@ -76,6 +80,11 @@ class StillLink:
     def notices(self) -> list[Notice]:
         """None, ever."""
         return []
+
+    def reports(self) -> list[Report]:
+        """Those that were given, once."""
+        reports, self._reports = self._reports, []
+        return reports
 
     def close(self) -> None:
         """Nothing to end."""

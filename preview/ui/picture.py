@@ -10,16 +10,19 @@ from rich.cells import cell_len
 from rich.segment import Segment
 from textual.pilot import Pilot
 
-from preview.engine.messages import Snapshot
+from preview.engine.messages import Report, Snapshot
 from preview.session import Session
 from preview.ui.app import DeskApp
 from preview.ui.figures import MakeFigures, compute_figures
 from preview.ui.link import StillLink
 from preview.ui.theme import Palette
+from preview.ui.view import Shown
 
 __all__ = ["desk_svg"]
 
 _LONGEST_S = 30.0
+_SETTLE_S = 0.3
+"""The figures of the meters change eight times a second [s]."""
 _CELL_WIDTH, _CELL_HEIGHT = 8.4, 17.0
 _MARGIN = 10.0
 
@@ -28,6 +31,8 @@ def desk_svg(
     session: Session,
     *,
     snapshot: Snapshot | None = None,
+    reports: tuple[Report, ...] = (),
+    shown: Shown = Shown.RESPONSE,
     size: tuple[int, int] = (132, 44),
     make_figures: MakeFigures = compute_figures,
 ) -> str:
@@ -39,13 +44,19 @@ def desk_svg(
         What is open.
     snapshot : Snapshot, optional
         What the meters show; None for an engine that has not spoken yet.
+    reports : tuple of Report
+        What the engine has found out: waveform, clips.
+    shown : Shown
+        The view.
     size : tuple of int
         Columns and rows.
     make_figures : callable
         Computes the response.
     """
     pictures: list[str] = []
-    app = DeskApp(session, StillLink(snapshot), autoplay=False, show_caution=False, make_figures=make_figures)
+    app = DeskApp(
+        session, StillLink(snapshot, reports), autoplay=False, show_caution=False, make_figures=make_figures
+    )
 
     async def take(pilot: Pilot[object]) -> None:
         give_up_s = time.monotonic() + _LONGEST_S
@@ -56,7 +67,10 @@ def desk_svg(
                 break
             await asyncio.sleep(0.02)
         if snapshot is not None:
-            app.desk.playing = snapshot.playing
+            app.desk.listening.playing = snapshot.playing
+        app.desk.view.show(shown)
+        app.show()
+        await asyncio.sleep(_SETTLE_S)
         app.show()
         await pilot.pause()
         pictures.append(_svg(app, size))

@@ -1,62 +1,47 @@
-"""What the desk asks for in its dialogs: how an answer is understood, and what it makes of the session.
+"""The actions that ask: how an answer is understood, and what it does. No screen in here.
 
-Each question reads the text, tries the result on the whole circuit, and says what was understood, so that an
-answer that cannot work is refused in the dialog and not afterwards.
+Each answer is tried on the whole circuit while it is typed, so that one that cannot work is refused in place and
+not afterwards.
 """
 
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass, replace
+from dataclasses import replace
+from typing import TYPE_CHECKING
 
 from preview.circuit.drive import NO_LOAD, exact_load, exact_source, parse_load, parse_source, said
-from preview.circuit.library import find_stage, stage_names
-from preview.circuit.limits import QUANTITY, check_value
-from preview.circuit.parts import Supply, TwoTerminal
+from preview.circuit.library import find_stage, open_stages, stage_names
+from preview.circuit.opamp import LIMITS
+from preview.circuit.parts import Supply
+from preview.circuit.settings import read_setting, setting_note, setting_text
 from preview.errors import PreviewError
 from preview.session import Session
-from preview.ui.changes import with_value
+from preview.ui.asking import Choice, Menu, Outcome, Page, Question
+from preview.ui.changes import render_command
+from preview.ui.opamps import (
+    CHOICE_HEADS,
+    LIMIT_WORDS,
+    opamp_choices,
+    toggled,
+    type_in_force,
+    with_opamp_type,
+)
 from preview.ui.words import full_scale, rails
-from preview.ui.words import value as value_text
 from preview.values.levels import FULL_SCALE_PRESETS, parse_full_scale, parse_supply
-from preview.values.notation import parse_value, understood
 
-__all__ = [
-    "FILE_ANSWER",
-    "Question",
-    "ask_full_scale",
-    "ask_load",
-    "ask_part",
-    "ask_source",
-    "ask_stage_file",
-    "ask_supply",
-    "stage_choices",
-]
+if TYPE_CHECKING:
+    from preview.ui.desk import Desk
 
-FILE_ANSWER = "\0file"
-"""Answer of the stage chooser's last row; no name can be this."""
+__all__ = ["Questions", "stage_choices"]
 
+_FILE_ANSWER = "\0file"
+"""Answer of the stage menu's last row; no name can be this."""
+_USUAL_SINGLE_V = (5.0, 9.0, 12.0, 24.0)
+_USUAL_DUAL_V = (5.0, 9.0, 12.0, 15.0, 18.0)
 
-@dataclass(frozen=True, slots=True)
-class Question:
-    """A value to be typed."""
-
-    title: str
-    """What is asked for."""
-    about: str
-    """A line that explains it."""
-    now: str
-    """The value in force."""
-    read: Callable[[str], tuple[Session, str]]
-    """Text -> the session with the answer in it and what was understood; raises PreviewError."""
-
-    def understand(self, text: str) -> str:
-        """What was understood, for the echo; raises PreviewError."""
-        return self.read(text)[1]
-
-    def answer(self, text: str) -> Session:
-        """The session with the answer in it; raises PreviewError."""
-        return self.read(text)[0]
+Reading = Callable[[str], tuple[Session, str]]
+"""Text -> the session with the answer in it, and what was understood; raises PreviewError."""
 
 
 def _tried(session: Session) -> Session:
@@ -65,92 +50,197 @@ def _tried(session: Session) -> Session:
     return session
 
 
-def ask_part(session: Session, part: TwoTerminal) -> Question:
-    """The value of a part."""
-    quantity = QUANTITY[part.kind]
-
-    def read(text: str) -> tuple[Session, str]:
-        value = parse_value(text, quantity)
-        check_value(part.kind, value, part.designator)
-        return _tried(with_value(session, part.designator, value)), understood(text, quantity)
-
-    return Question(f"Value of {part.designator}", part.role, value_text(part), read)
-
-
-def ask_full_scale(session: Session) -> Question:
-    """The volts of full scale."""
-
-    def read(text: str) -> tuple[Session, str]:
-        scale = parse_full_scale(text)
-        return replace(session, full_scale=scale), full_scale(scale)
-
-    presets = ", ".join(preset.text for preset in FULL_SCALE_PRESETS[:6])
-    return Question(
-        "Full scale",
-        f"The level of a sine at the file's full scale, such as {presets}; a plain voltage is its peak.",
-        session.full_scale.text,
-        read,
-    )
-
-
-def ask_supply(session: Session) -> Question:
-    """The rails."""
-
-    def read(text: str) -> tuple[Session, str]:
-        supply = Supply(*parse_supply(text))
-        return _tried(replace(session, supply=supply)), f"supply {rails(supply)}"
-
-    return Question("Supply", "±15, +12 -5, or 9 for a single supply", rails(session.supply), read)
-
-
-def ask_source(session: Session) -> Question:
-    """What drives the stage."""
-
-    def read(text: str) -> tuple[Session, str]:
-        source = parse_source(text)
-        return _tried(replace(session, source=source)), said(source)
-
-    return Question(
-        "Source",
-        "What drives the input: 0 for ideal, 600, 7k5 + 2.5 H, 20 nF; piezo disc, cable 500p ...",
-        exact_source(session.source),
-        read,
-    )
-
-
-def ask_load(session: Session) -> Question:
-    """What follows the stage."""
-
-    def read(text: str) -> tuple[Session, str]:
-        load = parse_load(text)
-        return _tried(replace(session, load=load)), "no load" if load == NO_LOAD else said(load)
-
-    return Question(
-        "Load",
-        "From out to gnd: none, 600, 10k || 220p; headphones 32 ohm, line input, cable 1n ...",
-        exact_load(session.load),
-        read,
-    )
-
-
-def ask_stage_file(session: Session) -> Question:
-    """A stage file by its path, or a stage by its name."""
-
-    def read(text: str) -> tuple[Session, str]:
-        stage = find_stage(text.strip())
-        tried = _tried(session.with_stage(stage))
-        return tried, f"{stage.title}: {len(stage.parts)} parts, supply {rails(stage.supply)}"
-
-    return Question("Stage file", "The path of a .toml file, or a name", session.stage.name, read)
-
-
-def stage_choices() -> list[tuple[str, str, str]]:
-    """The rows of the stage chooser: every stage by name, and a file of one's own."""
+def stage_choices() -> list[Choice]:
+    """Every stage by name, and a file of one's own."""
     rows = []
     for name in stage_names():
         try:
             about = find_stage(name).title
         except PreviewError as error:
             about = f"cannot be used: {error}"
-        rows.append((name, name, about))
-    return [*rows, (FILE_ANSWER, "a file ...", "type the path of a stage file")]
+        rows.append(Choice(name, name, about))
+    return [*rows, Choice(_FILE_ANSWER, "a file ...", "type the path of a stage file")]
+
+
+class Questions:
+    """What the desk asks for."""
+
+    def __init__(self, desk: Desk) -> None:
+        self._desk = desk
+
+    def _value(self, title: str, about: str, now: str, read: Reading) -> Question:
+        """A question whose answer becomes the session."""
+
+        def take(text: str) -> None:
+            self._desk.change(read(text)[0])
+
+        return Question(title, about, now, lambda text: read(text)[1], take)
+
+    # ---- parts ----
+
+    def do_type_value(self) -> Outcome:
+        """Type the selected part's value, position, or open or closed."""
+        desk, part = self._desk, self._desk.parts.part
+        if part is None:
+            return "this stage has no part to set"
+
+        def read(text: str) -> tuple[Session, str]:
+            setting = read_setting(part, text, f"{part.designator} = ")
+            changed = _tried(desk.parts.with_tied(part.designator, setting))
+            return changed, setting_note(part.with_setting(setting), text)
+
+        return self._value(f"Value of {part.designator}", part.role, setting_text(part), read)
+
+    def do_tie(self) -> Outcome:
+        """Tie the selected part to another one."""
+        parts = self._desk.parts
+        part = parts.part
+        if part is None:
+            return "this stage has no part to set"
+        choices = parts.tie_choices()
+        if not choices:
+            return f"there is no other {part.kind} that {part.designator} could be tied to"
+        return Menu(f"Tie {part.designator}: when one moves, the others move with it", choices, parts.tie)
+
+    # ---- supply and levels ----
+
+    def do_full_scale(self) -> Question:
+        """Type full scale."""
+        session = self._desk.session
+
+        def read(text: str) -> tuple[Session, str]:
+            scale = parse_full_scale(text)
+            return replace(self._desk.session, full_scale=scale), full_scale(scale)
+
+        presets = ", ".join(preset.text for preset in FULL_SCALE_PRESETS[:6])
+        about = (
+            f"The level of a sine at the file's full scale, such as {presets}; a plain voltage is its peak."
+        )
+        return self._value("Full scale", about, session.full_scale.text, read)
+
+    def do_supply(self) -> Question:
+        """Type the rails."""
+
+        def read(text: str) -> tuple[Session, str]:
+            supply = Supply(*parse_supply(text))
+            return _tried(replace(self._desk.session, supply=supply)), f"supply {rails(supply)}"
+
+        now = rails(self._desk.session.supply)
+        return self._value("Supply", "±15, +12 -5, or 9 for a single supply", now, read)
+
+    def do_next_supply(self) -> str:
+        """The next usual supply that the op-amps take."""
+        session = self._desk.session
+        now = session.supply
+        dual = now.negative_v < 0.0
+        usual_v = _USUAL_DUAL_V if dual else _USUAL_SINGLE_V
+        above_v = [v for v in usual_v if (2.0 * v if dual else v) > now.positive_v - now.negative_v + 1e-9]
+        for rail_v in (*above_v, *(v for v in usual_v if v not in above_v)):
+            try:
+                changed = _tried(replace(session, supply=Supply(rail_v, -rail_v if dual else 0.0)))
+            except PreviewError:
+                continue  # outside the range of a type
+            self._desk.change(changed)
+            return f"supply {rails(changed.supply)}"
+        return f"no other usual supply suits these op-amps; the supply stays {rails(session.supply)}"
+
+    def do_source(self) -> Question:
+        """Type what drives the stage."""
+
+        def read(text: str) -> tuple[Session, str]:
+            source = parse_source(text)
+            return _tried(replace(self._desk.session, source=source)), said(source)
+
+        about = "What drives the input: 0 for ideal, 600, 7k5 + 2.5 H, 20 nF; piezo disc, cable 500p ..."
+        return self._value("Source", about, exact_source(self._desk.session.source), read)
+
+    def do_load(self) -> Question:
+        """Type what follows the stage."""
+
+        def read(text: str) -> tuple[Session, str]:
+            load = parse_load(text)
+            return _tried(replace(self._desk.session, load=load)), "no load" if load == NO_LOAD else said(load)
+
+        about = "From out to gnd: none, 600, 10k || 220p; headphones 32 ohm, line input, cable 1n ..."
+        return self._value("Load", about, exact_load(self._desk.session.load), read)
+
+    # ---- stage and op-amps ----
+
+    def do_choose_stage(self) -> Menu:
+        """Choose a stage from the list, or a file."""
+
+        def chosen(name: str) -> Outcome:
+            if name == _FILE_ANSWER:
+                return self._ask_stage_file()
+            return self._desk.open_stage(find_stage(name)) if name != self._desk.session.stage.name else None
+
+        return Menu("Stage", stage_choices(), chosen, now=self._desk.session.stage.name)
+
+    def _ask_stage_file(self) -> Question:
+        def understand(text: str) -> str:
+            stage = find_stage(text.strip())
+            _tried(self._desk.session.with_stage(stage))
+            return f"{stage.title}: {len(stage.parts)} parts, supply {rails(stage.supply)}"
+
+        return Question(
+            "Stage file",
+            "The path of a .toml file, or a name",
+            self._desk.session.stage.name,
+            understand,
+            lambda text: self._desk.open_stage(find_stage(text.strip())),
+        )
+
+    def do_opamp_type(self) -> Outcome:
+        """Choose the type of the stage's op-amps from the list."""
+        opamps = self._desk.session.stage.opamps
+        if not opamps:
+            return "this stage has no op-amp"
+        chosen_one = self._desk.view.opamp
+        named = [opamp.designator for opamp in opamps if chosen_one in (None, opamp.designator)]
+        now = type_in_force(self._desk.session.stage, named)
+
+        def chosen(kind: str) -> Outcome:
+            session, told = with_opamp_type(self._desk.session, kind, named)
+            if session.stage == self._desk.session.stage:
+                return None
+            self._desk.change(session)
+            return f"{told}; {self._desk.keys.shown('undo')} takes this back"
+
+        return Menu(
+            f"Op-amp type of {', '.join(named)}", opamp_choices(now), chosen, now=now, heads=CHOICE_HEADS
+        )
+
+    def do_opamp_limits(self) -> Outcome:
+        """Take a limit away from the op-amps, to hear what it does, or give it back."""
+        if not self._desk.session.stage.opamps:
+            return "this stage has no op-amp"
+        return self._limits_menu(LIMITS[0])
+
+    def _limits_menu(self, at: str) -> Menu:
+        without = self._desk.session.without
+        rows = [Choice("all", "all of them", "every limit and fault as the type has it")]
+        for limit in LIMITS:
+            state = "taken away" if limit in without else "in force"
+            rows.append(Choice(limit, limit, f"{state:<11} {LIMIT_WORDS[limit]}"))
+
+        def chosen(answer: str) -> Menu:
+            self._desk.change(
+                replace(self._desk.session, without=toggled(self._desk.session.without, answer))
+            )
+            return self._limits_menu(answer)
+
+        return Menu("Limits of the op-amps: Enter takes one away or gives it back", rows, chosen, now=at)
+
+    # ---- what is set ----
+
+    def do_write_out(self) -> Page:
+        """The command that renders what is set."""
+        session = self._desk.session
+        opened = open_stages(session.stage.opened_as)
+        return Page(
+            "The command that renders this",
+            (
+                render_command(session, opened),
+                "OUT.wav stands for the file to write; what is rendered is what is heard here.",
+            ),
+        )

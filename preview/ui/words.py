@@ -25,6 +25,7 @@ __all__ = [
     "kilohertz",
     "limits",
     "milliamperes",
+    "percent",
     "rails",
     "scale_volts",
     "slew_of",
@@ -78,6 +79,11 @@ def db(level_db: float) -> str:
 def dbu(level_vrms: float) -> str:
     """A level in dBu with sign and one decimal; ``-`` for silence."""
     return f"{dbu_from_vrms(level_vrms):+.1f}" if level_vrms >= _SMALLEST_V else "-"
+
+
+def percent(ratio: float) -> str:
+    """A share of a limit: ``15 %``, ``<1 %``."""
+    return "<1 %" if 0.0 < ratio < 0.005 else f"{100.0 * ratio:.0f} %"
 
 
 def clock(seconds: float) -> str:

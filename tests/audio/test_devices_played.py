@@ -13,7 +13,7 @@ pytestmark = pytest.mark.sound
 PLAY = """
 import gc, json, sys, time
 import numpy as np
-from preview.audio.devices import open_output
+from preview.audio.stream import open_output
 block, frames = int(sys.argv[1]), int(sys.argv[2])
 samples = np.random.default_rng(7).uniform(-0.9, 0.9, (frames, 2)).astype(np.float32)
 at = 0
@@ -54,7 +54,7 @@ def test_trouble_in_the_callback_is_silence_and_counted(sound_server: Any) -> No
     script = """
 import json, time
 import numpy as np
-from preview.audio.devices import open_output
+from preview.audio.stream import open_output
 calls = 0
 def fill(out):
     global calls
@@ -86,7 +86,8 @@ print(json.dumps([calls, stream.guard.failed_blocks, stream.guard.limited_blocks
 def test_a_device_that_is_taken_away_is_told_once_and_can_come_back(sound_server: Any) -> None:
     script = """
 import sys, time
-from preview.audio.devices import open_output, refresh
+from preview.audio.devices import refresh
+from preview.audio.stream import open_output
 calls = ended = 0
 def fill(out):
     global calls
@@ -135,7 +136,7 @@ def test_a_frozen_device_is_seen_by_the_age_of_its_last_block_and_closing_does_n
 ) -> None:
     script = """
 import os, signal, sys, time
-from preview.audio.devices import open_output
+from preview.audio.stream import open_output
 stream = open_output("ears", sample_rate_hz=48000, channels=2, block_frames=512, fill=lambda out: out.fill(0))
 stream.start()
 os.kill(int(sys.argv[1]), signal.SIGSTOP)
@@ -158,7 +159,8 @@ os._exit(0)
 def test_devices_are_listed_and_found_by_name(sound_server: Any) -> None:
     script = """
 import json
-from preview.audio.devices import find_output, output_devices, open_output
+from preview.audio.devices import find_output, output_devices
+from preview.audio.stream import open_output
 from preview.errors import DeviceError
 rows = output_devices()
 words = []
@@ -187,8 +189,8 @@ print(json.dumps([[d.name for d in rows], [d.name for d in rows if d.is_default]
 def test_a_dead_default_device_gives_way_to_the_next(sound_server: Any) -> None:
     script = """
 import time
-import preview.audio.devices as devices
-rows = {device.name: (number, device) for number, device in devices._table()}
+import preview.audio.stream as devices
+rows = {device.name: (number, device) for number, device in devices.table()}
 devices._candidates = lambda wanted: (rows["default"], rows["ears"])
 calls = 0
 def fill(out):
@@ -214,7 +216,8 @@ print("well")
 
 def test_no_server_at_all_is_one_plain_line(sound_server: Any) -> None:
     script = """
-from preview.audio.devices import open_output, output_devices
+from preview.audio.devices import output_devices
+from preview.audio.stream import open_output
 from preview.errors import DeviceError
 assert output_devices() == ()
 try:

@@ -142,10 +142,11 @@ WITHOUT = """
 import ctypes.util, sys
 real = ctypes.util.find_library
 ctypes.util.find_library = lambda name: None if "portaudio" in name else real(name)
-import preview.audio.devices as devices, preview.audio.clock, preview.audio.source, preview.audio.sink
+import preview.audio.devices as devices, preview.audio.stream as stream
+import preview.audio.clock, preview.audio.source, preview.audio.sink
 assert "sounddevice" not in sys.modules
 from preview.errors import DeviceError
-for action in (devices.output_devices, devices.refresh, lambda: devices.open_output(
+for action in (devices.output_devices, devices.refresh, lambda: stream.open_output(
         None, sample_rate_hz=48000, channels=2, block_frames=512, fill=lambda out: None)):
     try:
         action()
@@ -166,8 +167,9 @@ def test_without_portaudio_the_message_names_the_package() -> None:
 
 def test_the_audio_room_loads_no_slow_library() -> None:
     script = (
-        "import sys, preview.audio.devices, preview.audio.clock, preview.audio.source, preview.audio.sink\n"
-        "import preview.audio.prefetch, preview.meters.level\n"
+        "import sys, preview.audio.stream, preview.audio.live, preview.audio.clock\n"
+        "import preview.audio.source, preview.audio.sink\n"
+        "import preview.audio.prefetch, preview.audio.signals, preview.meters.level\n"
         "print([m for m in ('sounddevice', 'numba', 'scipy', 'soxr', 'textual') if m in sys.modules])"
     )
     done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, timeout=60)

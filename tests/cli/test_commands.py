@@ -114,7 +114,10 @@ def test_the_table_has_units(capsys):
         (["stages", "nope"], 5),
         (["nope"], 2),
         (["--nope"], 2),
-        (["listen", "--live"], 2),
+        (["listen", "--live", "--signal", "sine 1k 1V"], 2),
+        (["listen", "in.wav", "--signal", "sine 1k 1V"], 2),
+        (["listen", "--signal", "sine 1k"], 2),
+        (["listen", "--input", "feed"], 2),
         (["listen", "--end", "never"], 2),
         (["listen", "-"], 2),
         (["listen", "nowhere.wav"], 3),
@@ -161,7 +164,7 @@ def test_version_and_help_are_exit_0(capsys):
     code, out, _ = run(capsys, "listen", "--help")
     assert code == 0
     assert "--silent" in out
-    assert "--live" not in out
+    assert "--live" in out
 
 
 def test_an_error_inside_the_program_is_a_line_and_its_trace_is_there_on_request(capsys, monkeypatch):
@@ -194,6 +197,20 @@ def test_the_desk_needs_a_terminal_and_says_how_it_understood_the_options(tmp_pa
     assert done.returncode == 2
     assert "4.7 kΩ" in done.stderr
     assert "needs a terminal" in done.stderr
+
+
+@pytest.mark.parametrize(
+    ("words", "said"),
+    [
+        (["--signal", "sine 1k +4 dBu"], "test signal sine 1 kHz 1.73616351 V"),
+        (["--live"], "live input begins muted"),
+    ],
+)
+def test_a_test_signal_or_live_input_takes_the_place_of_a_recording(capsys, words, said):
+    code, _, err = run(capsys, "listen", *words)
+    assert code == 2
+    assert said in err
+    assert "needs a terminal" in err
 
 
 def test_the_demo_is_the_announcement_at_its_own_full_scale():

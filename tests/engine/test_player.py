@@ -7,6 +7,7 @@ import math
 import numpy as np
 import pytest
 
+from preview.engine.readings import FaultReading
 from preview.session import AtEnd
 from preview.values.quality import Quality
 
@@ -41,7 +42,7 @@ def test_play_before_the_circuit_is_there_waits_and_starts_with_the_first_frame_
     first = start_of_sound(heard)
     assert first % 64 == 0
     assert heard[first + RAMP_FRAMES, 0] == np.float32(0.5)
-    assert rig.player._report().position_frame == 1024 - first
+    assert rig.player.report().position_frame == 1024 - first
 
 
 def test_the_start_ramp_is_a_raised_cosine_of_10_ms(make_rig):
@@ -98,7 +99,7 @@ def test_a_seek_fades_out_and_goes_on_at_the_wanted_frame_without_a_jump(make_ri
     assert np.array_equal(tail, wanted[RAMP_FRAMES + 64 :][: len(tail)])
 
 
-@pytest.mark.parametrize("region", [(1000, 1500), (200, 203), (0, 4000)])
+@pytest.mark.parametrize("region", [(1000, 1500), (200, 280), (0, 4000)])
 def test_a_region_loops_without_a_missing_or_doubled_frame(make_rig, region):
     rig = make_rig(loop=True)
     rig.player.set_region(*region)
@@ -165,7 +166,7 @@ def test_bypass_passes_the_input_on(make_rig):
 
 
 def test_volume_starts_20_db_down_and_glides(make_rig):
-    from preview.engine.player import START_VOLUME_DB
+    from preview.engine.monitor import START_VOLUME_DB
 
     assert START_VOLUME_DB == -20.0
     rig = make_rig(np.full((40000, 1), 0.25), loop=True, volume_db=START_VOLUME_DB)
@@ -192,13 +193,13 @@ def test_samples_above_full_scale_are_limited_and_counted(make_rig):
     rig.player.play()
     heard = rig.hear(1024)
     assert heard.max() == 1.0
-    assert rig.player._report().limited_blocks > 0
+    assert rig.player.report().limited_blocks > 0
     rig.player.clear_holds()
     rig.player.pause()
     rig.hear(256)
     rig.player.clear_holds()
     rig.hear(64)
-    assert rig.player._report().limited_blocks == 0
+    assert rig.player.report().limited_blocks == 0
 
 
 @pytest.mark.parametrize("value", [math.nan, math.inf, -math.inf])
@@ -236,8 +237,8 @@ def test_full_scale_changes_in_a_short_silence(make_rig):
     heard = rig.hear(1024)
     assert heard.min() == 0.0
     assert heard[-1, 0] == np.float32(0.5)
-    assert rig.player.full_scale_v == 8.0
-    assert rig.player._report().output.peak_v[0] == pytest.approx(4.0)
+    assert rig.player.deck.full_scale_v == 8.0
+    assert rig.player.report().output.peak_v[0] == pytest.approx(4.0)
 
 
 def test_another_full_scale_begins_new_holds(make_rig):
@@ -246,7 +247,7 @@ def test_another_full_scale_begins_new_holds(make_rig):
     rig.hear(1024)
     rig.player.set_full_scale(0.4)
     rig.hear(1024)
-    report = rig.player._report()
+    report = rig.player.report()
     assert report.input.hold_v == (pytest.approx(0.1),)
     assert report.output.hold_v == (pytest.approx(0.2),)
 
@@ -255,18 +256,18 @@ def test_bypass_and_another_circuit_begin_a_new_hold_at_the_output(make_rig):
     rig = make_rig(np.full((40000, 1), 0.25), loop=True)
     rig.player.play()
     rig.hear(1024)
-    assert rig.player._report().output.hold_v == (pytest.approx(2.0),)
+    assert rig.player.report().output.hold_v == (pytest.approx(2.0),)
     rig.player.set_bypass(True)
     rig.hear(1024)
-    assert rig.player._report().output.hold_v == (pytest.approx(1.0),), "the input, nothing of the stage"
+    assert rig.player.report().output.hold_v == (pytest.approx(1.0),), "the input, nothing of the stage"
     rig.player.set_bypass(False)
     rig.hear(1024)
     rig.circuit.swapping = True
-    rig.player.circuit_changed(Quality.STANDARD)
+    rig.player.deck.circuit_changed(Quality.STANDARD)
     rig.hear(1024)
     rig.circuit.gain, rig.circuit.swapping = 0.5, False
     rig.hear(1024)
-    report = rig.player._report()
+    report = rig.player.report()
     assert report.output.hold_v == (pytest.approx(0.5),), "nothing of the circuit before"
     assert report.input.hold_v == (pytest.approx(1.0),), "the input is the same signal"
 
@@ -279,14 +280,14 @@ def test_a_hold_begun_while_paused_has_the_first_peak_after_play(make_rig):
     rig.hear(1024)
     rig.player.play()
     rig.hear(1024)
-    assert rig.player._report().output.hold_v == (pytest.approx(1.0),)
+    assert rig.player.report().output.hold_v == (pytest.approx(1.0),)
 
 
 def test_meters_read_volts_and_the_position_is_the_one_heard(make_rig):
     rig = make_rig(np.full((40000, 1), 0.25), loop=True)
     rig.player.play()
     heard = rig.hear(2048)
-    report = rig.player._report()
+    report = rig.player.report()
     assert report.input.peak_v == (pytest.approx(1.0),)
     assert report.output.peak_v == (pytest.approx(2.0),)
     assert report.position_frame == 2048 - start_of_sound(heard)
@@ -297,12 +298,33 @@ def test_clip_counts_survive_pause_and_play(make_rig):
     rig = make_rig()
     rig.player.play()
     rig.hear(512)
+    before = rig.player.report().opamps[0].clip_events
+    assert before > 0, "the rig's circuit claims one event a block"
     rig.player.pause()
     rig.hear(512)
     rig.player.play()
     rig.hear(512)
-    # the rig's circuit claims one event whenever it is asked: one for each of the two starts, one now
-    assert rig.player._report().opamps[0].clip_events == 3
+    after = rig.player.report().opamps[0].clip_events
+    assert after > before
+    rig.player.clear_holds()
+    rig.hear(64)
+    assert rig.player.report().opamps[0].clip_events < before
+
+
+def test_the_level_of_an_op_amp_is_held_and_also_told_as_it_is(make_rig):
+    samples = np.full((40000, 1), 0.25)
+    samples[2000:] = 0.05
+    rig = make_rig(samples)
+    rig.player.play()
+    rig.hear(1024)
+    first = rig.player.report()
+    assert first.opamp_peaks_v == (pytest.approx(2.0),), "4 V of full scale, a gain of 2"
+    rig.hear(4096)
+    rig.player.report()
+    rig.hear(1024)
+    later = rig.player.report()
+    assert later.opamp_peaks_v == (pytest.approx(0.4),)
+    assert later.opamps[0].peak_v == pytest.approx(2.0)
 
 
 def test_a_mono_recording_is_heard_on_both_channels_and_stereo_on_one_as_the_mean(make_rig):
@@ -324,3 +346,138 @@ def test_blocks_longer_than_the_player_computes_at_once_are_filled_whole(make_ri
     first, second = start_of_sound(one), start_of_sound(other)
     count = 2048 - max(first, second)
     assert np.array_equal(one[first : first + count], other[second : second + count])
+
+
+def test_a_mute_fades_out_while_everything_goes_on_and_is_metered(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.mute(True)
+    faded = rig.hear(512)[:, 0]
+    assert np.abs(np.diff(faded)).max() <= 0.5 * np.pi / 2 / RAMP_FRAMES + 1e-6
+    assert not faded[RAMP_FRAMES:].any()
+    report = rig.player.report()
+    assert (report.muted, report.playing, report.mute_reason) == (True, True, "")
+    assert report.output.peak_v == (pytest.approx(2.0),)
+    rig.player.mute(False)
+    assert rig.hear(512)[-1, 0] == np.float32(0.5)
+
+
+def test_a_stage_that_gives_up_fades_is_told_once_and_recovers_from_rest(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.player.play()
+    rig.hear(1024)
+    rig.circuit.fault = FaultReading("U1", 0.125, "its output grows without end")
+    faded = rig.hear(1024)[:, 0]
+    assert np.abs(np.diff(faded)).max() <= 0.5 * np.pi / 2 / RAMP_FRAMES + 1e-6
+    assert not faded[RAMP_FRAMES:].any()
+    report = rig.player.report()
+    assert report.muted
+    assert report.fault == FaultReading("U1", 0.125, "its output grows without end")
+    assert list(rig.player.faults) == ["U1 at 0.125 s: its output grows without end; muted"]
+    resets = rig.circuit.resets
+    rig.player.recover()
+    heard = rig.hear(1024)
+    assert rig.circuit.resets > resets
+    assert heard[-1, 0] == np.float32(0.5)
+    report = rig.player.report()
+    assert (report.muted, report.fault) == (False, None)
+    assert len(rig.player.faults) == 1
+
+
+def test_a_mute_that_was_asked_for_survives_a_recovery(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.player.play()
+    rig.player.mute(True, "live input begins muted")
+    rig.circuit.fail_with = math.nan
+    rig.hear(1024)
+    rig.circuit.fail_with = None
+    rig.player.recover()
+    assert not rig.hear(1024).any()
+    report = rig.player.report()
+    assert (report.muted, report.fault, report.playing) == (True, None, True)
+
+
+def test_nobody_there_to_hear_keeps_the_place_until_released(make_rig):
+    rig = make_rig(np.linspace(0.1, 0.4, 4000)[:, np.newaxis])
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.hold()
+    rig.hear(512)
+    held = rig.player.report()
+    assert not held.playing
+    rig.hear(2048)
+    assert rig.player.report().position_frame == held.position_frame
+    rig.player.release()
+    heard = rig.hear(1024)
+    after = start_of_sound(heard) + RAMP_FRAMES
+    assert heard[after, 0] == np.float32(rig.samples[held.position_frame + RAMP_FRAMES, 0] * GAIN)
+
+
+def test_what_was_paused_stays_paused_after_a_hold(make_rig):
+    rig = make_rig()
+    rig.player.play()
+    rig.hear(1024)
+    rig.player.hold()
+    rig.player.pause()
+    rig.hear(512)
+    rig.player.release()
+    assert not rig.hear(1024).any()
+
+
+def test_play_ends_a_hold(make_rig):
+    rig = make_rig()
+    rig.player.hold()
+    rig.player.play()
+    assert rig.hear(1024).any()
+
+
+@pytest.mark.parametrize("region", [(200, 201), (3999, 4000), (3990, None), (50, 50)])
+def test_a_region_shorter_than_10_ms_is_made_that_long(make_rig, region):
+    rig = make_rig(loop=True)
+    rig.player.set_region(*region)
+    rig.hear(64)
+    start, end = rig.player.report().region
+    assert end - start == RAMP_FRAMES
+    assert start <= region[0] <= end <= 4000
+
+
+def test_a_recording_of_a_few_frames_is_not_looped_into_a_direct_voltage(make_rig):
+    rig = make_rig(np.full((3, 1), 0.25))
+    rig.player.set_at_end(AtEnd.LOOP)
+    rig.player.play()
+    heard = rig.hear(4096)
+    assert np.count_nonzero(heard) == 3
+    assert rig.player.report().at_end is AtEnd.STOP
+
+
+def test_of_more_channels_than_the_device_has_the_chosen_ones_are_heard_and_it_is_said(make_rig):
+    rig = make_rig(np.tile([0.1, 0.2, 0.3, 0.4], (40000, 1)), loop=True)
+    rig.player.play()
+    assert rig.hear(1024, channels=2)[-1] == pytest.approx([0.2, 0.4])
+    assert rig.player.report().heard_channels == (0, 1)
+    rig.player.choose_channels((3, 2, 9))
+    assert rig.hear(1024, channels=2)[-1] == pytest.approx([0.8, 0.6])
+    assert rig.player.report().heard_channels == (3, 2)
+    assert rig.hear(1024, channels=1)[-1] == pytest.approx([0.8])
+    assert rig.hear(1024, channels=4)[-1] == pytest.approx([0.2, 0.4, 0.6, 0.8])
+    assert rig.player.report().heard_channels == ()
+
+
+def test_the_match_gain_is_heard_but_not_metered(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True)
+    rig.circuit.match_gain = 0.5
+    rig.player.play()
+    assert rig.hear(1024)[-1, 0] == np.float32(0.25)
+    report = rig.player.report()
+    assert report.output.peak_v == (pytest.approx(2.0),)
+    assert report.match_db == pytest.approx(-6.0206, abs=1e-4)
+
+
+def test_a_source_in_volts_does_not_depend_on_the_full_scale(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.25), loop=True, in_volts=True)
+    rig.player.play()
+    assert rig.hear(1024)[-1, 0] == np.float32(0.125)
+    rig.player.set_full_scale(8.0)
+    assert rig.hear(1024)[-1, 0] == np.float32(0.0625)
+    assert rig.player.report().output.peak_v == (pytest.approx(0.5),)

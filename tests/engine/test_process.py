@@ -7,7 +7,6 @@ import signal
 import subprocess
 import sys
 import time
-from collections.abc import Callable, Iterator
 from pathlib import Path
 
 import numpy as np
@@ -17,65 +16,10 @@ from preview.audio.sink import FileSink
 from preview.circuit.library import find_stage
 from preview.dsp.oversample import design
 from preview.engine import messages
-from preview.engine.host import _Bench
-from preview.engine.messages import Snapshot
-from preview.engine.process import EngineConfig, EngineProcess
-from preview.session import AtEnd, Session
-from preview.values.levels import parse_full_scale
+from preview.engine.bench import Bench
+from preview.session import AtEnd
 from preview.values.quality import Quality
-
-RATE_HZ = 48000
-DEADLINE_S = 120.0  # the first engine on a machine compiles its kernels
-
-
-@pytest.fixture
-def tone(tmp_path: Path) -> Path:
-    """Two seconds of a 200 Hz sine, 0.1 of full scale, mono."""
-    path = tmp_path / "tone.wav"
-    with FileSink(path, sample_rate_hz=RATE_HZ, channels=1) as sink:
-        sink.write(0.1 * np.sin(2 * np.pi * 200 * np.arange(2 * RATE_HZ) / RATE_HZ)[:, np.newaxis])
-    return path
-
-
-def session_of(audio: Path, **changes: object) -> Session:
-    stage = find_stage("inverting-low-pass")
-    values: dict[str, object] = {
-        "audio": audio,
-        "stage": stage,
-        "supply": stage.supply,
-        "full_scale": parse_full_scale("10 V"),
-    } | changes
-    return Session(**values)  # type: ignore[arg-type]  # a test's shorthand
-
-
-@pytest.fixture
-def start(tmp_path: Path) -> Iterator[Callable[..., EngineProcess]]:
-    """Starts engines on the silent clock and ends them."""
-    engines: list[EngineProcess] = []
-
-    def make(session: Session, **changes: object) -> EngineProcess:
-        config = EngineConfig(session=session, silent=True, log=tmp_path / "engine.log", **changes)  # type: ignore[arg-type]
-        engines.append(EngineProcess.start(config))
-        return engines[-1]
-
-    yield make
-    for engine in engines:
-        engine.close()
-
-
-def wait_for(engine: EngineProcess, wanted: Callable[[Snapshot], bool], what: str) -> Snapshot:
-    """Poll until a snapshot is as wanted."""
-    deadline = time.monotonic() + DEADLINE_S
-    last = None
-    while time.monotonic() < deadline:
-        snapshot = engine.latest()
-        if snapshot is not None:
-            last = snapshot
-            if wanted(snapshot):
-                return snapshot
-        assert engine.alive, "the engine has ended"
-        time.sleep(0.005)  # polling a process, with a deadline
-    raise AssertionError(f"never {what}; last {last}; notices {engine.notices()}")
+from tests.engine.running import DEADLINE_S, session_of, wait_for
 
 
 def test_it_plays_reads_volts_and_takes_every_command(start, tone):
@@ -154,11 +98,11 @@ def test_a_change_of_quality_finds_its_filters_designed(make_rig):
     # designing them takes 0.15 s of both cores, which a device does not wait for while it plays
     netlist = session_of(Path("none")).netlist()
     design.cache_clear()
-    bench = _Bench(make_rig().player, lambda: None)
-    bench.build(netlist, Quality.STANDARD)
+    bench = Bench(make_rig().player, lambda: None)
+    bench.build("A", netlist, Quality.STANDARD)
     missed = design.cache_info().misses
     for quality in (Quality.DRAFT, Quality.FINE):
-        bench.build(netlist, quality)
+        bench.build("A", netlist, quality)
     assert design.cache_info().misses == missed
 
 
@@ -220,14 +164,14 @@ if __name__ == "__main__":
 """
 
 
-def test_the_engine_ends_when_its_desk_is_killed(tone, tmp_path):
+def test_the_engine_and_its_worker_end_within_a_second_when_the_desk_is_killed(tone, tmp_path):
     (tmp_path / "tests_session.py").write_text(
         "from pathlib import Path\n"
         "from preview.circuit.library import find_stage\n"
         "from preview.session import Session\n"
         "from preview.values.levels import parse_full_scale\n"
         "stage = find_stage('inverting-low-pass')\n"
-        f"session = Session(Path({str(tone)!r}), stage, stage.supply, parse_full_scale('10 V'))\n"
+        f"session = Session(Path({str(tone)!r}), stage, stage.supply, 0.0, None, parse_full_scale('10 V'))\n"
     )
     script = tmp_path / "desk.py"
     script.write_text(PARENT)
@@ -237,12 +181,20 @@ def test_the_engine_ends_when_its_desk_is_killed(tone, tmp_path):
     assert desk.stdout is not None
     pid = int(desk.stdout.readline())
     assert desk.stdout.readline() == "up\n"
+    deadline = time.monotonic() + DEADLINE_S
+    while not (children := _children(pid)) and time.monotonic() < deadline:
+        time.sleep(0.005)  # polling a process, with a deadline
+    assert len(children) == 1, "its worker"
+    began = time.monotonic()
     desk.kill()
     desk.wait()
-    deadline = time.monotonic() + DEADLINE_S
-    while _runs(pid) and time.monotonic() < deadline:
+    while (_runs(pid) or _runs(children[0])) and time.monotonic() < began + DEADLINE_S:
         time.sleep(0.005)  # polling a process, with a deadline
-    assert not _runs(pid)
+    assert time.monotonic() - began < 1.0
+
+
+def _children(pid: int) -> list[int]:
+    return [int(one) for one in Path(f"/proc/{pid}/task/{pid}/children").read_text().split()]
 
 
 def _runs(pid: int) -> bool:
@@ -252,3 +204,54 @@ def _runs(pid: int) -> bool:
     except OSError:
         return False
     return state != "Z"
+
+
+def test_the_terminals_signals_do_not_reach_the_engine(start, tone):
+    engine = start(session_of(tone), play=True)
+    for number in (signal.SIGINT, signal.SIGHUP):
+        os.kill(engine.pid, number)  # also while it still starts
+    wait_for(engine, lambda s: s.position_frame > 0, "sound")
+    for number in (signal.SIGINT, signal.SIGHUP):
+        os.kill(engine.pid, number)
+    frame = wait_for(engine, lambda s: True, "a snapshot").position_frame
+    wait_for(engine, lambda s: s.position_frame != frame, "going on")
+    assert engine.ending == ""
+
+
+def test_told_to_terminate_it_fades_out_and_ends_well(start, tone):
+    engine = start(session_of(tone), play=True)
+    wait_for(engine, lambda s: s.position_frame > 0, "sound")
+    os.kill(engine.pid, signal.SIGTERM)
+    engine._process.join(5)
+    assert engine._process.exitcode == 0
+
+
+def test_an_engine_that_was_killed_says_by_what(start, tone):
+    engine = start(session_of(tone))
+    wait_for(engine, lambda s: True, "a snapshot")
+    os.kill(engine.pid, signal.SIGKILL)
+    engine._process.join(5)
+    assert engine.ending == "the engine was ended by signal SIGKILL"
+
+
+def test_an_engine_can_begin_where_another_left_off(start, tone):
+    candidate = session_of(tone, stage=find_stage("inverting-high-pass")).netlist()
+    engine = start(
+        session_of(tone),
+        letter="B",
+        candidates=(("A", candidate),),
+        start_frame=60_000,
+        region=(50_000, 90_000),
+    )
+    began = wait_for(engine, lambda s: s.region is not None and len(s.candidates) == 2, "the region")
+    assert (began.region, began.position_frame, began.playing) == ((50_000, 90_000), 60_000, False)
+    assert began.letter == "B"
+
+
+def test_a_recording_of_a_few_frames_says_that_it_is_played_once(start, tmp_path):
+    short = tmp_path / "short.wav"
+    with FileSink(short, sample_rate_hz=48_000, channels=1) as sink:
+        sink.write(np.full((3, 1), 0.5))
+    engine = start(session_of(short))
+    assert wait_for(engine, lambda s: True, "a snapshot").at_end is AtEnd.STOP
+    assert any("shorter than 10 ms" in notice.text for notice in engine.notices())

@@ -104,19 +104,21 @@ def test_no_block_is_missed_in_60_s_while_the_desk_is_busy(sound_server: Any, tm
 
 
 @pytest.mark.slow
-@pytest.mark.parametrize("how", ["unplug", "freeze"])
-def test_a_lost_device_is_told_within_a_second_and_taken_up_again(
+@pytest.mark.parametrize("how", ["unplug", "freeze", "end"])
+def test_a_lost_device_is_told_within_a_second_and_taken_up_again_at_the_same_place(
     sound_server: Any, tmp_path: Path, how: str
 ) -> None:
-    audio = noise_file(tmp_path / "noise.wav", 3.0)
+    audio = noise_file(tmp_path / "noise.wav", 20.0)
     then = """
 print("ready", flush=True); sys.stdin.readline(); gone = time.monotonic()
 lost = wait(lambda s: s.output_name == "silent clock")
 print("lost after", time.monotonic() - gone, flush=True)
-before = lost.position_frame
-wait(lambda s: s.position_frame != before)
-print("plays on", flush=True); sys.stdin.readline()
-print("back on", wait(lambda s: s.output_name != "silent clock").output_name, flush=True)
+held = wait(lambda s: not s.playing)
+for _ in range(20):
+    assert wait(lambda s: True).position_frame == held.position_frame
+print("held", flush=True); sys.stdin.readline(); back = time.monotonic()
+wait(lambda s: s.output_name != "silent clock" and s.playing and s.position_frame > held.position_frame)
+print("back after", time.monotonic() - back, flush=True)
 """
     desk = sound_server.start(DESK, str(audio), "loop", then, str(tmp_path / "log"))
     try:
@@ -136,10 +138,10 @@ print("back on", wait(lambda s: s.output_name != "silent clock").output_name, fl
         getattr(sound_server, how)()
         go()
         assert float(read_until("lost after").split()[-1]) < 1.0
-        read_until("plays on")
-        {"unplug": sound_server.plug, "freeze": sound_server.thaw}[how]()
+        read_until("held")
+        {"unplug": sound_server.plug, "freeze": sound_server.thaw, "end": sound_server.restart}[how]()
         go()
-        assert read_until("back on")
+        assert float(read_until("back after").split()[-1]) < 2.0
         assert any("has stopped" in line for line in seen)
         assert desk.wait(20) == 0
     finally:

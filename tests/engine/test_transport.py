@@ -42,6 +42,16 @@ def test_a_ramp_turned_round_goes_on_from_the_gain_it_has_reached():
     assert more[-1, 0] == 0.0
 
 
+def test_to_pass_over_frames_is_to_apply_it_to_them():
+    one, other = Ramp(80, 0.0), Ramp(80, 0.0)
+    for ramp in (one, other):
+        ramp.to(1.0)
+    for frames in (1, 17, 30, 100):
+        one.apply(np.ones((frames, 1)))
+        other.pass_over(frames)
+        assert (one.value, one.moving) == (pytest.approx(other.value, abs=1e-15), other.moving)
+
+
 @pytest.mark.parametrize(
     ("next_frame", "wrapped", "heard"),
     [(500, False, 463), (120, False, 83), (120, True, 183), (100, True, 163), (10, False, 0)],

@@ -11,19 +11,26 @@ import numpy as np
 import pytest
 
 from preview.circuit.library import find_stage
-from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpReading
+from preview.circuit.parts import Stage
 from preview.engine.messages import (
+    CandidateReading,
     ClearHolds,
     Command,
+    DropCandidate,
+    KeepCandidate,
+    ListenNull,
     Notice,
     Pause,
     Play,
+    Report,
     Seek,
+    SelectCandidate,
     SetAtEnd,
     SetBypass,
     SetCircuit,
     SetFullScale,
+    SetMatch,
     SetQuality,
     SetRegion,
     SetVolume,
@@ -32,11 +39,24 @@ from preview.engine.messages import (
 from preview.meters.reading import LevelReading
 from preview.session import AtEnd, Session
 from preview.ui.app import DeskApp
-from preview.ui.figures import Figures
+from preview.ui.desk import Desk
+from preview.ui.figures import FigureJob, Figures
 from preview.values.levels import parse_full_scale
 from preview.values.quality import Quality
 
 SILENCE = LevelReading((0.0, 0.0), (0.0, 0.0), (0.0, 0.0))
+
+
+def two_in_a_row(stage: Stage) -> Stage:
+    """The stage with a follower behind it."""
+    first = stage.opamps[0]
+    parts = tuple(
+        replace(p, nodes=tuple("mid" if node == "out" else node for node in p.nodes)) for p in stage.valued
+    )
+    first = replace(first, out="mid")
+    return replace(
+        stage, parts=(*parts, first, replace(first, designator="U2", plus="mid", minus="out", out="out"))
+    )
 
 
 class FakeEngine:
@@ -47,6 +67,7 @@ class FakeEngine:
         self.alive = True
         self.closed = False
         self.waiting: list[Notice] = []
+        self.found: list[Report] = []
         self.snapshot: Snapshot | None = Snapshot(
             playing=False,
             position_frame=0,
@@ -67,6 +88,7 @@ class FakeEngine:
             latency_s=0.03,
             output_name="silent clock",
             gliding=False,
+            candidates=(CandidateReading("A", True, None, 0.0),),
         )
         self._new = True
 
@@ -102,6 +124,22 @@ class FakeEngine:
                 self.say(opamps=tuple(_quiet(site.designator) for site in netlist.opamps))
             case ClearHolds():
                 self.say(dropouts=0, limited_blocks=0)
+            case SetMatch(on):
+                self.say(match=on)
+            case ListenNull(pair):
+                self.say(null=pair)
+            case KeepCandidate(letter):
+                others = [c for c in self._candidates if c.letter != letter]
+                self.say(candidates=(*others, CandidateReading(letter, True, None, 0.0)))
+            case SelectCandidate(letter):
+                self.say(letter=letter, null=None)
+            case DropCandidate(letter):
+                self.say(candidates=tuple(c for c in self._candidates if c.letter != letter))
+
+    @property
+    def _candidates(self) -> tuple[CandidateReading, ...]:
+        assert self.snapshot is not None
+        return self.snapshot.candidates
 
     def latest(self) -> Snapshot | None:
         """The newest snapshot, once."""
@@ -113,6 +151,11 @@ class FakeEngine:
         waiting, self.waiting = self.waiting, []
         return waiting
 
+    def reports(self) -> list[Report]:
+        """Those waiting."""
+        found, self.found = self.found, []
+        return found
+
     def close(self) -> None:
         """End."""
         self.closed = True
@@ -123,12 +166,12 @@ def _quiet(designator: str) -> OpAmpReading:
     return OpAmpReading(designator, 0.0, 0.0, 0.0, math.inf, 0, 0.0, 0.0)
 
 
-def first_order_figures(netlist: Netlist, sample_rate_hz: float, quality: Quality) -> Figures:
+def first_order_figures(job: FigureJob) -> Figures:
     """A first-order low-pass from R1, R2 and C1, in closed form: quick and without the analysis room."""
-    values = netlist.values
+    values = job.netlist.values
     corner_hz = 1.0 / (2.0 * math.pi * values.get("R2", 1e5) * values.get("C1", 1e-9))
     gain = values.get("R2", 1e5) / values.get("R1", 1e4)
-    frequency_hz = np.geomspace(10.0, 100e3, 81)
+    frequency_hz = np.geomspace(1.0, 1e6, 121)
     response = -gain / (1.0 + 1j * frequency_hz / corner_hz)
     return Figures(
         frequency_hz=frequency_hz,
@@ -136,9 +179,9 @@ def first_order_figures(netlist: Netlist, sample_rate_hz: float, quality: Qualit
         phase_deg=np.degrees(np.angle(response)),
         corners_hz=(corner_hz,),
         passband_gain_db=20.0 * math.log10(gain),
-        error_db=0.0004 if sample_rate_hz else None,
-        sample_rate_hz=sample_rate_hz,
-        quality=quality,
+        error_db=0.0004 if job.sample_rate_hz else None,
+        sample_rate_hz=job.sample_rate_hz,
+        quality=job.quality,
     )
 
 
@@ -153,6 +196,12 @@ def low_pass_session(audio: Path | None = Path("announcement.wav")) -> Session:
     )
 
 
+@pytest.fixture(autouse=True)
+def _faults_are_seen(monkeypatch: pytest.MonkeyPatch) -> None:
+    """What a panel or an action cannot do fails the test instead of being said on the screen."""
+    monkeypatch.setenv("PREVIEW_DEBUG", "1")
+
+
 @pytest.fixture
 def engine() -> FakeEngine:
     """A pretended engine that waits at the start of a 12.5 s stereo file."""
@@ -163,6 +212,14 @@ def engine() -> FakeEngine:
 def session() -> Session:
     """The bundled inverting low-pass on +18 dBu."""
     return low_pass_session()
+
+
+@pytest.fixture
+def two_opamps(session, engine) -> Desk:
+    """A desk on a stage of two op-amps."""
+    desk = Desk(replace(session, stage=two_in_a_row(session.stage)), engine)
+    desk.take(engine.snapshot)
+    return desk
 
 
 MakeApp = Callable[..., DeskApp]

@@ -15,11 +15,11 @@ import pytest
 from rich.color import Color
 from textual.pilot import Pilot
 
-from preview.engine.messages import Notice, Play, SetCircuit, SetFullScale, SetPart, SetVolume
+from preview.engine.messages import Notice, Play, Seek, SetCircuit, SetFullScale, SetPart, SetVolume
 from preview.errors import DeviceError
 from preview.meters.reading import LevelReading
 from preview.ui.app import DeskApp
-from preview.ui.figures import Figures, compute_figures
+from preview.ui.figures import Figures, compute_figures, job_of
 from preview.ui.link import AnswerWatch
 from preview.ui.picture import desk_svg
 from preview.ui.screens.pages import CautionScreen
@@ -98,7 +98,8 @@ async def test_80_by_24_has_meters_parts_curve_figures_and_keys(make_app) -> Non
             "dropouts 0",
             "in L",
             "out R",
-            "clip ×0",
+            "clips",
+            "×0",
             "R1 10 kΩ",
             "▾ 1.59 kHz",
             "heard response within 0.0004 dB of the circuit to 20 kHz (standard)",
@@ -138,10 +139,10 @@ async def test_the_window_may_change_its_size(make_app) -> None:
     app: DeskApp = make_app()
     async with app.run_test(size=(160, 48)) as pilot:
         await pilot.resize_terminal(80, 24)
-        await until(pilot, lambda: app.curve.size.width == 44)
-        assert not app.schematic.display or app.schematic.size.width == 0
+        await until(pilot, lambda: app.response.size.width == 44)
+        assert not app.circuit.display or app.circuit.size.width == 0
         await pilot.resize_terminal(160, 48)
-        await until(pilot, lambda: app.schematic.size.width > 57)
+        await until(pilot, lambda: app.circuit.size.width > 57)
 
 
 @pytest.mark.parametrize("channels", [1, 2, 6])
@@ -151,7 +152,7 @@ async def test_the_meters_take_any_number_of_channels(make_app, engine, channels
     app: DeskApp = make_app()
     async with app.run_test(size=(160, 48)) as pilot:
         await pilot.pause()
-        text = "\n".join("".join(s.text for s in row) for row in app.meters.painted)
+        text = "\n".join("".join(s.text for s in row) for row in app.path.painted)
         assert text.count("500 mV") == 2 * channels
 
 
@@ -171,8 +172,8 @@ async def test_corner_and_gain_are_shown_before_and_after(make_app) -> None:
 async def test_keys_stay_quick_while_a_figure_takes_long(make_app, engine) -> None:
     started: list[float] = []
 
-    def slow(netlist, sample_rate_hz, quality) -> Figures:
-        started.append(netlist.values["R1"])
+    def slow(job) -> Figures:
+        started.append(job.netlist.values["R1"])
         time.sleep(0.3)  # stands for a long computation; it is what this test is about
         return Figures(problem="slow")
 
@@ -181,8 +182,8 @@ async def test_keys_stay_quick_while_a_figure_takes_long(make_app, engine) -> No
         await until(pilot, lambda: bool(started))
         for _ in range(10):
             await pilot.press("right")
-        assert engine.sent[-1].value == app.desk.part.value
-        await until(pilot, lambda: app.desk.part.value in started)
+        assert engine.sent[-1].value == app.desk.parts.part.value
+        await until(pilot, lambda: app.desk.parts.part.value in started)
         assert len(started) < 11, "values that were passed over are not computed one by one"
 
 
@@ -194,7 +195,7 @@ async def test_a_circuit_without_figures_says_why(make_app, session) -> None:
 
 
 def test_the_real_figures_are_those_of_the_stage_file(session) -> None:
-    figures = compute_figures(session.netlist(), 48e3, session.quality)
+    figures = compute_figures(job_of(session, 48e3))
     expected = {expect.what: expect.value for expect in session.stage.expects if not expect.parts}
     assert figures.corners_hz == pytest.approx((expected["corner_hz"],), rel=1e-5)
     assert figures.passband_gain_db == pytest.approx(expected["passband_gain_db"], abs=1e-3)
@@ -205,37 +206,59 @@ def test_the_real_figures_are_those_of_the_stage_file(session) -> None:
 # ---- the engine ----
 
 
-async def test_a_stopped_engine_is_said_and_can_be_started_again(make_app, engine) -> None:
+async def test_an_engine_that_stops_is_replaced_and_plays_on_at_its_place(make_app, engine) -> None:
     new = type(engine)()
     app: DeskApp = make_app(restart=lambda: new)
     async with app.run_test(size=(80, 24)) as pilot:
         await pilot.press("right")
+        engine.say(position_frame=123_456, playing=True)
+        await until(pilot, lambda: app.desk.listening.position_frame == 123_456)
         engine.alive = False
-        await until(pilot, lambda: app.desk.stopped)
-        assert "ENGINE STOPPED: no sound. Press R" in screen_text(app)
-        await pilot.press("R")
-        await until(pilot, lambda: not app.desk.stopped)
+        await until(pilot, lambda: app.desk.link is new)
         assert engine.closed
         (circuit,) = [command for command in new.sent if isinstance(command, SetCircuit)]
         assert circuit.netlist.values["R1"] == 11e3
         assert SetFullScale(app.desk.session.full_scale.volts) in new.sent
+        assert new.sent.index(Seek(123_456)) < new.sent.index(Play())
+        assert "runs again" in app.foot.message
+
+
+async def test_an_engine_that_stops_again_at_once_is_left_to_the_person(make_app, engine) -> None:
+    engines = [type(engine)(), type(engine)()]
+    app: DeskApp = make_app(restart=lambda: engines.pop(0))
+    second, third = engines
+    async with app.run_test(size=(80, 24)) as pilot:
+        engine.alive = False
+        await until(pilot, lambda: app.desk.link is second)
+        second.alive = False
+        await until(pilot, lambda: app.desk.stopped)
+        assert "ENGINE STOPPED: no sound. Press R" in screen_text(app)
+        await pilot.press("R")
+        await until(pilot, lambda: app.desk.link is third)
+        assert Play() not in third.sent, "sound starts by hand then"
         await pilot.press("space")
-        assert new.sent[-1] == Play()
+        assert third.sent[-1] == Play()
         assert "ENGINE STOPPED" not in screen_text(app)
 
 
-async def test_an_engine_that_hangs_is_said_and_can_be_replaced(make_app, engine) -> None:
+async def test_an_engine_that_hangs_is_replaced(make_app, engine) -> None:
     new = type(engine)()
     app: DeskApp = make_app(restart=lambda: new)
     async with app.run_test(size=(80, 24)) as pilot:
         await until(pilot, lambda: app.desk.snapshot is not None)
         await pilot.press("R")
         assert app.foot.message == "the engine is running"
-        await until(pilot, lambda: app.desk.unanswered)  # it lives, but says nothing any more
-        assert "ENGINE DOES NOT ANSWER. Press R" in screen_text(app)
-        await pilot.press("R")
-        await until(pilot, lambda: engine.closed and not app.desk.unanswered)
+        await until(
+            pilot, lambda: engine.closed and app.desk.link is new
+        )  # it lives, but says nothing any more
         assert any(isinstance(command, SetCircuit) for command in new.sent)
+
+
+async def test_an_engine_that_hangs_and_cannot_be_replaced_is_said(make_app, engine) -> None:
+    app: DeskApp = make_app()
+    async with app.run_test(size=(80, 24)) as pilot:
+        await until(pilot, lambda: app.desk.unanswered)
+        assert "ENGINE DOES NOT ANSWER. Press R" in screen_text(app)
 
 
 async def test_a_desk_that_was_suspended_paints_everything_again(make_app, monkeypatch) -> None:
@@ -270,7 +293,7 @@ async def test_an_engine_that_will_not_start_again_is_an_error_on_the_desk(make_
         await until(pilot, lambda: "no audio device" in app.foot.message)
         assert app.desk.stopped
         await pilot.press("right", "b", "space")  # the desk itself goes on
-        assert app.desk.bypass
+        assert app.desk.listening.bypass
 
 
 async def test_notices_of_the_engine_are_shown_cleaned_and_without_markup(make_app, engine) -> None:
@@ -294,11 +317,11 @@ async def test_a_long_message_is_not_cut(make_app, engine) -> None:
 async def test_a_value_that_steps_out_of_range_is_said(make_app, engine) -> None:
     app: DeskApp = make_app()
     async with app.run_test(size=(80, 24)) as pilot:
-        app.desk.set_value(1e12)
+        app.desk.parts.set(1e12)
         await pilot.press("right")
         await pilot.pause()
         assert "out of range" in app.foot.message
-        assert app.desk.part.value == 1e12
+        assert app.desk.parts.part.value == 1e12
 
 
 async def test_file_names_are_neither_markup_nor_control_codes(make_app, session) -> None:
@@ -316,10 +339,10 @@ async def test_a_click_selects_a_part_and_seeks(make_app, engine) -> None:
     async with app.run_test(size=(80, 24)) as pilot:
         await pilot.click("#parts", offset=(6, 3))
         await pilot.pause()
-        assert app.desk.part.designator == "C1"
+        assert app.desk.parts.part.designator == "C1"
         await pilot.click("#timeline", offset=(40, 0))
         await pilot.pause()
-        assert 200_000 < app.desk.position_frame < 400_000
+        assert 200_000 < app.desk.listening.position_frame < 400_000
 
 
 # ---- colours ----
@@ -385,11 +408,10 @@ def test_the_figures_of_a_real_op_amp_load_neither_sound_nor_compiler_nor_plots(
         "from dataclasses import replace\n"
         "from preview.circuit.library import find_stage\n"
         "from preview.circuit.netlist import netlist\n"
-        "from preview.ui.figures import compute_figures\n"
-        "from preview.values.quality import Quality\n"
+        "from preview.ui.figures import FigureJob, compute_figures\n"
         "stage = find_stage('inverting-low-pass')\n"
         "stage = stage.with_part(replace(stage.opamps[0], type='TL072'))\n"
-        "assert not compute_figures(netlist(stage), 48e3, Quality.STANDARD).problem\n"
+        "assert not compute_figures(FigureJob(netlist(stage), None, 48e3)).problem\n"
         "names = ['numba', 'sounddevice', 'soundfile', 'soxr', 'matplotlib', 'scipy.signal']\n"
         "print([name for name in names if name in sys.modules])"
     )

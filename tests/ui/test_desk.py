@@ -16,7 +16,7 @@ from preview.circuit.reader import parse_stage
 from preview.engine.messages import Pause, Play, Seek, SetAtEnd, SetCircuit, SetPart, SetRegion, SetVolume
 from preview.errors import PartValueError
 from preview.session import AtEnd
-from preview.ui.changes import commands_between, render_command, with_value
+from preview.ui.changes import commands_between, render_command, with_setting
 from preview.ui.desk import Desk
 from preview.ui.opamps import with_opamp_type
 from preview.values.notation import parse_value
@@ -46,7 +46,7 @@ def desk(session, engine, clock) -> Desk:
 
 
 def test_only_the_changed_part_is_sent(session) -> None:
-    changed = with_value(session, "R2", 47e3)
+    changed = with_setting(session, "R2", 47e3)
     assert commands_between(session, changed) == [SetPart("R2", 47e3)]
     assert commands_between(session, session) == []
 
@@ -96,49 +96,49 @@ def test_another_supply_is_another_circuit(session) -> None:
 
 def test_a_value_out_of_range_changes_nothing(desk, engine, session) -> None:
     with pytest.raises(PartValueError, match="out of range"):
-        desk.set_value(1e15)
+        desk.parts.set(1e15)
     assert desk.session == session
     assert engine.sent == []
-    assert desk.do_undo() == "nothing to take back"
+    assert desk.method("undo")() == "nothing to take back"
 
 
 def test_stepping_from_an_odd_value_reaches_the_next_standard_value(desk, engine) -> None:
-    desk.set_value(4321.0)
-    desk.do_value_up()
+    desk.parts.set(4321.0)
+    desk.method("value_up")()
     assert engine.sent[-1] == SetPart("R1", 4700.0)  # E24, IEC 60063: 4.3, 4.7
-    desk.do_value_down()
+    desk.method("value_down")()
     assert engine.sent[-1] == SetPart("R1", 4300.0)
 
 
 def test_the_series_of_a_part_is_kept_and_used(desk, engine) -> None:
     for _ in range(3):  # E24 -> E48 -> E96 -> E192
-        desk.do_next_series()
-    desk.do_value_up()
+        desk.method("next_series")()
+    desk.method("value_up")()
     assert engine.sent[-1] == SetPart("R1", 10.1e3)  # E192, IEC 60063: 1.00, 1.01
-    desk.do_next_series()
-    assert desk.part.series == "E3"
+    desk.method("next_series")()
+    assert desk.parts.part.series == "E3"
 
 
 def test_undo_walks_back_over_a_change_of_stage_and_redo_forward(desk, engine) -> None:
-    desk.set_value(22e3)
+    desk.parts.set(22e3)
     desk.open_stage(find_stage("inverting-high-pass"))
     assert desk.before.stage.name == "inverting-high-pass"
-    desk.do_undo()
+    desk.method("undo")()
     assert desk.session.stage.part("R1").value == 22e3
     assert desk.before.stage.part("R1").value == 10e3, "'before' is the low-pass as it was opened"
-    desk.do_undo()
+    desk.method("undo")()
     assert engine.sent[-1] == SetPart("R1", 10e3)
-    desk.do_redo()
-    desk.do_redo()
+    desk.method("redo")()
+    desk.method("redo")()
     assert desk.session.stage.name == "inverting-high-pass"
-    assert desk.do_redo() == "nothing to make again"
+    assert desk.method("redo")() == "nothing to make again"
 
 
 def test_undo_leaves_quality_and_end_as_they_are(desk) -> None:
-    desk.set_value(22e3)
-    desk.do_next_quality()
-    desk.do_at_end()
-    desk.do_undo()
+    desk.parts.set(22e3)
+    desk.method("next_quality")()
+    desk.method("at_end")()
+    desk.method("undo")()
     assert desk.session.quality is Quality.FINE
     assert desk.session.at_end is AtEnd.STOP
     assert desk.session.stage.part("R1").value == 10e3
@@ -146,55 +146,55 @@ def test_undo_leaves_quality_and_end_as_they_are(desk) -> None:
 
 def test_quick_seeks_add_up_before_the_engine_has_answered(desk, engine) -> None:
     for _ in range(3):
-        desk.do_forward_small()
+        desk.method("forward_small")()
     assert engine.sent[-1] == Seek(144_000)
 
 
 def test_the_engine_has_the_last_word_on_where_the_playhead_is(desk, engine, clock) -> None:
-    desk.do_forward_small()
-    assert desk.position_frame == 48_000
+    desk.method("forward_small")()
+    assert desk.listening.position_frame == 48_000
     clock.now_s += 1.0
     desk.take(replace(engine.snapshot, position_frame=1234))
-    assert desk.position_frame == 1234
+    assert desk.listening.position_frame == 1234
 
 
 def test_playing_follows_the_engine_when_the_file_has_ended(desk, engine, clock) -> None:
-    desk.do_play_pause()
+    desk.method("play_pause")()
     assert engine.sent == [Play()]
     desk.take(replace(engine.snapshot, playing=False))  # an older word: not believed yet
-    assert desk.playing
+    assert desk.listening.playing
     clock.now_s += 1.0
     desk.take(replace(engine.snapshot, playing=False))
-    assert not desk.playing
-    desk.play(True)
-    desk.do_play_pause()
+    assert not desk.listening.playing
+    desk.listening.play(True)
+    desk.method("play_pause")()
     assert engine.sent[-1] == Pause()
 
 
 def test_a_region_never_ends_before_it_starts(desk, engine) -> None:
-    desk.seek(300_000)
-    desk.do_region_end()
+    desk.listening.seek(300_000)
+    desk.method("region_end")()
     assert engine.sent[-1] == SetRegion(0, 300_000)
-    desk.seek(400_000)
-    desk.do_region_start()
+    desk.listening.seek(400_000)
+    desk.method("region_start")()
     assert engine.sent[-1] == SetRegion(400_000, 600_000)
-    desk.seek(100_000)
-    desk.do_region_end()
+    desk.listening.seek(100_000)
+    desk.method("region_end")()
     assert engine.sent[-1] == SetRegion(0, 100_000)
 
 
 def test_a_region_at_the_very_start_or_end_holds_at_least_50_ms(desk, engine) -> None:
     # looped, two frames of a recording are a direct voltage on the headphones
-    desk.seek(0)
-    desk.do_region_end()
+    desk.listening.seek(0)
+    desk.method("region_end")()
     assert engine.sent[-1] == SetRegion(0, 2400)
-    desk.do_region_clear()
-    desk.seek(10**9)
+    desk.method("region_clear")()
+    desk.listening.seek(10**9)
     assert engine.sent[-1] == Seek(599_999)
-    desk.do_region_start()
+    desk.method("region_start")()
     assert engine.sent[-1] == SetRegion(597_600, 600_000)
-    desk.seek(597_700)
-    desk.do_region_end()
+    desk.listening.seek(597_700)
+    desk.method("region_end")()
     assert engine.sent[-1] == SetRegion(0, 597_700)
 
 
@@ -202,39 +202,44 @@ def test_a_recording_shorter_than_the_shortest_region_is_its_own_region(session,
     short = type(engine)(frames=1000)
     desk = Desk(session, short)
     desk.take(short.snapshot)
-    for action in (desk.do_region_start, desk.do_region_end):
+    for action in (desk.method("region_start"), desk.method("region_end")):
         action()
         assert short.sent[-1] == SetRegion(0, 1000)
 
 
 def test_keys_do_nothing_harmful_before_the_engine_has_spoken(session, engine) -> None:
     desk = Desk(session, engine)
-    for action in (desk.do_forward_small, desk.do_back_large, desk.do_region_start, desk.do_region_end):
+    for action in (
+        desk.method("forward_small"),
+        desk.method("back_large"),
+        desk.method("region_start"),
+        desk.method("region_end"),
+    ):
         action()
     assert engine.sent == []
 
 
 def test_the_volume_starts_low_ends_at_0_db_and_goes_off_below_60_db(desk, engine) -> None:
-    assert desk.volume_db == -20.0
+    assert desk.listening.volume_db == -20.0
     for _ in range(25):
-        desk.do_volume_up()
+        desk.method("volume_up")()
     assert engine.sent[-1] == SetVolume(0.0)
     for _ in range(61):
-        desk.do_volume_down()
+        desk.method("volume_down")()
     assert engine.sent[-1] == SetVolume(-math.inf)
-    desk.do_volume_down()
+    desk.method("volume_down")()
     assert engine.sent[-1] == SetVolume(-math.inf)
-    desk.do_volume_up()
+    desk.method("volume_up")()
     assert engine.sent[-1] == SetVolume(-60.0)
 
 
 def test_a_new_engine_is_brought_to_where_the_old_one_was(desk, engine, clock) -> None:
-    desk.set_value(22e3)
-    desk.do_bypass()
-    desk.do_at_end()
-    desk.do_volume_up()
-    desk.seek(96_000)
-    desk.do_region_start()
+    desk.parts.set(22e3)
+    desk.method("bypass")()
+    desk.method("at_end")()
+    desk.method("volume_up")()
+    desk.listening.seek(96_000)
+    desk.method("region_start")()
     new = type(engine)()
     desk.resume(new)
     assert isinstance(new.sent[0], SetCircuit)
@@ -275,7 +280,7 @@ def test_limits_are_worked_out_once_for_each_session(desk) -> None:
 
 def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> None:
     opened = session.stage
-    session = with_value(with_value(session, "R1", 4700.0), "C1", 1.23456789e-9)
+    session = with_setting(with_setting(session, "R1", 4700.0), "C1", 1.23456789e-9)
     session = replace(session, audio=Path("a b.wav"), load=LoadModel(600.0), supply=Supply(12.0, -12.0))
     words = shlex.split(render_command(session, opened))
     assert words[:4] == ["preview", "render", "a b.wav", "OUT.wav"]
@@ -291,7 +296,7 @@ def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> No
 
 def test_the_render_command_names_every_stage_of_a_cascade(session) -> None:
     opened = open_stages(["inverting-high-pass", "inverting-low-pass"])
-    session = with_value(replace(session, stage=opened), "2.R1", 4700.0)
+    session = with_setting(replace(session, stage=opened), "2.R1", 4700.0)
     words = shlex.split(render_command(session, open_stages(session.stage.opened_as)))
     options = list(zip(words[4::2], words[5::2], strict=True))
     assert [name for option, name in options if option == "--stage"] == list(opened.opened_as)
@@ -301,8 +306,8 @@ def test_the_render_command_names_every_stage_of_a_cascade(session) -> None:
 def test_parts_of_a_cascade_are_turned_by_their_number(session, engine, clock) -> None:
     opened = open_stages(["inverting-high-pass", "inverting-low-pass"])
     desk = Desk(replace(session, stage=opened), engine, now_s=clock)
-    desk.choose([p.designator for p in opened.settable].index("2.R1"))
-    desk.do_value_up()
+    assert desk.parts.choose_named("2.R1")
+    desk.method("value_up")()
     assert engine.sent[-1] == SetPart("2.R1", 11e3)
-    desk.do_reset_part()
+    desk.method("reset_part")()
     assert engine.sent[-1] == SetPart("2.R1", 10e3)

@@ -8,9 +8,12 @@ from collections.abc import Callable, Sequence
 
 from rich.cells import cell_len
 from rich.style import Style
+from textual.events import Click
+from textual.message import Message
 
 from preview.errors import printable
-from preview.ui.actions import footer_actions
+from preview.ui.keymap import KeyMap
+from preview.ui.keynames import key_shown
 from preview.ui.theme import Look
 from preview.ui.widgets.board import Board, Row, fit, row
 
@@ -24,8 +27,18 @@ _MOST_ROWS = 4
 class FooterPanel(Board):
     """Hints from the table of actions, as many as fit; a message takes the first row while it is new."""
 
-    def __init__(self, look: Look, *, now_s: Callable[[], float] = time.monotonic) -> None:
+    class Pressed(Message):
+        """A click on a hint."""
+
+        def __init__(self, name: str) -> None:
+            super().__init__()
+            self.name = name
+            """The action's name."""
+
+    def __init__(self, look: Look, keys: KeyMap, *, now_s: Callable[[], float] = time.monotonic) -> None:
         super().__init__(look, name="foot")
+        self._keys = keys
+        self._places: list[tuple[int, int, int, str]] = []
         self.message = ""
         self._severity = "information"
         self._until_s = 0.0
@@ -67,25 +80,33 @@ class FooterPanel(Board):
     def rows(self, width: int, height: int) -> Sequence[Row]:
         """See :class:`Board`."""
         palette = self.look.palette
-        hints = _hint_rows(width, height, palette.mark, palette.faint)
+        lines = self._message_lines(width)
         style = palette.strong if self._severity == "information" else palette.alarm
-        lines = [row((fit(f" {line}", width), style)) for line in self._message_lines(width)]
-        return [*lines, *hints[: height - len(lines)]]
+        shown = [row((fit(f" {line}", width), style)) for line in lines]
+        return [*shown, *self._hint_rows(width, height - len(lines), len(lines))]
 
+    def _hint_rows(self, width: int, height: int, first: int) -> list[Row]:
+        """The hints in so many rows; where each stands is kept for the mouse."""
+        palette = self.look.palette
+        self._places = []
+        rows: list[Row] = []
+        pieces: list[tuple[str, Style]] = [(" ", palette.faint)]
+        used = 1
+        for action in self._keys.footer:
+            shown = key_shown(action.keys[0])
+            cells = cell_len(shown) + 1 + cell_len(action.hint) + 2
+            if used + cells > width + 2:
+                if len(rows) + 1 >= height:
+                    continue
+                rows.append(row(*pieces))
+                pieces, used = [(" ", palette.faint)], 1
+            pieces += [(shown, palette.mark), (f" {action.hint}  ", palette.faint)]
+            self._places.append((first + len(rows), used, used + cells - 2, action.name))
+            used += cells
+        return [*rows, row(*pieces)][: max(0, height)]
 
-def _hint_rows(width: int, height: int, key: Style, text: Style) -> list[Row]:
-    """The hints in so many rows."""
-    rows: list[Row] = []
-    pieces: list[tuple[str, Style]] = [(" ", text)]
-    used = 1
-    for action in footer_actions():
-        shown = action.shown.partition(" or ")[0]
-        cells = cell_len(shown) + 1 + cell_len(action.hint) + 2
-        if used + cells > width + 2:
-            if len(rows) + 1 == height:
-                continue
-            rows.append(row(*pieces))
-            pieces, used = [(" ", text)], 1
-        pieces += [(shown, key), (f" {action.hint}  ", text)]
-        used += cells
-    return [*rows, row(*pieces)]
+    def on_click(self, event: Click) -> None:
+        """Do what the clicked hint says."""
+        for line, left, right, name in self._places:
+            if event.y == line and left <= event.x < right:
+                self.post_message(self.Pressed(name))

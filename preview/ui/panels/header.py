@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
+from rich.style import Style
+
 from preview.errors import printable
 from preview.ui.desk import Desk
 from preview.ui.theme import Look
@@ -50,6 +52,8 @@ class HeaderPanel(Board):
         if snapshot is None:
             return spread(left, row(("engine is starting ", palette.faint)), width, palette.plain)
         lost = f" dropouts {snapshot.dropouts} "
+        if snapshot.limited_blocks:
+            lost = f" device limiter ×{snapshot.limited_blocks} {lost}"
         name = printable(snapshot.output_name) or "no output"
         extra = ""
         if width >= 132:
@@ -61,36 +65,68 @@ class HeaderPanel(Board):
             (fit(name, max(4, room)).rstrip() if len(name) > room else name, palette.plain),
             (extra, palette.faint),
             ("  ", palette.plain),
-            (lost, palette.alarm if snapshot.dropouts else palette.plain),
+            (lost, palette.alarm if snapshot.dropouts or snapshot.limited_blocks else palette.plain),
         )
         return spread(left, out, width, palette.plain)
 
     def _state_row(self, width: int) -> Row:
         palette, desk = self.look.palette, self.desk
+        snapshot = desk.snapshot
         if desk.stopped or desk.unanswered:
-            words = "ENGINE DOES NOT ANSWER. Press R to restart it; q leaves."
+            again, leave = (desk.keys.shown(name) for name in ("restart", "quit"))
+            words = f"ENGINE DOES NOT ANSWER. Press {again} to restart it; {leave} leaves."
             if desk.stopped:
-                words = "ENGINE STOPPED: no sound. Press R to restart it; q leaves."
-            if desk.snapshot is None:
-                words = "ENGINE DID NOT START. Press R to try again; q leaves, then try --silent."
+                words = f"ENGINE STOPPED: no sound. Press {again} to restart it; {leave} leaves."
+            if snapshot is None:
+                words = (
+                    f"ENGINE DID NOT START. Press {again} to try again; {leave} leaves, then try --silent."
+                )
             return row((fit(f" {words}", width), palette.alarm))
-        narrow = width < 100
-        gliding = desk.snapshot is not None and desk.snapshot.gliding
+        if snapshot is not None and snapshot.fault is not None:
+            fault = snapshot.fault
+            again = desk.keys.shown("restart")
+            words = f"MUTED: {printable(fault.reason)} at {printable(fault.node)}. Press {again}: from rest again."
+            return row((fit(f" {words}", width), palette.alarm))
+        listening, narrow = desk.listening, width < 100
         right = row(
-            (("moving  " if narrow else "a value is moving   ") if gliding else "", palette.plain),
+            (
+                ("moving  " if narrow else "a value is moving   ") if snapshot and snapshot.gliding else "",
+                palette.plain,
+            ),
             ("volume ", palette.faint),
-            ("off" if desk.volume_db == float("-inf") else f"{desk.volume_db:.0f} dB", palette.plain),
+            (
+                "off" if listening.volume_db == float("-inf") else f"{listening.volume_db:.0f} dB",
+                palette.plain,
+            ),
             ("  end: " if narrow else "   at the end: ", palette.faint),
             (str(desk.session.at_end), palette.plain),
             ("  " if narrow else "   quality: ", palette.faint),
             (f"{desk.session.quality} ", palette.plain),
         )
-        playing = " ▶ playing " if desk.playing else " ‖ paused  "
-        if not desk.bypass:
-            return spread(
-                row((playing, palette.strong), ("  stage heard", palette.plain)), right, width, palette.plain
-            )
-        words = "  BYPASS: you hear the input, not the stage"
-        if len(playing) + len(words) + row_cells(right) >= width:
-            words = "  BYPASS: input heard"
-        return spread(row((playing, palette.strong), (words, palette.alarm)), right, width, palette.alarm)
+        playing = (" ▶ playing " if listening.playing else " ‖ paused  ", palette.strong)
+        room = width - len(playing[0]) - row_cells(right)
+        offered = self._heard()
+        words, style = next((each for each in offered if len(each[0]) + 2 <= room), offered[-1])
+        left = row(playing, (f"  {words}", style))
+        return spread(left, right, width, style if style is palette.alarm else palette.plain)
+
+    def _heard(self) -> list[tuple[str, Style]]:
+        """What is heard, in words, the longest first."""
+        palette, desk = self.look.palette, self.desk
+        if desk.listening.bypass:
+            texts = "BYPASS: you hear the input, not the stage", "BYPASS: input heard"
+            return [(text, palette.alarm) for text in texts]
+        room = desk.candidates
+        if room.null is not None:
+            texts = f"NULL: {room.null[0]} minus {room.null[1]}", f"NULL {room.null[0]}-{room.null[1]}"
+            return [(text, palette.alarm) for text in texts]
+        without = desk.session.without
+        if without:
+            return [(f"heard WITHOUT {', '.join(without)}", palette.alarm), ("limits OFF", palette.alarm)]
+        if len(room.letters) == 1:
+            return [("stage heard", palette.plain)]
+        title = printable(room.title(room.letter))
+        snapshot = desk.snapshot
+        match = f", matched {snapshot.match_db:+.1f} dB" if room.matched and snapshot else ""
+        said = f"candidate {title} heard{match}", f"candidate {room.letter}{match}", room.letter
+        return [(text, palette.plain) for text in said]

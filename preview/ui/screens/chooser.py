@@ -11,19 +11,19 @@ from textual.widget import Widget
 from textual.widgets import Static
 
 from preview.errors import printable
+from preview.ui.asking import Choice, Menu
+from preview.ui.keymap import KeyMap
 from preview.ui.screens.dialog import Dialog
 from preview.ui.theme import Look
 from preview.ui.widgets.board import Board, Row, fit, row
 
-__all__ = ["Choice", "ChooserScreen"]
+__all__ = ["ChoiceBoard", "ChooserScreen"]
 
-Choice = tuple[str, str, str]
-"""Answer, label, explanation."""
 _AROUND = 10
 """Rows that the box needs around the choices, and what is left of the desk [cells]."""
 
 
-class _ChoiceBoard(Board):
+class ChoiceBoard(Board):
     """The rows; a click takes one."""
 
     class Taken(Message):
@@ -45,18 +45,18 @@ class _ChoiceBoard(Board):
         palette = self.look.palette
         self._first = min(self._first, self.at)
         self._first = max(self._first, self.at - height + 1)
-        labels = max(len(label) for _, label, _ in self.choices) + 2
+        labels = max((len(choice.label) for choice in self.choices), default=0) + 2
         result = []
         for index in range(self._first, min(len(self.choices), self._first + height)):
-            _, label, about = self.choices[index]
+            choice = self.choices[index]
             chosen = index == self.at
-            text = f" {fit(printable(label), min(labels, width - 4))}"
+            text = f" {fit(printable(choice.label), min(labels, width - 4))}"
             left = width - 2 - len(text)
             result.append(
                 row(
                     (self._mark(index, chosen, height), palette.mark),
                     (text, palette.selected if chosen else palette.strong),
-                    (f" {fit(printable(about), left)}" if left > 8 else "", palette.plain),
+                    (f" {fit(printable(choice.about), left)}" if left > 8 else "", palette.plain),
                 )
             )
         return result
@@ -82,45 +82,40 @@ class ChooserScreen(Dialog[str]):
 
     Parameters
     ----------
-    title : str
-        What is chosen.
-    choices : sequence of Choice
-        The rows.
-    now : str
-        The answer in force; its row is marked first.
+    keys : KeyMap
+        The keys in force.
+    menu : Menu
+        What is chosen, and from what.
     look : Look
         Colours.
-    heads : str
-        A line above the explanations; empty for none.
     """
 
-    def __init__(
-        self, title: str, choices: Sequence[Choice], *, now: str, look: Look, heads: str = ""
-    ) -> None:
+    def __init__(self, keys: KeyMap, menu: Menu, look: Look) -> None:
         super().__init__(
-            printable(title),
+            keys,
+            printable(menu.title),
             ("row_up", "and"),
             ("row_down", "move"),
             ("accept", "choose"),
             ("cancel", "leave"),
         )
-        self._choices = list(choices)
+        self.menu = menu
         self._look = look
-        self._heads = heads
-        self._start = next((i for i, choice in enumerate(choices) if choice[0] == now), 0)
+        answers = [choice.answer for choice in menu.choices]
+        self._start = answers.index(menu.now) if menu.now in answers else 0
 
     def body(self) -> Iterable[Widget]:
         """See :class:`Dialog`."""
-        board = _ChoiceBoard(self._look, self._choices, self._start)
-        board.styles.height = min(len(self._choices), max(1, self.app.size.height - _AROUND))
-        if self._heads:
-            labels = max(len(label) for _, label, _ in self._choices) + 2
-            yield Static(Text(" " * (labels + 3) + self._heads), classes="heads")
+        board = ChoiceBoard(self._look, self.menu.choices, self._start)
+        board.styles.height = min(len(self.menu.choices), max(1, self.app.size.height - _AROUND))
+        if self.menu.heads:
+            labels = max(len(choice.label) for choice in self.menu.choices) + 2
+            yield Static(Text(" " * (labels + 3) + self.menu.heads), classes="heads")
         yield board
 
     def _move(self, by: int) -> None:
-        board = self.query_one(_ChoiceBoard)
-        board.at = (board.at + by) % len(self._choices)
+        board = self.query_one(ChoiceBoard)
+        board.at = (board.at + by) % len(self.menu.choices)
         board.rebuild()
 
     def do_row_down(self) -> None:
@@ -133,8 +128,8 @@ class ChooserScreen(Dialog[str]):
 
     def do_accept(self) -> None:
         """Answer with the marked row."""
-        self.dismiss(self._choices[self.query_one(_ChoiceBoard).at][0])
+        self.dismiss(self.menu.choices[self.query_one(ChoiceBoard).at].answer)
 
-    def on__choice_board_taken(self, event: _ChoiceBoard.Taken) -> None:
+    def on_choice_board_taken(self, event: ChoiceBoard.Taken) -> None:
         """Answer with the clicked row."""
-        self.dismiss(self._choices[event.index][0])
+        self.dismiss(self.menu.choices[event.index].answer)

@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterable
+from collections.abc import Iterable
 
 from rich.text import Text
 from textual.widget import Widget
 from textual.widgets import Input, Static
 
 from preview.errors import PreviewError, printable
+from preview.ui.asking import Question
+from preview.ui.keymap import KeyMap
 from preview.ui.screens.dialog import Dialog
 
 __all__ = ["EntryScreen"]
@@ -19,28 +21,23 @@ class EntryScreen(Dialog[str]):
 
     Parameters
     ----------
-    title : str
-        What is asked for.
-    about : str
-        A line that explains it.
-    now : str
-        The value in force, shown where nothing is typed yet.
-    understand : callable
-        Text -> what it was understood as; raises PreviewError on what cannot be taken.
+    keys : KeyMap
+        The keys in force.
+    question : Question
+        What is asked.
     """
 
-    def __init__(self, title: str, *, about: str, now: str, understand: Callable[[str], str]) -> None:
-        super().__init__(printable(title), ("accept", "take it"), ("cancel", "leave it as it is"))
-        self._about = printable(about)
-        self._now = printable(now)
-        self._understand = understand
+    def __init__(self, keys: KeyMap, question: Question) -> None:
+        title = printable(question.title)
+        super().__init__(keys, title, ("accept", "take it"), ("cancel", "leave it as it is"))
+        self.question = question
         self.answer_line = ""
 
     def body(self) -> Iterable[Widget]:
         """See :class:`Dialog`."""
-        if self._about:
-            yield Static(Text(self._about), classes="about")
-        yield Input(placeholder=f"now {self._now}", id="typed", max_length=200)
+        if self.question.about:
+            yield Static(Text(printable(self.question.about)), classes="about")
+        yield Input(placeholder=f"now {printable(self.question.now)}", id="typed", max_length=200)
         yield Static(Text(" "), id="answer")
 
     def on_mount(self) -> None:
@@ -66,7 +63,7 @@ class EntryScreen(Dialog[str]):
     def _check(self, text: str) -> bool:
         good = True
         try:
-            line = self._understand(text) if text.strip() else ""
+            line = self.question.understand(text) if text.strip() else ""
         except PreviewError as error:
             good = False
             line = f"not taken: {error}"

@@ -2,15 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 
 from rich.cells import cell_len, set_cell_size
 from rich.segment import Segment
 from rich.style import Style
 from textual.geometry import Region
+from textual.message import Message
 from textual.strip import Strip
 from textual.widget import Widget
 
+from preview.errors import debugging, printable
+from preview.ui.asking import Outcome
 from preview.ui.theme import Look
 
 __all__ = ["Board", "Row", "fit", "heading", "row", "row_cells", "spread"]
@@ -65,6 +68,14 @@ class Board(Widget):
 
     can_focus = False
 
+    class Acted(Message):
+        """The mouse asks for something."""
+
+        def __init__(self, action: Callable[[], Outcome]) -> None:
+            super().__init__()
+            self.action = action
+            """Carries it out; may raise PreviewError."""
+
     def __init__(self, look: Look, *, name: str | None = None) -> None:
         super().__init__(id=name)
         self.look = look
@@ -73,6 +84,10 @@ class Board(Widget):
     def rows(self, width: int, height: int) -> Sequence[Row]:
         """The rows for this size [cells]."""
         raise NotImplementedError
+
+    def act(self, action: Callable[[], Outcome]) -> None:
+        """Have something carried out because of the mouse, as if a key had asked for it."""
+        self.post_message(self.Acted(action))
 
     @property
     def painted(self) -> tuple[Row, ...]:
@@ -84,7 +99,13 @@ class Board(Widget):
         width, height = self.size
         if width == 0 or height == 0:
             return
-        new = list(self.rows(width, height))[:height]
+        try:
+            new = list(self.rows(width, height))[:height]
+        except Exception as error:  # a panel that cannot be drawn must not take the sound down
+            if debugging():
+                raise
+            text = f" {self.id} cannot be drawn ({type(error).__name__}: {printable(str(error))})"
+            new = [row((text, self.look.palette.alarm))]
         old, self._rows = self._rows, new
         if len(new) != len(old):
             self.refresh()

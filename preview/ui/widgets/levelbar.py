@@ -6,8 +6,8 @@ import math
 from dataclasses import dataclass
 
 from preview.ui.theme import Palette
+from preview.ui.units import LevelUnit
 from preview.ui.widgets.board import Row, row
-from preview.ui.words import scale_volts
 
 __all__ = ["VoltAxis", "level_bar", "scale_line"]
 
@@ -39,23 +39,13 @@ class VoltAxis:
             return -math.inf
         return self.cells * (1.0 + 20.0 * math.log10(level_v / self.top_v) / _SPAN_DB)
 
-    @property
-    def marks_v(self) -> tuple[float, ...]:
-        """The round levels on the axis: 1 and 3 of every decade [V]."""
-        bottom_v = self.top_v * 10.0 ** (-_SPAN_DB / 20.0)
-        first = math.floor(math.log10(bottom_v))
-        all_v = (
-            float(f"{digit}e{power}") for power in range(first, first + 6) for digit in (1, 3)
-        )  # float of the text: exactly 0.3, not 3 * 0.1
-        return tuple(v for v in all_v if bottom_v <= v <= self.top_v)
 
-
-def scale_line(axis: VoltAxis) -> str:
-    """The scale above the bars: the axis' marks, as many as have room."""
+def scale_line(axis: VoltAxis, unit: LevelUnit = LevelUnit.VOLTS, full_scale_v: float = 1.0) -> str:
+    """The scale above the bars: round levels in that unit, as many as have room."""
     cells = [" "] * axis.cells
     free_from = 0
-    for mark_v in axis.marks_v:
-        label = scale_volts(mark_v)
+    bottom_v = axis.top_v * 10.0 ** (-_SPAN_DB / 20.0)
+    for mark_v, label in unit.marks(bottom_v, axis.top_v, full_scale_v):
         at = int(axis.place(mark_v))
         if at >= free_from and at + len(label) <= axis.cells:
             cells[at : at + len(label)] = list(label)

@@ -1,0 +1,141 @@
+"""The circuit view: parts that are clicked, volts at the nodes, a list where there is no drawing."""
+
+from __future__ import annotations
+
+import re
+from dataclasses import replace
+
+import pytest
+
+from preview.circuit.opamp import OpAmpReading
+from preview.circuit.parts import Supply
+from preview.meters.reading import LevelReading
+from preview.ui.app import DeskApp
+from preview.ui.desk import Desk
+from preview.ui.figures import Figures, compute_figures, job_of
+from preview.ui.opamps import with_opamp_type
+from preview.ui.panels.circuit import CircuitPanel
+from preview.ui.texts import node_lines
+from preview.ui.theme import Look
+from preview.ui.view import Shown
+
+
+def text_of(row) -> str:
+    return "".join(segment.text for segment in row)
+
+
+@pytest.fixture
+def desk(session, engine) -> Desk:
+    desk = Desk(session, engine)
+    desk.take(engine.snapshot)
+    return desk
+
+
+def _lines(desk: Desk, width: int, height: int) -> list[str]:
+    return [text_of(r) for r in CircuitPanel(desk, Look()).rows(width, height)]
+
+
+# ---- volts at the nodes ----
+
+
+def test_nodes_have_their_direct_voltage_and_the_peaks_that_are_measured(desk, engine) -> None:
+    desk.figures.now = Figures(rest_v={"in": 0.0, "sum": 0.003, "out": 0.033, "gnd": 0.0})
+    level = LevelReading((1.0, 2.0), (1.25, 2.5), (0.5, 0.5))
+    reading = OpAmpReading("U1", 12.5, 12.5, -12.0, 1.6, 0, 0.0, 1e5)
+    desk.take(
+        replace(engine.snapshot, input=level, output=LevelReading((9.0,), (12.5,), (3.0,)), opamps=(reading,))
+    )
+    lines = [line.split() for line in node_lines(desk)]
+    assert lines == [
+        ["node", "direct", "peak"],
+        ["in", "0", "V", "2.50", "V"],
+        ["sum", "3.00", "mV", "-"],
+        ["out", "33.0", "mV", "12.5", "V"],
+    ]
+
+
+def test_the_direct_voltage_is_that_of_the_exact_circuit(desk) -> None:
+    desk.change(with_opamp_type(desk.session, "TL072")[0])
+    desk.figures.now = compute_figures(job_of(desk.session, 0.0))
+    offset_v = desk.sites()[0].model.offset_v
+    # offset times noise gain, 1 + 100 kilohm / 10 kilohm; bias currents of a JFET type are negligible
+    assert desk.figures.now.rest_v["out"] == pytest.approx(11.0 * offset_v, rel=0.01)
+    (line,) = [line for line in node_lines(desk) if line.startswith("out")]
+    assert "33.0 mV" in line
+
+
+def test_in_bypass_the_output_is_not_called_a_peak_of_the_stage(desk, engine) -> None:
+    desk.figures.now = Figures(rest_v={"in": 0.0, "out": 0.0})
+    loud = LevelReading((7.0,), (7.0,), (7.0,))
+    desk.take(replace(engine.snapshot, bypass=True, output=loud, opamps=()))
+    (line,) = [line for line in node_lines(desk) if line.startswith("out")]
+    assert line.split()[-1] == "-"
+
+
+@pytest.mark.parametrize(
+    ("size", "drawing", "nodes"),
+    [((57, 11), False, True), ((110, 12), True, True), ((57, 20), True, True)],
+    ids=["instead", "beside", "below"],
+)
+def test_the_nodes_stand_beside_below_or_instead_of_the_drawing(desk, size, drawing, nodes) -> None:
+    desk.figures.now = Figures(rest_v={"in": 0.0, "sum": 0.0, "out": 0.0})
+    assert not any("direct" in line for line in _lines(desk, *size)), "on request only"
+    desk.method("node_volts")()
+    lines = _lines(desk, *size)
+    assert any("▸R1 10k" in line for line in lines) is drawing
+    assert any("direct" in line for line in lines) is nodes
+    assert all(len(line) <= size[0] for line in lines)
+    assert len(lines) <= size[1]
+
+
+# ---- a list where there is no drawing ----
+
+
+@pytest.fixture
+def undrawn(desk) -> Desk:
+    desk.session = replace(desk.session, stage=replace(desk.session.stage, drawing=""))
+    return desk
+
+
+def test_the_list_has_columns(undrawn) -> None:
+    lines = _lines(undrawn, 57, 8)
+    assert lines[1].startswith("▸R1  10 kΩ ")
+    places = {line.index("from") for line in lines[1:] if "from" in line}
+    assert len(places) == 1
+    assert any(re.search(r"U1  ideal +\+ gnd, - sum, out out", line) for line in lines)
+
+
+def test_the_list_follows_the_selection(undrawn) -> None:
+    undrawn.parts.choose_named("C1")
+    lines = _lines(undrawn, 57, 3)
+    assert any(line.startswith("▸C1") for line in lines)
+
+
+# ---- the mouse ----
+
+
+async def test_a_click_on_a_part_of_the_drawing_selects_it(make_app) -> None:
+    app: DeskApp = make_app()
+    async with app.run_test(size=(80, 24)) as pilot:
+        await pilot.press("f3")
+        await pilot.pause()
+        assert app.desk.view.shown is Shown.CIRCUIT
+        lines = [text_of(r) for r in app.circuit.painted]
+        y = next(n for n, line in enumerate(lines) if "C1 1n" in line)
+        await pilot.click("#circuit", offset=(lines[y].index("C1"), y))
+        await pilot.pause()
+        assert app.desk.parts.part.designator == "C1"
+        y = next(n for n, line in enumerate(lines) if "U1" in line)
+        await pilot.click("#circuit", offset=(lines[y].index("U1"), y))
+        await pilot.pause()
+        assert app.desk.view.opamp == "U1"
+        await pilot.click("#circuit", offset=(0, 0))
+        await pilot.pause()
+        assert app.desk.parts.part.designator == "C1"
+
+
+def test_a_supply_is_in_force_for_the_direct_voltages(desk) -> None:
+    desk.change(replace(desk.session, supply=Supply(9.0, 0.0)))
+    desk.figures.now = compute_figures(job_of(desk.session, 0.0))
+    assert not desk.figures.now.problem
+    assert desk.figures.now.rest_v["out"] == pytest.approx(0.0, abs=1e-3)
