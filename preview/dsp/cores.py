@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -52,6 +52,12 @@ class Core(Protocol):
 
     def clear(self) -> None:
         """Start the statistics anew."""
+
+    def limited(self) -> NDArray[np.bool_]:
+        """Whether each op-amp is at a voltage limit, at its largest current, outside its input range now, (c, k, 3)."""
+
+    def moving(self) -> tuple[NDArray[Any], ...]:
+        """Every array that changes as it runs and on which the next step depends, the statistics among them."""
 
     def reset(self, matrices: Matrices) -> None:
         """Back to rest."""
@@ -164,6 +170,15 @@ class IdealCore:
         self.stats[...] = 0.0
         y = self._state[:, self._n : self._n + self._k]
         self.stats[:, :, kernels.HIGH] = self.stats[:, :, kernels.LOW] = y
+
+    def limited(self) -> NDArray[np.bool_]:
+        """See ``Core``."""
+        never = np.zeros_like(self._limited)
+        return np.stack([self._limited, never, never], axis=2)
+
+    def moving(self) -> tuple[NDArray[Any], ...]:
+        """See ``Core``."""
+        return self._state, self._asked, self._limited, self.stats
 
     def reset(self, matrices: Matrices) -> None:  # noqa: ARG002 - nothing in it rests elsewhere than at zero
         """No charge, no current."""
@@ -333,6 +348,17 @@ class MacroCore:
     def rest_v(self, opamp: int) -> float:
         """See ``Core``."""
         return float(self._heights[2 * self._k + opamp])
+
+    def limited(self) -> NDArray[np.bool_]:
+        """See ``Core``."""
+        wall = (self._kinds - regime_kernels.AT_WALL) // 2
+        current = (wall >= 0) & (wall < self._k)
+        voltage = (self._kinds >= regime_kernels.AT_HIGH) & ~current
+        return np.stack([voltage, current, self._ranges != regime_kernels.IN_RANGE], axis=2)
+
+    def moving(self) -> tuple[NDArray[Any], ...]:
+        """See ``Core``."""
+        return self._state, self._kinds, self._ranges, self.stats, self._extremes, self._junctions
 
     def reset(self, matrices: Matrices) -> None:
         """The DC operating point without a signal."""
