@@ -22,7 +22,7 @@ from typing import TYPE_CHECKING, NoReturn
 from preview import __version__
 from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
-from preview.errors import OutputFileError, PreviewError, UsageError, printable
+from preview.errors import AudioFileError, OutputFileError, PreviewError, UsageError, printable
 
 if TYPE_CHECKING:
     from preview.analysis.answers import Answers
@@ -33,6 +33,8 @@ if TYPE_CHECKING:
 __all__ = ["main"]
 
 INTERRUPTED = 130
+LOWEST_HEARD_HZ = 8_000.0
+"""Lowest sample rate of a recording that can be listened to [Hz]."""
 ENDINGS = tuple(getattr(signal, name) for name in ("SIGTERM", "SIGHUP") if hasattr(signal, name))
 """Signals that end the program in an orderly way: told to stop, the terminal closed."""
 
@@ -114,6 +116,7 @@ def _prepare_streams() -> None:
 
 
 def _parser() -> argparse.ArgumentParser:
+    from preview.engine.logoptions import add_log_options
     from preview.engine.options import add_stage_options
 
     parser = _Parser(
@@ -153,6 +156,7 @@ def _parser() -> argparse.ArgumentParser:
         help="sample format; float (default) is 32-bit floating point",
     )
     _add_shapes(render)
+    add_log_options(render)
     add_stage_options(render)
 
     response = command("response", _response, "gain, phase, group delay, corners and impedances of the stage")
@@ -262,6 +266,10 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
             "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
         )
     info = probe(audio)
+    if info.sample_rate_hz < LOWEST_HEARD_HZ:
+        raise AudioFileError(
+            f"{audio}: {info.sample_rate_hz:g} Hz is too low to listen to", "preview check and render take it"
+        )
     session = session_from(options, audio=audio, comment=info.comment, at_end=AtEnd(options.end), stage=stage)
     _echo(session, info.warnings)
     check_stable(session.netlist())
@@ -295,6 +303,7 @@ def _warn(warnings: Iterable[str]) -> None:
 
 def _render(options: argparse.Namespace) -> int:
     from preview.audio.sink import check_output
+    from preview.engine.logoptions import assumed_full_scale, log_format, state_per_unit
     from preview.engine.options import session_from
     from preview.engine.progress import Progress
     from preview.engine.render import open_source, render
@@ -303,10 +312,13 @@ def _render(options: argparse.Namespace) -> int:
     depth = _depth(options.depth)
     audio, out = Path(options.audio), Path(options.out)
     check_output(out, [audio], depth=depth)
-    source = open_source(audio)
+    state_per_unit(options, audio)
+    source = open_source(audio, log_format(options))
     try:
         info = source.info
-        session = session_from(options, audio=audio, comment=info.comment)
+        session = session_from(
+            options, audio=audio, comment=info.comment, assumed_full_scale=assumed_full_scale(audio)
+        )
         said = source.warnings
         _echo(session, said)
         progress = Progress(info.frames, sys.stderr)

@@ -136,6 +136,7 @@ def session_from(
     comment: str = "",
     at_end: AtEnd = AtEnd.LOOP,
     stage: str = DEFAULT_STAGE,
+    assumed_full_scale: str = DEFAULT_FULL_SCALE,
 ) -> Session:
     """The session that the options describe.
 
@@ -151,6 +152,8 @@ def session_from(
         What happens at the end of the file.
     stage : str
         Stage to take where the options name none.
+    assumed_full_scale : str
+        Full scale where neither the options nor the comment state one.
 
     Raises
     ------
@@ -182,7 +185,7 @@ def session_from(
     if options.load is not None:
         load = for_option("--load", lambda: parse_load(options.load))
         notes.append(f"load {options.load.strip()} = {said(load)}")
-    full_scale, full_scale_note = _full_scale(options.full_scale, comment)
+    full_scale, full_scale_note = _full_scale(options.full_scale, comment, assumed_full_scale)
     notes.append(full_scale_note)
     session = Session(
         audio=audio,
@@ -264,14 +267,14 @@ def _opamp_types(texts: Sequence[str]) -> dict[str | None, str]:
     return found
 
 
-def _full_scale(text: str | None, comment: str) -> tuple[FullScale, str]:
+def _full_scale(text: str | None, comment: str, assumed: str) -> tuple[FullScale, str]:
     """The full scale in force and a line that says where it is from."""
     if text is not None:
         level, origin = for_option("--full-scale", lambda: parse_full_scale(text)), "as given"
     elif (stated := full_scale_in_comment(comment)) is not None:
         level, origin = stated, "from the file's comment"
     else:
-        level, origin = parse_full_scale(DEFAULT_FULL_SCALE), "assumed; --full-scale sets it"
+        level, origin = parse_full_scale(assumed), "assumed; --full-scale sets it"
     return level, f"full scale {level.text} = {format_volts(level.volts)} peak ({origin})"
 
 
