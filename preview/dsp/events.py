@@ -14,7 +14,7 @@ from typing import Literal
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp import kernels
 from preview.dsp.block import Volts
-from preview.dsp.stage import BLOCK_FRAMES, StageProcessor
+from preview.dsp.stage import BLOCK_FRAMES, Snapshot, StageProcessor
 
 __all__ = ["PIECE_FRAMES", "EventFinder", "LimitEvent", "LimitKind"]
 
@@ -23,7 +23,7 @@ LimitKind = Literal["rail", "slew"]
 Side = Literal["high", "low", ""]
 Key = tuple[LimitKind, int, int]
 
-PIECE_FRAMES = 8 * BLOCK_FRAMES
+PIECE_FRAMES = 16 * BLOCK_FRAMES
 """Most frames that are run at a time, between two kept states."""
 
 AT_LIMIT = 1.0 - 1e-9
@@ -92,7 +92,7 @@ class EventFinder:
     Parameters
     ----------
     stage : StageProcessor
-        At rest.
+        At rest, or where it shall begin.
     """
 
     def __init__(self, stage: StageProcessor) -> None:
@@ -101,25 +101,37 @@ class EventFinder:
         """Visits that have ended, in order of their ends; the caller may empty it."""
         self.frames = 0
         """Frames run so far."""
+        self.before: Snapshot = ()
+        """The stage as it was before the frames last run."""
         self._open: dict[Key, _Visit] = {}
         self._delay_frames = stage.filters.circuit_delay_frames
         models = [o.model for o in stage.netlist.opamps]
         ways = [(m.slew_up_v_per_s * stage.step_s, m.slew_down_v_per_s * stage.step_s) for m in models]
         self._slews = [(min(way), max(way)) for way in ways]
 
-    def process(self, volts_in: Volts, volts_out: Volts) -> tuple[OpAmpReading, ...]:
-        """Fill ``volts_out`` from the next ``volts_in``, at most ``PIECE_FRAMES``; the readings of these frames."""
+    def process(self, volts_in: Volts, volts_out: Volts | None) -> tuple[OpAmpReading, ...]:
+        """Run the next ``volts_in``, at most ``PIECE_FRAMES``; the readings of these frames.
+
+        ``volts_out`` is filled; with None the output is left out, from the first frames to the last.
+        """
         stage, frames = self.stage, len(volts_in)
-        before = stage.snapshot()
+        self.before = stage.snapshot()
         was = stage.core.limited().tolist()
         stage.clear_readings()
-        stage.process(volts_in, volts_out)
+        if volts_out is not None:
+            stage.process(volts_in, volts_out)
+        else:
+            for first in range(0, frames, BLOCK_FRAMES):
+                count = min(BLOCK_FRAMES, frames - first)
+                stage.raise_rate(volts_in, first, count)
+                stage.run_core(0, count)
+                stage.keep_rate(count)
         seen = self._seen(was)
         if all(one.plain for one in seen):
             self._note(self.frames, frames, seen)
         else:
             after = stage.snapshot()
-            stage.restore(before)
+            stage.restore(self.before)
             for first in range(0, frames, BLOCK_FRAMES):
                 count = min(BLOCK_FRAMES, frames - first)
                 stage.raise_rate(volts_in, first, count)
@@ -129,10 +141,45 @@ class EventFinder:
         self.frames += frames
         return stage.readings()
 
+    @property
+    def limited(self) -> bool:
+        """Whether there has been a visit, ended or not, since the events were last emptied."""
+        return bool(self.events or self._open)
+
     def finish(self) -> None:
         """End what is still at a limit where the signal now is."""
         for key in list(self._open):
             self._end(key, self._time_s(self.frames))
+
+    def peak_s(self, before: Snapshot, frame: int, volts_in: Volts, opamp: int, rest_v: float) -> float:
+        """When an op-amp's output was farthest from rest in some frames, to within a frame [s].
+
+        Parameters
+        ----------
+        before, frame, volts_in
+            The stage before these frames, the number of their first, and the frames, at most ``PIECE_FRAMES``.
+        opamp : int
+            Which op-amp, from 0.
+        rest_v : float
+            Its output at rest [V].
+        """
+        stage = self.stage
+        after = stage.snapshot()
+        stage.restore(before)
+        farthest, best = -1.0, 0
+        for first in range(0, len(volts_in), BLOCK_FRAMES):
+            count = min(BLOCK_FRAMES, len(volts_in) - first)
+            stage.raise_rate(volts_in, first, count)
+            for i in range(count):
+                stage.clear_readings()
+                stage.run_core(i, 1)
+                stats = stage.core.stats[:, opamp]
+                far = max(stats[:, kernels.HIGH].max() - rest_v, rest_v - stats[:, kernels.LOW].min())
+                if far > farthest:
+                    farthest, best = far, first + i
+            stage.keep_rate(count)
+        stage.restore(after)
+        return self._time_s(frame + best + 0.5)
 
     def _time_s(self, frames: float) -> float:
         """Time of the recording that the circuit has come to after so many frames [s]."""
