@@ -116,6 +116,7 @@ def _prepare_streams() -> None:
 
 
 def _parser() -> argparse.ArgumentParser:
+    from preview.cli_check import add_check_options
     from preview.engine.logoptions import add_log_options
     from preview.engine.options import add_stage_options
 
@@ -158,6 +159,12 @@ def _parser() -> argparse.ArgumentParser:
     _add_shapes(render)
     add_log_options(render)
     add_stage_options(render)
+
+    check = command("check", _check, "will it clip? headroom at every op-amp over whole recordings")
+    add_check_options(check)
+    _add_shapes(check)
+    add_log_options(check)
+    add_stage_options(check)
 
     response = command("response", _response, "gain, phase, group delay, corners and impedances of the stage")
     response.add_argument("--at", metavar="20,1k,20k", help="frequencies (default: third-octave steps)")
@@ -347,6 +354,12 @@ def _depth(text: str) -> Depth:
         if depth == text:
             return depth
     raise UsageError(f"--depth {text}: no such sample format", f"one of {', '.join(DEPTHS)}")
+
+
+def _check(options: argparse.Namespace) -> int:
+    from preview.cli_check import run_check
+
+    return run_check(options, _say, print)
 
 
 # -- response and lists

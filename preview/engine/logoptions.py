@@ -56,10 +56,8 @@ def state_per_unit(options: argparse.Namespace, audio: Path) -> None:
     UsageError
         An option for logs with a recording, or two options for one scale.
     """
-    given = [n for n in ("column", "time", "rate", "per_unit") if getattr(options, n)]
     if not is_log(audio):
-        if given:
-            raise UsageError(f"--{given[0].replace('_', '-')} is for logs, .csv and .tsv", "leave it out")
+        refuse_log_options(options)
         return
     if options.per_unit is not None:
         if options.full_scale is not None:
@@ -68,6 +66,13 @@ def state_per_unit(options: argparse.Namespace, audio: Path) -> None:
             )
         per_unit(options)
         options.full_scale = options.per_unit
+
+
+def refuse_log_options(options: argparse.Namespace) -> None:
+    """Raise UsageError for options that are for logs: there is none."""
+    for name in ("column", "time", "rate", "per_unit"):
+        if getattr(options, name):
+            raise UsageError(f"--{name.replace('_', '-')} is for logs, .csv and .tsv", "leave it out")
 
 
 def assumed_full_scale(audio: Path) -> str:

@@ -58,6 +58,7 @@ VALUE_OPTIONS = (
     "--depth",
     "--device",
     "--end",
+    "--limit",
 )
 """Options that take a text; one that begins with a minus sign belongs to them all the same."""
 
