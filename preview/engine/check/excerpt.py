@@ -11,9 +11,9 @@ from preview import __version__
 from preview.audio.logs import is_log, open_signal
 from preview.audio.sink import FileSink, holds_volts
 from preview.dsp.block import Volts
+from preview.dsp.settle import memory_s
 from preview.engine.check.results import CheckPlan, FileCheck
 from preview.engine.check.run import Signal, Stages, pieces, settle_at
-from preview.engine.settle import memory_s
 from preview.values.levels import FullScale, full_scale_comment
 
 __all__ = ["Moment", "cut_out", "excerpt", "worst_moments"]

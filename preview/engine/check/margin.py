@@ -16,10 +16,10 @@ import numpy as np
 
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.events import PIECE_FRAMES, EventFinder
+from preview.dsp.settle import memory_s
 from preview.engine.check.results import Margin, Proof
 from preview.engine.check.run import Load, Signal, Stages, WholeRun, loads, pieces, settle_at
 from preview.engine.loop import joined_readings
-from preview.engine.settle import memory_s
 
 __all__ = ["find_margin"]
 

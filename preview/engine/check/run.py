@@ -14,12 +14,12 @@ from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
 from preview.dsp.events import PIECE_FRAMES, EventFinder, LimitEvent
+from preview.dsp.settle import settle
 from preview.dsp.stage import Snapshot, StageProcessor
 from preview.engine.check.levels import Levels
 from preview.engine.check.results import Limit, OpAmpCheck
 from preview.engine.check.trace import Trace
 from preview.engine.loop import Samples, joined_readings
-from preview.engine.settle import settle
 from preview.errors import CircuitError
 from preview.session import Session
 

@@ -15,7 +15,6 @@ __all__ = ["memory_s", "settle"]
 
 LONGEST_S, TIMES = 60.0, 20.0
 """Longest time that is waited for [s], and how many of the circuit's longest time constants are."""
-FASTEST_HZ = 8_000.0
 
 
 def memory_s(netlist: Netlist, times: float) -> float:
