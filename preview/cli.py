@@ -117,6 +117,7 @@ def _prepare_streams() -> None:
 
 def _parser() -> argparse.ArgumentParser:
     from preview.cli_check import add_check_options
+    from preview.cli_distortion import add_distortion_options
     from preview.engine.logoptions import add_log_options
     from preview.engine.options import add_stage_options
 
@@ -187,6 +188,7 @@ def _parser() -> argparse.ArgumentParser:
     response.add_argument("--draw", action="store_true", help="the gain curve too, in plain characters")
     response.add_argument("--plot", metavar="FILE", help="a picture too: FILE.png or FILE.svg")
     response.add_argument("--prewarp", metavar="HZ", help="frequency at which the sections are exact")
+    add_distortion_options(response)
     _add_shapes(response)
     add_stage_options(response)
 
@@ -366,6 +368,10 @@ def _check(options: argparse.Namespace) -> int:
 
 
 def _response(options: argparse.Namespace) -> int:
+    if options.distortion:
+        from preview.cli_distortion import run_distortion
+
+        return run_distortion(options, _say, print)
     from preview.analysis import table as tables
     from preview.analysis.answers import answers
     from preview.engine.options import check_together, frequency_of, session_from, understood_values

@@ -59,6 +59,7 @@ VALUE_OPTIONS = (
     "--device",
     "--end",
     "--limit",
+    "--level",
 )
 """Options that take a text; one that begins with a minus sign belongs to them all the same."""
 
@@ -290,6 +291,9 @@ def _quality(text: str) -> Quality:
 
 def check_together(options: argparse.Namespace) -> None:
     """Refuse options of ``response`` that do nothing beside the others."""
+    if options.level or options.sweep:
+        alone = "--sweep" if options.sweep else "--level"
+        raise UsageError(f"{alone} is for --distortion", "add it or leave it out")
     if options.plot is not None:
         picture_kind(options.plot)
     if options.draw and (options.json or options.csv):
