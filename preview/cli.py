@@ -58,6 +58,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             signal.signal(number, _terminated)
         _prepare_streams()
         options = _parser().parse_args(join_signed_values(given))
+        options.words = given
         code = int(options.run(options))
         if sys.stdout is not None:
             sys.stdout.flush()

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import argparse
+import shlex
 import sys
 from collections.abc import Callable, Iterable
 from contextlib import closing
@@ -11,7 +12,7 @@ from typing import TYPE_CHECKING
 
 from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
-from preview.errors import AudioFileError, CircuitError, PreviewError, UsageError, printable
+from preview.errors import AudioFileError, CircuitError, OutputFileError, PreviewError, UsageError, printable
 
 if TYPE_CHECKING:
     from preview.engine.check.record import Record
@@ -47,6 +48,12 @@ def add_check_options(parser: argparse.ArgumentParser) -> None:
         metavar="FILE",
         help="keep results there as they come, and take up what it holds",
     )
+    parser.add_argument(
+        "--report",
+        type=Path,
+        metavar="FILE",
+        help="write a page with pictures and conditions: FILE.html or FILE.md",
+    )
     parser.add_argument("--workers", metavar="N", help="processes at once (default: one for each core)")
     parser.add_argument(
         "--settled", action="store_true", help="the first value was there long before (logs: always)"
@@ -76,6 +83,8 @@ def run_check(options: argparse.Namespace, say: Say, show: Say) -> int:
     from preview.engine.check.record import Record
     from preview.engine.check.wants import parse_want
 
+    if options.report is not None:
+        _check_page_place(options.report)
     wants = tuple(parse_want(text) for text in options.limit)
     workers = _workers(options.workers)
     paths = signal_files(options.audio)
@@ -95,6 +104,9 @@ def run_check(options: argparse.Namespace, say: Say, show: Say) -> int:
     report = _report(plan, files, failures, complete, wants)
     if complete and options.cut is not None:
         _cut(report, options.cut, say)
+    if options.report is not None:
+        _write_page(report, options)
+        say(f"  {printable(str(options.report))}")
     show(_text(report, options))
     if not complete:
         raise KeyboardInterrupt
@@ -216,6 +228,24 @@ def _report(
         },
         complete=complete,
     )
+
+
+def _check_page_place(path: Path) -> None:
+    """Refuse, before anything is computed, a page that cannot be written."""
+    from preview.report import page_kind
+
+    page_kind(path)
+    if not path.parent.is_dir():
+        raise OutputFileError(f"{printable(str(path.parent))}: no such folder", "make it first")
+    if path.is_dir():
+        raise OutputFileError(f"{printable(str(path))}: is a folder")
+
+
+def _write_page(report: CheckReport, options: argparse.Namespace) -> None:
+    from preview.report import check_page, page_kind
+
+    command = shlex.join(["preview", *options.words])
+    options.report.write_text(check_page(report, command, page_kind(options.report)), encoding="utf-8")
 
 
 def _cut(report: CheckReport, folder: Path, say: Say) -> None:

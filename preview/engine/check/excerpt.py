@@ -14,7 +14,8 @@ from preview.dsp.block import Volts
 from preview.dsp.settle import memory_s
 from preview.engine.check.results import CheckPlan, FileCheck
 from preview.engine.check.run import Signal, Stages, pieces, settle_at
-from preview.values.levels import FullScale, full_scale_comment
+from preview.values.levels import FullScale, format_volts, full_scale_comment
+from preview.values.notation import format_value
 
 __all__ = ["Moment", "cut_out", "excerpt", "worst_moments"]
 
@@ -35,18 +36,29 @@ class Moment:
     """Which op-amp was at its worst."""
     what: str
     """What it did, in words."""
+    length_s: float = 0.0
+    """How long [s]; 0 for a peak."""
+    channel: int = 0
+    """Channel, counted from 1; 0 where it is not known."""
 
 
 def worst_moments(found: FileCheck, most: int = 3) -> list[Moment]:
     """The longest visits to a rail, or where there are none the peak of each op-amp; the worst first."""
     visits = sorted((e for e in found.events if e.kind == "rail"), key=lambda e: -e.length_s)
     listed = [
-        Moment(e.start_s, e.designator, f"at the {e.side} rail for {e.length_s * 1e3:.3g} ms") for e in visits
+        Moment(
+            e.start_s,
+            e.designator,
+            f"at the {e.side} rail for {format_value(e.length_s, 'time')}",
+            e.length_s,
+            e.channel,
+        )
+        for e in visits
     ]
     clipped = {m.opamp for m in listed}
     rest = [o for o in found.opamps if o.name not in clipped and o.worst_s == o.worst_s]
     for opamp in sorted(rest, key=lambda o: o.headroom_db):
-        listed.append(Moment(opamp.worst_s, opamp.name, f"peak {opamp.peak_v:.3g} V"))
+        listed.append(Moment(opamp.worst_s, opamp.name, f"peak {format_volts(opamp.peak_v)}"))
     kept: list[Moment] = []
     for moment in listed:
         apart_s = APART * (BEFORE_S + AFTER_S) * _slowness(found.sample_rate_hz)

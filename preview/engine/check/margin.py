@@ -15,10 +15,10 @@ from dataclasses import dataclass
 import numpy as np
 
 from preview.circuit.opamp import OpAmpReading
-from preview.dsp.events import PIECE_FRAMES, EventFinder
+from preview.dsp.events import EventFinder
 from preview.dsp.settle import memory_s
 from preview.engine.check.results import Margin, Proof
-from preview.engine.check.run import Load, Signal, Stages, WholeRun, loads, pieces, settle_at
+from preview.engine.check.run import Load, Signal, Stages, WholeRun, loads, piece_frames, pieces, settle_at
 from preview.engine.loop import joined_readings
 
 __all__ = ["find_margin"]
@@ -33,7 +33,7 @@ FAINTEST = 1e-6
 """Gain below which a recording that does not come clean is given up."""
 RUN_IN_S, RUN_IN_TIMES = (0.05, 5.0), 12.0
 """Shortest and longest run-in before a passage [s], and how many of the circuit's longest time constants."""
-PASSAGE_FRAMES = 4 * PIECE_FRAMES
+PASSAGE_PIECES = 4
 """Length of a passage."""
 
 
@@ -76,9 +76,9 @@ class _Search:
         self._passages = list(whole.worst_frames)
         net = stages.netlist
         self._linear = not net.ports and not any(o.model.crossover_v > 0.0 for o in net.opamps)
-        self._run_in_frames = PIECE_FRAMES * math.ceil(
-            float(np.clip(memory_s(net, RUN_IN_TIMES), *RUN_IN_S)) * signal.sample_rate_hz / PIECE_FRAMES
-        )
+        run_in_s = float(np.clip(memory_s(net, RUN_IN_TIMES), *RUN_IN_S))
+        self._piece = piece_frames(signal.sample_rate_hz)
+        self._run_in_frames = self._piece * math.ceil(run_in_s * signal.sample_rate_hz / self._piece)
 
     def find(self) -> Margin | None:
         if not self._whole.loads:
@@ -159,7 +159,7 @@ class _Search:
     def _passage(self, frame: int, gain: float) -> _Outcome:
         """What a passage comes to, the circuit run in by what is before it."""
         first = max(0, frame - self._run_in_frames)
-        return self._run(first, frame - first, PASSAGE_FRAMES, gain)
+        return self._run(first, frame - first, PASSAGE_PIECES * self._piece, gain)
 
     def _run(self, first: int, run_in: int, frames: int | None, gain: float) -> _Outcome:
         """Some frames at one level, up to where something limits.

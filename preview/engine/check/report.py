@@ -132,23 +132,21 @@ class CheckReport:
         ]
 
     def lines(self) -> list[str]:
-        """Tables of op-amps and of levels, and what is to be said besides."""
-        if not self.files:
-            return self._said()
-        names = _short([found.path for found in self.files])
+        """Tables of op-amps, of levels and of margins, and what is to be said besides."""
+        lines: list[str] = []
+        for heads, rows in self.tables():
+            lines += [*columns(heads, rows), ""]
+        return lines + self.said()
+
+    def tables(self) -> list[tuple[Sequence[str], list[list[str]]]]:
+        """Heads and rows of each table."""
+        named = list(zip(self.files, _short([found.path for found in self.files]), strict=True))
+        if not named:
+            return []
         return [
-            *columns(
-                _OPAMP_HEADS,
-                [row for f, n in zip(self.files, names, strict=True) for row in _opamps(f, n)],
-            ),
-            "",
-            *columns(
-                _LEVEL_HEADS, [row for f, n in zip(self.files, names, strict=True) for row in _levels(f, n)]
-            ),
-            "",
-            *columns(_MARGIN_HEADS, [self._margins(f, n) for f, n in zip(self.files, names, strict=True)]),
-            "",
-            *self._said(),
+            (_OPAMP_HEADS, [row for found, name in named for row in _opamps(found, name)]),
+            (_LEVEL_HEADS, [row for found, name in named for row in _levels(found, name)]),
+            (_MARGIN_HEADS, [self._margins(found, name) for found, name in named]),
         ]
 
     def event_lines(self) -> list[str]:
@@ -184,11 +182,12 @@ class CheckReport:
             name,
             f"{margin.gain_db:+.2f} dB",
             f"{margin.limited_by} {margin.limit}",
-            margin.proof,
+            _RUN[margin.proof],
             any_text,
         ]
 
-    def _said(self) -> list[str]:
+    def said(self) -> list[str]:
+        """What is to be said of all together, a line each."""
         lines = [
             f"{sum(f.length_s for f in self.files):.1f} s of signal in {_count(len(self.files), 'file')}; "
             f"{_clipping(self.files)}"

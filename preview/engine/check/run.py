@@ -23,7 +23,17 @@ from preview.engine.loop import Samples, joined_readings
 from preview.errors import CircuitError
 from preview.session import Session
 
-__all__ = ["EVENTS_KEPT", "Load", "Signal", "Stages", "WholeRun", "loads", "pieces", "settle_at"]
+__all__ = [
+    "EVENTS_KEPT",
+    "Load",
+    "Signal",
+    "Stages",
+    "WholeRun",
+    "loads",
+    "piece_frames",
+    "pieces",
+    "settle_at",
+]
 
 EVENTS_KEPT = 20_000
 """Visits of one recording that are kept with their times; beyond these they are only counted."""
@@ -50,10 +60,11 @@ class Signal(Protocol):
 
 
 class Stages:
-    """Running stages of one circuit, kept from recording to recording."""
+    """Running stages of one circuit, kept from recording to recording; listened to at another node if one is named."""
 
-    def __init__(self, session: Session) -> None:
-        self.netlist: Netlist = session.netlist()
+    def __init__(self, session: Session, *, output_node: str = "") -> None:
+        netlist = session.netlist()
+        self.netlist: Netlist = replace(netlist, output_node=output_node) if output_node else netlist
         self._quality = session.quality
         self._made: dict[tuple[float, int], StageProcessor] = {}
 
@@ -105,6 +116,11 @@ def _share(used: float, limit: float) -> float:
     return max(used, 0.0) / limit if limit > 0.0 else math.inf
 
 
+def piece_frames(sample_rate_hz: float) -> int:
+    """Frames that are run at a time: a twentieth of a second, within bounds."""
+    return int(np.clip(sample_rate_hz / 20.0, 64, PIECE_FRAMES))
+
+
 def settle_at(stage: StageProcessor, signal: Signal, scale_v: float, frame: int) -> None:
     """Let a stage come to rest with one frame of the signal."""
     first = np.zeros((1, signal.channels))
@@ -116,17 +132,18 @@ def settle_at(stage: StageProcessor, signal: Signal, scale_v: float, frame: int)
 def pieces(
     signal: Signal, scale_v: float, first: int = 0, frames: int | None = None, *, hold: int = 0
 ) -> Iterator[tuple[Volts, int]]:
-    """The signal in volts, ``PIECE_FRAMES`` at a time, and how many frames of each are the recording's own.
+    """The signal in volts, ``piece_frames`` at a time, and how many frames of each are the recording's own.
 
     If its end is reached its last value is held for a piece of ``hold`` frames: in it the last samples come through.
     """
-    samples = np.zeros((PIECE_FRAMES, signal.channels))
-    volts = np.zeros_like(samples)
+    piece = piece_frames(signal.sample_rate_hz)
+    samples = np.zeros((piece, signal.channels))
+    volts = np.zeros((max(piece, hold), signal.channels))
     signal.seek(first)
     left = frames
     last = np.zeros(signal.channels)
     while left is None or left > 0:
-        want = PIECE_FRAMES if left is None else min(left, PIECE_FRAMES)
+        want = piece if left is None else min(left, piece)
         count = signal.read(samples[:want])
         if count == 0:
             if hold:
@@ -197,7 +214,7 @@ class WholeRun:
         """Visits to limits, as far as they are kept."""
         self.input = Levels(self._rate_hz, signal.channels, full_scale_v)
         self.output = Levels(self._rate_hz, signal.channels, full_scale_v)
-        self.trace = Trace(PIECE_FRAMES / self._rate_hz, len(self._netlist.opamps))
+        self.trace = Trace(piece_frames(self._rate_hz) / self._rate_hz, len(self._netlist.opamps))
         self.loads: list[Load] = []
         """The most that was used of each limit."""
         self.readings: tuple[OpAmpReading, ...] = ()
@@ -303,7 +320,7 @@ class WholeRun:
 
     def _remember(self, load: float, frame: int) -> None:
         """Keep the worst pieces, one of each neighbourhood."""
-        near = [w for w in self._worst if abs(w[1] - frame) < 16 * PIECE_FRAMES]
+        near = [w for w in self._worst if abs(w[1] - frame) < 16 * piece_frames(self._rate_hz)]
         if near and near[0][0] >= load:
             return
         for other in near:
