@@ -23,7 +23,7 @@ from typing import TYPE_CHECKING, NoReturn
 from preview import __version__
 from preview.engine.csvtext import csv_text
 from preview.engine.jsontext import json_text
-from preview.errors import PreviewError, UsageError, debugging, printable
+from preview.errors import AudioFileError, OutputFileError, PreviewError, UsageError, debugging, printable
 
 if TYPE_CHECKING:
     from preview.analysis.answers import Answers
@@ -34,6 +34,8 @@ if TYPE_CHECKING:
 __all__ = ["main"]
 
 INTERRUPTED = 130
+LOWEST_HEARD_HZ = 8_000.0
+"""Lowest sample rate of a recording that can be listened to [Hz]."""
 ENDINGS = tuple(getattr(signal, name) for name in ("SIGTERM", "SIGHUP") if hasattr(signal, name))
 """Signals that end the program in an orderly way: told to stop, the terminal closed."""
 
@@ -61,6 +63,7 @@ def main(arguments: Sequence[str] | None = None) -> int:
             signal.signal(number, _terminated)
         _prepare_streams()
         options = _parser().parse_args(join_signed_values(given))
+        options.words = given
         code = int(options.run(options))
         if sys.stdout is not None:
             sys.stdout.flush()
@@ -119,6 +122,9 @@ def _prepare_streams() -> None:
 
 
 def _parser() -> argparse.ArgumentParser:
+    from preview.cli_check import add_check_options
+    from preview.cli_distortion import add_distortion_options
+    from preview.engine.logoptions import add_log_options
     from preview.engine.options import add_stage_options
 
     parser = _Parser(
@@ -163,7 +169,14 @@ def _parser() -> argparse.ArgumentParser:
         help="sample format; float (default) is 32-bit floating point",
     )
     _add_shapes(render)
+    add_log_options(render)
     add_stage_options(render)
+
+    check = command("check", _check, "will it clip? headroom at every op-amp over whole recordings")
+    add_check_options(check)
+    _add_shapes(check)
+    add_log_options(check)
+    add_stage_options(check)
 
     response = command("response", _response, "gain, phase, group delay, corners and impedances of the stage")
     response.add_argument("--at", metavar="20,1k,20k", help="frequencies (default: third-octave steps)")
@@ -186,6 +199,7 @@ def _parser() -> argparse.ArgumentParser:
     response.add_argument("--draw", action="store_true", help="the gain curve too, in plain characters")
     response.add_argument("--plot", metavar="FILE", help="a picture too: FILE.png or FILE.svg")
     response.add_argument("--prewarp", metavar="HZ", help="frequency at which the sections are exact")
+    add_distortion_options(response)
     _add_shapes(response)
     add_stage_options(response)
 
@@ -274,6 +288,10 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
             "listen needs a file, it cannot go back in a pipe", "write the audio to a file first"
         )
     info = probe(audio) if audio is not None else None
+    if info is not None and info.sample_rate_hz < LOWEST_HEARD_HZ:
+        raise AudioFileError(
+            f"{audio}: {info.sample_rate_hz:g} Hz is too low to listen to", "preview check and render take it"
+        )
     comment = info.comment if info is not None else ""
     session = session_from(options, audio=audio, comment=comment, at_end=AtEnd(options.end), stage=stage)
     session = replace(session, notes=(*session.notes, *intake.pop("notes", ())), **intake)
@@ -320,6 +338,7 @@ def _warn(warnings: Iterable[str]) -> None:
 
 def _render(options: argparse.Namespace) -> int:
     from preview.audio.sink import check_output
+    from preview.engine.logoptions import assumed_full_scale, log_format, state_per_unit
     from preview.engine.options import session_from
     from preview.engine.progress import Progress
     from preview.engine.render import open_source, render
@@ -328,10 +347,13 @@ def _render(options: argparse.Namespace) -> int:
     depth = _depth(options.depth)
     audio, out = Path(options.audio), Path(options.out)
     check_output(out, [audio], depth=depth)
-    source = open_source(audio)
+    state_per_unit(options, audio)
+    source = open_source(audio, log_format(options))
     try:
         info = source.info
-        session = session_from(options, audio=audio, comment=info.comment)
+        session = session_from(
+            options, audio=audio, comment=info.comment, assumed_full_scale=assumed_full_scale(audio)
+        )
         said = source.warnings
         _echo(session, said)
         progress = Progress(info.frames, sys.stderr)
@@ -362,10 +384,20 @@ def _depth(text: str) -> Depth:
     raise UsageError(f"--depth {text}: no such sample format", f"one of {', '.join(DEPTHS)}")
 
 
+def _check(options: argparse.Namespace) -> int:
+    from preview.cli_check import run_check
+
+    return run_check(options, _say, print)
+
+
 # -- response and lists
 
 
 def _response(options: argparse.Namespace) -> int:
+    if options.distortion:
+        from preview.cli_distortion import run_distortion
+
+        return run_distortion(options, _say, print)
     from preview.analysis import table as tables
     from preview.analysis.answers import answers
     from preview.engine.options import check_together, frequency_of, session_from, understood_values

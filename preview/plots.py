@@ -28,11 +28,13 @@ if TYPE_CHECKING:
     from preview.analysis.answers import Answers
     from preview.session import Session
 
-__all__ = ["response_picture"]
+__all__ = ["INKS", "STYLE", "picture_bytes", "response_picture"]
 
 _PAPER, _INK, _FAINT, _RULE = "#fcfcf9", "#1c2b33", "#66757d", "#dcdfd8"
 _DRIVEN, _DRAWN, _BETWEEN, _CORNER = "#0a5a63", "#b8651b", "#94a5a1", "#8c2f39"
-_STYLE: Any = {
+INKS = (_DRIVEN, _DRAWN, _CORNER, "#5b4b8a", "#3d7a3d", "#94772a", "#4a6fa5", "#7a4a6b")
+"""Colours of curves side by side."""
+STYLE: Any = {
     "figure.facecolor": _PAPER,
     "axes.facecolor": _PAPER,
     "axes.edgecolor": _FAINT,
@@ -75,7 +77,7 @@ def response_picture(session: Session, found: Answers, kind: Literal["png", "svg
         The circuit cannot be computed.
     """
     drawn = curves(session, _POINTS)
-    with mpl.rc_context(_STYLE):
+    with mpl.rc_context(STYLE):
         page = Figure(figsize=(8.0, 9.2), dpi=150)
         FigureCanvasAgg(page)
         grid = page.add_gridspec(
@@ -99,11 +101,16 @@ def response_picture(session: Session, found: Answers, kind: Literal["png", "svg
         _figures(page.add_subplot(grid[2, 1]), found)
         note = f"Preview {__version__}: the exact circuit, small signal"
         page.text(0.965, 0.022, note, size=7.5, color=_FAINT, ha="right")
-        out = io.BytesIO()
-        metadata = {"Date": None} if kind == "svg" else {"Software": f"Preview {__version__}"}
-        with warnings.catch_warnings():
-            warnings.filterwarnings("ignore", "Glyph")  # a title may have letters that the fonts have not
-            page.savefig(out, format=kind, metadata=metadata)
+        return picture_bytes(page, kind)
+
+
+def picture_bytes(page: Figure, kind: Literal["png", "svg"]) -> bytes:
+    """A page as the bytes of a file, the same ones each time; within ``STYLE``."""
+    out = io.BytesIO()
+    metadata = {"Date": None} if kind == "svg" else {"Software": f"Preview {__version__}"}
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", "Glyph")  # a title may have letters that the fonts have not
+        page.savefig(out, format=kind, metadata=metadata)
     return out.getvalue()
 
 

@@ -53,8 +53,8 @@ def test_every_command_in_the_readme_is_a_command() -> None:
     from preview.cli import _parser
 
     readme = (TOP / "README.md").read_text("utf-8")
-    named = set(re.findall(r"preview (listen|render|response|stages|opamps|devices|[a-z]+) ", readme))
+    named = set(re.findall(r"preview (listen|render|check|response|stages|opamps|devices|[a-z]+) ", readme))
     commands = next(a for a in _parser()._actions if getattr(a, "choices", None)).choices
-    assert {"listen", "render", "response", "stages"} <= named
-    assert {n for n in named if n in ("check", "noise", "sheet")} == set()
-    assert set(commands or ()) >= {"listen", "render", "response", "stages", "opamps", "devices"}
+    assert {"listen", "render", "check", "response", "stages"} <= named
+    assert {n for n in named if n in ("noise", "sheet")} == set()
+    assert set(commands or ()) >= {"listen", "render", "check", "response", "stages", "opamps", "devices"}

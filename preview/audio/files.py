@@ -28,7 +28,7 @@ __all__ = [
     "reason",
 ]
 
-SAMPLE_RATE_MIN_HZ = 8_000
+SAMPLE_RATE_MIN_HZ = 10
 SAMPLE_RATE_MAX_HZ = 192_000
 CHANNELS_MAX = 64
 UNKNOWN_FRAMES = -1
@@ -65,8 +65,8 @@ class FileInfo:
     """Length in frames; ``UNKNOWN_FRAMES`` where a pipe does not say."""
     channels: int
     """Number of channels."""
-    sample_rate_hz: int
-    """Sample rate [Hz]."""
+    sample_rate_hz: float
+    """Sample rate [Hz]; whole but for logs."""
     format: str
     """Container, such as WAV or FLAC."""
     subtype: str

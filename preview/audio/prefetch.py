@@ -37,7 +37,7 @@ class SeekableSource(Protocol):
         """Number of channels."""
 
     @property
-    def sample_rate_hz(self) -> int:
+    def sample_rate_hz(self) -> float:
         """Sample rate [Hz]."""
 
     @property

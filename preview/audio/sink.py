@@ -17,10 +17,17 @@ from numpy.typing import NDArray
 from preview.audio.files import CHANNELS_MAX, reason
 from preview.audio.quantise import Quantiser
 from preview.audio.wavefile import DEPTHS, Depth, sample_bytes
-from preview.audio.writers import NO_COMMENT_FORMATS, LibraryWriter, PipeWriter, WaveWriter, Writer
+from preview.audio.writers import (
+    NO_COMMENT_FORMATS,
+    LibraryWriter,
+    PipeWriter,
+    TextWriter,
+    WaveWriter,
+    Writer,
+)
 from preview.errors import OutputFileError, UsageError
 
-__all__ = ["ENDINGS", "Depth", "FileSink", "check_output", "keeps_comment"]
+__all__ = ["ENDINGS", "Depth", "FileSink", "check_output", "holds_volts", "keeps_comment"]
 
 _FORMATS = {
     ".wav": "WAV",
@@ -31,9 +38,13 @@ _FORMATS = {
     ".caf": "CAF",
     ".au": "AU",
     ".flac": "FLAC",
+    ".csv": "CSV",
+    ".tsv": "TSV",
 }
-ENDINGS = tuple(_FORMATS)
-"""Endings of a file's name that can be written."""
+TEXTS = {"CSV": ",", "TSV": "\t"}
+"""Logs of numbers, and what stands between their cells."""
+ENDINGS = tuple(ending for ending, kind in _FORMATS.items() if kind not in TEXTS)
+"""Endings of sound files that can be written."""
 
 _FLAC_CHANNELS_MAX = 8
 _SIZE_32_FORMATS = ("AIFF", "AU")
@@ -43,6 +54,11 @@ _SIZE_32_MAX = (1 << 32) - 65_536
 def keeps_comment(path: Path) -> bool:
     """Whether the kind of file that the name's ending asks for has room for a comment."""
     return _FORMATS.get(path.suffix.lower()) not in NO_COMMENT_FORMATS
+
+
+def holds_volts(path: Path) -> bool:
+    """Whether what the name's ending asks for holds plain volts: a sample of 1.0 is 1 V."""
+    return _FORMATS.get(path.suffix.lower()) in TEXTS
 
 
 def check_output(
@@ -71,7 +87,9 @@ def check_output(
     kind = _FORMATS.get(path.suffix.lower())
     if kind is None:
         found = f"the ending {path.suffix}" if path.suffix else "a name without ending"
-        raise UsageError(f"{path}: {found} does not say what to write", f"write one of {' '.join(ENDINGS)}")
+        raise UsageError(f"{path}: {found} does not say what to write", f"write one of {' '.join(_FORMATS)}")
+    if kind in TEXTS and depth != "float":
+        raise UsageError(f"{path}: a log holds numbers, not samples of {depth} bits", "leave --depth out")
     if kind == "FLAC" and depth == "float":
         raise UsageError(f"{path}: FLAC holds no float samples", "add --depth 16 or --depth 24")
     if kind == "FLAC" and channels > _FLAC_CHANNELS_MAX:
@@ -157,8 +175,12 @@ class FileSink:
         self._temporary: Path | None = None
         self._target = path
         self._done = False
-        rate = round(sample_rate_hz)
         self._kind = "WAV" if os.fspath(path) == "-" else _FORMATS[path.suffix.lower()]
+        rate = round(sample_rate_hz)
+        if rate != sample_rate_hz and self._kind not in TEXTS:
+            raise UsageError(
+                f"{path}: {sample_rate_hz:g} Hz; sound files hold whole sample rates", "write .csv or .tsv"
+            )
         self._writer: Writer
         if os.fspath(path) == "-":
             self._writer = PipeWriter(stdout, self._quantiser, rate, channels, comment)
@@ -166,7 +188,11 @@ class FileSink:
         self._target = Path(os.path.realpath(path))
         try:
             self._temporary = _create_beside(self._target)
-            if self._kind in ("WAV", "RF64"):
+            if self._kind in TEXTS:
+                self._writer = TextWriter(
+                    self._temporary, sample_rate_hz, channels, comment, TEXTS[self._kind]
+                )
+            elif self._kind in ("WAV", "RF64"):
                 rf64 = True if self._kind == "RF64" else None
                 self._writer = WaveWriter(self._temporary, self._quantiser, rate, channels, comment, rf64)
             else:

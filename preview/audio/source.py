@@ -42,7 +42,7 @@ class _Source:
         return self.info.channels
 
     @property
-    def sample_rate_hz(self) -> int:
+    def sample_rate_hz(self) -> float:
         """Sample rate [Hz]."""
         return self.info.sample_rate_hz
 

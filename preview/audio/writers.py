@@ -17,7 +17,7 @@ from preview.audio.quantise import Quantiser
 from preview.audio.wavefile import wave_header
 from preview.errors import OutputFileError
 
-__all__ = ["NO_COMMENT_FORMATS", "LibraryWriter", "PipeWriter", "WaveWriter", "Writer"]
+__all__ = ["NO_COMMENT_FORMATS", "LibraryWriter", "PipeWriter", "TextWriter", "WaveWriter", "Writer"]
 
 NO_COMMENT_FORMATS = ("W64", "AU")
 """Kinds of file into which the library writes no comment."""
@@ -174,6 +174,37 @@ class LibraryWriter:
     def close(self) -> None:
         with contextlib.suppress(soundfile.SoundFileError):
             self._file.close()
+
+
+class TextWriter:
+    """A log of numbers: a comment, names, then a row a sample with its time."""
+
+    def __init__(
+        self, path: Path, sample_rate_hz: float, channels: int, comment: str, delimiter: str
+    ) -> None:
+        self._rate_hz, self._delimiter = sample_rate_hz, delimiter
+        self._rows = 0
+        names = ["out [V]"] if channels == 1 else [f"out {c + 1} [V]" for c in range(channels)]
+        self._file = open(path, "wb", buffering=0)  # noqa: SIM115 - closed by close()
+        try:
+            write_all(self._file, f"# {comment}\n{delimiter.join(['time [s]', *names])}\n".encode())
+        except BaseException:
+            self._file.close()
+            raise
+
+    def write(self, samples: NDArray[np.float64]) -> None:
+        times = (self._rows + np.arange(len(samples))) / self._rate_hz
+        rows = zip(times.tolist(), samples.tolist(), strict=True)
+        lines = [self._delimiter.join([f"{at:.12g}", *(f"{v:.10g}" for v in row)]) for at, row in rows]
+        self._rows += len(lines)
+        if lines:
+            write_all(self._file, ("\n".join(lines) + "\n").encode())
+
+    def finish(self) -> None:
+        self._file.close()
+
+    def close(self) -> None:
+        self._file.close()
 
 
 def write_all(file: RawFile, data: bytes) -> None:

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import Protocol
+from typing import Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -64,6 +64,12 @@ class Core(Protocol):
 
     def first_name(self) -> str:
         """The first op-amp, or diode where there is none, to name when no solution is found."""
+
+    def limited(self) -> NDArray[np.bool_]:
+        """Whether each op-amp is at a voltage limit, at its largest current, outside its input range now, (c, k, 3)."""
+
+    def moving(self) -> tuple[NDArray[Any], ...]:
+        """Every array that changes as it runs and on which the next step depends, the statistics among them."""
 
     def reset(self, matrices: Matrices) -> None:
         """Back to rest."""
@@ -194,6 +200,15 @@ class IdealCore:
         if np.all(worst < BEYOND_BELIEF):
             return None
         return self._topology.state_name(int(np.argmax(np.where(np.isfinite(worst), worst, np.inf))))
+
+    def limited(self) -> NDArray[np.bool_]:
+        """See ``Core``."""
+        never = np.zeros_like(self._limited)
+        return np.stack([self._limited, never, never], axis=2)
+
+    def moving(self) -> tuple[NDArray[Any], ...]:
+        """See ``Core``."""
+        return self._state, self._asked, self._limited, self.stats
 
     def reset(self, matrices: Matrices) -> None:  # noqa: ARG002 - nothing in it rests elsewhere than at zero
         """No charge, no current."""
@@ -423,6 +438,17 @@ class MacroCore:
     def rest_v(self, opamp: int) -> float:
         """See ``Core``."""
         return float(self._heights[2 * self._k + opamp])
+
+    def limited(self) -> NDArray[np.bool_]:
+        """See ``Core``."""
+        wall = (self._kinds - regime_kernels.AT_WALL) // 2
+        current = (wall >= 0) & (wall < self._k)
+        voltage = (self._kinds >= regime_kernels.AT_HIGH) & ~current
+        return np.stack([voltage, current, self._ranges != regime_kernels.IN_RANGE], axis=2)
+
+    def moving(self) -> tuple[NDArray[Any], ...]:
+        """See ``Core``."""
+        return self._state, self._kinds, self._ranges, self.stats, self._extremes, self._junctions
 
     def reset(self, matrices: Matrices) -> None:
         """The DC operating point without a signal."""

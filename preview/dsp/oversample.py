@@ -88,6 +88,15 @@ class Filters:
     prototypes: tuple[Real, Real, Real, Real]
     """The four filters as plain sequences, same order."""
 
+    @property
+    def circuit_delay_frames(self) -> float:
+        """How far the circuit's time lags behind the frames put in: after n of them it has come to n less this.
+
+        The delays of both interpolators, and the two samples that a step's mean looks ahead.
+        """
+        first, second, _, _ = self.prototypes
+        return (len(first) - 1) / 4.0 + ((len(second) - 1) / 2.0 + 2.0) / self.factor
+
     def up_response(self, frequency_ratio: Real) -> Complex:
         """Gain of the interpolation at frequencies given as a share of the sample rate, delay taken out."""
         first, second, _, _ = self.prototypes

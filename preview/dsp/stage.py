@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Mapping
 from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,14 +16,14 @@ from preview.circuit.parts import PartKind
 from preview.compiled import in_cache
 from preview.dsp import kernels, rate_kernels
 from preview.dsp.block import Volts
-from preview.dsp.cores import MacroCore, Matrices, core_for
+from preview.dsp.cores import Core, MacroCore, Matrices, core_for
 from preview.dsp.noise import NoiseSetting
 from preview.dsp.oversample import LATENCY_FRAMES, design, factor_for
 from preview.errors import PartValueError, UnknownNameError
 from preview.network.stability import check_stable
 from preview.values.quality import Quality
 
-__all__ = ["GLIDE_S", "Fault", "Glide", "NoiseSetting", "StageProcessor", "load_kernels"]
+__all__ = ["GLIDE_S", "Fault", "Glide", "NoiseSetting", "Snapshot", "StageProcessor", "load_kernels"]
 
 Real = NDArray[np.float64]
 
@@ -37,6 +38,9 @@ MOST_UNSOLVED = 0.25
 
 BLOCK_FRAMES = 128
 """Frames computed at a time."""
+
+Snapshot = tuple[NDArray[Any], ...]
+"""The state of a stage at one moment."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -135,6 +139,11 @@ class StageProcessor:
         return self._netlist
 
     @property
+    def core(self) -> Core:
+        """The circuit between the oversampling filters."""
+        return self._core
+
+    @property
     def gliding(self) -> bool:
         """Whether a part is on its way to a new value."""
         return self._glide is not None
@@ -169,6 +178,18 @@ class StageProcessor:
         coming = self._core.power_on(values, shares, steps_per_leg * stations)
         self._core.switch_off()
         self._begin(Glide(self._netlist, coming, steps_per_leg, settled))
+
+    def snapshot(self) -> Snapshot:
+        """Copies of everything that the next sample depends on, while no part glides."""
+        return tuple(a.copy() for a in self._moving())
+
+    def restore(self, taken: Snapshot) -> None:
+        """Back to where a snapshot was taken."""
+        for now, then in zip(self._moving(), taken, strict=True):
+            now[...] = then
+
+    def _moving(self) -> tuple[NDArray[Any], ...]:
+        return (self._x, self._a, self._u, self._split, self._w, *self._core.moving())
 
     def plan(self, values: Mapping[str, float]) -> Glide:
         """Prepare a glide to other part values; allocates, so not for the audio thread.
@@ -237,12 +258,10 @@ class StageProcessor:
         while done < frames:
             count = min(BLOCK_FRAMES, frames - done)
             steps = count * f.factor
-            rate_kernels.up_block(
-                volts_in, done, count, self._x, self._a, self._u, f.up_1, f.up_2, self._room[0]
-            )
+            self.raise_rate(volts_in, done, count)
             leg = self._glide.steps_per_leg if self._glide is not None else 0
             self._core.run(self._matrices, self._u, self._mean, steps, self._at, leg)
-            rate_kernels.keep_last(self._u, steps)
+            self.keep_rate(count)
             rate_kernels.down_block(
                 self._mean, done, count, self._split, self._w, volts_out, f.down_1, f.down_2, self._room
             )
@@ -265,6 +284,23 @@ class StageProcessor:
                 volts_out[done - count :] = 0.0
                 return
             self._unsolved = unsolved
+
+    def raise_rate(self, volts_in: Volts, first: int, count: int) -> None:
+        """Bring up to ``BLOCK_FRAMES`` frames, from ``first`` on, to the rate of the steps."""
+        f = self.filters
+        rate_kernels.up_block(
+            volts_in, first, count, self._x, self._a, self._u, f.up_1, f.up_2, self._room[0]
+        )
+
+    def keep_rate(self, count: int) -> None:
+        """Done with the frames last brought to the rate of the steps."""
+        rate_kernels.keep_last(self._u, count * self.filters.factor)
+
+    def run_core(self, first: int, count: int) -> None:
+        """Run the circuit over some of the frames last brought to the rate of the steps; no part may glide."""
+        steps, at = count * self.filters.factor, first * self.filters.factor
+        u = np.ascontiguousarray(self._u[:, at : at + steps + 3])
+        self._core.run(self._matrices, u, self._mean, steps, 0, 0)
 
     def _arrive(self) -> None:
         """The glide has ended: stay at its last station, or go on to the next glide."""

@@ -62,6 +62,8 @@ VALUE_OPTIONS = (
     "--end",
     "--signal",
     "--input",
+    "--limit",
+    "--level",
 )
 """Options that take a text; one that begins with a minus sign belongs to them all the same."""
 
@@ -140,6 +142,7 @@ def session_from(
     comment: str = "",
     at_end: AtEnd = AtEnd.LOOP,
     stage: str = DEFAULT_STAGE,
+    assumed_full_scale: str = DEFAULT_FULL_SCALE,
 ) -> Session:
     """The session that the options describe.
 
@@ -155,6 +158,8 @@ def session_from(
         What happens at the end of the file.
     stage : str
         Stage to take where the options name none.
+    assumed_full_scale : str
+        Full scale where neither the options nor the comment state one.
 
     Raises
     ------
@@ -186,7 +191,7 @@ def session_from(
     if options.load is not None:
         load = for_option("--load", lambda: parse_load(options.load))
         notes.append(f"load {options.load.strip()} = {said(load)}")
-    full_scale, full_scale_note = _full_scale(options.full_scale, comment)
+    full_scale, full_scale_note = _full_scale(options.full_scale, comment, assumed_full_scale)
     notes.append(full_scale_note)
     session = Session(
         audio=audio,
@@ -214,6 +219,8 @@ def _supplies_differ(stage: Stage) -> tuple[str, ...]:
         for k, one in enumerate(stage.joined, 1)
     )
     return (f"the stages are drawn with different supplies ({rails}): all run on the first's",)
+
+
 def intake_from(options: argparse.Namespace) -> dict[str, Any]:
     """Fields of a session that take a test signal or live input in place of a recording; empty for a recording.
 
@@ -299,14 +306,14 @@ def _opamp_types(texts: Sequence[str]) -> dict[str | None, str]:
     return found
 
 
-def _full_scale(text: str | None, comment: str) -> tuple[FullScale, str]:
+def _full_scale(text: str | None, comment: str, assumed: str) -> tuple[FullScale, str]:
     """The full scale in force and a line that says where it is from."""
     if text is not None:
         level, origin = for_option("--full-scale", lambda: parse_full_scale(text)), "as given"
     elif (stated := full_scale_in_comment(comment)) is not None:
         level, origin = stated, "from the file's comment"
     else:
-        level, origin = parse_full_scale(DEFAULT_FULL_SCALE), "assumed; --full-scale sets it"
+        level, origin = parse_full_scale(assumed), "assumed; --full-scale sets it"
     return level, f"full scale {level.text} = {format_volts(level.volts)} peak ({origin})"
 
 
@@ -321,6 +328,9 @@ def _quality(text: str) -> Quality:
 
 def check_together(options: argparse.Namespace) -> None:
     """Refuse options of ``response`` that do nothing beside the others."""
+    if options.level or options.sweep:
+        alone = "--sweep" if options.sweep else "--level"
+        raise UsageError(f"{alone} is for --distortion", "add it or leave it out")
     if options.plot is not None:
         picture_kind(options.plot)
     if options.draw and (options.json or options.csv):

@@ -26,7 +26,7 @@ class Progress:
         self._began_s = time.monotonic()
         self._shown_s = -1.0
 
-    def __call__(self, done: int) -> None:
+    def __call__(self, done: int, what: str = "") -> None:
         now_s = time.monotonic() - self._began_s
         if self._stream is None or now_s - self._shown_s < 0.1:
             return
@@ -34,12 +34,12 @@ class Progress:
         share = min(done / self._frames, 1.0)
         left_s = now_s * (1.0 - share) / share if share > 0 else 0.0
         bar = ("#" * round(30 * share)).ljust(30, ".")
-        self._write(f"\r{100 * share:4.0f} %  {bar}  {left_s:4.0f} s left ")
+        self._write(f"\r{what}{100 * share:4.0f} %  {bar}  {left_s:4.0f} s left ")
 
     def clear(self) -> None:
         """Take the line away."""
         if self._shown_s >= 0.0:
-            self._write("\r" + " " * 60 + "\r")
+            self._write("\r" + " " * 79 + "\r")
 
     def _write(self, text: str) -> None:
         if self._stream is not None:

@@ -12,7 +12,8 @@ from typing import Protocol
 import numpy as np
 
 from preview import __version__
-from preview.audio.sink import Depth, FileSink
+from preview.audio.logs import LogFormat, LogSource, open_signal
+from preview.audio.sink import Depth, FileSink, holds_volts
 from preview.audio.source import FileSource, StdinSource
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpReading
@@ -45,7 +46,7 @@ class Source(Protocol):
         """Channels."""
 
     @property
-    def sample_rate_hz(self) -> int:
+    def sample_rate_hz(self) -> float:
         """Sample rate [Hz]."""
 
     def read(self, samples_out: Samples) -> int:
@@ -117,9 +118,9 @@ def output_comment(session: Session, out_full_scale_v: float) -> str:
     return f"{scale}; preview {__version__}; stage {session.stage.name}"
 
 
-def open_source(audio: Path) -> FileSource | StdinSource:
-    """The recording, from a file or, for ``-``, from stdin."""
-    return StdinSource() if str(audio) == "-" else FileSource(audio)
+def open_source(audio: Path, form: LogFormat | None = None) -> FileSource | StdinSource | LogSource:
+    """The recording or log, from a file or, for ``-``, from stdin."""
+    return StdinSource() if str(audio) == "-" else open_signal(audio, form)
 
 
 def render(
@@ -157,7 +158,7 @@ def render(
     """
     rate, channels = source.sample_rate_hz, source.channels
     circuit = session.netlist()
-    scale_v = output_scale_v(circuit, session, depth)
+    scale_v = 1.0 if holds_volts(out) else output_scale_v(circuit, session, depth)
     chain = Chain(StageProcessor(circuit, sample_rate_hz=rate, channels=channels, quality=session.quality))
     path = SignalPath(
         chain,

@@ -1,0 +1,1 @@
+"""Will it clip? Recordings run through the stage: headroom, visits to limits, the largest clean input."""
