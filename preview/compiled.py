@@ -8,9 +8,6 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
-from llvmlite.ir import Constant
-from numba import njit
-from numba.extending import intrinsic
 from platformdirs import user_cache_dir
 
 __all__ = ["bare", "compiled", "in_cache"]
@@ -32,6 +29,8 @@ def _compiler() -> Callable[[Callable[..., Any]], Any]:
         cached = os.access(folder, os.W_OK)
     except OSError:
         cached = False
+    from numba import njit  # reads the variable as it is loaded, so not before
+
     decorate: Callable[[Callable[..., Any]], Any] = njit(cache=cached, nogil=True, error_model="numpy")
     return decorate
 
@@ -39,25 +38,31 @@ def _compiler() -> Callable[[Callable[..., Any]], Any]:
 compiled = _compiler()
 
 
-def _bare(_context: Any, array: Any) -> Any:
-    """The same array without a count of its owners, whose keeping costs more than a short loop.
+def _uncounted() -> Any:
+    from llvmlite.ir import Constant
+    from numba.extending import intrinsic
 
-    For arrays that the caller of a kernel holds; what is returned to Python must not be one.
-    """
+    @intrinsic
+    def bare(_context: Any, array: Any) -> Any:
+        def build(context: Any, builder: Any, _signature: Any, args: Any) -> Any:
+            make = context.make_array(array)
+            given, result = make(context, builder, args[0]), make(context, builder)
+            for field in ("data", "nitems", "itemsize", "shape", "strides"):
+                setattr(result, field, getattr(given, field))
+            for field in ("meminfo", "parent"):
+                setattr(result, field, Constant(getattr(given, field).type, None))
+            return result._getvalue()
 
-    def build(context: Any, builder: Any, _signature: Any, args: Any) -> Any:
-        make = context.make_array(array)
-        given, result = make(context, builder, args[0]), make(context, builder)
-        for field in ("data", "nitems", "itemsize", "shape", "strides"):
-            setattr(result, field, getattr(given, field))
-        for field in ("meminfo", "parent"):
-            setattr(result, field, Constant(getattr(given, field).type, None))
-        return result._getvalue()
+        return array(array), build
 
-    return array(array), build
+    return bare
 
 
-bare: Any = intrinsic(_bare)
+bare = _uncounted()
+"""The same array without a count of its owners, whose keeping costs more than a short loop.
+
+For arrays that the caller of a kernel holds; what is returned to Python must not be one.
+"""
 
 
 def in_cache(name: str) -> bool:

@@ -20,7 +20,7 @@ from itertools import pairwise
 import numpy as np
 from numpy.typing import NDArray
 
-from preview.circuit.netlist import GND, Charge, Junction, Netlist
+from preview.circuit.netlist import GND, Charge, Junction, Netlist, Port
 from preview.dsp import port_kernels
 from preview.network.expansion import expanded, gain_bandwidth_hz, inner_node, output_ohm
 from preview.network.opamps import second_pole_hz
@@ -127,9 +127,9 @@ class MacroModel:
         inner = expanded(netlist)
         self.inner = inner
         self.sites = netlist.opamps
-        self.ports = inner.ports
+        self.ports, self._opposite = _paired(inner.ports)
         k = len(self.sites)
-        watched = [(p.a, p.b) for p in inner.ports]
+        watched = [(p.a, p.b) for p in self.ports]
         watched += [(o.plus, GND) for o in netlist.opamps] + [(o.out, GND) for o in netlist.opamps]
         self._nodes = inner.nodes
         self.topology = Topology(inner, drawn=inner.nodes, watched=watched)
@@ -147,7 +147,7 @@ class MacroModel:
             next(i for i, b in enumerate(inner.branches) if b.designator == p.designator)
             if isinstance(p.law, Charge)
             else -1
-            for p in inner.ports
+            for p in self.ports
         ]
 
     def values_of(self, netlist: Netlist) -> Real:
@@ -371,17 +371,12 @@ class MacroModel:
             rails = rails * share[:, :, None]
             walls[:, :, k:] = walls[:, :, k:] * share[:, :, None]
         laws = np.zeros((sets, len(self.ports), port_kernels.LAW))
-        most_a = {
-            designator: amps
-            for o in self.sites
-            for designator, amps in (
-                (f"{o.designator}.source", o.model.current_source_a),
-                (f"{o.designator}.sink", o.model.current_sink_a),
-            )
-        }
-        for p, port in enumerate(self.ports):
-            laws[:, p] = _law(port.law)
-            laws[:, p, port_kernels.MOST] = most_a.get(port.designator, math.inf)
+        for p, (port, back) in enumerate(zip(self.ports, self._opposite, strict=True)):
+            laws[:, p] = _law(port.law, back)
+            for o in self.sites:
+                if port.designator == f"{o.designator}.source":
+                    laws[:, p, port_kernels.MOST] = o.model.current_source_a
+                    laws[:, p, port_kernels.BACK_MOST] = o.model.current_sink_a
             if self.charged[p] >= 0:
                 laws[:, p, port_kernels.FARAD] = values[:, self.charged[p]]
         return Limits(rails, walls, gains, laws)
@@ -399,17 +394,51 @@ def _pieces(points: tuple[tuple[float, float], ...]) -> list[tuple[float, float]
     return pieces
 
 
-def _law(law: Junction | Charge) -> Real:
+def _paired(ports: tuple[Port, ...]) -> tuple[tuple[Port, ...], tuple[Junction | None, ...]]:
+    """Ports, each with the diode that stands against it between the same nodes, where there is one.
+
+    Where both have one series resistance it can be shared: the one that blocks carries its saturation current only.
+    """
+    rest, found = list(ports), []
+    while rest:
+        port = rest.pop(0)
+        back = None
+        if isinstance(port.law, Junction) and not np.isfinite(port.law.breakdown_v):
+            for other in rest:
+                law = other.law
+                if (
+                    isinstance(law, Junction)
+                    and (other.a, other.b) == (port.b, port.a)
+                    and law.series_ohm == port.law.series_ohm
+                    and not np.isfinite(law.breakdown_v)
+                ):
+                    back = law
+                    rest.remove(other)
+                    break
+        found.append((port, back))
+    return tuple(port for port, _ in found), tuple(back for _, back in found)
+
+
+def _critical_v(slope_v: float, saturation_a: float) -> float:
+    """Junction voltage from which Newton's steps are shortened [Nagel1975]."""
+    return slope_v * math.log(slope_v / (math.sqrt(2.0) * saturation_a))
+
+
+def _law(law: Junction | Charge, opposite: Junction | None) -> Real:
     """A port's law as the kernels take it."""
     row = np.zeros(port_kernels.LAW)
+    row[port_kernels.MOST] = row[port_kernels.BACK_MOST] = math.inf
     if isinstance(law, Charge):
         row[port_kernels.HALF], row[port_kernels.FARAD] = law.half_v, law.farad
         return row
     row[port_kernels.SATURATION], row[port_kernels.SLOPE] = law.saturation_a, law.slope_v
     row[port_kernels.SERIES] = law.series_ohm
-    row[port_kernels.CRITICAL] = law.slope_v * math.log(law.slope_v / (math.sqrt(2.0) * law.saturation_a))
-    if math.isfinite(law.breakdown_v):
-        row[port_kernels.BREAKDOWN] = law.breakdown_v - law.breakdown_a * law.series_ohm
-        row[port_kernels.BREAKDOWN_CURRENT] = law.breakdown_a
-        row[port_kernels.BREAKDOWN_SLOPE] = law.breakdown_slope_v
+    row[port_kernels.CRITICAL] = _critical_v(law.slope_v, law.saturation_a)
+    if opposite is not None:
+        row[port_kernels.BACK_CURRENT], row[port_kernels.BACK_SLOPE] = opposite.saturation_a, opposite.slope_v
+        row[port_kernels.BACK_CRITICAL] = _critical_v(opposite.slope_v, opposite.saturation_a)
+    elif math.isfinite(law.breakdown_v):
+        row[port_kernels.BACK] = law.breakdown_v - law.breakdown_a * law.series_ohm
+        row[port_kernels.BACK_CURRENT] = law.breakdown_a
+        row[port_kernels.BACK_SLOPE] = row[port_kernels.BACK_CRITICAL] = law.breakdown_slope_v
     return row

@@ -20,10 +20,24 @@ MAX_TURNS = 60
 TOLERANCE_V = 1e-8
 """Last change at which the voltages are taken as found; the error left is about its square over the slope voltage."""
 
-# columns of a port's law: a junction has slope voltages, a class 2 capacitor has a half voltage
-SATURATION, SLOPE, SERIES, BREAKDOWN, BREAKDOWN_CURRENT, BREAKDOWN_SLOPE, HALF, FARAD, CRITICAL, MOST, LAW = (
-    range(11)
-)
+# columns of a port's law. A junction conducts forward as SATURATION and SLOPE say; the other way, where BACK_SLOPE is
+# above zero, from BACK on: a breakdown, or the second of two diodes back to back (BACK 0). CRITICAL: where Newton's steps
+# are shortened. A class 2 capacitor has a HALF voltage.
+(
+    SATURATION,
+    SLOPE,
+    SERIES,
+    BACK,
+    BACK_CURRENT,
+    BACK_SLOPE,
+    HALF,
+    FARAD,
+    CRITICAL,
+    BACK_CRITICAL,
+    MOST,
+    BACK_MOST,
+    LAW,
+) = range(13)
 
 
 @compiled
@@ -31,36 +45,73 @@ def junction(law: Any, v: float) -> tuple[float, float]:
     """Current of a junction and its conductance at a voltage without the drop of its series resistance."""
     f = law[SATURATION] * np.exp(min(v / law[SLOPE], 600.0))
     current, slope = f - law[SATURATION], f / law[SLOPE]
-    if law[BREAKDOWN_SLOPE] > 0.0:
-        b = law[BREAKDOWN_CURRENT] * np.exp(min(-(v + law[BREAKDOWN]) / law[BREAKDOWN_SLOPE], 600.0))
+    if law[BACK_SLOPE] > 0.0:
+        b = law[BACK_CURRENT] * np.exp(min(-(v + law[BACK]) / law[BACK_SLOPE], 600.0))
         current -= b
-        slope += b / law[BREAKDOWN_SLOPE]
-    if current > law[MOST]:  # the output stage of an op-amp gives hardly any more than its limit
+        if law[BACK] == 0.0:
+            current += law[BACK_CURRENT]
+        slope += b / law[BACK_SLOPE]
+    # the output stage of an op-amp gives hardly any more than its limit
+    if current > law[MOST]:
         slope *= 0.01 * law[MOST] / current
         current = law[MOST] * (1.0 + 0.01 * np.log(current / law[MOST]))
+    elif current < -law[BACK_MOST]:
+        slope *= -0.01 * law[BACK_MOST] / current
+        current = -law[BACK_MOST] * (1.0 + 0.01 * np.log(-current / law[BACK_MOST]))
     return current, slope
 
 
 @compiled
-def limited_move(law: Any, old: float, new: float) -> Any:
+def limited_move(law: Any, old: float, new: float) -> float:
     """A Newton step of a junction voltage, shortened where the exponential would run away [Nagel1975]."""
     if law[HALF] > 0.0:
-        return new
-    vt = law[SLOPE]
+        return float(new)
+    vt, vz = law[SLOPE], law[BACK_SLOPE]
     if new > law[CRITICAL] and abs(new - old) > 2.0 * vt:
         if old > 0.0:
             f = 1.0 + (new - old) / vt
-            return old + vt * np.log(f) if f > 0.0 else law[CRITICAL]
-        return vt * np.log(new / vt)
-    if law[BREAKDOWN_SLOPE] > 0.0:
-        vz = law[BREAKDOWN_SLOPE]
-        over, before = -(new + law[BREAKDOWN]), -(old + law[BREAKDOWN])
-        if over > vz and abs(new - old) > 2.0 * vz:
+            return float(old + vt * np.log(f)) if f > 0.0 else float(law[CRITICAL])
+        return float(vt * np.log(new / vt))
+    if vz > 0.0:
+        over, before = -(new + law[BACK]), -(old + law[BACK])
+        if over > law[BACK_CRITICAL] and abs(new - old) > 2.0 * vz:
             if before > 0.0:
                 f = 1.0 + (over - before) / vz
-                return -law[BREAKDOWN] - (before + vz * np.log(f) if f > 0.0 else 0.0)
-            return -law[BREAKDOWN] - vz * np.log(over / vz)
-    return new
+                moved = before + vz * np.log(f) if f > 0.0 else law[BACK_CRITICAL]
+            else:
+                moved = vz * np.log(over / vz)
+            return float(-law[BACK] - moved)
+    return float(new)
+
+
+@compiled
+def solve_one(
+    laws: Any, end_v: float, third_v: float, part: Any, first: int, column: int, v: Any, i: Any
+) -> bool:
+    """``solve_ports`` for one junction, written out."""
+    law = laws[0]
+    series = law[SERIES]
+    # voltages by currents: third by third, third by end, end by third, end by end
+    aa, ab = part[column, first + 1] - series, part[column + 1, first + 1]
+    ba, bb = part[column, first], part[column + 1, first] - series
+    va, vb = v[1, 0], v[2, 0]
+    for _ in range(MAX_TURNS):
+        ia, ga = junction(law, va)
+        ib, gb = junction(law, vb)
+        ra, rb = third_v + aa * ia + ab * ib - va, end_v + ba * ia + bb * ib - vb
+        j00, j01, j10, j11 = 1.0 - aa * ga, -ab * gb, -ba * ga, 1.0 - bb * gb
+        det = j00 * j11 - j01 * j10
+        new_a = limited_move(law, va, va + (j11 * ra - j01 * rb) / det)
+        new_b = limited_move(law, vb, vb + (j00 * rb - j10 * ra) / det)
+        if not (np.isfinite(new_a) and np.isfinite(new_b)):
+            return False
+        da, db = new_a - va, new_b - vb
+        va, vb = new_a, new_b
+        if max(abs(da), abs(db)) < TOLERANCE_V + 1e-9 * max(abs(va), abs(vb)):
+            v[1, 0], v[2, 0] = va, vb
+            i[0], i[1] = ia + ga * da, ib + gb * db
+            return True
+    return False
 
 
 @compiled
@@ -94,6 +145,8 @@ def solve_ports(
         Room.
     """
     ports = laws.shape[0]
+    if ports == 1 and laws[0, HALF] == 0.0:
+        return bool(solve_one(laws, open_v[0], open_v[1], part, first, column, v, i))
     size = 2 * ports
     J, right = room[:size], room[size]
     slope = room[size + 1]
