@@ -19,7 +19,7 @@ from preview.circuit.drive import said
 from preview.circuit.parts import SettablePart, TwoTerminal
 from preview.circuit.settings import setting_text
 from preview.engine.check.excerpt import excerpt, worst_moments
-from preview.engine.check.report import CheckReport, time_code
+from preview.engine.check.report import CheckReport, limit_said, time_code
 from preview.engine.check.results import FileCheck
 from preview.engine.check.run import Stages
 from preview.errors import PreviewError, UsageError, printable
@@ -212,7 +212,7 @@ def _recording(report: CheckReport, found: FileCheck) -> list[_Block]:
             f"{1e3 * e.length_s:.4g} ms",
             e.designator,
             str(e.channel),
-            f"{e.side} rail" if e.kind == "rail" else "slew rate",
+            limit_said(e),
         ]
         for e in found.events[:LISTED]
     ]

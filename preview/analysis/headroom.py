@@ -9,21 +9,26 @@ frequency of the circuit sees fine enough, from the state space in continuous ti
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from collections.abc import Iterator
+from dataclasses import dataclass, replace
+from itertools import pairwise
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
 from scipy.linalg import expm
 
-from preview.circuit.netlist import Netlist
+from preview.circuit.netlist import GND, Netlist, OpAmpSite
 from preview.errors import CircuitError
-from preview.network.expansion import expanded, expanded_topology, gain_bandwidth_hz, has_real_opamps
+from preview.network.expansion import output_ohm
+from preview.network.linear import Linear, linear
+from preview.network.operating import OperatingPoint, operating_point
 from preview.network.stability import check_stable
-from preview.network.statespace import Topology, invert_feedback
 
 __all__ = ["WorstCase", "worst_cases"]
 
 Real = NDArray[np.float64]
+_Kind = Literal["rail", "output current", "input range"]
 
 GONE = 21.0
 """Time constants after which a mode is over: e to the minus 21 is 8e-10."""
@@ -45,95 +50,130 @@ class WorstCase:
     """Largest output over the input's peak: the integral of the magnitude of the impulse response [V/V]."""
     rest_v: float
     """Output without a signal [V]."""
-    high_v: float
-    """Highest output [V]."""
-    low_v: float
-    """Lowest output [V]."""
+    clean_input_v: float
+    """Peak of the input up to which no signal brings it to a limit but its slew rate [V]; inf where none ever does."""
+    limit: _Kind | Literal[""]
+    """What it comes to first; empty for nothing."""
 
     def bound_v(self, peak_v: float) -> float:
         """Largest magnitude that an input of that peak can ask of the output [V]."""
         return abs(self.rest_v) + self.gain * peak_v
 
-    @property
-    def clean_input_v(self) -> float:
-        """Peak of the input up to which no signal brings the output to a rail [V]; inf where none ever does."""
-        room_v = min(self.high_v - self.rest_v, self.rest_v - self.low_v)
-        return max(room_v, 0.0) / self.gain if self.gain > 0.0 else math.inf
+
+@dataclass(frozen=True, slots=True)
+class _Limit:
+    """One quantity that hangs linearly on the state, and the room above it."""
+
+    kind: _Kind
+    c: Real
+    """Over the states."""
+    d: float
+    """At once, for 1 V of input."""
+    room: float
+    """From rest to the limit."""
 
 
 def worst_cases(netlist: Netlist) -> tuple[WorstCase, ...]:
     """The worst case of each op-amp's output, every op-amp following.
 
-    Returns nothing for a circuit with diodes or dielectrics that saturate: it is not linear before it limits.
+    Returns nothing for a circuit with diodes, dielectrics that saturate or an output stage with crossover: it is not
+    linear before it limits.
 
     Raises
     ------
     CircuitError
         The circuit is not stable.
     """
-    if netlist.ports or not netlist.opamps:
+    bends = netlist.ports or any(o.model.crossover_v > 0.0 for o in netlist.opamps)
+    if bends or not netlist.opamps:
         return ()
     check_stable(netlist)
-    A, b, C, d, rest = _to_outputs(netlist)
-    gains = _ups_and_downs(A, b, C) + np.abs(d)
-    return tuple(
-        WorstCase(o.designator, float(gain), float(at), o.high_v, o.low_v)
-        for o, gain, at in zip(netlist.opamps, gains, rest, strict=True)
-    )
+    rest = operating_point(netlist)
+    return tuple(_worst_case(netlist, rest, opamp) for opamp in netlist.opamps)
 
 
-def _to_outputs(netlist: Netlist) -> tuple[Real, Real, Real, Real, Real]:
-    """(A, b, C, d) from the signal to every op-amp's own output, and these at rest; k outputs."""
-    k = len(netlist.opamps)
-    if not has_real_opamps(netlist):
-        topology = Topology(netlist)
-        space = topology.evaluate(topology.values_of(netlist)[None])
-        y = -invert_feedback(space.D_e[:, :, 1:])
-        y_x, y_u = (y @ space.C_e)[0], (y @ space.D_e[:, :, :1])[0, :, 0]
-        A, B, _, _ = space.closed()
-        return A[0], B[0, :, 0], y_x, y_u, np.zeros(k)
-    topology, models = expanded_topology(netlist), [o.model for o in netlist.opamps]
-    space = topology.evaluate(topology.values_of(expanded(netlist))[None])
-    n = space.A.shape[1]
-    wt = 2.0 * np.pi * np.array([gain_bandwidth_hz(m) for m in models])
-    wp = wt / np.array([m.open_loop_gain for m in models])
-    over_x = np.concatenate([space.A[0], wt[:, None] * space.C_e[0]])
-    over_s = np.concatenate([space.B[0], wt[:, None] * space.D_e[0]])
-    A = np.concatenate([over_x, over_s[:, 1 : 1 + k]], axis=1)
-    A[n:, n:] -= np.diag(wp)
-    currents = [(m.bias_a + half, m.bias_a - half) for m in models for half in (m.offset_current_a / 2,)]
-    constant = over_s[:, 1 + k :] @ np.array(currents).ravel()
-    constant[n:] += wt * np.array([m.offset_v for m in models])
-    scale = np.maximum(np.abs(A).max(axis=1), 1e-300)
-    rest, *_ = np.linalg.lstsq(A / scale[:, None], -constant / scale, rcond=1e-13)
-    # the states are x = p + kappa s: they jump with the signal, so what the signal does at once is in b alone
-    return A, over_s[:, 0], np.eye(n + k)[n:], np.zeros(k), rest[n:]
+def _worst_case(netlist: Netlist, rest: OperatingPoint, opamp: OpAmpSite) -> WorstCase:
+    pin = linear(replace(netlist, output_node=opamp.out))
+    rest_v = rest.volts[opamp.out]
+    limits = [*_swing(netlist, rest, opamp, pin), *_input_range(netlist, rest, opamp)]
+    rows = np.array([pin.C, *(limit.c for limit in limits)])
+    moves = _ups_and_downs(pin.A, pin.B, rows) + np.abs([pin.D, *(limit.d for limit in limits)])
+    clean_v = math.inf
+    kind: _Kind | Literal[""] = ""
+    for limit, gain in zip(limits, moves[1:].tolist(), strict=True):
+        if gain > 0.0 and max(limit.room, 0.0) / gain < clean_v:
+            clean_v, kind = max(limit.room, 0.0) / gain, limit.kind
+    return WorstCase(opamp.designator, float(moves[0]), rest_v, clean_v, kind)
+
+
+def _swing(netlist: Netlist, rest: OperatingPoint, opamp: OpAmpSite, pin: Linear) -> Iterator[_Limit]:
+    """The ends of the swing, which may hang on the load, and of the output current."""
+    model, rest_v = opamp.model, rest.volts[opamp.out]
+    if not (model.real and math.isfinite(model.gain_bandwidth_hz)):  # ideal: nothing behind its output
+        yield _Limit("rail", pin.C, pin.D, opamp.high_v - rest_v)
+        yield _Limit("rail", -pin.C, -pin.D, rest_v - opamp.low_v)
+        return
+    inner = linear(replace(netlist, output_node=f"{opamp.designator}.w"))
+    ohm = output_ohm(model)
+    c, d = (inner.C - pin.C) / ohm, (inner.D - pin.D) / ohm  # its output current
+    rest_a = rest.opamp_a[opamp.designator]
+    for sign, rail_v, points, most_a in (
+        (1.0, opamp.high_v + model.swing_high_v, model.swing_high_points, model.current_source_a),
+        (-1.0, -opamp.low_v + model.swing_low_v, model.swing_low_points, model.current_sink_a),
+    ):
+        lightest = model.swing_high_v if sign > 0.0 else model.swing_low_v
+        for per_a, drop_v in _pieces(points) or [(0.0, lightest)]:
+            room = rail_v - drop_v - sign * (rest_v + per_a * rest_a)
+            yield _Limit("rail", sign * (pin.C + per_a * c), sign * (pin.D + per_a * d), room)
+        if math.isfinite(most_a):
+            yield _Limit("output current", sign * c, sign * d, most_a - sign * rest_a)
+
+
+def _pieces(points: tuple[tuple[float, float], ...]) -> list[tuple[float, float]]:
+    """Slope, and drop without a current, of each piece of a swing that hangs on the load."""
+    pieces = [(0.0, points[0][1])] if points else []
+    for (a0, v0), (a1, v1) in pairwise(points):
+        pieces.append(((v1 - v0) / (a1 - a0), v0 - (v1 - v0) / (a1 - a0) * a0))
+    return pieces
+
+
+def _input_range(netlist: Netlist, rest: OperatingPoint, opamp: OpAmpSite) -> Iterator[_Limit]:
+    """The ends of the common-mode range."""
+    if opamp.plus == GND:
+        return
+    plus, rest_v = linear(replace(netlist, output_node=opamp.plus)), rest.volts[opamp.plus]
+    if math.isfinite(opamp.input_high_v):
+        yield _Limit("input range", plus.C, plus.D, opamp.input_high_v - rest_v)
+    if math.isfinite(opamp.input_low_v):
+        yield _Limit("input range", -plus.C, -plus.D, rest_v - opamp.input_low_v)
 
 
 def _ups_and_downs(A: Real, b: Real, C: Real) -> Real:
-    """Integral over all time of ``|C exp(A t) b|``, shape (outputs,)."""
+    """Integral over all time of ``|C exp(A t) b|``, shape (rows of C,)."""
     size = len(A)
     total = np.zeros(len(C))
-    if not size or not C.any():
+    if not size or not C.any() or not b.any():
         return total
     rates = np.linalg.eigvals(A)
-    last = float(np.abs(rates).max()) * 1e-14
-    moving = rates[np.abs(rates) > last]
+    moving = rates[np.abs(rates) > float(np.abs(rates).max()) * 1e-14]
     if moving.size == 0 or float(moving.real.max()) >= 0.0:
         raise CircuitError("the circuit does not come to rest", "there is no worst case to compute")
     ends = GONE / -moving.real
-    at, now = 0.0, b.copy()
+    at, now, step = 0.0, b.copy(), 0.0
+    path = np.empty((SEGMENT + 1, size))
     while at < ends.max():
-        step = 1.0 / (PER_RADIAN * float(np.abs(moving[ends > at]).max()))
-        # [x, X]: x' = A x, X' = x, so that C X is the step response
-        grown = expm(np.block([[A, np.zeros((size, size))], [np.eye(size), np.zeros((size, size))]]) * step)
-        once, over = grown[:size, :size], grown[size:, :size]
-        path = np.empty((SEGMENT + 1, size))
+        fitting = 1.0 / (PER_RADIAN * float(np.abs(moving[ends > at]).max()))
+        if fitting != step:
+            step = fitting
+            # [x, X]: x' = A x, X' = x, so that C X is the step response
+            both = np.block([[A, np.zeros((size, size))], [np.eye(size), np.zeros((size, size))]])
+            grown = expm(both * step)
+            once, over = grown[:size, :size], grown[size:, :size]
         path[0] = now
         for i in range(SEGMENT):
             path[i + 1] = once @ path[i]
-        total += _moves(path @ C.T, path[:-1] @ over.T @ C.T, step)
-        at, now = at + SEGMENT * step, path[-1]
+        total += _moves(path @ C.T, path[:-1] @ (C @ over).T, step)
+        at, now = at + SEGMENT * step, path[-1].copy()
     return total
 
 

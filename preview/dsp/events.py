@@ -18,13 +18,21 @@ from preview.dsp.stage import BLOCK_FRAMES, Snapshot, StageProcessor
 
 __all__ = ["PIECE_FRAMES", "EventFinder", "LimitEvent", "LimitKind"]
 
-LimitKind = Literal["rail", "slew"]
-"""What an op-amp came to: a rail, or its slew rate."""
+LimitKind = Literal["rail", "slew", "current", "range"]
+"""What an op-amp came to: a rail (or the end of its swing), its slew rate, its largest current, the end of its
+common-mode range."""
 Side = Literal["high", "low", ""]
 Key = tuple[LimitKind, int, int]
 
 PIECE_FRAMES = 16 * BLOCK_FRAMES
 """Most frames that are run at a time, between two kept states."""
+
+_COLUMNS: tuple[tuple[LimitKind, int, int], ...] = (
+    ("rail", kernels.EVENTS, kernels.CLIPPED),
+    ("current", -1, kernels.STARVED),
+    ("range", kernels.OUTSIDE_EVENTS, kernels.OUTSIDE),
+)
+"""Limits in the order of ``Core.limited``: columns of the count of visits, -1 where there is none, and of the time."""
 
 AT_LIMIT = 1.0 - 1e-9
 """Share of the slew rate from which on an op-amp is taken to slew."""
@@ -45,7 +53,7 @@ class LimitEvent:
     end_s: float
     """When it left it [s]."""
     side: Side = ""
-    """Which rail; empty for the slew rate, whose frames are counted whole."""
+    """Which rail; empty for others. The slew rate's frames are counted whole."""
 
     @property
     def length_s(self) -> float:
@@ -62,6 +70,24 @@ class _Visit:
 
 
 @dataclass(slots=True)
+class _Stay:
+    """What the statistics of some frames show of one op-amp and one kind of limit."""
+
+    kind: LimitKind
+    """The limit."""
+    was: bool
+    """At it before these frames."""
+    now: bool
+    """At it after them."""
+    begun: int
+    """Visits begun in them."""
+    steps: float
+    """Time at it [steps]."""
+    unsure: bool
+    """Visits are not counted, and there may have been more than can be seen."""
+
+
+@dataclass(slots=True)
 class _Seen:
     """What the statistics of some frames show of one op-amp in one channel."""
 
@@ -69,21 +95,17 @@ class _Seen:
     """Channel, from 0."""
     j: int
     """Which op-amp."""
-    was: bool
-    """At a rail before them."""
-    now: bool
-    """At a rail after them."""
-    begun: int
-    """Visits to a rail begun in them."""
     slews: bool
     """It slewed."""
+    stays: list[_Stay]
+    """Limits that it was at."""
     stats: list[float]
     """All statistics."""
 
     @property
     def plain(self) -> bool:
-        """Whether the times follow: it came to a rail or left it once at most, and did not slew."""
-        return not self.slews and 2 * self.begun + self.was - self.now <= 1
+        """Whether the times follow: it came to each limit or left it once at most, and did not slew."""
+        return not self.slews and all(2 * s.begun + s.was - s.now <= 1 and not s.unsure for s in self.stays)
 
 
 class EventFinder:
@@ -126,7 +148,7 @@ class EventFinder:
                 stage.raise_rate(volts_in, first, count)
                 stage.run_core(0, count)
                 stage.keep_rate(count)
-        seen = self._seen(was)
+        seen = self._seen(was, frames)
         if all(one.plain for one in seen):
             self._note(self.frames, frames, seen)
         else:
@@ -145,6 +167,14 @@ class EventFinder:
     def limited(self) -> bool:
         """Whether there has been a visit, ended or not, since the events were last emptied."""
         return bool(self.events or self._open)
+
+    def first(self) -> tuple[str, LimitKind]:
+        """Which op-amp came to which limit first; call only where ``limited``."""
+        names = [o.designator for o in self.stage.netlist.opamps]
+        begun = [(e.start_s, e.designator, e.kind) for e in self.events]
+        begun += [(visit.start_s, names[j], kind) for (kind, _, j), visit in self._open.items()]
+        frame_s = 1.0 / self.stage.sample_rate_hz  # of the slew rate whole frames are counted
+        return min(begun, key=lambda one: one[0] + (frame_s if one[2] == "slew" else 0.0))[1:]
 
     def finish(self) -> None:
         """End what is still at a limit where the signal now is."""
@@ -173,7 +203,7 @@ class EventFinder:
             for i in range(count):
                 stage.clear_readings()
                 stage.run_core(i, 1)
-                stats = stage.core.stats[:, opamp]
+                stats = stage.core.statistics()[:, opamp]
                 far = max(stats[:, kernels.HIGH].max() - rest_v, rest_v - stats[:, kernels.LOW].min())
                 if far > farthest:
                     farthest, best = far, first + i
@@ -192,7 +222,7 @@ class EventFinder:
         was = core.limited().tolist()
         self.stage.clear_readings()
         self.stage.run_core(first, count)
-        seen = self._seen(was)
+        seen = self._seen(was, count)
         if count == 1 or all(one.plain for one in seen):
             self._note(base + first, count, seen)
             return
@@ -202,17 +232,27 @@ class EventFinder:
         self._look(base, first, half)
         self._look(base, first + half, count - half)
 
-    def _seen(self, was: list[list[bool]]) -> list[_Seen]:
+    def _seen(self, was: list[list[list[bool]]], frames: int) -> list[_Seen]:
         """What the statistics show of every op-amp that was, is, or comes to a limit in these frames."""
         seen = []
-        now = self.stage.core.limited().tolist()
-        for c, of_channel in enumerate(self.stage.core.stats.tolist()):
-            for j, stats in enumerate(of_channel):
+        core = self.stage.core
+        now = core.limited().tolist()
+        for c, of_channel in enumerate(core.statistics().tolist()):
+            for j, before in enumerate(was[c]):
+                stats, after = of_channel[j], now[c][j]
                 # one that is faster one way may pass its slower limit that way; slewing, it moves at just its limit
                 fastest, (slow, fast) = stats[kernels.SLEW], self._slews[j]
                 slews = slow * AT_LIMIT <= fastest <= slow / AT_LIMIT or fastest >= AT_LIMIT * fast
-                if slews or was[c][j] or now[c][j] or stats[kernels.EVENTS]:
-                    seen.append(_Seen(c, j, was[c][j], now[c][j], int(stats[kernels.EVENTS]), slews, stats))
+                stays = []
+                for i, (kind, counted, timed) in enumerate(_COLUMNS):
+                    steps, begins = stats[timed], after[i] and not before[i]
+                    begun = int(stats[counted]) if counted >= 0 else int(steps > 0.0 and not before[i])
+                    begun = max(begun, begins)
+                    if begun or before[i] or after[i]:
+                        unsure = counted < 0 and 0.0 < steps < frames * self.stage.filters.factor - 0.5
+                        stays.append(_Stay(kind, before[i], after[i], begun, steps, unsure))
+                if slews or stays:
+                    seen.append(_Seen(c, j, slews, stays, stats))
         return seen
 
     def _note(self, frame: int, count: int, seen: list[_Seen]) -> None:
@@ -224,29 +264,31 @@ class EventFinder:
         for one in seen:
             if one.slews:
                 self._open.setdefault(("slew", one.c, one.j), _Visit(start_s))
-            if one.was or one.now or one.begun:
-                self._rail(one, start_s, end_s)
+            for stay in one.stays:
+                self._lay(one, stay, start_s, end_s)
 
-    def _rail(self, one: _Seen, start_s: float, end_s: float) -> None:
+    def _lay(self, one: _Seen, stay: _Stay, start_s: float, end_s: float) -> None:
         """Lay the visits of some frames in order; several within one frame share its time evenly."""
-        clipped_s = min(one.stats[kernels.CLIPPED] * self.stage.step_s, end_s - start_s)
-        pieces = one.begun + one.was
-        gaps = one.begun + (not one.now)
-        key: Key = ("rail", one.c, one.j)
-        site = self.stage.netlist.opamps[one.j]
-        to_high_v, to_low_v = site.high_v - one.stats[kernels.HIGH], one.stats[kernels.LOW] - site.low_v
-        side: Side = "high" if to_high_v <= to_low_v else "low"
-        if one.was and key not in self._open:  # it was at the rail before the first frame
+        at_limit_s = min(stay.steps * self.stage.step_s, end_s - start_s)
+        pieces = stay.begun + stay.was
+        gaps = stay.begun + (not stay.now)
+        key: Key = (stay.kind, one.c, one.j)
+        side: Side = ""
+        if stay.kind == "rail":
+            site = self.stage.netlist.opamps[one.j]
+            to_high_v, to_low_v = site.high_v - one.stats[kernels.HIGH], one.stats[kernels.LOW] - site.low_v
+            side = "high" if to_high_v <= to_low_v else "low"
+        if stay.was and key not in self._open:  # it was at the limit before the first frame
             self._open[key] = _Visit(start_s, side)
-        gap_s = (end_s - start_s - clipped_s) / gaps if gaps else 0.0
-        piece_s = clipped_s / pieces if pieces else 0.0
+        gap_s = (end_s - start_s - at_limit_s) / gaps if gaps else 0.0
+        piece_s = at_limit_s / pieces if pieces else 0.0
         at_s = start_s
         for i in range(pieces):
-            if i > 0 or not one.was:
+            if i > 0 or not stay.was:
                 at_s += gap_s
                 self._open[key] = _Visit(at_s, side)
             at_s += piece_s
-            if i < pieces - 1 or not one.now:
+            if i < pieces - 1 or not stay.now:
                 self._end(key, at_s)
 
     def _end(self, key: Key, end_s: float) -> None:

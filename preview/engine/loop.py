@@ -157,6 +157,9 @@ def joined_readings(
             clipped_s=old.clipped_s + new.clipped_s,
             slew_peak_v_per_s=max(old.slew_peak_v_per_s, new.slew_peak_v_per_s),
             current_peak_a=max(old.current_peak_a, new.current_peak_a),
+            current_limited_s=old.current_limited_s + new.current_limited_s,
+            input_range_events=old.input_range_events + new.input_range_events,
+            input_range_s=old.input_range_s + new.input_range_s,
             unsolved_steps=old.unsolved_steps + new.unsolved_steps,
         )
         for old, new in zip(earlier, later, strict=True)

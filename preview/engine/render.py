@@ -18,6 +18,7 @@ from preview.audio.source import FileSource, StdinSource
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.chain import Chain
+from preview.dsp.settle import settle
 from preview.dsp.stage import StageProcessor
 from preview.engine.loop import Samples, SignalPath, peak
 from preview.errors import CircuitError
@@ -159,7 +160,13 @@ def render(
     rate, channels = source.sample_rate_hz, source.channels
     circuit = session.netlist()
     scale_v = 1.0 if holds_volts(out) else output_scale_v(circuit, session, depth)
-    chain = Chain(StageProcessor(circuit, sample_rate_hz=rate, channels=channels, quality=session.quality))
+    stage = StageProcessor(circuit, sample_rate_hz=rate, channels=channels, quality=session.quality)
+    if isinstance(source, LogSource):  # its first value was there long before
+        first = np.zeros((1, channels))
+        source.read(first)
+        source.seek(0)
+        settle(stage, first[0] * session.full_scale.volts)
+    chain = Chain(stage)
     path = SignalPath(
         chain,
         channels=channels,

@@ -92,9 +92,30 @@ def test_the_offset_is_in_the_bound() -> None:
     (worst,) = worst_cases(with_model(LOW_PASS, REAL))
     # noise gain 11 at 0 Hz, behind 125 ohm into 110k; open-loop gain 2e5
     gain = 11 * (1 + 125 / 110e3)
-    assert worst.rest_v == pytest.approx(3e-3 * gain / (1 + gain / 2e5), rel=1e-9)
+    assert worst.rest_v == pytest.approx(3e-3 * 11 / (1 + gain / 2e5), rel=1e-9)
     assert worst.bound_v(1.0) == pytest.approx(worst.gain + worst.rest_v)
     assert worst.clean_input_v == pytest.approx((RAIL_V - worst.rest_v) / worst.gain)
+
+
+def test_swing_by_load_current_and_input_range_are_limits_too() -> None:
+    # a follower into 600 ohm without speed to speak of: everything is the input itself
+    fast = replace(REAL, gain_bandwidth_hz=1e9, open_loop_gain=1e9, offset_v=0.0)
+
+    def clean_v(model: OpAmpModel, **site: float) -> tuple[float, str]:
+        circuit = with_model(
+            net([("R1", "in", "a", 1.0), ("Rload", "out", "gnd", 600.0)], [("a", "out", "out")]), model
+        )
+        circuit = replace(circuit, opamps=tuple(replace(o, **site) for o in circuit.opamps))
+        (worst,) = worst_cases(circuit)
+        return worst.clean_input_v, worst.limit
+
+    assert clean_v(fast) == (pytest.approx(RAIL_V, rel=2e-3), "rail")
+    # 15 V less 1.5 V at no current and 100 ohm from there: v (1 + 100 / 600) = 13.5 V
+    points = ((0.0, 1.5), (10e-3, 2.5))
+    swing = replace(fast, swing_high_v=1.5, swing_high_points=points)
+    assert clean_v(swing) == (pytest.approx(13.5 / (1 + 100 / 600), rel=2e-3), "rail")
+    assert clean_v(replace(fast, current_sink_a=8e-3)) == (pytest.approx(4.8, rel=2e-3), "output current")
+    assert clean_v(fast, input_low_v=-3.0) == (pytest.approx(3.0, rel=2e-3), "input range")
 
 
 @pytest.mark.parametrize("name", ["low-pass", "high-pass", "sallen-key", "two-sections", "loaded-low-pass"])

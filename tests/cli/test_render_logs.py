@@ -61,6 +61,19 @@ def test_a_log_is_rendered_to_a_log_in_volts(capsys, log, tmp_path):
     assert np.abs(rendered[:, 1]).max() == pytest.approx(report["input"]["peak_v"] * gain, rel=5e-3)
 
 
+def test_a_log_begins_settled_at_its_first_value(capsys, tmp_path):
+    (tmp_path / "level.csv").write_text(
+        "time,v\n" + "".join(f"{i / 20},{1.0 if i < 30 else 0.5}\n" for i in range(60))
+    )
+    words = ("--stage", "inverting-low-pass", "--part", "C1=10u", "--quality", "draft")  # 1 s
+    code, _, _ = render(capsys, tmp_path / "level.csv", tmp_path / "out.csv", *words)
+    assert code == 0
+    volts = numbers(tmp_path / "out.csv")[:, 1]
+    np.testing.assert_allclose(volts[:20], -10.0, atol=0.02)  # no charging at the beginning
+    # half a second after the step, whose middle lies between two rows: -5 - 5 exp(-t)
+    assert volts[40] == pytest.approx(-5 - 5 * np.exp(-(40 - 29.5) / 20), abs=0.03)
+
+
 def test_a_rendered_log_reads_back_in_the_same_volts(capsys, log, tmp_path):
     render(capsys, log, tmp_path / "a.tsv", "--column", "2", *GAIN)
     code, text, _ = render(capsys, tmp_path / "a.tsv", tmp_path / "b.wav", *GAIN, "--json")

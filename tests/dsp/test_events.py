@@ -152,6 +152,42 @@ def test_a_square_wave_slews_at_each_edge_for_the_time_it_takes() -> None:
     assert all(min(abs(e.start_s - edge) for edge in [0.0, *edges, 0.01]) < 5 / rate for e in slews)
 
 
+def follower(model: OpAmpModel, load_ohm: float = 600.0, **site: float) -> Netlist:
+    """Unity gain, loaded."""
+    circuit = net([("R1", "in", "a", 1.0), ("Rload", "out", "gnd", load_ohm)], [("a", "out", "out")])
+    return replace(circuit, opamps=tuple(replace(o, model=model, **site) for o in circuit.opamps))
+
+
+def test_the_largest_current_is_reached_when_the_load_asks_for_it() -> None:
+    # 6 V peak into 600 ohm ask for 10 mA; at 7 mA it can give no more: from asin(0.7) to pi - asin(0.7) of each half
+    model = replace(
+        REAL, slew_up_v_per_s=1e9, slew_down_v_per_s=1e9, current_source_a=7e-3, current_sink_a=7e-3
+    )
+    rate, f = 96_000, 500.0
+    t = np.arange(round(rate * 0.02)) / rate
+    events, _ = found(follower(model), 6.0 * np.sin(2 * np.pi * f * t), rate)
+    visits = [e for e in events if e.kind == "current"]
+    angle = math.asin(0.7) / (2 * math.pi * f)
+    expected = [k / (2 * f) + angle for k in range(20)]
+    assert len(visits) == 20
+    assert [e.start_s for e in visits] == pytest.approx(expected, abs=1 / rate)
+    lengths = [1 / (2 * f) - 2 * angle] * 20
+    assert [e.length_s for e in visits] == pytest.approx(lengths, abs=1 / rate)
+    assert not [e for e in events if e.kind == "rail"]
+
+
+def test_the_input_range_is_left_when_the_input_passes_its_ends() -> None:
+    model = replace(REAL, slew_up_v_per_s=1e9, slew_down_v_per_s=1e9)
+    rate, f = 48_000, 300.0
+    t = np.arange(round(rate * 0.02)) / rate
+    circuit = follower(model, 10e3, input_high_v=8.0, input_low_v=-9.0)
+    events, _ = found(circuit, 10.0 * np.sin(2 * np.pi * f * t), rate)
+    visits = [e for e in events if e.kind == "range"]
+    over, under = math.asin(0.8) / (2 * math.pi * f), math.asin(0.9) / (2 * math.pi * f)
+    expected = sorted([k / f + over for k in range(6)] + [(k + 0.5) / f + under for k in range(6)])
+    assert [e.start_s for e in visits] == pytest.approx(expected, abs=1 / rate)
+
+
 def test_a_signal_that_ends_at_the_rail_ends_its_visit_there() -> None:
     amplifier = net([("R1", "in", "s", 1e3), ("R2", "s", "out", 10e3)], [("gnd", "s", "out")])
     stage = StageProcessor(amplifier, sample_rate_hz=48_000, channels=1, quality=Quality.STANDARD)

@@ -36,8 +36,6 @@ def session(
         audio=None,
         stage=changed,
         supply=Supply(rail_v, -rail_v),
-        source_ohm=0.0,
-        load_ohm=None,
         full_scale=parse_full_scale("1 V"),
     )
 
@@ -164,7 +162,7 @@ def test_the_largest_clean_input_is_just_clean_and_a_little_more_is_not(
 
 def test_slew_rate_can_be_what_limits(tmp_path: Path) -> None:
     # 20 kHz and 0.5 V/us: 3.98 V peak, far from the rails
-    made = session("non-inverting-gain", "LM358", C2="4p7", R2="2k2")
+    made = session("non-inverting-gain", "LM741", C2="4p7", R2="2k2")
     volts = sine(20e3, 0.5, 0.3)
     found = check(tmp_path, volts, made)
     (u1,) = found.opamps
@@ -179,6 +177,23 @@ def test_slew_rate_can_be_what_limits(tmp_path: Path) -> None:
     assert loud.opamps[0].clip_events == 0
     assert loud.margin is not None
     assert loud.margin.gain_db == pytest.approx(-3.0, abs=0.03)
+
+
+def test_the_input_range_can_be_what_limits(tmp_path: Path) -> None:
+    # a follower on +-13.5 V whose + input works up to 3 V from either rail: 10.5 V, well before its output's limit
+    made = session("sallen-key-low-pass", "TL072", 13.5)
+    (site,) = made.netlist().opamps
+    room_v = min(site.input_high_v, -site.input_low_v)
+    assert room_v < site.high_v
+    found = check(tmp_path, sine(100.0, 1.0), made)
+    assert found.margin is not None
+    assert found.margin.limit == "input range"
+    assert found.margin.gain_db == pytest.approx(20 * math.log10(room_v), abs=0.05)
+    loud = check(tmp_path, sine(100.0, room_v + 0.5), made)
+    (u1,) = loud.opamps
+    assert u1.input_range_events > 10
+    assert u1.input_range_s > 0.0
+    assert {e.kind for e in loud.events} >= {"range"}
 
 
 def test_a_single_supply_rests_between_its_rails(tmp_path: Path) -> None:

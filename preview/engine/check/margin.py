@@ -15,14 +15,21 @@ from dataclasses import dataclass
 import numpy as np
 
 from preview.circuit.opamp import OpAmpReading
-from preview.dsp.events import EventFinder
+from preview.dsp.events import EventFinder, LimitKind
 from preview.dsp.settle import memory_s
-from preview.engine.check.results import Margin, Proof
+from preview.engine.check.results import Limit, Margin, Proof
 from preview.engine.check.run import Load, Signal, Stages, WholeRun, loads, piece_frames, pieces, settle_at
 from preview.engine.loop import joined_readings
 
 __all__ = ["find_margin"]
 
+LIMITS: dict[LimitKind, Limit] = {
+    "rail": "rail",
+    "slew": "slew rate",
+    "current": "output current",
+    "range": "input range",
+}
+"""Kinds of visits in words."""
 WITHIN = 10.0 ** (0.01 / 20.0)
 """How near the found level is to the largest clean one: 0.01 dB."""
 TRIES = 60
@@ -186,8 +193,11 @@ class _Search:
                 finder.events.clear()
                 continue
             total = joined_readings(total, now) if total else now
-            worst = max(loads(self._stages.netlist, self._whole.rest_v, now), key=lambda load: load.share)
-            if finder.limited or worst.share >= 1.0:
+            worst = max(loads(self._stages.netlist, now), key=lambda load: load.share)
+            if finder.limited:
+                name, kind = finder.first()
+                return _Outcome(False, Load(name, LIMITS[kind], max(worst.share, 1.0)), frame)
+            if not worst.share < 1.0 or stage.core.trouble() is not None:
                 return _Outcome(False, worst, frame)
-        used = loads(self._stages.netlist, self._whole.rest_v, total)
+        used = loads(self._stages.netlist, total)
         return _Outcome(True, max(used, key=lambda load: load.share), first)

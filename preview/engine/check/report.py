@@ -6,6 +6,7 @@ import math
 from collections.abc import Mapping, Sequence
 from dataclasses import asdict, dataclass
 
+from preview.dsp.events import LimitEvent
 from preview.engine.check.results import CheckPlan, FileCheck, FileFailure
 from preview.engine.check.wants import Bound, Miss, Want, margin_of_any_db
 from preview.engine.options import understood_values
@@ -13,7 +14,7 @@ from preview.errors import printable
 from preview.values.levels import dbfs_from_vpk, format_db, format_volts
 from preview.values.notation import format_value
 
-__all__ = ["CheckReport", "columns", "time_code"]
+__all__ = ["CheckReport", "columns", "limit_said", "time_code"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -159,7 +160,7 @@ class CheckReport:
                 format_value(e.length_s, "time"),
                 e.designator,
                 str(e.channel),
-                f"{e.side} rail" if e.kind == "rail" else "slew rate",
+                limit_said(e),
             ]
             for found, name in zip(self.files, names, strict=True)
             for i, e in enumerate(found.events)
@@ -212,7 +213,18 @@ class CheckReport:
         return lines
 
 
-_OPAMP_HEADS = ("file", "op-amp", "peak", "headroom", "clips", "for", "worst at", "slew", "current")
+_OPAMP_HEADS = (
+    "file",
+    "op-amp",
+    "peak",
+    "headroom",
+    "clips",
+    "for",
+    "worst at",
+    "slew",
+    "current",
+    "outside input range",
+)
 _MARGIN_HEADS = ("file", "clean with", "limited by", "run at that level", "any signal of its peak")
 _RUN = {
     "whole file": "all of it",
@@ -234,10 +246,13 @@ def _opamps(found: FileCheck, name: str) -> list[list[str]]:
             "" if math.isnan(o.worst_s) else time_code(o.worst_s),
             _share(o.slew_peak_v_per_s, o.slew_limit_v_per_s),
             _share(o.current_peak_a, o.current_limit_a),
+            f"{o.input_range_events} x, {format_value(o.input_range_s, 'time')}"
+            if o.input_range_events
+            else "",
         ]
         for i, o in enumerate(found.opamps)
     ]
-    return rows or [[name, *[""] * 8]]
+    return rows or [[name, *[""] * (len(_OPAMP_HEADS) - 1)]]
 
 
 def _levels(found: FileCheck, name: str) -> list[list[str]]:
@@ -262,25 +277,34 @@ def _levels(found: FileCheck, name: str) -> list[list[str]]:
 
 
 def _clipping(files: Sequence[FileCheck]) -> str:
-    clips = sum(o.clip_events for f in files for o in f.opamps)
-    slews = sum(o.slew_events for f in files for o in f.opamps)
-    if not clips and not slews:
+    opamps = [o for f in files for o in f.opamps]
+    found = {
+        "clip event": sum(o.clip_events for o in opamps),
+        "visit to the slew rate": sum(o.slew_events for o in opamps),
+        "visit to the largest current": sum(o.current_events for o in opamps),
+        "visit outside the input range": sum(o.input_range_events for o in opamps),
+    }
+    said = [_count(number, what) for what, number in found.items() if number]
+    if not said:
         return "nothing came to a limit"
-    said = [_count(clips, "clip event")] if clips else []
-    if slews:
-        said.append(f"slew rate reached {_count(slews, 'time')}")
-    return (
-        ", ".join(said)
-        + f" in {_count(sum(f.event_count > 0 for f in files), 'of them' if len(files) > 1 else 'file')}"
-    )
+    return f"{', '.join(said)} in {_count(sum(f.event_count > 0 for f in files), 'file')}"
 
 
 def _count(number: int, what: str) -> str:
-    return f"{number} {what}{'s' * (number != 1 and what[-1] != 'm')}"
+    head, *rest = what.split(" ", 1) if what.startswith("visit") else (what,)
+    return " ".join([f"{number} {head}{'s' * (number != 1)}", *rest])
 
 
 def _share(used: float, limit: float) -> str:
     return "" if math.isinf(limit) else f"{100.0 * used / limit:.2g} %"
+
+
+_SAID = {"rail": "rail", "slew": "slew rate", "current": "largest current", "range": "input range"}
+
+
+def limit_said(event: LimitEvent) -> str:
+    """A visit's limit in words."""
+    return f"{event.side} {_SAID[event.kind]}".strip()
 
 
 def time_code(seconds: float) -> str:

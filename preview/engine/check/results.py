@@ -21,7 +21,7 @@ __all__ = [
     "TraceRead",
 ]
 
-Limit = Literal["rail", "slew rate", "output current"]
+Limit = Literal["rail", "slew rate", "output current", "input range"]
 """What bounds the largest clean input."""
 Proof = Literal["whole file", "linear", "loudest passages"]
 """``whole file``: all of it ran clean at that level. ``linear``: it ran clean as it is, where the circuit is linear,
@@ -81,13 +81,13 @@ class OpAmpCheck:
     low_v: float
     """Smallest output [V]."""
     high_limit_v: float
-    """Highest output that it can give [V]; inf without a rail."""
+    """Highest output that it can give, at its lightest load [V]; inf without a rail."""
     low_limit_v: float
-    """Lowest output that it can give [V]."""
+    """Lowest output that it can give, at its lightest load [V]."""
     rest_v: float
     """Output without a signal [V]."""
     headroom_db: float
-    """From its peak to the nearer rail [dB]; 0 at the rail, inf without rail or signal."""
+    """How much more signal it takes before it comes to a rail, under its load [dB]; 0 at it, inf without one."""
     clip_events: int
     """Visits to a rail, all channels together."""
     clipped_s: float
@@ -106,6 +106,14 @@ class OpAmpCheck:
     """Largest magnitude of its output current [A]."""
     current_limit_a: float
     """Limit of its type [A]; inf where it has none."""
+    current_events: int
+    """Visits to its largest output current, all channels together."""
+    current_limited_s: float
+    """Time at its largest output current, all channels together [s]."""
+    input_range_events: int
+    """Visits of its + input outside the common-mode range, all channels together."""
+    input_range_s: float
+    """Time that its + input was there, all channels together [s]."""
     unsolved_steps: int
     """Steps whose limits could not be solved to tolerance; 0 in a healthy run."""
 
@@ -200,4 +208,6 @@ class FileCheck:
     @property
     def event_count(self) -> int:
         """Visits to limits, those without times included."""
-        return sum(o.clip_events + o.slew_events for o in self.opamps)
+        return sum(
+            o.clip_events + o.slew_events + o.current_events + o.input_range_events for o in self.opamps
+        )

@@ -94,26 +94,19 @@ class Load:
     """From rest to the limit."""
 
 
-def loads(netlist: Netlist, rest_v: dict[str, float], readings: tuple[OpAmpReading, ...]) -> list[Load]:
-    """How much of its limits each op-amp used."""
+def loads(netlist: Netlist, readings: tuple[OpAmpReading, ...]) -> list[Load]:
+    """How much of its limits each op-amp used, as far as that can be told."""
     found = []
     for site, reading in zip(netlist.opamps, readings, strict=True):
         name, model = site.designator, site.model
-        rest = rest_v[name]
-        high = _share(reading.high_v - rest, site.high_v - rest)
-        low = _share(rest - reading.low_v, rest - site.low_v)
-        found.append(Load(name, "rail", max(high, low)))
         # one that is faster one way may pass its slower limit that way: the faster one is what it cannot pass
         fastest = max(model.slew_up_v_per_s, model.slew_down_v_per_s)
-        found.append(Load(name, "slew rate", _share(reading.slew_peak_v_per_s, fastest)))
-        found.append(Load(name, "output current", _share(reading.current_peak_a, model.current_limit_a)))
+        found += [
+            Load(name, "rail", 10.0 ** (-reading.headroom_db / 20.0)),
+            Load(name, "slew rate", reading.slew_peak_v_per_s / fastest),
+            Load(name, "output current", reading.current_peak_a / reading.current_limit_a),
+        ]
     return found
-
-
-def _share(used: float, limit: float) -> float:
-    if math.isinf(limit):
-        return 0.0
-    return max(used, 0.0) / limit if limit > 0.0 else math.inf
 
 
 def piece_frames(sample_rate_hz: float) -> int:
@@ -188,7 +181,7 @@ class WholeRun:
     AudioFileError
         The recording cannot be read.
     CircuitError
-        The computation ran away.
+        The computation was stopped by a fault.
     """
 
     def __init__(
@@ -204,7 +197,6 @@ class WholeRun:
         self._rate_hz = float(signal.sample_rate_hz)
         self.settled = settled
         stage = stages.at_rest(signal)
-        self.rest_v = {r.designator: r.high_v for r in stage.readings()}
         if settled:
             settle_at(stage, signal, full_scale_v, 0)
         self._finder = EventFinder(stage)
@@ -256,12 +248,14 @@ class WholeRun:
         name = site.designator
         clip_events, clipped_s = self._counts.get((name, "rail"), (0, 0.0))
         slew_events, slewed_s = self._counts.get((name, "slew"), (0, 0.0))
+        current_events, current_s = self._counts.get((name, "current"), (0, 0.0))
+        range_events, range_s = self._counts.get((name, "range"), (0, 0.0))
         longest, peak = self._longest.get(name), self._peaks[j]
         worst_s = math.nan
         if longest is not None:
             worst_s = longest.start_s
         elif peak.volts is not None:
-            worst_s = self._finder.peak_s(peak.before, peak.frame, peak.volts, j, self.rest_v[name])
+            worst_s = self._finder.peak_s(peak.before, peak.frame, peak.volts, j, reading.rest_v)
         return OpAmpCheck(
             name=name,
             peak_v=reading.peak_v,
@@ -269,7 +263,7 @@ class WholeRun:
             low_v=reading.low_v,
             high_limit_v=site.high_v,
             low_limit_v=site.low_v,
-            rest_v=self.rest_v[name],
+            rest_v=reading.rest_v,
             headroom_db=reading.headroom_db,
             clip_events=clip_events,
             clipped_s=clipped_s,
@@ -279,7 +273,11 @@ class WholeRun:
             slew_events=slew_events,
             slewed_s=slewed_s,
             current_peak_a=reading.current_peak_a,
-            current_limit_a=site.model.current_limit_a,
+            current_limit_a=reading.current_limit_a,
+            current_events=current_events,
+            current_limited_s=current_s,
+            input_range_events=range_events,
+            input_range_s=range_s,
             unsolved_steps=reading.unsolved_steps,
         )
 
@@ -287,18 +285,23 @@ class WholeRun:
         finder = self._finder
         frame = finder.frames
         readings = finder.process(volts, self._out[: len(volts)])
+        fault = finder.stage.fault
+        if fault is not None:
+            raise CircuitError(
+                f"stopped at {fault.time_s:.3f} s: {fault.node}, {fault.reason}",
+                "the circuit may be unstable: check its feedback",
+            )
         self.frames += own
         input_peak_v = self.input.add(volts[:own])
         output_peak_v = self._hear(len(volts))
         self.readings = joined_readings(self.readings, readings) if self.readings else readings
-        found = loads(self._netlist, self.rest_v, readings)
+        found = loads(self._netlist, readings)
         clipped_frames = sum(r.clipped_s for r in readings) * self._rate_hz
         self._remember(max((load.share for load in found), default=0.0) + clipped_frames, frame)
         both = zip(self.loads or found, found, strict=True)
         self.loads = [max(one, other, key=lambda load: load.share) for one, other in both]
-        for j, (site, reading) in enumerate(zip(self._netlist.opamps, readings, strict=True)):
-            rest = self.rest_v[site.designator]
-            far_v = max(reading.high_v - rest, rest - reading.low_v)
+        for j, reading in enumerate(readings):
+            far_v = max(reading.high_v - reading.rest_v, reading.rest_v - reading.low_v)
             if far_v > self._peaks[j].far_v:
                 self._peaks[j] = _Farthest(far_v, frame, volts.copy(), finder.before)
         if own:
@@ -310,13 +313,7 @@ class WholeRun:
         """Take so many frames of the output, those before its beginning and after its end left out; their peak [V]."""
         heard = self._out[min(self._skip, frames) : frames][: self.frames - self.output.frames]
         self._skip -= min(self._skip, frames)
-        peak_v = self.output.add(heard)
-        if not math.isfinite(peak_v):
-            raise CircuitError(
-                f"the computation ran away near {self.output.frames / self._rate_hz:.3f} s",
-                "the circuit may be unstable: check its feedback",
-            )
-        return peak_v
+        return self.output.add(heard)
 
     def _remember(self, load: float, frame: int) -> None:
         """Keep the worst pieces, one of each neighbourhood."""

@@ -201,6 +201,14 @@ def _current(limit: float, opamp: OpAmpCheck) -> str:
     return _used(opamp.current_peak_a, opamp.current_limit_a, limit, "output current")
 
 
+def _range(limit: float, opamp: OpAmpCheck) -> str:
+    return (
+        ""
+        if opamp.input_range_events <= limit
+        else f"outside its input range {opamp.input_range_events} times"
+    )
+
+
 def _margin(want: Want, found: FileCheck, _opamp: OpAmpCheck | None, _bounds: Sequence[Bound]) -> str:
     if found.margin is None or found.margin.gain_db >= want.limit:
         return ""
@@ -240,6 +248,7 @@ _KINDS: dict[str, _Kind] = {
     "clipped": _Kind("clipped 10 ms", True, _seconds, _opamp(_clipped)),
     "slew": _Kind("slew 80 %", True, _share, _opamp(_slew)),
     "current": _Kind("current 50 %", True, _share, _opamp(_current)),
+    "input range": _Kind("input range 0", True, _count, _opamp(_range)),
     "margin": _Kind("margin 6 dB", False, _decibels, _margin),
     "any signal": _Kind("any signal 0 dB", False, _decibels, _any),
     "output": _Kind("output 10 V", False, parse_level, _output),
