@@ -214,6 +214,8 @@ def _supplies_differ(stage: Stage) -> tuple[str, ...]:
         for k, one in enumerate(stage.joined, 1)
     )
     return (f"the stages are drawn with different supplies ({rails}): all run on the first's",)
+
+
 def intake_from(options: argparse.Namespace) -> dict[str, Any]:
     """Fields of a session that take a test signal or live input in place of a recording; empty for a recording.
 

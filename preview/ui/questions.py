@@ -159,7 +159,9 @@ class Questions:
 
         def read(text: str) -> tuple[Session, str]:
             load = parse_load(text)
-            return _tried(replace(self._desk.session, load=load)), "no load" if load == NO_LOAD else said(load)
+            return _tried(replace(self._desk.session, load=load)), "no load" if load == NO_LOAD else said(
+                load
+            )
 
         about = "From out to gnd: none, 600, 10k || 220p; headphones 32 ohm, line input, cable 1n ..."
         return self._value("Load", about, exact_load(self._desk.session.load), read)
