@@ -150,11 +150,15 @@ def _parser() -> argparse.ArgumentParser:
     )
     listen.add_argument("--device", metavar="NAME", help="sound device, by name")
     listen.add_argument(
+        "--signal", metavar="TEXT", help='a test signal in place of a recording, such as "sine 1k 1V"'
+    )
+    listen.add_argument(
         "--plain",
         action="store_true",
         help="lines of text in place of a screen, for screen readers and pipes",
     )
-    listen.add_argument("--live", action="store_true", help=argparse.SUPPRESS)
+    listen.add_argument("--live", action="store_true", help="the device's input in place of a recording")
+    listen.add_argument("--input", metavar="NAME", help="input device of --live, by name")
     add_stage_options(listen)
 
     render = command("render", _render, "the recording through the stage, as a file")

@@ -214,6 +214,8 @@ class DeskApp(DialogApp):
             board.display = name in shown
             board.set_class(len(shown) > 1 and name is not Shown.RESPONSE, "second")
         screen.set_class(shown == {Shown.CIRCUIT}, "drawing")
+        lines = len(self.desk.session.stage.drawing.strip("\n").splitlines()) + 1
+        self.circuit.styles.height = min(max(12, lines), height // 3) if tall and len(shown) > 1 else None
         self.path.styles.height = self.path.wanted_height(height)
         self.timeline.styles.height = 1 if height < 30 else 2 if height < TALL else 3
         self.foot.stand(1 if height < 30 or width >= 160 else 2)

@@ -2,10 +2,12 @@
 
 from __future__ import annotations
 
+from preview.circuit.drive import exact_load, exact_source
 from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Potentiometer, SettablePart
 from preview.circuit.settings import setting_text
 from preview.session import Session
-from preview.ui.words import code, rails, resistance, type_name, volts
+from preview.ui.words import code, rails, type_name, volts
+from preview.values.notation import format_value
 
 __all__ = ["differences"]
 
@@ -25,8 +27,8 @@ def differences(old: Session, new: Session) -> list[str]:
     pairs = [
         ("supply ", rails(old.supply), rails(new.supply)),
         ("output ", old.output, new.output),
-        ("source ", resistance(old.source_ohm), resistance(new.source_ohm)),
-        ("load ", _load(old), _load(new)),
+        ("source ", exact_source(old.source), exact_source(new.source)),
+        ("load ", exact_load(old.load), exact_load(new.load)),
         ("without ", ", ".join(old.without) or "nothing", ", ".join(new.without) or "nothing"),
     ]
     return [*lines, *(f"{name}{before} → {after}" for name, before, after in pairs if before != after)]
@@ -34,10 +36,6 @@ def differences(old: Session, new: Session) -> list[str]:
 
 def _names(session: Session) -> set[str]:
     return {part.designator for part in session.stage.parts}
-
-
-def _load(session: Session) -> str:
-    return "none" if session.load_ohm is None else resistance(session.load_ohm)
 
 
 def _said(part: Part | None) -> str:
@@ -49,7 +47,7 @@ def _said(part: Part | None) -> str:
     if isinstance(part, FixedVoltage):
         return volts(part.value)
     if isinstance(part, Potentiometer):
-        return f"{code(part)} of {resistance(part.value)}"
+        return f"{code(part)} of {format_value(part.value, 'resistance', digits=4)}"
     text = code(part)
     if isinstance(part, SettablePart) and "." in text:  # a code has no more than the digits that are exact
         return setting_text(part)

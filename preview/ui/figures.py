@@ -124,8 +124,8 @@ def heard_band_hz(sample_rate_hz: float) -> float:
 def job_of(session: Session, sample_rate_hz: float) -> FigureJob:
     """What is to be computed for a session; raises CircuitError."""
     drawn = None
-    if session.source_ohm or session.load_ohm is not None:
-        drawn = replace(session, source_ohm=0.0, load_ohm=None).netlist()
+    if (session.source, session.load) != (IDEAL_SOURCE, NO_LOAD):
+        drawn = replace(session, source=IDEAL_SOURCE, load=NO_LOAD).netlist()
     return FigureJob(session.netlist(), drawn, sample_rate_hz, session.quality)
 
 

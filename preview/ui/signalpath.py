@@ -38,15 +38,17 @@ class State(IntEnum):
     """At the slew limit."""
     CURRENT = 4
     """At the limit of its output current."""
-    CLIPS = 5
+    RANGE = 5
+    """An input outside of the range that it follows."""
+    CLIPS = 6
     """At a rail."""
-    UNSOLVED = 6
+    UNSOLVED = 7
     """Its limits could not be solved to tolerance."""
 
     @property
     def word(self) -> str:
         """As the screen says it."""
-        return ["fine", "near", "FULL", "SLEWS", "CURRENT", "CLIPS", "UNSOLVED"][self]
+        return ["fine", "near", "FULL", "SLEWS", "CURRENT", "RANGE", "CLIPS", "UNSOLVED"][self]
 
 
 @dataclass(frozen=True, slots=True)
@@ -144,7 +146,7 @@ def _opamp_row(desk: Desk, site: OpAmpSite, reading: OpAmpReading | None, live_v
     slew_ratio = None
     if math.isfinite(reading.slew_limit_v_per_s):
         slew_ratio = reading.slew_peak_v_per_s / reading.slew_limit_v_per_s
-    limit_a = site.model.current_limit_a
+    limit_a = reading.current_limit_a
     current_ratio = reading.current_peak_a / limit_a if math.isfinite(limit_a) else None
     room_db = reading.headroom_db if math.isfinite(reading.headroom_db) else math.nan
     # A visit to the rail that was under way when the counts were cleared is one visit since then.
@@ -154,7 +156,9 @@ def _opamp_row(desk: Desk, site: OpAmpSite, reading: OpAmpReading | None, live_v
         state = State.UNSOLVED
     elif events:
         state = State.CLIPS
-    elif current_ratio is not None and current_ratio >= AT_THE_LIMIT:
+    elif reading.input_range_events:
+        state = State.RANGE
+    elif reading.current_limited_s > 0.0:
         state = State.CURRENT
     elif slew_ratio is not None and slew_ratio >= AT_THE_LIMIT:
         state = State.SLEWS

@@ -79,7 +79,7 @@ def verdicts(desk: Desk, designator: str | None = None) -> list[Verdict]:
         reading = readings.get(site.designator)
         lines = [_swing(desk, site, reading)]
         if reading is not None:
-            lines += _slew(desk, site, reading) + _current(site, reading)
+            lines += _slew(desk, site, reading) + _current(site, reading) + _input_range(site, reading)
         lines += _offset(desk, site) + _speed(desk, site) + _noise(desk, site)
         found += sorted(lines, key=lambda verdict: -verdict.grade)
     return found
@@ -169,17 +169,33 @@ def _slew(desk: Desk, site: OpAmpSite, reading: OpAmpReading) -> list[Verdict]:
 
 
 def _current(site: OpAmpSite, reading: OpAmpReading) -> list[Verdict]:
-    limit_a = site.model.current_limit_a
+    limit_a = reading.current_limit_a
     if not math.isfinite(limit_a):
         return []
     used = reading.current_peak_a / limit_a
     text = f"{milliamperes(reading.current_peak_a)} of {milliamperes(limit_a)}"
-    if used >= AT_THE_LIMIT:
+    if reading.current_limited_s > 0.0:
+        text += f", at its limit for {duration(reading.current_limited_s)}"
         cure = "larger resistors around it, a lighter load, or a buffer"
-        return [Verdict(site.designator, "current", Grade.LIMITS, f"{text}, at its limit", cure)]
+        return [Verdict(site.designator, "current", Grade.LIMITS, text, cure)]
     grade = _graded(-ratio_db(used)) if used > 0.0 else Grade.FINE
     cure = "fine" if grade is Grade.FINE else "a lighter load for more room"
     return [Verdict(site.designator, "current", grade, text, cure)]
+
+
+def _input_range(site: OpAmpSite, reading: OpAmpReading) -> list[Verdict]:
+    if not (math.isfinite(site.input_high_v) or math.isfinite(site.input_low_v)):
+        return []
+    limits_v = f"{volts(site.input_low_v)} to {volts(site.input_high_v)}"
+    if not reading.input_range_events and reading.input_range_s == 0.0:
+        return [Verdict(site.designator, "input range", Grade.FINE, f"{limits_v}, never left", "fine")]
+    events = max(reading.input_range_events, 1)
+    times = "once" if events == 1 else f"{events} times"
+    text = f"{limits_v}, left {times} for {duration(reading.input_range_s)}"
+    cure = (
+        "more supply, less signal at its inputs, an inverting stage, or a type whose inputs reach the rails"
+    )
+    return [Verdict(site.designator, "input range", Grade.LIMITS, text, cure)]
 
 
 def _offset(desk: Desk, site: OpAmpSite) -> list[Verdict]:

@@ -73,7 +73,7 @@ def code(part: Part) -> str:
 
 def db(level_db: float) -> str:
     """A level difference with one decimal; ``-`` where there is none."""
-    return f"{level_db + 0.0:.1f}" if math.isfinite(level_db) else "-"
+    return f"{round(level_db, 1) + 0.0:.1f}" if math.isfinite(level_db) else "-"
 
 
 def dbu(level_vrms: float) -> str:

@@ -6,6 +6,7 @@ from dataclasses import replace
 
 import pytest
 
+from preview.circuit.drive import LoadModel, SourceModel
 from preview.circuit.library import find_stage
 from preview.circuit.parts import Supply
 from preview.engine.messages import (
@@ -203,13 +204,19 @@ def test_a_candidate_that_is_not_heard_can_be_dropped(desk, engine) -> None:
 def test_differences_name_parts_op_amps_supply_source_load_and_limits(session) -> None:
     changed = with_setting(session, "R1", 22e3)
     changed = with_opamp_type(changed, "TL072")[0]
-    changed = replace(changed, supply=Supply(12.0, -12.0), source_ohm=600.0, load_ohm=10e3, without=("slew",))
+    changed = replace(
+        changed,
+        supply=Supply(12.0, -12.0),
+        source=SourceModel(600.0),
+        load=LoadModel(10e3),
+        without=("slew",),
+    )
     assert differences(session, changed) == [
         "R1 10k → 22k",
         "U1 ideal → TL072",
         "supply ±15 V → ±12 V",
-        "source 0 Ω → 600 Ω",
-        "load none → 10 kΩ",
+        "source none → 600R",
+        "load none → 10k",
         "without nothing → slew",
     ]
     assert differences(session, session) == []

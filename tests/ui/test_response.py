@@ -8,6 +8,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
+from preview.circuit.drive import SourceModel
 from preview.engine.messages import SpectrumReading
 from preview.ui.desk import Desk
 from preview.ui.figures import Figures, compute_figures, heard_band_hz, job_of
@@ -180,7 +181,7 @@ def test_as_drawn_is_a_curve_of_its_own_where_source_or_load_make_a_difference(d
     desk.figures.now = replace(now, drawn_db=now.gain_db + 12.0)
     assert "as drawn" in _rows(desk)[0]
     assert len(_styles(desk)) == 2
-    desk.change(replace(desk.session, source_ohm=10e3))
+    desk.change(replace(desk.session, source=SourceModel(10e3)))
     found = compute_figures(job_of(desk.session, 0.0))
     # 10 kilohm before the 10 kilohm at the input halve the gain: 6.02 dB
     assert found.at(found.drawn_db, 100.0) - found.at(found.gain_db, 100.0) == pytest.approx(6.02, abs=0.01)

@@ -171,7 +171,7 @@ def fail(self):
 
 DeskApp.{method} = fail
 stage = find_stage("inverting-low-pass")
-session = Session(None, stage, stage.supply, 0.0, None, parse_full_scale("+18 dBu"))
+session = Session(None, stage, stage.supply, parse_full_scale("+18 dBu"))
 try:
     run_desk(session, StillLink(), autoplay=False)
 except PreviewError as error:

@@ -148,13 +148,26 @@ def test_slewing_names_the_rate_that_would_be_enough(desk, engine) -> None:
 
 
 def test_current_is_told_against_its_limit(desk, engine) -> None:
-    limit_a = desk.sites()[0].model.current_limit_a
-    say(desk, engine, current_peak_a=0.1 * limit_a)
-    assert verdict(desk, "current").line.endswith(": fine")
-    say(desk, engine, current_peak_a=limit_a)
+    say(desk, engine, current_peak_a=2.5e-3, current_limit_a=25e-3)
+    assert verdict(desk, "current").line == "current 2.50 mA of 25.0 mA: fine"
+    say(desk, engine, current_peak_a=25e-3, current_limit_a=25e-3, current_limited_s=0.0012)
+    assert verdict(desk, "current").text == "25.0 mA of 25.0 mA, at its limit for 1.2 ms"
     assert "a buffer" in verdict(desk, "current").cure
+    say(desk, engine)
+    assert not [v for v in verdicts(desk) if v.aspect == "current"], "no limit, no line"
+
+
+def test_an_input_outside_of_its_range_says_how_often_and_what_helps(desk, engine) -> None:
+    say(desk, engine)
+    assert verdict(desk, "input range").grade is Grade.FINE
+    say(desk, engine, input_range_events=12, input_range_s=0.003)
+    found = verdict(desk, "input range")
+    assert found.grade is Grade.LIMITS
+    assert "left 12 times for 3.0 ms" in found.text
+    assert "less signal at its inputs" in found.cure
     desk.change(with_opamp_type(desk.session, "ideal")[0])
-    assert not [v for v in verdicts(desk) if v.aspect in ("current", "speed", "offset")]
+    say(desk, engine)
+    assert not [v for v in verdicts(desk) if v.aspect in ("input range", "speed", "offset")]
 
 
 # ---- speed, offset, noise: from the exact circuit ----

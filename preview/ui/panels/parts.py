@@ -23,6 +23,7 @@ __all__ = ["PartsPanel"]
 _VALUE, _SERIES, _TOLERANCE = 9, 5, 6
 _SLIDER = 9
 """Cells of a potentiometer's track."""
+_SHORT = {"linear": "lin", "reverse-log": "r-log", "switch": ""}
 _ROLE_FROM = 18
 """With so many cells to spare each row has its part's role."""
 
@@ -63,6 +64,7 @@ class PartsPanel(Board):
     def _part_row(self, part: SettablePart, chosen: bool, names: int, width: int) -> Row:
         palette = self.look.palette
         series, tolerance = kind_words(part)
+        series = _SHORT.get(series, series)
         fits = not isinstance(part, TwoTerminal) or contains(part.value, series_of(part))
         text = f"{fit(printable(part.designator), names)} {fit(setting_text(part), _VALUE)} {' ' if fits else '≠'}"
         text += fit(series, _SERIES)
