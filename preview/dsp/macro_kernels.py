@@ -27,7 +27,7 @@ from preview.dsp.kernels import (
     recur,
     signal_part,
 )
-from preview.dsp.port_kernels import solve_ports
+from preview.dsp.port_kernels import keep_ports, solve_ports
 from preview.dsp.regime_kernels import (
     ABOVE,
     AT_HIGH,
@@ -252,10 +252,8 @@ def walk(
                     if span > 1:
                         level, span = level + 1, span // 2
                         continue
-                    st[0, UNSOLVED] += 1.0
-                    for p in range(2 * ports):
-                        if not np.isfinite(currents[p]):
-                            currents[p] = 0.0
+                    st[0, UNSOLVED] += span / whole
+                    keep_ports(all_laws[leg], junctions, currents)
                 for b in range(2 * ports):
                     f, column = currents[b], parts[slot, level, size + 4 + b]
                     for r in range(at_mean + 1):

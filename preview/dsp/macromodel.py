@@ -366,7 +366,8 @@ class MacroModel:
                 walls[:, 0, i], walls[:, 1, i] = -model.current_sink_a, model.current_source_a
             rails[:, :, i] = low, high
         for j, s in enumerate(self._slopes):
-            walls[:, 0, 2 * k + j], walls[:, 1, 2 * k + j] = s.low_v, s.high_v
+            if np.abs(gains[:, 2 * k + j]).min() >= LEAST_WALL_GAIN:
+                walls[:, 0, 2 * k + j], walls[:, 1, 2 * k + j] = s.low_v, s.high_v
         with np.errstate(invalid="ignore"):
             rails = rails * share[:, :, None]
             walls[:, :, k:] = walls[:, :, k:] * share[:, :, None]

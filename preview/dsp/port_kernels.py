@@ -150,6 +150,9 @@ def solve_ports(
     size = 2 * ports
     J, right = room[:size], room[size]
     slope = room[size + 1]
+    for p in range(ports):  # Newton comes down an exponential by no more than its slope voltage a turn
+        for at in (1, 2):
+            v[at, p] = limited_move(laws[p], v[0, p], v[at, p])
     for _ in range(MAX_TURNS):
         for p in range(ports):
             law = laws[p]
@@ -213,3 +216,15 @@ def solve_ports(
                     i[ports + p], _g = junction(law, v[2, p])
             return True
     return False
+
+
+@compiled
+def keep_ports(laws: Any, v: Any, i: Any) -> None:
+    """Where no solution is found: every port stays at the voltage and current it had."""
+    ports = laws.shape[0]
+    for p in range(ports):
+        v[1, p] = v[2, p] = v[0, p]
+        current = 0.0
+        if laws[p, HALF] == 0.0:
+            current, _g = junction(laws[p], v[0, p])
+        i[p] = i[ports + p] = current

@@ -34,7 +34,7 @@ POWER_ON_S = 0.05
 """Time that a supply takes to come up [s]."""
 
 MOST_UNSOLVED = 0.25
-"""Share of a block's steps that may be left without a solution before the circuit is stopped."""
+"""Share of the steps of a block or more that may be left without a solution before the circuit is stopped."""
 
 BLOCK_FRAMES = 128
 """Frames computed at a time."""
@@ -102,7 +102,8 @@ class StageProcessor:
     ) -> None:
         self.quality = quality
         self.fault: Fault | None = None
-        self._frames = self._unsolved = 0
+        self._frames = self._judged = 0
+        self._unsolved = 0.0
         self.sample_rate_hz = float(sample_rate_hz)
         self.channels = channels
         self.filters = design(factor_for(quality, sample_rate_hz))
@@ -156,7 +157,7 @@ class StageProcessor:
     def reset(self) -> None:
         """Back to rest: the operating point without a signal, empty filters; a fault is forgotten."""
         self.fault = None
-        self._frames = self._unsolved = 0
+        self._frames = self._judged = 0
         for a in (self._x, self._a, self._u, self._split, self._w):
             a[...] = 0.0
         self._core.reset(self._matrices)
@@ -277,8 +278,11 @@ class StageProcessor:
                 self.fault = Fault(node, self._frames / self.sample_rate_hz, reason)
                 volts_out[done - count :] = 0.0
                 return
-            unsolved = int(self._core.unsolved())
-            if unsolved - self._unsolved > MOST_UNSOLVED * steps:
+            if self._frames < self._judged + BLOCK_FRAMES:  # however the signal is cut
+                continue
+            judged, self._judged = self._judged, self._frames
+            unsolved = self._core.unsolved()
+            if unsolved - self._unsolved > MOST_UNSOLVED * (self._frames - judged) * f.factor:
                 reason = "its limits and diodes find no common solution"
                 self.fault = Fault(self._core.first_name(), self._frames / self.sample_rate_hz, reason)
                 volts_out[done - count :] = 0.0
@@ -317,6 +321,7 @@ class StageProcessor:
     def clear_readings(self) -> None:
         """Start the readings of every op-amp anew."""
         self._core.clear()
+        self._unsolved = 0.0
 
     def readings(self) -> tuple[OpAmpReading, ...]:
         """What each op-amp did since the readings were cleared, worst channel."""
@@ -342,7 +347,7 @@ class StageProcessor:
                     input_range_events=int(s[:, kernels.OUTSIDE_EVENTS].sum()),
                     input_range_s=float(s[:, kernels.OUTSIDE].sum()) * self.step_s,
                     rest_v=self._core.rest_v(j),
-                    unsolved_steps=int(s[:, kernels.UNSOLVED].sum()),
+                    unsolved_steps=math.ceil(s[:, kernels.UNSOLVED].sum()),
                 )
             )
         return tuple(result)
