@@ -125,7 +125,7 @@ def _parser() -> argparse.ArgumentParser:
     from preview.cli_check import add_check_options
     from preview.cli_distortion import add_distortion_options
     from preview.engine.logoptions import add_log_options
-    from preview.engine.options import add_stage_options
+    from preview.engine.options import add_running_options, add_stage_options
 
     parser = _Parser(
         prog="preview",
@@ -160,6 +160,7 @@ def _parser() -> argparse.ArgumentParser:
     listen.add_argument("--live", action="store_true", help="the device's input in place of a recording")
     listen.add_argument("--input", metavar="NAME", help="input device of --live, by name")
     add_stage_options(listen)
+    add_running_options(listen)
 
     render = command("render", _render, "the recording through the stage, as a file")
     render.add_argument("audio", type=_name, metavar="AUDIO", help="the recording; - is stdin")
@@ -175,6 +176,7 @@ def _parser() -> argparse.ArgumentParser:
     _add_shapes(render)
     add_log_options(render)
     add_stage_options(render)
+    add_running_options(render)
 
     check = command("check", _check, "will it clip? headroom at every op-amp over whole recordings")
     add_check_options(check)
@@ -272,7 +274,7 @@ def _listen(options: argparse.Namespace) -> int:
 def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     from preview.audio.files import probe
     from preview.engine.demo import demo_recording
-    from preview.engine.options import DEFAULT_STAGE, intake_from, session_from
+    from preview.engine.options import DEFAULT_STAGE, intake_from, running_from, session_from
     from preview.engine.process import EngineConfig, EngineProcess
     from preview.network.stability import check_stable
     from preview.session import AtEnd
@@ -298,7 +300,9 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
         )
     comment = info.comment if info is not None else ""
     session = session_from(options, audio=audio, comment=comment, at_end=AtEnd(options.end), stage=stage)
-    session = replace(session, notes=(*session.notes, *intake.pop("notes", ())), **intake)
+    session = replace(
+        session, notes=(*session.notes, *intake.pop("notes", ())), **intake, **running_from(options)
+    )
     _echo(session, info.warnings if info is not None else ())
     check_stable(session.netlist())
     if engine is None:
@@ -343,7 +347,7 @@ def _warn(warnings: Iterable[str]) -> None:
 def _render(options: argparse.Namespace) -> int:
     from preview.audio.sink import check_output
     from preview.engine.logoptions import assumed_full_scale, log_format, state_per_unit
-    from preview.engine.options import session_from
+    from preview.engine.options import running_from, session_from
     from preview.engine.progress import Progress
     from preview.engine.render import open_source, render
     from preview.engine.report import render_lines, render_object
@@ -358,6 +362,7 @@ def _render(options: argparse.Namespace) -> int:
         session = session_from(
             options, audio=audio, comment=info.comment, assumed_full_scale=assumed_full_scale(audio)
         )
+        session = replace(session, **running_from(options))
         said = source.warnings
         _echo(session, said)
         progress = Progress(info.frames, sys.stderr)

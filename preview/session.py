@@ -12,6 +12,7 @@ from preview.circuit.nodes import OUT
 from preview.circuit.opamp import Limit
 from preview.circuit.parts import Stage, Supply
 from preview.values.levels import FullScale
+from preview.values.noise import NoiseSetting
 from preview.values.quality import Quality
 from preview.values.stimulus import Stimulus
 
@@ -55,6 +56,10 @@ class Session:
     """What of the options may not be as it was meant, one line each."""
     without: tuple[Limit, ...] = ()
     """Limits taken away from every op-amp, to hear what they do."""
+    noise: NoiseSetting | None = None
+    """Whether the noise of the parts is heard."""
+    power_on: bool = False
+    """Whether it begins by being switched on, and not at rest."""
     stimulus: Stimulus | None = None
     """The test signal in place of a recording."""
     live: bool = False

@@ -6,7 +6,7 @@ import numpy as np
 
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
-from preview.dsp.stage import BLOCK_FRAMES, StageProcessor
+from preview.dsp.stage import BLOCK_FRAMES, Fault, StageProcessor
 
 __all__ = ["FADE_S", "SETTLE_S", "Chain"]
 
@@ -59,6 +59,11 @@ class Chain:
     def gliding(self) -> bool:
         """Whether a part is on its way to a new value."""
         return self.processor.gliding
+
+    @property
+    def fault(self) -> Fault | None:
+        """Why the stage that is heard was stopped; None while all is well."""
+        return self._current.fault
 
     @property
     def bypassed(self) -> bool:

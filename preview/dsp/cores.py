@@ -12,11 +12,12 @@ from preview.circuit.netlist import Netlist
 from preview.dsp import kernels, macro_kernels, port_kernels, regime_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
-from preview.dsp.noise import NoiseSetting, NoiseSource
+from preview.dsp.noise import NoiseSource
 from preview.dsp.rest import resting_state
 from preview.errors import CircuitError
 from preview.network.expansion import has_real_opamps
 from preview.network.statespace import Topology
+from preview.values.noise import NoiseSetting
 
 __all__ = ["Core", "Matrices", "core_for", "following_step", "runs_as_they_are"]
 

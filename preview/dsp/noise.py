@@ -9,7 +9,6 @@ sum of many of them. The 1/f parts of the op-amps vary slowly and enter as volta
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
@@ -18,8 +17,9 @@ from scipy.linalg import expm
 from preview.circuit.parts import PartKind
 from preview.dsp.macromodel import MacroModel
 from preview.dsp.noise_kernels import fill_noise
+from preview.values.noise import NoiseSetting
 
-__all__ = ["NoiseSetting", "NoiseSource"]
+__all__ = ["NoiseSource"]
 
 Real = NDArray[np.float64]
 
@@ -30,16 +30,6 @@ UPDATES_PER_FRAME = 4
 SECTIONS_PER_DECADE = 2
 LOWEST_HZ = 0.1
 """Where the 1/f parts stop rising towards 0 Hz [Hz]."""
-
-
-@dataclass(frozen=True, slots=True)
-class NoiseSetting:
-    """Whether the noise of the parts is heard."""
-
-    gain_db: float = 0.0
-    """By how much it is brought up for study [dB]."""
-    seed: int = 1
-    """Which noise it is."""
 
 
 class NoiseSource:

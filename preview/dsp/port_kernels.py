@@ -20,9 +20,9 @@ MAX_TURNS = 60
 TOLERANCE_V = 1e-8
 """Last change at which the voltages are taken as found; the error left is about its square over the slope voltage."""
 
-# columns of a port's law. A junction conducts forward as SATURATION and SLOPE say; the other way, where BACK_SLOPE is
-# above zero, from BACK on: a breakdown, or the second of two diodes back to back (BACK 0). CRITICAL: where Newton's steps
-# are shortened. A class 2 capacitor has a HALF voltage.
+# columns of a port's law. A junction conducts forward as SATURATION and SLOPE say; the other way, where BACK_SLOPE
+# is above zero, from BACK on: a breakdown, or the second of two diodes back to back (BACK 0). CRITICAL: where steps
+# of Newton are shortened. A class 2 capacitor has a HALF voltage.
 (
     SATURATION,
     SLOPE,

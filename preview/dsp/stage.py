@@ -17,13 +17,13 @@ from preview.compiled import in_cache
 from preview.dsp import kernels, rate_kernels
 from preview.dsp.block import Volts
 from preview.dsp.cores import Core, MacroCore, Matrices, core_for
-from preview.dsp.noise import NoiseSetting
 from preview.dsp.oversample import LATENCY_FRAMES, design, factor_for
 from preview.errors import PartValueError, UnknownNameError
 from preview.network.stability import check_stable
+from preview.values.noise import NoiseSetting
 from preview.values.quality import Quality
 
-__all__ = ["GLIDE_S", "Fault", "Glide", "NoiseSetting", "Snapshot", "StageProcessor", "load_kernels"]
+__all__ = ["GLIDE_S", "Fault", "Glide", "Snapshot", "StageProcessor", "load_kernels"]
 
 Real = NDArray[np.float64]
 

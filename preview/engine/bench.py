@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 
 from preview.circuit.netlist import Netlist
 from preview.engine.player import Player
+from preview.values.noise import NoiseSetting
 from preview.values.quality import Quality
 
 if TYPE_CHECKING:
@@ -26,10 +27,22 @@ class Bench:
         Who runs the rack.
     ready : callable
         Called when the first stage is built and everything is loaded.
+    noise : NoiseSetting, optional
+        The noise of the parts is heard too.
+    power_on : bool
+        The first stage begins by being switched on.
     """
 
-    def __init__(self, player: Player, ready: Callable[[], None]) -> None:
+    def __init__(
+        self,
+        player: Player,
+        ready: Callable[[], None],
+        *,
+        noise: NoiseSetting | None = None,
+        power_on: bool = False,
+    ) -> None:
         self._player = player
+        self._noise, self._power_on = noise, power_on
         self._ready = ready
         self._rack: Rack | None = None
         self._stages: dict[str, StageProcessor] = {}
@@ -45,8 +58,14 @@ class Bench:
 
         player = self._player
         stage = StageProcessor(
-            netlist, sample_rate_hz=player.sample_rate_hz, channels=player.channels, quality=quality
+            netlist,
+            sample_rate_hz=player.sample_rate_hz,
+            channels=player.channels,
+            quality=quality,
+            noise=self._noise,
         )
+        if self._power_on and self._rack is None:
+            stage.power_on()
         self._stages[letter] = stage
         rack = self._rack
         if rack is not None:

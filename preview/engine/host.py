@@ -291,7 +291,8 @@ class Host:
         )
         player.set_bypass(setup.bypass)
         player.set_at_end(setup.at_end)
-        bench = Bench(player, self._first_circuit_ready)
+        session = self._config.session
+        bench = Bench(player, self._first_circuit_ready, noise=session.noise, power_on=session.power_on)
         preparer = Preparer(
             bench,
             netlists=setup.netlists,

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import replace
-from typing import Protocol
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -15,6 +15,9 @@ from preview.dsp.block import Volts
 from preview.engine.readings import FaultReading
 from preview.meters.reading import LevelReading
 
+if TYPE_CHECKING:
+    from preview.dsp.stage import Fault
+
 __all__ = ["Circuit", "LiveCircuit", "Meter", "Samples", "SignalPath", "joined_readings", "peak"]
 
 Samples = NDArray[np.float64]
@@ -23,6 +26,10 @@ Samples = NDArray[np.float64]
 
 class Circuit(Protocol):
     """A running circuit."""
+
+    @property
+    def fault(self) -> FaultReading | Fault | None:
+        """Why it has given up, None while all is well."""
 
     @property
     def latency_frames(self) -> int:

@@ -21,6 +21,7 @@ from preview.values.levels import (
     parse_full_scale,
     parse_supply,
 )
+from preview.values.noise import NoiseSetting
 from preview.values.notation import format_value, parse_value, quoted
 from preview.values.quality import Quality
 from preview.values.stimulus import parse_stimulus
@@ -28,6 +29,7 @@ from preview.values.stimulus import parse_stimulus
 __all__ = [
     "DEFAULT_FULL_SCALE",
     "DEFAULT_STAGE",
+    "add_running_options",
     "add_stage_options",
     "check_together",
     "for_option",
@@ -35,9 +37,13 @@ __all__ = [
     "intake_from",
     "join_signed_values",
     "picture_kind",
+    "running_from",
     "session_from",
     "understood_values",
 ]
+
+MOST_NOISE_GAIN_DB = 120.0
+"""Most that the noise of the parts can be brought up [dB]."""
 
 T = TypeVar("T")
 
@@ -60,6 +66,7 @@ VALUE_OPTIONS = (
     "--depth",
     "--device",
     "--end",
+    "--part-noise",
     "--signal",
     "--input",
     "--limit",
@@ -133,6 +140,37 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
         default=Quality.STANDARD.value,
         help="draft, standard (default) or fine",
     )
+
+
+def add_running_options(parser: argparse.ArgumentParser) -> None:
+    """Add the options of commands that run the circuit for the ear."""
+    group = parser.add_argument_group("running options")
+    group.add_argument(
+        "--part-noise",
+        nargs="?",
+        const="0 dB",
+        metavar="GAIN",
+        help='the noise of resistors and op-amps is there too; "40 dB" brings it up for study',
+    )
+    group.add_argument("--noise-seed", type=int, default=1, metavar="N", help="which noise (default 1)")
+    group.add_argument(
+        "--power-on", action="store_true", help="begin by being switched on, and not settled at rest"
+    )
+
+
+def running_from(options: argparse.Namespace) -> dict[str, Any]:
+    """Fields of a session from ``add_running_options``; raises UsageError."""
+    fields: dict[str, Any] = {"power_on": options.power_on}
+    if options.part_noise is not None:
+        gain_db = for_option(
+            "--part-noise", lambda: parse_value(options.part_noise, "gain_db", allow_zero=True)
+        )
+        if not abs(gain_db) <= MOST_NOISE_GAIN_DB:
+            raise UsageError(f"--part-noise {gain_db:g} dB", f"at most {MOST_NOISE_GAIN_DB:g} dB up or down")
+        if not 0 <= options.noise_seed < 2**31:
+            raise UsageError(f"--noise-seed {options.noise_seed}", "a whole number from 0 to 2147483647")
+        fields["noise"] = NoiseSetting(gain_db, options.noise_seed)
+    return fields
 
 
 def session_from(

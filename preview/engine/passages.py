@@ -33,7 +33,7 @@ class Source(Protocol):
         """Channels."""
 
     @property
-    def sample_rate_hz(self) -> int:
+    def sample_rate_hz(self) -> float:
         """Sample rate [Hz]."""
 
     @property

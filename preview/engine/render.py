@@ -160,12 +160,16 @@ def render(
     rate, channels = source.sample_rate_hz, source.channels
     circuit = session.netlist()
     scale_v = 1.0 if holds_volts(out) else output_scale_v(circuit, session, depth)
-    stage = StageProcessor(circuit, sample_rate_hz=rate, channels=channels, quality=session.quality)
+    stage = StageProcessor(
+        circuit, sample_rate_hz=rate, channels=channels, quality=session.quality, noise=session.noise
+    )
     if isinstance(source, LogSource):  # its first value was there long before
         first = np.zeros((1, channels))
         source.read(first)
         source.seek(0)
         settle(stage, first[0] * session.full_scale.volts)
+    if session.power_on:
+        stage.power_on()
     chain = Chain(stage)
     path = SignalPath(
         chain,
@@ -226,6 +230,13 @@ def stream(
         run += frames
         input_peak_v = max(input_peak_v, peak(volts_in))
         block_peak_v = peak(volts_out)
+        fault = path.circuit.fault
+        if fault is not None:
+            raise CircuitError(
+                f"the circuit was stopped at {fault.time_s:.3f} s, at {fault.node}: {fault.reason}; "
+                "nothing was written",
+                "another value there, less drive, or a finer quality",
+            )
         if not math.isfinite(block_peak_v):
             raise CircuitError(
                 f"the computation ran away near {written / source.sample_rate_hz:.3f} s; nothing was written",

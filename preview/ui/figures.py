@@ -10,6 +10,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 from numpy.typing import NDArray
 
+from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import Limit
 from preview.errors import PreviewError

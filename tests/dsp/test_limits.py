@@ -15,7 +15,6 @@ from scipy.special import erf, wrightomega
 
 from preview.circuit.netlist import FixedNode, Junction, Netlist, Port
 from preview.circuit.opamp import Limit, OpAmpModel
-from preview.dsp.noise import NoiseSetting
 from preview.dsp.stage import POWER_ON_S, StageProcessor
 from preview.network.expansion import (
     CROSSOVER_AT_A,
@@ -24,6 +23,7 @@ from preview.network.expansion import (
 )
 from preview.network.operating import operating_point
 from preview.network.transfer import response
+from preview.values.noise import NoiseSetting
 from preview.values.quality import Quality
 from tests.nets import LOW_PASS, SALLEN_KEY, Row, net
 

@@ -10,10 +10,11 @@ from numpy.typing import NDArray
 from scipy.linalg import expm
 
 from preview.circuit.opamp import OpAmpModel
-from preview.dsp.noise import NoiseSetting, _covariance
+from preview.dsp.noise import _covariance
 from preview.dsp.noise_kernels import evenly, fill_noise
 from preview.dsp.stage import StageProcessor
 from preview.network.noise import OutputNoise
+from preview.values.noise import NoiseSetting
 from preview.values.quality import Quality
 from tests.dsp.test_macromodel import with_model
 from tests.nets import LOW_PASS, SALLEN_KEY, net
