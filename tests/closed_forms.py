@@ -209,6 +209,17 @@ def microphone_gain(s, R1, R2, R3, R4, C1, C2, C3, P1b):
     return shunt / (R1 + shunt) * (1 + par(R4, 1 / (s * C3)) / (R3 + P1b + 1 / (s * C2)))
 
 
+def single_supply_gain(s, R1, R2, R3, R4, R5, R6, C1, C2, C3, C4):
+    bias = R3 + par(R1, R2, 1 / (s * C2))
+    return bias / (bias + 1 / (s * C1)) * (1 + R5 / (R4 + 1 / (s * C3))) * R6 / (R6 + 1 / (s * C4))
+
+
+def soft_limiter(s, R1, R2, R3, D1, D2, D1leak, D2leak, D1junction, D2junction):
+    """For signals too small to turn a diode on; D1 and D2 are its slope at 0 V."""
+    pair = par(D1, D2, D1leak, D2leak, 1 / (s * (D1junction + D2junction)))
+    return -par(R2, R3 + pair) / R1
+
+
 def headphone_output(s, R1, R2, R3, R4, R5, C1):
     return (1 + par(R3, 1 / (s * C1)) / R2 if s else 1 + R3 / R2) * R5 / (R4 + R5)
 
@@ -251,6 +262,8 @@ GAIN: dict[str, Gain] = {
     "sallen-key-high-pass-gain": sallen_key_high_pass_gain,
     "sallen-key-low-pass": krc_low_pass,
     "sallen-key-low-pass-gain": sallen_key_low_pass_gain,
+    "single-supply-gain": single_supply_gain,
+    "soft-limiter": soft_limiter,
     "state-variable": state_variable,
     "state-variable:bp": state_variable_bp,
     "state-variable:hp": state_variable_hp,
