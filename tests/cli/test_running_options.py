@@ -16,17 +16,11 @@ RATE = 48_000
 def rendered(tmp_path: Path, *more: str) -> np.ndarray:
     quiet, out = tmp_path / "quiet.wav", tmp_path / "out.wav"
     soundfile.write(quiet, np.zeros((RATE // 4, 2)), RATE, subtype="FLOAT")
-    options = [
-        "--stage",
-        "inverting-low-pass",
-        "--opamp",
-        "TL072",
-        "--full-scale",
-        "1 V",
-        "--quality",
-        "draft",
-    ]
-    assert main(["render", str(quiet), str(out), *options, *more]) == 0
+    stage = [] if "--stage" in more else ["--stage", "inverting-low-pass", "--opamp", "TL072"]
+    assert (
+        main(["render", str(quiet), str(out), *stage, "--full-scale", "1 V", "--quality", "draft", *more])
+        == 0
+    )
     return np.asarray(soundfile.read(out)[0])
 
 
