@@ -399,7 +399,16 @@ def test_the_kernels_step_equals_scipys_exponential() -> None:
 
 
 SOURCES = {
-    macro_kernels: ("run_macro", "regime_steps", "walk", "along", "place_of", "lasts", "fill_slot", "fill_parts"),
+    macro_kernels: (
+        "run_macro",
+        "regime_steps",
+        "walk",
+        "along",
+        "place_of",
+        "lasts",
+        "fill_slot",
+        "fill_parts",
+    ),
     regime_kernels: ("motion", "generator", "part_matrix", "written_over_ends"),
 }
 
