@@ -302,6 +302,10 @@ def walk(
                     elif g < all_walls[leg, 0, m]:
                         moved += (all_walls[leg, 0, m] - g) / all_gains[leg, m]
                         hit = AT_WALL + 2 * m + 1
+            if y[n + o] + moved > all_rails[leg, 1, o]:  # a rail comes before a wall that lies beyond it
+                moved, hit = all_rails[leg, 1, o] - y[n + o], AT_HIGH
+            elif y[n + o] + moved < all_rails[leg, 0, o]:
+                moved, hit = all_rails[leg, 0, o] - y[n + o], AT_LOW
             if moved != 0.0:  # what a clamp takes from the op-amp is taken from the states that hang on it
                 for i in range(n):
                     y[i] -= turn[leg, i, o] * moved

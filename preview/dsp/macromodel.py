@@ -341,7 +341,11 @@ class MacroModel:
         n = self.n
         rows = equations.walls
         own = rows[:, np.arange(len(self.owner)), n + self.owner]
-        return np.asarray(own - np.einsum("gmi,gim->gm", rows[:, :, :n], equations.turn[:, :, self.owner]))
+        own = own - np.einsum("gmi,gim->gm", rows[:, :, :n], equations.turn[:, :, self.owner])
+        if self.ports:  # as much as they may ever let it, so that no way onto a wall is too long
+            most = 1.0 / np.array([output_ohm(o.model) for o in self.sites])
+            own[:, : self.k] = np.maximum(own[:, : self.k], most)
+        return np.asarray(own)
 
     def limits(self, values: Real, equations: MacroEquations, *, supply: Real | None = None) -> Limits:
         """Limits for the same sets of values."""

@@ -70,6 +70,16 @@ def exponential(a: Any, scale: float, result: Any, power: Any, other: Any) -> No
 
 
 @compiled
+def moves_along(kind: int, k: int, ports: int) -> bool:
+    """Whether an op-amp keeps moving at its wall.
+
+    At its largest current it stands still where there are ports, for how far that current moves with it hangs on
+    their slopes; it is put back onto the wall after each part of a step.
+    """
+    return kind >= AT_WALL and (ports == 0 or (kind - AT_WALL) // 2 >= k)
+
+
+@compiled
 def motion(
     base: Any,
     turn: Any,
@@ -106,7 +116,7 @@ def motion(
     at_walls = 0
     for o in range(k):
         kind = kinds[o]
-        if kind >= AT_WALL:
+        if moves_along(kind, k, ports):
             at_walls += 1
         for j in range(columns):
             moves[o, j] = rate[ranges[o], o, j] if kind == FOLLOWS else 0.0
@@ -123,7 +133,7 @@ def motion(
                 held[o, b] = 1.0 if o == b else 0.0
             right[o] = moves[o, j]
             kind = kinds[o]
-            if kind < AT_WALL:
+            if not moves_along(kind, k, ports):
                 continue
             row = walls[(kind - AT_WALL) // 2]
             t = 0.0
@@ -143,7 +153,7 @@ def motion(
             for o in range(k):
                 right[o] = np.inf
         for o in range(k):
-            if kinds[o] >= AT_WALL:
+            if moves_along(kinds[o], k, ports):
                 moves[o, j] = right[o]
     fine = True
     for o in range(k):

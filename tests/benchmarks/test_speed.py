@@ -5,6 +5,7 @@ Times are processor time of the calling thread where the claim is about one core
 
 from __future__ import annotations
 
+import os
 import re
 import subprocess
 import sys
@@ -17,11 +18,11 @@ import pytest
 import soundfile
 
 from preview.circuit.library import find_stage
-from preview.circuit.netlist import netlist
+from preview.circuit.netlist import Junction, Netlist, Port, netlist
 from preview.circuit.opamp import OpAmpModel
 from preview.dsp.stage import StageProcessor
 from preview.values.quality import Quality
-from tests.nets import ALL
+from tests.nets import ALL, net, with_models
 
 pytestmark = [pytest.mark.benchmark, pytest.mark.timeout(900)]
 
@@ -94,6 +95,93 @@ def test_speed_with_real_op_amps(name: str) -> None:
         found[label] = speed(stage, programme(4.0, peak=peak))
     print(f"\n{name}: " + ", ".join(f"{v:.1f} x {k}" for k, v in found.items()))
     assert found["clean"] >= 10.0
+
+
+REAL = OpAmpModel(
+    "test",
+    gain_bandwidth_hz=3e6,
+    open_loop_gain=2e5,
+    slew_up_v_per_s=13e6,
+    slew_down_v_per_s=13e6,
+    output_resistance_ohm=125.0,
+    current_source_a=30e-3,
+    current_sink_a=30e-3,
+    input_high_v=0.0,
+    offset_v=1e-3,
+)
+FOUR = net(
+    [
+        ("R1", "in", "s1", 10e3),
+        ("R2", "s1", "o1", 47e3),
+        ("C1", "s1", "o1", 1e-9),
+        ("R3", "o1", "s2", 10e3),
+        ("R4", "s2", "o2", 10e3),
+        ("C2", "s2", "o2", 220e-12),
+        ("R5", "o2", "a", 10e3),
+        ("R6", "a", "b", 10e3),
+        ("C3", "a", "o3", 2e-9),
+        ("C4", "b", "gnd", 1e-9),
+        ("C5", "o3", "c", 100e-9),
+        ("R7", "c", "s4", 10e3),
+        ("R8", "s4", "out", 22e3),
+        ("Rload", "out", "gnd", 2e3),
+    ],
+    [("gnd", "s1", "o1"), ("gnd", "s2", "o2"), ("b", "o3", "o3"), ("gnd", "s4", "out")],
+)
+"""Low-pass, inverter, Sallen-Key and high-pass in a row."""
+
+
+@pytest.mark.parametrize(
+    ("count", "circuit", "promised"),
+    [(1, ALL["low-pass"], 25.0), (2, ALL["two-sections"], None), (4, FOUR, 10.0)],
+)
+def test_one_two_and_four_op_amps_as_they_are(count: int, circuit: Netlist, promised: float | None) -> None:
+    assert len(circuit.opamps) == count
+    found = {}
+    for channels in (1, 2):
+        for label, peak in (("clean", 0.3), ("20 dB over", 15.0)):
+            stage = StageProcessor(
+                with_models(circuit, REAL), sample_rate_hz=RATE, channels=channels, quality=Quality.STANDARD
+            )
+            found[label, channels] = speed(stage, programme(4.0, channels, peak))
+            limited = any(r.clip_events for r in stage.readings())
+            assert limited == (label != "clean")
+    print(f"\n{count} op-amps: " + ", ".join(f"{v:.1f} x {k} {n} ch" for (k, n), v in found.items()))
+    assert promised is None or found["clean", 2] >= promised
+
+
+def test_speed_of_a_diode_clipper() -> None:
+    law = Junction(saturation_a=2.5e-9, slope_v=0.0452, series_ohm=0.6)
+    both = (Port("D1", "sum", "out", law), Port("D2", "out", "sum", law))
+    circuit = replace(with_models(ALL["low-pass"], REAL), ports=both)
+    for channels in (1, 2):
+        for peak in (0.01, 0.6):
+            stage = StageProcessor(circuit, sample_rate_hz=RATE, channels=channels, quality=Quality.STANDARD)
+            print(
+                f"\ndiode clipper, {peak} V peak, {channels} ch: {speed(stage, programme(2.0, channels, peak)):.1f} x"
+            )
+
+
+_LOAD = """
+import resource, time
+t = time.perf_counter()
+from preview.dsp.stage import load_kernels
+load_kernels(compile_missing=True)
+print(time.perf_counter() - t, resource.getrusage(resource.RUSAGE_SELF).ru_maxrss / 1024)
+"""
+
+
+def test_time_and_memory_to_compile_and_to_load_every_kernel(tmp_path: Path) -> None:
+    environment = os.environ | {"NUMBA_CACHE_DIR": str(tmp_path)}
+    found = {}
+    for label in ("compiled", "loaded"):
+        done = subprocess.run(
+            [sys.executable, "-c", _LOAD], capture_output=True, text=True, check=True, env=environment
+        )
+        seconds, mib = (float(x) for x in done.stdout.split())
+        found[label] = seconds
+        print(f"\nkernels {label} in {seconds:.1f} s, {mib:.0f} MiB at most")
+    assert found["loaded"] < found["compiled"] / 2
 
 
 _RENDER = """
