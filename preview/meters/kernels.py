@@ -111,10 +111,28 @@ def note_peaks(rows: Any, first: int, count: int, fall: float, shown: Any, highe
 def note_true_peaks(
     rows: Any, first: int, count: int, taps: Any, room: Any, fall: float, shown: Any, highest: Any
 ) -> None:
-    """As ``note_peaks``, with what lies between the samples; ``room`` (p, count)."""
+    """As ``note_peaks``, with what lies between the samples; ``room`` (p, count).
+
+    What is so low that nothing between it can change a reading is passed over; a ``fall`` of 0 asks for the highest
+    alone, so that much more is.
+    """
+    reach = 1.0  # of the interpolator, over the largest of its samples
+    for p in range(taps.shape[0]):
+        sum_of_taps = 0.0
+        for j in range(taps.shape[1]):
+            sum_of_taps += abs(taps[p, j])
+        reach = max(reach, sum_of_taps)
     for c in range(rows.shape[0]):
-        interpolate(rows[c], first, count, taps, room)
         y, high = shown[c], highest[c]
+        largest = 0.0
+        for i in range(first + count):
+            largest = max(largest, abs(rows[c, i]))
+        if reach * largest <= (high if fall == 0.0 else y * fall**count * (1.0 - 1e-9)):
+            for _ in range(count):
+                y *= fall
+            shown[c] = y if y >= TINY else 0.0
+            continue
+        interpolate(rows[c], first, count, taps, room)
         for i in range(count):
             most = abs(rows[c, first + i])  # at once; what lies around it comes half the taps later
             for p in range(taps.shape[0]):

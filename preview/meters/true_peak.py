@@ -26,10 +26,12 @@ class TruePeakMeter:
         Sample rate of the signal [Hz].
     channels : int
         Number of channels.
+    only_peak : bool
+        Whether ``shown_v`` is not wanted; much of a signal is then too low to be looked at.
     """
 
-    def __init__(self, sample_rate_hz: float, channels: int) -> None:
-        self._fall = fall_per_frame(FALL_DB_PER_S, sample_rate_hz)
+    def __init__(self, sample_rate_hz: float, channels: int, *, only_peak: bool = False) -> None:
+        self._fall = 0.0 if only_peak else fall_per_frame(FALL_DB_PER_S, sample_rate_hz)
         self._taps = interpolator(sample_rate_hz)
         self._room = np.zeros((len(self._taps), CHUNK_FRAMES))
         self._intake = Intake(channels, past=self._taps.shape[1])

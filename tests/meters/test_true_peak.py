@@ -101,3 +101,17 @@ def test_the_reading_falls_20_db_in_1_7_s() -> None:
 def test_published_true_peak_cases_are_all_run() -> None:
     cases = {r["case"] for r in PUBLISHED["ebu3341_case"] if "max_true_peak_dbtp" in r["expected"]}
     assert cases == set(CASES)
+
+
+@pytest.mark.parametrize("only_peak", [False, True])
+def test_what_is_passed_over_changes_no_reading(only_peak: bool) -> None:
+    rng = np.random.default_rng(6)
+    volts = rng.normal(0, 1, (60_000, 2)) * np.exp(rng.uniform(-6, 0, (60, 2))).repeat(1000, axis=0)
+    meter, taps = TruePeakMeter(48_000, 2, only_peak=only_peak), interpolator(48_000)
+    fall = 10 ** (-20 / 1.7 / 48_000 / 20)
+    between = np.stack([np.abs(np.apply_along_axis(np.convolve, 0, volts, row)) for row in taps]).max(axis=0)
+    most = np.maximum(between[: len(volts)], np.abs(volts))
+    assert feed(meter, volts).peak_v == pytest.approx(most.max(axis=0), rel=1e-12)
+    if not only_peak:
+        decay = np.arange(len(volts), 0, -1)[:, None] - 1
+        assert meter.read().shown_v == pytest.approx((most * fall**decay).max(axis=0), rel=1e-6)

@@ -33,7 +33,7 @@ class Levels:
     """
 
     def __init__(self, sample_rate_hz: float, channels: int, full_scale_v: float) -> None:
-        self._true_peak = TruePeakMeter(sample_rate_hz, channels)
+        self._true_peak = TruePeakMeter(sample_rate_hz, channels, only_peak=True)
         self._loudness: LoudnessMeter | None = None
         if sample_rate_hz >= LOUDNESS_FROM_HZ:
             self._loudness = LoudnessMeter(sample_rate_hz, channels, full_scale_v=full_scale_v)
