@@ -88,7 +88,8 @@ class Keeping:
         self.autosave = Autosave()
         if not self.left:
             return ""
-        return f"a session was left behind by a crash; {self._desk.keys.shown('open_session')} opens it"
+        opens = self._desk.keys.shown("open_session")
+        return f"a session was left behind by a crash or a closed terminal; {opens} opens it"
 
     def end(self, *, keep: bool = False) -> None:
         """The desk is left; what is on it is kept where a signal and not the person has ended it."""

@@ -314,7 +314,7 @@ def test_what_a_crash_left_is_offered_and_opened(kept, session, engine, tmp_path
     other = type(engine)()
     desk = Desk(session, other)
     desk.take(other.snapshot)
-    assert "left behind by a crash; A opens it" in desk.keeping.begin()
+    assert "left behind by a crash or a closed terminal; A opens it" in desk.keeping.begin()
     menu = desk.method("open_session")()
     assert isinstance(menu, Menu)
     assert "announcement.flac, Inverting low-pass, 2 candidates" in menu.choices[0].about
