@@ -100,6 +100,8 @@ class DeskApp(DialogApp):
         for binding in bindings(keys.desk):
             self._bindings.key_to_bindings[binding.key] = [binding]
         self.ended_by: int | None = None
+        self.keep = False
+        """Whether what is on the desk is kept against a crash."""
         self.on_signal: Callable[[], None] | None = None
         """Called when a signal ends the desk; None leaves signals alone."""
         self._restart = restart
@@ -161,6 +163,8 @@ class DeskApp(DialogApp):
         self.app_resume_signal.subscribe(self, lambda _: self.refresh(layout=True))  # the shell wrote over it
         self.arrange(self.size.width, self.size.height)
         self.desk.link.send(SetVolume(self.desk.listening.volume_db))
+        if self.keep and (told := self.desk.keeping.begin()):
+            self._greeting.append((told, "warning"))
         for text, severity in self._greeting:
             self.foot.say(text, severity)
         self.poll()
@@ -261,6 +265,7 @@ class DeskApp(DialogApp):
                 self._keeper.want()
             if first:
                 self.arrange(self.size.width, self.size.height)
+        self.desk.keeping.note()
         if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
             slow = self.views.values() if self._polls % _VIEWS_EVERY == 0 else ()
             for board in (self.head, self.path, self.timeline, *slow):

@@ -21,9 +21,11 @@ from preview.engine.messages import (
     SetMatch,
     Snapshot,
 )
+from preview.engine.sessionfile import Saved
 from preview.errors import PreviewError, UsageError
 from preview.session import Session
 from preview.ui.asking import Choice, Menu, Outcome, Page, Question
+from preview.ui.changes import common_changes, with_input_of
 from preview.ui.differences import differences
 from preview.ui.history import History
 
@@ -110,6 +112,25 @@ class Candidates:
                 commands.append(KeepCandidate(letter, self.session(letter).netlist()))
         return [*commands, SelectCandidate(self.letter)] if self.letter != "A" else commands
 
+    def restore(self, saved: Saved) -> None:
+        """The candidates that were saved in place of those there are; what is common to all is brought along."""
+        desk = self._desk
+        gone = [letter for letter in self._kept if letter not in {one.letter for one in saved.candidates}]
+        for command in common_changes(desk.session, saved.session):
+            desk.link.send(command)
+        for one in saved.candidates:
+            self._send(KeepCandidate(one.letter, one.session.netlist()))
+        self._kept = {one.letter: Kept(one.session, History(), one.name) for one in saved.candidates}
+        self.letter, self.partner, self.null = saved.letter, None, None
+        self._send(SelectCandidate(saved.letter))
+        for letter in gone:
+            self._send(DropCandidate(letter))
+        if saved.match != self.matched:
+            self.matched = saved.match
+            self._send(SetMatch(saved.match))
+        input_now = desk.session
+        desk.adopt(with_input_of(saved.session, input_now), self._kept[saved.letter].history)
+
     def _send(self, command: Command) -> None:
         self._asked_s = self._desk.now_s()
         self._desk.link.send(command)
@@ -151,15 +172,12 @@ class Candidates:
             now = desk.session
             session = replace(
                 coming.session,
-                audio=now.audio,
                 full_scale=now.full_scale,
                 quality=now.quality,
                 at_end=now.at_end,
+                notes=now.notes,
             )
-            session = replace(
-                session, stimulus=now.stimulus, live=now.live, live_device=now.live_device, notes=now.notes
-            )
-            desk.adopt(session, coming.history)
+            desk.adopt(with_input_of(session, now), coming.history)
         self.null = None
         self._send(SelectCandidate(letter))
         return f"heard: {self.title(letter)}"

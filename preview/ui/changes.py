@@ -28,10 +28,12 @@ from preview.values.eseries import step
 __all__ = [
     "SERIES_OF_KIND",
     "commands_between",
+    "common_changes",
     "render_command",
     "series_of",
     "stepped",
     "whole_state",
+    "with_input_of",
     "with_setting",
 ]
 
@@ -109,6 +111,12 @@ def commands_between(old: Session, new: Session) -> list[Command]:
         if moved:
             new.netlist()
         commands += [SetPart(part.designator, part.setting) for part in moved]
+    return [*commands, *common_changes(old, new)]
+
+
+def common_changes(old: Session, new: Session) -> list[Command]:
+    """What the engine must be told of full scale, quality and end, which are common to all candidates."""
+    commands: list[Command] = []
     if old.full_scale.volts != new.full_scale.volts:
         commands.append(SetFullScale(new.full_scale.volts))
     if old.quality != new.quality:
@@ -116,6 +124,13 @@ def commands_between(old: Session, new: Session) -> list[Command]:
     if old.at_end != new.at_end:
         commands.append(SetAtEnd(new.at_end))
     return commands
+
+
+def with_input_of(session: Session, other: Session) -> Session:
+    """The session with the recording, test signal or live input of another one."""
+    return replace(
+        session, audio=other.audio, stimulus=other.stimulus, live=other.live, live_device=other.live_device
+    )
 
 
 def whole_state(session: Session) -> list[Command]:

@@ -13,15 +13,17 @@ from dataclasses import replace
 
 from preview.circuit.netlist import OUT, OpAmpSite
 from preview.circuit.parts import Stage
-from preview.engine.messages import ClipMarks, Command, Overview, Report, Snapshot
+from preview.engine.messages import ClipMarks, Command, DeviceList, Overview, Report, Snapshot
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.asking import Outcome
 from preview.ui.candidates import Candidates
 from preview.ui.changes import commands_between, whole_state
 from preview.ui.clips import Clips
+from preview.ui.connections import Connections
 from preview.ui.figures import FigureSet
 from preview.ui.history import History
+from preview.ui.keeping import Keeping
 from preview.ui.keymap import KeyMap
 from preview.ui.link import EngineLink
 from preview.ui.listening import Listening
@@ -81,14 +83,11 @@ class Desk:
         self.view = View(self)
         self.clips = Clips(self)
         self.candidates = Candidates(self)
+        self.connections = Connections(self)
+        self.keeping = Keeping(self)
         self._rooms = (
-            self,
-            self.parts,
-            self.listening,
-            self.view,
-            self.clips,
-            self.candidates,
-            Questions(self),
+            *(self, self.parts, self.listening, self.view, self.clips, self.candidates),
+            *(self.connections, self.keeping, Questions(self)),
         )
 
     # ---- actions ----
@@ -108,6 +107,7 @@ class Desk:
         self.snapshot = snapshot
         self.listening.take(snapshot)
         self.candidates.take(snapshot)
+        self.connections.take(snapshot)
 
     def hear_report(self, report: Report) -> str | None:
         """What the engine has found out; a line about it, where a person should read one."""
@@ -115,6 +115,10 @@ class Desk:
             self.overview = report
         elif isinstance(report, ClipMarks):
             self.marks, self.marks_old = report, False
+        elif isinstance(report, DeviceList):
+            return self.connections.hear_devices(report)
+        else:
+            return self.keeping.hear_export(report)
         return None
 
     def resume(self, link: EngineLink) -> None:
@@ -189,8 +193,13 @@ class Desk:
 
     @property
     def file_name(self) -> str:
-        """Name of the recording, not yet cleaned."""
-        return self.session.audio.name if self.session.audio else "no recording"
+        """Recording, test signal or live input in words, not yet cleaned."""
+        session, snapshot = self.session, self.snapshot
+        if session.live:
+            return f"live input {snapshot.input_name if snapshot else ''}".strip()
+        if session.stimulus is not None:
+            return session.stimulus.text
+        return session.audio.name if session.audio else "no recording"
 
     def sites(self) -> tuple[OpAmpSite, ...]:
         """The op-amps with the limits that hold for them; none where the circuit cannot be computed."""

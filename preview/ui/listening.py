@@ -17,6 +17,7 @@ from preview.engine.messages import (
     SetVolume,
     Snapshot,
 )
+from preview.engine.sessionfile import Saved
 from preview.session import AtEnd
 from preview.ui.link import EngineLink
 from preview.ui.words import clock
@@ -75,6 +76,17 @@ class Listening:
             link.send(SetRegion(*self.region))
         link.send(Seek(position))
         self.playing = False
+
+    def restore(self, saved: Saved) -> None:
+        """Place, region and bypass as they were saved; the volume goes down to what was saved, never up."""
+        self.region = saved.region
+        self._desk.link.send(SetRegion(*(saved.region or (None, None))))
+        if saved.bypass != self.bypass:
+            self.do_bypass()
+        if saved.volume_db < self.volume_db:
+            self._set_volume(saved.volume_db)
+        self._sought = (self._desk.now_s(), saved.position_frame)
+        self._desk.link.send(Seek(saved.position_frame))
 
     # ---- the playhead ----
 

@@ -26,7 +26,7 @@ from preview.ui.firstrun import HEARING, caution_seen, config_folder, remember_c
 from preview.ui.keymap import KeyMap, read_keys
 from preview.ui.link import EngineLink, Restart
 from preview.ui.phrases import answer_of, understood
-from preview.ui.spoken import effect, part_lines, path_lines, spoken, state_line
+from preview.ui.spoken import effect, help_lines, part_lines, path_lines, spoken, state_line
 
 __all__ = ["PlainDesk", "run_plain"]
 
@@ -128,6 +128,7 @@ class PlainDesk:
         snapshot = link.latest()
         if snapshot is not None:
             desk.take(snapshot)
+        desk.keeping.note()
 
     # ---- the loop ----
 
@@ -291,18 +292,8 @@ class PlainDesk:
 
     def do_help(self) -> None:
         """Read the actions out."""
-        self.say(
-            "Type an action by its name or its key; a part and its value, such as R1=4k7; a count behind a step"
-        )
-        self.say(
-            "'path', 'parts' and 'state' are read out, and so are the views; an empty line reads the state"
-        )
-        for group in Group:
-            if group is not Group.DIALOG:
-                self.say(f"{group.value}:")
-                for action in self.desk.keys.desk:
-                    if action.group is group:
-                        self.say(f"{action.words}, key {action.shown or 'none'}: {action.help}")
+        for line in help_lines(self.desk.keys):
+            self.say(line)
 
     def do_palette(self) -> None:
         """Every action by its name."""
@@ -342,7 +333,11 @@ def run_plain(
 ) -> Session:
     """Run the line mode until the person leaves; the session as it was left. The engine is closed when it returns."""
     desk = PlainDesk(session, link, lines=lines, out=out, restart=restart, config=config)
+    if told := desk.desk.keeping.begin():
+        desk.say(told)
     try:
-        return desk.run()
+        left = desk.run()
+        desk.desk.keeping.end()
+        return left
     finally:
         desk.desk.link.close()

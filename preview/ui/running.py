@@ -52,11 +52,14 @@ def run_desk(
         insists.append(timer)
 
     app.on_signal = insist
+    app.keep = True
     try:
         left = app.run()
     finally:
         for timer in insists:
             timer.cancel()
+        if app._exception is None:
+            app.desk.keeping.end(keep=app.ended_by is not None)
         app.desk.link.close()
     if app.ended_by is not None:
         raise KeyboardInterrupt

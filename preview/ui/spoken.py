@@ -6,7 +6,9 @@ import math
 from typing import TYPE_CHECKING
 
 from preview.circuit.settings import setting_text
+from preview.ui.actions import Group
 from preview.ui.clips import clips_of
+from preview.ui.keymap import KeyMap
 from preview.ui.partwork import kind_words
 from preview.ui.signalpath import PathRow, State, path_rows, worst_of
 from preview.ui.texts import corner_text, gain_text, heard_text, node_lines, part_line
@@ -18,7 +20,7 @@ if TYPE_CHECKING:
     from preview.circuit.parts import SettablePart
     from preview.ui.desk import Desk
 
-__all__ = ["effect", "part_lines", "path_lines", "spoken", "state_line"]
+__all__ = ["effect", "help_lines", "part_lines", "path_lines", "spoken", "state_line"]
 
 _TABLE_HZ = (20.0, 50.0, 100.0, 200.0, 500.0, 1e3, 2e3, 5e3, 10e3, 20e3, 50e3, 100e3)
 _MOST_CLIPS = 20
@@ -34,6 +36,20 @@ def spoken(desk: Desk, shown: Shown) -> list[str]:
         Shown.CANDIDATES: _candidates,
         Shown.TIMELINE: _timeline,
     }[shown](desk)
+
+
+def help_lines(keys: KeyMap) -> list[str]:
+    """What can be typed."""
+    lines = [
+        "Type an action by its name or its key; a part and its value, such as R1=4k7; a count behind a step",
+        "'path', 'parts' and 'state' are read out, and so are the views; an empty line reads the state",
+    ]
+    for group in Group:
+        if group is not Group.DIALOG:
+            lines.append(f"{group.value}:")
+            actions = [action for action in keys.desk if action.group is group]
+            lines += [f"{action.words}, key {action.shown or 'none'}: {action.help}" for action in actions]
+    return lines
 
 
 def state_line(desk: Desk) -> str:

@@ -91,7 +91,7 @@ def snapshot(engine) -> Snapshot:
         position_frame=240_000,
         input=LevelReading((0.9, 0.7), (1.61, 1.4), (0.31, 0.28)),
         output=LevelReading((9.0, 7.0), (14.0, 12.0), (3.1, 2.8)),
-        opamps=(OpAmpReading("U1", 14.0, 14.0, -13.2, 0.0, 41, 0.034, 1.9e6, 13e6, 1.4e-3),),
+        opamps=(OpAmpReading("U1", 14.0, 14.0, -13.2, 0.0, 41, 0.034, 1.9e6, 13e6, 1.4e-3, 25e-3),),
         opamp_peaks_v=(9.0,),
         spectrum=SpectrumReading(center_hz, tuple(v / 10.0 for v in out), out),
         candidates=(CandidateReading("A", True, -18.2, 0.0),),

@@ -321,7 +321,7 @@ def test_the_line_mode_loads_no_screen() -> None:
 
 @pytest.mark.parametrize("ending", ["quit\n", ""])
 def test_the_command_reads_lines_from_a_pipe(tmp_path, ending) -> None:
-    environment = {**os.environ, "XDG_CONFIG_HOME": str(tmp_path)}
+    environment = {**os.environ, "XDG_CONFIG_HOME": str(tmp_path), "XDG_STATE_HOME": str(tmp_path)}
     done = subprocess.run(
         [sys.executable, "-m", "preview", "listen", str(DEMO), "--plain", "--silent"],
         input=f"R1=22k\nstate\n{ending}",
@@ -337,7 +337,7 @@ def test_the_command_reads_lines_from_a_pipe(tmp_path, ending) -> None:
 
 
 def test_an_interrupt_from_outside_ends_the_line_mode_with_130(tmp_path) -> None:
-    environment = {**os.environ, "XDG_CONFIG_HOME": str(tmp_path), "PYTHONUNBUFFERED": "1"}
+    environment = {**os.environ, "XDG_CONFIG_HOME": str(tmp_path), "XDG_STATE_HOME": str(tmp_path)}
     process = subprocess.Popen(
         [sys.executable, "-m", "preview", "listen", str(DEMO), "--plain", "--silent"],
         stdin=subprocess.PIPE,

@@ -36,7 +36,8 @@ class Terminal:
         self.before = termios.tcgetattr(self._slave)
         (folder / "preview").mkdir(exist_ok=True)
         (folder / "preview" / "hearing-caution-seen").touch()
-        environment = {**os.environ, "XDG_CONFIG_HOME": str(folder), "TERM": "xterm-256color", **variables}
+        homes = {name: str(folder) for name in ("XDG_CONFIG_HOME", "XDG_STATE_HOME")}
+        environment = {**os.environ, **homes, "TERM": "xterm-256color", **variables}
         self.process = subprocess.Popen(
             command,
             stdin=self._slave,
@@ -153,6 +154,38 @@ def test_the_window_may_be_made_smaller_and_larger(terminal) -> None:
     desk.type(b"q")
     assert desk.code() == 0
     assert desk.restored
+
+
+def test_a_desk_that_is_killed_leaves_its_session_and_no_engine(terminal, tmp_path) -> None:
+    desk = terminal()
+    desk.until_shown("R1 10 k")
+    desk.type(b"\x1b[C")
+    desk.until_shown("R1 11 k")
+    kept = tmp_path / "preview" / "desks"
+    desk.until(lambda: any("11000" in file.read_text("utf-8") for file in kept.glob("*.session.toml")))
+    children = _children(desk.process.pid)
+    assert children
+    desk.process.kill()
+    desk.process.wait(10)
+    give_up_s = time.monotonic() + 5.0
+    while any(Path(f"/proc/{number}").exists() for number in children):
+        assert time.monotonic() < give_up_s, "an engine outlives its desk"
+        time.sleep(0.02)  # polling processes, with a deadline
+    again = terminal()
+    again.until_shown("a session was left behind")
+    again.type(b"A\r")
+    again.until_shown("R1 11 k")
+    again.type(b"q")
+    assert again.code() == 0
+
+
+def _children(process_id: int) -> list[int]:
+    """Processes that it has started, and that these have started."""
+    path = Path(f"/proc/{process_id}/task/{process_id}/children")
+    if not path.exists():
+        pytest.skip("needs /proc")
+    own = [int(number) for number in path.read_text("utf-8").split()]
+    return own + [below for number in own for below in _children(number)]
 
 
 CRASH = """

@@ -32,8 +32,10 @@ class HeaderPanel(Board):
         if snapshot is not None and snapshot.sample_rate_hz > 0.0:
             channels = len(snapshot.input.peak_v)
             shape = {1: "mono", 2: "stereo"}.get(channels, f"{channels} channels")
-            length = clock(snapshot.frames / snapshot.sample_rate_hz)
-            about = f"  {kilohertz(snapshot.sample_rate_hz)} {shape} {length}"
+            length = clock(snapshot.frames / snapshot.sample_rate_hz) if snapshot.frames else ""
+            about = f"  {kilohertz(snapshot.sample_rate_hz)} {shape} {length}".rstrip()
+            if snapshot.live_latency_s:
+                about += f" {snapshot.live_latency_s * 1e3:.0f} ms in to out"
         title = printable(self.desk.session.stage.title or self.desk.session.stage.name)
         right = row((" through ", palette.faint), (title + " ", palette.strong))
         room = width - sum(s.cell_length for s in right) - len(about) - 3
@@ -88,7 +90,9 @@ class HeaderPanel(Board):
             words = f"MUTED: {printable(fault.reason)} at {printable(fault.node)}. Press {again}: from rest again."
             return row((fit(f" {words}", width), palette.alarm))
         listening, narrow = desk.listening, width < 100
+        exporting = desk.keeping.export_line()
         right = row(
+            (f"{exporting}   " if exporting else "", palette.strong),
             (
                 ("moving  " if narrow else "a value is moving   ") if snapshot and snapshot.gliding else "",
                 palette.plain,
@@ -112,7 +116,10 @@ class HeaderPanel(Board):
 
     def _heard(self) -> list[tuple[str, Style]]:
         """What is heard, in words, the longest first."""
-        palette, desk = self.look.palette, self.desk
+        palette, desk, snapshot = self.look.palette, self.desk, self.desk.snapshot
+        if snapshot is not None and snapshot.muted:
+            why = f": {printable(snapshot.mute_reason)}" if snapshot.mute_reason else ""
+            return [(f"MUTED{why}", palette.alarm), ("MUTED", palette.alarm)]
         if desk.listening.bypass:
             texts = "BYPASS: you hear the input, not the stage", "BYPASS: input heard"
             return [(text, palette.alarm) for text in texts]
@@ -126,7 +133,6 @@ class HeaderPanel(Board):
         if len(room.letters) == 1:
             return [("stage heard", palette.plain)]
         title = printable(room.title(room.letter))
-        snapshot = desk.snapshot
         match = f", matched {snapshot.match_db:+.1f} dB" if room.matched and snapshot else ""
         said = f"candidate {title} heard{match}", f"candidate {room.letter}{match}", room.letter
         return [(text, palette.plain) for text in said]
