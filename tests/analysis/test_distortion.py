@@ -210,6 +210,7 @@ def test_clipping_begins_at_the_level_of_the_closed_form(f: float) -> None:
     assert onset(LOW_PASS, f, "slew", sample_rate_hz=RATE, quality=Quality.DRAFT) is None
 
 
+@pytest.mark.slow
 def test_slewing_begins_where_the_sine_is_as_fast_as_the_slew_rate() -> None:
     model = OpAmpModel(
         "test", gain_bandwidth_hz=30e6, open_loop_gain=1e6, slew_up_v_per_s=0.5e6, slew_down_v_per_s=0.5e6

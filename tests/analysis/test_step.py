@@ -74,7 +74,17 @@ def test_a_high_pass_goes_to_its_peak_at_once_and_rests_at_nothing() -> None:
     assert found.settling_1_percent_s == pytest.approx(1e-4 * math.log(100), rel=1e-6)
 
 
-@pytest.mark.parametrize("name", [*ALL, "butter-6", "cheby-5", "bessel-4", "elliptic-5"])
+BRIEF = ("sallen-key", "elliptic-5")
+"""What is compared in every run; the others take their time."""
+
+
+@pytest.mark.parametrize(
+    "name",
+    [
+        pytest.param(name, marks=() if name in BRIEF else pytest.mark.slow)
+        for name in (*ALL, "butter-6", "cheby-5", "bessel-4", "elliptic-5")
+    ],
+)
 def test_figures_agree_with_a_finely_sampled_step_of_a_general_library(name: str) -> None:
     made = {
         "butter-6": lambda: scipy.signal.butter(6, 1e4, analog=True),
