@@ -44,20 +44,15 @@ TOLERANCE_V = 1e-8
 def junction(law: Any, v: float) -> tuple[float, float]:
     """Current of a junction and its conductance at a voltage without the drop of its series resistance."""
     f = law[SATURATION] * np.exp(min(v / law[SLOPE], 600.0))
-    current, slope = f - law[SATURATION], f / law[SLOPE]
+    share = 1.0 / (1.0 + f / law[MOST])  # the output stage of an op-amp gives no more than its limit
+    current, slope = f * share - law[SATURATION], f * share * share / law[SLOPE]
     if law[BACK_SLOPE] > 0.0:
         b = law[BACK_CURRENT] * np.exp(min(-(v + law[BACK]) / law[BACK_SLOPE], 600.0))
-        current -= b
+        share = 1.0 / (1.0 + b / law[BACK_MOST])
+        current -= b * share
         if law[BACK] == 0.0:
             current += law[BACK_CURRENT]
-        slope += b / law[BACK_SLOPE]
-    # the output stage of an op-amp gives hardly any more than its limit
-    if current > law[MOST]:
-        slope *= 0.01 * law[MOST] / current
-        current = law[MOST] * (1.0 + 0.01 * np.log(current / law[MOST]))
-    elif current < -law[BACK_MOST]:
-        slope *= -0.01 * law[BACK_MOST] / current
-        current = -law[BACK_MOST] * (1.0 + 0.01 * np.log(-current / law[BACK_MOST]))
+        slope += b * share * share / law[BACK_SLOPE]
     return current, slope
 
 
@@ -67,6 +62,15 @@ def limited_move(law: Any, old: float, new: float) -> float:
     if law[HALF] > 0.0:
         return float(new)
     vt, vz = law[SLOPE], law[BACK_SLOPE]
+    # beyond its largest current a junction is flat: any move up, and down no further than where it bends
+    if law[MOST] < np.inf:
+        bend = vt * np.log(law[MOST] / law[SATURATION])
+        if old > bend + vt:
+            return float(max(new, bend))
+    if law[BACK_MOST] < np.inf and vz > 0.0:
+        bend = -law[BACK] - vz * np.log(law[BACK_MOST] / law[BACK_CURRENT])
+        if old < bend - vz:
+            return float(min(new, bend))
     if new > law[CRITICAL] and abs(new - old) > 2.0 * vt:
         if old > 0.0:
             f = 1.0 + (new - old) / vt
