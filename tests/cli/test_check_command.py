@@ -106,6 +106,14 @@ def test_the_table_says_peak_headroom_and_margin(capsys, tone):
     assert "stage inverting-low-pass" in err
 
 
+def test_a_table_that_would_be_empty_is_left_out(capsys, tone):
+    for words in ((), ("--no-margin", "--opamp", "perfect")):
+        code, out, _ = check(capsys, tone, *QUICK, "--part", "R1=20k", *words)
+        assert code == 0
+        assert ("clean with" in out) == (not words)
+        assert "\nfile\n" not in out
+
+
 def test_events_are_listed_with_time_codes(capsys, loud):
     code, out, _ = check(capsys, loud, *QUICK, "--events", "--no-margin")
     assert code == 0

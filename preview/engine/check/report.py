@@ -144,11 +144,12 @@ class CheckReport:
         named = list(zip(self.files, _short([found.path for found in self.files]), strict=True))
         if not named:
             return []
-        return [
+        tables: list[tuple[Sequence[str], list[list[str]]]] = [
             (_OPAMP_HEADS, [row for found, name in named for row in _opamps(found, name)]),
             (_LEVEL_HEADS, [row for found, name in named for row in _levels(found, name)]),
             (_MARGIN_HEADS, [self._margins(found, name) for found, name in named]),
         ]
+        return [(heads, rows) for heads, rows in tables if any(any(row[1:]) for row in rows)]
 
     def event_lines(self) -> list[str]:
         """A table of every visit to a limit, with its time code."""
