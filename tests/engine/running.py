@@ -22,8 +22,6 @@ def session_of(audio: Path | None, **changes: object) -> Session:
         "audio": audio,
         "stage": stage,
         "supply": stage.supply,
-        "source_ohm": 0.0,
-        "load_ohm": None,
         "full_scale": parse_full_scale("10 V"),
     } | changes
     return Session(**values)  # type: ignore[arg-type]  # a test's shorthand

@@ -15,6 +15,7 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from preview.circuit.drive import NO_LOAD, LoadModel
 from preview.circuit.library import find_stage, stage_names, with_overrides
 from preview.engine.autosave import Autosave, left_behind
 from preview.engine.sessionfile import Saved, SavedCandidate, load, save
@@ -27,12 +28,12 @@ from tests.engine.running import session_of
 
 
 def saved_of(audio: Path | None = Path("bells.flac"), **changes) -> Saved:
-    low = session_of(audio, quality=Quality.FINE, at_end=AtEnd.STOP, load_ohm=10e3)
+    low = session_of(audio, quality=Quality.FINE, at_end=AtEnd.STOP, load=LoadModel(10e3))
     other = replace(
         low,
         stage=with_overrides(find_stage("inverting-high-pass"), {"R1": "4k7"}, {None: "TL072"})[0],
         without=("slew", "noise"),
-        load_ohm=None,
+        load=NO_LOAD,
     )
     candidates = (SavedCandidate("A", low, "as drawn"), SavedCandidate("B", other))
     return replace(Saved(candidates, "B", 48_000, (100, 200_000), -12.5, bypass=True, match=True), **changes)
@@ -57,7 +58,7 @@ def test_what_is_saved_opens_as_it_was(tmp_path):
     assert load(path).session.netlist() == saved.session.netlist()
     save(path, saved_of(region=None, letter="A"))
     assert load(path).region is None
-    assert load(path).session.load_ohm == 10e3
+    assert load(path).session.load == LoadModel(10e3)
     assert [one.name for one in tmp_path.iterdir()] == ["a.session.toml"]
 
 
