@@ -12,7 +12,7 @@ from preview.values.levels import parse_full_scale
 
 def session_of(opamp: str, *without) -> Session:
     stage, _ = with_overrides(find_stage("inverting-low-pass"), {}, {None: opamp})
-    plain = Session(None, stage, stage.supply, 0.0, None, parse_full_scale("+18 dBu"))
+    plain = Session(None, stage, stage.supply, parse_full_scale("+18 dBu"))
     return replace(plain, without=without)
 
 

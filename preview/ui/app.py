@@ -224,13 +224,11 @@ class DeskApp(DialogApp):
         self.timeline.styles.height = 1 if height < 30 else 2 if height < TALL else 3
         self.foot.stand(1 if height < 30 or width >= 160 else 2)
 
-    def on_app_focus(self, _event: AppFocus) -> None:
-        """Full pace."""
-        self._focused = True
+    def on_app_focus(self, event: AppFocus | AppBlur) -> None:
+        """Full pace, slower while nobody looks."""
+        self._focused = isinstance(event, AppFocus)
 
-    def on_app_blur(self, _event: AppBlur) -> None:
-        """Slower while nobody looks."""
-        self._focused = False
+    on_app_blur = on_app_focus
 
     def on_footer_panel_pressed(self, event: FooterPanel.Pressed) -> None:
         """A click on a hint is its key."""
@@ -266,6 +264,9 @@ class DeskApp(DialogApp):
             if first:
                 self.arrange(self.size.width, self.size.height)
         self.desk.keeping.note()
+        if (edited := self.desk.stage_watch.look()) is not None:
+            self.foot.say(*edited)
+            self.show()
         if self._focused or self._polls % _UNFOCUSED_EVERY == 0:
             slow = self.views.values() if self._polls % _VIEWS_EVERY == 0 else ()
             for board in (self.head, self.path, self.timeline, *slow):

@@ -29,6 +29,7 @@ from preview.ui.link import EngineLink
 from preview.ui.listening import Listening
 from preview.ui.partwork import PartWork
 from preview.ui.questions import Questions
+from preview.ui.stagewatch import StageWatch
 from preview.ui.view import View
 
 __all__ = ["Desk"]
@@ -85,6 +86,7 @@ class Desk:
         self.candidates = Candidates(self)
         self.connections = Connections(self)
         self.keeping = Keeping(self)
+        self.stage_watch = StageWatch(self)
         self._rooms = (
             *(self, self.parts, self.listening, self.view, self.clips, self.candidates),
             *(self.connections, self.keeping, Questions(self)),

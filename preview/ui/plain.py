@@ -129,6 +129,8 @@ class PlainDesk:
         if snapshot is not None:
             desk.take(snapshot)
         desk.keeping.note()
+        if (edited := desk.stage_watch.look()) is not None:
+            self.say(edited[0])
 
     # ---- the loop ----
 

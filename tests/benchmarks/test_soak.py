@@ -39,7 +39,7 @@ stage = find_stage("inverting-low-pass")
 
 def session(name="inverting-low-pass", parts={}, opamp="ideal"):
     drawn = with_overrides(find_stage(name), parts, {None: opamp})[0]
-    return Session(audio, drawn, drawn.supply, 0.0, None, parse_full_scale("10 V"))
+    return Session(audio, drawn, drawn.supply, parse_full_scale("10 V"))
 
 def wait(until):
     deadline = time.monotonic() + 60

@@ -45,7 +45,7 @@ def tell():
         print("notice", notice.severity, notice.text, flush=True)
 
 stage = find_stage("inverting-low-pass")
-session = Session(None, stage, stage.supply, 0.0, None, parse_full_scale("10 V"), live=True,
+session = Session(None, stage, stage.supply, parse_full_scale("10 V"), live=True,
                   live_device=device or None)
 engine = EngineProcess.start(EngineConfig(session=session, start_volume_db=0.0, log=Path(log)))
 wait(lambda s: s.playing and s.live_latency_s > 0 and s.position_frame > 0)

@@ -171,7 +171,7 @@ def test_the_engine_and_its_worker_end_within_a_second_when_the_desk_is_killed(t
         "from preview.session import Session\n"
         "from preview.values.levels import parse_full_scale\n"
         "stage = find_stage('inverting-low-pass')\n"
-        f"session = Session(Path({str(tone)!r}), stage, stage.supply, 0.0, None, parse_full_scale('10 V'))\n"
+        f"session = Session(Path({str(tone)!r}), stage, stage.supply, parse_full_scale('10 V'))\n"
     )
     script = tmp_path / "desk.py"
     script.write_text(PARENT)

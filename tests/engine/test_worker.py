@@ -37,7 +37,7 @@ def write(path: Path, samples: np.ndarray) -> Path:
 
 def session_of(audio: Path | None, **changes) -> Session:
     stage = find_stage("inverting-low-pass")
-    return Session(audio, stage, stage.supply, 0.0, None, parse_full_scale("10 V"), **changes)
+    return Session(audio, stage, stage.supply, parse_full_scale("10 V"), **changes)
 
 
 def last(job):
