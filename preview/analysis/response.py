@@ -8,8 +8,8 @@ import numpy as np
 from numpy.typing import ArrayLike, NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp.cores import following_step
 from preview.dsp.oversample import PASSBAND_RATIO, design, factor_for
+from preview.dsp.smallsignal import following_step
 from preview.network import transfer
 from preview.network.operating import small_signal
 from preview.network.stability import check_stable

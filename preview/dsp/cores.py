@@ -9,17 +9,17 @@ import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp import kernels, macro_kernels, port_kernels, regime_kernels
+from preview.dsp import kernels, macro_kernels, regime_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
 from preview.dsp.noise import NoiseSource
 from preview.dsp.rest import resting_state
 from preview.errors import CircuitError
-from preview.network.expansion import has_real_opamps
+from preview.network.expansion import runs_as_they_are
 from preview.network.statespace import Topology
 from preview.values.noise import NoiseSetting
 
-__all__ = ["Core", "Matrices", "core_for", "following_step", "runs_as_they_are"]
+__all__ = ["Core", "Matrices", "core_for"]
 
 Real = NDArray[np.float64]
 Matrices = tuple[Real, ...]
@@ -89,24 +89,6 @@ def core_for(
     if noise is None and not runs_as_they_are(netlist):
         return IdealCore(netlist, channels, step_s)
     return MacroCore(netlist, channels, step_s, noise=noise, factor=factor)
-
-
-def runs_as_they_are(netlist: Netlist) -> bool:
-    """Whether anything in a circuit needs more than ideal op-amps between R, L and C."""
-    return has_real_opamps(netlist) or bool(netlist.ports) or bool(netlist.fixed)
-
-
-def following_step(netlist: Netlist, step_s: float) -> Real:
-    """Matrix of a step of small signals about the rest, its output's mean as the last row, shape (N + 1, N + 3).
-
-    Columns: states, signal at the start, its mean, at the end. It is made of what the running computation takes.
-    """
-    if not runs_as_they_are(netlist):
-        topology = Topology(netlist)
-        M = running_step(topology.evaluate(topology.values_of(netlist)[None]), step_s).free[0]
-        size, k = topology.states + len(netlist.opamps), len(netlist.opamps)
-        return np.concatenate([M[:size], M[size + k : size + k + 1]])
-    return MacroCore(netlist, 1, step_s).small_signal_step(netlist)
 
 
 class IdealCore:
@@ -393,34 +375,6 @@ class MacroCore:
             self._noise.fill(c, self._steps, steps, self._noise_memory[c], self._added[c])
         self._steps += steps
         return self._added
-
-    def small_signal_step(self, netlist: Netlist) -> Real:
-        """See ``following_step``; the ports take the slope that they have at rest."""
-        matrices = self.matrices(self.values_of(netlist)[None])
-        self.reset(matrices)
-        whole, laws, model = matrices[0][0], matrices[8][0], self._model
-        size, ports = model.size, len(laws)
-        rows = whole.T
-        M = rows[[*range(size), len(rows) - 2 * ports - 1]]
-        if ports == 0:
-            return np.asarray(M[:, : size + 3])
-        conductance = np.zeros((2 * ports, 2 * ports))  # currents at 1/3 and the end, by the voltages there
-        charge = np.zeros((2 * ports, size + 3))
-        for p, law in enumerate(laws):
-            a, b = p, ports + p
-            if law[port_kernels.HALF] == 0.0:
-                g = port_kernels.junction(law, self._junctions[0, 0, p])[1]
-                conductance[a, a] = conductance[b, b] = g / (1.0 + g * law[port_kernels.SERIES])
-                continue
-            c = port_kernels.added_charge(law, self._junctions[0, 0, p])[1] / self._step_s
-            conductance[np.ix_([a, b], [a, b])] = c * np.array([[1.5, 0.5], [-4.5, 2.5]])
-            charge[[a, b]] -= np.outer([2.0 * c, -2.0 * c], matrices[7][0, p, : size + 3])
-        seen = np.concatenate([rows[-ports:], rows[-2 * ports : -ports]])  # at 1/3, then at the end
-        flows = np.linalg.solve(
-            np.eye(2 * ports) - conductance @ seen[:, size + 4 :],
-            conductance @ seen[:, : size + 3] + charge,
-        )
-        return np.asarray(M[:, : size + 3] + M[:, size + 4 :] @ flows)
 
     def headroom_db(self, opamp: int) -> float:
         """See ``Core``."""

@@ -21,7 +21,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import GND, Charge, Junction, Netlist, Port
-from preview.dsp import port_kernels
+from preview.dsp import laws as columns_of
 from preview.network.expansion import expanded, gain_bandwidth_hz, inner_node, output_ohm
 from preview.network.opamps import second_pole_hz
 from preview.network.statespace import Topology
@@ -375,15 +375,15 @@ class MacroModel:
         with np.errstate(invalid="ignore"):
             rails = rails * share[:, :, None]
             walls[:, :, k:] = walls[:, :, k:] * share[:, :, None]
-        laws = np.zeros((sets, len(self.ports), port_kernels.LAW))
+        laws = np.zeros((sets, len(self.ports), columns_of.LAW))
         for p, (port, back) in enumerate(zip(self.ports, self._opposite, strict=True)):
             laws[:, p] = _law(port.law, back)
             for o in self.sites:
                 if port.designator == f"{o.designator}.source":
-                    laws[:, p, port_kernels.MOST] = o.model.current_source_a
-                    laws[:, p, port_kernels.BACK_MOST] = o.model.current_sink_a
+                    laws[:, p, columns_of.MOST] = o.model.current_source_a
+                    laws[:, p, columns_of.BACK_MOST] = o.model.current_sink_a
             if self.charged[p] >= 0:
-                laws[:, p, port_kernels.FARAD] = values[:, self.charged[p]]
+                laws[:, p, columns_of.FARAD] = values[:, self.charged[p]]
         return Limits(rails, walls, gains, laws)
 
 
@@ -431,19 +431,19 @@ def _critical_v(slope_v: float, saturation_a: float) -> float:
 
 def _law(law: Junction | Charge, opposite: Junction | None) -> Real:
     """A port's law as the kernels take it."""
-    row = np.zeros(port_kernels.LAW)
-    row[port_kernels.MOST] = row[port_kernels.BACK_MOST] = math.inf
+    row = np.zeros(columns_of.LAW)
+    row[columns_of.MOST] = row[columns_of.BACK_MOST] = math.inf
     if isinstance(law, Charge):
-        row[port_kernels.HALF], row[port_kernels.FARAD] = law.half_v, law.farad
+        row[columns_of.HALF], row[columns_of.FARAD] = law.half_v, law.farad
         return row
-    row[port_kernels.SATURATION], row[port_kernels.SLOPE] = law.saturation_a, law.slope_v
-    row[port_kernels.SERIES] = law.series_ohm
-    row[port_kernels.CRITICAL] = _critical_v(law.slope_v, law.saturation_a)
+    row[columns_of.SATURATION], row[columns_of.SLOPE] = law.saturation_a, law.slope_v
+    row[columns_of.SERIES] = law.series_ohm
+    row[columns_of.CRITICAL] = _critical_v(law.slope_v, law.saturation_a)
     if opposite is not None:
-        row[port_kernels.BACK_CURRENT], row[port_kernels.BACK_SLOPE] = opposite.saturation_a, opposite.slope_v
-        row[port_kernels.BACK_CRITICAL] = _critical_v(opposite.slope_v, opposite.saturation_a)
+        row[columns_of.BACK_CURRENT], row[columns_of.BACK_SLOPE] = opposite.saturation_a, opposite.slope_v
+        row[columns_of.BACK_CRITICAL] = _critical_v(opposite.slope_v, opposite.saturation_a)
     elif math.isfinite(law.breakdown_v):
-        row[port_kernels.BACK] = law.breakdown_v - law.breakdown_a * law.series_ohm
-        row[port_kernels.BACK_CURRENT] = law.breakdown_a
-        row[port_kernels.BACK_SLOPE] = row[port_kernels.BACK_CRITICAL] = law.breakdown_slope_v
+        row[columns_of.BACK] = law.breakdown_v - law.breakdown_a * law.series_ohm
+        row[columns_of.BACK_CURRENT] = law.breakdown_a
+        row[columns_of.BACK_SLOPE] = row[columns_of.BACK_CRITICAL] = law.breakdown_slope_v
     return row

@@ -14,30 +14,25 @@ import numpy as np
 
 from preview.compiled import compiled
 from preview.dsp.kernels import solve_small
+from preview.dsp.laws import (
+    BACK,
+    BACK_CRITICAL,
+    BACK_CURRENT,
+    BACK_MOST,
+    BACK_SLOPE,
+    CRITICAL,
+    FARAD,
+    HALF,
+    MOST,
+    SATURATION,
+    SERIES,
+    SLOPE,
+)  # fmt: skip
 
 MAX_TURNS = 60
 """Newton steps that a part of a step may take; 2 or 3 are usual."""
 TOLERANCE_V = 1e-8
 """Last change at which the voltages are taken as found; the error left is about its square over the slope voltage."""
-
-# columns of a port's law. A junction conducts forward as SATURATION and SLOPE say; the other way, where BACK_SLOPE
-# is above zero, from BACK on: a breakdown, or the second of two diodes back to back (BACK 0). CRITICAL: where steps
-# of Newton are shortened. A class 2 capacitor has a HALF voltage.
-(
-    SATURATION,
-    SLOPE,
-    SERIES,
-    BACK,
-    BACK_CURRENT,
-    BACK_SLOPE,
-    HALF,
-    FARAD,
-    CRITICAL,
-    BACK_CRITICAL,
-    MOST,
-    BACK_MOST,
-    LAW,
-) = range(13)
 
 
 @compiled

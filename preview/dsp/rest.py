@@ -7,6 +7,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from preview.dsp import laws as laws_of
 from preview.dsp import port_kernels
 from preview.dsp.macromodel import Limits, MacroEquations
 from preview.dsp.regime_kernels import ABOVE, AT_HIGH, AT_LOW, AT_WALL, BELOW, FOLLOWS, IN_RANGE
@@ -166,8 +167,8 @@ def _newton(
     at_1, at_i = size + 3, size + 4
     scale = np.maximum(np.abs(rows[:, :size]).max(axis=1, initial=0.0), 1e-300)[:, None]
     top = rows / scale
-    charged = laws[:, port_kernels.HALF] > 0.0
-    series = np.diag(np.where(charged, 0.0, laws[:, port_kernels.SERIES]))
+    charged = laws[:, laws_of.HALF] > 0.0
+    series = np.diag(np.where(charged, 0.0, laws[:, laws_of.SERIES]))
     flows, drops = top[:, at_i : at_i + ports], port[:, at_i : at_i + ports] - series
     v, current, slope = start.copy(), np.zeros(ports), np.zeros(ports)
     for _ in range(MAX_TURNS):

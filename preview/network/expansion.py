@@ -15,6 +15,7 @@ __all__ = [
     "has_real_opamps",
     "inner_node",
     "output_ohm",
+    "runs_as_they_are",
 ]
 
 LEAST_OUTPUT_OHM = 0.01
@@ -32,6 +33,11 @@ CROSSOVER_LEAK_OHM = 10e6
 def has_real_opamps(netlist: Netlist) -> bool:
     """Whether any op-amp has figures of its own."""
     return any(o.model.real for o in netlist.opamps)
+
+
+def runs_as_they_are(netlist: Netlist) -> bool:
+    """Whether anything in a circuit needs more than ideal op-amps between R, L and C."""
+    return has_real_opamps(netlist) or bool(netlist.ports) or bool(netlist.fixed)
 
 
 def output_ohm(model: OpAmpModel) -> float:

@@ -16,8 +16,9 @@ from preview.analysis.response import deviation
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpModel
 from preview.dsp import macro_kernels, regime_kernels
-from preview.dsp.cores import following_step
+from preview.dsp.cores import MacroCore
 from preview.dsp.macromodel import MacroModel
+from preview.dsp.smallsignal import following_step
 from preview.dsp.stage import StageProcessor
 from preview.errors import CircuitError
 from preview.network.stability import check_stable
@@ -382,20 +383,11 @@ def test_the_kernels_exponential_equals_scipys() -> None:
 
 def test_the_kernels_step_equals_scipys_exponential() -> None:
     circuit = with_model(SALLEN_KEY, opamp(3e6, open_loop_gain=1e5, output_resistance_ohm=75.0))
-    step_s = 1 / 768e3
-    model = MacroModel(circuit, step_s)
-    e = model.equations(model.values_of(circuit)[None])
-    size, moves = model.size, e.rate[0, 0]
-    a = np.zeros((size + 4, size + 4))  # states, signal and its derivatives, integral of the output
-    a[: model.n, :-1] = (e.base[0] - e.turn[0] @ moves)[:, : size + 3]
-    a[model.n : size, :-1] = moves[:, : size + 3]
-    a[size, size + 1] = a[size + 1, size + 2] = 1.0
-    a[-1, :-1] = e.out[0, : size + 3]
-    rows = expm(a)[[*range(size), -1]]
-    u, v1, v2 = rows[:, size], rows[:, size + 1], rows[:, size + 2]
-    ends = np.stack([u - 4 * v1 + 6 * v2, 6 * v1 - 12 * v2, -2 * v1 + 6 * v2], axis=1)
-    expected = np.concatenate([rows[:, :size], ends], axis=1)
-    np.testing.assert_allclose(following_step(circuit, step_s), expected, rtol=1e-9, atol=1e-12)
+    core = MacroCore(circuit, 1, 1 / 768e3)
+    whole = core.matrices(core.values_of(circuit)[None])[0][0].T  # rows first; the mean is the last
+    size = MacroModel(circuit, 1 / 768e3).size
+    found = whole[[*range(size), -1], : size + 3]
+    np.testing.assert_allclose(found, following_step(circuit, 1 / 768e3), rtol=1e-9, atol=1e-12)
 
 
 SOURCES = {

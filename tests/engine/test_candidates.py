@@ -17,6 +17,8 @@ from preview.engine.messages import ClipMarks, DeviceList, ExportState, InputKin
 from preview.values.stimulus import parse_stimulus
 from tests.engine.running import RATE_HZ, session_of, wait_for, wait_for_report
 
+pytestmark = pytest.mark.slow
+
 
 def gain_of(frequency_hz: float, gain: float = 10.0) -> float:
     return gain / math.sqrt(1 + (frequency_hz / 1591.549) ** 2)

@@ -14,7 +14,7 @@ import pytest
 
 import preview.dsp.kernels  # noqa: F401 - names the folder of compiled kernels, for the desks started here too
 
-pytestmark = pytest.mark.sound
+pytestmark = [pytest.mark.sound, pytest.mark.slow]
 
 RATE_HZ = 48_000
 

@@ -25,6 +25,9 @@ from preview.session import Session
 from preview.values.levels import parse_full_scale
 from preview.values.stimulus import parse_stimulus
 
+pytestmark = pytest.mark.slow
+
+
 RATE_HZ = 48_000
 DEADLINE_S = 60.0
 

@@ -34,6 +34,9 @@ from preview.ui.opamps import with_opamp_type
 from preview.ui.picture import desk_svg
 from preview.ui.view import Shown
 
+pytestmark = pytest.mark.slow
+
+
 GOLDEN = Path(__file__).parent / "golden"
 SIZES = ((80, 24), (100, 30), (160, 48))
 KEPT = {
