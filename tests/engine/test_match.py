@@ -68,6 +68,7 @@ def candidates():
     }
 
 
+@pytest.mark.slow
 def test_candidates_are_heard_within_a_tenth_of_a_loudness_unit_of_each_other(recording):
     material = Material(path=recording, full_scale_v=FULL_SCALE_V)
     lufs = {letter: measured(LoudnessJob(letter, one, material)) for letter, one in candidates().items()}

@@ -164,6 +164,7 @@ if __name__ == "__main__":
 """
 
 
+@pytest.mark.slow
 def test_the_engine_and_its_worker_end_within_a_second_when_the_desk_is_killed(tone, tmp_path):
     (tmp_path / "tests_session.py").write_text(
         "from pathlib import Path\n"
