@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 
+from preview.circuit.fault import FaultReading
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
-from preview.dsp.stage import BLOCK_FRAMES, Fault, StageProcessor
+from preview.dsp.stage import BLOCK_FRAMES, StageProcessor
 
 __all__ = ["FADE_S", "SETTLE_S", "Chain"]
 
@@ -61,7 +62,7 @@ class Chain:
         return self.processor.gliding
 
     @property
-    def fault(self) -> Fault | None:
+    def fault(self) -> FaultReading | None:
         """Why the stage that is heard was stopped; None while all is well."""
         return self._current.fault
 

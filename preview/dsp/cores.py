@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from typing import Any, Protocol
+from typing import TYPE_CHECKING, Any, Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -12,12 +12,14 @@ from preview.circuit.netlist import Netlist
 from preview.dsp import kernels, macro_kernels, regime_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
-from preview.dsp.noise import NoiseSource
 from preview.dsp.rest import resting_state
 from preview.errors import CircuitError
 from preview.network.expansion import runs_as_they_are
 from preview.network.statespace import Topology
 from preview.values.noise import NoiseSetting
+
+if TYPE_CHECKING:
+    from preview.dsp.noise import NoiseSource
 
 __all__ = ["Core", "Matrices", "core_for"]
 
@@ -179,10 +181,8 @@ class IdealCore:
 
     def trouble(self) -> str | None:
         """See ``Core``."""
-        worst = np.abs(self._state[:, : self._n + self._k]).max(axis=0, initial=0.0)
-        if np.all(worst < BEYOND_BELIEF):
-            return None
-        return self._topology.state_name(int(np.argmax(np.where(np.isfinite(worst), worst, np.inf))))
+        worst = _beyond_belief(self._state[:, : self._n + self._k])
+        return None if worst is None else self._topology.state_name(worst)
 
     def limited(self) -> NDArray[np.bool_]:
         """See ``Core``."""
@@ -222,8 +222,7 @@ class MacroCore:
         self._step_s = step_s
         n, size, columns, ports = model.n, model.size, model.columns, len(model.ports)
         walls = len(model.owner)
-        values = self.values_of(netlist)[None]
-        inputs = model.equations(values).plus.shape[1]
+        inputs = k if model.watches_inputs else 0
         count = k + walls + inputs
         rows = size + count + 1 + 2 * ports
         self._n, self._k, self._walls = n, k, walls
@@ -274,6 +273,8 @@ class MacroCore:
     def matrices(self, values: Real) -> Matrices:
         """Whole step while every op-amp follows, the continuous equations behind it, and the limits."""
         if self._setting is not None:  # the noise of the values that are gone to
+            from preview.dsp.noise import NoiseSource  # loads scipy.linalg, which nothing else here needs
+
             self._noise = NoiseSource(self._model, values[-1], self._setting, self._factor)
         return self._prepared(self._model.equations(values), values)
 
@@ -302,12 +303,9 @@ class MacroCore:
         return str((ports[0] if ports else opamps[0]).designator)
 
     def trouble(self) -> str | None:
-        """The node or part whose state is no number or beyond belief; None while all is well."""
-        worst = np.abs(self._state).max(axis=0) if self._state.size else np.zeros(0)
-        if np.all(worst < BEYOND_BELIEF):
-            return None
-        i = int(np.argmax(np.where(np.isfinite(worst), worst, np.inf)))
-        return self._model.where(i)
+        """See ``Core``."""
+        worst = _beyond_belief(self._state)
+        return None if worst is None else self._model.where(worst)
 
     def _prepared(self, e: MacroEquations, values: Real, supply: Real | None = None) -> Matrices:
         model = self._model
@@ -436,6 +434,14 @@ class MacroCore:
         self.stats[:, :k, kernels.LOW] = pins[:, :, 1]
         self.stats[:, :k, kernels.CURRENT] = np.maximum(currents[:, :, 0], -currents[:, :, 1])
         return self.stats
+
+
+def _beyond_belief(states: Real) -> int | None:
+    """The state, of (channels, states), that is no number or too large to be one; None where there is none."""
+    worst = np.abs(states).max(axis=0, initial=0.0)
+    if np.all(worst < BEYOND_BELIEF):
+        return None
+    return int(np.argmax(np.where(np.isfinite(worst), worst, np.inf)))
 
 
 def _headroom_db(room: list[tuple[float, float]]) -> float:

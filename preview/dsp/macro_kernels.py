@@ -3,7 +3,7 @@
 Between its limits such a circuit is linear: each op-amp follows its input (its rate of change is a linear function of
 the state), slews at a constant rate, or stays at a limit, be it a rail, a swing that hangs on the load, or its largest
 current. In each of these regimes the state over any time is a matrix exponential, exact however stiff the op-amp is. A
-step in which the regime changes is walked in halves of halves down to 1/128 of it. Diodes are solved in every part that
+step in which the regime changes is walked in halves of halves down to 1/32 of it. Diodes are solved in every part that
 is walked, see ``port_kernels``.
 
 Shapes: as in ``regime_kernels``. Time is in steps, so every rate is a change per step.

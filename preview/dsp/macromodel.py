@@ -138,7 +138,7 @@ class MacroModel:
         self.k = k
         self.size = self.n + k
         self.columns = self.size + 4 + 2 * len(self.ports)
-        self._watches_inputs = any(
+        self.watches_inputs = any(
             math.isfinite(o.input_high_v) or math.isfinite(o.input_low_v) for o in self.sites
         )
         self._slopes = self._swing_slopes()
@@ -261,10 +261,15 @@ class MacroModel:
             turn=turn,
             rate=rate,
             out=np.ascontiguousarray(lay(space.C_out, space.D_out)[:, 0]),
-            walls=self._wall_rows(current, pin_v, turn),
-            plus=np.ascontiguousarray(plus_v if self._watches_inputs else plus_v[:, :0]),
+            walls=self._wall_rows(current, pin_v),
+            plus=np.ascontiguousarray(plus_v if self.watches_inputs else plus_v[:, :0]),
             port=np.ascontiguousarray(port_v),
         )
+
+    def following(self, equations: MacroEquations) -> Real:
+        """Rates of the states while every op-amp follows, and last the output, for the first set, shape (N + 1, c)."""
+        moves = equations.rate[0, 0]
+        return np.concatenate([equations.base[0] - equations.turn[0] @ moves, moves, equations.out[:1]])
 
     def noise_inputs(self, values: Real) -> tuple[Real, NoiseColumns]:
         """Generator of the states and of the output's integral, (N + 1, N + 1) per step, and how noise enters it."""
@@ -272,11 +277,9 @@ class MacroModel:
         space = self.topology.evaluate(values[None])
         n, size, T = self.n, self.size, self.step_s
         n0 = space.A.shape[1]
-        moves, turn = e.rate[0, 0], e.turn[0]
+        turn = e.turn[0]
         A = np.zeros((size + 1, size + 1))
-        A[:n, :size] = (e.base[0] - turn @ moves)[:, :size]
-        A[n:size, :size] = moves[:, :size]
-        A[size, :size] = e.out[0, :size]
+        A[:, :size] = self.following(e)[:, :size]
         drawn = slice(1 + self.k + len(self.netlist.fixed), None)
         wt = T * 2.0 * np.pi * np.array([gain_bandwidth_hz(o.model) for o in self.sites])
         by_input = np.zeros((size + 1, self.k))  # what one volt at each input difference does
@@ -329,12 +332,11 @@ class MacroModel:
                 rate[:, case, i, n + i] -= self.step_s * wt / model.open_loop_gain
         return rate
 
-    def _wall_rows(self, current: Real, pin_v: Real, turn: Real) -> Real:
+    def _wall_rows(self, current: Real, pin_v: Real) -> Real:
         rows = [current, pin_v]
         for s in self._slopes:
             rows.append((pin_v[:, s.opamp] + s.ohm * current[:, s.opamp])[:, None])
-        walls = np.concatenate(rows, axis=1) if self.k else np.zeros((len(turn), 0, self.columns))
-        return np.ascontiguousarray(walls)
+        return np.ascontiguousarray(np.concatenate(rows, axis=1))
 
     def wall_gains(self, equations: MacroEquations) -> Real:
         """How far each wall's row moves with its op-amp, shape (g, G)."""

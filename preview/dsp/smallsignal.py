@@ -35,14 +35,11 @@ def following_step(netlist: Netlist, step_s: float) -> Real:
     sites = tuple(replace(o, model=replace(o.model, crossover_v=0.0)) for o in netlist.opamps)
     linear = small_signal(replace(netlist, opamps=sites))
     model = MacroModel(linear, step_s)
-    e = model.equations(model.values_of(linear)[None])
-    size, moves = model.size, e.rate[0, 0]
-    keep = slice(0, size + 3)
+    size = model.size
+    rates = model.following(model.equations(model.values_of(linear)[None]))[:, : size + 3]
     generator = np.zeros((size + 4, size + 4))  # states, signal and its derivatives, integral of the output
-    generator[: model.n, keep] = (e.base[0] - e.turn[0] @ moves)[:, keep]
-    generator[model.n : size, keep] = moves[:, keep]
+    generator[:size, : size + 3], generator[size + 3, : size + 3] = rates[:size], rates[size]
     generator[size, size + 1] = generator[size + 1, size + 2] = 1.0
-    generator[size + 3, keep] = e.out[0, keep]
     rows = expm(generator)[[*range(size), size + 3]]
     u, v1, v2 = rows[:, size : size + 1], rows[:, size + 1 : size + 2], rows[:, size + 2 : size + 3]
     return np.concatenate(

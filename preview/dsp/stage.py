@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from preview.circuit.fault import FaultReading
 from preview.circuit.netlist import Branch, Netlist, OpAmpSite, Track
 from preview.circuit.opamp import IDEAL, OpAmpModel, OpAmpReading
 from preview.circuit.parts import PartKind
@@ -23,7 +24,7 @@ from preview.network.stability import check_stable
 from preview.values.noise import NoiseSetting
 from preview.values.quality import Quality
 
-__all__ = ["GLIDE_S", "Fault", "Glide", "Snapshot", "StageProcessor", "load_kernels"]
+__all__ = ["GLIDE_S", "Glide", "Snapshot", "StageProcessor", "load_kernels"]
 
 Real = NDArray[np.float64]
 
@@ -55,18 +56,6 @@ class Glide:
     """Steps from one station to the next."""
     settled: Matrices | None = None
     """Matrices that hold afterwards, where they are not those of the last station."""
-
-
-@dataclass(frozen=True, slots=True)
-class Fault:
-    """Why a circuit was stopped; it gives 0 V until it is recovered."""
-
-    node: str
-    """Node or part at which it happened."""
-    time_s: float
-    """When, in signal time since it began [s]."""
-    reason: str
-    """What happened."""
 
 
 class StageProcessor:
@@ -101,7 +90,7 @@ class StageProcessor:
         noise: NoiseSetting | None = None,
     ) -> None:
         self.quality = quality
-        self.fault: Fault | None = None
+        self.fault: FaultReading | None = None
         self._frames = self._judged = 0
         self._unsolved = 0.0
         self.sample_rate_hz = float(sample_rate_hz)
@@ -275,7 +264,7 @@ class StageProcessor:
             node = self._core.trouble()
             if node is not None:
                 reason = "its voltage or current grows beyond belief"
-                self.fault = Fault(node, self._frames / self.sample_rate_hz, reason)
+                self.fault = FaultReading(node, self._frames / self.sample_rate_hz, reason)
                 volts_out[done - count :] = 0.0
                 return
             if self._frames < self._judged + BLOCK_FRAMES:  # however the signal is cut
@@ -284,7 +273,7 @@ class StageProcessor:
             unsolved = self._core.unsolved()
             if unsolved - self._unsolved > MOST_UNSOLVED * (self._frames - judged) * f.factor:
                 reason = "its limits and diodes find no common solution"
-                self.fault = Fault(self._core.first_name(), self._frames / self.sample_rate_hz, reason)
+                self.fault = FaultReading(self._core.first_name(), self._frames / self.sample_rate_hz, reason)
                 volts_out[done - count :] = 0.0
                 return
             self._unsolved = unsolved

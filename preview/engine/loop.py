@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import replace
-from typing import TYPE_CHECKING, Protocol
+from typing import Protocol
 
 import numpy as np
 from numpy.typing import NDArray
@@ -14,9 +14,6 @@ from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
 from preview.engine.readings import FaultReading
 from preview.meters.reading import LevelReading
-
-if TYPE_CHECKING:
-    from preview.dsp.stage import Fault
 
 __all__ = ["Circuit", "LiveCircuit", "Meter", "Samples", "SignalPath", "joined_readings", "peak"]
 
@@ -28,7 +25,7 @@ class Circuit(Protocol):
     """A running circuit."""
 
     @property
-    def fault(self) -> FaultReading | Fault | None:
+    def fault(self) -> FaultReading | None:
         """Why it has given up, None while all is well."""
 
     @property
@@ -56,10 +53,6 @@ class LiveCircuit(Circuit, Protocol):
     @property
     def swapping(self) -> bool:
         """Whether what is heard is on its way to something else."""
-
-    @property
-    def fault(self) -> FaultReading | None:
-        """Why it has given up, None while all is well."""
 
     @property
     def match_gain(self) -> float:

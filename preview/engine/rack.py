@@ -119,9 +119,8 @@ class Rack:
         for slot in self._slots.values():
             if not slot.heard:
                 continue
-            fault = getattr(slot.processor, "fault", None)
-            if fault is not None:
-                return FaultReading(fault.node, fault.time_s, fault.reason)
+            if slot.processor.fault is not None:
+                return slot.processor.fault
         return None
 
     def put(self, letter: str, processor: Processor) -> None:

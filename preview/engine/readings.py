@@ -6,6 +6,8 @@ from dataclasses import dataclass
 from enum import StrEnum
 from typing import Literal
 
+from preview.circuit.fault import FaultReading
+
 __all__ = [
     "CandidateReading",
     "ClipMarks",
@@ -30,18 +32,6 @@ class InputKind(StrEnum):
     """A built-in test signal."""
     LIVE = "live"
     """The sound device's input."""
-
-
-@dataclass(frozen=True, slots=True)
-class FaultReading:
-    """Why a circuit was muted."""
-
-    node: str
-    """Node or designator at which it happened."""
-    time_s: float
-    """When, counted in signal time since the circuit began [s]."""
-    reason: str
-    """What happened, one line."""
 
 
 @dataclass(frozen=True, slots=True)

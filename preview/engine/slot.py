@@ -5,6 +5,7 @@ from __future__ import annotations
 from collections.abc import Sequence
 from typing import Protocol
 
+from preview.circuit.fault import FaultReading
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
 from preview.engine.transport import Ramp
@@ -14,6 +15,9 @@ __all__ = ["Processor", "Slot"]
 
 class Processor(Protocol):
     """A running stage, as ``preview.dsp.stage.StageProcessor`` is one."""
+
+    fault: FaultReading | None
+    """Why it was stopped, None while all is well."""
 
     @property
     def latency_frames(self) -> int:
