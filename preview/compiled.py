@@ -10,7 +10,7 @@ from typing import Any
 
 from platformdirs import user_cache_dir
 
-__all__ = ["bare", "compiled", "in_cache"]
+__all__ = ["compiled", "in_cache"]
 
 
 def _compiler() -> Callable[[Callable[..., Any]], Any]:
@@ -31,38 +31,14 @@ def _compiler() -> Callable[[Callable[..., Any]], Any]:
         cached = False
     from numba import njit  # reads the variable as it is loaded, so not before
 
-    decorate: Callable[[Callable[..., Any]], Any] = njit(cache=cached, nogil=True, error_model="numpy")
+    # No counts of an array's owners (`_nrt`), whose keeping costs more than a short loop: the caller holds every array
+    # of a kernel, and a kernel makes none.
+    options: dict[str, Any] = {"cache": cached, "nogil": True, "error_model": "numpy", "_nrt": False}
+    decorate: Callable[[Callable[..., Any]], Any] = njit(**options)
     return decorate
 
 
 compiled = _compiler()
-
-
-def _uncounted() -> Any:
-    from llvmlite.ir import Constant
-    from numba.extending import intrinsic
-
-    @intrinsic
-    def bare(_context: Any, array: Any) -> Any:
-        def build(context: Any, builder: Any, _signature: Any, args: Any) -> Any:
-            make = context.make_array(array)
-            given, result = make(context, builder, args[0]), make(context, builder)
-            for field in ("data", "nitems", "itemsize", "shape", "strides"):
-                setattr(result, field, getattr(given, field))
-            for field in ("meminfo", "parent"):
-                setattr(result, field, Constant(getattr(given, field).type, None))
-            return result._getvalue()
-
-        return array(array), build
-
-    return bare
-
-
-bare = _uncounted()
-"""The same array without a count of its owners, whose keeping costs more than a short loop.
-
-For arrays that the caller of a kernel holds; what is returned to Python must not be one.
-"""
 
 
 def in_cache(name: str) -> bool:

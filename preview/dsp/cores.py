@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp import kernels, macro_kernels, regime_kernels
+from preview.dsp import kernels, macro_kernels, recur_kernels, regime_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
 from preview.dsp.rest import resting_state
@@ -251,7 +251,7 @@ class MacroCore:
             np.zeros(2 * ports),
             np.zeros(3),
         )
-        wide = 4 if size <= 4 else max(size, 8)
+        wide = recur_kernels.width(size)
         self._tracks = (
             np.zeros((max(size, wide), kernels.CHUNK + 1)),
             np.zeros((max(rows, wide), kernels.CHUNK)),
@@ -438,9 +438,9 @@ class MacroCore:
 
 def _beyond_belief(states: Real) -> int | None:
     """The state, of (channels, states), that is no number or too large to be one; None where there is none."""
-    worst = np.abs(states).max(axis=0, initial=0.0)
-    if np.all(worst < BEYOND_BELIEF):
+    if states.size == 0 or (states.max() < BEYOND_BELIEF and states.min() > -BEYOND_BELIEF):
         return None
+    worst = np.abs(states).max(axis=0)
     return int(np.argmax(np.where(np.isfinite(worst), worst, np.inf)))
 
 

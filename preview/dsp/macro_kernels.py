@@ -15,7 +15,7 @@ from typing import Any
 
 import numpy as np
 
-from preview.compiled import bare, compiled
+from preview.compiled import compiled
 from preview.dsp.kernels import (
     CLIPPED,
     EVENTS,
@@ -28,6 +28,7 @@ from preview.dsp.kernels import (
     signal_part,
 )
 from preview.dsp.port_kernels import keep_ports, solve_ports
+from preview.dsp.recur_kernels import recur_wide
 from preview.dsp.regime_kernels import (
     ABOVE,
     AT_HIGH,
@@ -100,6 +101,30 @@ def keeps_regime(kind: int, w: float, rate: float, low: float, high: float, up: 
     if kind == AT_LOW:
         return rate <= 0.0
     return low <= w <= high and (rate >= 0.0 if (kind - AT_WALL) % 2 == 0 else rate <= 0.0)
+
+
+@compiled
+def share_within(start: float, end: float, low: float, high: float) -> float:
+    """Share of a part at which a quantity that runs straight leaves its bounds; 1 where it stays."""
+    if end > high:
+        return (high - start) / (end - start) if start < high else 0.0
+    if end < low:
+        return (low - start) / (end - start) if start > low else 0.0
+    return 1.0
+
+
+@compiled
+def rate_bounds(kind: int, up: float, down: float) -> tuple[float, float]:
+    """Between what the rate stays that an op-amp in a regime asks for."""
+    if kind == FOLLOWS:
+        return -down, up
+    if kind == SLEWS_UP:
+        return up, np.inf
+    if kind == SLEWS_DOWN:
+        return -np.inf, -down
+    if kind == AT_HIGH or (kind >= AT_WALL and (kind - AT_WALL) % 2 == 0):
+        return 0.0, np.inf
+    return -np.inf, 0.0
 
 
 @compiled
@@ -205,6 +230,7 @@ def walk(
     total = 0.0
     done = 0
     level, span = 0, whole  # span: what is tried, in the smallest parts
+    due = -1  # parts before which the end of the regime is not expected
     regime = -1
     while done < whole:
         free = gliding
@@ -277,7 +303,28 @@ def walk(
                 keeps = keeps and in_same_range(ranges[o], y[at_plus + o], range_low[o], range_high[o])
             if keeps or span == 1:
                 break
+            # to just before where straight lines say that the regime ends; wrong, it costs another try
+            share = 0.99
+            for o in range(k):
+                kind = kinds[o]
+                if kind != AT_HIGH and kind != AT_LOW:
+                    share = min(
+                        share, share_within(z[n + o], y[n + o], all_rails[leg, 0, o], all_rails[leg, 1, o])
+                    )
+                asked = at_instant(rate[leg, ranges[o], o], z, ua, v1 + v2 * t0, v2, currents, size, ports)
+                lo, hi = rate_bounds(kind, up[o], down[o])
+                share = min(share, share_within(asked, y[size + o], lo, hi))
+            for m in range(G):
+                share = min(
+                    share,
+                    share_within(
+                        extremes[k + m, 2], y[at_walls + m], all_walls[leg, 0, m], all_walls[leg, 1, m]
+                    ),
+                )
+            due = done + int(share * span)
             level, span = level + 1, span // 2
+            while span > max(due - done, 1):
+                level, span = level + 1, span // 2
         length = span / whole
         for o in range(k):
             kind = kinds[o]
@@ -336,8 +383,11 @@ def walk(
             junctions[3, p] = (junctions[2, p] - junctions[1, p]) / (length * (2.0 / 3.0))
             junctions[0, p] = junctions[2, p]
         done += span
-        while level > 0 and done % (2 * span) == 0:
+        while level > 0 and done % (2 * span) == 0 and (done >= due or done + 2 * span <= due):
             level, span = level - 1, 2 * span
+        if done <= due:
+            while span > max(due - done, 1):
+                level, span = level + 1, span // 2
         if keeps:
             continue
         regime = -1
@@ -417,69 +467,6 @@ def lasts(path: Any, count: int, low: float, high: float, span: Any) -> int:
                 span_of(path, i, span)
             return i
     return count
-
-
-@compiled
-def dot_4(m: Any, r: int, a: float, b: float, c: float, d: float) -> Any:
-    """Part of one row of a matrix times four numbers."""
-    return (m[r, 0] * a + m[r, 1] * b) + (m[r, 2] * c + m[r, 3] * d)
-
-
-@compiled
-def dot_8(
-    m: Any, r: int, a: float, b: float, c: float, d: float, e: float, f: float, g: float, h: float
-) -> Any:
-    """One row of a matrix times eight numbers."""
-    low = (m[r, 0] * a + m[r, 1] * b) + (m[r, 2] * c + m[r, 3] * d)
-    return low + ((m[r, 4] * e + m[r, 5] * f) + (m[r, 6] * g + m[r, 7] * h))
-
-
-@compiled
-def recur_wide(M: Any, drive: Any, track: Any, size: int, count: int, m: Any) -> None:
-    """``track[:, i + 1] = M track[:, i] + drive[:, i]`` for more than three states, written out up to eight.
-
-    ``m`` (w, w) is room, w = 4, 8 or ``size``; ``track`` and ``drive`` have w rows or more.
-    """
-    wide = m.shape[0]
-    for r in range(wide):
-        for j in range(wide):
-            m[r, j] = M[r, j] if r < size and j < size else 0.0
-        if r >= size:
-            track[r, 0] = 0.0
-            drive[r, :count] = 0.0
-    if wide == 4:
-        a, b, c, d = track[0, 0], track[1, 0], track[2, 0], track[3, 0]
-        for i in range(count):
-            a, b, c, d = (
-                drive[0, i] + dot_4(m, 0, a, b, c, d),
-                drive[1, i] + dot_4(m, 1, a, b, c, d),
-                drive[2, i] + dot_4(m, 2, a, b, c, d),
-                drive[3, i] + dot_4(m, 3, a, b, c, d),
-            )
-            track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = a, b, c, d
-    elif wide == 8:
-        a, b, c, d = track[0, 0], track[1, 0], track[2, 0], track[3, 0]
-        e, f, g, h = track[4, 0], track[5, 0], track[6, 0], track[7, 0]
-        for i in range(count):
-            a, b, c, d, e, f, g, h = (
-                drive[0, i] + dot_8(m, 0, a, b, c, d, e, f, g, h),
-                drive[1, i] + dot_8(m, 1, a, b, c, d, e, f, g, h),
-                drive[2, i] + dot_8(m, 2, a, b, c, d, e, f, g, h),
-                drive[3, i] + dot_8(m, 3, a, b, c, d, e, f, g, h),
-                drive[4, i] + dot_8(m, 4, a, b, c, d, e, f, g, h),
-                drive[5, i] + dot_8(m, 5, a, b, c, d, e, f, g, h),
-                drive[6, i] + dot_8(m, 6, a, b, c, d, e, f, g, h),
-                drive[7, i] + dot_8(m, 7, a, b, c, d, e, f, g, h),
-            )
-            track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = a, b, c, d
-            track[4, i + 1], track[5, i + 1], track[6, i + 1], track[7, i + 1] = e, f, g, h
-    else:
-        for i in range(count):
-            for r in range(size):
-                t = drive[r, i]
-                for j in range(size):
-                    t += m[r, j] * track[j, i]
-                track[r, i + 1] = t
 
 
 @compiled
@@ -582,19 +569,9 @@ def regime_steps(
         lo, hi = -np.inf, np.inf
         if a < at_walls:
             o = a - size
-            kind = kinds[o]
-            span = spans[k + G + o]
-            if kind == FOLLOWS:
-                lo, hi = -down[o], up[o]
-            elif kind == SLEWS_UP:
-                lo = up[o]
-            elif kind == SLEWS_DOWN:
-                hi = -down[o]
-            elif kind == AT_HIGH or (kind >= AT_WALL and (kind - AT_WALL) % 2 == 0):
-                lo = 0.0
-            else:
-                hi = 0.0
+            lo, hi = rate_bounds(kinds[o], up[o], down[o])
             at = k + G + o
+            span = spans[at]
         elif a < at_plus:
             m = a - at_walls
             kind = kinds[owner[m]]
@@ -731,38 +708,18 @@ def run_macro(
     room, tracks
         Room.
     """
-    base, turn, rate, out_row, rows_, plus, port = all_equations
-    all_equations = (bare(base), bare(turn), bare(rate), bare(out_row), bare(rows_), bare(plus), bare(port))
-    whole, all_laws, all_rails, all_walls, all_gains = (
-        bare(whole), bare(all_laws), bare(all_rails), bare(all_walls), bare(all_gains),
-    )  # fmt: skip
     up, down, range_low, range_high = fixed_limits
-    fixed_limits = (bare(up), bare(down), bare(range_low), bare(range_high))
-    up, down, range_low, range_high = fixed_limits
-    owner, u, mean_out, state, regimes, places = (
-        bare(owner), bare(u), bare(mean_out), bare(state), bare(regimes), bare(places),
-    )  # fmt: skip
-    stats, all_extremes, all_junctions, noise = (
-        bare(stats),
-        bare(all_extremes),
-        bare(all_junctions),
-        bare(noise),
-    )
-    book, last = bare(book), bare(last)
-    r0, r1, r2, r3, r4, r5, r6, r7, r8 = room
-    room = (bare(r0), bare(r1), bare(r2), bare(r3), bare(r4), bare(r5), bare(r6), bare(r7), bare(r8))
     channels, size = state.shape
     k = up.shape[0]
     n = size - k
     G = owner.shape[0]
-    t0, t1, t2, t3, t4 = tracks
-    track, drive, spans, counts, square = bare(t0), bare(t1), bare(t2), bare(t3), bare(t4)
+    track, drive, spans, counts, square = tracks
     chunk = drive.shape[1]
     final = whole.shape[0] - 1
     kind_count = AT_WALL + 2 * G
     ports = all_laws.shape[1]
     inputs = all_equations[5].shape[1]
-    parts, wholes = bare(store[0]), bare(store[1])
+    parts, wholes = store
     now = parts.shape[0] - 1
     signal = room[8]
     for c in range(channels):
@@ -790,7 +747,9 @@ def run_macro(
                         book[slot, HAS_WHOLE] == 0
                     ):  # not the one among the parts: that differs by its rounding
                         fill_slot(all_equations, leg, kinds, ranges, up, down, True, parts[now], room)
-                        wholes[slot, :, :] = parts[now, 0].T
+                        for a in range(wholes.shape[1]):
+                            for b in range(wholes.shape[2]):
+                                wholes[slot, a, b] = parts[now, 0, b, a]
                         book[slot, HAS_WHOLE] = 1
                 limits = (all_rails[leg, 0], all_rails[leg, 1], up, down, range_low, range_high)
                 taken = regime_steps(
@@ -801,7 +760,7 @@ def run_macro(
             if taken == count:
                 span = min(2 * span, chunk)
                 continue
-            span = max(8, span // 2)
+            span = min(64, chunk)
             u0, u1 = uc[done + 1], uc[done + 2]
             signal[0], signal[2] = u0, u1
             signal[1] = (13.0 * (u0 + u1) - (uc[done] + uc[done + 3])) * (1.0 / 24.0)

@@ -24,6 +24,14 @@ IN_RANGE, ABOVE, BELOW = 0, 1, 2
 
 
 @compiled
+def put(target: Any, source: Any) -> None:
+    """Copy a matrix."""
+    for r in range(source.shape[0]):
+        for c in range(source.shape[1]):
+            target[r, c] = source[r, c]
+
+
+@compiled
 def multiply(a: Any, b: Any, result: Any) -> None:
     """``result = a b`` for square matrices, in one fixed order."""
     size = a.shape[0]
@@ -66,7 +74,7 @@ def exponential(a: Any, scale: float, result: Any, power: Any, other: Any) -> No
                 result[i, j] += power[i, j]
     for _ in range(halvings):
         multiply(result, result, other)
-        result[:, :] = other
+        put(result, other)
 
 
 @compiled
@@ -315,9 +323,9 @@ def fill_parts(
         if level == 0:
             break
         multiply(phi, phi, work[1])
-        phi[:, :] = work[1]
+        put(phi, work[1])
         if ports:
             multiply(third, third, work[1])
-            third[:, :] = work[1]
+            put(third, work[1])
         level -= 1
     return fine

@@ -412,7 +412,6 @@ def test_running_kernels_equal_their_source(gliding: bool, monkeypatch: pytest.M
     results = []
     for source in (False, True):
         if source:
-            monkeypatch.setattr(macro_kernels, "bare", lambda array: array)
             for module, names in SOURCES.items():
                 for name in names:
                     monkeypatch.setattr(module, name, getattr(module, name).py_func)
