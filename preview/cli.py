@@ -256,19 +256,26 @@ def _name(text: str) -> str:
 
 
 def _listen(options: argparse.Namespace) -> int:
-    from preview.engine.process import EngineProcess
+    from preview.engine.door import start_child
 
     terminal = all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
     if terminal and not options.plain and os.environ.get("TERM") in _DUMB:
         _say("this terminal has no screen to draw on: line mode, as with --plain")
         options.plain = True
-    # it loads while the options are read
-    engine = EngineProcess.spawn() if terminal or options.plain else None
+    if not (terminal or options.plain):
+        return _desk(options, None)
+    process, connection = start_child()  # it loads while the desk does
+    try:
+        from preview.engine.process import EngineProcess
+
+        engine = EngineProcess(process, connection)
+    except BaseException:
+        process.kill()
+        raise
     try:
         return _desk(options, engine)
     finally:
-        if engine is not None:
-            engine.close()
+        engine.close()
 
 
 def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:

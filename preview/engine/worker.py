@@ -14,6 +14,7 @@ from dataclasses import dataclass
 from multiprocessing.connection import Connection
 from typing import TYPE_CHECKING
 
+from preview.engine.door import end_with_parent
 from preview.engine.messages import Notice, Report
 from preview.errors import PreviewError
 
@@ -48,6 +49,7 @@ class Worker:
         self._there = threading.Condition()
         self._closed = False
         self._thread: threading.Thread | None = None
+        self._reader: threading.Thread | None = None
 
     def submit(self, key: str, job: Job | None) -> None:
         """Do a job, in place of the one of that key; None stops it."""
@@ -72,14 +74,15 @@ class Worker:
         with self._there:
             self._closed = True
             self._there.notify()
-        if self._connection is not None:
-            self._connection.close()
         if self._process is not None:
-            self._process.join(PATIENCE_S)
             for force in (self._process.terminate, self._process.kill):
-                if self._process.is_alive():
-                    force()
-                    self._process.join(PATIENCE_S)
+                force()
+                self._process.join(PATIENCE_S)
+                if not self._process.is_alive():
+                    break
+        if self._reader is not None and self._connection is not None:
+            self._reader.join(PATIENCE_S)  # it has read to the end; closed under its hands it would fail
+            self._connection.close()
 
     def _speak(self) -> None:
         """Start the process, and again after it has died; send it the orders."""
@@ -107,7 +110,8 @@ class Worker:
         process.start()
         theirs.close()
         self._process, self._connection = process, ours
-        threading.Thread(target=self._listen, args=(ours,), name="worker-reader", daemon=True).start()
+        self._reader = threading.Thread(target=self._listen, args=(ours,), name="worker-reader", daemon=True)
+        self._reader.start()
 
     def _listen(self, connection: Connection) -> None:
         with contextlib.suppress(EOFError, OSError):
@@ -122,6 +126,7 @@ def _child(connection: Connection) -> None:
         signal.signal(number, signal.SIG_IGN)
     if hasattr(os, "nice"):
         os.nice(NICE)
+    end_with_parent(PATIENCE_S)
     with contextlib.suppress(EOFError, OSError):
         _Bench(connection).serve()
 

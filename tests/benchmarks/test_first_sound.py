@@ -25,6 +25,7 @@ RATE = 48_000
 def seconds_to_sound(server: Any, audio: Path, config: Path) -> float:
     """Start ``preview listen`` in a terminal of its own; the time until the device's monitor hears it [s]."""
     env = {**server.env, "XDG_CONFIG_HOME": str(config), "TERM": "xterm-256color"}
+    env.pop("PYTHONDONTWRITEBYTECODE", None)  # warm is with the bytecode that any installation has
     recording = server.record(20 * RATE)
     began_s = time.monotonic()  # the recorder's first block has just come
     leader, follower = pty.openpty()

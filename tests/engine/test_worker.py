@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
+import threading
 import time
 from collections.abc import Callable, Iterator
 from pathlib import Path
@@ -226,6 +227,16 @@ def test_a_worker_that_was_killed_is_started_again(worker, tmp_path):
     worker._process.join(5)
     worker.submit("overview", OverviewJob(audio))
     wait_for(worker, lambda t: isinstance(t, Overview))
+
+
+def test_a_worker_is_closed_without_a_fault_in_the_thread_that_listens_to_it(worker, monkeypatch):
+    faults = []
+    monkeypatch.setattr(threading, "excepthook", faults.append)
+    worker.submit("devices", DeviceJob())
+    wait_for(worker, lambda t: isinstance(t, DeviceList))
+    worker.close()
+    assert not worker._reader.is_alive()
+    assert not faults
 
 
 def test_devices_are_listed_or_it_is_said_why_not(worker):

@@ -402,6 +402,19 @@ def test_the_desk_loads_neither_sound_nor_compiler_nor_plots() -> None:
     assert done.stdout.strip() == "[]"
 
 
+def test_the_engine_is_started_before_anything_large_is_loaded() -> None:
+    code = (
+        "import sys, preview.cli, preview.engine.door\n"
+        "preview.cli._parser()\n"
+        "names = ['numpy', 'soundfile', 'textual', 'preview.engine.messages']\n"
+        "print([name for name in names if name in sys.modules])"
+    )
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=60
+    )
+    assert done.stdout.strip() == "[]"
+
+
 def test_the_figures_of_a_real_op_amp_load_neither_sound_nor_compiler_nor_plots() -> None:
     code = (
         "import sys, preview.ui.app\n"
