@@ -282,7 +282,8 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     from preview.audio.files import probe
     from preview.engine.demo import demo_recording
     from preview.engine.options import DEFAULT_STAGE, intake_from, running_from, session_from
-    from preview.engine.process import EngineConfig, EngineProcess
+    from preview.engine.process import EngineConfig
+    from preview.engine.spare import Spare
     from preview.network.stability import check_stable
     from preview.session import AtEnd
 
@@ -319,17 +320,22 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     config = EngineConfig(session=session, device=options.device, silent=options.silent)
     engine.begin(config)
 
-    def restart() -> EngineProcess:
-        return EngineProcess.start(config)
+    def restart(left: EngineConfig) -> EngineProcess:
+        return spare.begin(replace(left, device=config.device, silent=config.silent))
 
-    if options.plain:
-        from preview.ui.plain import run_plain
+    spare = Spare()
+    spare.keep_beside(engine)
+    try:
+        if options.plain:
+            from preview.ui.plain import run_plain
 
-        run_plain(session, engine, lines=sys.stdin, out=sys.stdout, restart=restart)
-    else:
-        from preview.ui.running import run_desk
+            run_plain(session, engine, lines=sys.stdin, out=sys.stdout, restart=restart)
+        else:
+            from preview.ui.running import run_desk
 
-        run_desk(session, engine, restart=restart)
+            run_desk(session, engine, restart=restart)
+    finally:
+        spare.close()
     return 0
 
 

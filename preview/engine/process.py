@@ -78,6 +78,8 @@ class EngineProcess:
         self._orders: queue.SimpleQueue[EngineConfig | Command | None] = queue.SimpleQueue()
         self._closed = False
         self._begun = False
+        self.heard_ready = threading.Event()
+        """Set once it has said that every candidate can be heard, and when it has ended."""
         self._reader = threading.Thread(target=self._listen, name="engine-reader", daemon=True)
         self._reader.start()
         threading.Thread(target=self._speak, name="engine-writer", daemon=True).start()
@@ -177,6 +179,9 @@ class EngineProcess:
                         self._notices.append(message)
                     elif isinstance(message, Report):
                         self._reports[type(message)] = message
+                if isinstance(message, Snapshot) and all(one.ready for one in message.candidates):
+                    self.heard_ready.set()
+        self.heard_ready.set()
 
     def _speak(self) -> None:
         """Send the orders on; a full pipe makes this thread wait, not the desk."""

@@ -327,15 +327,16 @@ class DeskApp(DialogApp):
             self.run_worker(self._start_again(restart, play), group="restart")
 
     async def _start_again(self, restart: Restart, play: bool) -> None:
+        left = self.desk.as_left()
         await asyncio.to_thread(self.desk.link.close)  # one that hangs is ended by force, which takes seconds
         try:
             # A new process inherits standard error; while the desk runs, sys.stderr is not a real file.
             with contextlib.redirect_stderr(sys.__stderr__):
-                link = await asyncio.to_thread(restart)
+                link = await asyncio.to_thread(restart, left)
         except PreviewError as error:
             self.foot.say(str(error), "error")
         else:
-            self.desk.resume(link)
+            self.desk.resume(link, left)
             self._watch = AnswerWatch()
             self.desk.listening.play(play)
             hint = "" if play else f"; {self.desk.keys.shown('play_pause')} plays"

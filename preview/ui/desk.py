@@ -14,11 +14,12 @@ from dataclasses import replace
 from preview.circuit.netlist import OUT, OpAmpSite
 from preview.circuit.parts import Stage
 from preview.engine.messages import ClipMarks, Command, DeviceList, Overview, Report, Snapshot
+from preview.engine.process import EngineConfig
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.asking import Outcome
 from preview.ui.candidates import Candidates
-from preview.ui.changes import commands_between, whole_state
+from preview.ui.changes import catching_up, commands_between
 from preview.ui.clips import Clips
 from preview.ui.connections import Connections
 from preview.ui.figures import FigureSet
@@ -123,14 +124,26 @@ class Desk:
             return self.keeping.hear_export(report)
         return None
 
-    def resume(self, link: EngineLink) -> None:
-        """Bring a new engine to where the old one was; it waits at the playhead."""
-        position = self.listening.position_frame
+    def as_left(self) -> EngineConfig:
+        """What an engine begins with to be where this desk is; it waits at the playhead."""
+        return EngineConfig(
+            session=replace(self.session, power_on=False),
+            start_volume_db=self.listening.volume_db,
+            start_frame=self.listening.position_frame,
+            region=self.listening.region,
+            letter=self.candidates.letter,
+            candidates=self.candidates.others(),
+            match=self.candidates.matched,
+        )
+
+    def resume(self, link: EngineLink, began: EngineConfig) -> None:
+        """Work with a new engine, which began as the old one was left; what was done since is told it."""
+        for command in catching_up(began, self.as_left()):
+            link.send(command)
         self.link = link
         self.stopped = self.unanswered = False
-        for command in (*whole_state(self.candidates.session("A")), *self.candidates.orders()):
-            link.send(command)
-        self.listening.resume(link, position)
+        self.connections.resume(link)
+        self.listening.resume(link)
 
     # ---- the session ----
 

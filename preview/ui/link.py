@@ -6,6 +6,7 @@ from collections.abc import Callable
 from typing import Protocol
 
 from preview.engine.messages import Command, Notice, Report, Snapshot
+from preview.engine.process import EngineConfig
 
 __all__ = ["AnswerWatch", "EngineLink", "Restart", "StillLink"]
 
@@ -36,8 +37,8 @@ class EngineLink(Protocol):
         """End the engine; a second call does nothing."""
 
 
-Restart = Callable[[], EngineLink]
-"""Starts a new engine in place of one that stopped; may take a second; may raise PreviewError."""
+Restart = Callable[[EngineConfig], EngineLink]
+"""Starts a new engine in place of one that stopped, on the device of the first; may raise PreviewError."""
 
 
 class AnswerWatch:

@@ -68,13 +68,11 @@ class Listening:
         snapshot = self._desk.snapshot
         return snapshot.position_frame if snapshot else 0
 
-    def resume(self, link: EngineLink, position: int) -> None:
-        """Bring a new engine to the playhead; it waits there."""
-        link.send(SetBypass(self.bypass))
-        link.send(SetVolume(self.volume_db))
-        if self.region is not None:
-            link.send(SetRegion(*self.region))
-        link.send(Seek(position))
+    def resume(self, link: EngineLink) -> None:
+        """What a new engine must be told besides what it began with; it waits at the playhead."""
+        if self.bypass:
+            link.send(SetBypass(True))
+        self._sought = (self._desk.now_s(), self.position_frame)
         self.playing = False
 
     def restore(self, saved: Saved) -> None:

@@ -315,8 +315,9 @@ class PlainDesk:
             return "the engine is running"
         if self._restart is None:
             return "leave and open it again: this engine cannot be restarted from here"
+        left = desk.as_left()
         desk.link.close()
-        desk.resume(self._restart())
+        desk.resume(self._restart(left), left)
         return "the engine runs again; 'play' plays"
 
     def do_quit(self) -> None:

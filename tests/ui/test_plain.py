@@ -264,14 +264,21 @@ def test_what_the_engine_says_is_said_and_cleaned(talk, engine) -> None:
 
 
 def test_a_stopped_engine_is_started_again(session, engine, tmp_path) -> None:
-    new = type(engine)()
+    new, began = type(engine)(), []
     out = io.StringIO()
-    desk = PlainDesk(session, engine, lines=io.StringIO(""), out=out, restart=lambda: new, config=tmp_path)
+    desk = PlainDesk(
+        *(session, engine),
+        lines=io.StringIO(""),
+        out=out,
+        restart=lambda left: began.append(left) or new,
+        config=tmp_path,
+    )
     engine.alive = False
     desk.poll()
     desk.obey("restart")
     assert engine.closed
-    assert any(isinstance(command, SetCircuit) for command in new.sent)
+    assert began[0].session.stage == session.stage
+    assert desk.desk.link is new
 
 
 # ---- from start to end ----
