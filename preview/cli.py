@@ -281,7 +281,7 @@ def _listen(options: argparse.Namespace) -> int:
 def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     from preview.audio.files import probe
     from preview.engine.demo import demo_recording
-    from preview.engine.options import DEFAULT_STAGE, intake_from, running_from, session_from
+    from preview.engine.options import DEFAULT_STAGE, intake_from, session_from, with_running
     from preview.engine.process import EngineConfig
     from preview.engine.spare import Spare
     from preview.network.stability import check_stable
@@ -308,9 +308,8 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
         )
     comment = info.comment if info is not None else ""
     session = session_from(options, audio=audio, comment=comment, at_end=AtEnd(options.end), stage=stage)
-    session = replace(
-        session, notes=(*session.notes, *intake.pop("notes", ())), **intake, **running_from(options)
-    )
+    session = replace(session, notes=(*session.notes, *intake.pop("notes", ())), **intake)
+    session = with_running(session, options)
     _echo(session, info.warnings if info is not None else ())
     check_stable(session.netlist())
     if engine is None:
@@ -360,7 +359,7 @@ def _warn(warnings: Iterable[str]) -> None:
 def _render(options: argparse.Namespace) -> int:
     from preview.audio.sink import check_output
     from preview.engine.logoptions import assumed_full_scale, log_format, state_per_unit
-    from preview.engine.options import running_from, session_from
+    from preview.engine.options import session_from, with_running
     from preview.engine.progress import Progress
     from preview.engine.render import open_source, render
     from preview.engine.report import render_lines, render_object
@@ -375,7 +374,7 @@ def _render(options: argparse.Namespace) -> int:
         session = session_from(
             options, audio=audio, comment=info.comment, assumed_full_scale=assumed_full_scale(audio)
         )
-        session = replace(session, **running_from(options))
+        session = with_running(session, options)
         said = source.warnings
         _echo(session, said)
         progress = Progress(info.frames, sys.stderr)

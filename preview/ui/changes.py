@@ -205,5 +205,11 @@ def render_command(session: Session, opened: Stage) -> str:
         words += ["--source", exact_source(session.source)]
     if session.load != NO_LOAD:
         words += ["--load", exact_load(session.load)]
+    for limit in session.without:
+        words += ["--without", limit]
+    if session.noise is not None:
+        words += ["--part-noise", f"{session.noise.gain_db!r} dB", "--noise-seed", str(session.noise.seed)]
+    if session.power_on:
+        words.append("--power-on")
     words += ["--full-scale", session.full_scale.text, "--quality", session.quality.value]
     return shlex.join(words)

@@ -13,6 +13,7 @@ from preview.circuit.drive import LoadModel
 from preview.circuit.library import find_stage, open_stages
 from preview.circuit.parts import Supply
 from preview.circuit.reader import parse_stage
+from preview.cli import _parser
 from preview.engine.messages import (
     DeviceList,
     DeviceRow,
@@ -32,11 +33,13 @@ from preview.engine.messages import (
     SetRegion,
     SetVolume,
 )
+from preview.engine.options import with_running
 from preview.errors import PartValueError
 from preview.session import AtEnd
 from preview.ui.changes import commands_between, render_command, with_setting
 from preview.ui.desk import Desk
 from preview.ui.opamps import with_opamp_type
+from preview.values.noise import NoiseSetting
 from preview.values.notation import parse_value
 from preview.values.quality import Quality
 
@@ -345,6 +348,14 @@ def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> No
     assert ("--full-scale", "+18 dBu") in options
     assert ("--load", "600R") in options
     assert ("--supply", "12.0 -12.0") in options
+
+
+def test_the_render_command_carries_limits_taken_away_noise_and_power_on(session, tmp_path) -> None:
+    now = replace(session, without=("slew", "input range"), noise=NoiseSetting(40.0, 7), power_on=True)
+    words = shlex.split(render_command(now, session.stage))
+    options = _parser().parse_args(words[1:])
+    again = with_running(session, options)
+    assert (again.without, again.noise, again.power_on) == (now.without, now.noise, now.power_on)
 
 
 def test_the_render_command_names_every_stage_of_a_cascade(session) -> None:
