@@ -250,7 +250,10 @@ class Recover:
 
 @dataclass(frozen=True, slots=True)
 class Export:
-    """Write what is heard to a file, in the background; ``ExportState`` tells how far it is."""
+    """Write what is heard to a file, in the background; ``ExportState`` tells how far it is.
+
+    Live input is recorded from now on, as the stage puts it out, until ``CancelExport`` or half an hour later.
+    """
 
     session: Session
     """The candidate to export, as heard now."""
@@ -264,7 +267,7 @@ class Export:
 
 @dataclass(frozen=True, slots=True)
 class CancelExport:
-    """Stop the export; nothing is left behind."""
+    """Stop the export; nothing is left behind. A recording of live input ends, and what was recorded stays."""
 
 
 Command = (

@@ -14,7 +14,9 @@ from preview.engine.matching import Matcher
 from preview.engine.messages import CandidateReading, ExportState, InputKind, Notice, Report, Snapshot
 from preview.engine.passages import Material
 from preview.engine.preparer import Preparer
+from preview.engine.recorder import Recorder
 from preview.engine.worker import Worker
+from preview.errors import PreviewError
 
 __all__ = ["Errands"]
 
@@ -48,9 +50,12 @@ class Errands:
         self._gains: dict[str, float] = {}
         self._exporting: Path | None = None
         self._own: list[Report] = []
+        self._recorder: Recorder | None = None
 
     def begin(self, intake: Intake) -> None:
         """Another input: what was found out about the one before is no use."""
+        if self._recorder is not None:
+            self._recorder.end()
         self._intake, self._began_s = intake, time.monotonic()
         self._overview_asked = False
         self._marks = None
@@ -60,7 +65,9 @@ class Errands:
             self._worker.submit(key, None)
 
     def close(self) -> None:
-        """End the worker."""
+        """End the worker; a recording is finished first."""
+        if self._recorder is not None:
+            self._recorder.close()
         self._worker.close()
 
     def look(self, snapshot: Snapshot, preparer: Preparer) -> bool:
@@ -89,6 +96,10 @@ class Errands:
     def reports(self) -> list[Report]:
         """What was found out since the last call."""
         told, self._own = self._own, []
+        if self._recorder is not None and (state := self._recorder.state()) is not None:
+            told.append(state)
+            if state.state != "running":
+                self._recorder = self._exporting = None
         for found in self._worker.told():
             if isinstance(found, Loudness):
                 self.matcher.note(found.letter, found.netlist, found.lufs)
@@ -114,22 +125,37 @@ class Errands:
         """List the sound devices there are now."""
         self._worker.submit("devices", DeviceJob())
 
-    def export(self, order: Export) -> None:
-        """Write what is heard to a file."""
+    def export(self, order: Export) -> Recorder | None:
+        """Write what is heard to a file; live input is recorded by what is returned, None for anything else."""
         intake = self._intake
-        if intake is None or intake.kind is InputKind.LIVE:
-            self._tell("live input cannot be exported; record it first", "error")
+        if intake is None:
+            self._tell("there is nothing to export", "error")
         elif self._exporting is not None:
             self._tell(f"{self._exporting.name} is still being written", "error")
         elif intake.path is not None and order.out.exists() and order.out.samefile(intake.path):
             self._tell(f"{order.out}: is also the recording that is heard; give another name", "error")
+        elif intake.kind is InputKind.LIVE:
+            return self._begin_to_record(order, intake)
         else:
             self._exporting = order.out
             self._worker.submit("export", ExportJob(order, self._material(order.region)))
+        return None
+
+    def _begin_to_record(self, order: Export, intake: Intake) -> Recorder | None:
+        try:
+            self._recorder = Recorder(order, sample_rate_hz=intake.sample_rate_hz, channels=intake.channels)
+        except PreviewError as error:
+            self._own.append(ExportState(str(order.out), 0, 0, "failed", str(error)))
+            return None
+        self._exporting = order.out
+        self._own.append(ExportState(str(order.out), 0, 0, "running"))
+        return self._recorder
 
     def cancel_export(self) -> None:
-        """Stop the export; nothing is left behind."""
-        if self._exporting is not None:
+        """Stop the export; nothing is left behind but a recording of live input."""
+        if self._recorder is not None:
+            self._recorder.end()
+        elif self._exporting is not None:
             self._worker.submit("export", None)
             self._own.append(ExportState(str(self._exporting), 0, 0, "cancelled", "nothing was written"))
             self._exporting = None

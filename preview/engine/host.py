@@ -224,7 +224,9 @@ class Host:
             case messages.CancelExport():
                 self._errands.cancel_export()
             case messages.Export() if player is not None:
-                self._errands.export(command)
+                recorder = self._errands.export(command)
+                if recorder is not None:
+                    player.record(recorder.take)
             case _ if player is None or preparer is None or bench is None:
                 pass
             case (

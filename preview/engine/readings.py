@@ -148,7 +148,7 @@ class ExportState:
     done_frames: int
     """Frames written."""
     frames: int
-    """Frames in all."""
+    """Frames in all; 0 where that is not known, as of live input that is recorded."""
     state: Literal["running", "done", "failed", "cancelled"]
     """What became of it."""
     text: str = ""

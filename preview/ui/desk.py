@@ -142,6 +142,7 @@ class Desk:
             link.send(command)
         self.link = link
         self.stopped = self.unanswered = False
+        self.keeping.export = None  # it has ended with the old one
         self.connections.resume(link)
         self.listening.resume(link)
 

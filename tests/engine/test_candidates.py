@@ -159,6 +159,27 @@ def test_what_is_heard_is_exported_while_it_plays(start, tone, tmp_path):
     assert wait_for(engine, lambda s: True, "a snapshot").dropouts == 0
 
 
+def test_live_input_is_recorded_until_it_is_told_to_end_or_the_engine_is(start, tmp_path):
+    session = session_of(None, live=True)
+    engine = start(session)
+    wait_for(engine, lambda s: s.playing and s.position_frame > 0, "input")
+    out = tmp_path / "out"
+    out.mkdir()
+    engine.send(messages.Export(session, out / "x.wav"))
+    told = wait_for_report(engine, lambda r: isinstance(r, ExportState) and r.done_frames > 0, "progress")
+    assert (told.state, told.frames) == ("running", 0)
+    engine.send(messages.Export(session, out / "z.wav"))
+    wait_for(engine, lambda s: any("still being written" in n.text for n in engine.notices()), "a refusal")
+    engine.send(messages.CancelExport())
+    done = wait_for_report(engine, lambda r: isinstance(r, ExportState) and r.state == "done", "the end")
+    assert soundfile.info(out / "x.wav").frames == done.done_frames > 0
+    engine.send(messages.Export(session, out / "y.wav"))
+    wait_for_report(engine, lambda r: isinstance(r, ExportState) and r.done_frames > 0, "progress")
+    engine.close()
+    assert soundfile.info(out / "y.wav").frames > 0
+    assert sorted(path.name for path in out.iterdir()) == ["x.wav", "y.wav"]
+
+
 def test_an_export_onto_the_recording_itself_is_refused_and_one_can_be_cancelled(start, tone, tmp_path):
     long = tmp_path / "long.wav"
     with FileSink(long, sample_rate_hz=RATE_HZ, channels=2) as sink:

@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+import soundfile
 
 import preview.dsp.kernels  # noqa: F401 - names the folder of compiled kernels, for the desks started here too
 
@@ -108,6 +109,33 @@ time.sleep(1.0)  # of sound, to be recorded
     gain = 10 / math.sqrt(1 + (200 / 1591.549) ** 2)
     whole = heard[first + 4800 : first + 9600, 0]
     assert np.abs(whole).max() == pytest.approx(0.02 * gain, rel=2e-3)
+
+
+def test_live_input_is_recorded_in_volts_also_while_it_is_muted(sound_server: Any, tmp_path: Path) -> None:
+    then = f"""
+wait(lambda s: s.output.peak_v[0] > 1.9)
+engine.send(messages.Export(session, Path({str(tmp_path / "live.wav")!r})))
+told = []
+while not told or told[-1].done_frames < 48_000:
+    told += engine.reports()
+    time.sleep(0.01)
+engine.send(messages.CancelExport())
+while told[-1].state == "running":
+    told += engine.reports()
+    time.sleep(0.01)
+print(told[-1].text, flush=True)
+"""
+    with (
+        playing(sound_server, "feed", "60", "0.02"),
+        sound_server.start(DESK, "", then, str(tmp_path / "log")) as desk,
+    ):
+        out, trouble = desk.communicate(timeout=90)
+    assert desk.returncode == 0, trouble[-2000:]
+    assert "live.wav: 1." in out
+    samples, _ = soundfile.read(tmp_path / "live.wav")
+    # 0.2 V through a gain of 10 and the pole at 1591.5 Hz, of 10 V
+    gain = 10 / math.sqrt(1 + (200 / 1591.549) ** 2)
+    assert np.abs(samples[:, 0]).max() == pytest.approx(0.02 * gain, rel=2e-3)
 
 
 def test_a_howl_round_is_muted_and_said(sound_server: Any, tmp_path: Path) -> None:
