@@ -27,6 +27,7 @@ __all__ = [
     "OpenFile",
     "Pause",
     "Play",
+    "ProbeNodes",
     "Quit",
     "Recover",
     "RescanDevices",
@@ -266,6 +267,14 @@ class Export:
 
 
 @dataclass(frozen=True, slots=True)
+class ProbeNodes:
+    """Find the peaks at the inner nodes of what is heard, and anew when that changes; ``NodePeaks`` tells them."""
+
+    on: bool
+    """False to leave off."""
+
+
+@dataclass(frozen=True, slots=True)
 class CancelExport:
     """Stop the export; nothing is left behind. A recording of live input ends, and what was recorded stays."""
 
@@ -297,6 +306,7 @@ Command = (
     | Recover
     | Export
     | CancelExport
+    | ProbeNodes
     | ClearHolds
     | Quit
 )

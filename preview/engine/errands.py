@@ -9,7 +9,7 @@ from pathlib import Path
 from preview.circuit.netlist import Netlist
 from preview.engine.commands import Export
 from preview.engine.intake import Intake
-from preview.engine.jobs import DeviceJob, ExportJob, Loudness, LoudnessJob, MarksJob, OverviewJob
+from preview.engine.jobs import DeviceJob, ExportJob, Loudness, LoudnessJob, MarksJob, OverviewJob, ProbeJob
 from preview.engine.matching import Matcher
 from preview.engine.messages import CandidateReading, ExportState, InputKind, Notice, Report, Snapshot
 from preview.engine.passages import Material
@@ -23,6 +23,9 @@ __all__ = ["Errands"]
 SETTLE_S = 0.7
 """The worker begins when the input has been there for so long; and clips are looked for when circuit and levels have
 been left alone for so long [s]."""
+
+LIVE_PROBE_S = 10.0
+"""The inner nodes of live input are looked at so often: what is kept of it is as long [s]."""
 
 
 class Errands:
@@ -47,6 +50,11 @@ class Errands:
         self._marks: tuple[str, Netlist, float] | None = None
         self._marks_since_s = 0.0
         self._marks_asked = False
+        self._probes: tuple[object, ...] | None = None
+        self._probes_since_s = 0.0
+        self._probes_asked = False
+        self.probing = False
+        """Whether the peaks at inner nodes are wanted."""
         self._gains: dict[str, float] = {}
         self._exporting: Path | None = None
         self._own: list[Report] = []
@@ -58,10 +66,10 @@ class Errands:
             self._recorder.end()
         self._intake, self._began_s = intake, time.monotonic()
         self._overview_asked = False
-        self._marks = None
+        self._marks = self._probes = None
         self._gains = {}
         self.matcher.forget()
-        for key in ("overview", "marks", *self._loudness_keys()):
+        for key in ("overview", "marks", "probes", *self._loudness_keys()):
             self._worker.submit(key, None)
 
     def close(self) -> None:
@@ -84,6 +92,7 @@ class Errands:
                 self._overview_asked = True
                 self._worker.submit("overview", OverviewJob(intake.path))
             self._look_for_marks(preparer.letter, netlists[preparer.letter])
+        self._look_at_nodes(preparer.letter, netlists[preparer.letter])
         due = self.matcher.due(netlists)
         material = self._material(self._region) if due else None
         for letter in due:
@@ -172,6 +181,20 @@ class Errands:
         elif not self._marks_asked and now_s - self._marks_since_s >= SETTLE_S:
             self._marks_asked = True
             self._worker.submit("marks", MarksJob(letter, netlist, self._material()))
+
+    def _look_at_nodes(self, letter: str, netlist: Netlist) -> None:
+        now_s = time.monotonic()
+        wanted = (letter, netlist, self._full_scale_v, self._region) if self.probing else None
+        if wanted != self._probes:
+            self._probes, self._probes_since_s, self._probes_asked = wanted, now_s, False
+            self._worker.submit("probes", None)
+            return
+        live = self._intake is not None and self._intake.kind is InputKind.LIVE
+        if live and now_s - self._probes_since_s >= LIVE_PROBE_S:
+            self._probes_since_s, self._probes_asked = now_s, False
+        if wanted and not self._probes_asked and now_s - self._probes_since_s >= SETTLE_S:
+            self._probes_asked = True
+            self._worker.submit("probes", ProbeJob(letter, netlist, self._material(self._region)))
 
     def _material(self, region: tuple[int, int] | None = None) -> Material:
         """What is heard, for another process."""

@@ -221,6 +221,8 @@ class Host:
                 self._outlet.change_device(name)
             case messages.RescanDevices():
                 self._errands.list_devices()
+            case messages.ProbeNodes(on):
+                self._errands.probing = on
             case messages.CancelExport():
                 self._errands.cancel_export()
             case messages.Export() if player is not None:

@@ -9,6 +9,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
+from numpy.typing import NDArray
 
 from preview.audio import devices
 from preview.audio.sink import FileSink
@@ -21,6 +22,7 @@ from preview.engine.readings import (
     DeviceList,
     DeviceRow,
     ExportState,
+    NodePeaks,
     OpAmpMarks,
     Overview,
     Report,
@@ -37,6 +39,8 @@ __all__ = [
     "LoudnessJob",
     "MarksJob",
     "OverviewJob",
+    "ProbeJob",
+    "inner_nodes",
     "run",
 ]
 
@@ -83,6 +87,18 @@ class LoudnessJob:
     """What it hears."""
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class ProbeJob:
+    """Find the extremes at the inner nodes of a circuit."""
+
+    letter: str
+    """The candidate."""
+    netlist: Netlist
+    """Its circuit."""
+    material: Material
+    """What it hears."""
+
+
 @dataclass(frozen=True, slots=True)
 class ExportJob:
     """Write what is heard to a file."""
@@ -98,7 +114,7 @@ class DeviceJob:
     """List the sound devices there are now."""
 
 
-Job = OverviewJob | MarksJob | LoudnessJob | ExportJob | DeviceJob
+Job = OverviewJob | MarksJob | LoudnessJob | ProbeJob | ExportJob | DeviceJob
 
 
 @dataclass(frozen=True, slots=True)
@@ -122,6 +138,8 @@ def run(job: Job) -> Iterator[Report | Loudness | None]:
             return _marks(job)
         case LoudnessJob():
             return _loudness(job)
+        case ProbeJob():
+            return _probe(job)
         case ExportJob():
             return _export(job)
         case DeviceJob():
@@ -250,6 +268,46 @@ def _pieces(material: Material, source: Source) -> list[tuple[int, int]]:
         return [(first, last)]
     starts = np.linspace(first, last - piece, PIECES).round().astype(int)
     return [(int(start), int(start) + piece) for start in starts]
+
+
+def inner_nodes(circuit: Netlist) -> tuple[str, ...]:
+    """The nodes that no meter reads, and nothing holds at a constant voltage."""
+    known = {circuit.input_node, circuit.output_node, *(site.out for site in circuit.opamps)}
+    known |= {held.node for held in circuit.fixed}
+    return tuple(node for node in circuit.nodes if node not in known)
+
+
+def _probe(job: ProbeJob) -> Iterator[Report | None]:
+    """Each node is the output of a copy of the circuit; the copies go through the passage side by side."""
+    nodes = inner_nodes(job.netlist)
+    high_v, low_v = np.full(len(nodes), -np.inf), np.full(len(nodes), np.inf)
+    with contextlib.ExitStack() as open_ones:
+        copies = []
+        first = last = 0
+        for node in nodes:
+            source = open_ones.enter_context(contextlib.closing(job.material.open()))
+            first, last = job.material.bounds(source)
+            circuit = replace(job.netlist, output_node=node)
+            copies.append(
+                run_through(circuit, source, first, last, scale_v=job.material.scale_v, quality=Quality.DRAFT)
+            )
+        done = told = 0
+        for chunks in zip(*copies, strict=True):
+            high_v = np.maximum(high_v, [volts.max() for _, volts, _ in chunks])
+            low_v = np.minimum(low_v, [volts.min() for _, volts, _ in chunks])
+            done = chunks[0][0] + len(chunks[0][1]) - first
+            if done - told >= (last - first) // 20:
+                told = done
+                yield _node_peaks(job.letter, nodes, high_v, low_v, done / (last - first))
+            else:
+                yield None
+    yield _node_peaks(job.letter, nodes, high_v, low_v, 1.0)
+
+
+def _node_peaks(
+    letter: str, nodes: tuple[str, ...], high_v: NDArray[np.float64], low_v: NDArray[np.float64], done: float
+) -> NodePeaks:
+    return NodePeaks(letter, nodes, tuple(high_v.tolist()), tuple(low_v.tolist()), done)
 
 
 def _export(job: ExportJob) -> Iterator[Report | None]:

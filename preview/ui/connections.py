@@ -71,7 +71,7 @@ class Connections:
             self._coming = None
             desk = self._desk
             desk.session = with_input_of(desk.session, coming)
-            desk.overview = desk.marks = None
+            desk.overview = desk.marks = desk.node_peaks = None
             desk.listening.region = None
 
     # ---- input ----

@@ -11,9 +11,18 @@ import time
 from collections.abc import Callable
 from dataclasses import replace
 
-from preview.circuit.netlist import OUT, OpAmpSite
+from preview.circuit.netlist import OUT, Netlist, OpAmpSite
 from preview.circuit.parts import Stage
-from preview.engine.messages import ClipMarks, Command, DeviceList, Overview, Report, Snapshot
+from preview.engine.messages import (
+    ClipMarks,
+    Command,
+    DeviceList,
+    NodePeaks,
+    Overview,
+    ProbeNodes,
+    Report,
+    Snapshot,
+)
 from preview.engine.process import EngineConfig
 from preview.errors import PreviewError
 from preview.session import Session
@@ -74,12 +83,14 @@ class Desk:
         self.figures = FigureSet()
         self.overview: Overview | None = None
         self.marks: ClipMarks | None = None
+        self.node_peaks: NodePeaks | None = None
+        """Peaks at the inner nodes of what is heard; None as long as they are not known."""
         self.marks_old = False
         """Whether the circuit has been changed since the clips were looked for."""
         self.stopped = False
         self.unanswered = False
         self._before: dict[tuple[str, ...], Session] = {_place(session): session}
-        self._sites: tuple[Session, tuple[OpAmpSite, ...]] | None = None
+        self._circuit: tuple[Session, Netlist | None] | None = None
         self.parts = PartWork(self)
         self.listening = Listening(self)
         self.view = View(self)
@@ -118,6 +129,8 @@ class Desk:
             self.overview = report
         elif isinstance(report, ClipMarks):
             self.marks, self.marks_old = report, False
+        elif isinstance(report, NodePeaks):
+            self.node_peaks = report
         elif isinstance(report, DeviceList):
             return self.connections.hear_devices(report)
         else:
@@ -143,6 +156,8 @@ class Desk:
         self.link = link
         self.stopped = self.unanswered = False
         self.keeping.export = None  # it has ended with the old one
+        if self.view.node_volts:
+            link.send(ProbeNodes(True))
         self.connections.resume(link)
         self.listening.resume(link)
 
@@ -170,7 +185,7 @@ class Desk:
     def _become(self, session: Session, commands: list[Command]) -> None:
         for command in commands:
             self.link.send(command)
-        self.marks_old = True
+        self.marks_old, self.node_peaks = True, None
         here = _place(session)
         if here != _place(self.session):
             self.before = self._before.setdefault(here, session)
@@ -217,15 +232,20 @@ class Desk:
             return session.stimulus.text
         return session.audio.name if session.audio else "no recording"
 
+    def circuit(self) -> Netlist | None:
+        """The circuit of the session; None where it cannot be computed."""
+        if self._circuit is None or self._circuit[0] is not self.session:
+            try:
+                found = self.session.netlist()
+            except PreviewError:
+                found = None
+            self._circuit = (self.session, found)
+        return self._circuit[1]
+
     def sites(self) -> tuple[OpAmpSite, ...]:
         """The op-amps with the limits that hold for them; none where the circuit cannot be computed."""
-        if self._sites is None or self._sites[0] is not self.session:
-            try:
-                found = self.session.netlist().opamps
-            except PreviewError:
-                found = ()
-            self._sites = (self.session, found)
-        return self._sites[1]
+        circuit = self.circuit()
+        return circuit.opamps if circuit is not None else ()
 
     def output_wall(self) -> tuple[float | None, str | None]:
         """The nearer limit of the op-amp that drives ``out`` [V], and its designator; None for no limit."""

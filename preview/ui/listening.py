@@ -78,6 +78,7 @@ class Listening:
     def restore(self, saved: Saved) -> None:
         """Place, region and bypass as they were saved; the volume goes down to what was saved, never up."""
         self.region = saved.region
+        self._desk.node_peaks = None
         self._desk.link.send(SetRegion(*(saved.region or (None, None))))
         if saved.bypass != self.bypass:
             self.do_bypass()
@@ -143,6 +144,7 @@ class Listening:
         start = max(0, min(start, frames - shortest))
         end = min(max(end, start + shortest), frames)
         self.region = (start, end)
+        self._desk.node_peaks = None
         self._desk.link.send(SetRegion(start, end))
         clears = f"{self._desk.keys.shown('region_clear')} clears it"
         return f"region {clock(start / rate_hz)} to {clock(end / rate_hz)}; {clears}"
@@ -176,6 +178,7 @@ class Listening:
     def do_region_clear(self) -> str:
         """The whole recording."""
         self.region = None
+        self._desk.node_peaks = None
         self._desk.link.send(SetRegion(None, None))
         return "no region: the whole recording"
 

@@ -13,7 +13,7 @@ import soundfile
 from preview.audio.sink import FileSink
 from preview.circuit.library import find_stage, with_overrides
 from preview.engine import messages
-from preview.engine.messages import ClipMarks, DeviceList, ExportState, InputKind, Overview
+from preview.engine.messages import ClipMarks, DeviceList, ExportState, InputKind, NodePeaks, Overview
 from preview.values.stimulus import parse_stimulus
 from tests.engine.running import RATE_HZ, session_of, wait_for, wait_for_report
 
@@ -144,6 +144,20 @@ def test_the_waveform_and_the_clips_are_looked_for_in_the_background(start, tmp_
         "new marks",
     )
     assert quiet.opamps[0].spans == ()
+
+
+def test_inner_nodes_are_probed_when_asked_and_anew_when_the_circuit_changes(start, tone):
+    engine = start(session_of(tone))
+    wait_for(engine, lambda s: True, "a snapshot")
+    engine.send(messages.ProbeNodes(True))
+    first = wait_for_report(engine, lambda r: isinstance(r, NodePeaks) and r.done_ratio == 1.0, "peaks")
+    assert first.nodes == ("sum",)
+    assert first.high_v[0] < 1e-9
+    engine.send(messages.SetPart("R1", 2e3))  # 1 V times 50 clips
+    clipped = wait_for_report(
+        engine, lambda r: isinstance(r, NodePeaks) and r.done_ratio == 1.0 and r.high_v[0] > 0.1, "new peaks"
+    )
+    assert clipped.low_v[0] < -0.1
 
 
 def test_what_is_heard_is_exported_while_it_plays(start, tone, tmp_path):
