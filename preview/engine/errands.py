@@ -7,9 +7,20 @@ from collections.abc import Callable
 from pathlib import Path
 
 from preview.circuit.netlist import Netlist
+from preview.engine.comeback import Comeback
 from preview.engine.commands import Export
 from preview.engine.intake import Intake
-from preview.engine.jobs import DeviceJob, ExportJob, Loudness, LoudnessJob, MarksJob, OverviewJob, ProbeJob
+from preview.engine.jobs import (
+    DeviceJob,
+    ExportJob,
+    Loudness,
+    LoudnessJob,
+    MarksJob,
+    OverviewJob,
+    ProbeJob,
+    Tried,
+    TryJob,
+)
 from preview.engine.matching import Matcher
 from preview.engine.messages import CandidateReading, ExportState, InputKind, Notice, Report, Snapshot
 from preview.engine.passages import Material
@@ -42,6 +53,8 @@ class Errands:
         self._worker = Worker()
         self.matcher = Matcher()
         """Loudness of the candidates."""
+        self.comeback = Comeback(lambda name: self._worker.submit("try", TryJob(name)))
+        """A device that another one stands in for."""
         self._intake: Intake | None = None
         self._full_scale_v = 1.0
         self._region: tuple[int, int] | None = None
@@ -112,6 +125,8 @@ class Errands:
         for found in self._worker.told():
             if isinstance(found, Loudness):
                 self.matcher.note(found.letter, found.netlist, found.lufs)
+            elif isinstance(found, Tried):
+                self.comeback.hear(found.name, found.there)
             elif isinstance(found, Notice):
                 self._tell(found.text, found.severity)
             else:

@@ -13,6 +13,7 @@ from numpy.typing import NDArray
 
 from preview.audio import devices
 from preview.audio.sink import FileSink
+from preview.audio.stream import open_output
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import PERFECT
 from preview.engine.commands import Export
@@ -34,12 +35,15 @@ from preview.values.quality import Quality
 __all__ = [
     "DeviceJob",
     "ExportJob",
+    "Found",
     "Job",
     "Loudness",
     "LoudnessJob",
     "MarksJob",
     "OverviewJob",
     "ProbeJob",
+    "Tried",
+    "TryJob",
     "inner_nodes",
     "run",
 ]
@@ -50,6 +54,7 @@ MARK_GAP_S = 0.010
 MARKS_MAX = 4000
 SLEWING = 0.999
 PIECE_S, PIECES = 10.0, 6
+TRIED_FRAMES = 1024
 _READ_FRAMES = 1 << 16
 
 
@@ -114,7 +119,15 @@ class DeviceJob:
     """List the sound devices there are now."""
 
 
-Job = OverviewJob | MarksJob | LoudnessJob | ProbeJob | ExportJob | DeviceJob
+@dataclass(frozen=True, slots=True)
+class TryJob:
+    """Try whether an output device can be opened."""
+
+    name: str
+    """The device."""
+
+
+Job = OverviewJob | MarksJob | LoudnessJob | ProbeJob | ExportJob | DeviceJob | TryJob
 
 
 @dataclass(frozen=True, slots=True)
@@ -129,7 +142,21 @@ class Loudness:
     """Integrated loudness, full scale as 0 dBFS; -inf for silence."""
 
 
-def run(job: Job) -> Iterator[Report | Loudness | None]:
+@dataclass(frozen=True, slots=True)
+class Tried:
+    """What a ``TryJob`` found."""
+
+    name: str
+    """The device."""
+    there: bool
+    """Whether it can be opened."""
+
+
+Found = Report | Loudness | Tried
+"""What a job tells."""
+
+
+def run(job: Job) -> Iterator[Found | None]:
     """The pieces of a job; None where there is nothing new to tell. Ends by itself, raises PreviewError."""
     match job:
         case OverviewJob():
@@ -144,6 +171,8 @@ def run(job: Job) -> Iterator[Report | Loudness | None]:
             return _export(job)
         case DeviceJob():
             return _devices()
+        case TryJob():
+            return _tried(job)
 
 
 def _overview(job: OverviewJob) -> Iterator[Report | None]:
@@ -363,6 +392,23 @@ def _devices() -> Iterator[Report | None]:
         yield DeviceList((), str(error))
     else:
         yield DeviceList(rows)
+
+
+def _tried(job: TryJob) -> Iterator[Tried]:
+    try:
+        devices.refresh()
+        own = devices.find_output(job.name)
+        open_output(
+            job.name,
+            sample_rate_hz=own.default_sample_rate_hz,
+            channels=min(own.max_output_channels, 2),
+            block_frames=TRIED_FRAMES,
+            fill=lambda out: out.fill(0.0),
+        ).close()
+    except DeviceError:
+        yield Tried(job.name, False)
+    else:
+        yield Tried(job.name, True)
 
 
 def failed(job: Job, error: PreviewError) -> Report | None:

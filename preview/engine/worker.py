@@ -15,13 +15,13 @@ from multiprocessing.connection import Connection
 from typing import TYPE_CHECKING
 
 from preview.engine.door import end_with_parent
-from preview.engine.messages import Notice, Report
+from preview.engine.messages import Notice
 from preview.errors import PreviewError
 
 if TYPE_CHECKING:
     from multiprocessing.context import SpawnProcess
 
-    from preview.engine.jobs import Job, Loudness
+    from preview.engine.jobs import Found, Job
 
 __all__ = ["Worker"]
 
@@ -44,7 +44,7 @@ class Worker:
     def __init__(self) -> None:
         self._process: SpawnProcess | None = None
         self._connection: Connection | None = None
-        self._told: deque[Report | Loudness | Notice] = deque()
+        self._told: deque[Found | Notice] = deque()
         self._orders: deque[_Order] = deque()
         self._there = threading.Condition()
         self._closed = False
@@ -62,7 +62,7 @@ class Worker:
                 self._thread.start()
             self._there.notify()
 
-    def told(self) -> list[Report | Loudness | Notice]:
+    def told(self) -> list[Found | Notice]:
         """What was found out since the last call, oldest first."""
         told = []
         while self._told:
@@ -136,7 +136,7 @@ class _Bench:
 
     def __init__(self, connection: Connection) -> None:
         self._connection = connection
-        self._running: dict[str, tuple[Job, Iterator[Report | Loudness | None]]] = {}
+        self._running: dict[str, tuple[Job, Iterator[Found | None]]] = {}
 
     def serve(self) -> None:
         """Until the engine's end of the pipe is closed."""

@@ -73,6 +73,31 @@ wait(lambda s: s.output_name == "default" and s.playing)
     assert any("output device cellar: there is none of that name" in line for line in lines), lines
 
 
+def test_a_named_device_that_another_stands_in_for_is_taken_back_when_it_is_there(
+    sound_server: Any, tmp_path: Path
+) -> None:
+    audio = noise_file(tmp_path / "noise.wav", 30.0)
+    then = """
+engine.send(messages.SetDevice("feed"))
+wait(lambda s: s.output_name == "default" and s.playing)
+print("stands in", flush=True); sys.stdin.readline()
+before = wait(lambda s: True)
+after = wait(lambda s: s.output_name == "feed" and s.playing and s.position_frame > before.position_frame)
+tell()
+"""
+    sound_server.take_away("feed")
+    with sound_server.start(DESK, str(audio), "loop", then, str(tmp_path / "log")) as desk:
+        lines = []
+        while (line := desk.stdout.readline()) and line != "stands in\n":
+            lines.append(line)
+        assert line, desk.stderr.read()[-2000:]
+        assert any("using default" in one for one in lines), lines
+        sound_server.bring("feed")
+        out, trouble = desk.communicate("go\n", timeout=90)
+    assert desk.returncode == 0, trouble[-2000:]
+    assert "sound is back on feed" in out
+
+
 def test_of_four_channels_the_first_two_are_played_and_that_is_said(
     sound_server: Any, tmp_path: Path
 ) -> None:
