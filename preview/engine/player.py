@@ -144,6 +144,10 @@ class Player:
         deck = self.deck
         self.inbox.append(lambda: deck.monitor.mute(on, reason, at_once=deck.silent))
 
+    def duck(self, gain_db: float) -> None:
+        """Be quieter for a moment; 0 dB ends that."""
+        self.inbox.append(lambda: self.deck.monitor.duck(gain_db))
+
     def choose_channels(self, channels: tuple[int, ...]) -> None:
         """Which channels are heard where the device has fewer, in a short silence."""
         there = tuple(channel for channel in channels if 0 <= channel < self.channels)

@@ -158,3 +158,25 @@ print("quiet", flush=True)
     assert any(line.startswith("muted") and "howl-round at" in line for line in lines), lines
     assert "quiet\n" in lines
     assert any("lower the volume or move the microphone" in line for line in lines)
+
+
+def test_a_howl_round_that_stands_at_its_limit_from_the_first_moment_is_muted(
+    sound_server: Any, tmp_path: Path
+) -> None:
+    # a loud tone is being played while the loop is closed: it clips at once, and goes on without the tone
+    then = """
+wait(lambda s: s.input.peak_v[0] > 4.9)
+engine.send(messages.SetMute(False))
+wait(lambda s: not s.muted)
+print("open", flush=True)
+print("muted", wait(lambda s: s.muted).mute_reason, flush=True)
+"""
+    with (
+        playing(sound_server, "ears", "60", "0.5") as tone,
+        sound_server.start(DESK, "ears_mon", then, str(tmp_path / "log")) as desk,
+    ):
+        assert desk.stdout.readline() == "open\n", desk.stderr.read()[-2000:]
+        tone.kill()
+        out, trouble = desk.communicate(timeout=90)
+    assert desk.returncode == 0, trouble[-2000:]
+    assert "muted howl-round at" in out
