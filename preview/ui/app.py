@@ -22,7 +22,7 @@ from preview.ui.dialogs import DialogApp
 from preview.ui.figures import FigureKeeper, FigureSet, MakeFigures, compute_figures
 from preview.ui.firstrun import caution_seen, config_folder, remember_caution
 from preview.ui.keymap import KeyMap, read_keys
-from preview.ui.link import AnswerWatch, EngineLink, Restart
+from preview.ui.link import AnswerWatch, EngineLink, Restart, Reviver
 from preview.ui.panels.candidates import CandidatesPanel
 from preview.ui.panels.circuit import CircuitPanel
 from preview.ui.panels.figures import FiguresPanel
@@ -47,8 +47,6 @@ _UNFOCUSED_EVERY = 3
 """A window that is not looked at is painted at a third of the pace."""
 WIDE, TALL = 120, 42
 """From this size on two views fit side by side, or above each other [cells]."""
-_REVIVE_S = 10.0
-"""An engine that stops again so soon after it was started by itself is left to the person [s]."""
 ENDINGS = tuple(getattr(signal, name) for name in ("SIGINT", "SIGTERM", "SIGHUP") if hasattr(signal, name))
 """Signals that end the desk in an orderly way."""
 
@@ -106,7 +104,7 @@ class DeskApp(DialogApp):
         """Called when a signal ends the desk; None leaves signals alone."""
         self._restart = restart
         self._restarting = False
-        self._revived_s = -1e9
+        self._reviver = Reviver()
         self._autoplay = autoplay
         self._show_caution = show_caution
         self._keeper = FigureKeeper(make_figures)
@@ -316,9 +314,7 @@ class DeskApp(DialogApp):
 
     def _revive(self) -> None:
         """Start another engine by itself, unless this one has been started so just now: then a person decides."""
-        now_s = self.desk.now_s()
-        if self._restart is not None and now_s - self._revived_s > _REVIVE_S:
-            self._revived_s = now_s
+        if self._restart is not None and self._reviver.may(self.desk.now_s()):
             self._start(self._restart, play=self.desk.listening.playing)
 
     def _start(self, restart: Restart, *, play: bool) -> None:
