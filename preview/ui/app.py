@@ -332,11 +332,14 @@ class DeskApp(DialogApp):
         except PreviewError as error:
             self.foot.say(str(error), "error")
         else:
-            self.desk.resume(link, left)
+            lost = self.desk.resume(link, left)
             self._watch = AnswerWatch()
             self.desk.listening.play(play)
             hint = "" if play else f"; {self.desk.keys.shown('play_pause')} plays"
-            self.foot.say(f"the engine had stopped and runs again{hint}")
+            lost = lost and f"; {lost}"
+            self.foot.say(
+                f"the engine had stopped and runs again{hint}{lost}", "warning" if lost else "information"
+            )
         finally:
             self._restarting = False
             self.show()

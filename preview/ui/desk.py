@@ -149,17 +149,20 @@ class Desk:
             match=self.candidates.matched,
         )
 
-    def resume(self, link: EngineLink, began: EngineConfig) -> None:
-        """Work with a new engine, which began as the old one was left; what was done since is told it."""
+    def resume(self, link: EngineLink, began: EngineConfig) -> str:
+        """Work with a new engine, which began as the old one was left; what was done since is told it.
+
+        What went with the old one, in a line; empty for nothing.
+        """
         for command in catching_up(began, self.as_left()):
             link.send(command)
         self.link = link
         self.stopped = self.unanswered = False
-        self.keeping.export = None  # it has ended with the old one
         if self.view.node_volts:
             link.send(ProbeNodes(True))
         self.connections.resume(link)
         self.listening.resume(link)
+        return self.keeping.break_off()
 
     # ---- the session ----
 

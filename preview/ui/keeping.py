@@ -205,6 +205,11 @@ class Keeping:
         """Whether what is written now is live input, of which nobody knows how long it will be."""
         return self.export is not None and self.export.state == "running" and self.export.frames == 0
 
+    def break_off(self) -> str:
+        """The engine that wrote is gone; a line about it, empty where nothing was being written."""
+        written, self.export = self.export_line(), None
+        return "what was being written to a file is lost" if written else ""
+
     def do_export(self) -> Outcome:
         """Write what is heard to a file, in the background; stops an export that runs."""
         if self.export_line():

@@ -151,7 +151,8 @@ class PlainDesk:
     def _start_again(self, restart: Restart) -> None:
         left = self.desk.as_left()
         self.desk.link.close()
-        self.desk.resume(restart(left), left)
+        if lost := self.desk.resume(restart(left), left):
+            self.say(f"warning: {lost}")
 
     # ---- the loop ----
 

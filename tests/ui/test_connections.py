@@ -240,8 +240,9 @@ def test_a_recording_has_ended_where_its_engine_has(session, engine) -> None:
     desk = Desk(replace(session, audio=None, live=True), engine)
     desk.take(engine.snapshot)
     desk.hear_report(ExportState("out.wav", 600_000, 0, "running"))
-    desk.resume(engine, desk.as_left())
+    assert desk.resume(engine, desk.as_left()) == "what was being written to a file is lost"
     assert "recording" not in head(desk)[2]
+    assert desk.resume(engine, desk.as_left()) == ""
 
 
 @pytest.mark.parametrize(
