@@ -256,26 +256,34 @@ def _name(text: str) -> str:
 
 
 def _listen(options: argparse.Namespace) -> int:
-    from preview.engine.process import EngineProcess
+    from preview.engine.door import start_child
 
     terminal = all(stream is not None and stream.isatty() for stream in (sys.stdin, sys.stdout, sys.stderr))
     if terminal and not options.plain and os.environ.get("TERM") in _DUMB:
         _say("this terminal has no screen to draw on: line mode, as with --plain")
         options.plain = True
-    # it loads while the options are read
-    engine = EngineProcess.spawn() if terminal or options.plain else None
+    if not (terminal or options.plain):
+        return _desk(options, None)
+    process, connection = start_child()  # it loads while the desk does
+    try:
+        from preview.engine.process import EngineProcess
+
+        engine = EngineProcess(process, connection)
+    except BaseException:
+        process.kill()
+        raise
     try:
         return _desk(options, engine)
     finally:
-        if engine is not None:
-            engine.close()
+        engine.close()
 
 
 def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     from preview.audio.files import probe
     from preview.engine.demo import demo_recording
-    from preview.engine.options import DEFAULT_STAGE, intake_from, running_from, session_from
-    from preview.engine.process import EngineConfig, EngineProcess
+    from preview.engine.options import DEFAULT_STAGE, intake_from, session_from, with_running
+    from preview.engine.process import EngineConfig
+    from preview.engine.spare import Spare
     from preview.network.stability import check_stable
     from preview.session import AtEnd
 
@@ -300,9 +308,8 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
         )
     comment = info.comment if info is not None else ""
     session = session_from(options, audio=audio, comment=comment, at_end=AtEnd(options.end), stage=stage)
-    session = replace(
-        session, notes=(*session.notes, *intake.pop("notes", ())), **intake, **running_from(options)
-    )
+    session = replace(session, notes=(*session.notes, *intake.pop("notes", ())), **intake)
+    session = with_running(session, options)
     _echo(session, info.warnings if info is not None else ())
     check_stable(session.netlist())
     if engine is None:
@@ -312,17 +319,22 @@ def _desk(options: argparse.Namespace, engine: EngineProcess | None) -> int:
     config = EngineConfig(session=session, device=options.device, silent=options.silent)
     engine.begin(config)
 
-    def restart() -> EngineProcess:
-        return EngineProcess.start(config)
+    def restart(left: EngineConfig) -> EngineProcess:
+        return spare.begin(replace(left, device=config.device, silent=config.silent))
 
-    if options.plain:
-        from preview.ui.plain import run_plain
+    spare = Spare()
+    spare.keep_beside(engine)
+    try:
+        if options.plain:
+            from preview.ui.plain import run_plain
 
-        run_plain(session, engine, lines=sys.stdin, out=sys.stdout, restart=restart)
-    else:
-        from preview.ui.running import run_desk
+            run_plain(session, engine, lines=sys.stdin, out=sys.stdout, restart=restart)
+        else:
+            from preview.ui.running import run_desk
 
-        run_desk(session, engine, restart=restart)
+            run_desk(session, engine, restart=restart)
+    finally:
+        spare.close()
     return 0
 
 
@@ -347,7 +359,7 @@ def _warn(warnings: Iterable[str]) -> None:
 def _render(options: argparse.Namespace) -> int:
     from preview.audio.sink import check_output
     from preview.engine.logoptions import assumed_full_scale, log_format, state_per_unit
-    from preview.engine.options import running_from, session_from
+    from preview.engine.options import session_from, with_running
     from preview.engine.progress import Progress
     from preview.engine.render import open_source, render
     from preview.engine.report import render_lines, render_object
@@ -362,7 +374,7 @@ def _render(options: argparse.Namespace) -> int:
         session = session_from(
             options, audio=audio, comment=info.comment, assumed_full_scale=assumed_full_scale(audio)
         )
-        session = replace(session, **running_from(options))
+        session = with_running(session, options)
         said = source.warnings
         _echo(session, said)
         progress = Progress(info.frames, sys.stderr)

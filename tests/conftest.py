@@ -199,7 +199,17 @@ class SoundServer:
     def plug(self) -> None:
         """Bring the sinks back after ``unplug``."""
         for name in ("ears", "feed"):
-            self.command("load-module " + _SINK.format(name=name))
+            self.bring(name)
+
+    def bring(self, name: str) -> None:
+        """Bring one sink back."""
+        self.command("load-module " + _SINK.format(name=name))
+
+    def take_away(self, name: str) -> None:
+        """Take one sink away, through which nobody plays."""
+        blocks = self.command("list-modules").split("index: ")[1:]
+        (index,) = [block.split()[0] for block in blocks if f"sink_name={name} " in block]
+        self.command(f"unload-module {index}")
 
     def _sinks_loaded(self) -> list[str]:
         blocks = self.command("list-modules").split("index: ")[1:]

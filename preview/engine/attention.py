@@ -6,6 +6,7 @@ from preview.engine.howl import HowlGuard
 from preview.engine.player import Player
 from preview.engine.readings import SpectrumReading
 from preview.engine.spectrum import Spectrum
+from preview.engine.standing import DUCK_DB, StandingGuard
 
 __all__ = ["Attention"]
 
@@ -27,6 +28,8 @@ class Attention:
         self._player = player
         self._analyser = Spectrum(player.sample_rate_hz)
         self._howl = HowlGuard(player.sample_rate_hz) if live else None
+        self._standing = StandingGuard(player.sample_rate_hz)
+        self._limited_blocks = 0
         self._turns = 0
         self._heard_channels: tuple[int, ...] = ()
         self.spectrum: SpectrumReading | None = None
@@ -40,14 +43,32 @@ class Attention:
         return [line for line in (self._howl_round(), self._not_heard()) if line]
 
     def _howl_round(self) -> str:
-        """Mute a howl that grows, unless it is muted already."""
+        """Mute a howl that grows, or that stands at a limit, unless it is muted already."""
         if self._howl is None or self._turns % HOWL_TURNS:
             return ""
-        if not self._howl.hears(self._player.deck.ears.taps[1]) or self._player.deck.monitor.muted:
+        grows = self._howl.hears(self._player.deck.ears.taps[1])
+        stands = self._stands()
+        if not (grows or stands) or self._player.deck.monitor.muted:
             return ""
-        reason = f"howl-round at {self._howl.frequency_hz:.0f} Hz"
+        frequency_hz = self._howl.frequency_hz if grows else self._standing.frequency_hz
+        reason = f"howl-round at {frequency_hz:.0f} Hz"
         self._player.mute(True, reason)
         return f"{reason}: muted; lower the volume or move the microphone, then end the mute"
+
+    def _stands(self) -> bool:
+        """Whether a howl stands at a limit; to find out the output is made quieter for a moment."""
+        guard, deck = self._standing, self._player.deck
+        limited = deck.monitor.limited_blocks != self._limited_blocks
+        self._limited_blocks = deck.monitor.limited_blocks
+        was_ducked = guard.ducked
+        if deck.monitor.muted or deck.silent:
+            guard.forget()
+            stands = False
+        else:
+            stands = guard.hears(*deck.ears.taps, limited=limited)
+        if guard.ducked != was_ducked:
+            self._player.duck(DUCK_DB if guard.ducked else 0.0)
+        return stands
 
     def _not_heard(self) -> str:
         """Said once for each choice: which channels are heard where the device has fewer than the recording."""

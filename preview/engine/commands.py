@@ -27,6 +27,7 @@ __all__ = [
     "OpenFile",
     "Pause",
     "Play",
+    "ProbeNodes",
     "Quit",
     "Recover",
     "RescanDevices",
@@ -250,7 +251,10 @@ class Recover:
 
 @dataclass(frozen=True, slots=True)
 class Export:
-    """Write what is heard to a file, in the background; ``ExportState`` tells how far it is."""
+    """Write what is heard to a file, in the background; ``ExportState`` tells how far it is.
+
+    Live input is recorded from now on, as the stage puts it out, until ``CancelExport`` or half an hour later.
+    """
 
     session: Session
     """The candidate to export, as heard now."""
@@ -263,8 +267,16 @@ class Export:
 
 
 @dataclass(frozen=True, slots=True)
+class ProbeNodes:
+    """Find the peaks at the inner nodes of what is heard, and anew when that changes; ``NodePeaks`` tells them."""
+
+    on: bool
+    """False to leave off."""
+
+
+@dataclass(frozen=True, slots=True)
 class CancelExport:
-    """Stop the export; nothing is left behind."""
+    """Stop the export; nothing is left behind. A recording of live input ends, and what was recorded stays."""
 
 
 Command = (
@@ -294,6 +306,7 @@ Command = (
     | Recover
     | Export
     | CancelExport
+    | ProbeNodes
     | ClearHolds
     | Quit
 )

@@ -9,6 +9,7 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
+from preview.dsp.block import Volts
 from preview.engine.ears import Ears
 from preview.engine.loop import LiveCircuit, Samples, SignalPath, peak
 from preview.engine.messages import Snapshot
@@ -74,6 +75,8 @@ class Deck:
         self.told: deque[str] = deque(maxlen=8)
         self.loop_min_frames = math.ceil(LOOP_MIN_S * sample_rate_hz)
         self.circuit: LiveCircuit | None = None
+        self.record: Callable[[Volts], None] | None = None
+        """Takes what the stage puts out while it plays."""
         self._path: SignalPath | None = None
         self._in_volts = in_volts
         self._fade = Ramp(max(round(RAMP_S * sample_rate_hz), 1), 0.0)
@@ -226,6 +229,8 @@ class Deck:
             return
         self._look_for_fault(self.circuit)
         self.ears.feed(volts_in, volts_out, swapping=self.circuit.swapping)
+        if self.record is not None:
+            self.record(volts_out)
         if (heard := self.circuit.heard) is not None:
             np.divide(heard, self.full_scale_v, out=samples)
         self._fade.apply(samples)

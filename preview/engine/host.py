@@ -188,6 +188,9 @@ class Host:
         while self._untold:
             self._connection.send(self._untold.popleft())
         self._outlet.watch()
+        if self._errands.comeback.due(self._outlet.stood_in_for, time.monotonic()):
+            self._fade_out(pause=False)
+            self._outlet.open_anew()
 
     def _whole(self, snapshot: Snapshot, intake: Intake, preparer: Preparer) -> Snapshot:
         """The player's snapshot with what the player does not know."""
@@ -218,13 +221,18 @@ class Host:
                 self._open_another(lambda: open_live(device, self._outlet.device))
             case messages.SetDevice(name):
                 self._fade_out(pause=False)
+                self._errands.comeback.forget()
                 self._outlet.change_device(name)
             case messages.RescanDevices():
                 self._errands.list_devices()
+            case messages.ProbeNodes(on):
+                self._errands.probing = on
             case messages.CancelExport():
                 self._errands.cancel_export()
             case messages.Export() if player is not None:
-                self._errands.export(command)
+                recorder = self._errands.export(command)
+                if recorder is not None:
+                    player.record(recorder.take)
             case _ if player is None or preparer is None or bench is None:
                 pass
             case (

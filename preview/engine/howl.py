@@ -3,7 +3,7 @@
 What comes round is like what went round: the last sixth of a second is sought in the half second before it. Where it
 is found there, louder each time for a while, the loop gain is above one. A held note is found as well, but it does not
 go on growing; speech and music do not repeat so closely. The long buffers of live input make a round last longer than
-a look, so a howl is caught as it grows; one that stands at the limit already cannot be told from a note.
+a look, so a howl is caught as it grows; one that stands at the limit already is told from a note by ``standing``.
 """
 
 from __future__ import annotations

@@ -9,9 +9,11 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 
 import numpy as np
+from numpy.typing import NDArray
 
 from preview.audio import devices
 from preview.audio.sink import FileSink
+from preview.audio.stream import open_output
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import PERFECT
 from preview.engine.commands import Export
@@ -21,6 +23,7 @@ from preview.engine.readings import (
     DeviceList,
     DeviceRow,
     ExportState,
+    NodePeaks,
     OpAmpMarks,
     Overview,
     Report,
@@ -32,11 +35,16 @@ from preview.values.quality import Quality
 __all__ = [
     "DeviceJob",
     "ExportJob",
+    "Found",
     "Job",
     "Loudness",
     "LoudnessJob",
     "MarksJob",
     "OverviewJob",
+    "ProbeJob",
+    "Tried",
+    "TryJob",
+    "inner_nodes",
     "run",
 ]
 
@@ -46,6 +54,7 @@ MARK_GAP_S = 0.010
 MARKS_MAX = 4000
 SLEWING = 0.999
 PIECE_S, PIECES = 10.0, 6
+TRIED_FRAMES = 1024
 _READ_FRAMES = 1 << 16
 
 
@@ -83,6 +92,18 @@ class LoudnessJob:
     """What it hears."""
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class ProbeJob:
+    """Find the extremes at the inner nodes of a circuit."""
+
+    letter: str
+    """The candidate."""
+    netlist: Netlist
+    """Its circuit."""
+    material: Material
+    """What it hears."""
+
+
 @dataclass(frozen=True, slots=True)
 class ExportJob:
     """Write what is heard to a file."""
@@ -98,7 +119,15 @@ class DeviceJob:
     """List the sound devices there are now."""
 
 
-Job = OverviewJob | MarksJob | LoudnessJob | ExportJob | DeviceJob
+@dataclass(frozen=True, slots=True)
+class TryJob:
+    """Try whether an output device can be opened."""
+
+    name: str
+    """The device."""
+
+
+Job = OverviewJob | MarksJob | LoudnessJob | ProbeJob | ExportJob | DeviceJob | TryJob
 
 
 @dataclass(frozen=True, slots=True)
@@ -113,7 +142,21 @@ class Loudness:
     """Integrated loudness, full scale as 0 dBFS; -inf for silence."""
 
 
-def run(job: Job) -> Iterator[Report | Loudness | None]:
+@dataclass(frozen=True, slots=True)
+class Tried:
+    """What a ``TryJob`` found."""
+
+    name: str
+    """The device."""
+    there: bool
+    """Whether it can be opened."""
+
+
+Found = Report | Loudness | Tried
+"""What a job tells."""
+
+
+def run(job: Job) -> Iterator[Found | None]:
     """The pieces of a job; None where there is nothing new to tell. Ends by itself, raises PreviewError."""
     match job:
         case OverviewJob():
@@ -122,10 +165,14 @@ def run(job: Job) -> Iterator[Report | Loudness | None]:
             return _marks(job)
         case LoudnessJob():
             return _loudness(job)
+        case ProbeJob():
+            return _probe(job)
         case ExportJob():
             return _export(job)
         case DeviceJob():
             return _devices()
+        case TryJob():
+            return _tried(job)
 
 
 def _overview(job: OverviewJob) -> Iterator[Report | None]:
@@ -252,6 +299,46 @@ def _pieces(material: Material, source: Source) -> list[tuple[int, int]]:
     return [(int(start), int(start) + piece) for start in starts]
 
 
+def inner_nodes(circuit: Netlist) -> tuple[str, ...]:
+    """The nodes that no meter reads, and nothing holds at a constant voltage."""
+    known = {circuit.input_node, circuit.output_node, *(site.out for site in circuit.opamps)}
+    known |= {held.node for held in circuit.fixed}
+    return tuple(node for node in circuit.nodes if node not in known)
+
+
+def _probe(job: ProbeJob) -> Iterator[Report | None]:
+    """Each node is the output of a copy of the circuit; the copies go through the passage side by side."""
+    nodes = inner_nodes(job.netlist)
+    high_v, low_v = np.full(len(nodes), -np.inf), np.full(len(nodes), np.inf)
+    with contextlib.ExitStack() as open_ones:
+        copies = []
+        first = last = 0
+        for node in nodes:
+            source = open_ones.enter_context(contextlib.closing(job.material.open()))
+            first, last = job.material.bounds(source)
+            circuit = replace(job.netlist, output_node=node)
+            copies.append(
+                run_through(circuit, source, first, last, scale_v=job.material.scale_v, quality=Quality.DRAFT)
+            )
+        done = told = 0
+        for chunks in zip(*copies, strict=True):
+            high_v = np.maximum(high_v, [volts.max() for _, volts, _ in chunks])
+            low_v = np.minimum(low_v, [volts.min() for _, volts, _ in chunks])
+            done = chunks[0][0] + len(chunks[0][1]) - first
+            if done - told >= (last - first) // 20:
+                told = done
+                yield _node_peaks(job.letter, nodes, high_v, low_v, done / (last - first))
+            else:
+                yield None
+    yield _node_peaks(job.letter, nodes, high_v, low_v, 1.0)
+
+
+def _node_peaks(
+    letter: str, nodes: tuple[str, ...], high_v: NDArray[np.float64], low_v: NDArray[np.float64], done: float
+) -> NodePeaks:
+    return NodePeaks(letter, nodes, tuple(high_v.tolist()), tuple(low_v.tolist()), done)
+
+
 def _export(job: ExportJob) -> Iterator[Report | None]:
     order, session = job.order, job.order.session
     circuit = session.netlist()
@@ -305,6 +392,23 @@ def _devices() -> Iterator[Report | None]:
         yield DeviceList((), str(error))
     else:
         yield DeviceList(rows)
+
+
+def _tried(job: TryJob) -> Iterator[Tried]:
+    try:
+        devices.refresh()
+        own = devices.find_output(job.name)
+        open_output(
+            job.name,
+            sample_rate_hz=own.default_sample_rate_hz,
+            channels=min(own.max_output_channels, 2),
+            block_frames=TRIED_FRAMES,
+            fill=lambda out: out.fill(0.0),
+        ).close()
+    except DeviceError:
+        yield Tried(job.name, False)
+    else:
+        yield Tried(job.name, True)
 
 
 def failed(job: Job, error: PreviewError) -> Report | None:

@@ -4,11 +4,14 @@ from __future__ import annotations
 
 import argparse
 from pathlib import Path
+from typing import TYPE_CHECKING
 
-from preview.audio.logs import LOG_RATE_MIN_HZ, LogFormat, is_log
 from preview.engine.options import DEFAULT_FULL_SCALE, for_option, frequency_of
 from preview.errors import UsageError
 from preview.values.levels import FullScale, parse_full_scale
+
+if TYPE_CHECKING:
+    from preview.audio.logs import LogFormat
 
 __all__ = [
     "LOG_FULL_SCALE",
@@ -36,6 +39,8 @@ def add_log_options(parser: argparse.ArgumentParser) -> None:
 
 def log_format(options: argparse.Namespace) -> LogFormat:
     """What the options say of logs."""
+    from preview.audio.logs import LOG_RATE_MIN_HZ, LogFormat
+
     rate_hz = None
     if options.rate is not None:
         rate_hz = frequency_of(options.rate, "--rate", LOG_RATE_MIN_HZ, 192_000.0)
@@ -56,6 +61,8 @@ def state_per_unit(options: argparse.Namespace, audio: Path) -> None:
     UsageError
         An option for logs with a recording, or two options for one scale.
     """
+    from preview.audio.logs import is_log
+
     if not is_log(audio):
         refuse_log_options(options)
         return
@@ -77,4 +84,6 @@ def refuse_log_options(options: argparse.Namespace) -> None:
 
 def assumed_full_scale(audio: Path) -> str:
     """Full scale where nothing states one."""
+    from preview.audio.logs import is_log
+
     return LOG_FULL_SCALE if is_log(audio) else DEFAULT_FULL_SCALE

@@ -15,6 +15,7 @@ __all__ = ["START_VOLUME_DB", "Monitor"]
 START_VOLUME_DB = -20.0
 VOLUME_RAMP_S = 0.020
 MUTE_RAMP_S = 0.010
+DUCK_RAMP_S = 0.020
 
 
 class Monitor:
@@ -40,6 +41,7 @@ class Monitor:
         self._chosen: tuple[int, ...] = ()
         self._volume = Ramp(max(round(VOLUME_RAMP_S * sample_rate_hz), 1), gain_of(self.volume_db))
         self._mute = Ramp(max(round(MUTE_RAMP_S * sample_rate_hz), 1), 1.0)
+        self._duck = Ramp(max(round(DUCK_RAMP_S * sample_rate_hz), 1), 1.0)
 
     @property
     def muted(self) -> bool:
@@ -61,6 +63,10 @@ class Monitor:
         else:
             self._mute.to(gain)
 
+    def duck(self, gain_db: float) -> None:
+        """Glide to a gain of its own for a moment, behind the limit, so that what is limited follows as well."""
+        self._duck.to(gain_of(gain_db))
+
     def choose(self, channels: tuple[int, ...]) -> None:
         """Which channels of the recording are heard where the device has fewer; in silence, as it jumps."""
         self._chosen = channels
@@ -72,6 +78,7 @@ class Monitor:
         if peak(samples) > 1.0:
             np.clip(samples, -1.0, 1.0, out=samples)
             self.limited_blocks += 1
+        self._duck.apply(samples)
         self._spread(samples, out)
 
     def _spread(self, samples: Samples, out: NDArray[np.float32]) -> None:

@@ -5,12 +5,14 @@ from __future__ import annotations
 import argparse
 import re
 from collections.abc import Callable, Iterable, Sequence
+from dataclasses import replace
 from pathlib import Path
 from typing import Any, Literal, TypeVar
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, parse_load, parse_source, said
 from preview.circuit.library import open_stages, with_overrides
 from preview.circuit.nodes import OUT
+from preview.circuit.opamp import LIMITS, Limit
 from preview.circuit.parts import Stage, Supply
 from preview.errors import NotationError, UsageError, printable
 from preview.session import AtEnd, Session
@@ -37,9 +39,9 @@ __all__ = [
     "intake_from",
     "join_signed_values",
     "picture_kind",
-    "running_from",
     "session_from",
     "understood_values",
+    "with_running",
 ]
 
 MOST_NOISE_GAIN_DB = 120.0
@@ -154,23 +156,41 @@ def add_running_options(parser: argparse.ArgumentParser) -> None:
     )
     group.add_argument("--noise-seed", type=int, default=1, metavar="N", help="which noise (default 1)")
     group.add_argument(
+        "--without",
+        action="append",
+        default=[],
+        metavar="LIMIT",
+        help=f"take a limit away from every op-amp: {', '.join(LIMITS)}; may be repeated",
+    )
+    group.add_argument(
         "--power-on", action="store_true", help="begin by being switched on, and not settled at rest"
     )
 
 
-def running_from(options: argparse.Namespace) -> dict[str, Any]:
-    """Fields of a session from ``add_running_options``; raises UsageError."""
-    fields: dict[str, Any] = {"power_on": options.power_on}
-    if options.part_noise is not None:
-        gain_db = for_option(
-            "--part-noise", lambda: parse_value(options.part_noise, "gain_db", allow_zero=True)
-        )
-        if not abs(gain_db) <= MOST_NOISE_GAIN_DB:
-            raise UsageError(f"--part-noise {gain_db:g} dB", f"at most {MOST_NOISE_GAIN_DB:g} dB up or down")
-        if not 0 <= options.noise_seed < 2**31:
-            raise UsageError(f"--noise-seed {options.noise_seed}", "a whole number from 0 to 2147483647")
-        fields["noise"] = NoiseSetting(gain_db, options.noise_seed)
-    return fields
+def with_running(session: Session, options: argparse.Namespace) -> Session:
+    """The session with what ``add_running_options`` collected; raises UsageError."""
+    session = replace(session, power_on=options.power_on)
+    if options.without:
+        without = _without(options.without)
+        note = f"without {', '.join(without)}: taken away from every op-amp"
+        session = replace(session, without=without, notes=(*session.notes, note))
+    if options.part_noise is None:
+        return session
+    gain_db = for_option("--part-noise", lambda: parse_value(options.part_noise, "gain_db", allow_zero=True))
+    if not abs(gain_db) <= MOST_NOISE_GAIN_DB:
+        raise UsageError(f"--part-noise {gain_db:g} dB", f"at most {MOST_NOISE_GAIN_DB:g} dB up or down")
+    if not 0 <= options.noise_seed < 2**31:
+        raise UsageError(f"--noise-seed {options.noise_seed}", "a whole number from 0 to 2147483647")
+    return replace(session, noise=NoiseSetting(gain_db, options.noise_seed))
+
+
+def _without(texts: Sequence[str]) -> tuple[Limit, ...]:
+    """The limits of those names, in the order of the model."""
+    named = [" ".join(text.lower().split()) for text in texts]
+    unknown = next((text for text, name in zip(texts, named, strict=True) if name not in LIMITS), None)
+    if unknown is not None:
+        raise UsageError(f"--without {quoted(unknown)}: no such limit", f"one of {', '.join(LIMITS)}")
+    return tuple(limit for limit in LIMITS if limit in named)
 
 
 def session_from(
@@ -437,6 +457,7 @@ def understood_values(session: Session) -> dict[str, object]:
         "load_farad": session.load.capacitance_farad + session.load.cable_farad,
         "full_scale_v": session.full_scale.volts,
         "quality": session.quality.value,
+        "without": list(session.without),
         "notes": list(session.notes),
         "warnings": list(session.warnings),
     }

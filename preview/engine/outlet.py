@@ -145,6 +145,14 @@ class Outlet:
         self._search: _Search | None = None
         self._seen_underflows = 0
         self._was_heard = False
+        self._opened: str | None = None
+        """The name by which the last device was opened."""
+
+    @property
+    def stood_in_for(self) -> str | None:
+        """The device that is wanted, where another one plays in its place."""
+        playing = isinstance(self._output, OutputStream) and self._search is None
+        return self.device if playing and self._opened != self.device else None
 
     @property
     def live_latency_s(self) -> float:
@@ -172,6 +180,10 @@ class Outlet:
         """Play through another device; the player waits meanwhile."""
         self.device = name
         self._silent = False
+        self.open_anew()
+
+    def open_anew(self) -> None:
+        """Look for the device that is wanted; the player waits meanwhile."""
         if self._player is not None and self._search is None:
             self._let_go(self._player)
 
@@ -281,6 +293,7 @@ class Outlet:
                     except DeviceError as error:
                         trouble = trouble or error
                         continue
+                    self._opened = name
                     if name != self.device:
                         self._tell(f"{trouble}; using {opened[0].name}", "warning")
                     return opened

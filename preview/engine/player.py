@@ -9,6 +9,7 @@ from collections.abc import Callable
 import numpy as np
 from numpy.typing import NDArray
 
+from preview.dsp.block import Volts
 from preview.engine.deck import Deck
 from preview.engine.ears import Ears
 from preview.engine.loop import LiveCircuit, Meter
@@ -143,6 +144,10 @@ class Player:
         deck = self.deck
         self.inbox.append(lambda: deck.monitor.mute(on, reason, at_once=deck.silent))
 
+    def duck(self, gain_db: float) -> None:
+        """Be quieter for a moment; 0 dB ends that."""
+        self.inbox.append(lambda: self.deck.monitor.duck(gain_db))
+
     def choose_channels(self, channels: tuple[int, ...]) -> None:
         """Which channels are heard where the device has fewer, in a short silence."""
         there = tuple(channel for channel in channels if 0 <= channel < self.channels)
@@ -155,6 +160,14 @@ class Player:
     def recover(self) -> None:
         """Take a circuit that has failed up again, from rest."""
         self.in_silence(self.deck.recover)
+
+    def record(self, take: Callable[[Volts], None] | None) -> None:
+        """Hand what the stage puts out to this as well; None ends that."""
+
+        def change() -> None:
+            self.deck.record = take
+
+        self.inbox.append(change)
 
     def clear_holds(self) -> None:
         """Clear peak holds, clip counts and dropouts."""

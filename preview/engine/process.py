@@ -1,24 +1,20 @@
-"""The engine as a process of its own: a handle for the desk, and the door by which the child comes in."""
+"""The engine as a process of its own: a handle for the desk."""
 
 from __future__ import annotations
 
 import atexit
 import contextlib
-import multiprocessing
-import os
 import queue
 import signal
-import sys
 import threading
 from collections import deque
-from collections.abc import Iterator
 from dataclasses import dataclass, replace
-from multiprocessing import resource_tracker
 from multiprocessing.connection import Connection
 from pathlib import Path
 from typing import TYPE_CHECKING
 
 from preview.circuit.netlist import Netlist
+from preview.engine.door import start_child
 from preview.engine.messages import ClearHolds, Command, Notice, Quit, Report, Snapshot
 from preview.meters.reading import LevelReading
 from preview.session import Session
@@ -29,8 +25,6 @@ if TYPE_CHECKING:
 __all__ = ["EngineConfig", "EngineProcess"]
 
 START_VOLUME_DB = -20.0
-_FROM_TERMINAL = tuple(getattr(signal, name) for name in ("SIGINT", "SIGHUP") if hasattr(signal, name))
-"""Signals that a terminal sends to every process of the desk: the interrupt key, and that it was closed."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,7 +58,15 @@ class EngineConfig:
 
 
 class EngineProcess:
-    """A running engine. No method but ``close`` waits. Made by ``start``, or by ``spawn`` and ``begin``."""
+    """A running engine. No method but ``close`` waits. Made by ``start``, or by ``spawn`` and ``begin``.
+
+    Parameters
+    ----------
+    process : SpawnProcess
+        From :func:`~preview.engine.door.start_child`.
+    connection : Connection
+        The pipe to it.
+    """
 
     def __init__(self, process: SpawnProcess, connection: Connection) -> None:
         self._process = process
@@ -76,8 +78,12 @@ class EngineProcess:
         self._orders: queue.SimpleQueue[EngineConfig | Command | None] = queue.SimpleQueue()
         self._closed = False
         self._begun = False
-        threading.Thread(target=self._listen, name="engine-reader", daemon=True).start()
+        self.heard_ready = threading.Event()
+        """Set once it has said that every candidate can be heard, and when it has ended."""
+        self._reader = threading.Thread(target=self._listen, name="engine-reader", daemon=True)
+        self._reader.start()
         threading.Thread(target=self._speak, name="engine-writer", daemon=True).start()
+        atexit.register(self.close)  # not a daemon, as it has a worker of its own: nobody else would end it
 
     @classmethod
     def start(cls, config: EngineConfig) -> EngineProcess:
@@ -89,16 +95,7 @@ class EngineProcess:
     @classmethod
     def spawn(cls) -> EngineProcess:
         """Start the process alone: it loads its libraries and waits for ``begin``. Returns at once."""
-        context = multiprocessing.get_context("spawn")
-        with _real_stderr(), _deaf_to_the_terminal():
-            resource_tracker.ensure_running()
-            ours, theirs = context.Pipe(duplex=True)
-            process = context.Process(target=_child, args=(theirs,), name="preview-engine")
-            process.start()
-        theirs.close()
-        engine = cls(process, ours)
-        atexit.register(engine.close)  # not a daemon, as it has a worker of its own: nobody else would end it
-        return engine
+        return cls(*start_child())
 
     def begin(self, config: EngineConfig) -> None:
         """Tell a process that was only spawned what to begin with; once, before anything is sent."""
@@ -167,6 +164,7 @@ class EngineProcess:
             if self._process.is_alive():
                 force()
                 self._process.join(1.0)
+        self._reader.join(1.0)  # it has read to the end; closed under its hands it would fail
         self._connection.close()
 
     def _listen(self) -> None:
@@ -181,6 +179,9 @@ class EngineProcess:
                         self._notices.append(message)
                     elif isinstance(message, Report):
                         self._reports[type(message)] = message
+                if isinstance(message, Snapshot) and all(one.ready for one in message.candidates):
+                    self.heard_ready.set()
+        self.heard_ready.set()
 
     def _speak(self) -> None:
         """Send the orders on; a full pipe makes this thread wait, not the desk."""
@@ -211,46 +212,3 @@ def _higher_peaks(new: LevelReading, old: LevelReading) -> LevelReading:
     if len(new.peak_v) != len(old.peak_v):
         return new
     return replace(new, peak_v=tuple(map(max, new.peak_v, old.peak_v)))
-
-
-@contextlib.contextmanager
-def _real_stderr() -> Iterator[None]:
-    """The process's own stderr while a child is started: a desk may have put one without a file there."""
-    held = sys.stderr
-    if sys.__stderr__ is not None:
-        sys.stderr = sys.__stderr__
-    try:
-        yield
-    finally:
-        sys.stderr = held
-
-
-@contextlib.contextmanager
-def _deaf_to_the_terminal() -> Iterator[None]:
-    """A child started here does not hear what the terminal sends to all its processes until it says so itself."""
-    if not hasattr(signal, "pthread_sigmask"):
-        yield
-        return
-    held = signal.pthread_sigmask(signal.SIG_BLOCK, _FROM_TERMINAL)
-    try:
-        yield
-    finally:
-        signal.pthread_sigmask(signal.SIG_SETMASK, held)
-
-
-def _child(connection: Connection) -> None:
-    """Runs in the child: everything that touches sound is loaded here and nowhere else."""
-    for number in _FROM_TERMINAL:  # they are for the desk, which then says quit
-        signal.signal(number, signal.SIG_IGN)
-    if hasattr(signal, "pthread_sigmask"):
-        signal.pthread_sigmask(signal.SIG_UNBLOCK, _FROM_TERMINAL)
-    import preview.engine.rack  # noqa: F401 - loaded while the desk still reads its options
-    from preview.dsp.stage import load_kernels
-    from preview.engine.host import run
-
-    warm = load_kernels()  # what must be compiled first is left: that takes long, and is told
-    with contextlib.suppress(EOFError, OSError):
-        config = connection.recv()
-        if isinstance(config, EngineConfig):
-            run(connection, config, warm=warm)
-    os._exit(0)  # a sound system that hangs would hold up the library's own end for ever

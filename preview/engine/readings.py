@@ -16,6 +16,7 @@ __all__ = [
     "ExportState",
     "FaultReading",
     "InputKind",
+    "NodePeaks",
     "OpAmpMarks",
     "Overview",
     "Report",
@@ -110,6 +111,25 @@ class ClipMarks:
 
 
 @dataclass(frozen=True, slots=True)
+class NodePeaks:
+    """Extremes of the voltage at the inner nodes of the candidate that is heard: of those that no meter reads.
+
+    Over the recording or its loop region, one sweep or 10 s of a test signal, the last 10 s of live input.
+    """
+
+    letter: str
+    """The candidate."""
+    nodes: tuple[str, ...]
+    """The nodes."""
+    high_v: tuple[float, ...]
+    """Highest voltage at each so far [V]."""
+    low_v: tuple[float, ...]
+    """Lowest [V]."""
+    done_ratio: float
+    """Share of the whole that is done."""
+
+
+@dataclass(frozen=True, slots=True)
 class DeviceRow:
     """A sound device, kept by name and host API."""
 
@@ -148,12 +168,12 @@ class ExportState:
     done_frames: int
     """Frames written."""
     frames: int
-    """Frames in all."""
+    """Frames in all; 0 where that is not known, as of live input that is recorded."""
     state: Literal["running", "done", "failed", "cancelled"]
     """What became of it."""
     text: str = ""
     """One line for the person: what was written, or why not."""
 
 
-Report = Overview | ClipMarks | DeviceList | ExportState
+Report = Overview | ClipMarks | NodePeaks | DeviceList | ExportState
 """What is told when it is found out; the newest of a kind replaces one still waiting."""

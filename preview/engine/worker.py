@@ -14,13 +14,14 @@ from dataclasses import dataclass
 from multiprocessing.connection import Connection
 from typing import TYPE_CHECKING
 
-from preview.engine.messages import Notice, Report
+from preview.engine.door import end_with_parent
+from preview.engine.messages import Notice
 from preview.errors import PreviewError
 
 if TYPE_CHECKING:
     from multiprocessing.context import SpawnProcess
 
-    from preview.engine.jobs import Job, Loudness
+    from preview.engine.jobs import Found, Job
 
 __all__ = ["Worker"]
 
@@ -43,11 +44,12 @@ class Worker:
     def __init__(self) -> None:
         self._process: SpawnProcess | None = None
         self._connection: Connection | None = None
-        self._told: deque[Report | Loudness | Notice] = deque()
+        self._told: deque[Found | Notice] = deque()
         self._orders: deque[_Order] = deque()
         self._there = threading.Condition()
         self._closed = False
         self._thread: threading.Thread | None = None
+        self._reader: threading.Thread | None = None
 
     def submit(self, key: str, job: Job | None) -> None:
         """Do a job, in place of the one of that key; None stops it."""
@@ -60,7 +62,7 @@ class Worker:
                 self._thread.start()
             self._there.notify()
 
-    def told(self) -> list[Report | Loudness | Notice]:
+    def told(self) -> list[Found | Notice]:
         """What was found out since the last call, oldest first."""
         told = []
         while self._told:
@@ -72,14 +74,15 @@ class Worker:
         with self._there:
             self._closed = True
             self._there.notify()
-        if self._connection is not None:
-            self._connection.close()
         if self._process is not None:
-            self._process.join(PATIENCE_S)
             for force in (self._process.terminate, self._process.kill):
-                if self._process.is_alive():
-                    force()
-                    self._process.join(PATIENCE_S)
+                force()
+                self._process.join(PATIENCE_S)
+                if not self._process.is_alive():
+                    break
+        if self._reader is not None and self._connection is not None:
+            self._reader.join(PATIENCE_S)  # it has read to the end; closed under its hands it would fail
+            self._connection.close()
 
     def _speak(self) -> None:
         """Start the process, and again after it has died; send it the orders."""
@@ -107,7 +110,8 @@ class Worker:
         process.start()
         theirs.close()
         self._process, self._connection = process, ours
-        threading.Thread(target=self._listen, args=(ours,), name="worker-reader", daemon=True).start()
+        self._reader = threading.Thread(target=self._listen, args=(ours,), name="worker-reader", daemon=True)
+        self._reader.start()
 
     def _listen(self, connection: Connection) -> None:
         with contextlib.suppress(EOFError, OSError):
@@ -122,6 +126,7 @@ def _child(connection: Connection) -> None:
         signal.signal(number, signal.SIG_IGN)
     if hasattr(os, "nice"):
         os.nice(NICE)
+    end_with_parent(PATIENCE_S)
     with contextlib.suppress(EOFError, OSError):
         _Bench(connection).serve()
 
@@ -131,7 +136,7 @@ class _Bench:
 
     def __init__(self, connection: Connection) -> None:
         self._connection = connection
-        self._running: dict[str, tuple[Job, Iterator[Report | Loudness | None]]] = {}
+        self._running: dict[str, tuple[Job, Iterator[Found | None]]] = {}
 
     def serve(self) -> None:
         """Until the engine's end of the pipe is closed."""

@@ -170,7 +170,9 @@ ACTIONS: tuple[Action, ...] = (
     _circuit("output", "Q", "Choose the node of the circuit that is listened to"),
     _screen("save_session", "S", "Save everything on the desk in a file", "save"),
     _screen("open_session", "A", "Open a saved session, or one that a crash has left"),
-    _screen("export", "W", "Write what is heard to a file, in the background; again: stop that", "export"),
+    _screen(
+        "export", "W", "Write what is heard to a file, live input as it comes; again: stop that", "export"
+    ),
     _screen("write_out", "w", "The command that renders what is set here", "command"),
     _screen("restart", "R", "Start the engine again when it has stopped"),
     _dialog("accept", "enter", "Take what is typed or chosen"),

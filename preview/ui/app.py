@@ -22,7 +22,7 @@ from preview.ui.dialogs import DialogApp
 from preview.ui.figures import FigureKeeper, FigureSet, MakeFigures, compute_figures
 from preview.ui.firstrun import caution_seen, config_folder, remember_caution
 from preview.ui.keymap import KeyMap, read_keys
-from preview.ui.link import AnswerWatch, EngineLink, Restart
+from preview.ui.link import AnswerWatch, EngineLink, Restart, Reviver
 from preview.ui.panels.candidates import CandidatesPanel
 from preview.ui.panels.circuit import CircuitPanel
 from preview.ui.panels.figures import FiguresPanel
@@ -47,8 +47,6 @@ _UNFOCUSED_EVERY = 3
 """A window that is not looked at is painted at a third of the pace."""
 WIDE, TALL = 120, 42
 """From this size on two views fit side by side, or above each other [cells]."""
-_REVIVE_S = 10.0
-"""An engine that stops again so soon after it was started by itself is left to the person [s]."""
 ENDINGS = tuple(getattr(signal, name) for name in ("SIGINT", "SIGTERM", "SIGHUP") if hasattr(signal, name))
 """Signals that end the desk in an orderly way."""
 
@@ -106,7 +104,7 @@ class DeskApp(DialogApp):
         """Called when a signal ends the desk; None leaves signals alone."""
         self._restart = restart
         self._restarting = False
-        self._revived_s = -1e9
+        self._reviver = Reviver()
         self._autoplay = autoplay
         self._show_caution = show_caution
         self._keeper = FigureKeeper(make_figures)
@@ -316,9 +314,7 @@ class DeskApp(DialogApp):
 
     def _revive(self) -> None:
         """Start another engine by itself, unless this one has been started so just now: then a person decides."""
-        now_s = self.desk.now_s()
-        if self._restart is not None and now_s - self._revived_s > _REVIVE_S:
-            self._revived_s = now_s
+        if self._restart is not None and self._reviver.may(self.desk.now_s()):
             self._start(self._restart, play=self.desk.listening.playing)
 
     def _start(self, restart: Restart, *, play: bool) -> None:
@@ -327,19 +323,23 @@ class DeskApp(DialogApp):
             self.run_worker(self._start_again(restart, play), group="restart")
 
     async def _start_again(self, restart: Restart, play: bool) -> None:
+        left = self.desk.as_left()
         await asyncio.to_thread(self.desk.link.close)  # one that hangs is ended by force, which takes seconds
         try:
             # A new process inherits standard error; while the desk runs, sys.stderr is not a real file.
             with contextlib.redirect_stderr(sys.__stderr__):
-                link = await asyncio.to_thread(restart)
+                link = await asyncio.to_thread(restart, left)
         except PreviewError as error:
             self.foot.say(str(error), "error")
         else:
-            self.desk.resume(link)
+            lost = self.desk.resume(link, left)
             self._watch = AnswerWatch()
             self.desk.listening.play(play)
             hint = "" if play else f"; {self.desk.keys.shown('play_pause')} plays"
-            self.foot.say(f"the engine had stopped and runs again{hint}")
+            lost = lost and f"; {lost}"
+            self.foot.say(
+                f"the engine had stopped and runs again{hint}{lost}", "warning" if lost else "information"
+            )
         finally:
             self._restarting = False
             self.show()

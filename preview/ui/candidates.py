@@ -11,6 +11,7 @@ from dataclasses import dataclass, field, replace
 from string import ascii_uppercase
 from typing import TYPE_CHECKING
 
+from preview.circuit.netlist import Netlist
 from preview.engine.messages import (
     CandidateReading,
     Command,
@@ -104,13 +105,11 @@ class Candidates:
         if self._desk.now_s() - self._asked_s > _TRUST_S:
             self.matched, self.null = snapshot.match, snapshot.null
 
-    def orders(self) -> list[Command]:
-        """What a new engine must be told after it runs candidate A as its circuit."""
-        commands: list[Command] = [SetMatch(self.matched)] if self.matched else []
-        for letter in self.letters:
-            if letter != "A":
-                commands.append(KeepCandidate(letter, self.session(letter).netlist()))
-        return [*commands, SelectCandidate(self.letter)] if self.letter != "A" else commands
+    def others(self) -> tuple[tuple[str, Netlist], ...]:
+        """The circuits of those that are not heard now, by letter."""
+        return tuple(
+            (letter, self.session(letter).netlist()) for letter in self.letters if letter != self.letter
+        )
 
     def restore(self, saved: Saved) -> None:
         """The candidates that were saved in place of those there are; what is common to all is brought along."""

@@ -20,19 +20,34 @@ from preview.circuit.parts import (
     TwoTerminal,
 )
 from preview.circuit.settings import setting_text
-from preview.engine.messages import Command, SetAtEnd, SetCircuit, SetFullScale, SetPart, SetQuality
+from preview.engine.messages import (
+    Command,
+    DropCandidate,
+    KeepCandidate,
+    Seek,
+    SelectCandidate,
+    SetAtEnd,
+    SetCircuit,
+    SetFullScale,
+    SetMatch,
+    SetPart,
+    SetQuality,
+    SetRegion,
+    SetVolume,
+)
+from preview.engine.process import EngineConfig
 from preview.errors import PartValueError
 from preview.session import Session
 from preview.values.eseries import step
 
 __all__ = [
     "SERIES_OF_KIND",
+    "catching_up",
     "commands_between",
     "common_changes",
     "render_command",
     "series_of",
     "stepped",
-    "whole_state",
     "with_input_of",
     "with_setting",
 ]
@@ -133,14 +148,25 @@ def with_input_of(session: Session, other: Session) -> Session:
     )
 
 
-def whole_state(session: Session) -> list[Command]:
-    """What a new engine must be told; it has the recording already."""
-    return [
-        SetCircuit(session.netlist()),
-        SetFullScale(session.full_scale.volts),
-        SetQuality(session.quality),
-        SetAtEnd(session.at_end),
+def catching_up(began: EngineConfig, now: EngineConfig) -> list[Command]:
+    """What an engine must be told that began so while the desk went on; raises CircuitError."""
+    had, has = ({**dict(one.candidates), one.letter: one.session.netlist()} for one in (began, now))
+    commands: list[Command] = [
+        KeepCandidate(letter, circuit) for letter, circuit in has.items() if had.get(letter) != circuit
     ]
+    if now.letter != began.letter:
+        commands.append(SelectCandidate(now.letter))
+    commands += [DropCandidate(letter) for letter in had if letter not in has]
+    commands += common_changes(began.session, now.session)
+    if now.start_volume_db != began.start_volume_db:
+        commands.append(SetVolume(now.start_volume_db))
+    if now.match != began.match:
+        commands.append(SetMatch(now.match))
+    if now.region != began.region:
+        commands.append(SetRegion(*(now.region or (None, None))))
+    if now.start_frame != began.start_frame:
+        commands.append(Seek(now.start_frame))
+    return commands
 
 
 def _exact(part: SettablePart | FixedVoltage) -> str:
@@ -179,5 +205,11 @@ def render_command(session: Session, opened: Stage) -> str:
         words += ["--source", exact_source(session.source)]
     if session.load != NO_LOAD:
         words += ["--load", exact_load(session.load)]
+    for limit in session.without:
+        words += ["--without", limit]
+    if session.noise is not None:
+        words += ["--part-noise", f"{session.noise.gain_db!r} dB", "--noise-seed", str(session.noise.seed)]
+    if session.power_on:
+        words.append("--power-on")
     words += ["--full-scale", session.full_scale.text, "--quality", session.quality.value]
     return shlex.join(words)

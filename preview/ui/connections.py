@@ -26,6 +26,7 @@ from preview.errors import AudioFileError, printable
 from preview.session import Session
 from preview.ui.asking import Choice, Menu, Outcome, Question
 from preview.ui.changes import with_input_of
+from preview.ui.link import EngineLink
 from preview.ui.words import kilohertz
 from preview.values.stimulus import STIMULUS_EXAMPLES, Waveform, parse_stimulus
 
@@ -46,6 +47,18 @@ class Connections:
         self.devices: DeviceList | None = None
         """The devices that were found last."""
         self._coming: Session | None = None
+        self._device: str | None = None
+        """The device that was chosen here, by the answer; None where none was."""
+
+    def resume(self, link: EngineLink) -> None:
+        """What a new engine must be told of its surroundings."""
+        snapshot = self._desk.snapshot
+        if self._device is not None:
+            link.send(_set_device(self._device))
+        if snapshot is not None and snapshot.heard_channels:
+            link.send(SetHeardChannels(snapshot.heard_channels))
+        if snapshot is not None and snapshot.muted and snapshot.fault is None:
+            link.send(SetMute(True))
 
     def take(self, snapshot: Snapshot) -> None:
         """The newest word of the engine: an input that was asked for is the session's once it is there."""
@@ -58,7 +71,7 @@ class Connections:
             self._coming = None
             desk = self._desk
             desk.session = with_input_of(desk.session, coming)
-            desk.overview = desk.marks = None
+            desk.overview = desk.marks = desk.node_peaks = None
             desk.listening.region = None
 
     # ---- input ----
@@ -183,11 +196,16 @@ class Connections:
         rows += [_device_row(row) for row in self.devices.devices if row.output_channels > 0]
 
         def chosen(name: str) -> str:
-            self._desk.link.send(SetDevice(None if name == _DEFAULT else name))
+            self._device = name
+            self._desk.link.send(_set_device(name))
             return f"to {'the default device' if name == _DEFAULT else printable(name)}"
 
         snapshot = self._desk.snapshot
         return Menu("Sound device", rows, chosen, now=snapshot.output_name if snapshot else "")
+
+
+def _set_device(answer: str) -> SetDevice:
+    return SetDevice(None if answer == _DEFAULT else answer)
 
 
 def _device_row(row: DeviceRow) -> Choice:

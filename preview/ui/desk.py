@@ -11,14 +11,24 @@ import time
 from collections.abc import Callable
 from dataclasses import replace
 
-from preview.circuit.netlist import OUT, OpAmpSite
+from preview.circuit.netlist import OUT, Netlist, OpAmpSite
 from preview.circuit.parts import Stage
-from preview.engine.messages import ClipMarks, Command, DeviceList, Overview, Report, Snapshot
+from preview.engine.messages import (
+    ClipMarks,
+    Command,
+    DeviceList,
+    NodePeaks,
+    Overview,
+    ProbeNodes,
+    Report,
+    Snapshot,
+)
+from preview.engine.process import EngineConfig
 from preview.errors import PreviewError
 from preview.session import Session
 from preview.ui.asking import Outcome
 from preview.ui.candidates import Candidates
-from preview.ui.changes import commands_between, whole_state
+from preview.ui.changes import catching_up, commands_between
 from preview.ui.clips import Clips
 from preview.ui.connections import Connections
 from preview.ui.figures import FigureSet
@@ -73,12 +83,14 @@ class Desk:
         self.figures = FigureSet()
         self.overview: Overview | None = None
         self.marks: ClipMarks | None = None
+        self.node_peaks: NodePeaks | None = None
+        """Peaks at the inner nodes of what is heard; None as long as they are not known."""
         self.marks_old = False
         """Whether the circuit has been changed since the clips were looked for."""
         self.stopped = False
         self.unanswered = False
         self._before: dict[tuple[str, ...], Session] = {_place(session): session}
-        self._sites: tuple[Session, tuple[OpAmpSite, ...]] | None = None
+        self._circuit: tuple[Session, Netlist | None] | None = None
         self.parts = PartWork(self)
         self.listening = Listening(self)
         self.view = View(self)
@@ -117,20 +129,40 @@ class Desk:
             self.overview = report
         elif isinstance(report, ClipMarks):
             self.marks, self.marks_old = report, False
+        elif isinstance(report, NodePeaks):
+            self.node_peaks = report
         elif isinstance(report, DeviceList):
             return self.connections.hear_devices(report)
         else:
             return self.keeping.hear_export(report)
         return None
 
-    def resume(self, link: EngineLink) -> None:
-        """Bring a new engine to where the old one was; it waits at the playhead."""
-        position = self.listening.position_frame
+    def as_left(self) -> EngineConfig:
+        """What an engine begins with to be where this desk is; it waits at the playhead."""
+        return EngineConfig(
+            session=replace(self.session, power_on=False),
+            start_volume_db=self.listening.volume_db,
+            start_frame=self.listening.position_frame,
+            region=self.listening.region,
+            letter=self.candidates.letter,
+            candidates=self.candidates.others(),
+            match=self.candidates.matched,
+        )
+
+    def resume(self, link: EngineLink, began: EngineConfig) -> str:
+        """Work with a new engine, which began as the old one was left; what was done since is told it.
+
+        What went with the old one, in a line; empty for nothing.
+        """
+        for command in catching_up(began, self.as_left()):
+            link.send(command)
         self.link = link
         self.stopped = self.unanswered = False
-        for command in (*whole_state(self.candidates.session("A")), *self.candidates.orders()):
-            link.send(command)
-        self.listening.resume(link, position)
+        if self.view.node_volts:
+            link.send(ProbeNodes(True))
+        self.connections.resume(link)
+        self.listening.resume(link)
+        return self.keeping.break_off()
 
     # ---- the session ----
 
@@ -156,7 +188,7 @@ class Desk:
     def _become(self, session: Session, commands: list[Command]) -> None:
         for command in commands:
             self.link.send(command)
-        self.marks_old = True
+        self.marks_old, self.node_peaks = True, None
         here = _place(session)
         if here != _place(self.session):
             self.before = self._before.setdefault(here, session)
@@ -203,15 +235,20 @@ class Desk:
             return session.stimulus.text
         return session.audio.name if session.audio else "no recording"
 
+    def circuit(self) -> Netlist | None:
+        """The circuit of the session; None where it cannot be computed."""
+        if self._circuit is None or self._circuit[0] is not self.session:
+            try:
+                found = self.session.netlist()
+            except PreviewError:
+                found = None
+            self._circuit = (self.session, found)
+        return self._circuit[1]
+
     def sites(self) -> tuple[OpAmpSite, ...]:
         """The op-amps with the limits that hold for them; none where the circuit cannot be computed."""
-        if self._sites is None or self._sites[0] is not self.session:
-            try:
-                found = self.session.netlist().opamps
-            except PreviewError:
-                found = ()
-            self._sites = (self.session, found)
-        return self._sites[1]
+        circuit = self.circuit()
+        return circuit.opamps if circuit is not None else ()
 
     def output_wall(self) -> tuple[float | None, str | None]:
         """The nearer limit of the op-amp that drives ``out`` [V], and its designator; None for no limit."""

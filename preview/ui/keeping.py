@@ -22,7 +22,7 @@ from preview.errors import OutputFileError, UsageError, printable
 from preview.session import Session
 from preview.ui.asking import Choice, Menu, Outcome, Question
 from preview.ui.changes import with_input_of
-from preview.ui.words import percent
+from preview.ui.words import clock, percent
 
 if TYPE_CHECKING:
     from preview.ui.desk import Desk
@@ -191,16 +191,31 @@ class Keeping:
 
     def export_line(self) -> str:
         """How far the export is, in words; empty where none runs."""
-        state = self.export
-        if state is None or state.state != "running" or state.frames == 0:
+        state, snapshot = self.export, self._desk.snapshot
+        if state is None or state.state != "running":
             return ""
+        if self._records:
+            return (
+                f"recording {clock(state.done_frames / snapshot.sample_rate_hz)}" if snapshot else "recording"
+            )
         return f"exporting {percent(state.done_frames / state.frames)}"
+
+    @property
+    def _records(self) -> bool:
+        """Whether what is written now is live input, of which nobody knows how long it will be."""
+        return self.export is not None and self.export.state == "running" and self.export.frames == 0
+
+    def break_off(self) -> str:
+        """The engine that wrote is gone; a line about it, empty where nothing was being written."""
+        written, self.export = self.export_line(), None
+        return "what was being written to a file is lost" if written else ""
 
     def do_export(self) -> Outcome:
         """Write what is heard to a file, in the background; stops an export that runs."""
         if self.export_line():
             self._desk.link.send(CancelExport())
-            return "the export is stopped; nothing is left behind"
+            return "the recording ends" if self._records else "the export is stopped; nothing is left behind"
+        live = self._desk.session.live
 
         def read(text: str) -> tuple[Path, ExportDepth]:
             name, _, last = text.strip().rpartition(" ")
@@ -220,13 +235,18 @@ class Keeping:
         def understand(text: str) -> str:
             path, depth = read(text)
             where = "the region" if self._desk.listening.region else "the whole"
+            where = "from now on, half an hour at most," if live else where
             return f"{where} to {path}, {depth}{', replaces the file that is there' if path.exists() else ''}"
 
         def take(text: str) -> str:
             path, depth = read(text)
             desk = self._desk
             desk.link.send(Export(self._common(desk.session), path, depth, desk.listening.region))
-            return f"exporting to {printable(path.name)}; {desk.keys.shown('export')} stops it"
+            stops = desk.keys.shown("export")
+            if live:
+                return f"recording to {printable(path.name)}; {stops} ends it"
+            return f"exporting to {printable(path.name)}; {stops} stops it"
 
         about = "A file and, if wanted, 16, 24 or float: out.wav, out.flac 24"
-        return Question("Export what is heard to", about, "none", understand, take)
+        title = "Record what the stage puts out to" if live else "Export what is heard to"
+        return Question(title, about, "none", understand, take)

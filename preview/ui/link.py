@@ -6,11 +6,14 @@ from collections.abc import Callable
 from typing import Protocol
 
 from preview.engine.messages import Command, Notice, Report, Snapshot
+from preview.engine.process import EngineConfig
 
-__all__ = ["AnswerWatch", "EngineLink", "Restart", "StillLink"]
+__all__ = ["AnswerWatch", "EngineLink", "Restart", "Reviver", "StillLink"]
 
 _PATIENCE_POLLS = 75
 """3 s at the desk's pace."""
+_REVIVE_S = 10.0
+"""An engine that stops again so soon after it was started by itself is left to the person [s]."""
 
 
 class EngineLink(Protocol):
@@ -36,8 +39,8 @@ class EngineLink(Protocol):
         """End the engine; a second call does nothing."""
 
 
-Restart = Callable[[], EngineLink]
-"""Starts a new engine in place of one that stopped; may take a second; may raise PreviewError."""
+Restart = Callable[[EngineConfig], EngineLink]
+"""Starts a new engine in place of one that stopped, on the device of the first; may raise PreviewError."""
 
 
 class AnswerWatch:
@@ -56,6 +59,20 @@ class AnswerWatch:
         elif self._unanswered is not None:
             self._unanswered += 1
         return (self._unanswered or 0) >= _PATIENCE_POLLS
+
+
+class Reviver:
+    """Whether an engine that stopped is replaced without asking: not one that was so just before."""
+
+    def __init__(self) -> None:
+        self._revived_s = -_REVIVE_S
+
+    def may(self, now_s: float) -> bool:
+        """Whether it may be replaced now; counted as done."""
+        if now_s - self._revived_s < _REVIVE_S:
+            return False
+        self._revived_s = now_s
+        return True
 
 
 class StillLink:

@@ -68,18 +68,17 @@ class Listening:
         snapshot = self._desk.snapshot
         return snapshot.position_frame if snapshot else 0
 
-    def resume(self, link: EngineLink, position: int) -> None:
-        """Bring a new engine to the playhead; it waits there."""
-        link.send(SetBypass(self.bypass))
-        link.send(SetVolume(self.volume_db))
-        if self.region is not None:
-            link.send(SetRegion(*self.region))
-        link.send(Seek(position))
+    def resume(self, link: EngineLink) -> None:
+        """What a new engine must be told besides what it began with; it waits at the playhead."""
+        if self.bypass:
+            link.send(SetBypass(True))
+        self._sought = (self._desk.now_s(), self.position_frame)
         self.playing = False
 
     def restore(self, saved: Saved) -> None:
         """Place, region and bypass as they were saved; the volume goes down to what was saved, never up."""
         self.region = saved.region
+        self._desk.node_peaks = None
         self._desk.link.send(SetRegion(*(saved.region or (None, None))))
         if saved.bypass != self.bypass:
             self.do_bypass()
@@ -145,6 +144,7 @@ class Listening:
         start = max(0, min(start, frames - shortest))
         end = min(max(end, start + shortest), frames)
         self.region = (start, end)
+        self._desk.node_peaks = None
         self._desk.link.send(SetRegion(start, end))
         clears = f"{self._desk.keys.shown('region_clear')} clears it"
         return f"region {clock(start / rate_hz)} to {clock(end / rate_hz)}; {clears}"
@@ -178,6 +178,7 @@ class Listening:
     def do_region_clear(self) -> str:
         """The whole recording."""
         self.region = None
+        self._desk.node_peaks = None
         self._desk.link.send(SetRegion(None, None))
         return "no region: the whole recording"
 

@@ -24,7 +24,7 @@ from preview.ui.differences import differences
 from preview.ui.figures import Figures, MakeFigures, compute_figures, job_of
 from preview.ui.firstrun import HEARING, caution_seen, config_folder, remember_caution
 from preview.ui.keymap import KeyMap, read_keys
-from preview.ui.link import EngineLink, Restart
+from preview.ui.link import EngineLink, Restart, Reviver
 from preview.ui.phrases import answer_of, understood
 from preview.ui.spoken import effect, help_lines, part_lines, path_lines, spoken, state_line
 
@@ -75,6 +75,7 @@ class PlainDesk:
         self._config = config or config_folder()
         self._out = out
         self._restart = restart
+        self._reviver = Reviver()
         self._make_figures = make_figures
         self._figured: tuple[Session, Session, float] | None = None
         self._typed: queue.SimpleQueue[str | None] = queue.SimpleQueue()
@@ -118,8 +119,8 @@ class PlainDesk:
         """Take what the engine has said since the last time."""
         desk, link = self.desk, self.desk.link
         if not desk.stopped and not link.alive:
-            desk.stopped, desk.listening.playing = True, False
-            self.say("error: ENGINE STOPPED: no sound. 'restart' starts it again")
+            self._stopped()
+            link = desk.link
         for notice in link.notices():
             self.say(f"{'' if notice.severity == 'information' else notice.severity + ': '}{notice.text}")
         for report in link.reports():
@@ -131,6 +132,27 @@ class PlainDesk:
         desk.keeping.note()
         if (edited := desk.stage_watch.look()) is not None:
             self.say(edited[0])
+
+    def _stopped(self) -> None:
+        """Start another engine in place of one that stopped, once; what fails again is left to the person."""
+        desk, played = self.desk, self.desk.listening.playing
+        desk.stopped, desk.listening.playing = True, False
+        if self._restart is not None and self._reviver.may(desk.now_s()):
+            try:
+                self._start_again(self._restart)
+            except PreviewError as error:
+                self.say(f"error: {error}")
+            else:
+                desk.listening.play(played)
+                self.say("warning: the engine had stopped and runs again")
+                return
+        self.say("error: ENGINE STOPPED: no sound. 'restart' starts it again")
+
+    def _start_again(self, restart: Restart) -> None:
+        left = self.desk.as_left()
+        self.desk.link.close()
+        if lost := self.desk.resume(restart(left), left):
+            self.say(f"warning: {lost}")
 
     # ---- the loop ----
 
@@ -315,8 +337,7 @@ class PlainDesk:
             return "the engine is running"
         if self._restart is None:
             return "leave and open it again: this engine cannot be restarted from here"
-        desk.link.close()
-        desk.resume(self._restart())
+        self._start_again(self._restart)
         return "the engine runs again; 'play' plays"
 
     def do_quit(self) -> None:

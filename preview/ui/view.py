@@ -5,6 +5,7 @@ from __future__ import annotations
 from enum import StrEnum
 from typing import TYPE_CHECKING
 
+from preview.engine.messages import ProbeNodes
 from preview.ui.units import LevelUnit
 from preview.ui.words import hertz
 
@@ -175,6 +176,7 @@ class View:
     def do_node_volts(self) -> str:
         """DC and peak volts at the nodes, or not."""
         self.node_volts = not self.node_volts
+        self._desk.link.send(ProbeNodes(self.node_volts))
         return f"volts at the nodes {'shown' if self.node_volts else 'hidden'}"
 
     # ---- the cursor of the response ----

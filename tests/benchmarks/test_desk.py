@@ -38,7 +38,9 @@ def _cpu_s(process_id: int) -> float:
     return (int(fields[11]) + int(fields[12])) / os.sysconf("SC_CLK_TCK")
 
 
-def test_the_desk_takes_keys_within_1_2_s_of_its_start(tmp_path) -> None:
+def test_the_desk_takes_keys_within_1_2_s_of_its_start(tmp_path, monkeypatch) -> None:
+    # warm is with the bytecode that any installation has
+    monkeypatch.delenv("PYTHONDONTWRITEBYTECODE", raising=False)
     times_s, cpu_s = [], []
     for _ in range(4):
         started_s = time.monotonic()

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import json
 from pathlib import Path
 
 import numpy as np
 import pytest
 import soundfile
 
+from preview.circuit.opamp import LIMITS
 from preview.cli import main
 
 RATE = 48_000
@@ -42,8 +44,40 @@ def test_a_single_supply_stage_thumps_when_it_is_switched_on(tmp_path: Path) -> 
     assert switched.max() > 1.0  # which takes the bias of half the supply along
 
 
+def test_a_limit_that_is_taken_away_does_not_limit_and_is_said(tmp_path: Path, capsys) -> None:
+    """10 kHz through a gain of 10 with a slow type, the same without its limits, and an ideal op-amp."""
+    tone, out = tmp_path / "tone.wav", tmp_path / "out.wav"
+    time_s = np.arange(RATE // 10) / RATE
+    soundfile.write(tone, np.sin(2 * np.pi * 10e3 * time_s), RATE, subtype="FLOAT")
+    common = ["render", str(tone), str(out), "--stage", "inverting-low-pass", "--part", "C1=10p"]
+    common += ["--full-scale", "1 V", "--quality", "draft", "--json", "--opamp"]
+
+    def heard(*more: str) -> tuple[np.ndarray, dict]:
+        assert main([*common, *more]) == 0
+        return np.asarray(soundfile.read(out)[0]), json.loads(capsys.readouterr().out)
+
+    (slow, as_it_is), (ideal, _) = heard("LM358"), heard("ideal")
+    assert as_it_is["understood"]["without"] == []
+    assert as_it_is["opamps"][0]["slew_peak_v_per_s"] == pytest.approx(0.3e6, rel=0.01), "of the type"
+    assert np.ptp(slow) < 0.8 * np.ptp(ideal)
+    free, without = heard("LM358", *(word for limit in LIMITS for word in ("--without", limit)))
+    assert without["understood"]["without"] == list(LIMITS)
+    np.testing.assert_allclose(free, ideal, atol=1e-3 * np.abs(ideal).max())
+
+
+def test_limits_are_named_as_on_the_desk(tmp_path: Path, capsys) -> None:
+    rendered(tmp_path, "--without", "Input  Range", "--without", "noise")
+    assert "without input range, noise: taken away from every op-amp" in capsys.readouterr().err
+
+
 @pytest.mark.parametrize(
-    "option", [["--part-noise", "loud"], ["--part-noise", "200 dB"], ["--part-noise", "--noise-seed", "x"]]
+    "option",
+    [
+        ["--part-noise", "loud"],
+        ["--part-noise", "200 dB"],
+        ["--part-noise", "--noise-seed", "x"],
+        ["--without", "rails"],
+    ],
 )
 def test_what_cannot_be_meant_is_refused(tmp_path: Path, option: list[str]) -> None:
     quiet = tmp_path / "quiet.wav"

@@ -13,7 +13,7 @@ import soundfile
 from preview.audio.sink import FileSink
 from preview.circuit.library import find_stage, with_overrides
 from preview.engine import messages
-from preview.engine.messages import ClipMarks, DeviceList, ExportState, InputKind, Overview
+from preview.engine.messages import ClipMarks, DeviceList, ExportState, InputKind, NodePeaks, Overview
 from preview.values.stimulus import parse_stimulus
 from tests.engine.running import RATE_HZ, session_of, wait_for, wait_for_report
 
@@ -146,6 +146,20 @@ def test_the_waveform_and_the_clips_are_looked_for_in_the_background(start, tmp_
     assert quiet.opamps[0].spans == ()
 
 
+def test_inner_nodes_are_probed_when_asked_and_anew_when_the_circuit_changes(start, tone):
+    engine = start(session_of(tone))
+    wait_for(engine, lambda s: True, "a snapshot")
+    engine.send(messages.ProbeNodes(True))
+    first = wait_for_report(engine, lambda r: isinstance(r, NodePeaks) and r.done_ratio == 1.0, "peaks")
+    assert first.nodes == ("sum",)
+    assert first.high_v[0] < 1e-9
+    engine.send(messages.SetPart("R1", 2e3))  # 1 V times 50 clips
+    clipped = wait_for_report(
+        engine, lambda r: isinstance(r, NodePeaks) and r.done_ratio == 1.0 and r.high_v[0] > 0.1, "new peaks"
+    )
+    assert clipped.low_v[0] < -0.1
+
+
 def test_what_is_heard_is_exported_while_it_plays(start, tone, tmp_path):
     engine = start(session_of(tone), play=True)
     wait_for(engine, lambda s: s.position_frame > 0, "sound")
@@ -157,6 +171,27 @@ def test_what_is_heard_is_exported_while_it_plays(start, tone, tmp_path):
     assert (len(samples), rate_hz) == (20_000, RATE_HZ)
     assert 10.0 * np.abs(samples).max() == pytest.approx(gain_of(200), rel=1e-3)
     assert wait_for(engine, lambda s: True, "a snapshot").dropouts == 0
+
+
+def test_live_input_is_recorded_until_it_is_told_to_end_or_the_engine_is(start, tmp_path):
+    session = session_of(None, live=True)
+    engine = start(session)
+    wait_for(engine, lambda s: s.playing and s.position_frame > 0, "input")
+    out = tmp_path / "out"
+    out.mkdir()
+    engine.send(messages.Export(session, out / "x.wav"))
+    told = wait_for_report(engine, lambda r: isinstance(r, ExportState) and r.done_frames > 0, "progress")
+    assert (told.state, told.frames) == ("running", 0)
+    engine.send(messages.Export(session, out / "z.wav"))
+    wait_for(engine, lambda s: any("still being written" in n.text for n in engine.notices()), "a refusal")
+    engine.send(messages.CancelExport())
+    done = wait_for_report(engine, lambda r: isinstance(r, ExportState) and r.state == "done", "the end")
+    assert soundfile.info(out / "x.wav").frames == done.done_frames > 0
+    engine.send(messages.Export(session, out / "y.wav"))
+    wait_for_report(engine, lambda r: isinstance(r, ExportState) and r.done_frames > 0, "progress")
+    engine.close()
+    assert soundfile.info(out / "y.wav").frames > 0
+    assert sorted(path.name for path in out.iterdir()) == ["x.wav", "y.wav"]
 
 
 def test_an_export_onto_the_recording_itself_is_refused_and_one_can_be_cancelled(start, tone, tmp_path):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 from pathlib import Path
 from typing import Any
 
@@ -72,6 +73,31 @@ wait(lambda s: s.output_name == "default" and s.playing)
     assert any("output device cellar: there is none of that name" in line for line in lines), lines
 
 
+def test_a_named_device_that_another_stands_in_for_is_taken_back_when_it_is_there(
+    sound_server: Any, tmp_path: Path
+) -> None:
+    audio = noise_file(tmp_path / "noise.wav", 30.0)
+    then = """
+engine.send(messages.SetDevice("feed"))
+wait(lambda s: s.output_name == "default" and s.playing)
+print("stands in", flush=True); sys.stdin.readline()
+before = wait(lambda s: True)
+after = wait(lambda s: s.output_name == "feed" and s.playing and s.position_frame > before.position_frame)
+tell()
+"""
+    sound_server.take_away("feed")
+    with sound_server.start(DESK, str(audio), "loop", then, str(tmp_path / "log")) as desk:
+        lines = []
+        while (line := desk.stdout.readline()) and line != "stands in\n":
+            lines.append(line)
+        assert line, desk.stderr.read()[-2000:]
+        assert any("using default" in one for one in lines), lines
+        sound_server.bring("feed")
+        out, trouble = desk.communicate("go\n", timeout=90)
+    assert desk.returncode == 0, trouble[-2000:]
+    assert "sound is back on feed" in out
+
+
 def test_of_four_channels_the_first_two_are_played_and_that_is_said(
     sound_server: Any, tmp_path: Path
 ) -> None:
@@ -100,6 +126,12 @@ def test_an_engine_that_was_killed_is_replaced_at_the_same_place(sound_server: A
     then = """
 import os, signal
 from dataclasses import replace
+from preview.engine.spare import Spare
+spare = Spare(0.0)
+spare.keep_beside(engine)
+while spare.waiting is None:
+    time.sleep(0.01)
+time.sleep(4.0)  # it loads meanwhile
 before = wait(lambda s: s.position_frame > 96_000)
 os.kill(engine.pid, signal.SIGKILL)
 killed = time.monotonic()
@@ -108,10 +140,11 @@ while engine.alive:
 print("seen after", time.monotonic() - killed, engine.ending, flush=True)
 config = EngineConfig(session=session, start_volume_db=0.0, block_frames=512, play=True, log=Path(log),
                       start_frame=before.position_frame)
-engine = EngineProcess.start(config)
+engine = spare.begin(config)
 heard = wait(lambda s: s.playing and s.position_frame > before.position_frame)
 print("heard after", time.monotonic() - killed, heard.output_name, flush=True)
 assert heard.position_frame - before.position_frame < 24_000
+spare.close()
 """
     out = sound_server.run(DESK, str(audio), "loop", then, str(tmp_path / "log"), timeout_s=100)
     seen, heard = (
@@ -119,4 +152,7 @@ assert heard.position_frame - before.position_frame < 24_000
     )
     assert float(seen.split()[2]) < 1.0
     assert seen.endswith("the engine was ended by signal SIGKILL")
-    assert float(heard.split()[2]) < 4.0
+    after_s, load = float(heard.split()[2]), os.getloadavg()[0]
+    if after_s >= 2.0 and load > (os.cpu_count() or 1):
+        pytest.skip(f"the machine is too busy to judge: {after_s:.1f} s at a load of {load:.1f}")
+    assert after_s < 2.0

@@ -11,6 +11,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+import soundfile
 
 import preview.dsp.kernels  # noqa: F401 - names the folder of compiled kernels, for the desks started here too
 
@@ -110,6 +111,33 @@ time.sleep(1.0)  # of sound, to be recorded
     assert np.abs(whole).max() == pytest.approx(0.02 * gain, rel=2e-3)
 
 
+def test_live_input_is_recorded_in_volts_also_while_it_is_muted(sound_server: Any, tmp_path: Path) -> None:
+    then = f"""
+wait(lambda s: s.output.peak_v[0] > 1.9)
+engine.send(messages.Export(session, Path({str(tmp_path / "live.wav")!r})))
+told = []
+while not told or told[-1].done_frames < 48_000:
+    told += engine.reports()
+    time.sleep(0.01)
+engine.send(messages.CancelExport())
+while told[-1].state == "running":
+    told += engine.reports()
+    time.sleep(0.01)
+print(told[-1].text, flush=True)
+"""
+    with (
+        playing(sound_server, "feed", "60", "0.02"),
+        sound_server.start(DESK, "", then, str(tmp_path / "log")) as desk,
+    ):
+        out, trouble = desk.communicate(timeout=90)
+    assert desk.returncode == 0, trouble[-2000:]
+    assert "live.wav: 1." in out
+    samples, _ = soundfile.read(tmp_path / "live.wav")
+    # 0.2 V through a gain of 10 and the pole at 1591.5 Hz, of 10 V
+    gain = 10 / math.sqrt(1 + (200 / 1591.549) ** 2)
+    assert np.abs(samples[:, 0]).max() == pytest.approx(0.02 * gain, rel=2e-3)
+
+
 def test_a_howl_round_is_muted_and_said(sound_server: Any, tmp_path: Path) -> None:
     # what is played is recorded again: a loop with the stage's gain of 10 in it
     then = """
@@ -130,3 +158,25 @@ print("quiet", flush=True)
     assert any(line.startswith("muted") and "howl-round at" in line for line in lines), lines
     assert "quiet\n" in lines
     assert any("lower the volume or move the microphone" in line for line in lines)
+
+
+def test_a_howl_round_that_stands_at_its_limit_from_the_first_moment_is_muted(
+    sound_server: Any, tmp_path: Path
+) -> None:
+    # a loud tone is being played while the loop is closed: it clips at once, and goes on without the tone
+    then = """
+wait(lambda s: s.input.peak_v[0] > 4.9)
+engine.send(messages.SetMute(False))
+wait(lambda s: not s.muted)
+print("open", flush=True)
+print("muted", wait(lambda s: s.muted).mute_reason, flush=True)
+"""
+    with (
+        playing(sound_server, "ears", "60", "0.5") as tone,
+        sound_server.start(DESK, "ears_mon", then, str(tmp_path / "log")) as desk,
+    ):
+        assert desk.stdout.readline() == "open\n", desk.stderr.read()[-2000:]
+        tone.kill()
+        out, trouble = desk.communicate(timeout=90)
+    assert desk.returncode == 0, trouble[-2000:]
+    assert "muted howl-round at" in out

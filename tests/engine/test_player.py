@@ -202,6 +202,18 @@ def test_samples_above_full_scale_are_limited_and_counted(make_rig):
     assert rig.player.report().limited_blocks == 0
 
 
+def test_what_is_limited_is_quieter_too_for_a_moment(make_rig):
+    rig = make_rig(np.full((40000, 1), 0.9), loop=True)
+    rig.player.play()
+    assert rig.hear(1024)[-1, 0] == 1.0
+    rig.player.duck(-6.0)
+    heard = rig.hear(512)[:, 0]
+    assert heard[-1] == pytest.approx(10 ** (-6 / 20), rel=1e-6)
+    assert np.abs(np.diff(heard)).max() <= 0.5 * np.pi / 2 / 160 + 1e-6  # 20 ms
+    rig.player.duck(0.0)
+    assert rig.hear(512)[-1, 0] == 1.0
+
+
 @pytest.mark.parametrize("value", [math.nan, math.inf, -math.inf])
 def test_what_is_not_a_number_is_muted_reported_and_can_be_started_again(make_rig, value):
     rig = make_rig()

@@ -164,16 +164,19 @@ if __name__ == "__main__":
 """
 
 
+SESSION = """
+from pathlib import Path
+from preview.circuit.library import find_stage
+from preview.session import Session
+from preview.values.levels import parse_full_scale
+stage = find_stage("inverting-low-pass")
+session = Session(Path("{tone}"), stage, stage.supply, parse_full_scale("10 V"))
+"""
+
+
 @pytest.mark.slow
 def test_the_engine_and_its_worker_end_within_a_second_when_the_desk_is_killed(tone, tmp_path):
-    (tmp_path / "tests_session.py").write_text(
-        "from pathlib import Path\n"
-        "from preview.circuit.library import find_stage\n"
-        "from preview.session import Session\n"
-        "from preview.values.levels import parse_full_scale\n"
-        "stage = find_stage('inverting-low-pass')\n"
-        f"session = Session(Path({str(tone)!r}), stage, stage.supply, parse_full_scale('10 V'))\n"
-    )
+    (tmp_path / "tests_session.py").write_text(SESSION.format(tone=str(tone)))
     script = tmp_path / "desk.py"
     script.write_text(PARENT)
     desk = subprocess.Popen(
@@ -192,6 +195,62 @@ def test_the_engine_and_its_worker_end_within_a_second_when_the_desk_is_killed(t
     while (_runs(pid) or _runs(children[0])) and time.monotonic() < began + DEADLINE_S:
         time.sleep(0.005)  # polling a process, with a deadline
     assert time.monotonic() - began < 1.0
+
+
+@pytest.mark.slow
+def test_an_engine_that_is_compiling_ends_within_a_second_when_the_desk_is_killed(tone, tmp_path):
+    (tmp_path / "tests_session.py").write_text(SESSION.format(tone=str(tone)))
+    script = tmp_path / "desk.py"
+    script.write_text(PARENT)
+    empty = {"NUMBA_CACHE_DIR": str(tmp_path / "kernels")}
+    desk = subprocess.Popen(
+        [sys.executable, str(script), str(tmp_path / "log")],
+        stdout=subprocess.PIPE,
+        text=True,
+        env={**os.environ, **empty},
+    )
+    assert desk.stdout is not None
+    pid = int(desk.stdout.readline())
+    assert desk.stdout.readline() == "up\n"  # its first circuit is still being compiled, for half a minute
+    began = time.monotonic()
+    desk.kill()
+    desk.wait()
+    while _runs(pid) and time.monotonic() < began + DEADLINE_S:
+        time.sleep(0.005)  # polling a process, with a deadline
+    assert time.monotonic() - began < 1.0
+
+
+BUSY = """
+import multiprocessing, sys, time
+from preview.engine.door import end_with_parent
+
+def busy():
+    end_with_parent(0.1)
+    print("busy", flush=True)
+    while True:
+        pass
+
+if __name__ == "__main__":
+    child = multiprocessing.get_context("spawn").Process(target=busy)
+    child.start()
+    print(child.pid, flush=True)
+    time.sleep(60)
+"""
+
+
+def test_a_process_that_listens_to_nothing_ends_with_its_parent(tmp_path):
+    script = tmp_path / "parent.py"
+    script.write_text(BUSY)
+    parent = subprocess.Popen([sys.executable, str(script)], stdout=subprocess.PIPE, text=True)
+    assert parent.stdout is not None
+    pid = int(parent.stdout.readline())
+    assert parent.stdout.readline() == "busy\n"
+    parent.kill()
+    parent.wait()
+    deadline = time.monotonic() + DEADLINE_S
+    while _runs(pid) and time.monotonic() < deadline:
+        time.sleep(0.005)  # polling a process, with a deadline
+    assert not _runs(pid)
 
 
 def _children(pid: int) -> list[int]:

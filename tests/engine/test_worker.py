@@ -4,8 +4,10 @@ from __future__ import annotations
 
 import itertools
 import math
+import threading
 import time
 from collections.abc import Callable, Iterator
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -14,13 +16,16 @@ import soundfile
 
 from preview.audio.sink import FileSink
 from preview.circuit.library import find_stage
+from preview.circuit.netlist import netlist
 from preview.engine.commands import Export
-from preview.engine.jobs import DeviceJob, ExportJob, MarksJob, OverviewJob, run
+from preview.engine.jobs import DeviceJob, ExportJob, MarksJob, OverviewJob, ProbeJob, inner_nodes, run
 from preview.engine.messages import ClipMarks, DeviceList, ExportState, Overview
 from preview.engine.passages import Material
 from preview.engine.render import open_source, render
 from preview.engine.worker import Worker
 from preview.errors import AudioFileError
+from preview.network.operating import operating_point
+from preview.network.transfer import response
 from preview.session import Session
 from preview.values.levels import parse_full_scale
 from preview.values.stimulus import parse_stimulus
@@ -226,6 +231,51 @@ def test_a_worker_that_was_killed_is_started_again(worker, tmp_path):
     worker._process.join(5)
     worker.submit("overview", OverviewJob(audio))
     wait_for(worker, lambda t: isinstance(t, Overview))
+
+
+def test_a_virtual_ground_leaves_ground_by_what_the_clipped_output_cannot_hold(tmp_path):
+    """Millman's theorem at the node between R1 (10k) and R2 (100k): (3 V / R1 + 15 V / R2) / (1/R1 + 1/R2)."""
+    tone = np.sin(2 * np.pi * 20 * np.arange(RATE_HZ) / RATE_HZ)[:, None]
+    audio = write(tmp_path / "tone.wav", 0.3 * tone)
+    probe = ProbeJob("A", session_of(audio).netlist(), Material(path=audio, full_scale_v=10.0))
+    peaks, told = last(probe)
+    assert (peaks.letter, peaks.nodes, peaks.done_ratio) == ("A", ("sum",), 1.0)
+    assert 0.0 < told[0].done_ratio < 1.0, "known from the start on"
+    expected_v = (3.0 / 10e3 - 15.0 / 100e3) / (1 / 10e3 + 1 / 100e3)
+    assert peaks.high_v[0] == pytest.approx(expected_v, rel=2e-3)
+    assert peaks.low_v[0] == pytest.approx(-expected_v, rel=2e-3)
+    quiet = Material(path=audio, full_scale_v=1.0)
+    assert max(last(ProbeJob("A", probe.netlist, quiet))[0].high_v) < 1e-9, "it holds below the rails"
+
+
+@pytest.mark.parametrize("kind", ["ideal", "TL072"])
+def test_peaks_at_inner_nodes_are_those_of_the_exact_circuit(kind):
+    stage = find_stage("sallen-key-low-pass")
+    stage = stage.with_part(replace(stage.opamps[0], type=kind))
+    circuit = netlist(stage)
+    tone = parse_stimulus("sine 2971 1V")
+    peaks, _ = last(ProbeJob("A", circuit, Material(stimulus=tone, region=(24_000, 48_000))))
+    rest_v = operating_point(circuit).volts
+    for node, high_v, low_v in zip(peaks.nodes, peaks.high_v, peaks.low_v, strict=True):
+        gain = abs(response(replace(circuit, output_node=node), np.array([2971.0]))[0])
+        assert high_v - rest_v[node] == pytest.approx(gain, rel=2e-3)
+        assert low_v - rest_v[node] == pytest.approx(-gain, rel=2e-3)
+
+
+def test_what_is_held_or_metered_is_no_inner_node():
+    assert inner_nodes(netlist(find_stage("single-supply-gain"))) == ("plus", "bias", "minus", "leg")
+    driven = netlist(find_stage("inverting-low-pass"), source_ohm=600.0)
+    assert inner_nodes(driven) == ("in", "sum"), "behind a source that is not ideal, in is not what is read"
+
+
+def test_a_worker_is_closed_without_a_fault_in_the_thread_that_listens_to_it(worker, monkeypatch):
+    faults = []
+    monkeypatch.setattr(threading, "excepthook", faults.append)
+    worker.submit("devices", DeviceJob())
+    wait_for(worker, lambda t: isinstance(t, DeviceList))
+    worker.close()
+    assert not worker._reader.is_alive()
+    assert not faults
 
 
 def test_devices_are_listed_or_it_is_said_why_not(worker):

@@ -15,7 +15,6 @@ from preview.engine.messages import (
     KeepCandidate,
     ListenNull,
     SelectCandidate,
-    SetCircuit,
     SetMatch,
     SetPart,
     SetQuality,
@@ -293,15 +292,11 @@ def test_a_new_engine_gets_every_candidate(desk, engine) -> None:
     desk.parts.set(47e3)
     desk.candidates.hear("B")
     desk.method("match")()
-    new = type(engine)()
-    desk.resume(new)
-    first = new.sent[0]
-    assert isinstance(first, SetCircuit)
-    assert first.netlist.values["R1"] == 10e3, "it begins with A"
-    kept = {c.letter: c.netlist.values["R1"] for c in new.sent if isinstance(c, KeepCandidate)}
-    assert kept == {"B": 22e3, "C": 47e3}
-    assert SetMatch(True) in new.sent
-    assert SelectCandidate("B") in new.sent
+    began = desk.as_left()
+    assert began.letter == "B"
+    assert began.session.netlist().values["R1"] == 22e3
+    assert {letter: circuit.values["R1"] for letter, circuit in began.candidates} == {"A": 10e3, "C": 47e3}
+    assert began.match
 
 
 # ---- the screen ----

@@ -7,8 +7,10 @@ from dataclasses import replace
 
 import pytest
 
+from preview.circuit.drive import parse_source
 from preview.circuit.opamp import OpAmpReading
 from preview.circuit.parts import Supply
+from preview.engine.messages import NodePeaks, ProbeNodes
 from preview.meters.reading import LevelReading
 from preview.ui.app import DeskApp
 from preview.ui.desk import Desk
@@ -52,6 +54,39 @@ def test_nodes_have_their_direct_voltage_and_the_peaks_that_are_measured(desk, e
         ["sum", "3.00", "mV", "-"],
         ["out", "33.0", "mV", "12.5", "V"],
     ]
+
+
+def test_peaks_at_inner_nodes_are_asked_for_and_marked(desk, engine) -> None:
+    desk.figures.now = Figures(rest_v={"in": 0.0, "sum": 0.003, "out": 0.033, "gnd": 0.0})
+    desk.method("node_volts")()
+    assert engine.sent[-1] == ProbeNodes(True)
+    desk.hear_report(NodePeaks("A", ("sum",), (0.25,), (-1.5,), 0.4))
+    lines = node_lines(desk)
+    assert lines[2].split() == ["sum", "3.00", "mV", "1.50", "V*"]
+    assert lines[-1] == "* whole recording, 40 % so far"
+    desk.hear_report(NodePeaks("A", ("sum",), (0.25,), (-1.5,), 1.0))
+    assert node_lines(desk)[-1] == "* whole recording"
+    desk.parts.set(22e3)
+    assert "*" not in "".join(node_lines(desk)), "those were of another circuit"
+    desk.hear_report(NodePeaks("B", ("sum",), (0.25,), (-1.5,), 1.0))
+    assert "*" not in "".join(node_lines(desk)), "those are of another candidate"
+    desk.hear_report(NodePeaks("A", ("sum",), (0.25,), (-1.5,), 1.0))
+    desk.listening.set_region(0, 96_000)
+    assert "*" not in "".join(node_lines(desk)), "those were of the whole"
+    new = type(engine)()
+    desk.resume(new, desk.as_left())
+    assert ProbeNodes(True) in new.sent
+    desk.method("node_volts")()
+    assert new.sent[-1] == ProbeNodes(False)
+
+
+def test_behind_a_source_that_is_not_ideal_the_input_meter_is_at_the_source(desk, engine) -> None:
+    desk.change(replace(desk.session, source=parse_source("600")))
+    desk.figures.now = Figures(rest_v={"source": 0.0, "in": 0.0, "sum": 0.0, "out": 0.0})
+    desk.take(replace(engine.snapshot, input=LevelReading((1.0,), (2.5,), (0.5,))))
+    peaks = {line.split()[0]: line.split()[3:] for line in node_lines(desk)[1:]}
+    assert peaks["source"] == ["2.50", "V"]
+    assert peaks["in"] == ["-"]
 
 
 def test_the_direct_voltage_is_that_of_the_exact_circuit(desk) -> None:

@@ -217,6 +217,34 @@ def test_what_is_heard_is_exported_with_progress(desk, engine, tmp_path) -> None
     assert "exporting" not in head(desk)[2]
 
 
+def test_live_input_is_recorded_until_it_is_told_to_end(session, engine, tmp_path) -> None:
+    desk = Desk(replace(session, audio=None, live=True), engine)
+    desk.take(engine.snapshot)
+    question = desk.method("export")()
+    assert question.title == "Record what the stage puts out to"
+    assert question.understand(f"{tmp_path}/out.wav").startswith("from now on, half an hour at most, to ")
+    assert question.take(f"{tmp_path}/out.wav") == "recording to out.wav; W ends it"
+    assert isinstance(engine.sent[-1], Export)
+    desk.hear_report(ExportState("out.wav", 0, 0, "running"))
+    assert "recording 0:00.0" in head(desk)[2]
+    desk.hear_report(ExportState("out.wav", 600_000, 0, "running"))
+    assert "recording 0:12.5" in head(desk)[2]
+    assert desk.method("export")() == "the recording ends"
+    assert engine.sent[-1] == CancelExport()
+    said = desk.hear_report(ExportState("out.wav", 624_000, 624_000, "done", "out.wav: 13.00 s recorded"))
+    assert said == "done: out.wav: 13.00 s recorded"
+    assert "recording" not in head(desk)[2]
+
+
+def test_a_recording_has_ended_where_its_engine_has(session, engine) -> None:
+    desk = Desk(replace(session, audio=None, live=True), engine)
+    desk.take(engine.snapshot)
+    desk.hear_report(ExportState("out.wav", 600_000, 0, "running"))
+    assert desk.resume(engine, desk.as_left()) == "what was being written to a file is lost"
+    assert "recording" not in head(desk)[2]
+    assert desk.resume(engine, desk.as_left()) == ""
+
+
 @pytest.mark.parametrize(
     ("name", "error", "message"),
     [

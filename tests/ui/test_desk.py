@@ -13,12 +13,33 @@ from preview.circuit.drive import LoadModel
 from preview.circuit.library import find_stage, open_stages
 from preview.circuit.parts import Supply
 from preview.circuit.reader import parse_stage
-from preview.engine.messages import Pause, Play, Seek, SetAtEnd, SetCircuit, SetPart, SetRegion, SetVolume
+from preview.cli import _parser
+from preview.engine.messages import (
+    DeviceList,
+    DeviceRow,
+    KeepCandidate,
+    Pause,
+    Play,
+    Seek,
+    SelectCandidate,
+    SetAtEnd,
+    SetBypass,
+    SetCircuit,
+    SetDevice,
+    SetHeardChannels,
+    SetMatch,
+    SetMute,
+    SetPart,
+    SetRegion,
+    SetVolume,
+)
+from preview.engine.options import with_running
 from preview.errors import PartValueError
 from preview.session import AtEnd
 from preview.ui.changes import commands_between, render_command, with_setting
 from preview.ui.desk import Desk
 from preview.ui.opamps import with_opamp_type
+from preview.values.noise import NoiseSetting
 from preview.values.notation import parse_value
 from preview.values.quality import Quality
 
@@ -240,14 +261,49 @@ def test_a_new_engine_is_brought_to_where_the_old_one_was(desk, engine, clock) -
     desk.method("volume_up")()
     desk.listening.seek(96_000)
     desk.method("region_start")()
+    began = desk.as_left()
+    assert began.session.netlist().values["R1"] == 22e3
+    assert began.session.at_end is AtEnd.STOP
+    assert (began.start_volume_db, began.region, began.start_frame) == (-19.0, (96_000, 600_000), 96_000)
     new = type(engine)()
-    desk.resume(new)
-    assert isinstance(new.sent[0], SetCircuit)
-    assert new.sent[0].netlist.values["R1"] == 22e3
-    for command in (SetAtEnd(AtEnd.STOP), SetVolume(-19.0), SetRegion(96_000, 600_000), Seek(96_000)):
+    desk.resume(new, began)
+    assert new.sent == [SetBypass(True)], "it has all else already"
+    assert not desk.listening.playing, "sound starts by hand after a stop"
+
+
+def test_what_is_done_while_a_new_engine_starts_is_not_lost(desk, engine, clock) -> None:
+    began = desk.as_left()
+    desk.parts.set(22e3)
+    desk.method("candidate_keep")()
+    desk.parts.set(47e3)
+    desk.method("volume_up")()
+    desk.method("at_end")()
+    desk.method("match")()
+    desk.listening.seek(96_000)
+    desk.method("region_start")()
+    new = type(engine)()
+    desk.resume(new, began)
+    kept = {c.letter: c.netlist.values["R1"] for c in new.sent if isinstance(c, KeepCandidate)}
+    assert kept == {"A": 22e3, "B": 47e3}
+    assert new.sent.index(SelectCandidate("B")) > 1
+    for command in (
+        *(SetVolume(-19.0), SetAtEnd(AtEnd.STOP), SetMatch(True)),
+        *(SetRegion(96_000, 600_000), Seek(96_000)),
+    ):
         assert command in new.sent
-    assert new.snapshot.bypass
-    assert Play() not in new.sent, "sound starts by hand after a stop"
+    desk.parts.set(10e3)
+    assert new.sent[-1] == SetPart("R1", 10e3)
+
+
+def test_a_new_engine_is_as_mute_as_the_old_one_and_on_the_same_device(desk, engine, clock) -> None:
+    engine.say(muted=True, heard_channels=(2, 3))
+    desk.take(engine.snapshot)
+    row = DeviceRow("cellar", "ALSA", 0, 2, 48e3, False, False)
+    desk.hear_report(DeviceList((row,)))
+    desk.method("device")().take("cellar")
+    new = type(engine)()
+    desk.resume(new, desk.as_left())
+    assert new.sent == [SetDevice("cellar"), SetHeardChannels((2, 3)), SetMute(True)]
 
 
 def test_the_wall_of_the_output_is_the_nearer_rail(desk) -> None:
@@ -292,6 +348,14 @@ def test_the_render_command_repeats_the_session_to_the_last_digit(session) -> No
     assert ("--full-scale", "+18 dBu") in options
     assert ("--load", "600R") in options
     assert ("--supply", "12.0 -12.0") in options
+
+
+def test_the_render_command_carries_limits_taken_away_noise_and_power_on(session, tmp_path) -> None:
+    now = replace(session, without=("slew", "input range"), noise=NoiseSetting(40.0, 7), power_on=True)
+    words = shlex.split(render_command(now, session.stage))
+    options = _parser().parse_args(words[1:])
+    again = with_running(session, options)
+    assert (again.without, again.noise, again.power_on) == (now.without, now.noise, now.power_on)
 
 
 def test_the_render_command_names_every_stage_of_a_cascade(session) -> None:

@@ -27,7 +27,7 @@ from preview.engine.messages import (
     SetPart,
     SetVolume,
 )
-from preview.errors import UsageError
+from preview.errors import DeviceError, UsageError
 from preview.meters.reading import LevelReading
 from preview.ui.keymap import KeyMap
 from preview.ui.phrases import understood
@@ -263,15 +263,46 @@ def test_what_the_engine_says_is_said_and_cleaned(talk, engine) -> None:
     assert "cannot be restarted" in talk.say("restart")[0]
 
 
-def test_a_stopped_engine_is_started_again(session, engine, tmp_path) -> None:
-    new = type(engine)()
+def test_a_stopped_engine_is_replaced_and_one_that_stops_again_at_once_left_to_the_person(
+    session, engine, tmp_path
+) -> None:
+    second, third, began = type(engine)(), type(engine)(), []
+    engines = [second, third]
     out = io.StringIO()
-    desk = PlainDesk(session, engine, lines=io.StringIO(""), out=out, restart=lambda: new, config=tmp_path)
+    desk = PlainDesk(
+        *(session, engine),
+        lines=io.StringIO(""),
+        out=out,
+        restart=lambda left: began.append(left) or engines.pop(0),
+        config=tmp_path,
+    )
+    desk.obey("play")
+    desk.obey("R1=22k")
     engine.alive = False
     desk.poll()
-    desk.obey("restart")
     assert engine.closed
-    assert any(isinstance(command, SetCircuit) for command in new.sent)
+    assert began[0].session.netlist().values["R1"] == 22e3
+    assert desk.desk.link is second
+    assert second.sent == [Play()]
+    assert "the engine had stopped and runs again" in out.getvalue()
+    second.alive = False
+    desk.poll()
+    assert "ENGINE STOPPED: no sound. 'restart' starts it again" in out.getvalue()
+    desk.obey("restart")
+    assert desk.desk.link is third
+    assert third.sent == [], "sound starts by hand then"
+
+
+def test_an_engine_that_will_not_start_again_is_an_error_in_a_line(session, engine, tmp_path) -> None:
+    def fail(left: object) -> None:
+        raise DeviceError("no audio device", "plug one in")
+
+    out = io.StringIO()
+    desk = PlainDesk(session, engine, lines=io.StringIO(""), out=out, restart=fail, config=tmp_path)
+    engine.alive = False
+    desk.poll()
+    assert "error: no audio device" in out.getvalue()
+    assert "ENGINE STOPPED" in out.getvalue()
 
 
 # ---- from start to end ----
