@@ -148,6 +148,7 @@ def _checked(
 ) -> tuple[list[FileCheck], list[FileFailure], bool]:
     """Results and failures in the order of the files, and whether all was done."""
     from preview.engine.check.pool import check_all
+    from preview.engine.check.ready import compile_first, is_compiled
     from preview.engine.check.record import stamp
     from preview.engine.check.results import FileCheck, FileFailure
     from preview.engine.progress import Progress
@@ -170,6 +171,9 @@ def _checked(
 
     complete = True
     try:
+        if left and not is_compiled(plan):
+            say("  compiling the computation for this machine, once: a minute or two")
+            compile_first(plan)
         with closing(check_all([paths[i] for i in left], plan, workers, tell)) as results:
             for at, result in results:
                 place = left[at]

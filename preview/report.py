@@ -137,7 +137,7 @@ def _summary(report: CheckReport) -> list[_Block]:
         blocks.append(_Words("Every limit is kept.", "good"))
     for failure in report.failures:
         blocks.append(_Words(f"not checked: {failure.message}", "bad"))
-    for heads, rows in report.tables():
+    for heads, rows in report.tables(name_width=4096):
         blocks.append(_Rows(heads, rows))
     blocks.append(
         _Words(

@@ -91,6 +91,7 @@ def test_the_html_page_needs_nothing_else_and_holds_everything(capsys, recording
     ):
         assert words in found.text, words
     assert "<b>&`quiet`|.wav" not in text  # only escaped
+    assert f"<td>{recordings / 'loud.wav'}</td>" in text  # whole: a page has room for it
 
 
 def test_the_markdown_page_holds_its_pictures(capsys, recordings):

@@ -197,20 +197,23 @@ class Deviation:
 def deviation(netlist: Netlist, sample_rate_hz: float, quality: Quality) -> Deviation:
     """Largest deviation of the heard from the exact response, 10 Hz to 20 kHz or the edge of the flat band.
 
+    At rates of logs it begins at a hundredth of that edge.
+
     Where the circuit's own gain is more than 80 dB below its largest there is nothing to hear and to compare.
     """
     netlist = small_signal(netlist)
     top = min(20e3, PASSBAND_RATIO * sample_rate_hz)
-    f = np.geomspace(10.0, top, 160)
+    low = min(10.0, 0.01 * top)
+    f = np.geomspace(low, top, 160)
     exact = transfer.response(netlist, f)
     loud = np.abs(exact) > 1e-4 * np.abs(exact).max()
     if not loud.any():
-        return Deviation(0.0, 0.0, 10.0, top)
+        return Deviation(0.0, 0.0, low, top)
     ratio = heard(netlist, sample_rate_hz, quality, f[loud]) / exact[loud]
     return Deviation(
         float(np.abs(20.0 * np.log10(np.abs(ratio))).max()),
         float(np.abs(np.angle(ratio, deg=True)).max()),
-        10.0,
+        low,
         top,
     )
 

@@ -1,6 +1,7 @@
 """Logs of numbers as signals: text tables (CSV, TSV) with a time column, or a rate that is given.
 
-One unit in a column is a sample of 1.0, so the volts of full scale are the volts per unit. Rows are read as they
+One unit in a column is a sample of 1.0, so the volts of full scale are the volts per unit; a column called ``level
+[mV]`` states it. Rows are read as they
 come, in constant memory; a first pass counts them, finds the rate and looks whether any are missing.
 """
 
@@ -19,6 +20,7 @@ from preview.audio.files import CHANNELS_MAX, SAMPLE_RATE_MAX_HZ, FileInfo, reas
 from preview.audio.logtable import CHUNK_ROWS, Table, read_table
 from preview.audio.source import FileSource
 from preview.errors import AudioFileError
+from preview.values.levels import full_scale_comment, full_scale_in_comment, parse_full_scale
 
 __all__ = ["LOG_ENDINGS", "LOG_RATE_MIN_HZ", "LogFormat", "LogSource", "is_log", "open_signal"]
 
@@ -108,7 +110,7 @@ class LogSource:
             sample_rate_hz=_checked_rate(path, rate_hz or 0.0),
             format="text",
             subtype=", ".join(self._table.names[i] for i in self._columns),
-            comment=self._table.comment,
+            comment=self._comment(),
         )
         self.seek(0)
 
@@ -132,7 +134,8 @@ class LogSource:
         """What is wrong but not fatal, one plain line each."""
         if not self.non_finite_count:
             return self._warnings
-        found = f"{self.non_finite_count} cells hold no number; each was taken as the value before it"
+        count = self.non_finite_count
+        found = f"{count} {'cell holds' if count == 1 else 'cells hold'} no number; taken as the value before"
         return (*self._warnings, found)
 
     def read(self, samples_out: Real) -> int:
@@ -167,6 +170,15 @@ class LogSource:
         self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
     ) -> None:
         self.close()
+
+    def _comment(self) -> str:
+        """Its comment, with the full scale that its columns state where the comment states none."""
+        comment, unit = self._table.comment, self._table.volt_unit(self._columns)
+        if not unit or full_scale_in_comment(comment) is not None:
+            return comment
+        return "; ".join(
+            part for part in (full_scale_comment(parse_full_scale(f"1 {unit}")), comment) if part
+        )
 
     def _from(self, block: int) -> Iterator[Real]:
         """Chunks of numbers from one on, missing ones held."""

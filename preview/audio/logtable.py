@@ -31,8 +31,10 @@ _TIME_NAME = re.compile(
     r"(t|time|date|timestamp|elapsed|seconds?|sec)(?![a-z0-9])|date.?time|time.?stamp", re.IGNORECASE
 )
 _UNIT = re.compile(r"[\[(_ ,/](s|sec|seconds?|ms|us|µs|μs|ns|min|h)[\])]?\s*$")
+_VOLTS = re.compile(r"[\[(_ ,/]([numkµμ]?)V[\])]?\s*$")
 _BRACKET = re.compile(r"\s*[\[(][^\[(]*[\])]\s*$")
 _SECONDS = {"s": 1.0, "ms": 1e-3, "us": 1e-6, "µs": 1e-6, "μs": 1e-6, "ns": 1e-9, "min": 60.0, "h": 3600.0}
+_MICRO = str.maketrans("µμ", "uu")
 _CLOCK = re.compile(r"(\d+):(\d{1,2}):(\d{1,2}(?:[.,]\d+)?)")
 _EPOCH = datetime(1970, 1, 1)
 
@@ -98,6 +100,17 @@ class Table:
         """Seconds in one unit of the time column, by the unit in its name; 1 without one."""
         found = _UNIT.search(self.names[column])
         return _SECONDS.get(found[1], 1.0) if found is not None else 1.0
+
+    def volt_unit(self, columns: Sequence[int]) -> str:
+        """The unit of voltage in the names of some columns, such as ``mV``; empty where none of them has one."""
+        found = [_VOLTS.search(self.names[i]) for i in columns]
+        units = {one[1].translate(_MICRO) + "V" if one is not None else "V" for one in found}
+        if len(units) > 1:
+            raise AudioFileError(
+                f"{self.path}: its columns are not in one unit: {', '.join(self.names[i] for i in columns)}",
+                "choose one of them with --column, or bring them to one unit",
+            )
+        return units.pop() if any(found) else ""
 
     def time_resolution_s(self, column: int) -> float:
         """Last digit of the times as they are written [s]."""

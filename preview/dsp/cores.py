@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp import kernels, macro_kernels, recur_kernels, regime_kernels
+from preview.dsp import kernels, macro_kernels, recur_kernels, regime_kernels, visit_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
 from preview.dsp.rest import resting_state
@@ -35,11 +35,33 @@ REGIMES = 48
 """Regimes whose matrices are kept."""
 
 
+class VisitLog:
+    """When op-amps came to their limits and left them, as the running kernels note it, once there is room for it."""
+
+    def __init__(self) -> None:
+        self.rows: Real = np.zeros((0, visit_kernels.LOG))
+        self.written: NDArray[np.int64] = np.zeros(2, dtype=np.int64)
+
+    def begin(self, rows: int) -> None:
+        """Note visits from now on; ``rows`` is a row for each step, channel and op-amp between two ``take``."""
+        self.rows = np.zeros((rows, visit_kernels.LOG))
+        self.written[...] = 0
+
+    def take(self) -> list[list[float]]:
+        """What was noted since the last time; see ``visit_kernels`` for the columns."""
+        count = int(self.written[0])
+        self.written[...] = 0
+        return self.rows[:count].tolist() if count else []
+
+
 class Core(Protocol):
     """The running circuit between the oversampling filters."""
 
+    log: VisitLog
+    """Visits to limits."""
+
     def statistics(self) -> Real:
-        """Running statistics since ``clear``, shape (channels, op-amps, ``kernels.STATS``), rates per step."""
+        """Running statistics since ``clear``, shape (channels, op-amps, ``visit_kernels.STATS``), rates per step."""
 
     def values_of(self, netlist: Netlist) -> Real:
         """Values in this core's order, shape (branches,)."""
@@ -104,7 +126,8 @@ class IdealCore:
         self._n, self._k = n, k
         self._low = np.array([o.low_v for o in netlist.opamps])
         self._high = np.array([o.high_v for o in netlist.opamps])
-        self.stats = np.zeros((c, k, kernels.STATS))
+        self.stats = np.zeros((c, k, visit_kernels.STATS))
+        self.log = VisitLog()
         self._state = np.zeros((c, n + 3 * k + 3))
         self._asked, self._limited = np.zeros((c, k)), np.zeros((c, k), dtype=np.bool_)
         self._room = (
@@ -145,6 +168,8 @@ class IdealCore:
             at,
             leg_steps,
             *self._room,
+            self.log.rows,
+            self.log.written,
         )
 
     def statistics(self) -> Real:
@@ -156,8 +181,8 @@ class IdealCore:
         s = self.stats[:, opamp]
         return _headroom_db(
             [
-                (float(s[:, kernels.HIGH].max()), float(self._high[opamp])),
-                (-float(s[:, kernels.LOW].min()), -float(self._low[opamp])),
+                (float(s[:, visit_kernels.HIGH].max()), float(self._high[opamp])),
+                (-float(s[:, visit_kernels.LOW].min()), -float(self._low[opamp])),
             ]
         )
 
@@ -169,11 +194,11 @@ class IdealCore:
         """See ``Core``."""
         self.stats[...] = 0.0
         y = self._state[:, self._n : self._n + self._k]
-        self.stats[:, :, kernels.HIGH] = self.stats[:, :, kernels.LOW] = y
+        self.stats[:, :, visit_kernels.HIGH] = self.stats[:, :, visit_kernels.LOW] = y
 
     def unsolved(self) -> float:
         """See ``Core``."""
-        return float(self.stats[:, :, kernels.UNSOLVED].sum())
+        return float(self.stats[:, :, visit_kernels.UNSOLVED].sum())
 
     def first_name(self) -> str:
         """See ``Core``."""
@@ -227,7 +252,8 @@ class MacroCore:
         rows = size + count + 1 + 2 * ports
         self._n, self._k, self._walls = n, k, walls
         self._fixed = model.fixed_limits()
-        self.stats = np.zeros((c, max(k, 1), kernels.STATS))
+        self.stats = np.zeros((c, max(k, 1), visit_kernels.STATS))
+        self.log = VisitLog()
         self._state = np.zeros((c, size))
         self._kinds, self._ranges = np.zeros((c, k), dtype=np.int64), np.zeros((c, k), dtype=np.int64)
         self._extremes = np.zeros((c, k + walls, 3))
@@ -261,8 +287,8 @@ class MacroCore:
         )
         self._setting, self._factor = noise, factor
         self._noise: NoiseSource | None = None
-        self._noise_memory: Real | None = None
-        self._steps = 0
+        self._noise_memory: Real = np.zeros(0)
+        self._noise_at: NDArray[np.int64] = np.zeros(1, dtype=np.int64)  # steps since the beginning
         self._added = np.zeros((c, 0, 0))
         self._matrices: Matrices | None = None
 
@@ -276,6 +302,8 @@ class MacroCore:
             from preview.dsp.noise import NoiseSource  # loads scipy.linalg, which nothing else here needs
 
             self._noise = NoiseSource(self._model, values[-1], self._setting, self._factor)
+            if not self._noise_memory.size:
+                self._noise_memory = self._noise.take_over(None, len(self._state))
         return self._prepared(self._model.equations(values), values)
 
     def power_on(self, values: Real, shares: Real, steps: int) -> Matrices:
@@ -295,7 +323,7 @@ class MacroCore:
 
     def unsolved(self) -> float:
         """See ``Core``."""
-        return float(self.stats[:, :, kernels.UNSOLVED].sum())
+        return float(self.stats[:, :, visit_kernels.UNSOLVED].sum())
 
     def first_name(self) -> str:
         """See ``Core``."""
@@ -359,6 +387,8 @@ class MacroCore:
             self._store,
             self._room,
             self._tracks,
+            self.log.rows,
+            self.log.written,
         )
 
     def _noise_of(self, steps: int) -> Real:
@@ -370,8 +400,8 @@ class MacroCore:
             self._added = np.zeros((channels, self._model.size + 1, steps))
         self._noise_memory = self._noise.take_over(self._noise_memory, channels)
         for c in range(channels):
-            self._noise.fill(c, self._steps, steps, self._noise_memory[c], self._added[c])
-        self._steps += steps
+            self._noise.fill(c, int(self._noise_at[0]), steps, self._noise_memory[c], self._added[c])
+        self._noise_at += steps
         return self._added
 
     def headroom_db(self, opamp: int) -> float:
@@ -401,7 +431,8 @@ class MacroCore:
 
     def moving(self) -> tuple[NDArray[Any], ...]:
         """See ``Core``."""
-        return self._state, self._kinds, self._ranges, self.stats, self._extremes, self._junctions
+        noise = (self._noise_at, self._noise_memory)
+        return self._state, self._kinds, self._ranges, self.stats, self._extremes, self._junctions, *noise
 
     def reset(self, matrices: Matrices) -> None:
         """The DC operating point without a signal."""
@@ -415,7 +446,7 @@ class MacroCore:
         self._kinds[...], self._ranges[...] = rest.kinds, rest.ranges
         self._junctions[...] = 0.0
         self._junctions[:, 0] = rest.junctions
-        self._steps, self._noise_memory = 0, None
+        self._noise_at[...], self._noise_memory[...] = 0, 0.0
         self._heights[...] = rest.heights
         self._rails, self._wall_limits = matrices[9][-1], matrices[10][-1]
         self._extremes[...] = self._heights[:, None]
@@ -430,17 +461,19 @@ class MacroCore:
         """See ``Core``."""
         k = self._k
         currents, pins = self._extremes[:, k : 2 * k], self._extremes[:, 2 * k : 3 * k]
-        self.stats[:, :k, kernels.HIGH] = pins[:, :, 0]
-        self.stats[:, :k, kernels.LOW] = pins[:, :, 1]
-        self.stats[:, :k, kernels.CURRENT] = np.maximum(currents[:, :, 0], -currents[:, :, 1])
+        self.stats[:, :k, visit_kernels.HIGH] = pins[:, :, 0]
+        self.stats[:, :k, visit_kernels.LOW] = pins[:, :, 1]
+        self.stats[:, :k, visit_kernels.CURRENT] = np.maximum(currents[:, :, 0], -currents[:, :, 1])
         return self.stats
 
 
 def _beyond_belief(states: Real) -> int | None:
     """The state, of (channels, states), that is no number or too large to be one; None where there is none."""
-    if states.size == 0 or (states.max() < BEYOND_BELIEF and states.min() > -BEYOND_BELIEF):
+    if np.vdot(states, states) < BEYOND_BELIEF**2:  # of no number this is not true
         return None
-    worst = np.abs(states).max(axis=0)
+    worst = np.abs(states).max(axis=0, initial=0.0)
+    if np.all(worst < BEYOND_BELIEF):
+        return None
     return int(np.argmax(np.where(np.isfinite(worst), worst, np.inf)))
 
 

@@ -1,20 +1,38 @@
-"""When each op-amp came to a limit and left it: the stage is run, and run again finely where it limited.
+"""When each op-amp came to a limit and left it, from the log that the running kernels keep.
 
-The running statistics say how often a limit was touched and for how long in all, not when. Where an op-amp comes to a
-rail once and stays, or leaves it once, that gives the time; where more happens, the piece of signal is run again in
-halves of halves, down to a frame, from a state kept at its start. Samples do not depend on how the signal is cut, so
-the second run is the first one, seen from nearer.
+A row of the log is a step of the computation, a sixteenth of a frame or so, in which an op-amp came to a limit or left
+it, with the time that it was there. Where it came to a limit once and stays, or leaves it once, that gives the time
+exactly; several visits within one step share its time evenly.
 """
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Literal
 
 from preview.circuit.opamp import OpAmpReading
-from preview.dsp import kernels
+from preview.dsp import visit_kernels
 from preview.dsp.block import Volts
 from preview.dsp.stage import BLOCK_FRAMES, Snapshot, StageProcessor
+from preview.dsp.visit_kernels import (
+    AT_CURRENT,
+    AT_RAIL,
+    AWAY,
+    CHANNEL,
+    CURRENT_LIMIT,
+    EXITS,
+    NOW,
+    OPAMP,
+    OUT_OF_RANGE,
+    RAIL,
+    SLEWED,
+    SLEWS,
+    STEP,
+    VISITS,
+    VOLTAGE,
+    WAS,
+)
 
 __all__ = ["PIECE_FRAMES", "EventFinder", "LimitEvent", "LimitKind"]
 
@@ -27,15 +45,12 @@ Key = tuple[LimitKind, int, int]
 PIECE_FRAMES = 16 * BLOCK_FRAMES
 """Most frames that are run at a time, between two kept states."""
 
-_COLUMNS: tuple[tuple[LimitKind, int, int], ...] = (
-    ("rail", kernels.EVENTS, kernels.CLIPPED),
-    ("current", -1, kernels.STARVED),
-    ("range", kernels.OUTSIDE_EVENTS, kernels.OUTSIDE),
+_KINDS: tuple[tuple[LimitKind, int, int, int], ...] = (
+    ("rail", RAIL, VISITS, AT_RAIL),
+    ("current", CURRENT_LIMIT, -1, AT_CURRENT),
+    ("range", OUT_OF_RANGE, EXITS, AWAY),
 )
-"""Limits in the order of ``Core.limited``: columns of the count of visits, -1 where there is none, and of the time."""
-
-AT_LIMIT = 1.0 - 1e-9
-"""Share of the slew rate from which on an op-amp is taken to slew."""
+"""Limits in the order of ``Core.limited``: bit, column of visits (-1 where there is none), column of time."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -70,51 +85,21 @@ class _Visit:
 
 
 @dataclass(slots=True)
-class _Stay:
-    """What the statistics of some frames show of one op-amp and one kind of limit."""
+class _Slewing:
+    """Frames in which an op-amp slewed, one after the other."""
 
-    kind: LimitKind
-    """The limit."""
-    was: bool
-    """At it before these frames."""
-    now: bool
-    """At it after them."""
-    begun: int
-    """Visits begun in them."""
-    steps: float
-    """Time at it [steps]."""
-    unsure: bool
-    """Visits are not counted, and there may have been more than can be seen."""
-
-
-@dataclass(slots=True)
-class _Seen:
-    """What the statistics of some frames show of one op-amp in one channel."""
-
-    c: int
-    """Channel, from 0."""
-    j: int
-    """Which op-amp."""
-    slews: bool
-    """It slewed."""
-    stays: list[_Stay]
-    """Limits that it was at."""
-    stats: list[float]
-    """All statistics."""
-
-    @property
-    def plain(self) -> bool:
-        """Whether the times follow: it came to each limit or left it once at most, and did not slew."""
-        return not self.slews and all(2 * s.begun + s.was - s.now <= 1 and not s.unsure for s in self.stays)
+    first: int
+    end: int | None
+    """The frame after the last; None while it slews."""
 
 
 class EventFinder:
-    """Runs a stage and notes each visit of an op-amp to a limit, with its times to within a frame.
+    """Runs a stage and notes each visit of an op-amp to a limit, with its times.
 
     Parameters
     ----------
     stage : StageProcessor
-        At rest, or where it shall begin.
+        At rest, or where it shall begin; no part may glide.
     """
 
     def __init__(self, stage: StageProcessor) -> None:
@@ -126,53 +111,54 @@ class EventFinder:
         self.before: Snapshot = ()
         """The stage as it was before the frames last run."""
         self._open: dict[Key, _Visit] = {}
+        self._slewing: dict[tuple[int, int], _Slewing] = {}
         self._delay_frames = stage.filters.circuit_delay_frames
-        models = [o.model for o in stage.netlist.opamps]
-        ways = [(m.slew_up_v_per_s * stage.step_s, m.slew_down_v_per_s * stage.step_s) for m in models]
-        self._slews = [(min(way), max(way)) for way in ways]
+        self._middle_v = [0.5 * (o.high_v + o.low_v) for o in stage.netlist.opamps]
+        opamps, core = len(stage.netlist.opamps), stage.core
+        core.log.begin(stage.channels * opamps * PIECE_FRAMES * stage.filters.factor)
+        at_limits = core.limited().tolist()
+        voltages_v = core.statistics()[:, :, visit_kernels.HIGH].tolist()
+        for c in range(stage.channels):
+            for j in range(opamps):
+                for (kind, *_), there in zip(_KINDS, at_limits[c][j], strict=True):
+                    if there:
+                        side = self._side(j, voltages_v[c][j]) if kind == "rail" else ""
+                        self._open[kind, c, j] = _Visit(self._time_s(0), side)
 
     def process(self, volts_in: Volts, volts_out: Volts | None) -> tuple[OpAmpReading, ...]:
         """Run the next ``volts_in``, at most ``PIECE_FRAMES``; the readings of these frames.
 
         ``volts_out`` is filled; with None the output is left out, from the first frames to the last.
         """
-        stage, frames = self.stage, len(volts_in)
+        stage, log = self.stage, self.stage.core.log
         self.before = stage.snapshot()
-        was = stage.core.limited().tolist()
         stage.clear_readings()
+        log.take()
         if volts_out is not None:
             stage.process(volts_in, volts_out)
         else:
-            for first in range(0, frames, BLOCK_FRAMES):
-                count = min(BLOCK_FRAMES, frames - first)
+            for first, count in _blocks(len(volts_in)):
                 stage.raise_rate(volts_in, first, count)
                 stage.run_core(0, count)
                 stage.keep_rate(count)
-        seen = self._seen(was, frames)
-        if all(one.plain for one in seen):
-            self._note(self.frames, frames, seen)
-        else:
-            after = stage.snapshot()
-            stage.restore(self.before)
-            for first in range(0, frames, BLOCK_FRAMES):
-                count = min(BLOCK_FRAMES, frames - first)
-                stage.raise_rate(volts_in, first, count)
-                self._look(self.frames + first, 0, count)
-                stage.keep_rate(count)
-            stage.restore(after)
-        self.frames += frames
+        for row in log.take():
+            self._note(row)
+        self.frames += len(volts_in)
+        if self._slewing:
+            self._end_slewing()
         return stage.readings()
 
     @property
     def limited(self) -> bool:
         """Whether there has been a visit, ended or not, since the events were last emptied."""
-        return bool(self.events or self._open)
+        return bool(self.events or self._open or self._slewing)
 
     def first(self) -> tuple[str, LimitKind]:
         """Which op-amp came to which limit first; call only where ``limited``."""
         names = [o.designator for o in self.stage.netlist.opamps]
-        begun = [(e.start_s, e.designator, e.kind) for e in self.events]
+        begun: list[tuple[float, str, LimitKind]] = [(e.start_s, e.designator, e.kind) for e in self.events]
         begun += [(visit.start_s, names[j], kind) for (kind, _, j), visit in self._open.items()]
+        begun += [(self._time_s(one.first), names[j], "slew") for (_, j), one in self._slewing.items()]
         frame_s = 1.0 / self.stage.sample_rate_hz  # of the slew rate whole frames are counted
         return min(begun, key=lambda one: one[0] + (frame_s if one[2] == "slew" else 0.0))[1:]
 
@@ -180,6 +166,9 @@ class EventFinder:
         """End what is still at a limit where the signal now is."""
         for key in list(self._open):
             self._end(key, self._time_s(self.frames))
+        for (c, j), one in self._slewing.items():
+            self._slewed(c, j, one.first, self.frames if one.end is None else one.end)
+        self._slewing.clear()
 
     def peak_s(self, before: Snapshot, frame: int, volts_in: Volts, opamp: int, rest_v: float) -> float:
         """When an op-amp's output was farthest from rest in some frames, to within a frame [s].
@@ -197,14 +186,14 @@ class EventFinder:
         after = stage.snapshot()
         stage.restore(before)
         farthest, best = -1.0, 0
-        for first in range(0, len(volts_in), BLOCK_FRAMES):
-            count = min(BLOCK_FRAMES, len(volts_in) - first)
+        for first, count in _blocks(len(volts_in)):
             stage.raise_rate(volts_in, first, count)
             for i in range(count):
                 stage.clear_readings()
                 stage.run_core(i, 1)
                 stats = stage.core.statistics()[:, opamp]
-                far = max(stats[:, kernels.HIGH].max() - rest_v, rest_v - stats[:, kernels.LOW].min())
+                high, low = stats[:, visit_kernels.HIGH].max(), stats[:, visit_kernels.LOW].min()
+                far = max(high - rest_v, rest_v - low)
                 if far > farthest:
                     farthest, best = far, first + i
             stage.keep_rate(count)
@@ -215,81 +204,57 @@ class EventFinder:
         """Time of the recording that the circuit has come to after so many frames [s]."""
         return (frames - self._delay_frames) / self.stage.sample_rate_hz
 
-    def _look(self, base: int, first: int, count: int) -> None:
-        """Run some frames of the block that begins at frame ``base``, and halves of them until all is plain."""
-        core = self.stage.core
-        kept = [a.copy() for a in core.moving()]
-        was = core.limited().tolist()
-        self.stage.clear_readings()
-        self.stage.run_core(first, count)
-        seen = self._seen(was, count)
-        if count == 1 or all(one.plain for one in seen):
-            self._note(base + first, count, seen)
-            return
-        for now, then in zip(core.moving(), kept, strict=True):
-            now[...] = then
-        half = count // 2
-        self._look(base, first, half)
-        self._look(base, first + half, count - half)
+    def _side(self, opamp: int, voltage_v: float) -> Side:
+        return "high" if voltage_v >= self._middle_v[opamp] else "low"
 
-    def _seen(self, was: list[list[list[bool]]], frames: int) -> list[_Seen]:
-        """What the statistics show of every op-amp that was, is, or comes to a limit in these frames."""
-        seen = []
-        core = self.stage.core
-        now = core.limited().tolist()
-        for c, of_channel in enumerate(core.statistics().tolist()):
-            for j, before in enumerate(was[c]):
-                stats, after = of_channel[j], now[c][j]
-                # one that is faster one way may pass its slower limit that way; slewing, it moves at just its limit
-                fastest, (slow, fast) = stats[kernels.SLEW], self._slews[j]
-                slews = slow * AT_LIMIT <= fastest <= slow / AT_LIMIT or fastest >= AT_LIMIT * fast
-                stays = []
-                for i, (kind, counted, timed) in enumerate(_COLUMNS):
-                    steps, begins = stats[timed], after[i] and not before[i]
-                    begun = int(stats[counted]) if counted >= 0 else int(steps > 0.0 and not before[i])
-                    begun = max(begun, begins)
-                    if begun or before[i] or after[i]:
-                        unsure = counted < 0 and 0.0 < steps < frames * self.stage.filters.factor - 0.5
-                        stays.append(_Stay(kind, before[i], after[i], begun, steps, unsure))
-                if slews or stays:
-                    seen.append(_Seen(c, j, slews, stays, stats))
-        return seen
+    def _note(self, row: list[float]) -> None:
+        """Take a row of the log of the frames from ``frames`` on into account."""
+        c, j, was, now = int(row[CHANNEL]), int(row[OPAMP]), int(row[WAS]), int(row[NOW])
+        factor = self.stage.filters.factor
+        if row[SLEWED]:
+            frame = self.frames + int(row[STEP]) // factor
+            end = None if now & SLEWS else frame + 1
+            one = self._slewing.get((c, j))
+            if one is not None and (one.end is None or one.end >= frame):
+                one.end = end
+            else:
+                if one is not None and one.end is not None:
+                    self._slewed(c, j, one.first, one.end)
+                self._slewing[c, j] = _Slewing(frame, end)
+        for kind, bit, counted, timed in _KINDS:
+            before, after, time = bool(was & bit), bool(now & bit), row[timed]
+            begun = int(row[counted]) if counted >= 0 else int(time > 0.0 and not before)
+            if kind == "current" and before and after and time < visit_kernels.ALMOST:
+                begun = 1  # it left it and came back
+            begun = max(begun, after and not before)
+            if begun or before != after:
+                self._lay(row, (kind, c, j), before, after, begun, min(time, 1.0))
 
-    def _note(self, frame: int, count: int, seen: list[_Seen]) -> None:
-        """Take what was seen in some frames into account."""
-        start_s, end_s = self._time_s(frame), self._time_s(frame + count)
-        for kind, c, j in [key for key in self._open if key[0] == "slew"]:
-            if not any(one.slews for one in seen if (one.c, one.j) == (c, j)):
-                self._end((kind, c, j), start_s)
-        for one in seen:
-            if one.slews:
-                self._open.setdefault(("slew", one.c, one.j), _Visit(start_s))
-            for stay in one.stays:
-                self._lay(one, stay, start_s, end_s)
-
-    def _lay(self, one: _Seen, stay: _Stay, start_s: float, end_s: float) -> None:
-        """Lay the visits of some frames in order; several within one frame share its time evenly."""
-        at_limit_s = min(stay.steps * self.stage.step_s, end_s - start_s)
-        pieces = stay.begun + stay.was
-        gaps = stay.begun + (not stay.now)
-        key: Key = (stay.kind, one.c, one.j)
-        side: Side = ""
-        if stay.kind == "rail":
-            site = self.stage.netlist.opamps[one.j]
-            to_high_v, to_low_v = site.high_v - one.stats[kernels.HIGH], one.stats[kernels.LOW] - site.low_v
-            side = "high" if to_high_v <= to_low_v else "low"
-        if stay.was and key not in self._open:  # it was at the limit before the first frame
-            self._open[key] = _Visit(start_s, side)
-        gap_s = (end_s - start_s - at_limit_s) / gaps if gaps else 0.0
-        piece_s = at_limit_s / pieces if pieces else 0.0
-        at_s = start_s
+    def _lay(self, row: list[float], key: Key, before: bool, after: bool, begun: int, share: float) -> None:
+        """Lay the visits of a step in order; ``share`` of it was spent at the limit."""
+        side = self._side(key[2], row[VOLTAGE]) if key[0] == "rail" else ""
+        step_s, factor = self.stage.step_s, self.stage.filters.factor
+        at_s = self._time_s(self.frames + row[STEP] / factor)
+        pieces, gaps = begun + before, begun + (not after)
+        gap_s, piece_s = (1.0 - share) * step_s / gaps if gaps else 0.0, share * step_s / max(pieces, 1)
         for i in range(pieces):
-            if i > 0 or not stay.was:
+            if i > 0 or not before:
                 at_s += gap_s
                 self._open[key] = _Visit(at_s, side)
             at_s += piece_s
-            if i < pieces - 1 or not stay.now:
+            if i < pieces - 1 or not after:
                 self._end(key, at_s)
+
+    def _end_slewing(self) -> None:
+        """End what cannot go on in the next frame."""
+        for (c, j), one in list(self._slewing.items()):
+            if one.end is not None and one.end < self.frames:
+                self._slewed(c, j, one.first, one.end)
+                del self._slewing[c, j]
+
+    def _slewed(self, c: int, j: int, first: int, end: int) -> None:
+        name = self.stage.netlist.opamps[j].designator
+        self.events.append(LimitEvent(name, "slew", c + 1, self._time_s(first), self._time_s(end)))
 
     def _end(self, key: Key, end_s: float) -> None:
         kind, c, j = key
@@ -298,3 +263,8 @@ class EventFinder:
         self.events.append(
             LimitEvent(name, kind, c + 1, visit.start_s, max(end_s, visit.start_s), visit.side)
         )
+
+
+def _blocks(frames: int) -> Iterator[tuple[int, int]]:
+    """First frame and count of each block."""
+    return ((first, min(BLOCK_FRAMES, frames - first)) for first in range(0, frames, BLOCK_FRAMES))

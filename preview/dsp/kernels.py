@@ -14,6 +14,19 @@ from typing import Any
 import numpy as np
 
 from preview.compiled import compiled as compiled
+from preview.dsp.visit_kernels import (
+    CLIPPED,
+    CURRENT,
+    EVENTS,
+    HIGH,
+    LOW,
+    RAIL,
+    SLEW,
+    UNSOLVED,
+    begin_row,
+    end_row,
+    put_row,
+)
 
 MAX_ITERATIONS = 40
 """Newton steps that a limited step may take; 2 to 5 are usual."""
@@ -23,9 +36,6 @@ MAX_ROUNDS = 200
 
 CHUNK = 128
 """Steps that are taken at a time while nobody limits."""
-
-# columns of the op-amps' running statistics
-HIGH, LOW, SLEW, CURRENT, EVENTS, CLIPPED, UNSOLVED, STARVED, OUTSIDE, OUTSIDE_EVENTS, STATS = range(11)
 
 
 @compiled
@@ -580,6 +590,8 @@ def run_steps(
     row: Any,
     track: Any,
     drive: Any,
+    log: Any,
+    written: Any,
 ) -> None:
     """Run the circuit over ``steps`` steps for every channel.
 
@@ -609,8 +621,13 @@ def run_steps(
         Room for the matrices between two way stations.
     work, matrix, direction, row, track, drive
         Room: (5, 2k), (2k, 2k), (2k,), (r,), (n + k, CHUNK + 1), (r, CHUNK).
+    log, written : (m, LOG), (2,) int64
+        Receives visits to limits while no part glides, see ``visit_kernels``, their count, and the steps run; what
+        finds no room is left out, so m = 0 for none, and c k rows a step for all.
     """
     channels, k = asked.shape
+    n = state.shape[1] - 3 * k - 3
+    rows = log.shape[0] if leg_steps == 0 else 0
     for c in range(channels):
         v, uc, ask, lim, out, st = state[c], u[c], asked[c], limited[c], mean_out[c], stats[c]
         done = 0
@@ -632,6 +649,10 @@ def run_steps(
                     continue
                 count = 1
                 span = max(16, span // 2)
+            logs = written[0] + k <= rows
+            if logs:
+                for j in range(k):
+                    begin_row(log[written[0] + j], written[1] + done, c, j, RAIL if lim[j] else 0, st[j])
             checked_steps(
                 free,
                 bound,
@@ -654,4 +675,13 @@ def run_steps(
                 row,
                 out,
             )
+            if logs:
+                kept = written[0]
+                for j in range(k):
+                    line = log[written[0] + j]
+                    if end_row(line, RAIL if lim[j] else 0, v[n + j], np.inf, np.inf, st[j]):
+                        put_row(log[kept], line)
+                        kept += 1
+                written[0] = kept
             done += count
+    written[1] += steps

@@ -16,17 +16,7 @@ from typing import Any
 import numpy as np
 
 from preview.compiled import compiled
-from preview.dsp.kernels import (
-    CLIPPED,
-    EVENTS,
-    OUTSIDE,
-    OUTSIDE_EVENTS,
-    SLEW,
-    STARVED,
-    UNSOLVED,
-    recur,
-    signal_part,
-)
+from preview.dsp.kernels import recur, signal_part
 from preview.dsp.port_kernels import keep_ports, solve_ports
 from preview.dsp.recur_kernels import recur_wide
 from preview.dsp.regime_kernels import (
@@ -41,6 +31,22 @@ from preview.dsp.regime_kernels import (
     SLEWS_DOWN,
     SLEWS_UP,
     fill_parts,
+)
+from preview.dsp.visit_kernels import (
+    CLIPPED,
+    CURRENT_LIMIT,
+    EVENTS,
+    OUT_OF_RANGE,
+    OUTSIDE,
+    OUTSIDE_EVENTS,
+    RAIL,
+    SLEW,
+    SLEWS,
+    STARVED,
+    UNSOLVED,
+    begin_row,
+    end_row,
+    put_row,
 )
 
 # columns of the book of regimes: the regime, the station it is of, whether its parts and its whole step are there
@@ -646,6 +652,17 @@ def between(whole: Any, leg: int, after: int, part: float, parts: Any, wholes: A
 
 
 @compiled
+def is_at(kind: int, where: int, k: int) -> int:
+    """What an op-amp in a regime is at, see ``visit_kernels``."""
+    away = OUT_OF_RANGE if where != IN_RANGE else 0
+    if kind == SLEWS_UP or kind == SLEWS_DOWN:
+        return away + SLEWS
+    if kind >= AT_WALL and (kind - AT_WALL) // 2 < k:
+        return away + CURRENT_LIMIT
+    return away + RAIL if kind >= AT_HIGH else away
+
+
+@compiled
 def run_macro(
     whole: Any,
     all_equations: Any,
@@ -673,6 +690,8 @@ def run_macro(
     store: Any,
     room: Any,
     tracks: Any,
+    log: Any,
+    written: Any,
 ) -> None:
     """Run the circuit over ``steps`` steps for every channel.
 
@@ -707,8 +726,11 @@ def run_macro(
         (m + 1, r, c).
     room, tracks
         Room.
+    log, written
+        As in ``kernels.run_steps``.
     """
     up, down, range_low, range_high = fixed_limits
+    log_rows = log.shape[0] if leg_steps == 0 else 0
     channels, size = state.shape
     k = up.shape[0]
     n = size - k
@@ -764,10 +786,25 @@ def run_macro(
             u0, u1 = uc[done + 1], uc[done + 2]
             signal[0], signal[2] = u0, u1
             signal[1] = (13.0 * (u0 + u1) - (uc[done] + uc[done + 3])) * (1.0 / 24.0)
+            logs = written[0] + k <= log_rows
+            if logs:
+                for o in range(k):
+                    was_at = is_at(kinds[o], ranges[o], k)
+                    begin_row(log[written[0] + o], written[1] + done, c, o, was_at, st[o])
             mean = walk(
                 all_equations, all_laws, all_rails, all_walls, all_gains, owner, fixed_limits, leg, gliding, step_s,
                 v, signal, kinds, ranges, st, extremes, junctions, book, last, parts, room,
             )  # fmt: skip
+            if logs:
+                kept = written[0]
+                for o in range(k):
+                    line = log[written[0] + o]
+                    now_at = is_at(kinds[o], ranges[o], k)
+                    slow, fast = min(up[o], down[o]), max(up[o], down[o])
+                    if end_row(line, now_at, v[n + o], slow, fast, st[o]):
+                        put_row(log[kept], line)
+                        kept += 1
+                written[0] = kept
             if added.shape[0]:
                 for b in range(size):
                     if b < n or kinds[b - n] == FOLLOWS:
@@ -775,3 +812,4 @@ def run_macro(
                 mean += added[size, done]
             out[done] = mean
             done += 1
+    written[1] += steps

@@ -15,7 +15,7 @@ from preview.circuit.netlist import Branch, Netlist, OpAmpSite, Track
 from preview.circuit.opamp import IDEAL, OpAmpModel, OpAmpReading
 from preview.circuit.parts import PartKind
 from preview.compiled import in_cache
-from preview.dsp import kernels, rate_kernels
+from preview.dsp import rate_kernels, visit_kernels
 from preview.dsp.block import Volts
 from preview.dsp.cores import Core, MacroCore, Matrices, core_for
 from preview.dsp.oversample import LATENCY_FRAMES, design, factor_for
@@ -318,25 +318,25 @@ class StageProcessor:
         statistics = self._core.statistics()
         for j, opamp in enumerate(self._netlist.opamps):
             s, model = statistics[:, j], opamp.model
-            high, low = float(s[:, kernels.HIGH].max()), float(s[:, kernels.LOW].min())
+            high, low = float(s[:, visit_kernels.HIGH].max()), float(s[:, visit_kernels.LOW].min())
             result.append(
                 OpAmpReading(
                     designator=opamp.designator,
                     peak_v=max(abs(high), abs(low)),
                     high_v=high,
                     low_v=low,
-                    headroom_db=0.0 if s[:, kernels.CLIPPED].any() else self._core.headroom_db(j),
-                    clip_events=int(s[:, kernels.EVENTS].sum()),
-                    clipped_s=float(s[:, kernels.CLIPPED].sum()) * self.step_s,
-                    slew_peak_v_per_s=float(s[:, kernels.SLEW].max()) / self.step_s,
+                    headroom_db=0.0 if s[:, visit_kernels.CLIPPED].any() else self._core.headroom_db(j),
+                    clip_events=int(s[:, visit_kernels.EVENTS].sum()),
+                    clipped_s=float(s[:, visit_kernels.CLIPPED].sum()) * self.step_s,
+                    slew_peak_v_per_s=float(s[:, visit_kernels.SLEW].max()) / self.step_s,
                     slew_limit_v_per_s=min(model.slew_up_v_per_s, model.slew_down_v_per_s),
-                    current_peak_a=float(s[:, kernels.CURRENT].max()),
+                    current_peak_a=float(s[:, visit_kernels.CURRENT].max()),
                     current_limit_a=model.current_limit_a,
-                    current_limited_s=float(s[:, kernels.STARVED].sum()) * self.step_s,
-                    input_range_events=int(s[:, kernels.OUTSIDE_EVENTS].sum()),
-                    input_range_s=float(s[:, kernels.OUTSIDE].sum()) * self.step_s,
+                    current_limited_s=float(s[:, visit_kernels.STARVED].sum()) * self.step_s,
+                    input_range_events=int(s[:, visit_kernels.OUTSIDE_EVENTS].sum()),
+                    input_range_s=float(s[:, visit_kernels.OUTSIDE].sum()) * self.step_s,
                     rest_v=self._core.rest_v(j),
-                    unsolved_steps=math.ceil(s[:, kernels.UNSOLVED].sum()),
+                    unsolved_steps=math.ceil(s[:, visit_kernels.UNSOLVED].sum()),
                 )
             )
         return tuple(result)

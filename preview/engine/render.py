@@ -181,7 +181,9 @@ def render(
     comment = output_comment(session, scale_v)
     with FileSink(out, sample_rate_hz=rate, channels=channels, depth=depth, comment=comment) as sink:
         started_s = time.perf_counter()
-        frames, input_peak_v, output_peak_v = stream(path, source, sink, progress=progress)
+        frames, input_peak_v, output_peak_v = stream(
+            path, source, sink, progress=progress, hold=isinstance(source, LogSource)
+        )
         elapsed_s = time.perf_counter() - started_s
         sink.commit()
         over_count = sink.over_count
@@ -207,8 +209,12 @@ def stream(
     sink: Sink,
     *,
     progress: Callable[[int], None] | None = None,
+    hold: bool = False,
 ) -> tuple[int, float, float]:
-    """Carry the whole source to the sink, the delay taken out; frames, input peak [V], output peak [V]."""
+    """Carry the whole source to the sink, the delay taken out; frames, input peak [V], output peak [V].
+
+    After its end comes silence, or with ``hold`` the last value: a log that ends did not fall to 0 V.
+    """
     samples = np.zeros((path.max_frames, source.channels))
     processed = np.zeros_like(samples)
     latency_frames = path.circuit.latency_frames
@@ -218,13 +224,16 @@ def stream(
     input_peak_v = 0.0
     output_peak_v = 0.0
     ended = False
+    after = np.zeros(source.channels)
     while not (ended and written == read):
         frames = 0 if ended else source.read(samples)
         read += frames
         if frames == 0:
             ended = True
             frames = min(path.max_frames, read - written)
-            samples[:frames] = 0.0
+            samples[:frames] = after
+        elif hold:
+            after = samples[frames - 1].copy()
         volts_in, volts_out = path.run(samples[:frames], processed[:frames])
         skip = min(max(latency_frames - run, 0), frames)
         run += frames

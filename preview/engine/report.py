@@ -71,7 +71,7 @@ def render_lines(result: RenderResult, response_error_db: float, out: Path) -> l
         steps = sum(reading.unsolved_steps for reading in result.opamps)
         lines.append(f"{steps} steps were not solved to tolerance")
     if result.non_finite_count:
-        lines.append(f"{result.non_finite_count} input samples were not numbers and were taken as 0")
+        lines.append(f"{result.non_finite_count} input samples were not numbers")
     if result.over_count:
         lines.append(
             f"{result.over_count} output samples were above the file's full scale and are clipped there"

@@ -34,19 +34,29 @@ class Intake:
         Frames that stay in front of the new ones.
     sections : array (k, 5), optional
         Weighting filter; see ``weighting.sections``.
+    chunk_frames : int
+        Most new frames at a time.
     """
 
-    def __init__(self, channels: int, *, past: int = 0, sections: Real | None = None) -> None:
-        self.rows = np.zeros((channels, past + CHUNK_FRAMES))
+    def __init__(
+        self,
+        channels: int,
+        *,
+        past: int = 0,
+        sections: Real | None = None,
+        chunk_frames: int = CHUNK_FRAMES,
+    ) -> None:
+        self.rows = np.zeros((channels, past + chunk_frames))
         self.first = past
+        self._chunk_frames = chunk_frames
         self._sections = sections
         self._state = np.zeros((channels, 0 if sections is None else len(sections), 2))
 
     def chunks(self, volts: ArrayLike) -> Iterator[int]:
         """Put the frames of ``volts`` (frames, channels) into ``rows``, from column ``first`` on; yields how many."""
         signal = np.asarray(volts)
-        for start in range(0, len(signal), CHUNK_FRAMES):
-            part = signal[start : start + CHUNK_FRAMES]
+        for start in range(0, len(signal), self._chunk_frames):
+            part = signal[start : start + self._chunk_frames]
             count = len(part)
             self.rows[:, self.first : self.first + count] = part.T
             kernels.clean_rows(self.rows, self.first, count)

@@ -14,7 +14,7 @@ from numpy.typing import NDArray
 
 from preview.errors import UsageError
 from preview.meters import kernels
-from preview.meters.intake import Intake
+from preview.meters.intake import CHUNK_FRAMES, Intake
 from preview.meters.reading import LoudnessReading
 from preview.meters.weighting import Weighting, sections
 
@@ -52,6 +52,8 @@ class LoudnessMeter:
         Peak volts of full scale.
     weights : tuple of float, optional
         Weight of each channel; ``channel_weights`` where not given.
+    chunk_frames : int
+        Most frames taken at a time; the reading does not depend on it.
     """
 
     def __init__(
@@ -61,13 +63,16 @@ class LoudnessMeter:
         *,
         full_scale_v: float,
         weights: tuple[float, ...] | None = None,
+        chunk_frames: int = CHUNK_FRAMES,
     ) -> None:
         if weights is not None and len(weights) != channels:
             raise UsageError(f"loudness: {len(weights)} weights for {channels} channels")
         self._full_scale_v = full_scale_v
         self._gains = np.array(channel_weights(channels) if weights is None else weights) / full_scale_v**2
         self._block_frames = sample_rate_hz / kernels.BLOCKS_PER_S
-        self._intake = Intake(channels, sections=sections(Weighting.K, sample_rate_hz))
+        self._intake = Intake(
+            channels, sections=sections(Weighting.K, sample_rate_hz), chunk_frames=chunk_frames
+        )
         bins = round((HIGHEST_LUFS - kernels.GATE_LUFS) / kernels.BIN_LU)
         self._place = np.zeros(2, dtype=np.int64)
         self._sums = np.zeros(kernels.SHORT_TERM_BLOCKS + 1)

@@ -28,13 +28,22 @@ class TruePeakMeter:
         Number of channels.
     only_peak : bool
         Whether ``shown_v`` is not wanted; much of a signal is then too low to be looked at.
+    chunk_frames : int
+        Most frames taken at a time; the reading does not depend on it.
     """
 
-    def __init__(self, sample_rate_hz: float, channels: int, *, only_peak: bool = False) -> None:
+    def __init__(
+        self,
+        sample_rate_hz: float,
+        channels: int,
+        *,
+        only_peak: bool = False,
+        chunk_frames: int = CHUNK_FRAMES,
+    ) -> None:
         self._fall = 0.0 if only_peak else fall_per_frame(FALL_DB_PER_S, sample_rate_hz)
         self._taps = interpolator(sample_rate_hz)
-        self._room = np.zeros((len(self._taps), CHUNK_FRAMES))
-        self._intake = Intake(channels, past=self._taps.shape[1])
+        self._room = np.zeros((len(self._taps), chunk_frames))
+        self._intake = Intake(channels, past=self._taps.shape[1], chunk_frames=chunk_frames)
         self._shown, self._peak = np.zeros(channels), np.zeros(channels)
         self.feed(np.zeros((1, channels)))  # compiles
 

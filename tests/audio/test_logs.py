@@ -209,3 +209,12 @@ def test_the_ending_says_what_is_opened(tmp_path: Path) -> None:
         assert isinstance(one, FileSource)
         assert isinstance(other, LogSource)
         assert other.info.subtype == "v"
+
+
+def test_columns_in_two_units_of_voltage_are_refused(tmp_path: Path) -> None:
+    text = "time,a [mV],b [V]\n0,1,2\n1,2,3\n"
+    with pytest.raises(AudioFileError, match=r"not in one unit: a \[mV\], b \[V\]"):
+        source(tmp_path, text, LogFormat(columns=("a", "b")))
+    assert "full scale 1 mV" in source(tmp_path, text, LogFormat(columns=("a",))).info.comment
+    assert source(tmp_path, "time,RPM V\n0,1\n1,2\n").info.comment == "full scale 1 V peak"
+    assert source(tmp_path, "# full scale 3 V\ntime,a [mV]\n0,1\n1,2\n").info.comment.count("full scale") == 1

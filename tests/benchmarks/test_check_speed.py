@@ -69,6 +69,28 @@ def test_an_hour_of_stereo_is_checked_at_20_times_real_time_in_300_mb(
         assert ratio >= 20.0
 
 
+@pytest.mark.parametrize("opamp", ["ideal", "TL072"])
+@pytest.mark.parametrize(("full_scale", "most"), [("1 V", 1.5), ("+18 dBu", 3.0)])
+def test_a_check_takes_little_more_than_a_render(
+    tmp_path: Path, capsys: pytest.CaptureFixture[str], opamp: str, full_scale: str, most: float
+) -> None:
+    from preview.cli import main
+
+    audio, options = recording(tmp_path / "a.wav", 60), ("--opamp", opamp, "--full-scale", full_scale)
+
+    def cpu_s(*words: object) -> float:
+        began_s = time.process_time()
+        assert main([*map(str, words), *options]) == 0
+        return time.process_time() - began_s
+
+    check = ("check", audio, "--workers", "1")
+    cpu_s(*check)
+    ratio = min(cpu_s(*check) / cpu_s("render", audio, tmp_path / "out.wav") for _ in range(2))
+    capsys.readouterr()
+    print(f"\n{opamp}, {full_scale}: a check takes {ratio:.2f} times as long as a render")
+    assert ratio <= most
+
+
 def test_two_workers_are_1_8_times_as_fast_as_one(tmp_path: Path) -> None:
     if len(os.sched_getaffinity(0)) < 2:
         pytest.skip("one core")

@@ -119,3 +119,29 @@ def test_what_does_not_fit_is_refused_and_nothing_is_left(capsys, log, tmp_path,
     assert (code, out) == (wanted, "")
     assert told in err
     assert {p.name for p in tmp_path.iterdir()} == before
+
+
+def test_a_unit_of_voltage_in_a_columns_name_is_its_scale(capsys, tmp_path):
+    path = tmp_path / "bridge.csv"
+    path.write_text("time [ms],level (mV)\n" + "".join(f"{100 * i},{2000 + i % 2}\n" for i in range(50)))
+    code, text, err = render(capsys, path, tmp_path / "out.csv", *GAIN, "--json")
+    assert code == 0, err
+    report = json.loads(text)
+    assert report["full_scale_v"] == pytest.approx(1e-3)
+    assert report["input"]["peak_v"] == pytest.approx(2.001)
+    assert main(["check", str(path), *GAIN, "--json"]) == 0
+    checked = json.loads(capsys.readouterr().out)
+    assert checked["input"]["peak_v"] == pytest.approx(2.001)
+    stated = render(capsys, path, tmp_path / "out.csv", *GAIN, "--per-unit", "1 V", "--json")
+    assert json.loads(stated[1])["full_scale_v"] == 1.0
+
+
+def test_a_steady_log_stays_steady_to_its_last_row(capsys, tmp_path):
+    path, out = tmp_path / "dc.csv", tmp_path / "out.csv"
+    path.write_text("time,level\n" + "".join(f"{i / 10:.1f},2.5\n" for i in range(300)))
+    code, text, err = render(capsys, path, out, "--opamp", "ideal", "--part", "R2=20k", "--json")
+    assert code == 0, err
+    np.testing.assert_allclose(numbers(out)[:, 1], -5.0, atol=1e-9)  # R2/R1 = 2, inverted
+    report = json.loads(text)
+    assert report["output"]["peak_v"] == pytest.approx(5.0, abs=1e-9)
+    assert report["response_error_db"] < 0.01  # of 10 rows a second, looked at below their edge

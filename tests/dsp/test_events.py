@@ -205,3 +205,21 @@ def test_a_clean_signal_has_no_visits() -> None:
     events, counted = found(LOW_PASS, np.random.default_rng(1).normal(0, 0.1, 5000), 48_000)
     assert events == []
     assert counted == {"U1": 0}
+
+
+@pytest.mark.parametrize("kind", ["ideal", "real"])
+def test_a_log_that_is_full_takes_no_more_and_changes_nothing(kind: str) -> None:
+    circuit = TWO_SECTIONS
+    if kind == "real":
+        circuit = replace(circuit, opamps=tuple(replace(o, model=REAL) for o in circuit.opamps))
+    volts = np.random.default_rng(2).normal(0, 20.0, (2000, 2))
+    outs = []
+    for rows in (0, 7):
+        stage = StageProcessor(circuit, sample_rate_hz=48_000, channels=2, quality=Quality.DRAFT)
+        stage.core.log.begin(rows)
+        out = np.empty_like(volts)
+        stage.process(volts, out)
+        outs.append((out, stage.readings()))
+        assert rows - 2 <= len(stage.core.log.take()) <= rows
+    np.testing.assert_array_equal(outs[0][0], outs[1][0])
+    assert outs[0][1] == outs[1][1]

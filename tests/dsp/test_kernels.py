@@ -86,7 +86,7 @@ def test_running_kernels_equal_their_source(
     name: str, gliding: bool, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     circuit = ALL[name]
-    volts = RNG.normal(0, 20.0, (40, 2))
+    volts = RNG.normal(0, 20.0, (80, 2))  # some 50 until the first comes through
     results = []
     for source in (False, True):
         if source:
@@ -95,6 +95,8 @@ def test_running_kernels_equal_their_source(
                     kernels,
                     (
                         "run_steps",
+                        "begin_row",
+                        "end_row",
                         "free_steps",
                         "held_steps",
                         "checked_steps",
@@ -111,9 +113,14 @@ def test_running_kernels_equal_their_source(
         if gliding:
             stage.glide(stage.plan({circuit.branches[0].designator: circuit.branches[0].value * 1.5}))
         out = np.empty_like(volts)
+        stage.core.log.begin(4000)
         stage.process(volts, out)
-        results.append((out, stage.readings()))
+        results.append((out, stage.readings(), np.array(stage.core.log.take())))
     np.testing.assert_allclose(results[0][0], results[1][0], rtol=1e-10, atol=1e-12)
+    clips = sum(reading.clip_events for reading in results[0][1])
+    assert clips > 0 or name == "ladder"
+    assert (len(results[0][2]) > 0) == (clips > 0 and not gliding)
+    np.testing.assert_allclose(results[0][2], results[1][2], rtol=1e-9, atol=1e-9)
     for compiled, plain in zip(results[0][1], results[1][1], strict=True):
         assert compiled.clip_events == plain.clip_events
         assert compiled.peak_v == pytest.approx(plain.peak_v, rel=1e-12)

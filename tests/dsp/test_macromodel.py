@@ -393,6 +393,9 @@ def test_the_kernels_step_equals_scipys_exponential() -> None:
 SOURCES = {
     macro_kernels: (
         "run_macro",
+        "begin_row",
+        "end_row",
+        "is_at",
         "regime_steps",
         "walk",
         "along",
@@ -408,7 +411,7 @@ SOURCES = {
 @pytest.mark.parametrize("gliding", [False, True])
 def test_running_kernels_equal_their_source(gliding: bool, monkeypatch: pytest.MonkeyPatch) -> None:
     circuit = with_model(LOW_PASS, opamp(3e6, 0.5e6, open_loop_gain=1e5, output_resistance_ohm=75.0))
-    volts = np.random.default_rng(2).normal(0, 10.0, (6, 1))
+    volts = np.random.default_rng(2).normal(0, 10.0, (70, 1))  # some 50 until the first comes through
     results = []
     for source in (False, True):
         if source:
@@ -419,8 +422,11 @@ def test_running_kernels_equal_their_source(gliding: bool, monkeypatch: pytest.M
         if gliding:
             stage.glide(stage.plan({"R1": 12e3}))
         out = np.empty_like(volts)
+        stage.core.log.begin(1000)
         stage.process(volts, out)
-        results.append((out, stage.readings()[0]))
+        results.append((out, stage.readings()[0], np.array(stage.core.log.take())))
     np.testing.assert_allclose(results[0][0], results[1][0], rtol=1e-9, atol=1e-12)
+    assert (len(results[0][2]) == 0) == gliding
+    np.testing.assert_allclose(results[0][2], results[1][2], rtol=1e-9, atol=1e-9)
     assert results[0][1].clip_events == results[1][1].clip_events
     assert results[0][1].slew_peak_v_per_s == pytest.approx(results[1][1].slew_peak_v_per_s, rel=1e-9)

@@ -113,6 +113,23 @@ def test_noise_does_not_depend_on_how_the_signal_is_cut() -> None:
     np.testing.assert_array_equal(results[2], results[0])
 
 
+def test_a_state_that_is_taken_back_to_brings_the_same_noise_again() -> None:
+    circuit = with_model(LOW_PASS, QUIET)
+    stage = StageProcessor(
+        circuit, sample_rate_hz=48_000, channels=2, quality=Quality.DRAFT, noise=NoiseSetting()
+    )
+    quiet = np.zeros((700, 2))
+    first, again, later = np.empty((3, 700, 2))
+    stage.process(quiet, later)
+    taken = stage.snapshot()
+    stage.process(quiet, first)
+    stage.process(quiet, later)
+    stage.restore(taken)
+    stage.process(quiet, again)
+    assert np.abs(first).max() > 0.0
+    np.testing.assert_array_equal(again, first)
+
+
 def test_the_covariance_of_a_step_equals_its_integral() -> None:
     rng = np.random.default_rng(4)
     A, B = rng.normal(0, 3, (4, 4)) - 6 * np.eye(4), rng.normal(0, 1, (4, 3))

@@ -160,6 +160,24 @@ def test_the_largest_clean_input_is_just_clean_and_a_little_more_is_not(
     assert just.opamps[0].headroom_db < 0.03
 
 
+def test_higher_peaks_than_in_the_passages_that_clip_longest_are_found_too(tmp_path: Path) -> None:
+    # four long swells of 300 Hz, 6 dB over the rail; between them bursts of 3 kHz, each higher than the one before
+    made = session("inverting-low-pass", "ideal", C1="1p")  # a gain of 10
+    silence, volts = np.zeros(RATE), []
+    burst = np.sin(2 * np.pi * 3e3 * np.arange(480) / RATE) * np.hanning(480)
+    for extra_db in (7.0, 8.0, 9.0, 10.0):
+        volts += [sine(300.0, 2 * 1.35), silence]
+        volts += [1.35 * 10 ** (extra_db / 20) * burst, silence]
+    signal = np.concatenate(volts)
+    found = check(tmp_path, signal, made)
+    assert found.margin is not None
+    assert (found.margin.proof, found.margin.limit) == ("whole file", "rail")
+    assert found.margin.gain_db == pytest.approx(20 * math.log10(1.35 / found.input.true_peak_v), abs=0.05)
+    gain = 10 ** (found.margin.gain_db / 20)
+    assert check(tmp_path, signal * gain, made, margin=False).opamps[0].clip_events == 0
+    assert check(tmp_path, signal * gain * 10 ** (0.03 / 20), made, margin=False).opamps[0].clip_events > 0
+
+
 def test_slew_rate_can_be_what_limits(tmp_path: Path) -> None:
     # 20 kHz and 0.5 V/us: 3.98 V peak, far from the rails
     made = session("non-inverting-gain", "LM741", C2="4p7", R2="2k2")

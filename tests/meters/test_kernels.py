@@ -97,6 +97,8 @@ def test_a_kernel_equals_its_source(name: str) -> None:
         ("loudness_bin", (1e-8, 12_000)),
         ("loudness_bin", (0.01, 12_000)),
         ("loudness_bin", (1e9, 12_000)),
+        ("largest_of", (np.array([9.0, 1.0, -4.0, 2.0, 3.0, 3.5, -5.0, 9.0]), 1, 7)),
+        ("largest_of", (np.array([9.0, 1.0, -4.0, 2.0, 3.0, 3.5, -5.0, 9.0]), 1, 4)),
     ],
 )
 def test_a_kernel_of_numbers_equals_its_source(name: str, arguments: tuple[Any, ...]) -> None:
@@ -106,4 +108,4 @@ def test_a_kernel_of_numbers_equals_its_source(name: str, arguments: tuple[Any, 
 
 def test_no_kernel_is_left_out() -> None:
     every = {name for name, value in vars(kernels).items() if hasattr(value, "py_func")}
-    assert every == set(CASES) | {"block_end", "loudness_bin"}
+    assert every == set(CASES) | {"block_end", "largest_of", "loudness_bin"}

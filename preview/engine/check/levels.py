@@ -17,6 +17,8 @@ __all__ = ["LOUDNESS_FROM_HZ", "Levels"]
 
 LOUDNESS_FROM_HZ = 8_000.0
 """Lowest sample rate at which loudness means anything."""
+CHUNK_FRAMES = 2048
+"""Frames that the meters take at a time: fewer calls than live."""
 
 
 class Levels:
@@ -33,10 +35,12 @@ class Levels:
     """
 
     def __init__(self, sample_rate_hz: float, channels: int, full_scale_v: float) -> None:
-        self._true_peak = TruePeakMeter(sample_rate_hz, channels, only_peak=True)
+        self._true_peak = TruePeakMeter(sample_rate_hz, channels, only_peak=True, chunk_frames=CHUNK_FRAMES)
         self._loudness: LoudnessMeter | None = None
         if sample_rate_hz >= LOUDNESS_FROM_HZ:
-            self._loudness = LoudnessMeter(sample_rate_hz, channels, full_scale_v=full_scale_v)
+            self._loudness = LoudnessMeter(
+                sample_rate_hz, channels, full_scale_v=full_scale_v, chunk_frames=CHUNK_FRAMES
+            )
         self._peak: NDArray[np.float64] = np.zeros(channels)
         self._sum, self._square = np.zeros(channels), np.zeros(channels)
         self.frames = 0

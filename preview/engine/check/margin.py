@@ -14,12 +14,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from preview.circuit.opamp import OpAmpReading
 from preview.dsp.events import EventFinder, LimitKind
 from preview.dsp.settle import memory_s
 from preview.engine.check.results import Limit, Margin, Proof
 from preview.engine.check.run import Load, Signal, Stages, WholeRun, loads, piece_frames, pieces, settle_at
-from preview.engine.loop import joined_readings
 
 __all__ = ["find_margin"]
 
@@ -54,6 +52,8 @@ class _Outcome:
     """What used most of a limit."""
     frame: int
     """Where it did not stay clean, or the first frame."""
+    used: float = 0.0
+    """The most that was used of a limit before that, from rest to it."""
 
 
 def find_margin(
@@ -83,7 +83,9 @@ class _Search:
         self._passages = list(whole.worst_frames)
         net = stages.netlist
         self._linear = not net.ports and not any(o.model.crossover_v > 0.0 for o in net.opamps)
-        run_in_s = float(np.clip(memory_s(net, RUN_IN_TIMES), *RUN_IN_S))
+        memory = memory_s(net, RUN_IN_TIMES)
+        self._goes_on = self._linear and memory <= RUN_IN_S[1]
+        run_in_s = float(np.clip(memory, *RUN_IN_S))
         self._piece = piece_frames(signal.sample_rate_hz)
         self._run_in_frames = self._piece * math.ceil(run_in_s * signal.sample_rate_hz / self._piece)
 
@@ -148,19 +150,27 @@ class _Search:
         return low or None
 
     def _of_whole(self, gain: float) -> Margin:
-        """Run everything at the gain found on passages; lower it as often as something limits elsewhere."""
+        """Run everything at the gain found on passages; lower it as often as something limits elsewhere.
+
+        What was clean before that stays so with less where the circuit is linear, so the run goes on from there.
+        """
+        first, used = 0, 0.0
         for _ in range(ROUNDS):
-            self._more(0, self._whole.frames)
-            outcome = self._run(0, 0, None, gain)
+            run_in = min(first, self._run_in_frames)
+            self._more(0, self._whole.frames - first + run_in)
+            outcome = self._run(first - run_in, run_in, None, gain)
+            used = max(used, outcome.used)
             if outcome.clean:
-                if self._linear and outcome.worst.share > 0.0:
-                    gain /= outcome.worst.share
+                if self._linear and used > 0.0:
+                    gain /= used
                 return self._said(gain / WITHIN**0.1, "whole file")
             self._passages.append(outcome.frame)
             lower = self._bracket(outcome.frame, gain, first=False)
             if lower is None:
                 break
-            gain = min(lower, gain / WITHIN)
+            lower = min(lower, gain / WITHIN)
+            first, used = (outcome.frame, used * lower / gain) if self._goes_on else (0, 0.0)
+            gain = lower
         return self._said(gain, "loudest passages")
 
     def _passage(self, frame: int, gain: float) -> _Outcome:
@@ -180,7 +190,7 @@ class _Search:
         finder = EventFinder(stage)
         hold = math.ceil(stage.filters.circuit_delay_frames)
         count = None if frames is None else run_in + frames + hold
-        total: tuple[OpAmpReading, ...] = ()
+        most = Load(self._stages.netlist.opamps[0].designator, "rail", 0.0)
         for volts, own in pieces(self._signal, scale_v, first, count, hold=hold):
             if first and finder.frames < run_in and not self._whole.settled:
                 at = np.arange(finder.frames, finder.frames + len(volts))
@@ -192,12 +202,11 @@ class _Search:
             if first and frame < first + run_in:
                 finder.events.clear()
                 continue
-            total = joined_readings(total, now) if total else now
             worst = max(loads(self._stages.netlist, now), key=lambda load: load.share)
             if finder.limited:
                 name, kind = finder.first()
-                return _Outcome(False, Load(name, LIMITS[kind], max(worst.share, 1.0)), frame)
+                return _Outcome(False, Load(name, LIMITS[kind], max(worst.share, 1.0)), frame, most.share)
             if not worst.share < 1.0 or stage.core.trouble() is not None:
-                return _Outcome(False, worst, frame)
-        used = loads(self._stages.netlist, total)
-        return _Outcome(True, max(used, key=lambda load: load.share), first)
+                return _Outcome(False, worst, frame, most.share)
+            most = max(most, worst, key=lambda load: load.share)
+        return _Outcome(True, most, first, most.share)

@@ -18,6 +18,7 @@ from multiprocessing.connection import Connection, wait
 from multiprocessing.process import BaseProcess
 from pathlib import Path
 
+from preview.engine.check.record import stamp
 from preview.engine.check.results import CheckPlan, FileCheck, FileFailure
 from preview.engine.check.run import Stages
 from preview.engine.check.single import check_file
@@ -136,7 +137,8 @@ class _Pool:
     shares: dict[int, float] = field(default_factory=dict)
 
     def run(self) -> Iterator[tuple[int, Finished]]:
-        waiting = deque(range(len(self.paths)))
+        # the largest first, so that none is left with one core at the end
+        waiting = deque(sorted(range(len(self.paths)), key=lambda i: -(stamp(self.paths[i]) or [0])[0]))
         try:
             self.workers = [self._started() for _ in range(self.count)]
             while True:

@@ -16,6 +16,9 @@ from preview.values.notation import format_value
 
 __all__ = ["CheckReport", "columns", "limit_said", "time_code"]
 
+NAME_WIDTH = 28
+"""Characters of a file's name in a table on a terminal."""
+
 
 @dataclass(frozen=True, slots=True)
 class CheckReport:
@@ -139,9 +142,10 @@ class CheckReport:
             lines += [*columns(heads, rows), ""]
         return lines + self.said()
 
-    def tables(self) -> list[tuple[Sequence[str], list[list[str]]]]:
-        """Heads and rows of each table."""
-        named = list(zip(self.files, _short([found.path for found in self.files]), strict=True))
+    def tables(self, name_width: int = NAME_WIDTH) -> list[tuple[Sequence[str], list[list[str]]]]:
+        """Heads and rows of each table; names of files are shortened to so many characters."""
+        names = _short([found.path for found in self.files], name_width)
+        named = list(zip(self.files, names, strict=True))
         if not named:
             return []
         tables: list[tuple[Sequence[str], list[list[str]]]] = [
@@ -330,7 +334,7 @@ def columns(heads: Sequence[str], rows: Sequence[Sequence[str]]) -> list[str]:
     ]
 
 
-def _short(paths: Sequence[str], width: int = 28) -> list[str]:
+def _short(paths: Sequence[str], width: int = NAME_WIDTH) -> list[str]:
     """Names for a table: as much of the end of each path as there is room for."""
     shown = [printable(path) for path in paths]
     return [path if len(path) <= width else "…" + path[-(width - 1) :] for path in shown]

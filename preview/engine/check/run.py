@@ -70,12 +70,16 @@ class Stages:
 
     def at_rest(self, signal: Signal) -> StageProcessor:
         """The stage for this kind of signal, at rest."""
-        key = (float(signal.sample_rate_hz), signal.channels)
+        return self.of(float(signal.sample_rate_hz), signal.channels)
+
+    def of(self, sample_rate_hz: float, channels: int) -> StageProcessor:
+        """The stage for signals of this rate and so many channels, at rest."""
+        key = (sample_rate_hz, channels)
         if key not in self._made:
             if len(self._made) >= 4:
                 self._made.clear()
             self._made[key] = StageProcessor(
-                self.netlist, sample_rate_hz=key[0], channels=key[1], quality=self._quality
+                self.netlist, sample_rate_hz=sample_rate_hz, channels=channels, quality=self._quality
             )
         stage = self._made[key]
         stage.reset()
