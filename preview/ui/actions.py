@@ -162,6 +162,16 @@ ACTIONS: tuple[Action, ...] = (
     _response("cursor_up", "}", "Cursor of the response a twelfth of an octave up"),
     _response("cursor_off", "|", "Cursor of the response: at the corner, or off"),
     _response("node_volts", "H", "Direct and peak volts at the nodes of the circuit: on or off"),
+    _response(
+        "pan_left", "\\ ctrl+left", "Circuit drawing larger than its panel: show what lies to the left"
+    ),
+    _response(
+        "pan_right", "/ ctrl+right", "Circuit drawing larger than its panel: show what lies to the right"
+    ),
+    _response("pan_up", "pageup ctrl+up", "Circuit drawing larger than its panel: show what lies above"),
+    _response(
+        "pan_down", "pagedown ctrl+down", "Circuit drawing larger than its panel: show what lies below"
+    ),
     _screen("colours", "k", "Dark or light colours"),
     _listen("input", "I", "Choose what is heard: a recording, a test signal, live input", "input"),
     _listen("mute", "0", "Silence the device while everything runs, and back", "mute"),
