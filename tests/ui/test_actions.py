@@ -98,6 +98,8 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "tie": ((), _lists("Tie R1: when one moves, the others move with it")),
     "bypass": ((), _sent(SetBypass(True))),
     "choose_stage": ((), _lists("Stage")),
+    "cascade": ((), _lists("The next stage of the cascade")),
+    "cascade_drop": ((), lambda app, _: "this is a single stage" in app.foot.message),
     "switch_view": ((), lambda app, _: app.desk.view.shown is Shown.CIRCUIT),
     "view_response": (("v",), lambda app, _: app.desk.view.shown is Shown.RESPONSE),
     "view_circuit": ((), lambda app, _: app.desk.view.shown is Shown.CIRCUIT),
