@@ -59,7 +59,7 @@ class StageWork:
                 return self._ask_file("Stage file", self._desk.session.with_stage, self._open)
             return self._open(find_stage(name)) if name != self._desk.session.stage.name else None
 
-        return Menu("Stage", [*named, *chain, file], chosen, now=now.name)
+        return Menu("Stage", [*chain, *named, file], chosen, now=now.name)
 
     def do_cascade(self) -> Menu:
         """Choose the stage that goes behind the present one."""

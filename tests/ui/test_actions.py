@@ -414,7 +414,7 @@ async def test_a_stage_file_is_opened_by_its_path(make_app, engine, tmp_path) ->
     app: DeskApp = make_app()
     async with app.run_test(size=(80, 24)) as pilot:
         above = stage_names().index(app.desk.session.stage.name)
-        await pilot.press("s", *["up"] * (above + 1), "enter")  # past the first row to the last: a file
+        await pilot.press("s", *["up"] * (above + 2), "enter")  # past the first row to the last: a file
         await pilot.pause()
         assert isinstance(app.screen, EntryScreen)
         app.screen.query_one("#typed").value = "no-such-stage"
