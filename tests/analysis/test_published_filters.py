@@ -20,7 +20,7 @@ from preview.circuit.library import find_stage
 from preview.circuit.netlist import Branch, Netlist, netlist
 from preview.circuit.opamp import OpAmpModel
 from preview.circuit.parts import OpAmp, PartKind, Stage
-from preview.network.transfer import response
+from preview.network.transfer import output_impedance, response
 
 PUBLISHED = tomllib.loads((Path(__file__).parents[1] / "published" / "filters.toml").read_text("utf-8"))
 EXAMPLES = {row["id"]: row for row in PUBLISHED["example"]}
@@ -400,3 +400,28 @@ def _with_gain_bandwidth(found: Netlist, gain_bandwidth_hz: float) -> Netlist:
     model = replace(found.opamps[0].model, type="trial", **figures)
     assert isinstance(model, OpAmpModel)
     return replace(found, opamps=tuple(replace(o, type="trial", model=model) for o in found.opamps))
+
+
+def test_corner_of_a_gain_of_ten_with_1_mhz_of_gain_bandwidth_fiore_5_1() -> None:
+    row = OTHERS["fiore_5_1"]
+    found = circuit("inverting-gain", {"R1": 10e3, "R2": 10e3 * (row["noise_gain"] - 1)})
+    real = _with_gain_bandwidth(found, row["gbw_hz"])
+    assert evaluate(real, "corner_hz") == pytest.approx(row["published_hz"], rel=2e-3)
+
+
+def test_output_impedance_of_franco_6_5_is_10_milliohm_and_159_microhenry() -> None:
+    # p. 272: gain 10 with an open-loop gain of 100 V/mV, 1 MHz and 100 ohm; up to 10 Hz it is the printed resistance,
+    # between the breaks the printed inductance, a decade above the second one the 100 ohm (all within the asymptotes).
+    row = OTHERS["franco_6_5"]
+    found = circuit("inverting-gain", {"R1": row["R1"], "R2": row["R2"]})
+    figures = {
+        "gain_bandwidth_hz": row["ft_hz"],
+        "open_loop_gain": row["a0"],
+        "output_resistance_ohm": row["ro_ohm"],
+    }
+    model = replace(found.opamps[0].model, type="trial", **figures)
+    found = replace(found, opamps=(replace(found.opamps[0], type="trial", model=model),))
+    low, between, high = np.abs(output_impedance(found, [0.1, 1e3, 1e7]))
+    assert low == pytest.approx(row["published_low_freq_ohm"], rel=2e-3)
+    assert between / (2 * np.pi * 1e3) == pytest.approx(row["published_inductance_h"], rel=5e-3)
+    assert high == pytest.approx(row["ro_ohm"], rel=1e-2)
