@@ -18,7 +18,7 @@ if TYPE_CHECKING:
     from preview.session import Session
     from preview.ui.desk import Desk
 
-__all__ = ["StageWork", "stage_choices"]
+__all__ = ["StageWork", "doubts", "stage_choices"]
 
 _FILE, _BEHIND, _LAST = "\0file", "\0behind", "\0last"
 """Answers of the stage menu that no name can be."""
@@ -34,6 +34,12 @@ def stage_choices() -> list[Choice]:
             about = f"cannot be used: {error}"
         rows.append(Choice(name, name, about))
     return [*rows, Choice(_FILE, "a file ...", "type the path of a stage file")]
+
+
+def doubts(session: Session) -> str:
+    """What of the circuit is hardly meant, with its cure; empty where nothing is."""
+    found = [f"{what} ({cure})" for what, cure in warnings(session.netlist())]
+    return f"warning: {'; '.join(found)}" if found else ""
 
 
 class StageWork:
@@ -111,5 +117,4 @@ class StageWork:
 
     def _doubted(self, told: str) -> str:
         """The line, or what of the circuit is hardly meant, which goes before it."""
-        doubts = [f"{what} ({cure})" for what, cure in warnings(self._desk.session.netlist())]
-        return f"warning: {'; '.join(doubts)}" if doubts else told
+        return doubts(self._desk.session) or told

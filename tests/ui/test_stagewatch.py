@@ -88,6 +88,15 @@ def test_another_wiring_is_another_circuit(desk, engine, file) -> None:
     assert "C9" in engine.sent[-1].netlist.values
 
 
+def test_what_is_hardly_meant_in_an_edited_file_is_said(desk, file) -> None:
+    edit(file, "[parts]", '[parts]\nS1 = { kind = "switch", nodes = ["out", "gnd"], closed = true }')
+    text, severity = desk.stage_watch.look()
+    assert severity == "warning"
+    assert (
+        "mine.toml was edited and is read anew; warning: S1 shorts gnd and the output of U1 (open it" in text
+    )
+
+
 def test_a_file_that_became_wrong_leaves_what_is_heard(desk, engine, file) -> None:
     sent = list(engine.sent)
     edit(file, '"100k"', '"100z"')
