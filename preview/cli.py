@@ -219,7 +219,7 @@ def _parser() -> argparse.ArgumentParser:
     )
     _add_shapes(stages)
     opamps = command("opamps", _opamps, "the op-amp types side by side, or one and its sources")
-    opamps.add_argument("name", nargs="?", metavar="NAME|FILE", help="an op-amp type")
+    opamps.add_argument("name", nargs="*", metavar="NAME|FILE", help="an op-amp type; several are compared")
     _add_shapes(opamps)
     devices = command("devices", _devices, "the sound devices")
     _add_shapes(devices)

@@ -142,7 +142,7 @@ class Answers:
         rows.append(("passband", *_decibels(drawn.gain_db, self.driven.gain_db)))
         if len(drawn.corners_hz) == len(self.driven.corners_hz):
             for before, now in zip(drawn.corners_hz, self.driven.corners_hz, strict=True):
-                rows.append(("corner", _hertz(before), _hertz(now), f"{100.0 * (now / before - 1.0):+.3g} %"))
+                rows.append(("corner", _hertz(before), _hertz(now), _percent(now / before - 1.0)))
         else:
             rows.append(("corners", drawn.corners_said(), self.driven.corners_said(), ""))
         if len(self.frequency_hz) <= _MOST_ROWS:
@@ -241,9 +241,13 @@ def _hertz(frequency_hz: float) -> str:
     return format_value(frequency_hz, "frequency", digits=4)
 
 
+def _percent(change_ratio: float) -> str:
+    return f"{round(100.0 * change_ratio, 2) + 0.0:+g} %"
+
+
 def _decibels(before_db: float, now_db: float) -> tuple[str, str, str]:
-    change_db = round(now_db - before_db, 2) + 0.0
-    return f"{before_db:.2f} dB", f"{now_db:.2f} dB", f"{change_db:+.2f} dB"
+    before, now, change = (round(db, 2) + 0.0 for db in (before_db, now_db, now_db - before_db))
+    return f"{before:.2f} dB", f"{now:.2f} dB", f"{change:+.2f} dB"
 
 
 def _step_line(step: StepFigures | None) -> str:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 import textwrap
-from collections.abc import Iterable
+from collections.abc import Iterable, Sequence
 from dataclasses import fields
 
 from preview.circuit.opamp import OpAmpModel
@@ -14,7 +14,7 @@ from preview.circuit.opamp_units import FIGURE_FIELDS, FIGURES, format_figure
 from preview.errors import OpAmpFileError
 from preview.values.notation import format_value
 
-__all__ = ["comparison_lines", "opamp_lines", "opamp_object", "opamp_report"]
+__all__ = ["comparison_lines", "opamp_lines", "opamp_object", "opamp_report", "side_by_side_lines"]
 
 _WIDTH = 100
 _SWINGS = {
@@ -24,21 +24,23 @@ _SWINGS = {
 _REST = ("type", "title", "assumed", "sources")
 
 
-def opamp_report(name: str | None = None) -> tuple[dict[str, object], list[str], list[str]]:
-    """One type, or all side by side, as an object and as lines; then what is wrong with files of one's own.
+def opamp_report(chosen: Sequence[str] = ()) -> tuple[dict[str, object], list[str], list[str]]:
+    """One type, or some or all side by side, as an object and as lines; then what is wrong with files of one's own.
 
     Parameters
     ----------
-    name : str, optional
-        A type or a file; all types where it is None.
+    chosen : Sequence
+        Types or files; all types where there are none.
 
     Raises
     ------
     UnknownNameError, OpAmpFileError
         No such type, or a file that cannot be read as one.
     """
-    if name is not None:
-        return opamp_object(name, whole=True), opamp_lines(name), []
+    if len(chosen) == 1:
+        return opamp_object(chosen[0], whole=True), opamp_lines(chosen[0]), []
+    if chosen:
+        return {"opamps": [opamp_object(name) for name in chosen]}, side_by_side_lines(chosen), []
     names, problems = [], []
     for known in opamp_names():
         try:
@@ -73,6 +75,18 @@ def comparison_lines(names: Iterable[str]) -> list[str]:
     widths = [max(len(row[n]) for row in rows) for n in range(len(heads))]
     lines = ["  ".join(f"{cell:<{w}}" for cell, w in zip(row, widths, strict=True)).rstrip() for row in rows]
     lines[1:1] = [f"{model.type:<{widths[0]}}  {model.title}" for model in plain]
+    return [*lines, "~ assumed of its class; `preview opamps NAME` gives every figure with its source"]
+
+
+def side_by_side_lines(names: Sequence[str]) -> list[str]:
+    """Every figure of some types in a line each; an assumed figure is followed by ``~``."""
+    models = [find_opamp(name) for name in names]
+    rows = [("", *(model.type for model in models))]
+    for field in (*FIGURE_FIELDS, *_SWINGS):
+        cells = (_value(model, field) + _mark(model, field) if model.real else "no limit" for model in models)
+        rows.append((_meaning(field), *cells))
+    widths = [max(len(row[n]) for row in rows) for n in range(len(rows[0]))]
+    lines = ["  ".join(f"{cell:<{w}}" for cell, w in zip(row, widths, strict=True)).rstrip() for row in rows]
     return [*lines, "~ assumed of its class; `preview opamps NAME` gives every figure with its source"]
 
 

@@ -110,6 +110,26 @@ def _walk(system: Linear, poles: Complex) -> tuple[_Walk, float]:
     return walk, system.D + float(C @ end)
 
 
+def _stays(poles: Complex, largest: float) -> NDArray[np.bool_]:
+    return np.asarray(poles.real >= -np.maximum(_STAYING * np.abs(poles), _ROUNDING * largest))
+
+
+def _moving(system: Linear, poles: Complex) -> Linear:
+    """The system without what does not come to rest and is not seen at the output, such as a charge that is trapped.
+
+    The Schur form with those last, and the Sylvester equation that takes them out of the others' way.
+    """
+    largest = float(np.abs(poles).max())
+    T, Q, k = scipy.linalg.schur(
+        system.A, sort=lambda re, im: not _stays(np.array([complex(re, im)]), largest)[0]
+    )
+    if k == len(T):
+        return system
+    B, C = Q.T @ system.B, system.C @ Q
+    X = scipy.linalg.solve_sylvester(T[:k, :k], -T[k:, k:], -T[:k, k:])
+    return Linear(T[:k, :k], B[:k] - X @ B[k:], C[:k], system.D)
+
+
 def step_figures(system: Linear) -> StepFigures | None:
     """Figures of the step response; None where the output does not come to rest (a pole at 0 Hz)."""
     poles = system.poles_and_zeros()[0]
@@ -117,9 +137,9 @@ def step_figures(system: Linear) -> StepFigures | None:
         gain = float(system.response([0.0])[0].real) if len(system.B) else system.D
         return StepFigures(gain, gain, gain, "end", 0.0, 0.0, 0.0, 0.0)
     size = np.abs(poles)
-    if np.any(poles.real >= -np.maximum(_STAYING * size, _ROUNDING * size.max())):
+    if np.any(_stays(poles, size.max())):
         return None
-    walk, end = _walk(system, poles)
+    walk, end = _walk(_moving(system, poles), poles)
     time_s, state = np.concatenate(walk.time_s), np.concatenate(walk.state)
     distance = walk.of(state)
 
@@ -151,6 +171,8 @@ def step_figures(system: Linear) -> StepFigures | None:
             return np.asarray(np.abs(d) <= share * abs(reference))
 
         outside = np.flatnonzero(~within(distance))
+        if outside.size and outside[-1] == len(distance) - 1:
+            return math.inf
         return narrowed(int(outside[-1]), within) if outside.size else 0.0
 
     top = int(np.argmax(np.abs(distance + end)))

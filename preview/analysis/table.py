@@ -28,6 +28,8 @@ _THIRD_OCTAVES = (1.0, 1.25, 1.6, 2.0, 2.5, 3.15, 4.0, 5.0, 6.3, 8.0)
 PREFERRED_HZ = tuple(round(f * 10.0**d, 6) for d in (1, 2, 3, 4) for f in _THIRD_OCTAVES)[:34]
 """Third-octave preferred frequencies of ISO 266, 10 Hz to 20 kHz [Hz]."""
 
+_NO_OHM = 1e-9
+"""An impedance below this is 0 and rounding [ohm]."""
 _COLUMNS = (
     "frequency_hz",
     "gain_db",
@@ -120,7 +122,9 @@ class ResponseTable:
 def _or_dash(value: float, kind: str) -> str:
     if not math.isfinite(value):
         return "-"
-    return format_value(value, "time") if kind == "time" else format_value(value, "resistance")
+    if kind == "time":
+        return format_value(value, "time")
+    return format_value(value if value > _NO_OHM else 0.0, "resistance")
 
 
 def tabulate(

@@ -11,11 +11,28 @@ from collections.abc import Callable, Sequence
 from dataclasses import replace
 
 from preview.circuit.nodes import GND, IN, NEGATIVE_RAIL, OUT, POSITIVE_RAIL
-from preview.circuit.parts import Diode, FixedVoltage, OpAmp, Part, Potentiometer, SettablePart, Stage
+from preview.circuit.parts import (
+    Diode,
+    FixedVoltage,
+    OpAmp,
+    Part,
+    Potentiometer,
+    SettablePart,
+    Stage,
+    TwoTerminal,
+)
 from preview.circuit.reader import MOST_PARTS
 from preview.errors import CircuitError
 
-__all__ = ["cascade", "numbered_drawing", "stage_alone", "stage_outputs"]
+__all__ = [
+    "cascade",
+    "numbered_drawing",
+    "stage_alone",
+    "stage_outputs",
+    "supplies_differ",
+    "with_stage_behind",
+    "without_last_stage",
+]
 
 _SHARED = (GND, POSITIVE_RAIL, NEGATIVE_RAIL)
 _RIGHTWARD, _LEFTWARD = "─┌└├┬┴┼╭╰○▷", "─┐┘┤┬┴┼╮╯○"
@@ -70,13 +87,41 @@ def stage_alone(stage: Stage, k: int) -> Stage:
     alone = stage.joined[k - 1]
     for part in alone.parts:
         now = stage.part(f"{k}.{part.designator}")
-        if isinstance(part, SettablePart) and isinstance(now, SettablePart):
+        if isinstance(part, TwoTerminal) and isinstance(now, TwoTerminal):
+            alone = alone.with_part(replace(part, value=now.value, series=now.series))
+        elif isinstance(part, SettablePart) and isinstance(now, SettablePart):
             alone = alone.with_part(part.with_setting(now.setting))
         elif isinstance(part, OpAmp) and isinstance(now, OpAmp):
             alone = alone.with_part(replace(part, type=now.type))
         elif isinstance(part, FixedVoltage) and isinstance(now, FixedVoltage):
             alone = alone.with_part(replace(part, value=now.value))
     return alone
+
+
+def with_stage_behind(stage: Stage, behind: Stage) -> Stage:
+    """The stage or cascade, its parts as they are set, with one more stage behind it; raises as ``cascade`` does."""
+    return cascade([*_chain(stage), behind])
+
+
+def without_last_stage(stage: Stage) -> Stage:
+    """The cascade without its last stage, the parts of the others as they are set."""
+    return cascade(_chain(stage)[:-1])
+
+
+def supplies_differ(stage: Stage) -> str:
+    """What to say where the stages of a cascade are drawn with different rails; empty where they are not."""
+    if len({one.supply for one in stage.joined}) < 2:
+        return ""
+    rails = ", ".join(
+        f"{k} with {one.supply.positive_v:g} V and {one.supply.negative_v:g} V"
+        for k, one in enumerate(stage.joined, 1)
+    )
+    return f"the stages are drawn with different supplies ({rails}): all run on the first's"
+
+
+def _chain(stage: Stage) -> list[Stage]:
+    """Every stage of a cascade as it is set; a single stage as it is."""
+    return [stage_alone(stage, k) for k in range(1, len(stage.joined) + 1)] or [stage]
 
 
 def _renaming(k: int, last: int) -> Callable[[str], str]:

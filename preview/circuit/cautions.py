@@ -8,7 +8,7 @@ from collections.abc import Iterator
 from preview.circuit.controls import OPEN_OHM
 from preview.circuit.diodes import Junction
 from preview.circuit.elements import Branch, Netlist, OpAmpSite
-from preview.circuit.nodes import GND
+from preview.circuit.nodes import GND, IN
 from preview.circuit.parts import PartKind
 from preview.circuit.paths import closure, driven, holder, holders, influenced, listed, neighbours, uses
 
@@ -26,6 +26,7 @@ def warnings(circuit: Netlist) -> Iterator[tuple[str, str]]:
     yield from _diodes_across_voltages(circuit)
     yield from _blocked_feedback(circuit)
     yield from _resting_on_leakage(circuit)
+    yield from _source_on_leakage(circuit)
     for opamp in circuit.opamps:
         yield from _resting_point(circuit, opamp)
 
@@ -111,6 +112,14 @@ def _resting_on_leakage(circuit: Netlist) -> Iterator[tuple[str, str]]:
             f"direct current reaches node {listed(loose)} through {listed(users)} alone: while it blocks, leakage "
             f"sets the voltage",
             f"give it a path, such as a resistor of 1 MΩ from {loose[0]} to gnd",
+        )
+
+
+def _source_on_leakage(circuit: Netlist) -> Iterator[tuple[str, str]]:
+    if any(branch.designator == "Rleakage" for branch in circuit.branches):
+        yield (
+            f"node {IN} lies between capacitors: taken to leak to {GND} through 1 TΩ",
+            f"put in the resistor that the board has there, such as 10 MΩ from {IN} to {GND}",
         )
 
 

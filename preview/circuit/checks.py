@@ -9,13 +9,12 @@ from preview.circuit.nodes import GND, IN, LOAD_PARTS, OUT, SOURCE_PARTS
 from preview.circuit.parts import PartKind
 from preview.circuit.paths import (
     RAILS,
-    closure,
     driven,
+    floating,
     holder,
     holders,
     influenced,
     listed,
-    neighbours,
     uses,
 )
 from preview.errors import CircuitError
@@ -126,17 +125,14 @@ def _dangling(circuit: Netlist) -> Iterator[Problem]:
 
 
 def _no_dc_path(circuit: Netlist) -> Iterator[Problem]:
-    conducting = (branch for branch in circuit.branches if branch.kind is not PartKind.CAPACITOR)
-    reached = closure(driven(circuit), neighbours(conducting))
     users_of = uses(circuit)
-    floating = [node for node in circuit.nodes if node not in reached]
-    if floating:
-        users = dict.fromkeys(user for node in floating for user in users_of[node])
-        nodes = "node" if len(floating) == 1 else "nodes"
-        verb = "is" if len(floating) == 1 else "are"
+    if loose := floating(circuit):
+        users = dict.fromkeys(user for node in loose for user in users_of[node])
+        nodes = "node" if len(loose) == 1 else "nodes"
+        verb = "is" if len(loose) == 1 else "are"
         yield (
-            f"{nodes} {listed(floating)} {verb} floating: no direct current can flow through {listed(users)}",
-            f"give it a path, such as a resistor of 1 MΩ from {floating[0]} to gnd",
+            f"{nodes} {listed(loose)} {verb} floating: no direct current can flow through {listed(users)}",
+            f"give it a path, such as a resistor of 1 MΩ from {loose[0]} to gnd",
         )
 
 

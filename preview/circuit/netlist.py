@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Collection
+from dataclasses import replace
 
 from preview.circuit.checks import check
 from preview.circuit.controls import Contact, Track
@@ -19,7 +20,8 @@ from preview.circuit.nodes import (
     SOURCE_NODE,
 )
 from preview.circuit.opamp import Limit
-from preview.circuit.parts import Stage, Supply
+from preview.circuit.parts import PartKind, Stage, Supply
+from preview.circuit.paths import closure, floating, neighbours
 from preview.circuit.sites import check_supply, opamp_site
 from preview.circuit.wiring import Wiring
 from preview.errors import UnknownNameError
@@ -43,6 +45,9 @@ __all__ = [
     "check_supply",
     "netlist",
 ]
+
+LEAKAGE_OHM = 1e12
+"""Leakage of a capacitive source that nothing else leads direct current from; an assumption [ohm]."""
 
 
 def netlist(
@@ -108,8 +113,26 @@ def netlist(
         controls=tuple(wiring.controls),
         temperature_degc=stage.temperature_degc,
     )
+    circuit = _with_leakage(circuit)
     check(circuit, where)
     return circuit
+
+
+def _with_leakage(circuit: Netlist) -> Netlist:
+    """The circuit with the leakage of a capacitive source, where nothing else leads direct current from its node.
+
+    Between two capacitors, as a piezo disc and a coupling capacitor, the leakage of the parts decides where a node
+    rests, and any is enough. An op-amp input or a diode there would draw a current of its own: that is for the checks.
+    """
+    conducting = (branch for branch in circuit.branches if branch.kind is not PartKind.CAPACITOR)
+    between = closure([IN], neighbours(conducting))
+    drawing = {node for opamp in circuit.opamps for node in (opamp.plus, opamp.minus)}
+    drawing |= {node for port in circuit.ports if isinstance(port.law, Junction) for node in (port.a, port.b)}
+    capacitive = any(branch.designator == "Csource" for branch in circuit.branches)
+    if not capacitive or IN not in floating(circuit) or between & drawing:
+        return circuit
+    leakage = Branch("Rleakage", PartKind.RESISTOR, IN, GND, LEAKAGE_OHM)
+    return replace(circuit, branches=(*circuit.branches, leakage))
 
 
 def _driving(source: SourceModel) -> tuple[Branch, ...]:

@@ -25,7 +25,7 @@ POSITIVE_RAIL = "supply+"
 """The positive rail in force; any part may be connected to it."""
 NEGATIVE_RAIL = "supply-"
 """The negative rail in force; on a single supply it is at gnd's voltage."""
-SOURCE_PARTS = ("Rsource", "Lsource", "Csource", "Cwinding", "Ccable")
+SOURCE_PARTS = ("Rsource", "Lsource", "Csource", "Cwinding", "Ccable", "Rleakage")
 """Designators of what drives the stage: in series from ``source`` to ``in``, then from ``in`` to ``gnd``."""
 LOAD_PARTS = ("Rload", "Cload")
 """Designators of what follows the stage, from the output that is listened to, to ``gnd``."""

@@ -295,7 +295,7 @@ class Stage:
     temperature_degc: float = ROOM_DEGC
     """Temperature of the circuit [degrees Celsius]."""
     joined: tuple[Stage, ...] = ()
-    """The stages of a cascade, each as it was opened; empty for a single stage."""
+    """The stages of a cascade, each as it was joined; empty for a single stage."""
 
     @property
     def opened_as(self) -> tuple[str, ...]:

@@ -7,8 +7,20 @@ from collections.abc import Iterable
 
 from preview.circuit.elements import Branch, Netlist
 from preview.circuit.nodes import GND, NEGATIVE_RAIL, POSITIVE_RAIL
+from preview.circuit.parts import PartKind
 
-__all__ = ["RAILS", "closure", "driven", "holder", "holders", "influenced", "listed", "neighbours", "uses"]
+__all__ = [
+    "RAILS",
+    "closure",
+    "driven",
+    "floating",
+    "holder",
+    "holders",
+    "influenced",
+    "listed",
+    "neighbours",
+    "uses",
+]
 
 RAILS = (POSITIVE_RAIL, NEGATIVE_RAIL)
 
@@ -38,6 +50,13 @@ def holders(circuit: Netlist) -> dict[str, str]:
     """Nodes that gnd, the ideal source and fixed voltages hold, and what holds each, in words."""
     held = {GND: "gnd", circuit.input_node: "the signal source"}
     return held | {fixed.node: fixed.designator for fixed in circuit.fixed}
+
+
+def floating(circuit: Netlist) -> list[str]:
+    """Nodes that no direct current can reach."""
+    conducting = (branch for branch in circuit.branches if branch.kind is not PartKind.CAPACITOR)
+    reached = closure(driven(circuit), neighbours(conducting))
+    return [node for node in circuit.nodes if node not in reached]
 
 
 def driven(circuit: Netlist) -> set[str]:

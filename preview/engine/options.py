@@ -9,6 +9,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import Any, Literal, TypeVar
 
+from preview.circuit.cascade import supplies_differ
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD, parse_load, parse_source, said
 from preview.circuit.library import open_stages, with_overrides
 from preview.circuit.nodes import OUT
@@ -262,21 +263,10 @@ def session_from(
         at_end=at_end,
         output=output,
         notes=tuple(printable(note) for note in notes),
-        warnings=_supplies_differ(drawn) if options.supply is None else (),
+        warnings=tuple(one for one in (supplies_differ(drawn),) if one and options.supply is None),
     )
     session.netlist()
     return session
-
-
-def _supplies_differ(stage: Stage) -> tuple[str, ...]:
-    """A warning where the stages of a cascade are drawn with different rails."""
-    if len({one.supply for one in stage.joined}) < 2:
-        return ()
-    rails = ", ".join(
-        f"{k} with {one.supply.positive_v:g} V and {one.supply.negative_v:g} V"
-        for k, one in enumerate(stage.joined, 1)
-    )
-    return (f"the stages are drawn with different supplies ({rails}): all run on the first's",)
 
 
 def intake_from(options: argparse.Namespace) -> dict[str, Any]:

@@ -83,7 +83,7 @@ ACTIONS: tuple[Action, ...] = (
     _parts("value_up", "right", "Next higher value of the part's series; 1 % of a turn; closed", "more"),
     _parts("type_value", "= enter", "Type a value, such as 4k7 or 22n, 70 % or open", "type"),
     _listen("bypass", "b", "Hear the input without the stage, and back", "bypass"),
-    _circuit("choose_stage", "s", "Choose another stage", "stage"),
+    _circuit("choose_stage", "s", "Choose another stage, or one more behind it: a cascade", "stage"),
     _screen("switch_view", "v", "Next view: response, circuit, op-amps, candidates, timeline", "view"),
     _screen("view_response", "f2", "View: the response"),
     _screen("view_circuit", "f3", "View: the circuit"),
@@ -101,6 +101,8 @@ ACTIONS: tuple[Action, ...] = (
         "Take a limit away from the op-amps to hear what it does, or give it back",
         "limits",
     ),
+    _circuit("cascade", "&", "Put one more stage behind the present one: a cascade, solved as one circuit"),
+    _circuit("cascade_drop", "_", "Take the last stage of the cascade away"),
     _parts("next_part", "down", "Select the next part"),
     _parts("previous_part", "up", "Select the part before"),
     _parts(
@@ -162,6 +164,16 @@ ACTIONS: tuple[Action, ...] = (
     _response("cursor_up", "}", "Cursor of the response a twelfth of an octave up"),
     _response("cursor_off", "|", "Cursor of the response: at the corner, or off"),
     _response("node_volts", "H", "Direct and peak volts at the nodes of the circuit: on or off"),
+    _response(
+        "pan_left", "\\ ctrl+left", "Circuit drawing larger than its panel: show what lies to the left"
+    ),
+    _response(
+        "pan_right", "/ ctrl+right", "Circuit drawing larger than its panel: show what lies to the right"
+    ),
+    _response("pan_up", "pageup ctrl+up", "Circuit drawing larger than its panel: show what lies above"),
+    _response(
+        "pan_down", "pagedown ctrl+down", "Circuit drawing larger than its panel: show what lies below"
+    ),
     _screen("colours", "k", "Dark or light colours"),
     _listen("input", "I", "Choose what is heard: a recording, a test signal, live input", "input"),
     _listen("mute", "0", "Silence the device while everything runs, and back", "mute"),

@@ -40,6 +40,7 @@ from preview.ui.listening import Listening
 from preview.ui.partwork import PartWork
 from preview.ui.questions import Questions
 from preview.ui.stagewatch import StageWatch
+from preview.ui.stagework import StageWork
 from preview.ui.view import View
 
 __all__ = ["Desk"]
@@ -101,7 +102,7 @@ class Desk:
         self.stage_watch = StageWatch(self)
         self._rooms = (
             *(self, self.parts, self.listening, self.view, self.clips, self.candidates),
-            *(self.connections, self.keeping, Questions(self)),
+            *(self.connections, self.keeping, StageWork(self), Questions(self)),
         )
 
     # ---- actions ----
@@ -184,6 +185,14 @@ class Desk:
         self._before.pop(stage.opened_as, None)
         self.change(self.session.with_stage(stage))
         return stage.about
+
+    def rejoin(self, changed: Callable[[Stage], Stage]) -> None:
+        """Another chain of stages, its parts as they are set and as they were before, on the rails in force."""
+        now, before = self.session, self.before
+        stage = changed(now.stage)
+        self.change(replace(now.with_stage(stage), supply=now.supply))
+        self.before = replace(before.with_stage(changed(before.stage)), supply=before.supply)
+        self._before[stage.opened_as] = self.before
 
     def _become(self, session: Session, commands: list[Command]) -> None:
         for command in commands:

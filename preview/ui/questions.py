@@ -11,7 +11,7 @@ from dataclasses import replace
 from typing import TYPE_CHECKING
 
 from preview.circuit.drive import NO_LOAD, exact_load, exact_source, parse_load, parse_source, said
-from preview.circuit.library import find_stage, open_stages, stage_names
+from preview.circuit.library import open_stages
 from preview.circuit.opamp import LIMITS
 from preview.circuit.parts import Supply
 from preview.circuit.settings import read_setting, setting_note, setting_text
@@ -33,10 +33,8 @@ from preview.values.levels import FULL_SCALE_PRESETS, parse_full_scale, parse_su
 if TYPE_CHECKING:
     from preview.ui.desk import Desk
 
-__all__ = ["Questions", "stage_choices"]
+__all__ = ["Questions"]
 
-_FILE_ANSWER = "\0file"
-"""Answer of the stage menu's last row; no name can be this."""
 _USUAL_SINGLE_V = (5.0, 9.0, 12.0, 24.0)
 _USUAL_DUAL_V = (5.0, 9.0, 12.0, 15.0, 18.0)
 
@@ -48,18 +46,6 @@ def _tried(session: Session) -> Session:
     """The session, once its circuit is known to be one that can be computed."""
     session.netlist()
     return session
-
-
-def stage_choices() -> list[Choice]:
-    """Every stage by name, and a file of one's own."""
-    rows = []
-    for name in stage_names():
-        try:
-            about = find_stage(name).title
-        except PreviewError as error:
-            about = f"cannot be used: {error}"
-        rows.append(Choice(name, name, about))
-    return [*rows, Choice(_FILE_ANSWER, "a file ...", "type the path of a stage file")]
 
 
 class Questions:
@@ -166,31 +152,7 @@ class Questions:
         about = "From out to gnd: none, 600, 10k || 220p; headphones 32 ohm, line input, cable 1n ..."
         return self._value("Load", about, exact_load(self._desk.session.load), read)
 
-    # ---- stage and op-amps ----
-
-    def do_choose_stage(self) -> Menu:
-        """Choose a stage from the list, or a file."""
-
-        def chosen(name: str) -> Outcome:
-            if name == _FILE_ANSWER:
-                return self._ask_stage_file()
-            return self._desk.open_stage(find_stage(name)) if name != self._desk.session.stage.name else None
-
-        return Menu("Stage", stage_choices(), chosen, now=self._desk.session.stage.name)
-
-    def _ask_stage_file(self) -> Question:
-        def understand(text: str) -> str:
-            stage = find_stage(text.strip())
-            _tried(self._desk.session.with_stage(stage))
-            return f"{stage.title}: {len(stage.parts)} parts, supply {rails(stage.supply)}"
-
-        return Question(
-            "Stage file",
-            "The path of a .toml file, or a name",
-            self._desk.session.stage.name,
-            understand,
-            lambda text: self._desk.open_stage(find_stage(text.strip())),
-        )
+    # ---- op-amps ----
 
     def do_opamp_type(self) -> Outcome:
         """Choose the type of the stage's op-amps from the list."""

@@ -9,6 +9,7 @@ from typing import TYPE_CHECKING
 from preview.circuit.library import open_stages
 from preview.circuit.parts import OpAmp, SettablePart, Stage
 from preview.errors import PreviewError, printable
+from preview.ui.stagework import doubts
 
 if TYPE_CHECKING:
     from preview.ui.desk import Desk
@@ -46,6 +47,8 @@ class StageWatch:
             self._take(open_stages(self._desk.session.stage.opened_as))
         except PreviewError as error:
             return f"{error}; what is heard stays as it was", "error"
+        if said := doubts(self._desk.session):
+            return f"{names} was edited and is read anew; {said}", "warning"
         return (
             f"{names} was edited and is read anew; {self._desk.keys.shown('undo')} takes that back",
             "information",

@@ -68,6 +68,8 @@ class Axis(StrEnum):
         return (1.0, 1e6) if self is Axis.WIDE else (20.0, 20e3)
 
 
+PAN_COLUMNS, PAN_LINES = 8, 2
+"""By how much a key moves a drawing that is larger than its panel [cells]."""
 CURSOR_STEP_RATIO = 2.0 ** (1.0 / 12.0)
 """The cursor moves by a twelfth of an octave."""
 
@@ -93,6 +95,8 @@ class View:
         self.cursor_hz: float | None = None
         self.node_volts = False
         self.opamp: str | None = None
+        self.pan = (0, 0)
+        """How far the drawing is moved from where the selected part puts it: columns and lines."""
 
     # ---- which view ----
 
@@ -178,6 +182,28 @@ class View:
         self.node_volts = not self.node_volts
         self._desk.link.send(ProbeNodes(self.node_volts))
         return f"volts at the nodes {'shown' if self.node_volts else 'hidden'}"
+
+    # ---- a drawing larger than its panel ----
+
+    def pan_by(self, columns: int, lines: int) -> None:
+        """Move the drawing; the panel stops at its edges."""
+        self.pan = (self.pan[0] + columns, self.pan[1] + lines)
+
+    def do_pan_left(self) -> None:
+        """What lies to the left."""
+        self.pan_by(-PAN_COLUMNS, 0)
+
+    def do_pan_right(self) -> None:
+        """What lies to the right."""
+        self.pan_by(PAN_COLUMNS, 0)
+
+    def do_pan_up(self) -> None:
+        """What lies above."""
+        self.pan_by(0, -PAN_LINES)
+
+    def do_pan_down(self) -> None:
+        """What lies below."""
+        self.pan_by(0, PAN_LINES)
 
     # ---- the cursor of the response ----
 

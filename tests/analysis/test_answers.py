@@ -107,7 +107,7 @@ def test_as_drawn_stands_beside_as_driven_and_loaded() -> None:
     assert report["gain_change_db"] == pytest.approx([0.0, change_db], abs=1e-3)
     assert report["passband_gain_change_db"] == pytest.approx(0.0, abs=1e-6)
     lines = "\n".join(found.as_lines())
-    for words in ("as drawn", "driven, loaded", "3.386 kHz", "333.7 Hz", "-90.1 %", f"{change_db:+.2f} dB"):
+    for words in ("as drawn", "driven, loaded", "3.386 kHz", "333.7 Hz", "-90.15 %", f"{change_db:+.2f} dB"):
         assert words in lines
     assert set(found.columns) == {"drawn_gain_db", "drawn_phase_deg"}
 

@@ -20,7 +20,7 @@ from preview.circuit.library import find_stage
 from preview.circuit.netlist import Branch, Netlist, netlist
 from preview.circuit.opamp import OpAmpModel
 from preview.circuit.parts import OpAmp, PartKind, Stage
-from preview.network.transfer import response
+from preview.network.transfer import output_impedance, response
 
 PUBLISHED = tomllib.loads((Path(__file__).parents[1] / "published" / "filters.toml").read_text("utf-8"))
 EXAMPLES = {row["id"]: row for row in PUBLISHED["example"]}
@@ -167,6 +167,8 @@ ELSEWHERE = {
     "franco_3_7": "a tone control: curves and formulas, below",
     "franco_3_9_0db": "needs one more resistor, below",
 }
+# Left out: example 6.11, p. 290, the shift of a corner by 1 MHz of gain-bandwidth. What could be read of it (a
+# companion text) doubles its own percentage to reach the printed 0.16 %, and does not show the circuit.
 
 
 def half_last_digit(value: float) -> float:
@@ -249,6 +251,28 @@ def test_low_pass_output_of_franco_3_19() -> None:
     parts = {ours: row["parts"][theirs] for ours, theirs in case.parts.items()}
     found = circuit(case.stage, parts, "lp")
     assert evaluate(found, "dc_gain_db") == pytest.approx(row["published"]["lp_gain_db"], abs=0.05)
+
+
+def test_low_pass_notch_of_franco_3_20() -> None:
+    # p. 150: the biquad with a fourth op-amp that adds input, band-pass and low-pass. No stage of the library has it;
+    # here it is put behind the biquad. 15.8k is the standard value for 15.92k, so that every frequency is 0.73 % high.
+    row = OTHERS["franco_3_20"]
+    parts, printed = row["parts"], row["published"]
+    values = {"R1": parts["R1"], "R2": parts["R1"], "R3": parts["R"], "R6": parts["R"]}
+    biquad = circuit("two-integrator-biquad", values | {"C1": parts["C"], "C2": parts["C"]})
+    rows = (("R12", "in"), ("R13", "out"), ("R14", "lp"), ("R15", "notch"))
+    added = tuple(
+        Branch(name, PartKind.RESISTOR, a, "z", parts[f"R{n}"]) for n, (name, a) in enumerate(rows, 2)
+    )
+    summer = replace(biquad.opamps[0], designator="U4", minus="z", out="notch")
+    found = replace(
+        biquad, branches=(*biquad.branches, *added), opamps=(*biquad.opamps, summer), output_node="notch"
+    )
+    high = parts["R"] * parts["C"] * 2 * np.pi * 1000.0  # what 1 kHz is divided by
+    assert evaluate(found, "f0_hz") == pytest.approx(printed["f0_hz"] / high, rel=2e-3)
+    assert evaluate(found, "q") == pytest.approx(printed["q"], rel=2e-3)
+    assert 20 * np.log10(abs(gain(found, 1e6))) == pytest.approx(printed["hf_gain_db"], abs=0.05)
+    assert abs(gain(found, printed["fz_hz"] / high)) < 0.01 * abs(gain(found, 1e6))
 
 
 FIRST_ORDER = {"R1": 15.9e3, "C1": 10e-9, "R2": 10e3, "R3": 10e3}
@@ -376,3 +400,28 @@ def _with_gain_bandwidth(found: Netlist, gain_bandwidth_hz: float) -> Netlist:
     model = replace(found.opamps[0].model, type="trial", **figures)
     assert isinstance(model, OpAmpModel)
     return replace(found, opamps=tuple(replace(o, type="trial", model=model) for o in found.opamps))
+
+
+def test_corner_of_a_gain_of_ten_with_1_mhz_of_gain_bandwidth_fiore_5_1() -> None:
+    row = OTHERS["fiore_5_1"]
+    found = circuit("inverting-gain", {"R1": 10e3, "R2": 10e3 * (row["noise_gain"] - 1)})
+    real = _with_gain_bandwidth(found, row["gbw_hz"])
+    assert evaluate(real, "corner_hz") == pytest.approx(row["published_hz"], rel=2e-3)
+
+
+def test_output_impedance_of_franco_6_5_is_10_milliohm_and_159_microhenry() -> None:
+    # p. 272: gain 10 with an open-loop gain of 100 V/mV, 1 MHz and 100 ohm; up to 10 Hz it is the printed resistance,
+    # between the breaks the printed inductance, a decade above the second one the 100 ohm (all within the asymptotes).
+    row = OTHERS["franco_6_5"]
+    found = circuit("inverting-gain", {"R1": row["R1"], "R2": row["R2"]})
+    figures = {
+        "gain_bandwidth_hz": row["ft_hz"],
+        "open_loop_gain": row["a0"],
+        "output_resistance_ohm": row["ro_ohm"],
+    }
+    model = replace(found.opamps[0].model, type="trial", **figures)
+    found = replace(found, opamps=(replace(found.opamps[0], type="trial", model=model),))
+    low, between, high = np.abs(output_impedance(found, [0.1, 1e3, 1e7]))
+    assert low == pytest.approx(row["published_low_freq_ohm"], rel=2e-3)
+    assert between / (2 * np.pi * 1e3) == pytest.approx(row["published_inductance_h"], rel=5e-3)
+    assert high == pytest.approx(row["ro_ohm"], rel=1e-2)

@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-import tomllib
-from pathlib import Path
-
 import numpy as np
 import pytest
 
@@ -16,8 +13,6 @@ from preview.errors import CircuitError
 from preview.network.transfer import response
 from preview.values.quality import Quality
 from tests.nets import ALL, HIGH_PASS, LOW_PASS, SALLEN_KEY, net
-
-PUBLISHED = tomllib.loads((Path(__file__).parents[1] / "published" / "filters.toml").read_text("utf-8"))
 
 
 def expectations() -> list[tuple[Stage, Expect]]:

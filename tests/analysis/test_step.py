@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import tomllib
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -11,9 +12,11 @@ import pytest
 import scipy.signal
 
 from preview.analysis.step import step_curve, step_figures
+from preview.circuit.drive import parse_source
 from preview.circuit.library import find_stage
 from preview.circuit.netlist import netlist
 from preview.network.linear import Linear, linear
+from preview.network.transfer import response
 from tests.nets import ALL, net
 
 PUBLISHED = tomllib.loads((Path(__file__).parents[1] / "published" / "sections.toml").read_text("utf-8"))
@@ -129,3 +132,15 @@ def test_a_circuit_of_resistors_follows_at_once() -> None:
     assert found is not None
     assert (found.rise_s, found.overshoot_percent, found.settling_0_1_percent_s) == (0.0, 0.0, 0.0)
     assert found.end_gain == pytest.approx(0.75)
+
+
+def test_a_trapped_charge_that_the_output_does_not_show_is_left_out() -> None:
+    # A piezo disc on an ideal all-pass: the sum of what the disc and C1 hold never changes, and is not heard. The step
+    # rests where the response is at the lowest frequencies.
+    stage = find_stage("all-pass")
+    stage = stage.with_part(replace(stage.opamps[0], type="ideal"))
+    circuit = netlist(stage, source=parse_source("20 nF"))
+    figures = step_figures(linear(circuit))
+    assert figures is not None
+    assert figures.end_gain == pytest.approx(response(circuit, [1e-3])[0].real, rel=1e-6)
+    assert 0.0 < figures.settling_1_percent_s < figures.settling_0_1_percent_s < 1e-3

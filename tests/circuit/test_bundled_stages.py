@@ -159,6 +159,16 @@ def test_every_bundled_stage_is_listed_and_every_formula_is_of_one() -> None:
     assert further == {name for name in GAIN if ":" in name}
 
 
+@pytest.mark.parametrize("name", stage_names())
+def test_a_stage_says_what_each_part_does_and_which_ones_to_turn(name: str) -> None:
+    stage = find_stage(name)
+    assert stage.about
+    assert stage.expects
+    assert all(part.role for part in stage.parts)
+    assert all(part.series and part.tolerance_ratio for part in stage.valued)
+    assert any(part.adjust for part in stage.settable)
+
+
 @pytest.mark.parametrize("name", WITH_FORMULA)
 def test_every_expected_figure_comes_true_by_closed_form(name: str) -> None:
     for expect in find_stage(name).expects:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -10,6 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from preview.analysis.response import find_corners
+from preview.circuit.cautions import warnings
 from preview.circuit.drive import (
     IDEAL_SOURCE,
     LOADS,
@@ -23,6 +25,7 @@ from preview.circuit.drive import (
     parse_source,
     said,
 )
+from preview.circuit.library import find_stage
 from preview.circuit.netlist import Netlist, netlist
 from preview.circuit.parts import PartKind, Stage, Supply, TwoTerminal
 from preview.errors import CircuitError, NotationError, PartValueError
@@ -214,12 +217,6 @@ def test_impossible_figures_are_refused_by_name() -> None:
             netlist(wired, source=source)
 
 
-def test_a_source_behind_a_capacitance_alone_needs_a_resistor_in_the_stage() -> None:
-    circuit = stage(("C1", "in", "out", 1e-6), ("R1", "out", "gnd", 1e6))
-    with pytest.raises(CircuitError, match="node in is floating"):
-        netlist(circuit, source=SOURCES["piezo disc"])
-
-
 def test_430_ohm_before_a_47_ohm_filter_moves_its_corner() -> None:
     # By hand, 47 ohm into 1 uF: 1 / (2 pi 47 1u) = 3386.28 Hz; 430 ohm before it: 1 / (2 pi 477 1u) = 333.66 Hz.
     wired = stage(("R1", "in", "out", 47.0), ("C1", "out", "gnd", 1e-6))
@@ -274,3 +271,37 @@ def test_every_trade_name_stands_in_the_readme_with_its_figures() -> None:
         figures = said(model).removesuffix(" (typical)").replace(", winding", " with")
         assert f"`{name}`" in readme
         assert f"`{name}` {figures}" in readme or figures.removesuffix(" Ω") in name
+
+
+# ---- a source of a capacitor before another capacitor ----
+
+
+def test_a_piezo_sensor_on_a_charge_amplifier_divides_its_charge_as_the_closed_form_says() -> None:
+    # 1 nF, then 300 pF of cable, then C1 of 1 nF into the sum: C1 sees Cs / (Cs + Ccable + C1) of the volts; C2 is C1.
+    stage = find_stage("charge-amplifier")
+    stage = stage.with_part(replace(stage.opamps[0], type="ideal"))
+    circuit = netlist(stage, source=parse_source("piezo accelerometer, cable 300p"))
+    assert abs(response(circuit, [1e3])[0]) == pytest.approx(1.0 / 2.3, rel=1e-4)
+    (leakage,) = (branch for branch in circuit.branches if branch.designator == "Rleakage")
+    assert (leakage.a, leakage.b, leakage.value) == ("in", "gnd", 1e12)
+    assert abs(input_impedance(circuit, [1e3])[0]) == pytest.approx(1 / (2 * np.pi * 1e3 * 1e-9), rel=1e-3)
+    (doubt,) = warnings(circuit)
+    assert doubt[0] == "node in lies between capacitors: taken to leak to gnd through 1 TΩ"
+    assert "10 MΩ from in to gnd" in doubt[1]
+
+
+@pytest.mark.parametrize(
+    "name", ["differentiator", "rc-high-pass", "inverting-band-pass", "single-supply-gain"]
+)
+def test_a_capacitive_source_before_a_coupling_capacitor_is_computed(name: str) -> None:
+    circuit = netlist(find_stage(name), source=parse_source("20 nF"))
+    assert np.isfinite(response(circuit, [10.0, 1e3, 1e5])).all()
+
+
+def test_leakage_is_no_path_for_the_current_of_an_input_or_a_diode() -> None:
+    for name in ("rc-low-pass", "sallen-key-low-pass", "twin-t-notch"):
+        with pytest.raises(CircuitError, match=r"floating: .* the \+ input of U1"):
+            netlist(find_stage(name), source=parse_source("20 nF"))
+    # one that has a path needs none
+    circuit = netlist(find_stage("non-inverting-gain"), source=parse_source("20 nF"))
+    assert "Rleakage" not in {branch.designator for branch in circuit.branches}

@@ -10,6 +10,10 @@ import pytest
 
 from preview.analysis.figures import evaluate
 from preview.circuit import library
+from preview.circuit.cautions import warnings
+from preview.circuit.controls import TAPERS
+from preview.circuit.diodes import DIODE_TYPES
+from preview.circuit.figures import FIGURES
 from preview.circuit.library import find_stage, new_stage_file, stage_names, stage_source, with_overrides
 from preview.circuit.netlist import netlist
 from preview.circuit.part_reader import read_part
@@ -129,6 +133,25 @@ def test_a_new_stage_file_is_a_stage_that_keeps_its_word(tmp_path: Path) -> None
         assert abs(found - expect.value) <= expect.within * (1.0 if expect.absolute else expect.value)
     drawn = set(re.findall(r"[A-Z]+[0-9]+", stage.drawing))
     assert drawn == {part.designator for part in stage.parts}
+
+
+def test_a_new_stage_file_raises_no_doubt_and_explains_every_key(tmp_path: Path) -> None:
+    path = tmp_path / "mine.toml"
+    new_stage_file(path)
+    circuit = netlist(find_stage(str(path)))
+    for closed in (0.0, 1.0):
+        assert list(warnings(circuit.with_values({"S1": closed}))) == []
+    text = path.read_text("utf-8")
+    part_keys = "kind nodes value tolerance series role adjust dielectric half_voltage ends wiper taper position closed"
+    diode_keys = (
+        "anode cathode type emission saturation capacitance breakdown breakdown_current breakdown_slope"
+    )
+    stage_keys = (
+        "title about supply temperature outputs drawing what within source output parts opamp plus minus out"
+    )
+    names = [*part_keys.split(), *diode_keys.split(), *stage_keys.split(), *DIODE_TYPES, *TAPERS]
+    names += [name for name in FIGURES if not name.startswith("low_q")]
+    assert [name for name in names if not re.search(rf"\b{name}\b", text)] == []
 
 
 def test_the_parts_it_has_no_use_for_are_parts_too(tmp_path: Path) -> None:

@@ -8,6 +8,7 @@ from pathlib import Path
 import pytest
 
 from preview.circuit import opamp_library
+from preview.circuit.opamp_units import FIGURE_FIELDS
 from preview.cli import main
 
 
@@ -48,6 +49,21 @@ def test_the_comparison_as_json_is_in_si_units(capsys: pytest.CaptureFixture[str
     assert rows["OP27"]["real"] is True
     assert rows["ideal"]["gain_bandwidth_hz"] is None
     assert rows["ideal"]["class"] is None
+
+
+def test_some_types_are_compared_figure_by_figure(capsys: pytest.CaptureFixture[str]) -> None:
+    code, out, err = run(capsys, "opamps", "tl072", "LM358", "ideal")
+    assert (code, err) == (0, "")
+    rows = {line[:44].strip(): line[44:].split() for line in out.splitlines()[1:-1]}
+    assert out.splitlines()[0].split() == ["TL072", "LM358", "ideal"]
+    assert rows["slew rate of a rising output"][:4] == ["13", "V/µs", "0.3", "V/µs"]
+    assert rows["open-loop output resistance"][:4] == ["200", "Ω", "300", "Ω~"]
+    assert rows["beyond the common-mode range the output"][:2] == ["reverses", "reverses"]
+    assert all(row[-2:] == ["no", "limit"] for row in rows.values())
+    assert len(rows) == len(FIGURE_FIELDS) + 2
+    _, report, _ = run(capsys, "opamps", "tl072", "LM358", "--json")
+    assert [row["name"] for row in json.loads(report)["opamps"]] == ["TL072", "LM358"]
+    assert run(capsys, "opamps", "TL072", "TLO72")[0] == 5
 
 
 def test_one_type_is_told_with_its_sources_and_gaps(capsys: pytest.CaptureFixture[str]) -> None:

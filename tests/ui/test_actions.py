@@ -9,6 +9,7 @@ import pytest
 from textual.pilot import Pilot
 
 from preview.circuit.drive import IDEAL_SOURCE, NO_LOAD
+from preview.circuit.library import stage_names
 from preview.circuit.netlist import Netlist
 from preview.circuit.parts import Supply
 from preview.engine.messages import (
@@ -52,6 +53,8 @@ Check = Callable[[DeskApp, list[Command]], bool]
 
 AT_3_S = (".", ".", ".")
 """Keys that bring the playhead from 0 to 3 s; the file runs at 48 kHz."""
+TO_BIQUAD = ("s", *["up"] * (stage_names().index("inverting-low-pass") + 3), "enter", "f3")
+"""Keys that open the last stage of the list, whose drawing is larger than the view at 80 x 24."""
 
 
 def _sent(command: Command) -> Check:
@@ -68,6 +71,11 @@ def _cursor_moved(ratio: float) -> Check:
         math.isclose(app.desk.view.cursor_hz, start_hz * ratio, rel_tol=1e-6)
         for start_hz in (1e3, 1.0 / (2.0 * math.pi * 100e3 * 1e-9))
     )
+
+
+def _panned(columns: int, lines: int) -> Check:
+    """On a small screen; on a large one the whole drawing is shown and does not move."""
+    return lambda app, _sent: app.desk.view.pan == ((columns, lines) if app.size == SMALL else (0, 0))
 
 
 def _keeps(letter: str) -> Check:
@@ -90,6 +98,8 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "tie": ((), _lists("Tie R1: when one moves, the others move with it")),
     "bypass": ((), _sent(SetBypass(True))),
     "choose_stage": ((), _lists("Stage")),
+    "cascade": ((), _lists("The next stage of the cascade")),
+    "cascade_drop": ((), lambda app, _: "this is a single stage" in app.foot.message),
     "switch_view": ((), lambda app, _: app.desk.view.shown is Shown.CIRCUIT),
     "view_response": (("v",), lambda app, _: app.desk.view.shown is Shown.RESPONSE),
     "view_circuit": ((), lambda app, _: app.desk.view.shown is Shown.CIRCUIT),
@@ -168,6 +178,10 @@ CHECKS: dict[str, tuple[Keys, Check]] = {
     "cursor_up": (("|",), _cursor_moved(2.0 ** (1 / 12))),
     "cursor_off": (("}",), lambda app, _: app.desk.view.cursor_hz is None),
     "node_volts": ((), lambda app, _: app.desk.view.node_volts),
+    "pan_left": ((*TO_BIQUAD, "/", "/"), _panned(8, 0)),
+    "pan_right": (TO_BIQUAD, _panned(8, 0)),
+    "pan_up": ((*TO_BIQUAD, "pagedown", "pagedown"), _panned(0, 2)),
+    "pan_down": (TO_BIQUAD, _panned(0, 2)),
     "next_unit": ((), lambda app, _: app.desk.view.unit is LevelUnit.DBU),
     "clear_holds": ((), _sent(ClearHolds())),
     "phase": ((), lambda app, _: app.desk.view.phase),
@@ -393,14 +407,14 @@ async def test_the_stage_chooser_moves_takes_and_leaves(make_app, engine) -> Non
 
 
 async def test_a_stage_file_is_opened_by_its_path(make_app, engine, tmp_path) -> None:
-    from preview.circuit.library import stage_names, stage_source
+    from preview.circuit.library import stage_source
 
     file = tmp_path / "mine.toml"
     file.write_text(stage_source("inverting-high-pass").replace("Inverting high-pass", "Mine [red]"), "utf-8")
     app: DeskApp = make_app()
     async with app.run_test(size=(80, 24)) as pilot:
         above = stage_names().index(app.desk.session.stage.name)
-        await pilot.press("s", *["up"] * (above + 1), "enter")  # past the first row to the last: a file
+        await pilot.press("s", *["up"] * (above + 2), "enter")  # past the first row to the last: a file
         await pilot.pause()
         assert isinstance(app.screen, EntryScreen)
         app.screen.query_one("#typed").value = "no-such-stage"

@@ -3,11 +3,14 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Callable
 from dataclasses import replace
 
 import pytest
+from textual.events import MouseScrollDown
 
 from preview.circuit.drive import parse_source
+from preview.circuit.library import find_stage
 from preview.circuit.opamp import OpAmpReading
 from preview.circuit.parts import Supply
 from preview.engine.messages import NodePeaks, ProbeNodes
@@ -174,3 +177,76 @@ def test_a_supply_is_in_force_for_the_direct_voltages(desk) -> None:
     desk.figures.now = compute_figures(job_of(desk.session, 0.0))
     assert not desk.figures.now.problem
     assert desk.figures.now.rest_v["out"] == pytest.approx(0.0, abs=1e-3)
+
+
+# ---- a drawing larger than its panel ----
+
+
+@pytest.fixture
+def biquad(session, engine) -> Desk:
+    """76 columns, 14 lines."""
+    desk = Desk(session.with_stage(find_stage("two-integrator-biquad")), engine)
+    desk.take(engine.snapshot)
+    return desk
+
+
+@pytest.fixture
+def painted(biquad) -> Callable[[int, int], list[str]]:
+    """One panel's lines, as often as they are wanted."""
+    panel = CircuitPanel(biquad, Look())
+    return lambda width, height: [text_of(r) for r in panel.rows(width, height)]
+
+
+def test_a_drawing_that_fits_says_nothing_of_going_on(desk) -> None:
+    assert "more" not in _lines(desk, 57, 11)[0]
+
+
+def test_a_larger_drawing_says_where_it_goes_on_and_is_moved_there(biquad, painted) -> None:
+    whole = [line.rstrip() for line in painted(90, 20)[1:] if line.strip()]
+    lines = painted(57, 11)
+    assert "more ▾ PgDn ▸ /" in lines[0]
+    assert not any("U2" in line and line.rstrip().endswith("lp") for line in lines)
+    for _ in range(9):
+        biquad.method("pan_right")()
+        biquad.method("pan_down")()
+        lines = painted(57, 11)
+    assert "more ◂ \\ ▴ PgUp" in lines[0]
+    assert biquad.view.pan == (20, 4), "it stops at its edge"
+    shown = [line.rstrip() for line in lines[1:]]
+    assert [line[1:] for line in shown] == [line[1 + 20 :] for line in whole[4:]]
+    biquad.method("pan_left")()
+    biquad.method("pan_up")()
+    assert "more ◂ \\ ▴ PgUp ▾ PgDn ▸ /" in painted(57, 11)[0]
+
+
+@pytest.mark.parametrize("size", [(57, 11), (40, 6), (30, 4)])
+def test_the_selected_part_is_in_view_wherever_it_stands(biquad, painted, size) -> None:
+    for part in biquad.session.stage.settable:
+        biquad.parts.choose_named(part.designator)
+        assert any(f"▸{part.designator}" in line for line in painted(*size)[1:]), part.designator
+
+
+def test_another_selection_brings_the_drawing_back(biquad, painted) -> None:
+    painted(57, 11)
+    biquad.method("pan_right")()
+    painted(57, 11)
+    assert biquad.view.pan == (8, 0)
+    biquad.parts.choose_named("R2")
+    painted(57, 11)
+    assert biquad.view.pan == (0, 0)
+
+
+async def test_keys_and_wheel_move_the_drawing_and_clicks_find_its_parts(make_app, session) -> None:
+    app: DeskApp = make_app(session=session.with_stage(find_stage("two-integrator-biquad")))
+    async with app.run_test(size=(80, 24)) as pilot:
+        await pilot.press("f3", "slash", "slash", "slash", "pagedown")
+        await pilot.pause()
+        assert app.desk.view.pan == (20, 2)
+        lines = [text_of(r) for r in app.circuit.painted]
+        y = next(n for n, line in enumerate(lines) if "R5 10k" in line)
+        await pilot.click("#circuit", offset=(lines[y].index("R5"), y))
+        await pilot.pause()
+        assert app.desk.parts.part.designator == "R5"
+        await pilot._post_mouse_events([MouseScrollDown], "#circuit", offset=(5, 5))
+        await pilot.pause()
+        assert app.desk.view.pan[1] > 0

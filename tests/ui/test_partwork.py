@@ -28,7 +28,8 @@ def controlled(session):
     """The low-pass with a volume control, a ganged one and a switch behind it, in the file's order."""
     pot = Potentiometer("P1", ("out", "gnd"), "gnd", 10e3, "log", 0.5, 0.2, "volume, left")
     parts = (
-        *session.stage.parts,
+        *(replace(part, adjust=False) for part in session.stage.valued),
+        *session.stage.opamps,
         pot,
         replace(pot, designator="P2", role="volume, right", adjust=False),
         Switch("S1", ("out", "gnd"), False, "mutes"),

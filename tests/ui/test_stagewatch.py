@@ -8,7 +8,7 @@ from pathlib import Path
 
 import pytest
 
-from preview.circuit.library import find_stage, stage_source
+from preview.circuit.library import find_stage, open_stages, stage_source
 from preview.circuit.parts import Supply
 from preview.engine.messages import SetCircuit
 from preview.ui.app import DeskApp
@@ -88,6 +88,15 @@ def test_another_wiring_is_another_circuit(desk, engine, file) -> None:
     assert "C9" in engine.sent[-1].netlist.values
 
 
+def test_what_is_hardly_meant_in_an_edited_file_is_said(desk, file) -> None:
+    edit(file, "[parts]", '[parts]\nS1 = { kind = "switch", nodes = ["out", "gnd"], closed = true }')
+    text, severity = desk.stage_watch.look()
+    assert severity == "warning"
+    assert (
+        "mine.toml was edited and is read anew; warning: S1 shorts gnd and the output of U1 (open it" in text
+    )
+
+
 def test_a_file_that_became_wrong_leaves_what_is_heard(desk, engine, file) -> None:
     sent = list(engine.sent)
     edit(file, '"100k"', '"100z"')
@@ -114,6 +123,34 @@ def test_a_file_that_is_away_for_a_moment_is_no_error(desk, file) -> None:
 def test_a_stage_that_comes_with_the_program_is_not_watched(session, engine) -> None:
     desk = Desk(session, engine, now_s=Clock())
     assert desk.stage_watch.look() is None
+
+
+def test_a_stage_of_a_cascade_is_read_anew_and_the_others_stay(session, engine, file) -> None:
+    stage = open_stages(["inverting-high-pass", str(file)])
+    desk = Desk(session.with_stage(stage), engine, now_s=Clock())
+    desk.take(engine.snapshot)
+    assert desk.stage_watch.look() is None
+    desk.change(with_setting(desk.session, "1.R2", 22e3))
+    desk.change(with_setting(desk.session, "2.R1", 22e3))
+    edit(file, '"100k"', '"47k"')
+    assert desk.stage_watch.look()[1] == "information"
+    assert [value(desk, name) for name in ("1.R2", "2.R1", "2.R2")] == [22e3, 22e3, 47e3]
+    sent = list(engine.sent)
+    edit(file, '"47k"', '"47z"')
+    text, severity = desk.stage_watch.look()
+    assert severity == "error"
+    assert "mine.toml [parts.R2]" in text
+    assert engine.sent == sent
+    assert value(desk, "2.R2") == 47e3
+
+
+def test_a_stage_put_behind_is_watched_too_and_keeps_what_was_set(desk, file) -> None:
+    desk.change(with_setting(desk.session, "R1", 22e3))
+    desk.method("cascade")().take("rc-low-pass")
+    assert desk.stage_watch.look() is None
+    edit(file, '"100k"', '"47k"')
+    desk.stage_watch.look()
+    assert (value(desk, "1.R1"), value(desk, "1.R2")) == (22e3, 47e3)
 
 
 async def test_the_desk_looks_by_itself(make_app, session, file) -> None:

@@ -5,13 +5,15 @@ from __future__ import annotations
 import re
 from collections.abc import Sequence
 
-from textual.events import Click
+from textual.events import Click, MouseScrollDown, MouseScrollLeft, MouseScrollRight, MouseScrollUp
+from textual.strip import Strip
 
 from preview.circuit.parts import Part, Stage
 from preview.errors import printable
 from preview.ui.desk import Desk
 from preview.ui.texts import node_lines, part_line
 from preview.ui.theme import Look
+from preview.ui.view import PAN_COLUMNS, PAN_LINES
 from preview.ui.widgets.board import Board, Row, heading, row, row_cells
 from preview.ui.words import code, value
 
@@ -63,13 +65,16 @@ def _label(part: Part, blanks: int) -> str:
 class CircuitPanel(Board):
     """The stage's drawing with live values, or a list of its parts where it has none; volts at the nodes on request.
 
-    A click on a part selects it.
+    The selected part is always in view; a drawing that is larger than the panel is moved by keys and wheel. A click on
+    a part selects it.
     """
 
     def __init__(self, desk: Desk, look: Look) -> None:
         super().__init__(look, name="circuit")
         self.desk = desk
         self._places: list[tuple[int, int, int, str]] = []
+        self._panned: tuple[str, str | None] | None = None
+        self._beyond = ""
 
     def rows(self, width: int, height: int) -> Sequence[Row]:
         """See :class:`Board`."""
@@ -78,30 +83,29 @@ class CircuitPanel(Board):
         nodes = node_lines(self.desk) if self.desk.view.node_volts else []
         wide = max((len(line) for line in nodes), default=0) + 3
         note = printable(stage.name) + (", volts at the nodes" if nodes else "")
-        result = [heading("circuit", note, width - 1, self.look)]
         room = max(0, height - 1)
         own = drawing_width(stage) + 2 if drawn else max(len(part_line(part)) for part in stage.parts) + 3
         lines = len(stage.drawing.rstrip("\n").splitlines()) if drawn else len(stage.parts)
-        self._places = []
-        if not nodes:
-            return [*result, *self._parts(room, drawn)][:height]
+        self._places, self._beyond = [], ""
         told = [
             row((f" {line}", palette.strong if n == 0 else palette.plain)) for n, line in enumerate(nodes)
         ]
-        if width >= own + wide:
-            beside = self._parts(room, drawn)
+        if not nodes:
+            below = self._parts(width, room, drawn)
+        elif width >= own + wide:
+            beside = self._parts(own, room, drawn)
+            below = []
             blank: Row = row(("", palette.plain))
             for y in range(max(len(beside), min(room, len(told)))):
                 left = beside[y] if y < len(beside) else blank
                 right = told[y] if y < len(told) else blank
-                result.append((*left, *row((" " * (own - row_cells(left)), palette.plain)), *right))
-            return result[:height]
-        if room >= lines + len(told):
-            return [*result, *self._parts(lines, drawn), *told]
-        return [*result, *told][:height]
+                below.append((*left, *row((" " * (own - row_cells(left)), palette.plain)), *right))
+        else:
+            below = [*(self._parts(width, lines, drawn) if room >= lines + len(told) else []), *told]
+        return [heading("circuit", self._beyond + note, width - 1, self.look), *below][:height]
 
-    def _parts(self, room: int, drawn: bool) -> list[Row]:
-        """The drawing or the list, in no more than so many rows, the selected part in view."""
+    def _parts(self, width: int, room: int, drawn: bool) -> list[Row]:
+        """The drawing or the list, in no more than so many columns and rows, the selected part in view."""
         stage, palette = self.desk.session.stage, self.look.palette
         part = self.desk.parts.part
         selected = part.designator if part else None
@@ -111,23 +115,70 @@ class CircuitPanel(Board):
             names = max(len(p.designator) for p in stage.parts)
             values = max(len(value(p)) for p in stage.parts)
             lines = [[(printable(part_line(p, names, values)), p.designator)] for p in stage.parts]
-        first = _first_line([any(name == selected for _, name in line) for line in lines], room)
+        left, first = self._corner(lines, selected, width - 1, room)
         rows = []
         for y, line in enumerate(lines[first : first + room]):
             here = next((name for _, name in line if name == selected), None)
             mark = "▸" if not drawn and here else " "
-            pieces = [(mark, palette.mark if mark == "▸" else palette.plain)]
-            x = 1
+            pieces = []
+            x = 0
             for text, name in line:
                 style = (
                     palette.plain if not name else palette.selected if name == selected else palette.strong
                 )
                 pieces.append((text, style))
                 if name:
-                    self._places.append((y + 1, x, x + len(text), name))
+                    self._places.append((y + 1, x + 1 - left, x + 1 - left + len(text), name))
                 x += len(text)
-            rows.append(row(*pieces))
+            margin = row((mark, palette.mark if mark == "▸" else palette.plain))
+            rows.append((*margin, *Strip(row(*pieces)).crop(left, left + width - 1)))
         return rows
+
+    def _corner(
+        self, lines: Sequence[Sequence[tuple[str, str | None]]], selected: str | None, width: int, room: int
+    ) -> tuple[int, int]:
+        """The first column and line to show: the selected part in view, and from there as far as was panned."""
+        view, keys = self.desk.view, self.desk.keys
+        of = (self.desk.session.stage.name, selected)
+        if of != self._panned:
+            self._panned, view.pan = of, (0, 0)
+        place = (0, 0, 0)
+        for y, line in enumerate(lines):
+            x = 0
+            for text, name in line:
+                if name is not None and name == selected:
+                    place = (x, x + len(text), y)
+                x += len(text)
+        wide = max((sum(len(text) for text, _ in line) for line in lines), default=0)
+        at = (_first(place[0], place[1], wide, width), _first(place[2], place[2] + 1, len(lines), room))
+        most = (max(0, wide - width), max(0, len(lines) - room))
+        left, first = (min(max(a + by, 0), end) for a, by, end in zip(at, view.pan, most, strict=True))
+        view.pan = (left - at[0], first - at[1])
+        beyond = (
+            (left > 0, "◂", "pan_left"),
+            (first > 0, "▴", "pan_up"),
+            (first < most[1], "▾", "pan_down"),
+            (left < most[0], "▸", "pan_right"),
+        )
+        more = " ".join(f"{mark} {keys.shown(name)}" for there, mark, name in beyond if there)
+        self._beyond = f"more {more}; " if more else ""
+        return left, first
+
+    def on_mouse_scroll_up(self, _: MouseScrollUp) -> None:
+        """What lies above."""
+        self.act(lambda: self.desk.view.pan_by(0, -PAN_LINES))
+
+    def on_mouse_scroll_down(self, _: MouseScrollDown) -> None:
+        """What lies below."""
+        self.act(lambda: self.desk.view.pan_by(0, PAN_LINES))
+
+    def on_mouse_scroll_left(self, _: MouseScrollLeft) -> None:
+        """What lies to the left."""
+        self.act(lambda: self.desk.view.pan_by(-PAN_COLUMNS, 0))
+
+    def on_mouse_scroll_right(self, _: MouseScrollRight) -> None:
+        """What lies to the right."""
+        self.act(lambda: self.desk.view.pan_by(PAN_COLUMNS, 0))
 
     def on_click(self, event: Click) -> None:
         """Select the part that was clicked."""
@@ -143,9 +194,10 @@ class CircuitPanel(Board):
             self.desk.view.choose_opamp(name)
 
 
-def _first_line(has_selected: list[bool], room: int) -> int:
-    """The first line to show so that the selected part is in view."""
-    if len(has_selected) <= room or not any(has_selected):
+def _first(start: int, end: int, whole: int, room: int) -> int:
+    """The first column or line to show so that ``start`` to ``end`` is in view, the beginning where it can be."""
+    if whole <= room or end <= room:
         return 0
-    at = has_selected.index(True)
-    return max(0, min(at - room // 2, len(has_selected) - room))
+    if end - start >= room:
+        return start
+    return max(0, min((start + end - room) // 2, whole - room))
