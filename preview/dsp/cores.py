@@ -267,9 +267,9 @@ class MacroCore:
         )
         d = columns + 1
         self._room = (
-            np.zeros((5, d, d)),
+            np.zeros((9, d, d)),
             np.zeros((count, columns)),
-            np.zeros((2 + k, columns)),
+            np.zeros((2 + 2 * k, columns)),
             np.zeros((k, k)),
             np.zeros(k),
             np.zeros(rows),
@@ -333,7 +333,10 @@ class MacroCore:
     def trouble(self) -> str | None:
         """See ``Core``."""
         worst = _beyond_belief(self._state)
-        return None if worst is None else self._model.where(worst)
+        if worst is not None:
+            return self._model.where(worst)
+        worst = _beyond_belief(np.abs(self._extremes[:, : 3 * self._k]).max(axis=2, initial=0.0))
+        return None if worst is None else self._model.where(self._n + worst % self._k)  # within a block
 
     def _prepared(self, e: MacroEquations, values: Real, supply: Real | None = None) -> Matrices:
         model = self._model
@@ -346,10 +349,12 @@ class MacroCore:
         for g in range(sets):
             regime_kernels.fill_parts(
                 *(a[g] for a in e.all()),
+                limits.walls[g],
                 follow,
                 follow,
                 self._fixed[0],
                 self._fixed[1],
+                model.collocates,
                 True,
                 whole[g : g + 1],
                 *room,
@@ -369,6 +374,7 @@ class MacroCore:
             *matrices[8:],
             self._model.owner,
             self._fixed,
+            self._model.collocates,
             self._step_s,
             u,
             mean,

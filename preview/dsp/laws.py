@@ -1,4 +1,4 @@
-"""Where the figures of a port's law stand in its row; apart from the kernels, so that nothing is compiled for them."""
+"""Where the figures of a port's law stand in its row; apart from the kernels, so that nothing is compiled for it."""
 
 from __future__ import annotations
 
@@ -20,3 +20,6 @@ from __future__ import annotations
     BACK_MOST,
     LAW,
 ) = range(13)
+
+LEAST_GAIN = 1e-12
+"""How little a wall's row may move with its op-amp for the op-amp to move along it [V/V, A/V]."""

@@ -17,7 +17,8 @@ import numpy as np
 
 from preview.compiled import compiled
 from preview.dsp.kernels import recur, signal_part
-from preview.dsp.port_kernels import keep_ports, solve_ports
+from preview.dsp.laws import LEAST_GAIN
+from preview.dsp.port_kernels import gain_of, keep_ports, port_flows, solve_ports
 from preview.dsp.recur_kernels import recur_wide
 from preview.dsp.regime_kernels import (
     ABOVE,
@@ -171,11 +172,13 @@ def note(extreme: Any, v: float) -> None:
 @compiled
 def fill_slot(
     all_equations: Any,
+    sides: Any,
     leg: int,
     kinds: Any,
     ranges: Any,
     up: Any,
     down: Any,
+    collocates: bool,
     whole_only: bool,
     parts: Any,
     room: Any,
@@ -184,8 +187,8 @@ def fill_slot(
     base, turn, rate, out, walls, plus, port = all_equations
     return bool(
         fill_parts(
-            base[leg], turn[leg], rate[leg], out[leg], walls[leg], plus[leg], port[leg], kinds, ranges, up, down,
-            whole_only, parts, room[0], room[1], room[2], room[3], room[4],
+            base[leg], turn[leg], rate[leg], out[leg], walls[leg], plus[leg], port[leg], sides[leg], kinds, ranges, up,
+            down, collocates, whole_only, parts, room[0], room[1], room[2], room[3], room[4],
         )
     )  # fmt: skip
 
@@ -201,6 +204,7 @@ def walk(
     fixed_limits: Any,
     leg: int,
     gliding: bool,
+    collocates: bool,
     step_s: float,
     z: Any,
     u: Any,
@@ -218,13 +222,20 @@ def walk(
 
     While a part is ``gliding``, the whole step in which every op-amp follows stands in the last place of ``parts``.
     """
-    turn, rate, plus = all_equations[1], all_equations[2], all_equations[5]
+    turn, rate, walls, plus, port = (
+        all_equations[1],
+        all_equations[2],
+        all_equations[4],
+        all_equations[5],
+        all_equations[6],
+    )
     up, down, range_low, range_high = fixed_limits
     right, y, port_room, currents = room[4], room[5], room[6], room[7]
     n, k = turn.shape[1], turn.shape[2]
     size = n + k
     G = owner.shape[0]
     ports = all_laws.shape[1]
+    flows = port_room[2 * ports + 2, :ports]
     inputs = plus.shape[1]
     count = k + G + inputs
     rows = size + count + 1 + 2 * ports
@@ -250,7 +261,17 @@ def walk(
                     regime = place_of(book, key_of(kinds, ranges, kind_count), leg, last)
                     if book[regime, HAS_PARTS] == 0:
                         if not fill_slot(
-                            all_equations, leg, kinds, ranges, up, down, False, parts[regime], room
+                            all_equations,
+                            all_walls,
+                            leg,
+                            kinds,
+                            ranges,
+                            up,
+                            down,
+                            collocates,
+                            False,
+                            parts[regime],
+                            room,
                         ):
                             for o in range(k):
                                 st[o, UNSOLVED] += 1.0
@@ -303,8 +324,11 @@ def walk(
                 )
             for m in range(G):
                 g, kind = y[at_walls + m], kinds[owner[m]]
-                keeps = keeps and (g <= all_walls[leg, 1, m] or kind == AT_WALL + 2 * m)
-                keeps = keeps and (g >= all_walls[leg, 0, m] or kind == AT_WALL + 2 * m + 1)
+                # at a rail it does what it can against a wall that it cannot keep
+                keeps = keeps and (g <= all_walls[leg, 1, m] or kind == AT_WALL + 2 * m or kind == AT_LOW)
+                keeps = keeps and (
+                    g >= all_walls[leg, 0, m] or kind == AT_WALL + 2 * m + 1 or kind == AT_HIGH
+                )
             for o in range(inputs):
                 keeps = keeps and in_same_range(ranges[o], y[at_plus + o], range_low[o], range_high[o])
             if keeps or span == 1:
@@ -341,19 +365,27 @@ def walk(
             w = min(max(w, all_rails[leg, 0, o]), all_rails[leg, 1, o])
             moved = w - y[n + o]
             hit = -1
+            if ports and (moved != 0.0 or kind >= AT_WALL or not keeps):
+                port_flows(
+                    all_laws[leg], port[leg], turn[leg], n, o, size + 4, junctions[2], flows, port_room
+                )
             if kind >= AT_WALL:  # exactly onto the wall it is at; then inside the others
                 m = (kind - AT_WALL) // 2
                 side = all_walls[leg, 1, m] if (kind - AT_WALL) % 2 == 0 else all_walls[leg, 0, m]
-                moved = (side - y[at_walls + m]) / all_gains[leg, m]
+                gain = gain_of(all_gains[leg], walls[leg], m, size + 4, flows)
+                moved = (side - y[at_walls + m]) / gain if abs(gain) > LEAST_GAIN else 0.0
                 hit = kind
             for m in range(G):
                 if owner[m] == o and kind != AT_WALL + 2 * m and kind != AT_WALL + 2 * m + 1:
-                    g = y[at_walls + m] + all_gains[leg, m] * moved
+                    gain = gain_of(all_gains[leg], walls[leg], m, size + 4, flows)
+                    if abs(gain) <= LEAST_GAIN:
+                        continue
+                    g = y[at_walls + m] + gain * moved
                     if g > all_walls[leg, 1, m]:
-                        moved += (all_walls[leg, 1, m] - g) / all_gains[leg, m]
+                        moved += (all_walls[leg, 1, m] - g) / gain
                         hit = AT_WALL + 2 * m
                     elif g < all_walls[leg, 0, m]:
-                        moved += (all_walls[leg, 0, m] - g) / all_gains[leg, m]
+                        moved += (all_walls[leg, 0, m] - g) / gain
                         hit = AT_WALL + 2 * m + 1
             if y[n + o] + moved > all_rails[leg, 1, o]:  # a rail comes before a wall that lies beyond it
                 moved, hit = all_rails[leg, 1, o] - y[n + o], AT_HIGH
@@ -364,7 +396,7 @@ def walk(
                     y[i] -= turn[leg, i, o] * moved
                 for m in range(G):
                     if owner[m] == o:
-                        y[at_walls + m] += all_gains[leg, m] * moved
+                        y[at_walls + m] += gain_of(all_gains[leg], walls[leg], m, size + 4, flows) * moved
                 y[n + o] += moved
             w = y[n + o]
             note(extremes[o], w)
@@ -412,7 +444,9 @@ def walk(
             ranges[o] = where
             kind, hit = kinds[o], int(right[o])
             asked = at_instant(rate[leg, where, o], z, signal, slope, v2, currents, size, ports)
-            pushes = hit == kind and (y[size + o] >= 0.0 if (kind - AT_WALL) % 2 == 0 else y[size + o] <= 0.0)
+            pushes = hit == kind and (
+                kind < AT_WALL or (y[size + o] >= 0.0 if (kind - AT_WALL) % 2 == 0 else y[size + o] <= 0.0)
+            )
             if hit >= 0 and (hit != kind or pushes):
                 new = hit
             elif hit == kind and hit >= 0:
@@ -672,6 +706,7 @@ def run_macro(
     all_gains: Any,
     owner: Any,
     fixed_limits: Any,
+    collocates: bool,
     step_s: float,
     u: Any,
     mean_out: Any,
@@ -703,11 +738,13 @@ def run_macro(
         ``base, turn, rate, out, walls, plus, port`` at each station, see ``macromodel.MacroEquations``.
     all_laws, all_rails, all_walls, all_gains : (g, np, LAW), (g, 2, k), (g, 2, G), (g, G)
         Laws of the ports; lowest and highest voltage of each op-amp; limits of each wall; how far its row moves
-        with its op-amp.
+        with its op-amp while no port conducts.
     owner : (G,) int64
         Op-amp that each wall limits; walls 0 to k - 1 are the output currents, k to 2k - 1 the output pins.
     fixed_limits : tuple of (k,)
         ``up, down``: fastest changes [V/step]; ``range_low, range_high``: of the + inputs [V].
+    collocates : bool
+        See ``regime_kernels.fill_parts``; only with ports.
     step_s : float
         A step [s].
     u, mean_out : (channels, steps + 3), (channels, steps)
@@ -768,7 +805,19 @@ def run_macro(
                     if (
                         book[slot, HAS_WHOLE] == 0
                     ):  # not the one among the parts: that differs by its rounding
-                        fill_slot(all_equations, leg, kinds, ranges, up, down, True, parts[now], room)
+                        fill_slot(
+                            all_equations,
+                            all_walls,
+                            leg,
+                            kinds,
+                            ranges,
+                            up,
+                            down,
+                            False,
+                            True,
+                            parts[now],
+                            room,
+                        )
                         for a in range(wholes.shape[1]):
                             for b in range(wholes.shape[2]):
                                 wholes[slot, a, b] = parts[now, 0, b, a]
@@ -792,8 +841,8 @@ def run_macro(
                     was_at = is_at(kinds[o], ranges[o], k)
                     begin_row(log[written[0] + o], written[1] + done, c, o, was_at, st[o])
             mean = walk(
-                all_equations, all_laws, all_rails, all_walls, all_gains, owner, fixed_limits, leg, gliding, step_s,
-                v, signal, kinds, ranges, st, extremes, junctions, book, last, parts, room,
+                all_equations, all_laws, all_rails, all_walls, all_gains, owner, fixed_limits, leg, gliding,
+                collocates, step_s, v, signal, kinds, ranges, st, extremes, junctions, book, last, parts, room,
             )  # fmt: skip
             if logs:
                 kept = written[0]

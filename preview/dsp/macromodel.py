@@ -21,17 +21,20 @@ import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import GND, Charge, Junction, Netlist, Port
+from preview.circuit.parts import PartKind
 from preview.dsp import laws as columns_of
 from preview.network.expansion import expanded, gain_bandwidth_hz, inner_node, output_ohm
 from preview.network.opamps import second_pole_hz
 from preview.network.statespace import Topology
 
-__all__ = ["Limits", "MacroEquations", "MacroModel", "NoiseColumns"]
+__all__ = ["Limits", "MacroEquations", "MacroModel", "NoiseColumns", "collocates"]
 
 Real = NDArray[np.float64]
 
 LEAST_WALL_GAIN = 0.02
 """Share of an op-amp's move that its pin must feel at once to be held itself; else the inner voltage is."""
+AHEAD_STEPS = 1.0 / 16.0
+"""How far ahead of an inductor's current an op-amp that reaches its largest current looks [steps]."""
 REVERSED_V_PER_S = 1e9
 """Rate at which an output without a slew limit runs off when its input reverses [V/s]."""
 
@@ -69,7 +72,7 @@ class Limits:
     walls: Real
     """(g, 2, G): least and greatest value of each wall's row."""
     gains: Real
-    """(g, G): how far a wall's row moves with its op-amp."""
+    """(g, G): how far a wall's row moves with its op-amp while no port conducts."""
     laws: Real
     """(g, np, LAW): the ports, see ``port_kernels``."""
 
@@ -110,6 +113,14 @@ class _Slope:
     high_v: float
 
 
+def collocates(netlist: Netlist) -> bool:
+    """Whether its equations are taken by collocation in place of the exponential.
+
+    Between currents given over a step an inductor forgets its own current, where nothing but a diode lets it flow.
+    """
+    return bool(expanded(netlist).ports) and any(b.kind is PartKind.INDUCTOR for b in netlist.branches)
+
+
 class MacroModel:
     """A circuit's equations, ready for sets of values.
 
@@ -138,6 +149,7 @@ class MacroModel:
         self.k = k
         self.size = self.n + k
         self.columns = self.size + 4 + 2 * len(self.ports)
+        self.collocates = collocates(netlist)
         self.watches_inputs = any(
             math.isfinite(o.input_high_v) or math.isfinite(o.input_low_v) for o in self.sites
         )
@@ -261,7 +273,7 @@ class MacroModel:
             turn=turn,
             rate=rate,
             out=np.ascontiguousarray(lay(space.C_out, space.D_out)[:, 0]),
-            walls=self._wall_rows(current, pin_v),
+            walls=self._wall_rows(current, pin_v, base, turn),
             plus=np.ascontiguousarray(plus_v if self.watches_inputs else plus_v[:, :0]),
             port=np.ascontiguousarray(port_v),
         )
@@ -332,21 +344,32 @@ class MacroModel:
                 rate[:, case, i, n + i] -= self.step_s * wt / model.open_loop_gain
         return rate
 
-    def _wall_rows(self, current: Real, pin_v: Real) -> Real:
-        rows = [current, pin_v]
+    def _ahead(self, current: Real, base: Real, turn: Real) -> Real:
+        """Output currents; one that only an inductor carries, a little later, when its op-amp can have moved it."""
+        size, n, ports = self.size, self.n, len(self.ports)
+        for i in range(self.k):
+            row = current[:, i]
+            own = row[:, n + i] - np.einsum("gi,gi->g", row[:, :n], turn[:, :, i])
+            if np.abs(own).max() > columns_of.LEAST_GAIN:
+                continue
+            then = np.einsum("gi,gij->gj", row[:, :n], base)
+            then[:, size + 1 : size + 3] += row[:, size : size + 2]
+            then[:, size + 4 + ports :] += row[:, size + 4 : size + 4 + ports]
+            row += AHEAD_STEPS * then
+        return current
+
+    def _wall_rows(self, current: Real, pin_v: Real, base: Real, turn: Real) -> Real:
+        rows = [self._ahead(current, base, turn), pin_v]
         for s in self._slopes:
             rows.append((pin_v[:, s.opamp] + s.ohm * current[:, s.opamp])[:, None])
         return np.ascontiguousarray(np.concatenate(rows, axis=1))
 
     def wall_gains(self, equations: MacroEquations) -> Real:
-        """How far each wall's row moves with its op-amp, shape (g, G)."""
+        """How far each wall's row moves with its op-amp while no port conducts, shape (g, G)."""
         n = self.n
         rows = equations.walls
         own = rows[:, np.arange(len(self.owner)), n + self.owner]
         own = own - np.einsum("gmi,gim->gm", rows[:, :, :n], equations.turn[:, :, self.owner])
-        if self.ports:  # as much as they may ever let it, so that no way onto a wall is too long
-            most = 1.0 / np.array([output_ohm(o.model) for o in self.sites])
-            own[:, : self.k] = np.maximum(own[:, : self.k], most)
         return np.asarray(own)
 
     def limits(self, values: Real, equations: MacroEquations, *, supply: Real | None = None) -> Limits:

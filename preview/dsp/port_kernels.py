@@ -33,6 +33,8 @@ MAX_TURNS = 60
 """Newton steps that a part of a step may take; 2 or 3 are usual."""
 TOLERANCE_V = 1e-8
 """Last change at which the voltages are taken as found; the error left is about its square over the slope voltage."""
+MOST_V = 1e7
+"""A junction voltage of this size is no solution."""
 
 
 @compiled
@@ -93,7 +95,7 @@ def solve_one(
     # voltages by currents: third by third, third by end, end by third, end by end
     aa, ab = part[column, first + 1] - series, part[column + 1, first + 1]
     ba, bb = part[column, first], part[column + 1, first] - series
-    va, vb = v[1, 0], v[2, 0]
+    va, vb = limited_move(law, v[0, 0], v[1, 0]), limited_move(law, v[0, 0], v[2, 0])
     for _ in range(MAX_TURNS):
         ia, ga = junction(law, va)
         ib, gb = junction(law, vb)
@@ -106,10 +108,10 @@ def solve_one(
             return False
         da, db = new_a - va, new_b - vb
         va, vb = new_a, new_b
-        if max(abs(da), abs(db)) < TOLERANCE_V + 1e-9 * max(abs(va), abs(vb)):
+        if abs(da) < TOLERANCE_V + 1e-9 * abs(va) and abs(db) < TOLERANCE_V + 1e-9 * abs(vb):
             v[1, 0], v[2, 0] = va, vb
             i[0], i[1] = ia + ga * da, ib + gb * db
-            return True
+            return bool(max(abs(va), abs(vb)) < MOST_V)
     return False
 
 
@@ -199,7 +201,7 @@ def solve_ports(
             new = limited_move(laws[p], old, old + right[a])
             if not np.isfinite(new):
                 return False
-            change = max(change, abs(new - old) - 1e-9 * abs(new))
+            change = max(change, abs(new - old) - 1e-9 * abs(new), abs(new) - MOST_V)
             v[at, p] = new
         if change < TOLERANCE_V:
             for p in range(ports):
@@ -227,3 +229,46 @@ def keep_ports(laws: Any, v: Any, i: Any) -> None:
         if laws[p, HALF] == 0.0:
             current, _g = junction(laws[p], v[0, p])
         i[p] = i[ports + p] = current
+
+
+@compiled
+def port_flows(
+    laws: Any, port: Any, turn: Any, n: int, opamp: int, column: int, v: Any, flows: Any, room: Any
+) -> None:
+    """``flows``: how the current of each port moves at once with an op-amp's inner voltage [A/V].
+
+    Parameters
+    ----------
+    port, turn : (np, c), (n, k)
+        See ``macromodel.MacroEquations``; port currents in the columns from ``column``.
+    v : (np,)
+        Junction voltages at present [V].
+    flows : (np,)
+        Receives the result; class 2 capacitors take their time.
+    """
+    ports = laws.shape[0]
+    J, right = room[:ports], room[2 * ports]
+    for p in range(ports):
+        flows[p] = 0.0
+        if laws[p, HALF] == 0.0:
+            _i, flows[p] = junction(laws[p], v[p])
+    for p in range(ports):
+        t = port[p, n + opamp]
+        for i in range(n):
+            t -= port[p, i] * turn[i, opamp]
+        right[p] = t
+        for q in range(ports):
+            r = port[p, column + q] - (laws[p, SERIES] if p == q and laws[p, HALF] == 0.0 else 0.0)
+            J[p, q] = (1.0 if p == q else 0.0) - r * flows[q]
+    solved = solve_small(J, right, ports)
+    for p in range(ports):
+        flows[p] = flows[p] * right[p] if solved else 0.0
+
+
+@compiled
+def gain_of(gains: Any, walls: Any, m: int, column: int, flows: Any) -> float:
+    """How far a wall's row moves at once with its op-amp, with what the ports let flow."""
+    t = gains[m]
+    for p in range(flows.shape[0]):
+        t += walls[m, column + p] * flows[p]
+    return float(t)

@@ -13,6 +13,7 @@ import numpy as np
 
 from preview.compiled import compiled
 from preview.dsp.kernels import solve_small
+from preview.dsp.laws import LEAST_GAIN
 
 LEVELS = 5
 """Halvings of a step in which the regime changes."""
@@ -78,13 +79,53 @@ def exponential(a: Any, scale: float, result: Any, power: Any, other: Any) -> No
 
 
 @compiled
-def moves_along(kind: int, k: int, ports: int) -> bool:
-    """Whether an op-amp keeps moving at its wall.
+def resolvent(a: Any, scale: float, left: Any, right: Any) -> None:
+    """``right = (1 - a scale / z)^-1`` with ``z = 2 + i sqrt 2``; real parts first, both (2, d, d)."""
+    size = a.shape[0]
+    for i in range(size):
+        for j in range(size):
+            one = 1.0 if i == j else 0.0
+            left[0, i, j], left[1, i, j] = one - a[i, j] * scale / 3.0, a[i, j] * scale * np.sqrt(2.0) / 6.0
+            right[0, i, j], right[1, i, j] = one, 0.0
+    for col in range(size):
+        best, most = col, -1.0
+        for row in range(col, size):
+            square = left[0, row, col] ** 2 + left[1, row, col] ** 2
+            if square > most:
+                best, most = row, square
+        if best != col:
+            for j in range(size):
+                for m in (left, right):
+                    for c in range(2):
+                        m[c, col, j], m[c, best, j] = m[c, best, j], m[c, col, j]
+        re, im = left[0, col, col] / most, -left[1, col, col] / most
+        for m in (left, right):
+            for j in range(size):
+                x, y = m[0, col, j], m[1, col, j]
+                m[0, col, j], m[1, col, j] = x * re - y * im, x * im + y * re
+        for row in range(size):
+            re, im = left[0, row, col], left[1, row, col]
+            if row == col or (re == 0.0 and im == 0.0):
+                continue
+            for m in (left, right):
+                for j in range(size):
+                    x, y = m[0, col, j], m[1, col, j]
+                    m[0, row, j] -= x * re - y * im
+                    m[1, row, j] -= x * im + y * re
 
-    At its largest current it stands still where there are ports, for how far that current moves with it hangs on
-    their slopes; it is put back onto the wall after each part of a step.
+
+@compiled
+def collocation(a: Any, length: float, at_end: Any, at_third: Any, left: Any, right: Any) -> None:
+    """What collocation at the points of Radau IIA makes of ``exp(a length)`` and ``exp(a length / 3)``.
+
+    The Padé approximants ``(1 + m/3) / (1 - 2m/3 + m²/6)`` and ``(1 - m/3) / (...)`` in partial fractions.
     """
-    return kind >= AT_WALL and (ports == 0 or (kind - AT_WALL) // 2 >= k)
+    resolvent(a, length, left, right)
+    size = a.shape[0]
+    for i in range(size):
+        for j in range(size):
+            at_third[i, j] = right[0, i, j]
+            at_end[i, j] = right[0, i, j] - np.sqrt(8.0) * right[1, i, j]
 
 
 @compiled
@@ -93,26 +134,30 @@ def motion(
     turn: Any,
     rate: Any,
     walls: Any,
+    sides: Any,
     kinds: Any,
     ranges: Any,
     up: Any,
     down: Any,
     moves: Any,
+    jumps: Any,
     held: Any,
     right: Any,
 ) -> bool:
     """Rate of change of every op-amp in a regime, as rows over an instant; False where walls contradict each other.
 
+    An op-amp at a wall whose row does not hang on it stands still, and is put back onto it after each part of a step.
+
     Parameters
     ----------
-    base, turn, rate, walls : (n, c), (n, k), (3, k, c), (G, c)
-        See ``macromodel.MacroEquations``.
+    base, turn, rate, walls, sides : (n, c), (n, k), (3, k, c), (G, c), (2, G)
+        See ``macromodel.MacroEquations``; least and greatest value of each wall.
     kinds, ranges : (k,) int64
         What each op-amp does, where its + input is.
     up, down : (k,)
         Fastest changes [V/step].
-    moves : (k, c)
-        Receives the rows.
+    moves, jumps : (k, c), (k, c)
+        Receive the rows; how far each op-amp is from where all walls in force are kept, as a row over an instant.
     held, right : (k, k), (k,)
         Room.
     """
@@ -122,9 +167,10 @@ def motion(
     at_u, at_1 = size, size + 3
     ports = (columns - size - 4) // 2
     at_walls = 0
+    jumps[:, :] = 0.0
     for o in range(k):
         kind = kinds[o]
-        if moves_along(kind, k, ports):
+        if kind >= AT_WALL and abs(own_gain(walls[(kind - AT_WALL) // 2], turn, n, o)) > LEAST_GAIN:
             at_walls += 1
         for j in range(columns):
             moves[o, j] = rate[ranges[o], o, j] if kind == FOLLOWS else 0.0
@@ -134,43 +180,74 @@ def motion(
             moves[o, at_1] = -down[o]
     if at_walls == 0:
         return True
-    # along a wall its row stays as it is: p' = base - turn w' in d(row)/dt = 0, all walls in force together
-    for j in range(columns):
-        for o in range(k):
-            for b in range(k):
-                held[o, b] = 1.0 if o == b else 0.0
-            right[o] = moves[o, j]
-            kind = kinds[o]
-            if not moves_along(kind, k, ports):
-                continue
-            row = walls[(kind - AT_WALL) // 2]
-            t = 0.0
-            for i in range(n):
-                t += row[i] * base[i, j]
-            if at_u < j <= at_u + 2:
-                t += row[j - 1]
-            if j >= size + 4 + ports:
-                t += row[j - ports]
-            right[o] = -t
-            for b in range(k):
-                g = row[n + b]
-                for i in range(n):
-                    g -= row[i] * turn[i, b]
-                held[o, b] = g
-        if not solve_small(held, right, k):
-            for o in range(k):
-                right[o] = np.inf
-        for o in range(k):
-            if moves_along(kinds[o], k, ports):
-                moves[o, j] = right[o]
     fine = True
-    for o in range(k):
-        for j in range(columns):
-            if not abs(moves[o, j]) < 1e30:  # walls that contradict each other: it stays where it is
-                for b in range(columns):
-                    moves[o, b] = 0.0
-                fine = False
+    for j in range(columns):
+        # first: on the wall its row stays as it is, p' = base - turn w' in d(row)/dt = 0; then: onto the wall
+        for onto in range(2):
+            for o in range(k):
+                for b in range(k):
+                    held[o, b] = 1.0 if o == b else 0.0
+                right[o] = moves[o, j] if onto == 0 else 0.0
+                kind = kinds[o]
+                if kind < AT_WALL:
+                    continue
+                wall, low = divmod(kind - AT_WALL, 2)
+                row = walls[wall]
+                if abs(own_gain(row, turn, n, o)) <= LEAST_GAIN:
+                    continue
+                if onto == 0:
+                    t = 0.0
+                    for i in range(n):
+                        t += row[i] * base[i, j]
+                    if at_u < j <= at_u + 2:
+                        t += row[j - 1]
+                    if j >= size + 4 + ports:
+                        t += row[j - ports]
+                else:
+                    t = row[j] - (sides[0 if low else 1, wall] if j == at_1 else 0.0)
+                right[o] = -t
+                for b in range(k):
+                    held[o, b] = own_gain(row, turn, n, b)
+            fine = solve_small(held, right, k) and fine
+            for o in range(k):
+                if onto:
+                    jumps[o, j] = right[o]
+                elif kinds[o] >= AT_WALL:
+                    moves[o, j] = right[o]
+                fine = fine and abs(right[o]) < 1e30
+    if not fine:  # walls that contradict each other: they stay where they are
+        jumps[:, :] = 0.0
+        for o in range(k):
+            if kinds[o] >= AT_WALL:
+                moves[o, :] = 0.0
     return fine
+
+
+@compiled
+def own_gain(row: Any, turn: Any, n: int, opamp: int) -> float:
+    """How far a row moves with an op-amp's inner voltage."""
+    t = row[n + opamp]
+    for i in range(n):
+        t -= row[i] * turn[i, opamp]
+    return float(t)
+
+
+@compiled
+def put_onto_walls(turn: Any, jumps: Any, work: Any, phi: Any) -> None:
+    """``phi`` times what brings an instant onto the walls in force, whatever its port currents."""
+    k, columns = jumps.shape
+    n = turn.shape[0]
+    for r in range(phi.shape[0]):
+        for o in range(k):
+            f = phi[r, n + o]
+            for i in range(n):
+                f -= phi[r, i] * turn[i, o]
+            work[o] = f
+        for o in range(k):
+            f = work[o]
+            if f != 0.0:
+                for j in range(columns):
+                    phi[r, j] += f * jumps[o, j]
 
 
 @compiled
@@ -274,10 +351,12 @@ def fill_parts(
     walls: Any,
     plus: Any,
     port: Any,
+    sides: Any,
     kinds: Any,
     ranges: Any,
     up: Any,
     down: Any,
+    collocates: bool,
     whole_only: bool,
     parts: Any,
     work: Any,
@@ -290,17 +369,21 @@ def fill_parts(
 
     Parameters
     ----------
+    sides : (2, G)
+        Least and greatest value of each wall.
+    collocates : bool
+        All is taken by collocation as the port currents are, in place of the exponential.
     parts : (LEVELS + 1, c, r)
         Receives them, see ``part_matrix``. The checks of each op-amp: by how much it is asked to change faster than it
         does, or, where it moves freely, how fast; then the walls; then the + inputs.
     work, checks, lines, held, right
-        Room: (7, c + 1, c + 1), (k + G + plus inputs, c), (2 + k, c), (k, k), (k,).
+        Room: (9, c + 1, c + 1), (k + G + plus inputs, c), (2 + 2 k, c), (k, k), (k,).
     """
     n, k = turn.shape
     ports = port.shape[0]
     columns = base.shape[1]
-    moves = lines[2:]
-    fine = motion(base, turn, rate, walls, kinds, ranges, up, down, moves, held, right)
+    moves, jumps = lines[2 : 2 + k], lines[2 + k :]
+    fine = motion(base, turn, rate, walls, sides, kinds, ranges, up, down, moves, jumps, held, right)
     for o in range(k):
         at_limit = kinds[o] >= AT_HIGH
         for j in range(columns):
@@ -311,21 +394,34 @@ def fill_parts(
     for o in range(plus.shape[0]):
         for j in range(columns):
             checks[k + walls.shape[0] + o, j] = plus[o, j]
-    A, phi, third = work[3], work[0], work[4]
+    A, phi, third, kept, kept_third = work[3], work[0], work[4], work[5], work[6]
     generator(base, turn, moves, out, A)
+    # rates as they are on the walls: what stays as it is would be a double zero, which rounding makes grow
+    put_onto_walls(turn, jumps, right, A)
     least = 1.0 if whole_only else 1.0 / 2**LEVELS
-    exponential(A, least, phi, work[1], work[2])
-    if ports:
-        exponential(A, least / 3.0, third, work[1], work[2])
+    if not collocates:
+        exponential(A, least, kept, work[1], work[2])
+        if ports:
+            exponential(A, least / 3.0, kept_third, work[1], work[2])
     level = 0 if whole_only else LEVELS
     while True:
-        part_matrix(phi, third, checks, port, n, k, 1.0 / 2**level, lines[0], lines[1], parts[level])
+        length = 1.0 / 2**level
+        if collocates:
+            collocation(A, length, phi, third, work[5:7], work[7:9])
+        else:
+            put(phi, kept)
+            put(third, kept_third)
+        if ports:  # where a line through their currents begins is not where they were
+            put_onto_walls(turn, jumps, right, phi)
+            put_onto_walls(turn, jumps, right, third)
+        part_matrix(phi, third, checks, port, n, k, length, lines[0], lines[1], parts[level])
         if level == 0:
             break
-        multiply(phi, phi, work[1])
-        put(phi, work[1])
-        if ports:
-            multiply(third, third, work[1])
-            put(third, work[1])
+        if not collocates:
+            multiply(kept, kept, work[1])
+            put(kept, work[1])
+            if ports:
+                multiply(kept_third, kept_third, work[1])
+                put(kept_third, work[1])
         level -= 1
     return fine

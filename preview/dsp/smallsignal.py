@@ -9,7 +9,7 @@ from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
 from preview.dsp.bilinear import running_step
-from preview.dsp.macromodel import MacroModel
+from preview.dsp.macromodel import MacroModel, collocates
 from preview.network.expansion import runs_as_they_are
 from preview.network.operating import small_signal
 from preview.network.statespace import Topology
@@ -40,7 +40,12 @@ def following_step(netlist: Netlist, step_s: float) -> Real:
     generator = np.zeros((size + 4, size + 4))  # states, signal and its derivatives, integral of the output
     generator[:size, : size + 3], generator[size + 3, : size + 3] = rates[:size], rates[size]
     generator[size, size + 1] = generator[size + 1, size + 2] = 1.0
-    rows = expm(generator)[[*range(size), size + 3]]
+    step = expm(generator)
+    if collocates(netlist):
+        one = np.eye(size + 4)
+        left = one - generator * (2.0 / 3.0) + generator @ generator / 6.0
+        step = np.linalg.solve(left, one + generator / 3.0)
+    rows = step[[*range(size), size + 3]]
     u, v1, v2 = rows[:, size : size + 1], rows[:, size + 1 : size + 2], rows[:, size + 2 : size + 3]
     return np.concatenate(
         [rows[:, :size], u - 4.0 * v1 + 6.0 * v2, 6.0 * v1 - 12.0 * v2, -2.0 * v1 + 6.0 * v2], axis=1

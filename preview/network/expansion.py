@@ -26,6 +26,8 @@ CROSSOVER_SLOPE_V = 0.0259
 """Slope voltage of the output transistors of a class-B stage, kT/q at 300 K [V]."""
 CROSSOVER_AT_A = 100e-6
 """Current at which each of them takes half of the dead zone [A]."""
+DIODE_LEAK_OHM = 100e6
+"""What lies across a diode in series with an inductor, so that the inductor's current always has a way [ohm]."""
 CROSSOVER_LEAK_OHM = 10e6
 """What joins the inner voltage to the output within the dead zone [ohm]."""
 
@@ -79,9 +81,34 @@ def expanded(netlist: Netlist) -> Netlist:
         ):
             if farad > 0.0 and not (a in held and b in held):
                 branches.append(Branch(f"{name}.{label}", PartKind.CAPACITOR, a, b, farad))
+    for p in _through_inductors(netlist.input_node, branches, netlist):
+        branches.append(Branch(f"{p.designator}.leak", PartKind.RESISTOR, p.a, p.b, DIODE_LEAK_OHM))
     return replace(
         netlist,
         branches=tuple(branches),
         ports=tuple(ports),
         opamps=tuple(replace(o, out=inner_node(o)) for o in netlist.opamps),
     )
+
+
+def _through_inductors(source: str, branches: list[Branch], netlist: Netlist) -> list[Port]:
+    """Diodes between nodes that without them only inductors join."""
+    group: dict[str, str] = {}
+
+    def root(node: str) -> str:
+        while group.setdefault(node, node) != node:
+            node = group[node]
+        return node
+
+    held = (GND, source, *(f.node for f in netlist.fixed), *(inner_node(o) for o in netlist.opamps))
+    for a, b in (
+        *((GND, node) for node in held),
+        *((b.a, b.b) for b in branches if b.kind is not PartKind.INDUCTOR),
+    ):
+        group[root(a)] = root(b)
+    found = []
+    for p in netlist.ports:
+        if root(p.a) != root(p.b):
+            found.append(p)
+            group[root(p.a)] = root(p.b)
+    return found

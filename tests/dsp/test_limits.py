@@ -13,7 +13,7 @@ from scipy.optimize import brentq
 from scipy.signal import lsim
 from scipy.special import erf, wrightomega
 
-from preview.circuit.netlist import FixedNode, Junction, Netlist, Port
+from preview.circuit.netlist import Charge, FixedNode, Junction, Netlist, Port
 from preview.circuit.opamp import Limit, OpAmpModel
 from preview.dsp.stage import POWER_ON_S, StageProcessor
 from preview.network.expansion import (
@@ -130,6 +130,20 @@ def test_swing_that_shrinks_with_load_current_is_the_data_sheets_point(load: flo
     expected = 0.1 * (share_beyond(top, 20.0) + share_beyond(bottom, 20.0))
     assert reading.clipped_s == pytest.approx(expected, rel=2e-3)
     assert reading.headroom_db == 0.0
+
+
+def test_a_largest_current_that_only_an_inductor_carries_is_kept() -> None:
+    # 1 mH into 1 k: the current cannot jump, so the op-amp has to see it coming; 4 mA leave 4 V
+    model = replace(FAST, current_source_a=4e-3, current_sink_a=4e-3)
+    circuit = net([("L1", "o", "out", 1e-3), ("R1", "out", "gnd", 1e3)], [("in", "o", "o")])
+    out, stage = run(placed(circuit, model), sine(1000.0, 8.0))
+    assert at_crest(out, 1000.0, sign=1) == pytest.approx(4.0, rel=1e-4)
+    assert at_crest(out, 1000.0, sign=-1) == pytest.approx(-4.0, rel=1e-4)
+    assert np.abs(out).max() < 4.0 * 1.03  # the way down to the frames rings at a corner
+    reading = stage.readings()[0]
+    assert reading.current_peak_a == pytest.approx(4e-3, rel=1e-3)
+    assert reading.current_limited_s == pytest.approx(0.1 * 2 * share_beyond(4.0, 8.0), rel=0.02)
+    assert reading.unsolved_steps == 0
 
 
 def test_a_follower_clips_where_its_common_mode_range_ends() -> None:
@@ -480,6 +494,35 @@ def _lagging(t: Real, start: float, slope: float, ramp: float, tau: float) -> Re
     end = start * (1 - math.exp(-ramp / tau)) + slope * (ramp - tau * (1 - math.exp(-ramp / tau)))
     final = start + slope * ramp
     return np.asarray(np.where(t < ramp, rising, final + (end - final) * np.exp(-(t - ramp) / tau)))
+
+
+def test_a_stage_without_a_common_solution_is_muted_until_it_is_reset() -> None:
+    # a class 2 capacitor that holds next to no charge beyond a tenth of a millivolt: the voltage at which it would
+    # hold what 10 V drive into it is beyond any number
+    circuit = placed(inverter(10.0, ("R3", "out", "x", 10.0), ("C1", "x", "gnd", 1e-6)), FAST)
+    circuit = replace(circuit, ports=(Port("C1", "x", "gnd", Charge(1e-6, 1e-4)),))
+    stage = StageProcessor(circuit, sample_rate_hz=RATE, channels=1, quality=Quality.DRAFT)
+    quiet, loud = np.zeros((512, 1)), sine(1000.0, 1.0, 0.1)[:, None]
+    before, out = np.empty_like(quiet), np.full_like(loud, 9.0)
+    stage.process(quiet, before)
+    assert stage.fault is None
+    stage.process(loud, out)
+    fault = stage.fault
+    assert fault is not None
+    assert fault.node == "C1"  # the first that may have none
+    assert fault.reason == "its limits and diodes find no common solution"
+    began_s = len(quiet) / RATE
+    assert began_s < fault.time_s < began_s + 0.01
+    muted_from = round(fault.time_s * RATE) - len(quiet)
+    assert np.all(out[muted_from:] == 0.0)
+    stage.process(loud, out)
+    assert np.all(out == 0.0)
+    assert stage.fault == fault
+    stage.reset()
+    assert stage.fault is None
+    after = np.empty_like(quiet)
+    stage.process(quiet, after)
+    np.testing.assert_array_equal(after, before)
 
 
 @pytest.mark.parametrize("value", [math.nan, math.inf, 1e12])

@@ -381,6 +381,20 @@ def test_the_kernels_exponential_equals_scipys() -> None:
         np.testing.assert_allclose(result, expm(a), rtol=1e-9, atol=1e-13)
 
 
+def test_the_kernels_collocation_is_that_of_radau_iia() -> None:
+    # the points and matrix of Radau IIA of two stages: Hairer and Wanner, Solving Ordinary Differential Equations II,
+    # IV.5, table 5.5; found = memory
+    rng = np.random.default_rng(4)
+    for scale in (1e-3, 1.0, 1e6):
+        a = rng.normal(0, scale, (7, 7)) - 3 * scale * np.eye(7)
+        stages = np.eye(14) - np.kron([[5 / 12, -1 / 12], [3 / 4, 1 / 4]], 0.5 * a)
+        third, end = np.linalg.solve(stages, np.concatenate([np.eye(7), np.eye(7)])).reshape(2, 7, 7)
+        at_end, at_third = np.empty((2, 7, 7))
+        regime_kernels.collocation(a, 0.5, at_end, at_third, np.empty((2, 7, 7)), np.empty((2, 7, 7)))
+        np.testing.assert_allclose(at_end, end, rtol=1e-9, atol=1e-13)
+        np.testing.assert_allclose(at_third, third, rtol=1e-9, atol=1e-13)
+
+
 def test_the_kernels_step_equals_scipys_exponential() -> None:
     circuit = with_model(SALLEN_KEY, opamp(3e6, open_loop_gain=1e5, output_resistance_ohm=75.0))
     core = MacroCore(circuit, 1, 1 / 768e3)

@@ -177,6 +177,47 @@ def cut(stage: StageProcessor, volts: Real, size: int) -> Real:
     return out
 
 
+def try_circuit(seed: int, number: int, found: Counter[str]) -> None:
+    """Run one circuit if it is stable, and count what happened, by name."""
+    rng = np.random.default_rng([seed, number])
+    circuit, volts = random_circuit(rng), random_drive(rng)
+    assert len(circuit.branches) <= MOST_PARTS
+    quality = Quality.STANDARD if rng.random() < 0.3 else Quality.DRAFT
+    where = f"seed {seed}, circuit {number}"
+    began = time.process_time()
+    try:
+        stage = StageProcessor(circuit, sample_rate_hz=48_000.0, channels=1, quality=quality)
+    except CircuitError as error:
+        found[f"refused: {str(error).split(':')[0][:60]}"] += 1
+        return
+    whole = cut(stage, volts, FRAMES)
+    assert np.isfinite(whole).all(), where
+    fault = stage.fault
+    readings = stage.readings()
+    for size in (1, 17) if fault is None else ():  # a fault silences the whole of the block it is found in
+        stage.reset()
+        np.testing.assert_array_equal(cut(stage, volts, size), whole, err_msg=where)
+    took_s = time.process_time() - began
+    assert took_s < LONGEST_S, where
+    found["slowest_ms"] = max(found["slowest_ms"], round(1000 * took_s))
+    found["run"] += 1
+    if fault is not None:
+        found[f"fault: {fault.reason}"] += 1
+        found["faults"] += 1
+    steps = stage.filters.factor * FRAMES
+    unsolved = max((r.unsolved_steps for r in readings), default=0)
+    found["with unsolved steps"] += unsolved > 0
+    found["unsolved steps"] += unsolved
+    found["steps"] += steps
+    found["at a rail"] += any(r.clip_events for r in readings)
+    found["current limited"] += any(r.current_limited_s for r in readings)
+    found["out of input range"] += any(r.input_range_events for r in readings)
+    found["slewing"] += any(r.slew_peak_v_per_s >= 0.999 * r.slew_limit_v_per_s for r in readings)
+    found["with diodes"] += bool(circuit.ports)
+    most_v = max(float(np.abs(volts).max()), *(max(o.high_v, -o.low_v) for o in circuit.opamps))
+    assert np.abs(whole).max() <= MOST_RATIO * most_v, where
+
+
 def try_circuits(seed: int, wanted: int) -> Counter[str]:
     """Run so many stable circuits; what happened, by name."""
     load_kernels(compile_missing=True)  # what is timed is the computation
@@ -184,45 +225,7 @@ def try_circuits(seed: int, wanted: int) -> Counter[str]:
     number = 0
     while found["run"] < wanted:
         number += 1
-        rng = np.random.default_rng([seed, number])
-        circuit, volts = random_circuit(rng), random_drive(rng)
-        assert len(circuit.branches) <= MOST_PARTS
-        quality = Quality.STANDARD if rng.random() < 0.3 else Quality.DRAFT
-        where = f"seed {seed}, circuit {number}"
-        began = time.process_time()
-        try:
-            stage = StageProcessor(circuit, sample_rate_hz=48_000.0, channels=1, quality=quality)
-        except CircuitError as error:
-            found[f"refused: {str(error).split(':')[0][:60]}"] += 1
-            continue
-        whole = cut(stage, volts, FRAMES)
-        assert np.isfinite(whole).all(), where
-        fault = stage.fault
-        readings = stage.readings()
-        for size in (
-            (1, 17) if fault is None else ()
-        ):  # a fault silences the whole of the block it is found in
-            stage.reset()
-            np.testing.assert_array_equal(cut(stage, volts, size), whole, err_msg=where)
-        took_s = time.process_time() - began
-        assert took_s < LONGEST_S, where
-        found["slowest_ms"] = max(found["slowest_ms"], round(1000 * took_s))
-        found["run"] += 1
-        if fault is not None:
-            found[f"fault: {fault.reason}"] += 1
-            found["faults"] += 1
-        steps = stage.filters.factor * FRAMES
-        unsolved = max((r.unsolved_steps for r in readings), default=0)
-        found["with unsolved steps"] += unsolved > 0
-        found["unsolved steps"] += unsolved
-        found["steps"] += steps
-        found["at a rail"] += any(r.clip_events for r in readings)
-        found["current limited"] += any(r.current_limited_s for r in readings)
-        found["out of input range"] += any(r.input_range_events for r in readings)
-        found["slewing"] += any(r.slew_peak_v_per_s >= 0.999 * r.slew_limit_v_per_s for r in readings)
-        found["with diodes"] += bool(circuit.ports)
-        most_v = max(float(np.abs(volts).max()), *(max(o.high_v, -o.low_v) for o in circuit.opamps))
-        assert np.abs(whole).max() <= MOST_RATIO * most_v, where
+        try_circuit(seed, number, found)
     return found
 
 
@@ -232,6 +235,38 @@ def test_sixty_random_circuits_stay_finite_and_do_not_depend_on_blocks() -> None
     assert found["faults"] == 0
     assert found["at a rail"] > 10
     assert found["with diodes"] > 10
+
+
+@pytest.mark.parametrize(
+    ("seed", "numbers"),
+    [
+        pytest.param(13, [419, 870, 1050], id="a class-B stage drives an inductor"),
+        pytest.param(14, [499, 1455], id="a class-B stage drives a filter"),
+        pytest.param(12, [2280], id="an inductor alone carries the largest current"),
+        pytest.param(12, [342, 1207, 2345], id="a diode to an output at its largest current"),
+        pytest.param(
+            12, [1272, 2079, 2513], id="a diode or a class-B stage, and a swing that hangs on the load"
+        ),
+        pytest.param(14, [857, 1389], id="a diode to an output beyond its rails"),
+        pytest.param(13, [1526], id="a diode and every limit"),
+        pytest.param(11, [413, 2024], id="a way onto one wall that seemed to pass another"),
+        pytest.param(
+            11, [17, 655, 794, 1372], id="a class 2 capacitor that resonates, and an op-amp at its limits"
+        ),
+        pytest.param(11, [832], id="a wall that an op-amp cannot keep"),
+        pytest.param(11, [304], id="a largest current into picofarads behind a hundredth of an ohm"),
+        pytest.param(13, [368], id="a largest current beside a diode and a class-B stage"),
+        pytest.param(11, [1265, 1550], id="a class-B stage at its largest current"),
+        pytest.param(13, [484, 488], id="a class-B stage and diodes"),
+    ],
+)
+def test_circuits_that_once_ran_away_stay_bounded_and_are_solved(seed: int, numbers: list[int]) -> None:
+    load_kernels(compile_missing=True)
+    found: Counter[str] = Counter()
+    for number in numbers:
+        try_circuit(seed, number, found)
+    assert found["run"] == len(numbers)
+    assert (found["faults"], found["unsolved steps"]) == (0, 0)
 
 
 @pytest.mark.slow
