@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp import kernels, macro_kernels, recur_kernels, regime_kernels, visit_kernels
+from preview.dsp import kernels, macro_kernels, regime_kernels, visit_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
 from preview.dsp.rest import resting_state
@@ -277,13 +277,12 @@ class MacroCore:
             np.zeros(2 * ports),
             np.zeros(3),
         )
-        wide = recur_kernels.width(size)
         self._tracks = (
-            np.zeros((max(size, wide), kernels.CHUNK + 1)),
-            np.zeros((max(rows, wide), kernels.CHUNK)),
+            np.zeros((size, kernels.CHUNK + 1)),
+            np.zeros((rows, kernels.CHUNK)),
             np.zeros((2 * k + walls + 1, 2)),
             np.zeros(2 * k + walls + 1, dtype=np.int64),
-            np.zeros((wide, wide)),
+            np.zeros((size, size)),
         )
         self._setting, self._factor = noise, factor
         self._noise: NoiseSource | None = None

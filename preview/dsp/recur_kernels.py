@@ -28,6 +28,28 @@ def recur_4(m: Any, drive: Any, track: Any, count: int) -> None:
 
 
 @compiled
+def dot_5(m: Any, r: int, x: Any) -> Any:
+    """Row ``r`` of a matrix times five numbers."""
+    return dot_4(m, r, x) + m[r, 4] * x[4]
+
+
+@compiled
+def recur_5(m: Any, drive: Any, track: Any, count: int) -> None:
+    """Five states."""
+    x = (track[0, 0], track[1, 0], track[2, 0], track[3, 0], track[4, 0])
+    for i in range(count):
+        x = (
+            drive[0, i] + dot_5(m, 0, x),
+            drive[1, i] + dot_5(m, 1, x),
+            drive[2, i] + dot_5(m, 2, x),
+            drive[3, i] + dot_5(m, 3, x),
+            drive[4, i] + dot_5(m, 4, x),
+        )
+        track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = x[0], x[1], x[2], x[3]
+        track[4, i + 1] = x[4]
+
+
+@compiled
 def dot_6(m: Any, r: int, x: Any) -> Any:
     """Row ``r`` of a matrix times six numbers."""
     return dot_4(m, r, x) + (m[r, 4] * x[4] + m[r, 5] * x[5])
@@ -48,6 +70,30 @@ def recur_6(m: Any, drive: Any, track: Any, count: int) -> None:
         )
         track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = x[0], x[1], x[2], x[3]
         track[4, i + 1], track[5, i + 1] = x[4], x[5]
+
+
+@compiled
+def dot_7(m: Any, r: int, x: Any) -> Any:
+    """Row ``r`` of a matrix times seven numbers."""
+    return dot_4(m, r, x) + ((m[r, 4] * x[4] + m[r, 5] * x[5]) + m[r, 6] * x[6])
+
+
+@compiled
+def recur_7(m: Any, drive: Any, track: Any, count: int) -> None:
+    """Seven states."""
+    x = (track[0, 0], track[1, 0], track[2, 0], track[3, 0], track[4, 0], track[5, 0], track[6, 0])
+    for i in range(count):
+        x = (
+            drive[0, i] + dot_7(m, 0, x),
+            drive[1, i] + dot_7(m, 1, x),
+            drive[2, i] + dot_7(m, 2, x),
+            drive[3, i] + dot_7(m, 3, x),
+            drive[4, i] + dot_7(m, 4, x),
+            drive[5, i] + dot_7(m, 5, x),
+            drive[6, i] + dot_7(m, 6, x),
+        )
+        track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = x[0], x[1], x[2], x[3]
+        track[4, i + 1], track[5, i + 1], track[6, i + 1] = x[4], x[5], x[6]
 
 
 @compiled
@@ -82,6 +128,43 @@ def recur_8(m: Any, drive: Any, track: Any, count: int) -> None:
         )
         track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = x[0], x[1], x[2], x[3]
         track[4, i + 1], track[5, i + 1], track[6, i + 1], track[7, i + 1] = x[4], x[5], x[6], x[7]
+
+
+@compiled
+def dot_9(m: Any, r: int, x: Any) -> Any:
+    """Row ``r`` of a matrix times nine numbers."""
+    return dot_8(m, r, x) + m[r, 8] * x[8]
+
+
+@compiled
+def recur_9(m: Any, drive: Any, track: Any, count: int) -> None:
+    """Nine states."""
+    x = (
+        track[0, 0],
+        track[1, 0],
+        track[2, 0],
+        track[3, 0],
+        track[4, 0],
+        track[5, 0],
+        track[6, 0],
+        track[7, 0],
+        track[8, 0],
+    )
+    for i in range(count):
+        x = (
+            drive[0, i] + dot_9(m, 0, x),
+            drive[1, i] + dot_9(m, 1, x),
+            drive[2, i] + dot_9(m, 2, x),
+            drive[3, i] + dot_9(m, 3, x),
+            drive[4, i] + dot_9(m, 4, x),
+            drive[5, i] + dot_9(m, 5, x),
+            drive[6, i] + dot_9(m, 6, x),
+            drive[7, i] + dot_9(m, 7, x),
+            drive[8, i] + dot_9(m, 8, x),
+        )
+        track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = x[0], x[1], x[2], x[3]
+        track[4, i + 1], track[5, i + 1], track[6, i + 1], track[7, i + 1] = x[4], x[5], x[6], x[7]
+        track[8, i + 1] = x[8]
 
 
 @compiled
@@ -121,6 +204,47 @@ def recur_10(m: Any, drive: Any, track: Any, count: int) -> None:
         track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = x[0], x[1], x[2], x[3]
         track[4, i + 1], track[5, i + 1], track[6, i + 1], track[7, i + 1] = x[4], x[5], x[6], x[7]
         track[8, i + 1], track[9, i + 1] = x[8], x[9]
+
+
+@compiled
+def dot_11(m: Any, r: int, x: Any) -> Any:
+    """Row ``r`` of a matrix times eleven numbers."""
+    return dot_8(m, r, x) + ((m[r, 8] * x[8] + m[r, 9] * x[9]) + m[r, 10] * x[10])
+
+
+@compiled
+def recur_11(m: Any, drive: Any, track: Any, count: int) -> None:
+    """Eleven states."""
+    x = (
+        track[0, 0],
+        track[1, 0],
+        track[2, 0],
+        track[3, 0],
+        track[4, 0],
+        track[5, 0],
+        track[6, 0],
+        track[7, 0],
+        track[8, 0],
+        track[9, 0],
+        track[10, 0],
+    )
+    for i in range(count):
+        x = (
+            drive[0, i] + dot_11(m, 0, x),
+            drive[1, i] + dot_11(m, 1, x),
+            drive[2, i] + dot_11(m, 2, x),
+            drive[3, i] + dot_11(m, 3, x),
+            drive[4, i] + dot_11(m, 4, x),
+            drive[5, i] + dot_11(m, 5, x),
+            drive[6, i] + dot_11(m, 6, x),
+            drive[7, i] + dot_11(m, 7, x),
+            drive[8, i] + dot_11(m, 8, x),
+            drive[9, i] + dot_11(m, 9, x),
+            drive[10, i] + dot_11(m, 10, x),
+        )
+        track[0, i + 1], track[1, i + 1], track[2, i + 1], track[3, i + 1] = x[0], x[1], x[2], x[3]
+        track[4, i + 1], track[5, i + 1], track[6, i + 1], track[7, i + 1] = x[4], x[5], x[6], x[7]
+        track[8, i + 1], track[9, i + 1], track[10, i + 1] = x[8], x[9], x[10]
 
 
 @compiled
@@ -168,26 +292,27 @@ def recur_12(m: Any, drive: Any, track: Any, count: int) -> None:
 
 @compiled
 def recur_wide(M: Any, drive: Any, track: Any, size: int, count: int, m: Any) -> None:
-    """``track[:, i + 1] = M track[:, i] + drive[:, i]``.
-
-    ``m`` (w, w) is room, w from ``width``; ``track`` and ``drive`` have w rows or more.
-    """
-    wide = m.shape[0]
-    for r in range(wide):
-        for j in range(wide):
-            m[r, j] = M[r, j] if r < size and j < size else 0.0
-        if r >= size:
-            track[r, 0] = 0.0
-            drive[r, :count] = 0.0
-    if wide == 4:
+    """``track[:, i + 1] = M track[:, i] + drive[:, i]``; ``m`` (size, size) is room."""
+    for r in range(size):
+        for j in range(size):
+            m[r, j] = M[r, j]
+    if size == 4:
         recur_4(m, drive, track, count)
-    elif wide == 6:
+    elif size == 5:
+        recur_5(m, drive, track, count)
+    elif size == 6:
         recur_6(m, drive, track, count)
-    elif wide == 8:
+    elif size == 7:
+        recur_7(m, drive, track, count)
+    elif size == 8:
         recur_8(m, drive, track, count)
-    elif wide == 10:
+    elif size == 9:
+        recur_9(m, drive, track, count)
+    elif size == 10:
         recur_10(m, drive, track, count)
-    elif wide == 12:
+    elif size == 11:
+        recur_11(m, drive, track, count)
+    elif size == 12:
         recur_12(m, drive, track, count)
     else:
         for i in range(count):
@@ -196,8 +321,3 @@ def recur_wide(M: Any, drive: Any, track: Any, size: int, count: int, m: Any) ->
                 for j in range(size):
                     t += m[r, j] * track[j, i]
                 track[r, i + 1] = t
-
-
-def width(size: int) -> int:
-    """Rows that a recurrence of so many states works on: the next even number up to twelve, at least four."""
-    return max(4, size + size % 2) if size <= 12 else size
