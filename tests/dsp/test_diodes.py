@@ -64,7 +64,7 @@ def pair_currents() -> tuple[Real, Real]:
 
 
 @pytest.mark.parametrize("quality", list(PROMISE))
-@pytest.mark.parametrize("f", [1000, 5000])
+@pytest.mark.parametrize("f", [1000, pytest.param(5000, marks=pytest.mark.slow)])
 def test_back_to_back_diodes_in_the_feedback_20_db_over(f: int, quality: Quality) -> None:
     # 20 dB over: the linear stage would give 10 times the 0.6 V at which the diodes begin to take over
     from scipy.interpolate import CubicSpline
@@ -170,7 +170,7 @@ def test_an_inductor_keeps_its_current_where_only_a_diode_lets_it_flow(aside_ohm
 
 
 @pytest.mark.parametrize("ohm", [1.0, 50.0])
-@pytest.mark.parametrize("farad", [1e-9, 100e-9])
+@pytest.mark.parametrize("farad", [1e-9, pytest.param(100e-9, marks=pytest.mark.slow)])
 def test_a_largest_current_is_kept_beside_a_diode_as_a_stiff_solver_says(farad: float, ohm: float) -> None:
     # a follower at its 5 mA into 1 k, a capacitor, and 220 ohm with a diode; what is beyond the limit is taken back
     # within a tenth of a picosecond by the solver, at once here

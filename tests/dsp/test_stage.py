@@ -111,7 +111,7 @@ LIMITS = {
 
 
 @pytest.mark.parametrize("f", [997, 4999])
-@pytest.mark.parametrize("name", ["low-pass", "high-pass"])
+@pytest.mark.parametrize("name", ["low-pass", pytest.param("high-pass", marks=pytest.mark.slow)])
 def test_rail_clipping_20_db_over_against_a_stiff_solver(name: str, f: int) -> None:
     circuit = ALL[name]
     amplitude = 10.0 * RAIL_V / abs(response(circuit, [f])[0])
@@ -154,6 +154,7 @@ def test_a_loop_of_second_order_clips_as_a_stiff_solver_says() -> None:
     assert 20 * math.log10(error) < -75.0
 
 
+@pytest.mark.slow
 def test_two_op_amps_that_both_clip_do_as_a_stiff_solver_says() -> None:
     f, amplitude, rail, w = 997, 60.0, RAIL_V, 2 * np.pi * 997
 
