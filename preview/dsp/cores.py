@@ -334,7 +334,10 @@ class MacroCore:
         worst = _beyond_belief(self._state)
         if worst is not None:
             return self._model.where(worst)
-        worst = _beyond_belief(np.abs(self._extremes[:, : 3 * self._k]).max(axis=2, initial=0.0))
+        within = self._extremes[:, : 3 * self._k]
+        if np.vdot(within, within) < BEYOND_BELIEF**2:
+            return None
+        worst = _beyond_belief(np.abs(within).max(axis=2, initial=0.0))
         return None if worst is None else self._model.where(self._n + worst % self._k)  # within a block
 
     def _prepared(self, e: MacroEquations, values: Real, supply: Real | None = None) -> Matrices:

@@ -42,7 +42,7 @@ common-mode range."""
 Side = Literal["high", "low", ""]
 Key = tuple[LimitKind, int, int]
 
-PIECE_FRAMES = 16 * BLOCK_FRAMES
+PIECE_FRAMES = 8 * BLOCK_FRAMES
 """Most frames that are run at a time, between two kept states."""
 
 _KINDS: tuple[tuple[LimitKind, int, int, int], ...] = (

@@ -35,10 +35,12 @@ POWER_ON_S = 0.05
 """Time that a supply takes to come up [s]."""
 
 MOST_UNSOLVED = 0.25
-"""Share of the steps of a block or more that may be left without a solution before the circuit is stopped."""
+"""Share of the steps of ``JUDGED_FRAMES`` or more that may be left without a solution before the circuit is stopped."""
 
-BLOCK_FRAMES = 128
-"""Frames computed at a time."""
+BLOCK_FRAMES = 256
+"""Most frames computed at a time."""
+JUDGED_FRAMES = 128
+"""Fewest frames over which steps left without a solution are counted."""
 
 Snapshot = tuple[NDArray[Any], ...]
 """The state of a stage at one moment."""
@@ -267,7 +269,7 @@ class StageProcessor:
                 self.fault = FaultReading(node, self._frames / self.sample_rate_hz, reason)
                 volts_out[done - count :] = 0.0
                 return
-            if self._frames < self._judged + BLOCK_FRAMES:  # however the signal is cut
+            if self._frames < self._judged + JUDGED_FRAMES:  # however the signal is cut
                 continue
             judged, self._judged = self._judged, self._frames
             unsolved = self._core.unsolved()
