@@ -391,16 +391,21 @@ async def test_a_picture_of_the_desk_needs_no_terminal_and_refers_to_nothing(ses
     assert svg.count("http") == 1, "the name space only"
 
 
+def said_by(code: str) -> str:
+    """What a Python of its own prints."""
+    done = subprocess.run(
+        [sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=60
+    )
+    return done.stdout.strip()
+
+
 def test_the_desk_loads_neither_sound_nor_compiler_nor_plots() -> None:
     code = (
         "import sys, preview.ui.app\n"
         "names = ['numba', 'sounddevice', 'soundfile', 'soxr', 'matplotlib', 'scipy.signal']\n"
         "print([name for name in names if name in sys.modules])"
     )
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=60
-    )
-    assert done.stdout.strip() == "[]"
+    assert said_by(code) == "[]"
 
 
 def test_the_engine_is_started_before_anything_large_is_loaded() -> None:
@@ -410,10 +415,7 @@ def test_the_engine_is_started_before_anything_large_is_loaded() -> None:
         "names = ['numpy', 'soundfile', 'textual', 'preview.engine.messages']\n"
         "print([name for name in names if name in sys.modules])"
     )
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=60
-    )
-    assert done.stdout.strip() == "[]"
+    assert said_by(code) == "[]"
 
 
 def test_the_figures_of_a_real_op_amp_load_neither_sound_nor_compiler_nor_plots() -> None:
@@ -429,10 +431,7 @@ def test_the_figures_of_a_real_op_amp_load_neither_sound_nor_compiler_nor_plots(
         "names = ['numba', 'sounddevice', 'soundfile', 'soxr', 'matplotlib', 'scipy.signal']\n"
         "print([name for name in names if name in sys.modules])"
     )
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=60
-    )
-    assert done.stdout.strip() == "[]"
+    assert said_by(code) == "[]"
 
 
 def test_the_figures_load_neither_sound_nor_compiler_nor_plots() -> None:
@@ -441,7 +440,4 @@ def test_the_figures_load_neither_sound_nor_compiler_nor_plots() -> None:
         "names = ['numba', 'sounddevice', 'soundfile', 'soxr', 'matplotlib', 'scipy.signal']\n"
         "print([name for name in names if name in sys.modules])"
     )
-    done = subprocess.run(
-        [sys.executable, "-c", code], capture_output=True, text=True, check=True, timeout=60
-    )
-    assert done.stdout.strip() == "[]"
+    assert said_by(code) == "[]"
