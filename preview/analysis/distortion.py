@@ -15,7 +15,7 @@ from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
 from preview.dsp.block import Volts
-from preview.dsp.events import PIECE_FRAMES, EventFinder, LimitKind
+from preview.dsp.events import LOG_FRAMES, EventFinder, LimitKind
 from preview.dsp.oversample import PASSBAND_RATIO
 from preview.dsp.settle import memory_s
 from preview.dsp.stage import StageProcessor
@@ -258,7 +258,7 @@ def onset(
     """
     stage = StageProcessor(circuit, sample_rate_hz=sample_rate_hz, channels=1, quality=quality)
     fade = int(max(8.0 / frequency_hz, min(memory_s(circuit, 12.0), 5.0)) * sample_rate_hz)
-    frames = fade + max(int(4.0 / frequency_hz * sample_rate_hz), 2 * PIECE_FRAMES)
+    frames = fade + max(int(4.0 / frequency_hz * sample_rate_hz), 2 * LOG_FRAMES)
     n = np.arange(frames)
     shape = 0.5 - 0.5 * np.cos(np.pi * np.minimum(n / fade, 1.0))
     tone = (shape * np.sin(2.0 * np.pi * frequency_hz / sample_rate_hz * n))[:, None]
@@ -268,8 +268,8 @@ def onset(
         stage.reset()
         finder = EventFinder(stage)
         volts = level_v * tone
-        for start in range(0, frames, PIECE_FRAMES):
-            finder.process(volts[start : start + PIECE_FRAMES], None)
+        for start in range(0, frames, LOG_FRAMES):
+            finder.process(volts[start : start + LOG_FRAMES], None)
             if start < fade:
                 finder.events.clear()
         finder.finish()

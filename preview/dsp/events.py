@@ -11,10 +11,12 @@ from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Literal
 
+import numpy as np
+
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp import visit_kernels
 from preview.dsp.block import Volts
-from preview.dsp.stage import BLOCK_FRAMES, Snapshot, StageProcessor
+from preview.dsp.stage import Snapshot, StageProcessor
 from preview.dsp.visit_kernels import (
     AT_CURRENT,
     AT_RAIL,
@@ -34,7 +36,7 @@ from preview.dsp.visit_kernels import (
     WAS,
 )
 
-__all__ = ["PIECE_FRAMES", "EventFinder", "LimitEvent", "LimitKind"]
+__all__ = ["LOG_FRAMES", "EventFinder", "LimitEvent", "LimitKind"]
 
 LimitKind = Literal["rail", "slew", "current", "range"]
 """What an op-amp came to: a rail (or the end of its swing), its slew rate, its largest current, the end of its
@@ -42,8 +44,8 @@ common-mode range."""
 Side = Literal["high", "low", ""]
 Key = tuple[LimitKind, int, int]
 
-PIECE_FRAMES = 8 * BLOCK_FRAMES
-"""Most frames that are run at a time, between two kept states."""
+LOG_FRAMES = 2048
+"""Most frames that are run before the log is read: as long as it must be."""
 
 _KINDS: tuple[tuple[LimitKind, int, int, int], ...] = (
     ("rail", RAIL, VISITS, AT_RAIL),
@@ -115,7 +117,7 @@ class EventFinder:
         self._delay_frames = stage.filters.circuit_delay_frames
         self._middle_v = [0.5 * (o.high_v + o.low_v) for o in stage.netlist.opamps]
         opamps, core = len(stage.netlist.opamps), stage.core
-        core.log.begin(stage.channels * opamps * PIECE_FRAMES * stage.filters.factor)
+        core.log.begin(stage.channels * opamps * LOG_FRAMES * stage.filters.factor)
         at_limits = core.limited().tolist()
         voltages_v = core.statistics()[:, :, visit_kernels.HIGH].tolist()
         for c in range(stage.channels):
@@ -126,7 +128,7 @@ class EventFinder:
                         self._open[kind, c, j] = _Visit(self._time_s(0), side)
 
     def process(self, volts_in: Volts, volts_out: Volts | None) -> tuple[OpAmpReading, ...]:
-        """Run the next ``volts_in``, at most ``PIECE_FRAMES``; the readings of these frames.
+        """Run the next ``volts_in``; the readings of these frames.
 
         ``volts_out`` is filled; with None the output is left out, from the first frames to the last.
         """
@@ -134,16 +136,18 @@ class EventFinder:
         self.before = stage.snapshot()
         stage.clear_readings()
         log.take()
-        if volts_out is not None:
-            stage.process(volts_in, volts_out)
-        else:
-            for first, count in _blocks(len(volts_in)):
-                stage.raise_rate(volts_in, first, count)
-                stage.run_core(0, count)
-                stage.keep_rate(count)
-        for row in log.take():
-            self._note(row)
-        self.frames += len(volts_in)
+        for begin in range(0, len(volts_in), LOG_FRAMES):
+            part = volts_in[begin : begin + LOG_FRAMES]
+            if volts_out is not None:
+                stage.process(part, volts_out[begin : begin + len(part)])
+            else:
+                for first, count in self._blocks(len(part)):
+                    stage.raise_rate(part, first, count)
+                    stage.run_core(0, count)
+                    stage.keep_rate(count)
+            for row in log.take():
+                self._note(row)
+            self.frames += len(part)
         if self._slewing:
             self._end_slewing()
         return stage.readings()
@@ -176,7 +180,7 @@ class EventFinder:
         Parameters
         ----------
         before, frame, volts_in
-            The stage before these frames, the number of their first, and the frames, at most ``PIECE_FRAMES``.
+            The stage before these frames, the number of their first, and the frames.
         opamp : int
             Which op-amp, from 0.
         rest_v : float
@@ -185,24 +189,38 @@ class EventFinder:
         stage = self.stage
         after = stage.snapshot()
         stage.restore(before)
-        farthest, best = -1.0, 0
-        for first, count in _blocks(len(volts_in)):
+
+        def far_v(first: int, count: int) -> float:
+            """How far it comes from rest in some frames of a block."""
+            stage.clear_readings()
+            stage.run_core(first, count)
+            stats = stage.core.statistics()[:, opamp]
+            high, low = stats[:, visit_kernels.HIGH].max(), stats[:, visit_kernels.LOW].min()
+            return float(max(high - rest_v, rest_v - low))
+
+        farthest_v, block, begin = -1.0, (0, 0), before
+        for first, count in self._blocks(len(volts_in)):
+            now = stage.snapshot()
             stage.raise_rate(volts_in, first, count)
-            for i in range(count):
-                stage.clear_readings()
-                stage.run_core(i, 1)
-                stats = stage.core.statistics()[:, opamp]
-                high, low = stats[:, visit_kernels.HIGH].max(), stats[:, visit_kernels.LOW].min()
-                far = max(high - rest_v, rest_v - low)
-                if far > farthest:
-                    farthest, best = far, first + i
+            there_v = far_v(0, count)
             stage.keep_rate(count)
+            if there_v > farthest_v:
+                farthest_v, block, begin = there_v, (first, count), now
+        first, count = block
+        stage.restore(begin)
+        stage.raise_rate(volts_in, first, count)
+        best = int(np.argmax([far_v(i, 1) for i in range(count)]))
         stage.restore(after)
-        return self._time_s(frame + best + 0.5)
+        return self._time_s(frame + first + best + 0.5)
 
     def _time_s(self, frames: float) -> float:
         """Time of the recording that the circuit has come to after so many frames [s]."""
         return (frames - self._delay_frames) / self.stage.sample_rate_hz
+
+    def _blocks(self, frames: int) -> Iterator[tuple[int, int]]:
+        """First frame and count of each block."""
+        most = self.stage.block_frames
+        return ((first, min(most, frames - first)) for first in range(0, frames, most))
 
     def _side(self, opamp: int, voltage_v: float) -> Side:
         return "high" if voltage_v >= self._middle_v[opamp] else "low"
@@ -263,8 +281,3 @@ class EventFinder:
         self.events.append(
             LimitEvent(name, kind, c + 1, visit.start_s, max(end_s, visit.start_s), visit.side)
         )
-
-
-def _blocks(frames: int) -> Iterator[tuple[int, int]]:
-    """First frame and count of each block."""
-    return ((first, min(BLOCK_FRAMES, frames - first)) for first in range(0, frames, BLOCK_FRAMES))

@@ -38,7 +38,7 @@ MOST_UNSOLVED = 0.25
 """Share of the steps of ``JUDGED_FRAMES`` or more that may be left without a solution before the circuit is stopped."""
 
 BLOCK_FRAMES = 256
-"""Most frames computed at a time."""
+"""Most frames computed at a time, where no other number is asked for."""
 JUDGED_FRAMES = 128
 """Fewest frames over which steps left without a solution are counted."""
 
@@ -75,6 +75,9 @@ class StageProcessor:
         Steps per frame.
     noise : NoiseSetting, optional
         The noise of its parts is heard too.
+    block_frames : int
+        Most frames computed at a time: more are a little faster, and a fault is found that much later. The samples do
+        not depend on it.
 
     Raises
     ------
@@ -90,8 +93,10 @@ class StageProcessor:
         channels: int,
         quality: Quality,
         noise: NoiseSetting | None = None,
+        block_frames: int = BLOCK_FRAMES,
     ) -> None:
         self.quality = quality
+        self.block_frames = block_frames
         self.fault: FaultReading | None = None
         self._frames = self._judged = 0
         self._unsolved = 0.0
@@ -106,7 +111,7 @@ class StageProcessor:
         check_stable(netlist)
         self._core = core_for(netlist, channels, self.step_s, noise=noise, factor=self.filters.factor)
         self._matrices = self._core.matrices(self._core.values_of(netlist)[None])
-        f, c, b = self.filters, channels, BLOCK_FRAMES
+        f, c, b = self.filters, channels, block_frames
         steps = b * f.factor
         self._x = np.zeros((c, f.up_1.shape[1] - 1 + b))
         self._a = np.zeros((c, f.up_2.shape[1] - 1 + 2 * b))
@@ -248,7 +253,7 @@ class StageProcessor:
             return
         done = 0
         while done < frames:
-            count = min(BLOCK_FRAMES, frames - done)
+            count = min(self.block_frames, frames - done)
             steps = count * f.factor
             self.raise_rate(volts_in, done, count)
             leg = self._glide.steps_per_leg if self._glide is not None else 0
@@ -281,7 +286,7 @@ class StageProcessor:
             self._unsolved = unsolved
 
     def raise_rate(self, volts_in: Volts, first: int, count: int) -> None:
-        """Bring up to ``BLOCK_FRAMES`` frames, from ``first`` on, to the rate of the steps."""
+        """Bring up to ``block_frames`` frames, from ``first`` on, to the rate of the steps."""
         f = self.filters
         rate_kernels.up_block(
             volts_in, first, count, self._x, self._a, self._u, f.up_1, f.up_2, self._room[0]

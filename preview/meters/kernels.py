@@ -177,6 +177,19 @@ def note_true_peaks(
 
 
 @compiled
+def note_plain(volts: Any, highest: Any, total: Any, square: Any) -> None:
+    """Largest magnitude, sum and sum of squares of each channel of ``volts`` (frames, c); (c,) each."""
+    for c in range(volts.shape[1]):
+        high, added, power = highest[c], total[c], square[c]
+        for i in range(volts.shape[0]):
+            x = volts[i, c]
+            high = abs(x) if abs(x) > high else high
+            added += x
+            power += x * x
+        highest[c], total[c], square[c] = high, added, power
+
+
+@compiled
 def note_squares(
     rows: Any, first: int, count: int, step: float, square: Any, highest: Any, total: Any
 ) -> None:

@@ -11,7 +11,7 @@ from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpModel
-from preview.dsp.events import PIECE_FRAMES, EventFinder, LimitEvent
+from preview.dsp.events import LOG_FRAMES, EventFinder, LimitEvent
 from preview.dsp.stage import StageProcessor
 from preview.values.quality import Quality
 from tests.nets import LOW_PASS, RAIL_V, TWO_SECTIONS, net
@@ -29,7 +29,7 @@ REAL = OpAmpModel(
 
 
 def found(
-    circuit: Netlist, volts: Real, rate: float, *, piece: int = PIECE_FRAMES
+    circuit: Netlist, volts: Real, rate: float, *, piece: int = LOG_FRAMES
 ) -> tuple[list[LimitEvent], dict[str, int]]:
     """Every visit while the signal, and enough silence to see its end, goes through."""
     columns = volts.reshape(len(volts), -1)

@@ -41,6 +41,7 @@ CASES: dict[str, Callable[[], list[Any]]] = {
     "interpolate": lambda: [rows()[0], PAST, COUNT, TAPS, zeros(8, COUNT)],
     "note_peaks": lambda: [rows(), PAST, COUNT, 0.99, zeros(2), zeros(2), zeros(2)],
     "note_true_peaks": lambda: [rows(), PAST, COUNT, TAPS, zeros(8, COUNT), 0.99, zeros(2), zeros(2)],
+    "note_plain": lambda: [np.ascontiguousarray(rows().T), zeros(2), zeros(2), zeros(2)],
     "note_squares": lambda: [rows(), PAST, COUNT, 0.1, zeros(2), zeros(2), zeros(2)],
     "note_means": lambda: [rows(), PAST, COUNT, 0.1, zeros(2, 2), zeros(2)],
     "end_block": lambda: [

@@ -9,6 +9,7 @@ from numpy.typing import NDArray
 
 from preview.dsp.block import Volts
 from preview.engine.check.results import LevelsRead
+from preview.meters import kernels
 from preview.meters.loudness import LoudnessMeter
 from preview.meters.true_peak import TruePeakMeter
 from preview.values.levels import ratio_db
@@ -17,7 +18,7 @@ __all__ = ["LOUDNESS_FROM_HZ", "Levels"]
 
 LOUDNESS_FROM_HZ = 8_000.0
 """Lowest sample rate at which loudness means anything."""
-CHUNK_FRAMES = 2048
+CHUNK_FRAMES = 2400
 """Frames that the meters take at a time: fewer calls than live."""
 
 
@@ -42,6 +43,7 @@ class Levels:
                 sample_rate_hz, channels, full_scale_v=full_scale_v, chunk_frames=CHUNK_FRAMES
             )
         self._peak: NDArray[np.float64] = np.zeros(channels)
+        self._latest = np.zeros(channels)
         self._sum, self._square = np.zeros(channels), np.zeros(channels)
         self.frames = 0
         """Frames taken."""
@@ -55,18 +57,14 @@ class Levels:
         """Take the next frames; the largest magnitude in them [V]."""
         if not len(volts):
             return 0.0
-        highest_v = 0.0
-        for c, row in enumerate(np.ascontiguousarray(volts.T)):  # a row at a time: ten times as fast
-            peak_v = max(float(row.max()), -float(row.min()))
-            self._peak[c] = max(self._peak[c], peak_v)
-            self._sum[c] += row.sum()
-            self._square[c] += row @ row
-            highest_v = max(highest_v, peak_v)
+        self._latest.fill(0.0)
+        kernels.note_plain(volts, self._latest, self._sum, self._square)
+        np.maximum(self._peak, self._latest, out=self._peak)
         self.frames += len(volts)
         self._true_peak.feed(volts)
         if self._loudness is not None:
             self._loudness.feed(volts)
-        return highest_v
+        return float(self._latest.max())
 
     def read(self) -> LevelsRead:
         """The levels of all that was taken."""

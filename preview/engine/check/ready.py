@@ -19,9 +19,8 @@ def is_compiled(plan: CheckPlan) -> bool:
     """Whether everything only has to be loaded, or could not be kept if it were compiled."""
     runs = "run_macro" if runs_as_they_are(plan.session.netlist()) else "run_steps"
     kept = os.access(os.environ["NUMBA_CACHE_DIR"], os.W_OK)
-    return not kept or all(
-        in_cache(name) for name in (runs, "up_block", "down_block", "note_true_peaks", "note_loudness")
-    )
+    needed = (runs, "up_block", "down_block", "note_plain", "note_true_peaks", "note_loudness")
+    return not kept or all(in_cache(name) for name in needed)
 
 
 def compile_first(plan: CheckPlan) -> None:

@@ -13,7 +13,7 @@ import numpy as np
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpReading
 from preview.dsp.block import Volts
-from preview.dsp.events import PIECE_FRAMES, EventFinder, LimitEvent
+from preview.dsp.events import EventFinder, LimitEvent
 from preview.dsp.settle import settle
 from preview.dsp.stage import Snapshot, StageProcessor
 from preview.engine.check.levels import Levels
@@ -37,6 +37,8 @@ __all__ = [
 
 EVENTS_KEPT = 20_000
 """Visits of one recording that are kept with their times; beyond these they are only counted."""
+BLOCK_FRAMES = 512
+"""Frames that a stage computes at a time."""
 WORST_PIECES = 3
 """Passages that are looked at again to find the largest clean input."""
 
@@ -79,7 +81,11 @@ class Stages:
             if len(self._made) >= 4:
                 self._made.clear()
             self._made[key] = StageProcessor(
-                self.netlist, sample_rate_hz=sample_rate_hz, channels=channels, quality=self._quality
+                self.netlist,
+                sample_rate_hz=sample_rate_hz,
+                channels=channels,
+                quality=self._quality,
+                block_frames=BLOCK_FRAMES,
             )
         stage = self._made[key]
         stage.reset()
@@ -114,8 +120,8 @@ def loads(netlist: Netlist, readings: tuple[OpAmpReading, ...]) -> list[Load]:
 
 
 def piece_frames(sample_rate_hz: float) -> int:
-    """Frames that are run at a time: a twentieth of a second, within bounds."""
-    return int(np.clip(sample_rate_hz / 20.0, 64, PIECE_FRAMES))
+    """Frames that are run at a time: a tenth of a second, or a little longer at low rates."""
+    return max(round(sample_rate_hz / 10.0), 64)
 
 
 def settle_at(stage: StageProcessor, signal: Signal, scale_v: float, frame: int) -> None:
@@ -210,7 +216,9 @@ class WholeRun:
         """Visits to limits, as far as they are kept."""
         self.input = Levels(self._rate_hz, signal.channels, full_scale_v)
         self.output = Levels(self._rate_hz, signal.channels, full_scale_v)
-        self.trace = Trace(piece_frames(self._rate_hz) / self._rate_hz, len(self._netlist.opamps))
+        piece = piece_frames(self._rate_hz)
+        self._near_frames = 16 * piece
+        self.trace = Trace(piece / self._rate_hz, len(self._netlist.opamps))
         self.loads: list[Load] = []
         """The most that was used of each limit."""
         self.readings: tuple[OpAmpReading, ...] = ()
@@ -218,10 +226,10 @@ class WholeRun:
         self._longest: dict[str, LimitEvent] = {}
         self._peaks = [_Farthest() for _ in self._netlist.opamps]
         self._worst: list[tuple[float, int]] = []
-        self._out = np.zeros((PIECE_FRAMES, signal.channels))
         self._skip = stage.latency_frames
         # the circuit comes to the end of the recording earlier than its output comes out
         lag = math.ceil(stage.filters.circuit_delay_frames)
+        self._out = np.zeros((max(piece, stage.latency_frames), signal.channels))
         volts = np.zeros((0, signal.channels))
         for volts, own in pieces(signal, full_scale_v, hold=lag):
             self._piece(volts, own)
@@ -321,7 +329,7 @@ class WholeRun:
 
     def _remember(self, load: float, frame: int) -> None:
         """Keep the worst pieces, one of each neighbourhood."""
-        near = [w for w in self._worst if abs(w[1] - frame) < 16 * piece_frames(self._rate_hz)]
+        near = [w for w in self._worst if abs(w[1] - frame) < self._near_frames]
         if near and near[0][0] >= load:
             return
         for other in near:
