@@ -67,6 +67,8 @@ class Table:
     """Lines before the table that are marked as comments."""
     sample: tuple[tuple[str, ...], ...]
     """Cells of the first rows."""
+    titles: int
+    """Cells of the line above them, if they are fewer and may be the names; otherwise 0."""
 
     def time_column(self, chosen: str, *, wanted: bool) -> int | None:
         """Index of the time column; None where there is none, which is an error where it is wanted."""
@@ -78,7 +80,7 @@ class Table:
         if wanted:
             raise AudioFileError(
                 f"{self.path}: no column is called time; it has {self._listed()}",
-                "say which it is with --time, or give the rows a second with --rate",
+                self._torn() or "say which it is with --time, or give the rows a second with --rate",
             )
         return None
 
@@ -92,7 +94,8 @@ class Table:
         others = [i for i in range(len(self.names)) if i != time]
         if len(others) != 1:
             raise AudioFileError(
-                f"{self.path}: it has {self._listed()}", "choose the signal with --column, by name or number"
+                f"{self.path}: it has {self._listed()}",
+                self._torn() or "choose the signal with --column, by name or number",
             )
         return tuple(others)
 
@@ -187,6 +190,16 @@ class Table:
             return int(wanted) - 1
         raise AudioFileError(f"{self.path}: {option} {chosen}: no such column", f"it has {self._listed()}")
 
+    def _torn(self) -> str:
+        """What to do about decimal commas that have been taken for what parts the cells; empty where there are none."""
+        whole = all(cell.strip().strip('"').lstrip("+-").isdigit() for row in self.sample for cell in row)
+        if self.delimiter != "," or not self.titles or not whole:
+            return ""
+        return (
+            f"{len(self.names)} cells a row under {self.titles} name{'s' * (self.titles != 1)}: "
+            "if 1,5 is one number, save it with semicolons or tabs between the columns"
+        )
+
     def _listed(self) -> str:
         shown = ", ".join(self.names[:12]) + (" ..." if len(self.names) > 12 else "")
         return printable(f"column{'s' * (len(self.names) != 1)} {shown}")
@@ -268,6 +281,7 @@ def _laid_out(path: Path, lines: list[tuple[int, str]], delimiter: str | None, c
         return len(row) == width and not any(_number(cell, comma) is not None for cell in row)
 
     above = list(takewhile(named, reversed(rows[:first])))[::-1]
+    narrow = rows[first - 1] if first and not above else []
     names = [f"column {i + 1}" for i in range(width)]
     if above:
         below = [cell.strip() for cell in above[1]] if len(above) > 1 else [""] * width
@@ -275,7 +289,8 @@ def _laid_out(path: Path, lines: list[tuple[int, str]], delimiter: str | None, c
             unit = unit.strip("[]() ")
             names[i] = printable(f"{name.strip()} [{unit}]" if unit else name.strip()) or names[i]
     sample = tuple(tuple(row) for row in rows[first : first + LOOK_ROWS])
-    return Table(path, delimiter, comma, tuple(names), lines[first][0], comment, sample)
+    few = len(narrow) < width and not any(_number(cell, comma) is not None for cell in narrow)
+    return Table(path, delimiter, comma, tuple(names), lines[first][0], comment, sample, len(narrow) if few else 0)
 
 
 def _split(line: str, delimiter: str | None) -> list[str]:

@@ -192,6 +192,24 @@ def test_what_is_no_log_is_refused(tmp_path: Path, text: str | bytes, form: LogF
         source(tmp_path, text, form)
 
 
+@pytest.mark.parametrize(
+    ("text", "form", "torn"),
+    [
+        ("t,v\n0,00,1,50\n0,01,1,60\n", LogFormat(), True),
+        ("t,v\n0,00,1,50\n0,01,1,60\n", LogFormat(rate_hz=10.0), True),
+        ("v\n1,50\n-1,60\n", LogFormat(rate_hz=10.0), True),
+        ("v\n1.5,1.50\n1.6,1.60\n", LogFormat(rate_hz=10.0), False),
+        ("1,50\n1,60\n", LogFormat(rate_hz=10.0), False),
+    ],
+)
+def test_decimal_commas_between_commas_are_told_of(
+    tmp_path: Path, text: str, form: LogFormat, torn: bool
+) -> None:
+    with pytest.raises(AudioFileError) as caught:
+        source(tmp_path, text, form)
+    assert ("if 1,5 is one number" in str(caught.value.hint)) == torn
+
+
 def test_a_missing_file_and_a_folder_are_told(tmp_path: Path) -> None:
     with pytest.raises(AudioFileError, match="no such file"):
         LogSource(tmp_path / "nowhere.csv", LogFormat())
