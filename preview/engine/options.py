@@ -143,6 +143,13 @@ def add_stage_options(parser: argparse.ArgumentParser) -> None:
         default=Quality.STANDARD.value,
         help="draft, standard (default) or fine",
     )
+    group.add_argument(
+        "--without",
+        action="append",
+        default=[],
+        metavar="LIMIT",
+        help=f"take a limit away from every op-amp: {', '.join(LIMITS)}; may be repeated",
+    )
 
 
 def add_running_options(parser: argparse.ArgumentParser) -> None:
@@ -157,13 +164,6 @@ def add_running_options(parser: argparse.ArgumentParser) -> None:
     )
     group.add_argument("--noise-seed", type=int, default=1, metavar="N", help="which noise (default 1)")
     group.add_argument(
-        "--without",
-        action="append",
-        default=[],
-        metavar="LIMIT",
-        help=f"take a limit away from every op-amp: {', '.join(LIMITS)}; may be repeated",
-    )
-    group.add_argument(
         "--power-on", action="store_true", help="begin by being switched on, and not settled at rest"
     )
 
@@ -171,10 +171,6 @@ def add_running_options(parser: argparse.ArgumentParser) -> None:
 def with_running(session: Session, options: argparse.Namespace) -> Session:
     """The session with what ``add_running_options`` collected; raises UsageError."""
     session = replace(session, power_on=options.power_on)
-    if options.without:
-        without = _without(options.without)
-        note = f"without {', '.join(without)}: taken away from every op-amp"
-        session = replace(session, without=without, notes=(*session.notes, note))
     if options.part_noise is None:
         return session
     gain_db = for_option("--part-noise", lambda: parse_value(options.part_noise, "gain_db", allow_zero=True))
@@ -250,6 +246,9 @@ def session_from(
     if options.load is not None:
         load = for_option("--load", lambda: parse_load(options.load))
         notes.append(f"load {options.load.strip()} = {said(load)}")
+    without = _without(options.without)
+    if without:
+        notes.append(f"without {', '.join(without)}: taken away from every op-amp")
     full_scale, full_scale_note = _full_scale(options.full_scale, comment, assumed_full_scale)
     notes.append(full_scale_note)
     session = Session(
@@ -262,6 +261,7 @@ def session_from(
         quality=_quality(options.quality),
         at_end=at_end,
         output=output,
+        without=without,
         notes=tuple(printable(note) for note in notes),
         warnings=tuple(one for one in (supplies_differ(drawn),) if one and options.supply is None),
     )

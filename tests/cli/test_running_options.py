@@ -65,6 +65,29 @@ def test_a_limit_that_is_taken_away_does_not_limit_and_is_said(tmp_path: Path, c
     np.testing.assert_allclose(free, ideal, atol=1e-3 * np.abs(ideal).max())
 
 
+def test_a_check_and_a_response_go_without_a_limit_too(tmp_path: Path, capsys) -> None:
+    """10 kHz that a slow type cannot follow, and the gain at 1 MHz that an op-amp of 1 MHz has none left for."""
+    tone = tmp_path / "tone.wav"
+    time_s = np.arange(RATE // 10) / RATE
+    soundfile.write(tone, np.sin(2 * np.pi * 10e3 * time_s), RATE, subtype="FLOAT")
+    stage = ["--stage", "inverting-gain", "--json"]
+
+    def said(*words: str, opamp: str = "LM358") -> dict:
+        assert main([*words, *stage, "--opamp", opamp]) == 0
+        return json.loads(capsys.readouterr().out)
+
+    check = ["check", str(tone), "--full-scale", "1 V", "--workers", "1"]
+    assert said(*check)["opamps"][0]["slew_events"] > 0
+    free = said(*check, "--without", "slew")["opamps"][0]
+    assert (free["slew_events"], free["slew_limit_v_per_s"]) == (0, None)
+    slow, fast, ideal = (
+        said("response", "--at", "1M", *more, opamp=opamp)["gain_db"][0]
+        for opamp, more in (("LM358", []), ("LM358", ["--without", "speed"]), ("ideal", []))
+    )
+    assert fast == pytest.approx(ideal, abs=0.1)
+    assert slow < fast - 10.0
+
+
 def test_limits_are_named_as_on_the_desk(tmp_path: Path, capsys) -> None:
     rendered(tmp_path, "--without", "Input  Range", "--without", "noise")
     assert "without input range, noise: taken away from every op-amp" in capsys.readouterr().err
