@@ -110,6 +110,7 @@ class DeskApp(DialogApp):
         self._keeper = FigureKeeper(make_figures)
         self._focused = True
         self._polls = 0
+        self._laid_out_late = False
         self._watch = AnswerWatch()
         self.head = HeaderPanel(self.desk, self.look)
         self.path = PathPanel(self.desk, self.look)
@@ -201,6 +202,15 @@ class DeskApp(DialogApp):
         """Another size, another arrangement."""
         self.arrange(event.size.width, event.size.height)
 
+    def _see_to_size(self) -> None:
+        """Lay the screens out anew where that was missed: the library's timer for it is lost on a very busy machine."""
+        screens = self.screen_stack  # none when the desk ends
+        late = bool(screens) and screens[-1].outer_size != self.size
+        if late and self._laid_out_late:
+            for screen in screens:
+                screen.post_message(Resize(self.size, self.size))
+        self._laid_out_late = late
+
     def arrange(self, width: int, height: int) -> None:
         """Set the classes that the style sheet arranges by, the views that are shown, the rows of path and foot."""
         screen = self.screen_stack[0]
@@ -261,6 +271,7 @@ class DeskApp(DialogApp):
                 self._keeper.want()
             if first:
                 self.arrange(self.size.width, self.size.height)
+        self._see_to_size()
         self.desk.keeping.note()
         if (edited := self.desk.stage_watch.look()) is not None:
             self.foot.say(*edited)
