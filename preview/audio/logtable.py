@@ -290,7 +290,9 @@ def _laid_out(path: Path, lines: list[tuple[int, str]], delimiter: str | None, c
             names[i] = printable(f"{name.strip()} [{unit}]" if unit else name.strip()) or names[i]
     sample = tuple(tuple(row) for row in rows[first : first + LOOK_ROWS])
     few = len(narrow) < width and not any(_number(cell, comma) is not None for cell in narrow)
-    return Table(path, delimiter, comma, tuple(names), lines[first][0], comment, sample, len(narrow) if few else 0)
+    return Table(
+        path, delimiter, comma, tuple(names), lines[first][0], comment, sample, len(narrow) if few else 0
+    )
 
 
 def _split(line: str, delimiter: str | None) -> list[str]:

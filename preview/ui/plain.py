@@ -26,7 +26,7 @@ from preview.ui.firstrun import HEARING, caution_seen, config_folder, remember_c
 from preview.ui.keymap import KeyMap, read_keys
 from preview.ui.link import EngineLink, Restart, Reviver
 from preview.ui.phrases import answer_of, understood
-from preview.ui.spoken import effect, help_lines, part_lines, path_lines, spoken, state_line
+from preview.ui.spoken import effect, help_lines, part_lines, path_lines, place_line, spoken, state_line
 
 __all__ = ["PlainDesk", "run_plain"]
 
@@ -38,6 +38,8 @@ _READ_OUT: dict[str, Callable[[Desk], list[str]]] = {
     "state": lambda desk: [state_line(desk)],
 }
 """What can be read out beside the views."""
+_SEEKS = ("back_small", "forward_small", "back_large", "forward_large", "to_start")
+"""Actions that move the playhead and have nothing else to say."""
 
 
 class PlainDesk:
@@ -226,7 +228,8 @@ class PlainDesk:
         return True
 
     def _do(self, action: Action, rest: str) -> None:
-        method = self.desk.method(action.name) or getattr(self, f"do_{action.name}")
+        method = getattr(self, f"do_{action.name}", None) or self.desk.method(action.name)
+        assert method is not None
         times = int(rest) if rest.isdigit() and action.group is Group.PARTS else 1
         if not 0 < times <= _MOST_REPEATS:
             raise UsageError(f"{rest} times", f"1 to {_MOST_REPEATS}")
@@ -239,8 +242,10 @@ class PlainDesk:
             return
         self._present(outcome, "" if times > 1 else rest)
         part = self.desk.parts.part
-        if action.name in ("next_part", "previous_part") and part is not None:
+        if action.name in ("next_part", "previous_part", "reset_part") and part is not None:
             self.say(next(text for text in part_lines(self.desk) if text.startswith("selected")))
+        elif action.name in _SEEKS:
+            self.say(place_line(self.desk) or "where it plays is not known yet")
 
     # ---- what actions answer with ----
 
@@ -326,6 +331,12 @@ class PlainDesk:
     def do_colours(self) -> str:
         """There are none."""
         return "the line mode has no colours"
+
+    def do_pan_left(self) -> str:
+        """There is nothing to move."""
+        return "the line mode reads the circuit out whole: 'view circuit'"
+
+    do_pan_right = do_pan_up = do_pan_down = do_pan_left
 
     def do_restart(self) -> str:
         """Start a muted circuit from rest, or another engine when this one has stopped."""

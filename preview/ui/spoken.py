@@ -20,7 +20,7 @@ if TYPE_CHECKING:
     from preview.circuit.parts import SettablePart
     from preview.ui.desk import Desk
 
-__all__ = ["effect", "help_lines", "part_lines", "path_lines", "spoken", "state_line"]
+__all__ = ["effect", "help_lines", "part_lines", "path_lines", "place_line", "spoken", "state_line"]
 
 _TABLE_HZ = (20.0, 50.0, 100.0, 200.0, 500.0, 1e3, 2e3, 5e3, 10e3, 20e3, 50e3, 100e3)
 _MOST_CLIPS = 20
@@ -56,10 +56,8 @@ def state_line(desk: Desk) -> str:
     """What plays, where, how loud, which candidate."""
     listening, snapshot = desk.listening, desk.snapshot
     words = ["playing" if listening.playing else "paused"]
-    if snapshot is not None and snapshot.sample_rate_hz > 0.0:
-        place = clock(listening.position_frame / snapshot.sample_rate_hz)
-        whole = f" of {clock(snapshot.frames / snapshot.sample_rate_hz)}" if snapshot.frames else ""
-        words.append(f"at {place}{whole}")
+    if place := place_line(desk):
+        words.append(place)
     if listening.bypass:
         words.append("BYPASS: the input is heard")
     if desk.candidates.null is not None:
@@ -73,6 +71,17 @@ def state_line(desk: Desk) -> str:
     if snapshot is not None and snapshot.dropouts:
         words.append(f"dropouts {snapshot.dropouts}")
     return ", ".join(words)
+
+
+def place_line(desk: Desk) -> str:
+    """Where the playhead is; empty as long as that is not known."""
+    snapshot = desk.snapshot
+    if snapshot is None or not snapshot.sample_rate_hz > 0.0:
+        return ""
+    place = clock(desk.listening.position_frame / snapshot.sample_rate_hz)
+    return f"at {place}" + (
+        f" of {clock(snapshot.frames / snapshot.sample_rate_hz)}" if snapshot.frames else ""
+    )
 
 
 def effect(desk: Desk) -> str:
