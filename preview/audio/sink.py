@@ -225,6 +225,13 @@ class FileSink:
             raise self._translated(error)  # noqa: B904 - the cause is set
         self.frames_written += len(samples)
 
+    def bring_up(self) -> Path | None:
+        """Make what is written so far readable, under the name that is returned; None where the kind cannot be."""
+        try:
+            return self._temporary if self._writer.bring_up() else None
+        except BaseException as error:
+            raise self._translated(error)  # noqa: B904 - the cause is set
+
     def commit(self) -> None:
         """Finish the file and put it in its place; raises OutputFileError and then leaves nothing behind."""
         if self._done:

@@ -40,6 +40,9 @@ class Writer(Protocol):
     def write(self, samples: NDArray[np.float64]) -> None:
         """Append the samples."""
 
+    def bring_up(self) -> bool:
+        """Make what is written so far readable, and go on; whether this kind of file can."""
+
     def finish(self) -> None:
         """Make the file whole."""
 
@@ -85,6 +88,13 @@ class WaveWriter:
         write_all(self._file, data)
         self._data_bytes += len(data)
 
+    def bring_up(self) -> bool:
+        end = self._file.tell()
+        self._file.seek(0)
+        write_all(self._file, self._header_bytes())
+        self._file.seek(end)
+        return True
+
     def finish(self) -> None:
         if self._data_bytes & 1:
             write_all(self._file, b"\0")
@@ -129,6 +139,9 @@ class PipeWriter:
     def write(self, samples: NDArray[np.float64]) -> None:
         write_all(self._file, self._quantiser.packed(samples))
 
+    def bring_up(self) -> bool:
+        return False
+
     def finish(self) -> None:
         self._file.flush()
 
@@ -162,6 +175,9 @@ class LibraryWriter:
             whole = self._quantiser.integers(samples)
             self._file.write(whole << (32 - int(self._quantiser.depth)))
         self._frames += len(samples)
+
+    def bring_up(self) -> bool:
+        return False
 
     def finish(self) -> None:
         self._file.close()
@@ -199,6 +215,9 @@ class TextWriter:
         self._rows += len(lines)
         if lines:
             write_all(self._file, ("\n".join(lines) + "\n").encode())
+
+    def bring_up(self) -> bool:
+        return True
 
     def finish(self) -> None:
         self._file.close()

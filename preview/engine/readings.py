@@ -173,6 +173,8 @@ class ExportState:
     """What became of it."""
     text: str = ""
     """One line for the person: what was written, or why not."""
+    hidden: str = ""
+    """Where it stands until it is whole: readable up to ``done_frames`` if live input is recorded; empty where not."""
 
 
 Report = Overview | ClipMarks | NodePeaks | DeviceList | ExportState

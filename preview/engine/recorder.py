@@ -115,7 +115,9 @@ class Recorder:
                     self._write_what_is_there()
                     turn += 1
                     if turn % TOLD_EVERY == 0:
-                        self._last = ExportState(str(self._out), self._written, 0, "running")
+                        there = self._sink.bring_up()
+                        hidden = "" if there is None else str(there)
+                        self._last = ExportState(str(self._out), self._written, 0, "running", hidden=hidden)
                 self._end.set()
         except PreviewError as error:
             self._last = ExportState(str(self._out), 0, 0, "failed", str(error))

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import os
 import time
 from dataclasses import replace
 from pathlib import Path
@@ -207,8 +208,18 @@ class Keeping:
 
     def break_off(self) -> str:
         """The engine that wrote is gone; a line about it, empty where nothing was being written."""
-        written, self.export = self.export_line(), None
-        return "what was being written to a file is lost" if written else ""
+        written, state, records = self.export_line(), self.export, self._records
+        self.export = None
+        if not written or state is None:
+            return ""
+        if records and state.hidden:
+            try:
+                if os.path.exists(state.hidden) or not os.path.exists(state.out):
+                    os.replace(state.hidden, state.out)
+            except OSError as error:
+                return f"what was recorded is in {state.hidden}: {error.strerror}"
+            return f"what was recorded until then is in {state.out}"
+        return "what was being written to a file is lost"
 
     def do_export(self) -> Outcome:
         """Write what is heard to a file, in the background; stops an export that runs."""

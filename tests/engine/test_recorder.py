@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import shutil
+import time
 from pathlib import Path
 
 import numpy as np
@@ -50,6 +52,34 @@ def test_every_frame_is_in_the_file_in_volts(tmp_path: Path, block: int) -> None
     assert state.text == "out.wav: 0.50 s recorded, peak 9.00 V"
     np.testing.assert_allclose(in_volts(tmp_path / "out.wav"), volts, rtol=1e-6, atol=1e-6)
     assert [path.name for path in tmp_path.iterdir()] == ["out.wav"]
+
+
+@pytest.mark.parametrize("ending", [".wav", ".rf64"])
+def test_what_is_recorded_so_far_can_be_read_should_the_engine_end(tmp_path: Path, ending: str) -> None:
+    volts = np.random.default_rng(3).uniform(-9.0, 9.0, (4000, 2))
+    recorder = recorder_of(tmp_path / f"out{ending}")
+    recorder.take(volts[:3000])
+    give_up_s = time.monotonic() + 30.0
+    while (state := recorder.state()) is None or state.done_frames < 3000:
+        assert time.monotonic() < give_up_s
+        time.sleep(0.01)  # another thread writes, with a deadline
+    kept = tmp_path / f"kept{ending}"
+    shutil.copy(state.hidden, kept)
+    np.testing.assert_allclose(in_volts(kept), volts[:3000], rtol=1e-6, atol=1e-6)
+    recorder.take(volts[3000:])
+    ended(recorder)
+    np.testing.assert_allclose(in_volts(tmp_path / f"out{ending}"), volts, rtol=1e-6, atol=1e-6)
+
+
+def test_a_kind_of_file_that_is_readable_only_when_whole_says_so(tmp_path: Path) -> None:
+    recorder = recorder_of(tmp_path / "out.flac", "24")
+    recorder.take(np.ones((1000, 2)))
+    give_up_s = time.monotonic() + 30.0
+    while (state := recorder.state()) is None:
+        assert time.monotonic() < give_up_s
+        time.sleep(0.01)  # another thread writes, with a deadline
+    assert (state.state, state.hidden) == ("running", "")
+    ended(recorder)
 
 
 def test_more_than_there_is_room_for_at_once_is_recorded_without_a_loss(tmp_path: Path) -> None:

@@ -245,6 +245,27 @@ def test_a_recording_has_ended_where_its_engine_has(session, engine) -> None:
     assert desk.resume(engine, desk.as_left()) == ""
 
 
+@pytest.mark.parametrize("whole", [False, True], ids=["killed", "ended in order"])
+def test_what_was_recorded_until_the_engine_ended_is_kept(session, engine, tmp_path, whole) -> None:
+    out, hidden = tmp_path / "out.wav", tmp_path / ".out.wav.part"
+    (out if whole else hidden).write_text("what there is")
+    desk = Desk(replace(session, audio=None, live=True), engine)
+    desk.take(engine.snapshot)
+    desk.hear_report(ExportState(str(out), 600_000, 0, "running", hidden=str(hidden)))
+    assert desk.resume(engine, desk.as_left()) == f"what was recorded until then is in {out}"
+    assert [path.name for path in tmp_path.iterdir()] == ["out.wav"]
+    assert out.read_text() == "what there is"
+
+
+def test_what_was_recorded_and_cannot_be_moved_is_named(session, engine, tmp_path) -> None:
+    desk = Desk(replace(session, audio=None, live=True), engine)
+    desk.take(engine.snapshot)
+    hidden = tmp_path / ".out.wav.part"
+    desk.hear_report(ExportState(str(tmp_path / "out.wav"), 1, 0, "running", hidden=str(hidden)))
+    said = desk.resume(engine, desk.as_left())
+    assert said == f"what was recorded is in {hidden}: No such file or directory"
+
+
 @pytest.mark.parametrize(
     ("name", "error", "message"),
     [
