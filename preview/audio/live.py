@@ -31,6 +31,7 @@ class LiveReader:
     loop = False
     ready = True
     at_end = False
+    strays = False
 
     def __init__(self, sample_rate_hz: float, channels: int) -> None:
         self.position = 0

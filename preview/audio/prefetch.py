@@ -4,7 +4,8 @@ A thread fills a lane: a ring of frames with two plain counters. Only the thread
 the caller moves ``taken``; reading one and writing the other needs no lock. A seek is a request with a
 number; the thread answers with a new lane that carries the number, and until it comes ``read`` gives
 nothing. A new region also gives a new lane, but the old one plays on and the caller steps over at the same
-frame, so nothing is heard.
+frame, so nothing is heard. Where there is no such frame, as playing was faster, the old lane plays on and
+``strays`` says so; a seek ends that.
 """
 
 from __future__ import annotations
@@ -27,6 +28,7 @@ _RING_BYTES_MAX = 16 << 20
 _HELD_BYTES_MAX = 16 << 20
 _CHUNK_FRAMES = 4096
 _REST_S = 0.004
+_ATTEMPTS = 3
 
 
 class SeekableSource(Protocol):
@@ -97,6 +99,17 @@ class _Lane:
         if self.wish.loop and self.start <= file_frame < self.end:
             return self.turn + file_frame - self.start
         return None
+
+    def ahead_of(self, other: _Lane) -> int | None:
+        """The frame of this lane that the other gives next; None where it has none."""
+        return self.lane_frame(other.file_frame(other.taken))
+
+    @property
+    def room_frames(self) -> int:
+        """Frames that may be put in now; 0 where there are only few, or nothing more will be."""
+        size = len(self.ring)
+        room = size - (self.written - self.taken)
+        return 0 if self.complete or room < min(_CHUNK_FRAMES, size // 2) else room
 
     def cut(self, end: int) -> None:
         """The file proved to end here, at the frame that was to be written next."""
@@ -186,6 +199,17 @@ class Prefetch:
         lane, taken = self._choose()
         return self._wish.frame if lane is None else lane.file_frame(taken)
 
+    @property
+    def strays(self) -> bool:
+        """Whether what is read lies outside the region that was asked for, and only a seek leads into it."""
+        new, old = self._next, self._current
+        if new is None or old is None or new is old or new.wish != self._wish:
+            return False
+        if old.wish.seek_number != new.wish.seek_number:
+            return False
+        ahead = new.ahead_of(old)
+        return ahead is None or (ahead > new.written and not new.room_frames)
+
     def _choose(self) -> tuple[_Lane | None, int]:
         """The lane to take from now, and from which of its frames; None while a seek is on its way."""
         new, old = self._next, self._current
@@ -193,11 +217,9 @@ class Prefetch:
             return None, 0
         if new is old or old is None or old.wish.seek_number != new.wish.seek_number:
             return new, new.taken
-        ahead = new.lane_frame(old.file_frame(old.taken))
-        if ahead is None or (ahead > new.written and old.taken == old.written):
-            return new, 0  # a jump: the new region does not hold this frame
-        if ahead > new.written:
-            return old, old.taken  # the new lane is not that far yet
+        ahead = new.ahead_of(old)
+        if ahead is None or ahead > new.written:
+            return old, old.taken  # the new lane is not that far yet, or will never be
         return new, ahead
 
     # -- those who ask --------------------------------------------------------------------------------------
@@ -238,7 +260,8 @@ class Prefetch:
     def set_region(self, start: int | None, end: int | None, loop: bool) -> None:
         """Play from ``start`` up to, not including, ``end`` (None: the file's), once or again and again.
 
-        Playing goes on without a gap where the present frame lies before the region's end, else at its start.
+        Playing goes on without a gap where the present frame lies before the region's end; else it goes on where it
+        is, and ``strays`` until the next seek.
         """
         first = 0 if start is None else min(max(0, start), self._frames)
         last = self._frames if end is None else min(max(0, end), self._frames)
@@ -299,26 +322,34 @@ class Prefetch:
         start, end = wish.region or (0, self._frames)
         end = min(end, self._frames)
         old = self._next
-        seamless = old is not None and old.wish.seek_number == wish.seek_number
-        first = old.file_frame(old.taken) if seamless and old is not None else wish.frame
-        if first >= end and (wish.loop or seamless):
-            first = start
-        lane = _Lane(wish, np.zeros((self._capacity, self._source.channels)), first, start, end)
-        self._hold(lane)
-        enough = min(self._capacity, 4 * _CHUNK_FRAMES)
-        while lane.written < enough and self._fill(lane):
-            pass
+        playing = next(
+            (
+                one
+                for one in (self._current, old)
+                if one is not None and one.wish.seek_number == wish.seek_number
+            ),
+            None,
+        )
+        for _ in range(_ATTEMPTS):
+            first = wish.frame if playing is None else playing.file_frame(playing.taken)
+            if first >= end and (wish.loop or playing is not None):
+                first = start
+            lane = _Lane(wish, np.zeros((self._capacity, self._source.channels)), first, start, end)
+            self._hold(lane)
+            enough = min(self._capacity, 4 * _CHUNK_FRAMES)
+            while lane.written < enough and self._fill(lane):
+                pass
+            ahead = 0 if playing is None else lane.ahead_of(playing)
+            if ahead is not None and ahead <= lane.written:
+                break  # what plays has not turned or left the region meanwhile
         self._retired = [old] if old is not None else []  # freed here, not in the caller's thread
         self._next = lane
         return lane
 
     def _fill(self, lane: _Lane) -> bool:
         """Put a piece into the lane; False where there is no room or nothing left."""
-        if lane.complete:
-            return False
-        size = len(lane.ring)
-        room = size - (lane.written - lane.taken)
-        if room < min(_CHUNK_FRAMES, size // 2):
+        size, room = len(lane.ring), lane.room_frames
+        if not room:
             return False
         frame = lane.file_frame(lane.written)
         at = lane.written % size

@@ -137,15 +137,19 @@ class Deck:
 
         def change() -> None:
             reader.set_region(start, end, reader.loop)
-            first, last = self.head.bounds
-            if not first <= self.head.first_frame < last:
-                self.head.rewind()
+            self._keep_inside()
 
         inside = (start or 0) <= self.position() and (end is None or reader.position < end)
         if inside and not self.silent:
             reader.set_region(start, end, reader.loop)
         else:
             self.in_silence(change)
+
+    def _keep_inside(self) -> None:
+        """Go to the start of the region if it is left; in silence."""
+        first, last = self.head.bounds
+        if not first <= self.head.first_frame < last:
+            self.head.rewind()
 
     def end_with(self, at_end: AtEnd) -> None:
         """Loop or stop at the end; what is too short to loop stops."""
@@ -217,6 +221,10 @@ class Deck:
             self.ears.feed(silence, silence, swapping=False)
             self._let_glides_end(frames)
             return
+        if (
+            self.mode is Mode.RUNNING and self.head.reader.strays
+        ):  # it left a new region before that was ready
+            self.in_silence(self._keep_inside)
         if self.mode is Mode.RUNNING and self.head.tail_frames >= max(self._latency, 1):
             self._wants_play = False
             self.in_silence(self.head.rewind)

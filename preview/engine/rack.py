@@ -203,7 +203,7 @@ class Rack:
         """Fill ``volts_out`` from the next ``volts_in``, both (frames, channels)."""
         if self._due and all(self._slots[letter].behind == 0 for letter in self._wanted()):
             self._begin_to_move()
-        self._apart = bool(self._gains) or (self._apart and self._moving)
+        self._apart = bool(self._gains) or any(slot.apart for slot in self._every)
         self._heard_frames = len(volts_in)
         for first in range(0, len(volts_in), BLOCK_FRAMES):
             piece = slice(first, first + BLOCK_FRAMES)
@@ -212,7 +212,7 @@ class Rack:
     def _block(self, volts_in: Volts, volts_out: Volts, heard_out: Volts) -> None:
         frames = len(volts_in)
         self._remember(volts_in)
-        running = [slot for slot in (*self._slots.values(), *self._leaving) if slot.running]
+        running = [slot for slot in self._every if slot.running]
         heard = [slot for slot in running if slot.heard]
         if (
             len(heard) == 1
@@ -283,9 +283,12 @@ class Rack:
         return self._gains.get(letter, 1.0)
 
     @property
+    def _every(self) -> tuple[Slot, ...]:
+        return (*self._slots.values(), *self._leaving)
+
+    @property
     def _moving(self) -> bool:
-        every = (*self._slots.values(), *self._leaving)
-        return any(slot.weight.moving or slot.heard_weight.moving for slot in every)
+        return any(slot.weight.moving or slot.heard_weight.moving for slot in self._every)
 
     def _wanted(self) -> dict[str, tuple[float, float]]:
         """The weights of every candidate that is to be heard: in what leaves, and in what is heard."""
@@ -322,7 +325,6 @@ class Rack:
         self._shown = self._slots[self.letter]
         for slot in self._leaving:
             slot.to(0.0, 0.0)
-        self._apart = self._apart or bool(self._gains)
 
     def _rest(self) -> None:
         """Let stages stop that are heard no more, but for the one that was heard before this one."""

@@ -66,6 +66,12 @@ class Slot:
         """Whether it has, or is about to lose, a share."""
         return self.weight.moving or self.weight.target != 0.0
 
+    @property
+    def apart(self) -> bool:
+        """Whether its share of what is heard is, or is to be, another than that of what leaves."""
+        here, heard = self.weight, self.heard_weight
+        return here.value != heard.value or here.target != heard.target
+
     def to(self, weight: float, heard_weight: float) -> None:
         """Move to other shares of what leaves and of what is heard."""
         self.weight.to(weight)

@@ -39,6 +39,10 @@ class Reader(Protocol):
     def position(self) -> int:
         """Frame that the next ``read`` begins with."""
 
+    @property
+    def strays(self) -> bool:
+        """Whether what is read lies outside the region, and only a seek leads into it."""
+
     def read(self, samples_out: Samples) -> int:
         """Fill from the next frames; the frames filled."""
 

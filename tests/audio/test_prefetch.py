@@ -173,15 +173,51 @@ def test_a_new_region_around_the_present_frame_is_not_heard(
     np.testing.assert_array_equal(got, np.arange(100_000, 100_000 + len(got)))
 
 
-def test_a_region_that_lies_before_the_present_frame_is_entered_at_its_start(
+def test_a_region_that_lies_before_the_present_frame_is_entered_by_a_seek(
     counting: tuple[CountingSource, Prefetch],
 ) -> None:
     _, prefetch = counting
     prefetch.seek(100_000)
     take(prefetch, 512)
+    assert not prefetch.strays
     prefetch.set_region(5000, 9000, True)
     assert prefetch.wait_ready(5)
-    np.testing.assert_array_equal(take(prefetch, 5000), np.r_[5000:9000, 5000:6000])
+    assert prefetch.strays
+    np.testing.assert_array_equal(take(prefetch, 1000), np.arange(100_512, 101_512))  # no jump by itself
+    prefetch.seek(8000)
+    assert not prefetch.strays
+    np.testing.assert_array_equal(take(prefetch, 5000), np.r_[8000:9000, 5000:9000])
+
+
+@pytest.mark.parametrize(
+    ("region", "played", "strays"),
+    [
+        ((1000, 21_000), 3000, False),  # it has gone round the old region
+        ((None, None), 3000, False),
+        ((1000, 20_500), 600, True),  # it has left the new one
+    ],
+)
+def test_what_plays_on_while_a_new_region_is_read_does_not_jump(
+    counting: tuple[CountingSource, Prefetch],
+    region: tuple[int | None, int | None],
+    played: int,
+    strays: bool,
+) -> None:
+    source, prefetch = counting
+    prefetch.set_region(1000, 22_000, True)
+    prefetch.seek(20_000)
+    assert prefetch.wait_ready(5, frames=30_000)
+    got = [take(prefetch, 100)]
+    source.gate.clear()  # the disk is busy
+    prefetch.set_region(*region, True)
+    got.append(take(prefetch, played))
+    assert not prefetch.strays, "nobody knows yet"
+    source.gate.set()
+    assert prefetch.wait_ready(5)
+    assert prefetch.strays == strays
+    got.append(take(prefetch, 500))
+    whole = np.r_[20_000:22_000, 1000:22_000]
+    np.testing.assert_array_equal(np.concatenate(got), whole[: 600 + played])
 
 
 @pytest.mark.parametrize("start", [0, 30_000, 70_000])

@@ -126,6 +126,21 @@ def test_a_region_set_around_what_plays_does_not_interrupt_it(make_rig):
     assert np.array_equal(heard[first + RAMP_FRAMES :], expected[RAMP_FRAMES:])
 
 
+def test_a_region_that_is_left_before_it_is_ready_is_entered_over_a_fade(make_rig):
+    samples = np.linspace(0.0, 0.4, 4000)[:, None]
+    rig = make_rig(samples, loop=True)
+    rig.player.play()
+    before = rig.hear(2048)
+    rig.reader.set_region(100, 1500, True)  # as if playing had gone past its end while the disk was slow
+    heard = np.concatenate([before, rig.hear(2048)])[:, 0]
+    silent = 2048 + int(np.flatnonzero(heard[2048:] == 0.0)[-1])
+    heard = heard[: silent + 1200]  # before it turns
+    assert np.abs(np.diff(heard)).max() < 0.4 * GAIN * np.pi / 2 / RAMP_FRAMES + 0.001
+    played = heard[silent + RAMP_FRAMES + 1 :] / GAIN
+    np.testing.assert_allclose(np.diff(played), samples[1, 0], atol=1e-6)
+    assert played[0] / samples[1, 0] == pytest.approx(100 + RAMP_FRAMES, abs=1)
+
+
 def test_at_the_end_every_frame_is_heard_then_it_waits_at_the_start(make_rig):
     rig = make_rig(loop=False)
     rig.player.play()

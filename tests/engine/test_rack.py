@@ -251,6 +251,21 @@ def test_the_match_that_is_set_within_a_fade_does_not_click():
     assert rack.heard is None
 
 
+def test_the_match_that_ends_while_a_candidate_is_still_on_its_way_does_not_click():
+    rack, _ = rack_of(A=1.0, B=2.0)
+    volts = tone(1.0)
+    rack.set_gains({"A": 0.2})
+    out = [run(rack, volts[:10_057], matched=True)]  # to a crest of what comes out
+    rack.hurry = 2  # B needs a while to come to the present
+    rack.select("B")
+    rack.set_gains({})
+    out.append(run(rack, volts[10_057:], matched=True))
+    heard = np.concatenate(out)
+    assert above_db(heard[2000:], 4000.0) < -90.0
+    assert heard[-1, 0] == pytest.approx(2.0 * volts[-38, 0])
+    assert rack.heard is None
+
+
 def test_bypass_is_the_input_at_the_same_delay_to_the_bit_and_unmatched():
     rack, _ = rack_of(A=3.0)
     rack.set_gains({"A": 0.5})
