@@ -27,6 +27,7 @@ from preview.engine.logfile import write_to_log
 from preview.engine.messages import Command, InputKind, Notice, Snapshot
 from preview.engine.orders import change_circuit, change_playing
 from preview.engine.outlet import Outlet
+from preview.engine.overload import Overload
 from preview.engine.player import Player
 from preview.engine.preparer import Preparer
 from preview.engine.process import EngineConfig
@@ -99,6 +100,7 @@ class Host:
         self._bench: Bench | None = None
         self._errands = Errands(self._tell)
         self._attention: Attention | None = None
+        self._overload = Overload()
         self._damage_told = self._collected = self._asked_for_patience = self._ended = False
         self._began_s = time.monotonic()
 
@@ -176,6 +178,8 @@ class Host:
             snapshot = player.snapshot
             if snapshot is not None:
                 player.snapshot = None
+                if self._collected and (said := self._overload.look(snapshot)):
+                    self._tell(said, "warning")
                 self._connection.send(self._whole(snapshot, intake, preparer))
                 if self._collected and self._errands.look(snapshot, preparer):
                     self._apply_match()
