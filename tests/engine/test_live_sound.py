@@ -138,6 +138,34 @@ print(told[-1].text, flush=True)
     assert np.abs(samples[:, 0]).max() == pytest.approx(0.02 * gain, rel=2e-3)
 
 
+def test_what_was_recorded_is_readable_although_the_engine_was_killed(
+    sound_server: Any, tmp_path: Path
+) -> None:
+    then = f"""
+import os, signal
+wait(lambda s: s.output.peak_v[0] > 1.9)
+engine.send(messages.Export(session, Path({str(tmp_path / "live.wav")!r})))
+told = []
+while not told or told[-1].done_frames < 48_000:
+    told += engine.reports()
+    time.sleep(0.01)
+os.kill(engine.pid, signal.SIGKILL)
+print(told[-1].done_frames, told[-1].hidden, flush=True)
+"""
+    with (
+        playing(sound_server, "feed", "60", "0.02"),
+        sound_server.start(DESK, "", then, str(tmp_path / "log")) as desk,
+    ):
+        out, trouble = desk.communicate(timeout=90)
+    assert desk.returncode == 0, trouble[-2000:]
+    done, hidden = out.splitlines()[-1].split(maxsplit=1)
+    assert not (tmp_path / "live.wav").exists()
+    samples, _ = soundfile.read(hidden)
+    assert len(samples) >= int(done) >= 48_000
+    gain = 10 / math.sqrt(1 + (200 / 1591.549) ** 2)  # 0.2 V through a gain of 10 and the pole, of 10 V
+    assert np.abs(samples[:, 0]).max() == pytest.approx(0.02 * gain, rel=2e-3)
+
+
 def test_a_howl_round_is_muted_and_said(sound_server: Any, tmp_path: Path) -> None:
     # what is played is recorded again: a loop with the stage's gain of 10 in it
     then = """
