@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import asyncio
 import contextlib
+import gc
 import signal
 import sys
 from collections.abc import Callable
@@ -271,6 +272,8 @@ class DeskApp(DialogApp):
                 self._keeper.want()
             if first:
                 self.arrange(self.size.width, self.size.height)
+                if self.keep:
+                    gc.freeze()  # what is there by now stays: looking through it again would keep a key waiting
         self._see_to_size()
         self.desk.keeping.note()
         if (edited := self.desk.stage_watch.look()) is not None:

@@ -16,9 +16,9 @@ from tests.ui.test_terminal import LISTEN, Terminal
 pytestmark = pytest.mark.benchmark
 
 START_S, KEY_S, CORE_RATIO = 1.2, 0.050, 0.20
-"""What was promised: start warm, key to screen, share of a core at 120x40 while playing."""
+"""What was promised: start warm, key to screen (19 of 20), share of a core at 120x40 while playing."""
 WATCHED_S = 10.0
-STEPS = 20
+STEPS = 40
 
 
 @pytest.fixture
@@ -77,7 +77,7 @@ def test_a_key_is_on_the_screen_within_50_ms(desk) -> None:
         times_s.append(time.monotonic() - pressed_s)
     median_s, worst_s = statistics.median(times_s), max(times_s)
     print(f"\nkey to screen: median {median_s * 1e3:.0f} ms, worst {worst_s * 1e3:.0f} ms; {_busy()}")
-    assert median_s <= KEY_S
+    assert sorted(times_s)[int(0.95 * STEPS) - 1] <= KEY_S
 
 
 @pytest.mark.skipif(sys.platform != "linux", reason="reads /proc")
