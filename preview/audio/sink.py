@@ -225,10 +225,15 @@ class FileSink:
             raise self._translated(error)  # noqa: B904 - the cause is set
         self.frames_written += len(samples)
 
-    def bring_up(self) -> Path | None:
-        """Make what is written so far readable, under the name that is returned; None where the kind cannot be."""
+    @property
+    def hidden(self) -> str:
+        """Where it stands until it is whole; empty for standard output, and once it is in its place."""
+        return "" if self._temporary is None else str(self._temporary)
+
+    def bring_up(self) -> bool:
+        """Make what is written so far readable where it stands; whether this kind of file can be."""
         try:
-            return self._temporary if self._writer.bring_up() else None
+            return self._writer.bring_up()
         except BaseException as error:
             raise self._translated(error)  # noqa: B904 - the cause is set
 

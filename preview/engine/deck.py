@@ -221,10 +221,8 @@ class Deck:
             self.ears.feed(silence, silence, swapping=False)
             self._let_glides_end(frames)
             return
-        if (
-            self.mode is Mode.RUNNING and self.head.reader.strays
-        ):  # it left a new region before that was ready
-            self.in_silence(self._keep_inside)
+        if self.mode is Mode.RUNNING and self.head.reader.strays:
+            self.in_silence(self._keep_inside)  # it left a new region before that was ready
         if self.mode is Mode.RUNNING and self.head.tail_frames >= max(self._latency, 1):
             self._wants_play = False
             self.in_silence(self.head.rewind)

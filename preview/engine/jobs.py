@@ -362,7 +362,7 @@ def _export(job: ExportJob) -> Iterator[Report | None]:
                 sink.write(volts / out_scale_v)
                 if frame - told >= (last - first) // 50:
                     told = frame
-                    yield ExportState(out, frame - first, last - first, "running")
+                    yield ExportState(out, frame - first, last - first, "running", hidden=sink.hidden)
                 else:
                     yield None
             sink.commit()

@@ -174,7 +174,9 @@ class ExportState:
     text: str = ""
     """One line for the person: what was written, or why not."""
     hidden: str = ""
-    """Where it stands until it is whole: readable up to ``done_frames`` if live input is recorded; empty where not."""
+    """Where it stands until it is whole."""
+    readable: bool = False
+    """Whether it can be read there, up to ``done_frames``."""
 
 
 Report = Overview | ClipMarks | NodePeaks | DeviceList | ExportState

@@ -115,9 +115,14 @@ class Recorder:
                     self._write_what_is_there()
                     turn += 1
                     if turn % TOLD_EVERY == 0:
-                        there = self._sink.bring_up()
-                        hidden = "" if there is None else str(there)
-                        self._last = ExportState(str(self._out), self._written, 0, "running", hidden=hidden)
+                        self._last = ExportState(
+                            str(self._out),
+                            self._written,
+                            0,
+                            "running",
+                            hidden=self._sink.hidden,
+                            readable=self._sink.bring_up(),
+                        )
                 self._end.set()
         except PreviewError as error:
             self._last = ExportState(str(self._out), 0, 0, "failed", str(error))

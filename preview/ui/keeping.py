@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import contextlib
 import os
 import time
 from dataclasses import replace
@@ -208,17 +209,19 @@ class Keeping:
 
     def break_off(self) -> str:
         """The engine that wrote is gone; a line about it, empty where nothing was being written."""
-        written, state, records = self.export_line(), self.export, self._records
-        self.export = None
-        if not written or state is None:
+        state, self.export = self.export, None
+        if state is None or state.state != "running":
             return ""
-        if records and state.hidden:
+        if state.readable:
             try:
                 if os.path.exists(state.hidden) or not os.path.exists(state.out):
                     os.replace(state.hidden, state.out)
             except OSError as error:
                 return f"what was recorded is in {state.hidden}: {error.strerror}"
             return f"what was recorded until then is in {state.out}"
+        if state.hidden:
+            with contextlib.suppress(OSError):
+                os.unlink(state.hidden)
         return "what was being written to a file is lost"
 
     def do_export(self) -> Outcome:

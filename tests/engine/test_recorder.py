@@ -64,6 +64,7 @@ def test_what_is_recorded_so_far_can_be_read_should_the_engine_end(tmp_path: Pat
         assert time.monotonic() < give_up_s
         time.sleep(0.01)  # another thread writes, with a deadline
     kept = tmp_path / f"kept{ending}"
+    assert state.readable
     shutil.copy(state.hidden, kept)
     np.testing.assert_allclose(in_volts(kept), volts[:3000], rtol=1e-6, atol=1e-6)
     recorder.take(volts[3000:])
@@ -78,7 +79,8 @@ def test_a_kind_of_file_that_is_readable_only_when_whole_says_so(tmp_path: Path)
     while (state := recorder.state()) is None:
         assert time.monotonic() < give_up_s
         time.sleep(0.01)  # another thread writes, with a deadline
-    assert (state.state, state.hidden) == ("running", "")
+    assert (state.state, state.readable) == ("running", False)
+    assert Path(state.hidden).exists()
     ended(recorder)
 
 

@@ -251,17 +251,29 @@ def test_what_was_recorded_until_the_engine_ended_is_kept(session, engine, tmp_p
     (out if whole else hidden).write_text("what there is")
     desk = Desk(replace(session, audio=None, live=True), engine)
     desk.take(engine.snapshot)
-    desk.hear_report(ExportState(str(out), 600_000, 0, "running", hidden=str(hidden)))
+    desk.hear_report(ExportState(str(out), 600_000, 0, "running", hidden=str(hidden), readable=True))
     assert desk.resume(engine, desk.as_left()) == f"what was recorded until then is in {out}"
     assert [path.name for path in tmp_path.iterdir()] == ["out.wav"]
     assert out.read_text() == "what there is"
+
+
+def test_what_cannot_be_read_is_taken_away(session, engine, tmp_path) -> None:
+    hidden = tmp_path / ".out.flac.part"
+    hidden.write_text("half of it")
+    desk = Desk(session, engine)
+    desk.take(engine.snapshot)
+    desk.hear_report(ExportState(str(tmp_path / "out.flac"), 5, 10, "running", hidden=str(hidden)))
+    assert desk.resume(engine, desk.as_left()) == "what was being written to a file is lost"
+    assert not hidden.exists()
 
 
 def test_what_was_recorded_and_cannot_be_moved_is_named(session, engine, tmp_path) -> None:
     desk = Desk(replace(session, audio=None, live=True), engine)
     desk.take(engine.snapshot)
     hidden = tmp_path / ".out.wav.part"
-    desk.hear_report(ExportState(str(tmp_path / "out.wav"), 1, 0, "running", hidden=str(hidden)))
+    desk.hear_report(
+        ExportState(str(tmp_path / "out.wav"), 1, 0, "running", hidden=str(hidden), readable=True)
+    )
     said = desk.resume(engine, desk.as_left())
     assert said == f"what was recorded is in {hidden}: No such file or directory"
 
