@@ -9,7 +9,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from preview.circuit.netlist import Netlist
-from preview.dsp import kernels, macro_kernels, regime_kernels, visit_kernels
+from preview.dsp import kernels, macro_kernels, regime_kernels, visit_kernels, walk_kernels
 from preview.dsp.bilinear import running_step
 from preview.dsp.macromodel import Limits, MacroEquations, MacroModel
 from preview.dsp.rest import resting_state
@@ -259,7 +259,7 @@ class MacroCore:
         self._extremes = np.zeros((c, k + walls, 3))
         self._junctions = np.zeros((c, 4, ports))
         self._heights = np.zeros(k + walls)
-        self._book = np.zeros((REGIMES, macro_kernels.BOOK), dtype=np.int64)
+        self._book = np.zeros((REGIMES, walk_kernels.BOOK), dtype=np.int64)
         self._last_place = np.zeros(2, dtype=np.int64)
         self._store = (
             np.zeros((REGIMES + 1, regime_kernels.LEVELS + 1, columns, rows)),

@@ -15,7 +15,7 @@ from scipy.linalg import expm
 from preview.analysis.response import deviation
 from preview.circuit.netlist import Netlist
 from preview.circuit.opamp import OpAmpModel
-from preview.dsp import macro_kernels, regime_kernels
+from preview.dsp import macro_kernels, regime_kernels, walk_kernels
 from preview.dsp.cores import MacroCore
 from preview.dsp.macromodel import MacroModel
 from preview.dsp.smallsignal import following_step
@@ -412,12 +412,11 @@ SOURCES = {
         "is_at",
         "regime_steps",
         "walk",
-        "along",
         "place_of",
         "lasts",
         "fill_slot",
-        "fill_parts",
     ),
+    walk_kernels: ("along", "place_of", "fill_slot", "fill_parts"),
     regime_kernels: ("motion", "generator", "part_matrix", "written_over_ends"),
 }
 

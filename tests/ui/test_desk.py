@@ -33,7 +33,7 @@ from preview.engine.messages import (
     SetRegion,
     SetVolume,
 )
-from preview.engine.options import with_running
+from preview.engine.options import session_from, with_running
 from preview.errors import PartValueError
 from preview.session import AtEnd
 from preview.ui.changes import commands_between, render_command, with_setting
@@ -354,7 +354,7 @@ def test_the_render_command_carries_limits_taken_away_noise_and_power_on(session
     now = replace(session, without=("slew", "input range"), noise=NoiseSetting(40.0, 7), power_on=True)
     words = shlex.split(render_command(now, session.stage))
     options = _parser().parse_args(words[1:])
-    again = with_running(session, options)
+    again = with_running(session_from(options), options)
     assert (again.without, again.noise, again.power_on) == (now.without, now.noise, now.power_on)
 
 
