@@ -68,10 +68,12 @@ def test_a_howl_at_its_limit_is_heard_within_two_seconds(gain: float, delay_s: f
         3.0 * NOTE,
         3.0 * NOTE * (1.0 + 0.3 * np.sin(2 * np.pi * 5 * TIME_S)),
         3.0 * NOTE * np.exp(-0.5 * TIME_S),
+        3.0 * NOTE * (np.sin(2 * np.pi * 2.5 * TIME_S) > -0.5),
+        3.0 * NOTE * (0.5 + 0.5 * (np.sin(2 * np.pi * 0.8 * TIME_S) > 0.0)),
         3.0 * np.sign(NOTE),
         np.random.default_rng(4).normal(0.0, 3.0, len(TIME_S)),
     ],
-    ids=["note", "tremolo", "decaying", "square", "noise"],
+    ids=["note", "tremolo", "decaying", "beats", "loud and soft", "square", "noise"],
 )
 @pytest.mark.parametrize("coupling", [0.0, 0.05])
 def test_what_clips_without_coming_round_is_no_howl(source: np.ndarray, coupling: float) -> None:
@@ -84,8 +86,20 @@ def test_a_steady_sound_below_every_limit_is_left_alone() -> None:
     assert room.ducks == 0
 
 
-def test_a_steady_sound_at_a_limit_is_tried_three_times_for_half_a_second() -> None:
+@pytest.mark.parametrize("gap", [0.2, 0.5, 0.7])
+@pytest.mark.parametrize("delay_s", [0.15, 0.2, 0.265])
+def test_a_howl_that_comes_round_with_gaps_is_heard(gap: float, delay_s: float) -> None:
+    hiss = np.random.default_rng(3).normal(0.0, 1e-6, 6 * RATE_HZ)
+    room = Room(hiss, gain=20.0, coupling=0.1, delay_s=delay_s)
+    tone = np.sin(2 * np.pi * 500 * np.arange(room.delay) / RATE_HZ)
+    room.played[: room.delay] = LIMIT_V * np.sign(tone) * (np.arange(room.delay) >= gap * room.delay)
+    at_s = room.howl_at_s()
+    assert at_s is not None
+    assert at_s < 3.0
+
+
+def test_a_steady_sound_at_a_limit_is_tried_three_times_for_a_moment() -> None:
     room = Room(3.0 * np.tile(NOTE, 4), gain=10.0, coupling=0.05)
     assert room.howl_at_s() is None
     assert room.ducks == 3
-    assert room.ducked_looks <= 3 * 8
+    assert room.ducked_looks <= 3 * (15 + 5)
