@@ -80,6 +80,18 @@ def playing(server: Any, *arguments: str) -> Iterator[subprocess.Popen[str]]:
         process.kill()
 
 
+RECORD = """
+wait(lambda s: s.output.peak_v[0] > 1.9)
+engine.send(messages.Export(session, Path({out!r})))
+told = []
+while not told or told[-1].done_frames < 48_000:
+    told += engine.reports()
+    time.sleep(0.01)
+"""
+# 0.2 V through a gain of 10 and the pole at 1591.5 Hz, of 10 V
+HEARD = 0.02 * 10 / math.sqrt(1 + (200 / 1591.549) ** 2)
+
+
 def test_live_input_begins_muted_and_is_heard_through_the_stage(sound_server: Any, tmp_path: Path) -> None:
     then = """
 heard = wait(lambda s: s.input.peak_v[0] > 0.19)
@@ -105,20 +117,13 @@ time.sleep(1.0)  # of sound, to be recorded
     heard = recording.samples()
     first = int(np.flatnonzero(np.abs(heard).max(axis=1) > 0.1)[0])
     assert not heard[: first - 2 * RATE_HZ // 100].any(), "muted until it was told otherwise"
-    # 0.2 V through a gain of 10 and the pole at 1591.5 Hz, of 10 V
-    gain = 10 / math.sqrt(1 + (200 / 1591.549) ** 2)
     whole = heard[first + 4800 : first + 9600, 0]
-    assert np.abs(whole).max() == pytest.approx(0.02 * gain, rel=2e-3)
+    assert np.abs(whole).max() == pytest.approx(HEARD, rel=2e-3)
 
 
 def test_live_input_is_recorded_in_volts_also_while_it_is_muted(sound_server: Any, tmp_path: Path) -> None:
-    then = f"""
-wait(lambda s: s.output.peak_v[0] > 1.9)
-engine.send(messages.Export(session, Path({str(tmp_path / "live.wav")!r})))
-told = []
-while not told or told[-1].done_frames < 48_000:
-    told += engine.reports()
-    time.sleep(0.01)
+    then = RECORD.format(out=str(tmp_path / "live.wav"))
+    then += """
 engine.send(messages.CancelExport())
 while told[-1].state == "running":
     told += engine.reports()
@@ -133,22 +138,15 @@ print(told[-1].text, flush=True)
     assert desk.returncode == 0, trouble[-2000:]
     assert "live.wav: 1." in out
     samples, _ = soundfile.read(tmp_path / "live.wav")
-    # 0.2 V through a gain of 10 and the pole at 1591.5 Hz, of 10 V
-    gain = 10 / math.sqrt(1 + (200 / 1591.549) ** 2)
-    assert np.abs(samples[:, 0]).max() == pytest.approx(0.02 * gain, rel=2e-3)
+    assert np.abs(samples[:, 0]).max() == pytest.approx(HEARD, rel=2e-3)
 
 
 def test_what_was_recorded_is_readable_although_the_engine_was_killed(
     sound_server: Any, tmp_path: Path
 ) -> None:
-    then = f"""
+    then = RECORD.format(out=str(tmp_path / "live.wav"))
+    then += """
 import os, signal
-wait(lambda s: s.output.peak_v[0] > 1.9)
-engine.send(messages.Export(session, Path({str(tmp_path / "live.wav")!r})))
-told = []
-while not told or told[-1].done_frames < 48_000:
-    told += engine.reports()
-    time.sleep(0.01)
 os.kill(engine.pid, signal.SIGKILL)
 print(told[-1].done_frames, told[-1].hidden, flush=True)
 """
@@ -162,8 +160,7 @@ print(told[-1].done_frames, told[-1].hidden, flush=True)
     assert not (tmp_path / "live.wav").exists()
     samples, _ = soundfile.read(hidden)
     assert len(samples) >= int(done) >= 48_000
-    gain = 10 / math.sqrt(1 + (200 / 1591.549) ** 2)  # 0.2 V through a gain of 10 and the pole, of 10 V
-    assert np.abs(samples[:, 0]).max() == pytest.approx(0.02 * gain, rel=2e-3)
+    assert np.abs(samples[:, 0]).max() == pytest.approx(HEARD, rel=2e-3)
 
 
 def test_a_howl_round_is_muted_and_said(sound_server: Any, tmp_path: Path) -> None:

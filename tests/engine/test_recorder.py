@@ -33,6 +33,15 @@ def ended(recorder: Recorder) -> ExportState:
     return state
 
 
+def told_of(recorder: Recorder, frames: int) -> ExportState:
+    """What it says once so many frames are written."""
+    give_up_s = time.monotonic() + 30.0
+    while (state := recorder.state()) is None or state.done_frames < frames:
+        assert time.monotonic() < give_up_s
+        time.sleep(0.01)  # another thread writes, with a deadline
+    return state
+
+
 def in_volts(path: Path) -> np.ndarray:
     with soundfile.SoundFile(path) as file:
         scale = full_scale_in_comment(file.comment)
@@ -59,10 +68,7 @@ def test_what_is_recorded_so_far_can_be_read_should_the_engine_end(tmp_path: Pat
     volts = np.random.default_rng(3).uniform(-9.0, 9.0, (4000, 2))
     recorder = recorder_of(tmp_path / f"out{ending}")
     recorder.take(volts[:3000])
-    give_up_s = time.monotonic() + 30.0
-    while (state := recorder.state()) is None or state.done_frames < 3000:
-        assert time.monotonic() < give_up_s
-        time.sleep(0.01)  # another thread writes, with a deadline
+    state = told_of(recorder, 3000)
     kept = tmp_path / f"kept{ending}"
     assert state.readable
     shutil.copy(state.hidden, kept)
@@ -75,10 +81,7 @@ def test_what_is_recorded_so_far_can_be_read_should_the_engine_end(tmp_path: Pat
 def test_a_kind_of_file_that_is_readable_only_when_whole_says_so(tmp_path: Path) -> None:
     recorder = recorder_of(tmp_path / "out.flac", "24")
     recorder.take(np.ones((1000, 2)))
-    give_up_s = time.monotonic() + 30.0
-    while (state := recorder.state()) is None:
-        assert time.monotonic() < give_up_s
-        time.sleep(0.01)  # another thread writes, with a deadline
+    state = told_of(recorder, 0)
     assert (state.state, state.readable) == ("running", False)
     assert Path(state.hidden).exists()
     ended(recorder)
